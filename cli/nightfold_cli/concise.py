@@ -1,0 +1,176 @@
+"""Numbers with their uncertainty, as people write them: ``33.612(14)``, ``1.234(56)e5``.
+
+The standard uncertainty is given to two significant digits and the value to the same decimal place, as GUM 7.2.6
+advises for numbers that others will compute with. An exponent is used where the two digits would otherwise
+stand left of the decimal point (``1.210(31)e5``, not ``121000(3100)``) or far right of it.
+
+References
+----------
+JCGM 100:2008 (GUM), 7.2.2 example 2 and 7.2.6.
+"""
+
+from __future__ import annotations
+
+import math
+import re
+from dataclasses import dataclass
+from decimal import ROUND_HALF_EVEN, Context, Decimal
+
+_CONTEXT = Context(prec=800, rounding=ROUND_HALF_EVEN)
+_NEGLIGIBLE = 1e-16  # a stderr below this share of the value is lost in a double
+_ASYMMETRIC = 1.10
+_PLAIN_EXPONENTS = range(-3, 6)
+_PATTERN = re.compile(
+    r"(?P<value>[+-]?\d+(?:\.\d+)?)\((?P<stderr>\d+(?:\.\d+)?)\)(?:e(?P<exponent>[+-]?\d+))?"
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Scale:
+    """The decimal place and the power of ten that one line of numbers shares.
+
+    Attributes
+    ----------
+    exponent : int
+        Power of ten taken out of every number; 0 for none.
+    decimals : int
+        Digits after the decimal point of what is left.
+    """
+
+    exponent: int
+    decimals: int
+
+    @property
+    def suffix(self) -> str:
+        """Return the exponent as written behind a number, empty for none."""
+        return f"e{self.exponent}" if self.exponent else ""
+
+    def digits(self, number: float) -> str:
+        """Return the number without the exponent, rounded to the scale's place."""
+        scaled = _rounded(_CONTEXT.scaleb(Decimal(repr(float(number))), -self.exponent), self.decimals)
+        return f"{scaled:f}" if scaled else f"{abs(scaled):f}"
+
+    def text(self, number: float) -> str:
+        """Return the number with the exponent, or ``nan``, ``inf``, ``-inf``."""
+        return self.digits(number) + self.suffix if math.isfinite(number) else f"{number:g}"
+
+
+def scale_of(value: float, stderr: float) -> Scale | None:
+    """Return the place at which a value with this stderr is written; None where the stderr cannot decide it."""
+    if not (math.isfinite(value) and math.isfinite(stderr)) or stderr <= 0:
+        return None
+    if stderr < abs(value) * _NEGLIGIBLE:
+        return None
+    quantum = _exponent(_significant(Decimal(repr(float(stderr))), 2)) - 1
+    leading = max(_exponent(_rounded(Decimal(repr(float(value))), -quantum)), quantum + 1)
+    exponent = leading if quantum > 0 or leading < -3 else 0
+    return Scale(exponent, exponent - quantum if quantum < exponent else max(0, -quantum))
+
+
+def concise(value: float, stderr: float) -> str:
+    """Return ``33.612(14)``; without a usable stderr the value alone.
+
+    Parameters
+    ----------
+    value, stderr : float
+        A number and its standard uncertainty, in the same unit.
+
+    Examples
+    --------
+    >>> concise(33.61234, 0.0137)
+    '33.612(14)'
+    >>> concise(-121034.0, 3120.0)
+    '-1.210(31)e5'
+    >>> concise(33.5, 0.0)
+    '33.5'
+    """
+    scale = scale_of(value, stderr)
+    if scale is None:
+        return plain(value)
+    bracket = scale.digits(stderr)
+    if "." in bracket and float(bracket) < 1:
+        bracket = bracket.replace(".", "").lstrip("0")
+    return f"{scale.digits(value)}({bracket}){scale.suffix}"
+
+
+def asymmetric(value: float, stderr: float, low: float, high: float) -> str:
+    """Return the value with its 68 % interval: ``33.612(14)``, or ``33.612 +0.018/-0.011`` where lopsided.
+
+    The two-sided form is used where one side is longer than the other by more than a tenth.
+    """
+    up, down = high - value, value - low
+    if not (math.isfinite(up) and math.isfinite(down)) or up <= 0 or down <= 0:
+        return concise(value, stderr)
+    if max(up, down) <= _ASYMMETRIC * min(up, down):
+        return concise(value, stderr)
+    scale = scale_of(value, min(up, down))
+    if scale is None:
+        return concise(value, stderr)
+    body = f"{scale.digits(value)} +{scale.digits(up)}/-{scale.digits(down)}"
+    return f"({body}){scale.suffix}" if scale.suffix else body
+
+
+def interval(low: float, high: float, value: float, stderr: float) -> str:
+    """Return ``33.584 … 33.640``, written to the same place as the value they belong to."""
+    scale = scale_of(value, stderr)
+    ends = [scale.text(end) if scale else plain(end) for end in (low, high)]
+    return " … ".join(ends)
+
+
+def plain(number: float, digits: int = 12) -> str:
+    """Return a number without uncertainty in at most so many digits, ``nan`` for none."""
+    if not math.isfinite(number):
+        return f"{number:g}"
+    if number == int(number) and abs(number) < 10 ** min(digits, 15):
+        return str(int(number))
+    text = f"{number:.{digits}g}"
+    mantissa, _, exponent = text.partition("e")
+    return f"{mantissa}e{int(exponent)}" if exponent else text
+
+
+def short(number: float) -> str:
+    """Return a number for a list, where four or five digits are plenty."""
+    if not math.isfinite(number) or number == 0:
+        return plain(number)
+    if math.floor(math.log10(abs(number))) in _PLAIN_EXPONENTS:
+        return plain(float(f"{number:.5g}"))
+    return plain(number, 4)
+
+
+def parse_concise(text: str) -> tuple[float, float]:
+    """Return value and stderr of a number in concise notation.
+
+    Raises
+    ------
+    ValueError
+        If the text is not in concise notation.
+    """
+    match = _PATTERN.fullmatch(text.strip())
+    if match is None:
+        raise ValueError(f"not a number in concise notation: {text!r}")
+    value, stderr = Decimal(match["value"]), Decimal(match["stderr"])
+    if "." not in match["stderr"]:
+        stderr = stderr.scaleb(min(0, _places(value)))
+    exponent = int(match["exponent"] or 0)
+    return float(value.scaleb(exponent)), float(stderr.scaleb(exponent))
+
+
+def _significant(number: Decimal, digits: int) -> Decimal:
+    """Return the number rounded to so many significant digits."""
+    return Context(prec=digits, rounding=ROUND_HALF_EVEN).plus(number)
+
+
+def _rounded(number: Decimal, decimals: int) -> Decimal:
+    """Return the number rounded at a decimal place (negative: left of the point)."""
+    return number.quantize(Decimal(1).scaleb(-decimals), context=_CONTEXT)
+
+
+def _exponent(number: Decimal) -> int:
+    """Return the power of ten of the leading digit, a very low one for zero."""
+    return number.adjusted() if number else -10_000
+
+
+def _places(number: Decimal) -> int:
+    """Return the exponent of the last written digit."""
+    exponent = number.as_tuple().exponent
+    return exponent if isinstance(exponent, int) else 0

@@ -1,0 +1,293 @@
+"""What people see: the only module that knows rich.
+
+On a terminal: headings, aligned tables and charts, at its width. Piped: the same tables as tab-separated lines with
+a head line, nothing else, so that other programs can read them. With ``--json``: one object. Sayings that are not the
+answer (the store in use, warnings) go to stderr unless stdout is a terminal. Meaning never rests on colour.
+"""
+
+from __future__ import annotations
+
+import os
+import shutil
+import sys
+import textwrap
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any, Literal, TextIO
+
+from nightfold_cli.canvas import Line
+from nightfold_cli.jsonout import document
+from nightfold_cli.printable import printable
+
+if TYPE_CHECKING:
+    from rich.console import Console
+
+_GAP = 2
+_STYLES = {"axis": "dim", "curve": "cyan", "data": "bold", "label": "", "plain": ""}
+_WIDEST_TEXT = 100
+
+
+@dataclass(frozen=True, slots=True)
+class Cell:
+    """A cell that reads differently on a screen and in a pipe."""
+
+    screen: str
+    plain: str
+
+
+@dataclass(frozen=True, slots=True)
+class Column:
+    """A column of a table.
+
+    Attributes
+    ----------
+    name : str
+        What stands above it.
+    right : bool
+        Whether it is aligned to the right, as numbers are.
+    spare : int
+        0 for a column that is always shown; others are left out on a narrow screen, the highest first.
+    wraps : bool
+        Whether long cells may run over several lines.
+    plain_name : str
+        The name in a pipe, where it differs.
+    """
+
+    name: str
+    right: bool = False
+    spare: int = 0
+    wraps: bool = False
+    plain_name: str = ""
+
+
+Row = Sequence[str | Cell]
+
+
+class Screen:
+    """Where the answer goes and how it is dressed.
+
+    Parameters
+    ----------
+    out, err : TextIO
+        Streams of the answer and of what is said beside it.
+    mode : 'terminal', 'piped' or 'json'
+        How the answer is dressed.
+    width : int
+        Columns of the terminal.
+    """
+
+    def __init__(self, out: TextIO, err: TextIO, mode: Literal["terminal", "piped", "json"], width: int) -> None:
+        self.out, self.err, self.mode, self.width = out, err, mode, max(40, width)
+        self.unicode = _can_show(out, "●⣿█")
+        self._console: Console | None = None
+
+    @classmethod
+    def here(cls, json: bool) -> Screen:
+        """Return the screen of this process."""
+        mode: Literal["terminal", "piped", "json"] = (
+            "json" if json else "terminal" if sys.stdout.isatty() else "piped"
+        )
+        for stream in (sys.stdout, sys.stderr):
+            if hasattr(stream, "reconfigure"):
+                stream.reconfigure(errors="backslashreplace")
+        return cls(sys.stdout, sys.stderr, mode, shutil.get_terminal_size().columns)
+
+    @property
+    def terminal(self) -> bool:
+        """Return whether a person is looking."""
+        return self.mode == "terminal"
+
+    @property
+    def json(self) -> bool:
+        """Return whether the answer is one JSON object."""
+        return self.mode == "json"
+
+    def answer(self, answer: Mapping[str, Any]) -> None:
+        """Write the answer as JSON."""
+        self.out.write(document(answer) + "\n")
+
+    def store(self, where: str) -> None:
+        """Name the store in use."""
+        if self.terminal:
+            self._styled("store " + printable(where), "dim")
+        else:
+            self.say(f"store {where}")
+
+    def say(self, text: str) -> None:
+        """Say something that is not the answer, on stderr."""
+        self.err.write(f"nightfold: {printable(text)}\n")
+
+    def note(self, text: str) -> None:
+        """Add a remark below an answer; only people need it."""
+        if self.terminal:
+            self._wrapped(text, "", "dim")
+
+    def heading(self, title: str, detail: str = "") -> None:
+        """Start a part of the answer; only people need it."""
+        if not self.terminal:
+            return
+        self._blank()
+        self._runs([(printable(title), "bold"), ("  " + printable(detail) if detail else "", "")])
+
+    def text(self, text: str, *, strong: bool = False, indent: str = "") -> None:
+        """Write a sentence of the answer, wrapped on a terminal."""
+        if self.terminal:
+            self._wrapped(text, indent, "bold" if strong else "")
+        elif self.mode == "piped":
+            self.out.write(indent + printable(text) + "\n")
+
+    def item(self, head: str, text: str) -> None:
+        """Write one item of a list: a head, then a sentence below or beside it."""
+        if self.terminal:
+            self._wrapped(f"{head}: {text}", "  - ", "", "    ")
+        elif self.mode == "piped":
+            self.out.write(f"{printable(head)}\t{printable(text)}\n")
+
+    def fields(self, pairs: Iterable[tuple[str, str | Cell]]) -> None:
+        """Write names and values below each other."""
+        listed = [(name, _of(value, self.terminal)) for name, value in pairs]
+        if not self.terminal:
+            self._tabbed([[name, value] for name, value in listed])
+            return
+        widest = max((len(name) for name, _ in listed), default=0)
+        for name, value in listed:
+            self._wrapped(value, f"  {name.ljust(widest)}  ", "", " " * (widest + 4))
+
+    def chart(self, lines: Iterable[Line]) -> None:
+        """Draw a chart; only people need it."""
+        if self.terminal:
+            for line in lines:
+                self._runs([(text, _STYLES[role]) for text, role in line])
+
+    def table(self, columns: Sequence[Column], rows: Iterable[Row], *, empty: str = "nothing to show") -> None:
+        """Write a table; `empty` is said where there is no row."""
+        listed = [list(row) for row in rows]
+        if not self.terminal:
+            self._tabbed([[column.plain_name or column.name for column in columns]])
+            self._tabbed([[_of(cell, screen=False) for cell in row] for row in listed])
+            if not listed:
+                self.say(empty)
+            return
+        if not listed:
+            self._wrapped(empty, "", "")
+            return
+        self._drawn(columns, [[_of(cell, screen=True) for cell in row] for row in listed])
+
+    def _drawn(self, columns: Sequence[Column], rows: list[list[str]]) -> None:
+        """Draw a table on the terminal with the columns there is room for."""
+        from rich.table import Table
+        from rich.text import Text
+
+        widths = [_width(column, [row[index] for row in rows]) for index, column in enumerate(columns)]
+        shown = _fitting(columns, widths, self.width)
+        table = Table(box=None, padding=(0, _GAP, 0, 0), pad_edge=False, show_edge=False, header_style="bold")
+        for index in shown:
+            column = columns[index]
+            table.add_column(
+                Text(column.name),
+                justify="right" if column.right else "left",
+                no_wrap=not column.wraps,
+                overflow="fold",
+                min_width=None if column.wraps else min(widths[index], self.width),
+            )
+        for row in rows:
+            table.add_row(*(Text(row[index]) for index in shown))
+        self._rich().print(table)
+        hidden = [column.name for index, column in enumerate(columns) if index not in shown]
+        if hidden:
+            self.note(f"no room for: {', '.join(hidden)}")
+
+    def _tabbed(self, rows: Iterable[Sequence[str]]) -> None:
+        """Write lines of cells separated by tabs."""
+        self.out.writelines("\t".join(row) + "\n" for row in rows)
+
+    def _wrapped(self, text: str, first: str, style: str, rest: str | None = None) -> None:
+        """Write a paragraph, wrapped at the width of the screen."""
+        width = min(self.width, _WIDEST_TEXT + len(first))
+        following = first if rest is None else rest
+        lines = [
+            line
+            for part in text.split("\n")
+            for line in textwrap.wrap(
+                printable(part),
+                width,
+                initial_indent=first,
+                subsequent_indent=following,
+                break_on_hyphens=False,
+            )
+            or [first.rstrip()]
+        ]
+        for line in lines:
+            self._styled(line, style)
+
+    def _styled(self, text: str, style: str) -> None:
+        """Write one line in one style."""
+        self._runs([(text, style)])
+
+    def _blank(self) -> None:
+        """Write an empty line."""
+        self._runs([])
+
+    def _runs(self, runs: Sequence[tuple[str, str]]) -> None:
+        """Write one line made of runs of text."""
+        from rich.text import Text
+
+        line = Text(no_wrap=True, overflow="ignore", end="")
+        for text, style in runs:
+            line.append(text, style or None)
+        self._rich().print(line, crop=False, soft_wrap=True)
+
+    def _rich(self) -> Console:
+        """Return the console, made when first needed."""
+        if self._console is None:
+            from rich.console import Console
+
+            self._console = Console(
+                file=self.out,
+                width=self.width,
+                highlight=False,
+                markup=False,
+                emoji=False,
+                legacy_windows=False,
+                no_color=bool(os.environ.get("NO_COLOR")),
+                force_terminal=self.terminal,
+            )
+        return self._console
+
+
+def _can_show(stream: TextIO, characters: str) -> bool:
+    """Return whether a stream's encoding holds these characters."""
+    try:
+        characters.encode(getattr(stream, "encoding", None) or "utf-8")
+    except (UnicodeEncodeError, LookupError):
+        return False
+    return True
+
+
+def _of(cell: str | Cell, screen: bool) -> str:
+    """Return the text of a cell; a line break of ours survives on a screen."""
+    if isinstance(cell, str):
+        return printable(cell)
+    return "\n".join(map(printable, cell.screen.split("\n"))) if screen else printable(cell.plain)
+
+
+def _width(column: Column, cells: Sequence[str]) -> int:
+    """Return how wide a column wants to be."""
+    from rich.cells import cell_len
+
+    return max(cell_len(line) for text in (column.name, *cells) for line in text.split("\n"))
+
+
+def _fitting(columns: Sequence[Column], widths: Sequence[int], width: int) -> list[int]:
+    """Return which columns there is room for: spare ones go first, the most spare before all."""
+    shown = list(range(len(columns)))
+
+    def needed() -> int:
+        return sum(widths[index] + _GAP for index in shown) - _GAP
+
+    while needed() > width:
+        spare = max(shown, key=lambda index: (columns[index].spare, index))
+        if columns[spare].spare == 0:
+            break
+        shown.remove(spare)
+    return shown
