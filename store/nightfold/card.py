@@ -1,0 +1,219 @@
+"""The machine card: a TOML file that says what a machine's parameters and observables are."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from datetime import time
+from pathlib import Path
+
+from nightfold.cardkeys import TIME_ZONE, Kind, Table
+from nightfold.errors import CardError
+
+DAY_S = 86400.0
+
+
+@dataclass(frozen=True, slots=True)
+class NamedQuantity:
+    """What the card says about one parameter or observable.
+
+    Attributes
+    ----------
+    name : str
+    unit : str or None
+        None until stated; the empty text for a pure number.
+    low, high : float or None
+        Plausible range; a value outside is remarked, never refused.
+    description : str
+    kind : {'number', 'text', 'truth'} or None
+        None until a record shows it.
+    """
+
+    name: str
+    unit: str | None = None
+    low: float | None = None
+    high: float | None = None
+    description: str = ""
+    kind: Kind | None = None
+
+    def plausible(self, value: float) -> bool:
+        """Return whether a value lies in the plausible range; nan does not, and without a range all do."""
+        if self.low is None or self.high is None:
+            return True
+        return self.low <= value <= self.high
+
+
+@dataclass(frozen=True, slots=True)
+class MachineCard:
+    """A machine as its card describes it.
+
+    Attributes
+    ----------
+    machine : str
+    species : tuple of str
+        Isotopes, such as ``39K``.
+    zone : str
+        IANA time zone in which times are shown and nights are cut.
+    night_boundary : datetime.time
+        Local time at which one night ends and the next begins.
+    rejoin_within_s : float
+        A scan label used again within this many seconds goes on with its round; later it opens a new one.
+    naive_times : bool
+        Whether times without an offset are read as local times of `zone`.
+    parameters, observables : mapping of str to NamedQuantity
+    main_observable : str or None
+        The observable shown when none is named.
+    toml : str
+        The card as read.
+    """
+
+    machine: str
+    species: tuple[str, ...] = ()
+    zone: str = "UTC"
+    night_boundary: time = time(12)
+    rejoin_within_s: float = DAY_S
+    naive_times: bool = False
+    parameters: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
+    observables: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
+    main_observable: str | None = None
+    toml: str = ""
+
+    @property
+    def digest(self) -> str:
+        """SHA-256 of the card as read, in hexadecimal."""
+        return hashlib.sha256(self.toml.encode("utf-8")).hexdigest()
+
+    def observable(self, name: str) -> NamedQuantity | None:
+        """Return the entry of an observable; ``atom_number[up]`` shares that of ``atom_number``."""
+        return self.observables.get(name) or self.observables.get(without_cloud(name))
+
+
+def without_cloud(name: str) -> str:
+    """Return the name of an observable without its cloud: ``atom_number`` of ``atom_number[up]``."""
+    base, bracket, _ = name.partition("[")
+    return base if base and bracket and name.endswith("]") else name
+
+
+def read_card(path: str | Path) -> MachineCard:
+    """Return the card in a TOML file.
+
+    Raises
+    ------
+    CardError
+        If the file cannot be read, is no TOML, or a key is unknown, missing or wrong; the message names file,
+        line, key, value found and value wanted.
+    """
+    try:
+        data = Path(path).read_bytes()
+    except OSError as error:
+        reason = error.strerror or str(error)
+        raise CardError(f"{path}: the card cannot be read ({reason}); wanted a TOML file") from error
+    try:
+        text = data.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        line = data.count(b"\n", 0, error.start) + 1
+        found = f"byte 0x{data[error.start]:02x}"
+        raise CardError(f"{path}:{line}: found {found}, wanted UTF-8 text; save the card as UTF-8") from error
+    return parse_card(text, source=str(path))
+
+
+def parse_card(text: str, *, source: str = "card") -> MachineCard:
+    """Return the card written in a TOML text; `source` names it in messages.
+
+    Raises
+    ------
+    CardError
+        As `read_card`.
+    """
+    try:
+        content = tomllib.loads(text)
+    except (tomllib.TOMLDecodeError, RecursionError) as error:
+        raise CardError(f"{source}: this is no TOML: {error}") from error
+    table = Table(source, text, content)
+    table.check_keys(
+        *("machine", "species", "zone", "night_boundary", "rejoin_within", "naive_times", "main_observable"),
+        *("parameters", "observables"),
+    )
+    machine = table.name("machine")
+    if machine is None:
+        raise table.error("machine", "nothing", 'the name of the machine: machine = "heron"')
+    parameters = {name: _parameter(name, entry) for name, entry in table.entries("parameters")}
+    observables = {name: _observable(name, entry) for name, entry in table.entries("observables")}
+    for name in parameters.keys() & observables.keys():
+        raise table.error(("observables", name), "a name that is also a parameter", "one or the other")
+    card = MachineCard(
+        machine=machine,
+        species=table.species("species"),
+        zone=table.zone("zone") or "UTC",
+        night_boundary=table.clock("night_boundary") or time(12),
+        rejoin_within_s=DAY_S if (seconds := table.seconds("rejoin_within")) is None else seconds,
+        naive_times=table.truth("naive_times") or False,
+        parameters=parameters,
+        observables=observables,
+        main_observable=table.name("main_observable"),
+        toml=text,
+    )
+    main = card.main_observable
+    if main is not None and card.observable(main) is None:
+        raise table.error(
+            "main_observable", repr(main), "an observable of this card" + table.near(main, observables)
+        )
+    return card
+
+
+def _parameter(name: str, entry: Table) -> NamedQuantity:
+    """Return what an entry of ``[parameters]`` says."""
+    entry.check_keys("unit", "range", "description", "kind")
+    unit, limits, kind = entry.unit("unit"), entry.limits("range"), entry.kind("kind")
+    numeric = [key for key, value in (("unit", unit), ("range", limits)) if value is not None]
+    if numeric and kind in ("text", "truth"):
+        raise entry.error(numeric[0], f"a {numeric[0]} on a {kind}", f'no {numeric[0]}, or kind = "number"')
+    low, high = limits or (None, None)
+    return NamedQuantity(
+        name, unit, low, high, entry.text("description") or "", "number" if numeric else kind
+    )
+
+
+def _observable(name: str, entry: Table) -> NamedQuantity:
+    """Return what an entry of ``[observables]`` says."""
+    entry.check_keys("unit", "range", "description")
+    low, high = entry.limits("range") or (None, None)
+    return NamedQuantity(name, entry.unit("unit"), low, high, entry.text("description") or "", "number")
+
+
+def starter_card(machine: str, zone: str = "UTC") -> str:
+    """Return the text of a card to begin with: the machine and its zone, the rest as commented examples."""
+    return _STARTER.format(machine=_quote(machine), zone=_quote(zone), example=TIME_ZONE)
+
+
+def _quote(text: str) -> str:
+    """Return a text as a TOML string; what JSON escapes, TOML reads."""
+    return json.dumps(text, ensure_ascii=False).replace("\x7f", "\\u007f")
+
+
+_STARTER = """\
+# The machine card: what the machine's parameters and observables are.
+# Remove the # before a line to use it. Nothing but the machine's name is required.
+machine = {machine}
+zone = {zone}
+# An IANA name, such as {example}: times are shown in this zone, and nights are cut in it.
+
+# species = ["39K"]
+# night_boundary = "12:00"       # local time at which one night ends and the next begins
+# rejoin_within = "24 h"         # a scan label used again within this time goes on with its scan
+# naive_times = false            # true: times without an offset are local times of the zone
+# main_observable = "atom_number"
+
+# [parameters.coil_current]
+# unit = "A"
+# range = [0, 120]               # plausible values; one outside is remarked, never refused
+# description = "current of the Feshbach coils"
+
+# [observables.atom_number]
+# unit = "atoms"
+# range = [0, 1e6]
+# description = "atoms in the trap, from the absorption image"
+"""
