@@ -1,0 +1,68 @@
+"""Choosing the reader of a file by its suffix."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator
+from dataclasses import replace
+from pathlib import Path
+
+from nightfold.card import MachineCard
+from nightfold.errors import NotFound, RecordError
+from nightfold.intake.csvfile import CsvColumns, read_csv
+from nightfold.intake.incoming import Incoming
+from nightfold.intake.jsondocument import is_document, read_json_document
+from nightfold.intake.jsonlines import read_json_lines
+
+JSON_LINES = (".jsonl", ".ndjson")
+CSV = (".csv", ".tsv", ".dat", ".txt")
+
+
+def read_file(
+    path: str | Path, *, columns: CsvColumns | None = None, card: MachineCard | None = None
+) -> Iterator[Incoming]:
+    """Return an iterator over the records of a file, chosen by its suffix.
+
+    ``.jsonl`` and ``.ndjson`` are JSON lines. ``.json`` is JSON lines too, or one array of records, or
+    records printed over several lines. ``.csv``, ``.tsv``, ``.dat`` and ``.txt`` are tables.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    columns : CsvColumns, optional
+        How to read a table.
+    card : MachineCard, optional
+        The card of the machine, for tables.
+
+    Raises
+    ------
+    NotFound
+        If there is no such file.
+    RecordError
+        If it is a folder, cannot be read, or its suffix is not known.
+    """
+    file = Path(path)
+    _check_readable(file)
+    suffix = file.suffix.lower()
+    if suffix in JSON_LINES:
+        return read_json_lines(path)
+    if suffix == ".json":
+        return read_json_document(path) if is_document(path) else read_json_lines(path)
+    if suffix in CSV:
+        if suffix == ".tsv":
+            columns = columns or CsvColumns()
+            columns = replace(columns, delimiter=columns.delimiter or "\t")
+        return read_csv(path, card=card, columns=columns)
+    known = ", ".join((*JSON_LINES, ".json", *CSV))
+    raise RecordError(str(path), f"the suffix {suffix!r}" if suffix else "no suffix", f"one of {known}")
+
+
+def _check_readable(file: Path) -> None:
+    """Refuse what is not there, is a folder, or may not be read."""
+    if file.is_dir():
+        raise RecordError(str(file), "a folder", "a file of shot records; name the files in it")
+    if not file.exists():
+        raise NotFound(f"{file}: there is no such file; check the name and the working folder")
+    if not os.access(file, os.R_OK):
+        raise RecordError(str(file), "a file that may not be read", "read permission for it")
