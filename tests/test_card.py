@@ -6,6 +6,7 @@ from pathlib import Path
 from unicodedata import normalize
 
 import pytest
+
 from nightfold.card import MachineCard, NamedQuantity, parse_card, read_card, starter_card, without_cloud
 from nightfold.errors import CardError
 
@@ -149,7 +150,7 @@ def test_rejoin_within(text: str, seconds: float) -> None:
         ),
         (
             'machine = "a"\nmain_observable = "atoms"\n[observables.atom_number]',
-            "heron.toml:2: main_observable: found 'atoms', wanted an observable of this card, such as atom_number",
+            ":2: main_observable: found 'atoms', wanted an observable of this card, such as atom_number",
         ),
         ('machine = "a"\nmain_observable = "atoms"', "wanted an observable of this card; it has none yet"),
         ('machine = "a"\n[parameters.""]', "wanted a name of 1 to 200 printable characters"),

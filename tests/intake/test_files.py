@@ -4,6 +4,7 @@ import os
 from pathlib import Path
 
 import pytest
+
 from nightfold.errors import NotFound, RecordError
 from nightfold.intake.csvfile import CsvColumns
 from nightfold.intake.files import read_file

@@ -4,6 +4,7 @@ import json
 from pathlib import Path
 
 import pytest
+
 from nightfold.errors import RecordError
 from nightfold.intake import jsondocument
 from nightfold.intake.files import read_file
@@ -89,6 +90,6 @@ def test_size_is_limited(path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(jsondocument, "LONGEST_LINE", 10)
     path.write_text('[{"a": 12345}]')
     with pytest.raises(
-        RecordError, match="a printed object of 14 bytes, wanted .* as JSON lines: one object a line"
+        RecordError, match=r"printed object of 14 bytes, wanted .* as JSON lines: one object a line"
     ):
         list(read_json_document(path))
