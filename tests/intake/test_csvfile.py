@@ -119,7 +119,7 @@ def test_a_newcomers_two_columns(path: Path, data: str) -> None:
 
 
 def test_a_measured_peak_parted_by_spaces() -> None:
-    # tests/reference/lmfit_test_peak (lmfit examples): columns parted by spaces, named by the last comment line
+    # Source: lmfit examples (SOURCE.md beside the file); parted by spaces, named by the last comment line.
     columns = CsvColumns(machine="bench", sequence="peak", swept=("t",), observables=("y",), started_at=T)
     items = list(read_csv(PEAK / "test_peak.dat", columns=columns))
     assert (len(items), items[0].line, items[-1].line) == (401, 4, 404)
@@ -127,9 +127,14 @@ def test_a_measured_peak_parted_by_spaces() -> None:
     assert (rows[0]["parameters"], rows[0]["observables"]) == ({"t": 0.0}, {"y": 0.021654})
     assert (rows[-1]["parameters"], rows[-1]["observables"]) == ({"t": 20.0}, {"y": -0.091474})
     named = CsvColumns(
-        machine="bench", sequence="peak", names=("time [s]", "height"), parameters=("time",), observables="rest",
-        delimiter=" ", started_at=T,
-    )  # fmt: skip
+        machine="bench",
+        sequence="peak",
+        names=("time [s]", "height"),
+        parameters=("time",),
+        observables="rest",
+        delimiter=" ",
+        started_at=T,
+    )
     first = records(list(read_csv(PEAK / "test_peak.dat", columns=named)))[0]
     assert first["parameters"] == {"time": {"value": 0.0, "unit": "s"}}
     assert first["observables"] == {"height": 0.021654}

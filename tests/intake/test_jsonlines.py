@@ -188,7 +188,7 @@ RECORDS = st.dictionaries(
 )
 
 
-@settings(max_examples=150, suppress_health_check=[HealthCheck.function_scoped_fixture], deadline=None)
+@settings(max_examples=60, suppress_health_check=[HealthCheck.function_scoped_fixture], deadline=None)
 @given(
     records=st.lists(RECORDS, max_size=5),
     ascii_only=st.booleans(),

@@ -12,8 +12,7 @@ from nightfold.errors import RecordError
 from nightfold.intake.csvcolumns import Column, CsvColumns
 from nightfold.records import shorten
 
-_NUMBER = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
-_WHOLE = re.compile(r"[+-]?[0-9]+")
+_NUMBER = re.compile(r"[+-]?(?:[0-9]+(\.[0-9]*)?|(\.[0-9]+))([eE][+-]?[0-9]+)?")
 _DECIMAL_COMMA = re.compile(r"[+-]?[0-9]*,[0-9]+(?:[eE][+-]?[0-9]+)?")
 _NOT_FINITE = {"nan", "inf", "+inf", "-inf", "infinity", "+infinity", "-infinity"}
 _FLAGS = {"true": True, "false": False, "1": True, "0": False, "": False, "yes": True, "no": False}
@@ -36,13 +35,13 @@ def parse_cell(cell: str, name: str) -> Cell:
     text = cell.strip()
     if not text:
         return None
-    if _WHOLE.fullmatch(text):
+    if number := _NUMBER.fullmatch(text):
+        if number.lastindex:
+            return float(text)
         try:
             return int(text)
         except ValueError as error:
             raise RecordError(name, f"a whole number of {len(text)} digits", "at most 4300 digits") from error
-    if _NUMBER.fullmatch(text):
-        return float(text)
     lower = text.lower()
     if lower in _NOT_FINITE:
         return float(lower)
@@ -120,8 +119,9 @@ class RowReader:
         uncertain: list[tuple[Column, str]] = []
         for column, cell in zip(self.columns, cells, strict=True):
             if column.role == "parameter":
-                if cell.strip():
-                    parameters[column.name] = _setting(column, cell)
+                setting = _setting(column, cell)
+                if setting is not None:
+                    parameters[column.name] = setting
             elif column.role == "observable":
                 observables[column.name] = _reading(column, cell)
             elif column.role == "stderr":
@@ -149,9 +149,9 @@ class RowReader:
 
 
 def _setting(column: Column, cell: str) -> Any:
-    """Return a setting as the shot record states it."""
-    value = cell.strip() if column.is_text else parse_cell(cell, column.name)
-    return value if column.unit is None else {"value": value, "unit": column.unit}
+    """Return a setting as the shot record states it, None for an empty cell."""
+    value = (cell.strip() or None) if column.is_text else parse_cell(cell, column.name)
+    return value if column.unit is None or value is None else {"value": value, "unit": column.unit}
 
 
 def _reading(column: Column, cell: str) -> Any:
