@@ -1,7 +1,7 @@
 """A grid of characters to draw on, with braille dots for fine lines and plain characters for the rest.
 
-A braille character holds two by four dots, so a curve drawn with it is eight times finer than the grid; marks of
-data are whole characters and lie on top. Where the output cannot show braille, everything is ASCII.
+A braille character holds two by four dots, so a curve drawn with it is eight times finer than the grid;
+marks of data are whole characters and lie on top. Where the output cannot show braille, everything is ASCII.
 """
 
 from __future__ import annotations
@@ -30,12 +30,11 @@ class Glyphs:
     below: str
     corner: str
     zero: str
-    levels: str
     shades: str
 
 
-UNICODE = Glyphs("●", "×", "│", "│", "┤", "─", "┬", "└", "┈", "▁▂▃▄▅▆▇█", " ░▒▓█")
-ASCII = Glyphs("o", "x", "|", "|", "+", "-", "+", "+", "-", "_.-=+*#%", " .:+#")
+UNICODE = Glyphs("●", "×", "│", "│", "┤", "─", "┬", "└", "┈", " ░▒▓█")
+ASCII = Glyphs("o", "x", "|", "|", "+", "-", "+", "+", "-", " .:+#")
 
 
 class Canvas:

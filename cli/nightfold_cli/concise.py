@@ -1,8 +1,8 @@
 """Numbers with their uncertainty, as people write them: ``33.612(14)``, ``1.234(56)e5``.
 
-The standard uncertainty is given to two significant digits and the value to the same decimal place, as GUM 7.2.6
-advises for numbers that others will compute with. An exponent is used where the two digits would otherwise
-stand left of the decimal point (``1.210(31)e5``, not ``121000(3100)``) or far right of it.
+The standard uncertainty is given to two significant digits and the value to the same decimal place, as
+GUM 7.2.6 advises for numbers that others will compute with. An exponent is used where the two digits would
+otherwise stand left of the decimal point (``1.210(31)e5``, not ``121000(3100)``) or far right of it.
 
 References
 ----------
@@ -56,7 +56,7 @@ class Scale:
 
 
 def scale_of(value: float, stderr: float) -> Scale | None:
-    """Return the place at which a value with this stderr is written; None where the stderr cannot decide it."""
+    """Return the place at which a value with this stderr is written; None where it decides nothing."""
     if not (math.isfinite(value) and math.isfinite(stderr)) or stderr <= 0:
         return None
     if stderr < abs(value) * _NEGLIGIBLE:

@@ -19,8 +19,8 @@ def document(answer: Mapping[str, Any]) -> str:
 def plain_values(value: Any) -> Any:
     """Return the value made of what JSON knows.
 
-    Numbers of numpy become numbers of Python, whatever is not finite or missing becomes null, aware times become
-    UTC, tuples, sets and arrays become lists.
+    Numbers of numpy become numbers of Python, whatever is not finite or missing becomes null, aware times
+    become UTC, tuples, sets and arrays become lists.
     """
     if value is None or isinstance(value, bool | int | str):
         return value

@@ -53,11 +53,13 @@ class LocalTimes:
     def note(self, machines: Iterable[str | None]) -> str:
         """Return the sentence that names the zone or zones of a table."""
         named = sorted({str(self.zone(machine)) for machine in machines})
-        return f"times in {named[0]}" if len(named) == 1 else "times local to each machine: " + ", ".join(named)
+        return (
+            f"times in {named[0]}" if len(named) == 1 else "times local to each machine: " + ", ".join(named)
+        )
 
 
 def compact(moments: Iterable[datetime]) -> list[str]:
-    """Return local times for one column: without the year where all are of one year, with the zone where several.
+    """Return local times for one column: no year where all are of one, the zone where there are several.
 
     Parameters
     ----------
@@ -88,5 +90,7 @@ def parse_moment(text: str, zone: ZoneInfo) -> datetime:
     try:
         moment = datetime.fromisoformat(text)
     except ValueError:
-        raise ValueError(f"found {text!r}, wanted a day or a time like 2026-10-05 or 2026-10-05T21:14") from None
+        raise ValueError(
+            f"found {text!r}, wanted a day or a time like 2026-10-05 or 2026-10-05T21:14"
+        ) from None
     return moment if moment.tzinfo else moment.replace(tzinfo=zone)

@@ -1,7 +1,7 @@
 """Charts in the terminal: points with their scatter, a fitted curve, residuals, a small trend.
 
-Shapes carry the meaning (``●`` data, ``×`` flagged, fine dots the curve), so nothing is lost without colour. The
-functions return lines made of runs of text with a role; what a role looks like is for `render` to say.
+Shapes carry the meaning (``●`` data, ``×`` flagged, fine dots the curve), so nothing is lost without colour.
+The functions return lines made of runs of text with a role; what a role looks like is for `render` to say.
 """
 
 from __future__ import annotations
@@ -113,7 +113,10 @@ class Chart:
         _draw_points(canvas, frame, self.points, self.glyphs)
         across = ticks_between(frame.low_x, frame.high_x, max(2, canvas.width // 12))
         up = ticks_between(frame.low_y, frame.high_y, max(2, canvas.height // 2))
-        rows = {frame.cell(canvas, frame.low_x, at)[1]: name for at, name in zip(up.positions, up.labels, strict=True)}
+        rows = {
+            frame.cell(canvas, frame.low_x, at)[1]: name
+            for at, name in zip(up.positions, up.labels, strict=True)
+        }
         body = [_margin(rows.get(row, ""), self.glyphs) + canvas.line(row) for row in range(canvas.height)]
         return [
             [(up.title(self.y.name, self.y.unit), "label")],
@@ -185,27 +188,6 @@ class Chart:
         ]
 
 
-def sparkline(values: Sequence[float], width: int, *, unicode: bool = True) -> str:
-    """Return a row of bars, as high as the values are large; a blank where there is no value.
-
-    More values than the width are averaged in groups of neighbours.
-    """
-    levels = (UNICODE if unicode else ASCII).levels
-    groups = _groups(values, width)
-    finite = [value for value in groups if math.isfinite(value)]
-    if not finite:
-        return ""
-    low, span = min(finite), max(finite) - min(finite)
-    middle = len(levels) // 2
-
-    def bar(value: float) -> str:
-        if not math.isfinite(value):
-            return " "
-        return levels[min(len(levels) - 1, int((value - low) / span * len(levels)))] if span else levels[middle]
-
-    return "".join(bar(value) for value in groups)
-
-
 def shading(rows: Sequence[Sequence[float]], *, unicode: bool = True) -> list[str]:
     """Return a map of values as shades, two characters a cell; ``??`` where there is no value."""
     shades = (UNICODE if unicode else ASCII).shades
@@ -253,20 +235,10 @@ def _draw_points(canvas: Canvas, frame: Frame, points: Points, glyphs: Glyphs) -
 
 def _margin(label: str, glyphs: Glyphs) -> Line:
     """Return the y axis of one row."""
-    return [(label.rjust(_LABELS - 1)[: _LABELS - 1] + " ", "label"), (glyphs.tick if label else glyphs.vertical, "axis")]
-
-
-def _groups(values: Sequence[float], width: int) -> list[float]:
-    """Return at most `width` values, each the mean of neighbours."""
-    count = len(values)
-    if count <= width:
-        return [float(value) for value in values]
-    edges = [round(index * count / width) for index in range(width + 1)]
-    means = []
-    for start, stop in zip(edges, edges[1:], strict=False):
-        part = [value for value in values[start:stop] if math.isfinite(value)]
-        means.append(math.fsum(part) / len(part) if part else math.nan)
-    return means
+    return [
+        (label.rjust(_LABELS - 1)[: _LABELS - 1] + " ", "label"),
+        (glyphs.tick if label else glyphs.vertical, "axis"),
+    ]
 
 
 def _widened(low: float, high: float) -> tuple[float, float]:

@@ -1,7 +1,7 @@
 """Text from records, made safe to print.
 
-Labels, notes and names come from anywhere. Control characters could move the cursor or break a line of a table in
-two, so they are shown as escapes.
+Labels, notes and names come from anywhere. Control characters could move the cursor or break a line of a
+table in two, so they are shown as escapes.
 """
 
 from __future__ import annotations
@@ -12,12 +12,12 @@ _JOINER = "\u200d"  # holds emoji together, harmless
 
 
 def printable(text: object) -> str:
-    """Return the text with control characters, line breaks and bidirectional marks shown as escapes.
+    r"""Return the text with control characters, line breaks and bidirectional marks shown as escapes.
 
     Examples
     --------
-    >>> printable("loss\\tcoarse\\x1b[2J")
-    'loss\\\\tcoarse\\\\x1b[2J'
+    >>> printable("loss\tcoarse\x1b[2J")
+    'loss\\tcoarse\\x1b[2J'
     """
     whole = str(text)
     if whole.isprintable():

@@ -1,8 +1,9 @@
 """What people see: the only module that knows rich.
 
-On a terminal: headings, aligned tables and charts, at its width. Piped: the same tables as tab-separated lines with
-a head line, nothing else, so that other programs can read them. With ``--json``: one object. Sayings that are not the
-answer (the store in use, warnings) go to stderr unless stdout is a terminal. Meaning never rests on colour.
+On a terminal: headings, aligned tables and charts, at its width. Piped: the same tables as tab-separated
+lines with a head line, nothing else, so that other programs can read them. With ``--json``: one object. What
+is said beside the answer (the store in use, warnings) goes to stderr unless stdout is a terminal. Meaning
+never rests on colour.
 """
 
 from __future__ import annotations
@@ -25,14 +26,21 @@ if TYPE_CHECKING:
 _GAP = 2
 _STYLES = {"axis": "dim", "curve": "cyan", "data": "bold", "label": "", "plain": ""}
 _WIDEST_TEXT = 100
+_WIDEST_WORD = 24
 
 
 @dataclass(frozen=True, slots=True)
 class Cell:
-    """A cell that reads differently on a screen and in a pipe."""
+    """A cell that reads differently on a screen, where it may have several lines, and in a pipe."""
 
     screen: str
-    plain: str
+    plain: str = ""
+
+    @classmethod
+    def of(cls, lines: Sequence[str], plain: str | None = None) -> Cell:
+        """Return a cell of several lines; in a pipe they are parted by semicolons."""
+        kept = [printable(line) for line in lines]
+        return cls("\n".join(kept), "; ".join(line for line in kept if line) if plain is None else plain)
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,7 +84,9 @@ class Screen:
         Columns of the terminal.
     """
 
-    def __init__(self, out: TextIO, err: TextIO, mode: Literal["terminal", "piped", "json"], width: int) -> None:
+    def __init__(
+        self, out: TextIO, err: TextIO, mode: Literal["terminal", "piped", "json"], width: int
+    ) -> None:
         self.out, self.err, self.mode, self.width = out, err, mode, max(40, width)
         self.unicode = _can_show(out, "●⣿█")
         self._console: Console | None = None
@@ -159,8 +169,10 @@ class Screen:
             for line in lines:
                 self._runs([(text, _STYLES[role]) for text, role in line])
 
-    def table(self, columns: Sequence[Column], rows: Iterable[Row], *, empty: str = "nothing to show") -> None:
-        """Write a table; `empty` is said where there is no row."""
+    def table(
+        self, columns: Sequence[Column], rows: Iterable[Row], *, empty: str, spaced: bool = False
+    ) -> None:
+        """Write a table; `empty` is said where there is no row, `spaced` parts rows of several lines."""
         listed = [list(row) for row in rows]
         if not self.terminal:
             self._tabbed([[column.plain_name or column.name for column in columns]])
@@ -171,16 +183,24 @@ class Screen:
         if not listed:
             self._wrapped(empty, "", "")
             return
-        self._drawn(columns, [[_of(cell, screen=True) for cell in row] for row in listed])
+        self._blank()
+        self._drawn(columns, [[_of(cell, screen=True) for cell in row] for row in listed], spaced)
 
-    def _drawn(self, columns: Sequence[Column], rows: list[list[str]]) -> None:
+    def _drawn(self, columns: Sequence[Column], rows: list[list[str]], spaced: bool) -> None:
         """Draw a table on the terminal with the columns there is room for."""
         from rich.table import Table
         from rich.text import Text
 
         widths = [_width(column, [row[index] for row in rows]) for index, column in enumerate(columns)]
         shown = _fitting(columns, widths, self.width)
-        table = Table(box=None, padding=(0, _GAP, 0, 0), pad_edge=False, show_edge=False, header_style="bold")
+        table = Table(
+            box=None,
+            padding=(0, _GAP, 1 if spaced else 0, 0),
+            collapse_padding=False,
+            pad_edge=False,
+            show_edge=False,
+            header_style="bold",
+        )
         for index in shown:
             column = columns[index]
             table.add_column(
@@ -188,7 +208,7 @@ class Screen:
                 justify="right" if column.right else "left",
                 no_wrap=not column.wraps,
                 overflow="fold",
-                min_width=None if column.wraps else min(widths[index], self.width),
+                min_width=min(widths[index], self.width),
             )
         for row in rows:
             table.add_row(*(Text(row[index]) for index in shown))
@@ -268,14 +288,19 @@ def _of(cell: str | Cell, screen: bool) -> str:
     """Return the text of a cell; a line break of ours survives on a screen."""
     if isinstance(cell, str):
         return printable(cell)
-    return "\n".join(map(printable, cell.screen.split("\n"))) if screen else printable(cell.plain)
+    return (
+        "\n".join(map(printable, cell.screen.split("\n"))) if screen else printable(cell.plain or cell.screen)
+    )
 
 
 def _width(column: Column, cells: Sequence[str]) -> int:
-    """Return how wide a column wants to be."""
+    """Return how wide a column must be: as its longest line, or its longest word where lines may wrap."""
     from rich.cells import cell_len
 
-    return max(cell_len(line) for text in (column.name, *cells) for line in text.split("\n"))
+    texts = (column.name, *cells)
+    parts = [part for text in texts for part in (text.split() if column.wraps else text.split("\n"))]
+    longest = max((cell_len(part) for part in parts), default=0)
+    return min(longest, _WIDEST_WORD) if column.wraps else longest
 
 
 def _fitting(columns: Sequence[Column], widths: Sequence[int], width: int) -> list[int]:

@@ -76,7 +76,7 @@ def _count(low: float, high: float, step: float) -> int:
 
 
 def _engineering(largest: float) -> int:
-    """Return the multiple of three to take out of numbers up to this size; 0 where they read well as they are."""
+    """Return the multiple of three to take out of numbers up to this size; 0 where they read well."""
     if largest <= 0 or 1e-2 <= largest < 1e5:
         return 0
     return 3 * math.floor(math.log10(largest) / 3)

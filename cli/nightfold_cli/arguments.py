@@ -1,0 +1,57 @@
+"""Arguments that commands share, and the parser of one command."""
+
+from __future__ import annotations
+
+import os
+import re
+from argparse import ArgumentParser, ArgumentTypeError, RawDescriptionHelpFormatter
+from types import ModuleType
+
+DEFAULT_STORE = "nightfold.sqlite"
+
+
+def command_parser(command: str, module: ModuleType) -> ArgumentParser:
+    """Return the parser of one command.
+
+    The module brings ``HELP`` (one line), ``EXAMPLES`` (lines of shell) and ``add_arguments``; options that
+    all commands know are added here.
+    """
+    parser = ArgumentParser(
+        prog=f"nightfold {command}",
+        description=module.HELP[0].upper() + module.HELP[1:] + ".",
+        epilog="examples:\n" + "".join(f"  {line}\n" for line in module.EXAMPLES),
+        formatter_class=RawDescriptionHelpFormatter,
+        allow_abbrev=False,
+    )
+    module.add_arguments(parser)
+    shared = parser.add_argument_group("every command")
+    shared.add_argument(
+        "--store",
+        metavar="WHERE",
+        default=os.environ.get("NIGHTFOLD_STORE") or DEFAULT_STORE,
+        help="a file or a PostgreSQL URL (default: $NIGHTFOLD_STORE, else nightfold.sqlite here)",
+    )
+    shared.add_argument("--json", action="store_true", help="answer with one JSON object")
+    shared.add_argument("--debug", action="store_true", help="show where in the program an error arose")
+    return parser
+
+
+def named_number(text: str) -> tuple[str, float]:
+    """Return name and number of ``name=value``."""
+    name, equals, number = text.partition("=")
+    try:
+        return name.strip(), float(number if equals else "")
+    except ValueError:
+        raise ArgumentTypeError(f"found {text!r}, wanted NAME=NUMBER, as in center=33.6") from None
+
+
+def positive(text: str) -> int:
+    """Return a whole number above zero."""
+    if not re.fullmatch(r"0*[1-9]\d*", text):
+        raise ArgumentTypeError(f"found {text!r}, wanted a whole number above zero")
+    return int(text)
+
+
+def scan_key(text: str) -> int | str:
+    """Return a scan's key: a number is an id, anything else a label or ``label#round``."""
+    return int(text) if text.isascii() and text.isdigit() else text

@@ -1,0 +1,1 @@
+"""The commands: each brings HELP, EXAMPLES, add_arguments(parser) and run(args) -> exit code."""

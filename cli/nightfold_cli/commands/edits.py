@@ -1,0 +1,57 @@
+"""``nightfold edits``: the settings that people changed."""
+
+from __future__ import annotations
+
+from argparse import ArgumentParser, Namespace
+
+from nightfold_cli.localtimes import compact, heading
+from nightfold_cli.opening import local_times, moment, opened
+from nightfold_cli.render import Cell, Column, Screen
+from nightfold_cli.settings import setting
+
+HELP = "list the settings that people changed"
+EXAMPLES = ("nightfold edits --since 2026-10-01", "nightfold edits --json")
+
+
+def add_arguments(parser: ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("--since", metavar="TIME", help="from this day or time on (local to the machine)")
+    parser.add_argument("--until", metavar="TIME", help="before this day or time")
+    parser.add_argument("--machine", metavar="NAME", help="of this machine only")
+    parser.add_argument("-p", "--parameter", metavar="NAME", help="of this parameter only")
+
+
+def run(args: Namespace) -> int:
+    """List the edits, the oldest first."""
+    screen = Screen.here(args.json)
+    with opened(args, screen) as store:
+        span = {key: moment(getattr(args, key), store, args.machine) for key in ("since", "until")}
+        edits = store.edits(span["since"], span["until"], machine=args.machine).to_dict("records")
+        times = local_times(store)
+    if args.parameter:
+        edits = [edit for edit in edits if edit["parameter"] == args.parameter]
+    if screen.json:
+        screen.answer({"edits": edits})
+        return 0
+    moments = [times.local(edit["at"], args.machine) for edit in edits]
+    columns = [
+        Column(heading(moments), plain_name="at"),
+        Column("parameter"),
+        Column("old", right=True, wraps=True),
+        Column("new", right=True, wraps=True),
+        Column("sequence", wraps=True),
+    ]
+    rows = [
+        [
+            Cell(when, at.isoformat(timespec="seconds")),
+            edit["parameter"],
+            setting(edit["old"]),
+            setting(edit["new"]),
+            edit["sequence"],
+        ]
+        for when, at, edit in zip(compact(moments), moments, edits, strict=True)
+    ]
+    screen.table(columns, rows, empty="no setting was changed but by a scan")
+    if rows:
+        screen.note(times.note([args.machine]))
+    return 0

@@ -1,0 +1,62 @@
+"""``nightfold export KEY FILE``: write a scan to a file."""
+
+from __future__ import annotations
+
+from argparse import ArgumentParser, Namespace
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from nightfold_cli.arguments import scan_key
+from nightfold_cli.failures import UsageError
+from nightfold_cli.opening import opened
+from nightfold_cli.render import Screen
+
+if TYPE_CHECKING:
+    from nightfold.scans.scan import Scan
+
+HELP = "write a scan to a netCDF or CSV file"
+EXAMPLES = ("nightfold export loss-coarse loss.nc", "nightfold export 41 decay.csv --set-aside")
+_KINDS = {".nc": "netCDF", ".csv": "CSV"}
+
+
+def add_arguments(parser: ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("key", metavar="KEY", type=scan_key, help="id, label or label#round of a scan")
+    parser.add_argument(
+        "file", metavar="FILE", type=Path, help="what to write: NAME.nc (a grid) or NAME.csv (a row a shot)"
+    )
+    parser.add_argument("--force", action="store_true", help="write over a file that is there")
+    parser.add_argument("--set-aside", action="store_true", help="with the shots that are set aside")
+
+
+def run(args: Namespace) -> int:
+    """Write the scan as its suffix says; never half a file."""
+    screen = Screen.here(args.json)
+    path: Path = args.file
+    kind = _KINDS.get(path.suffix.lower())
+    if kind is None:
+        raise UsageError(f"{path}: found the suffix {path.suffix or '(none)'!r}, wanted .nc or .csv")
+    if path.exists() and not args.force:
+        raise UsageError(f"{path} is there already; --force writes over it")
+    with opened(args, screen) as store:
+        scan = store.scan(args.key)
+        _write(scan, path, kind, args.set_aside)
+        key, shots = scan.key, scan.shots + (scan.set_aside if args.set_aside else 0)
+    if screen.json:
+        screen.answer({"scan": key, "file": str(path), "format": kind, "shots": shots})
+        return 0
+    screen.text(f"{key}: {shots} shots written to {path} ({kind})")
+    return 0
+
+
+def _write(scan: Scan, path: Path, kind: str, set_aside: bool) -> None:
+    """Write beside the file, then move into its place."""
+    part = path.with_name(path.name + ".part")
+    try:
+        if kind == "netCDF":
+            scan.dataset(set_aside=set_aside).to_netcdf(part, engine="h5netcdf")
+        else:
+            scan.table(set_aside=set_aside).to_csv(part, index=False)
+        part.replace(path)
+    finally:
+        part.unlink(missing_ok=True)

@@ -1,0 +1,85 @@
+"""``nightfold new``: make a store."""
+
+from __future__ import annotations
+
+from argparse import ArgumentParser, Namespace
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from nightfold_cli.failures import UsageError
+from nightfold_cli.opening import opened
+from nightfold_cli.render import Screen
+
+if TYPE_CHECKING:
+    from nightfold.card import MachineCard
+
+HELP = "make a store, and a machine card if asked"
+EXAMPLES = (
+    "nightfold new",
+    "nightfold new --machine heron --zone Europe/Vienna   writes heron.toml to fill in",
+    "nightfold new --card heron.toml",
+)
+
+
+def add_arguments(parser: ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("--card", metavar="FILE", type=Path, help="use this machine card")
+    parser.add_argument(
+        "--machine", metavar="NAME", help="write a starter card NAME.toml (or to --card FILE)"
+    )
+    parser.add_argument("--zone", metavar="ZONE", default="UTC", help="IANA time zone of the starter card")
+
+
+def run(args: Namespace) -> int:
+    """Make the store, then write and use the card."""
+    screen = Screen.here(args.json)
+    path: Path | None = args.card or (Path(f"{args.machine}.toml") if args.machine else None)
+    if args.machine:
+        _check_free(path)
+    with opened(args, screen, create=True) as store:
+        if args.machine and path:
+            _write_starter(path, args.machine, args.zone)
+        card = store.use_card(path) if path else None
+        where = store.where
+    if screen.json:
+        screen.answer({"store": where, "machine": card.machine if card else None, "card": _name(path)})
+        return 0
+    screen.text(f"A new store: {where}")
+    _advise(screen, path, card, written=bool(args.machine))
+    return 0
+
+
+def _check_free(path: Path | None) -> None:
+    """Refuse to write a card over a file."""
+    if path is None or path.name != str(path.name).strip("/") or path.name in ("", ".", ".."):
+        raise UsageError(f"{path}: not a file name; name one with --card FILE")
+    if path.exists():
+        raise UsageError(f"{path} is there already; use it with --card {path} and without --machine")
+
+
+def _write_starter(path: Path, machine: str, zone: str) -> None:
+    """Write a card to begin with."""
+    from nightfold.card import parse_card, starter_card
+
+    text = starter_card(machine, zone)
+    parse_card(text, source=f"the card for {machine!r}")
+    with path.open("x", encoding="utf-8") as file:
+        file.write(text)
+
+
+def _advise(screen: Screen, path: Path | None, card: MachineCard | None, *, written: bool) -> None:
+    """Say what to do next."""
+    if written:
+        screen.text(
+            f"A card to fill in: {path}. When it says what you want, 'nightfold take --card {path} …'."
+        )
+    elif card:
+        screen.text(
+            f"Machine {card.machine}: {len(card.parameters)} parameters, {len(card.observables)} observables."
+        )
+    screen.note("Next: nightfold take FILE…")
+
+
+def _name(path: Path | None) -> str | None:
+    """Return the path as text."""
+    return str(path) if path else None

@@ -1,0 +1,66 @@
+"""``nightfold nights``: a line a night."""
+
+from __future__ import annotations
+
+from argparse import ArgumentParser, Namespace
+from typing import Any
+
+from nightfold_cli.arguments import positive
+from nightfold_cli.opening import local_times, opened
+from nightfold_cli.render import Cell, Column, Screen
+
+HELP = "list the nights, a line each"
+EXAMPLES = ("nightfold nights", "nightfold nights --last 7")
+
+
+def add_arguments(parser: ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("--machine", metavar="NAME", help="of this machine only")
+    parser.add_argument("--last", metavar="N", type=positive, help="the last N nights only")
+
+
+def run(args: Namespace) -> int:
+    """List the nights, the oldest first."""
+    screen = Screen.here(args.json)
+    with opened(args, screen) as store:
+        nights = store.nights().to_dict("records")
+        times = local_times(store)
+    if args.machine:
+        nights = [night for night in nights if night["machine"] == args.machine]
+    nights = nights[-args.last :] if args.last else nights
+    if screen.json:
+        screen.answer({"nights": [_entry(night) for night in nights]})
+        return 0
+    columns = [
+        Column("night"),
+        Column("machine", spare=2),
+        Column("from"),
+        Column("to"),
+        Column("shots", right=True),
+        Column("set aside", right=True, spare=1),
+        Column("references", right=True, spare=3),
+        Column("scans", right=True),
+        Column("sequences", wraps=True),
+    ]
+    rows = []
+    for night in nights:
+        first, last = (times.local(night[key], night["machine"]) for key in ("first", "last"))
+        rows.append(
+            [
+                Cell(f"{night['night']:%a %Y-%m-%d}", f"{night['night']}"),
+                night["machine"],
+                Cell(f"{first:%H:%M}", first.isoformat(timespec="seconds")),
+                Cell(f"{last:%H:%M}", last.isoformat(timespec="seconds")),
+                *(str(night[key]) for key in ("shots", "set_aside", "references", "scans")),
+                night["sequences"],
+            ]
+        )
+    screen.table(columns, rows, empty="no shots yet; 'nightfold take FILE…' takes some in")
+    if rows:
+        screen.note(times.note(night["machine"] for night in nights))
+    return 0
+
+
+def _entry(night: dict[str, Any]) -> dict[str, Any]:
+    """Return one night for JSON."""
+    return {**night, "sequences": [name for name in night["sequences"].split(", ") if name]}

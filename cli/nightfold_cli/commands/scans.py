@@ -1,0 +1,150 @@
+"""``nightfold scans``: the scans, with axes and a small trend."""
+
+from __future__ import annotations
+
+from argparse import ArgumentParser, Namespace
+from collections.abc import Sequence
+from typing import TYPE_CHECKING
+
+from nightfold_cli.arguments import positive
+from nightfold_cli.localtimes import LocalTimes, compact, heading
+from nightfold_cli.opening import local_times, moment, opened
+from nightfold_cli.render import Cell, Column, Screen
+from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status
+
+if TYPE_CHECKING:
+    from nightfold.scans.scan import Scan
+
+HELP = "list the scans, with axes and a small trend"
+EXAMPLES = (
+    "nightfold scans",
+    "nightfold scans --since 2026-10-05 --sequence hold-in-trap",
+    "nightfold scans --json | jq '.scans[].label'",
+)
+_ON_SCREEN = 20
+_TREND = 14
+_PLAIN_HEIGHTS = "_.-=+*#%"
+
+
+def add_arguments(parser: ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("--machine", metavar="NAME", help="of this machine only")
+    parser.add_argument("--sequence", metavar="NAME", help="of this sequence only")
+    parser.add_argument("--since", metavar="TIME", help="that ended at this day or time, or later")
+    parser.add_argument("--until", metavar="TIME", help="that began before this day or time")
+    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
+    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
+
+
+def run(args: Namespace) -> int:
+    """List the scans, the newest last."""
+    screen = Screen.here(args.json)
+    with opened(args, screen) as store:
+        since, until = moment(args.since, store, args.machine), moment(args.until, store, args.machine)
+        found = [
+            scan
+            for scan in sorted(store.scans(), key=lambda scan: scan.first)
+            if (not args.machine or scan.machine == args.machine)
+            and (not args.sequence or scan.sequence == args.sequence)
+            and (since is None or scan.last >= since)
+            and (until is None or scan.first < until)
+        ]
+        last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(found))
+        listed = found[-last:] if last else []
+        times = local_times(store)
+        if screen.json:
+            screen.answer({"scans": [entry(scan) for scan in listed]})
+        elif screen.terminal:
+            _draw(screen, listed, times)
+            if len(found) > len(listed):
+                screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
+        else:
+            _tabulate(screen, listed, times)
+    return 0
+
+
+def _draw(screen: Screen, scans: Sequence[Scan], times: LocalTimes) -> None:
+    """Draw two or more lines a scan."""
+    moments = [times.local(scan.first, scan.machine) for scan in scans]
+    trends = {scan.main_observable for scan in scans if scan.main_observable}
+    shared = trends.copy().pop() if len(trends) == 1 else None
+    columns = [
+        Column("scan", wraps=True),
+        Column("axes", wraps=True),
+        Column("points"),
+        Column("shots"),
+        Column(heading(moments)),
+        Column(shared or "trend", spare=1),
+    ]
+    several = len({scan.machine for scan in scans}) > 1
+    rows = []
+    for scan, when in zip(scans, compact(moments), strict=True):
+        aside = f"{scan.set_aside} aside" if scan.set_aside else ""
+        trend = trend_of(scan, unicode=screen.unicode)
+        rows.append(
+            [
+                Cell.of((scan.key, _stream(scan) if several else scan.sequence)),
+                Cell.of(_axes(scan)),
+                Cell.of((grid(scan), f"x {repeats_text(scan)}")),
+                Cell.of((str(scan.shots), aside)),
+                Cell.of((when, status(scan))),
+                Cell.of((trend, "" if shared else scan.main_observable or "")),
+            ]
+        )
+    screen.table(columns, rows, empty="no scans yet; 'nightfold take FILE…' takes shots in", spaced=True)
+    if rows:
+        screen.note(times.note(scan.machine for scan in scans))
+
+
+def trend_of(scan: Scan, *, unicode: bool) -> str:
+    """Return the main observable along the longest axis, as a row of bars."""
+    from nightfold.scans.trend import HEIGHTS, trend
+
+    if not scan.axes or scan.main_observable is None:
+        return ""
+    longest = max(scan.axes, key=lambda axis: axis.points).parameter
+    table = scan.table()
+    if scan.main_observable not in table or longest not in table:
+        return ""
+    bars = trend(table[longest].tolist(), table[scan.main_observable].tolist(), _TREND)
+    return bars if unicode else bars.translate(str.maketrans(HEIGHTS, _PLAIN_HEIGHTS))
+
+
+def _axes(scan: Scan) -> list[str]:
+    """Return the lines that describe the axes: two for one axis, else one each."""
+    if not scan.axes:
+        return ["(nothing moved)"]
+    if len(scan.axes) == 1:
+        return [scan.axes[0].parameter, span(scan.axes[0])]
+    return [axis_line(axis) for axis in scan.axes]
+
+
+def _stream(scan: Scan) -> str:
+    """Return machine and sequence."""
+    return f"{scan.machine}: {scan.sequence}"
+
+
+def _tabulate(screen: Screen, scans: Sequence[Scan], times: LocalTimes) -> None:
+    """Write one line a scan, for programs."""
+    names = (
+        *("id", "scan", "machine", "sequence", "axes", "points", "repeats", "shots", "set_aside"),
+        *("status", "first", "last"),
+    )
+    rows = [
+        [
+            str(scan.id),
+            scan.key,
+            scan.machine,
+            scan.sequence,
+            "; ".join(axis_line(axis) for axis in scan.axes),
+            grid(scan),
+            repeats_text(scan),
+            str(scan.shots),
+            str(scan.set_aside),
+            status(scan),
+            times.stamp(scan.first, scan.machine),
+            times.stamp(scan.last, scan.machine),
+        ]
+        for scan in scans
+    ]
+    screen.table([Column(name) for name in names], rows, empty="no scans")

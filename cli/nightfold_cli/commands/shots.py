@@ -1,0 +1,188 @@
+"""``nightfold shots``: list shots, or show one in full."""
+
+from __future__ import annotations
+
+from argparse import ArgumentParser, Namespace
+from typing import TYPE_CHECKING, Any
+
+from nightfold_cli.arguments import positive, scan_key
+from nightfold_cli.concise import concise
+from nightfold_cli.failures import UsageError
+from nightfold_cli.localtimes import LocalTimes, compact, heading
+from nightfold_cli.opening import local_times, moment, opened
+from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.settings import setting
+
+if TYPE_CHECKING:
+    from nightfold.ledger.queries import ShotView
+    from nightfold.store import Store
+
+HELP = "list shots, or show one in full"
+EXAMPLES = (
+    "nightfold shots -p coil_current -o atom_number --since 2026-10-05",
+    "nightfold shots --scan loss-coarse -o atom_number --set-aside",
+    "nightfold shots 5f3a9c0e",
+)
+_ON_SCREEN = 40
+
+
+def add_arguments(parser: ArgumentParser) -> None:
+    """Declare the arguments."""
+    parser.add_argument("uid", metavar="UID", nargs="?", help="show this shot in full")
+    parser.add_argument(
+        "-p", "--parameter", metavar="NAME", action="append", default=[], help="with this setting"
+    )
+    parser.add_argument(
+        "-o", "--observable", metavar="NAME", action="append", default=[], help="with this reading"
+    )
+    parser.add_argument("--machine", metavar="NAME", help="of this machine only")
+    parser.add_argument("--sequence", metavar="NAME", help="of this sequence only")
+    parser.add_argument("--scan", metavar="KEY", type=scan_key, help="of this scan only")
+    parser.add_argument("--since", metavar="TIME", help="from this day or time on (local to the machine)")
+    parser.add_argument("--until", metavar="TIME", help="before this day or time")
+    parser.add_argument(
+        "--limit", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})"
+    )
+    parser.add_argument("--set-aside", action="store_true", help="with the shots that are set aside")
+
+
+def run(args: Namespace) -> int:
+    """List shots, the newest last, or show the one that was named."""
+    screen = Screen.here(args.json)
+    if args.uid and _filters(args):
+        raise UsageError(f"a shot is shown in full; {_filters(args)[0]} is for lists")
+    with opened(args, screen) as store:
+        times = local_times(store)
+        if args.uid:
+            _show(screen, store.shot(args.uid), times)
+        else:
+            _list(screen, store, args, times)
+    return 0
+
+
+def _filters(args: Namespace) -> list[str]:
+    """Return the options that were given which narrow a list."""
+    names = ("parameter", "observable", "machine", "sequence", "scan", "since", "until", "limit", "set_aside")
+    return [f"--{name.replace('_', '-')}" for name in names if getattr(args, name)]
+
+
+def _list(screen: Screen, store: Store, args: Namespace, times: LocalTimes) -> None:
+    """List shots."""
+    limit = args.limit or (_ON_SCREEN + 1 if screen.terminal else None)
+    table = store.shots(
+        args.parameter,
+        args.observable,
+        machine=args.machine,
+        sequence=args.sequence,
+        scan=args.scan,
+        since=moment(args.since, store, args.machine),
+        until=moment(args.until, store, args.machine),
+        set_aside=args.set_aside,
+        limit=limit,
+    )
+    rows = table.to_dict("records")
+    if screen.json:
+        screen.answer({"shots": rows})
+        return
+    cut = not args.limit and screen.terminal and len(rows) > _ON_SCREEN
+    _draw(
+        screen, rows[-_ON_SCREEN:] if cut else rows, [*args.parameter, *args.observable], args.machine, times
+    )
+    if cut:
+        screen.note(f"the last {_ON_SCREEN} shots; --limit N shows more")
+
+
+def _draw(
+    screen: Screen, rows: list[dict[str, Any]], asked: list[str], machine: str | None, times: LocalTimes
+) -> None:
+    """Draw a line a shot."""
+    moments = [times.local(row["started"], machine) for row in rows]
+    columns = [
+        Column("shot", plain_name="uid"),
+        Column(heading(moments, "started"), plain_name="started"),
+        Column("sequence", spare=2),
+        Column("scan", spare=1),
+        *(Column(name, right=True) for name in asked),
+    ]
+    lines: list[Row] = [
+        [
+            str(row["uid"]),
+            Cell(f"{when}:{at:%S}", at.isoformat(timespec="milliseconds")),
+            setting(row["sequence"]),
+            setting(row["scan"]),
+            *(setting(row[name]) for name in asked),
+        ]
+        for row, when, at in zip(rows, compact(moments), moments, strict=True)
+    ]
+    screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
+    if lines:
+        screen.note(times.note([machine]))
+
+
+def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
+    """Show all that is known of one shot."""
+    if screen.json:
+        screen.answer({"shot": _entry(shot)})
+        return
+    screen.heading(shot.uid)
+    screen.fields(
+        (name, value)
+        for name, value in (
+            ("started", times.full(shot.started, shot.machine)),
+            ("machine", shot.machine),
+            ("sequence", shot.sequence),
+            ("scan", setting(shot.scan)),
+            ("set aside", shot.set_aside or "no"),
+            ("note", shot.note or ""),
+            ("from", f"{shot.source}:{shot.line}" if shot.line else str(shot.source or "")),
+            ("frames", ", ".join(str(frame) for frame in shot.frames)),
+        )
+        if value
+    )
+    screen.table(
+        [Column("observable"), Column("value", right=True), Column("unit"), Column("state", spare=1)],
+        [
+            [name, _reading(value, stderr, state), unit or "", state or ""]
+            for name, (value, stderr, unit, state) in shot.observables.items()
+        ],
+        empty="no observables yet",
+    )
+    screen.table(
+        [Column("parameter"), Column("value", right=True, wraps=True), Column("unit"), Column("swept")],
+        [
+            [name, setting(value), unit or "", "swept" if swept else ""]
+            for name, (value, unit, swept) in shot.parameters.items()
+        ],
+        empty="no parameters",
+    )
+
+
+def _reading(value: float | None, stderr: float | None, state: str | None) -> str:
+    """Return a reading with its uncertainty, or the word for having none."""
+    if value is None:
+        return state or "-"
+    return concise(value, stderr) if stderr else setting(float(value))
+
+
+def _entry(shot: ShotView) -> dict[str, Any]:
+    """Return a shot for JSON."""
+    return {
+        "uid": shot.uid,
+        "started": shot.started,
+        "machine": shot.machine,
+        "sequence": shot.sequence,
+        "scan": shot.scan,
+        "set_aside": shot.set_aside,
+        "note": shot.note,
+        "source": shot.source,
+        "line": shot.line,
+        "frames": [str(frame) for frame in shot.frames],
+        "parameters": {
+            name: {"value": value, "unit": unit, "swept": swept}
+            for name, (value, unit, swept) in shot.parameters.items()
+        },
+        "observables": {
+            name: {"value": value, "stderr": stderr, "unit": unit, "state": state}
+            for name, (value, stderr, unit, state) in shot.observables.items()
+        },
+    }

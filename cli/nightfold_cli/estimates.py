@@ -1,0 +1,66 @@
+"""Estimates of a fit: as lines of a table, as cells, and as JSON."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from typing import TYPE_CHECKING, Any
+
+from nightfold_cli.concise import asymmetric, interval, plain
+from nightfold_cli.render import Cell, Column, Row
+
+if TYPE_CHECKING:
+    from nightfold.fits.result import Estimate, FitWarning
+
+LEVEL_68, LEVEL_95 = 0.6827, 0.95
+COLUMNS = (
+    Column("estimate"),
+    Column("value", right=True),
+    Column("unit"),
+    Column("95 % interval", plain_name="low95"),
+    Column("", plain_name="high95"),
+)
+
+
+def value_text(estimate: Estimate, *, fixed: bool = False) -> str:
+    """Return an estimate in concise notation, with its 68 % interval where that is lopsided."""
+    if fixed:
+        return f"{plain(estimate.value)} fixed"
+    if not math.isfinite(estimate.stderr):
+        return f"{plain(estimate.value, 6)}(?)"
+    return asymmetric(estimate.value, estimate.stderr, *estimate.interval(LEVEL_68))
+
+
+def interval_text(estimate: Estimate) -> str:
+    """Return the 95 % interval, to the same place as the value."""
+    low, high = estimate.interval(LEVEL_95)
+    return interval(low, high, estimate.value, estimate.stderr)
+
+
+def rows(estimates: Mapping[str, Estimate], fixed: Sequence[str]) -> list[Row]:
+    """Return a line an estimate, for the columns name, value, unit and interval."""
+    return [
+        [
+            name,
+            value_text(estimate, fixed=name in fixed),
+            estimate.unit or "",
+            Cell("" if name in fixed else interval_text(estimate), " "),
+        ]
+        for name, estimate in estimates.items()
+    ]
+
+
+def entry(estimate: Estimate) -> dict[str, Any]:
+    """Return an estimate for JSON."""
+    return {
+        "value": estimate.value,
+        "stderr": estimate.stderr,
+        "interval68": list(estimate.interval(LEVEL_68)),
+        "interval95": list(estimate.interval(LEVEL_95)),
+        "unit": estimate.unit,
+    }
+
+
+def warning_entry(warning: FitWarning) -> dict[str, Any]:
+    """Return a warning for JSON."""
+    return {"code": warning.code, "message": warning.message, "advisory": warning.advisory}

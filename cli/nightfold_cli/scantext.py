@@ -1,0 +1,84 @@
+"""What a scan is, in a few words."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+from nightfold_cli.concise import short
+
+if TYPE_CHECKING:
+    from nightfold.scans.scan import Scan
+
+    from nightfold.scans.axes import Axis
+
+_VALUES = 4
+
+
+def span(axis: Axis) -> str:
+    """Return the range of an axis: ``60.5…62.5 A``, or the values of one made of words."""
+    if axis.low is None or axis.high is None:
+        words = [str(value) for value in axis.values]
+        return ", ".join(words[:_VALUES]) + (" …" if len(words) > _VALUES else "")
+    ends = short(axis.low) if axis.low == axis.high else f"{short(axis.low)}…{short(axis.high)}"
+    return f"{ends} {axis.unit}".rstrip() if axis.unit else ends
+
+
+def axis_line(axis: Axis) -> str:
+    """Return an axis in full: ``coil_current 60.5…62.5 A``."""
+    return f"{axis.parameter} {span(axis)}"
+
+
+def grid(scan: Scan) -> str:
+    """Return the number of points: ``41``, ``11x9``."""
+    return "x".join(str(axis.points) for axis in scan.axes) or "1"
+
+
+def repeats(scan: Scan) -> float:
+    """Return shots for each point of the grid."""
+    points: int = math.prod(axis.points for axis in scan.axes) or 1
+    return scan.shots / points
+
+
+def repeats_text(scan: Scan) -> str:
+    """Return the repeats: ``3``, ``2.9``; below one where the grid has holes."""
+    return f"{repeats(scan):.2g}" if repeats(scan) < 10 else f"{repeats(scan):.0f}"
+
+
+def status(scan: Scan) -> str:
+    """Return how far the scan has come."""
+    return "complete" if scan.complete else "open"
+
+
+def entry(scan: Scan) -> dict[str, Any]:
+    """Return a scan for JSON."""
+    return {
+        "id": scan.id,
+        "label": scan.label,
+        "round": scan.round,
+        "key": scan.key,
+        "machine": scan.machine,
+        "sequence": scan.sequence,
+        "origin": scan.origin,
+        "axes": [axis_entry(axis) for axis in scan.axes],
+        "shots": scan.shots,
+        "set_aside": scan.set_aside,
+        "first": scan.first,
+        "last": scan.last,
+        "complete": scan.complete,
+        "observables": list(scan.observables),
+        "main_observable": scan.main_observable,
+    }
+
+
+def axis_entry(axis: Axis) -> dict[str, Any]:
+    """Return an axis for JSON; its values are listed where it is made of words."""
+    words = axis.low is None
+    return {
+        "parameter": axis.parameter,
+        "unit": axis.unit or None,
+        "points": axis.points,
+        "low": axis.low,
+        "high": axis.high,
+        "values": list(axis.values) if words else None,
+    }
