@@ -28,7 +28,7 @@ OBSERVABLES = (
 
 @dataclass(frozen=True)
 class Look:
-    """What was read from a shot, why it failed if it did, and whether it is an outlier (no record says so)."""
+    """What was read from a shot, why it failed if it did, and whether it is an outlier, never recorded."""
 
     observables: dict[str, Any]
     failed: str | None = None
@@ -51,12 +51,12 @@ class Camera:
 
     def look(self, sequence: str, settings: Mapping[str, Value], factor: float) -> Look:
         """Return what is seen of a shot whose atom number is `factor` times the expected one."""
-        chance, kind, depth = self._rng.uniform(size=3)
+        chance, kind, depth = self._rng.uniform(size=3).tolist()
         if chance < (FAILURE_GOES_ON if self._reason else FAILURE):
             self._reason = self._reason or REASONS[int(kind * len(REASONS))]
             return Look(self._read_nothing(self._reason), self._reason)
         self._reason = None
-        outlier = bool(kind < OUTLIER)
+        outlier = kind < OUTLIER
         signal = expect_signal(sequence, settings).scaled(factor * (0.35 + 0.4 * depth if outlier else 1))
         observables = read_cloud(signal, float(settings["time_of_flight"]), self._noise, self._rng)
         if outlier:

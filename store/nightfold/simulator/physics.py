@@ -165,7 +165,7 @@ def read_cloud(
     Widths by sigma^2 = s0^2 + (k T / m) t^2, the optical density at the centre from number and widths. The
     stderr of the atom number is that of reading one picture; the larger scatter of shots is not in it.
     """
-    draw = rng.standard_normal(8)
+    draw: list[float] = rng.standard_normal(8).tolist()
     atoms = signal.atom_number * (1 + noise.atom_number * draw[0]) + noise.floor * draw[1]
     temperature = signal.temperature * (1 + 0.028 * draw[2])
     spread_um = sqrt(BOLTZMANN * temperature * 1e-9 / MASS) * time_of_flight_ms * 1e3
