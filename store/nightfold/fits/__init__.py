@@ -1,0 +1,1 @@
+"""Fits: line shapes (``models``), the engine that fits them (``engine``), and what a fit returns."""

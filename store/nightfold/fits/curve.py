@@ -1,0 +1,96 @@
+"""One fit of one curve."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from nightfold.errors import FitError
+from nightfold.fits.many import fit_table
+from nightfold.fits.request import as_points, check_stderr
+from nightfold.fits.result import FitResult
+
+
+def fit_curve(
+    x: ArrayLike,
+    y: ArrayLike,
+    model: object,
+    *,
+    stderr: ArrayLike | None = None,
+    absolute_stderr: bool = False,
+    background: str | None = None,
+    fixed: Mapping[str, float] | None = None,
+    start: Mapping[str, float] | None = None,
+    weights: str = "auto",
+    robust: bool = True,
+    unit_x: str = "",
+    unit_y: str = "",
+) -> FitResult:
+    """Return a model fitted to points.
+
+    Parameters
+    ----------
+    x, y : (n,) float arrays
+        Points, in any order; repeats are further points; nan points are left out.
+    model : str, Model or lmfit.Model
+        A name (``lorentzian``; see ``nightfold models``) or a model of one's own.
+    stderr : float or (n,) float array, optional
+        Standard uncertainties of y, unit of y. Points where it is nan are left out when it is used.
+    absolute_stderr : bool
+        Take stderr at face value: uncertainties are not scaled by the scatter found. Implies that they are
+        used as weights.
+    background : {"none", "flat", "sloped"}, optional
+        Default: the model's own.
+    fixed : mapping of name to value, optional
+        Parameters held; they are reported with stderr 0 and left out of the covariance.
+    start : mapping of name to value, optional
+        Where to look: the start grid is held at these values, then everything is free. Parameters that the
+        model is linear in are solved for exactly and need none.
+    weights : {"auto", "equal", "given"}
+        ``equal`` is ordinary least squares; ``given`` weighs by 1 / stderr^2. ``auto`` equals ``equal`` for
+        now (with `absolute_stderr`, ``given``); it is the place of the recipe that learns how the scatter
+        depends on the signal.
+    robust : bool
+        Accepted, without effect for now: no point is left out as an outlier.
+    unit_x, unit_y : str
+        Units, from which those of the estimates are composed.
+
+    Returns
+    -------
+    FitResult
+
+    Raises
+    ------
+    FitError
+        When the request cannot be met: too few points, unknown parameter names, arrays that do not match.
+    NotFound
+        When no model has that name.
+
+    Notes
+    -----
+    Least squares by variable projection from a global start grid. ``stderr`` of an estimate is the root of
+    the scaled covariance ``SSE / (n - p) (J'WJ)^-1`` (unscaled for absolute stderr); intervals are those of
+    Student's t with n - p degrees of freedom in the coordinate of the fit (the logarithm of widths, times
+    and rates). The result does not depend on the order of the points.
+    """
+    points, values = as_points("x", x, 1), as_points("y", y, 1)
+    if len(points) != len(values):
+        raise FitError(f"y: found {len(values)} values, wanted {len(points)} as for x")
+    errors = check_stderr(stderr, values.shape)
+    options: dict[str, Any] = {
+        "absolute_stderr": absolute_stderr,
+        "background": background,
+        "fixed": fixed,
+        "start": start,
+        "weights": weights,
+        "robust": robust,
+        "unit_x": unit_x,
+        "unit_y": unit_y,
+    }
+    table = fit_table(points, values[None], model, errors, options)
+    if not np.isfinite(table.outcome.low[0]):
+        raise FitError(f"scan: {table.outcome.shortage(0)}")
+    return table.result(0)

@@ -1,0 +1,1 @@
+"""The fit engine: pure functions of arrays, many data sets at once."""

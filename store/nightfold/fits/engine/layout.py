@@ -1,0 +1,159 @@
+"""All columns of a fit: the line shape's and the background's, which are fixed, and their derivatives."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from nightfold.fits.engine.arrays import Bools, Floats
+from nightfold.fits.engine.frame import Frame
+from nightfold.fits.models.shape import Background, LineShape, Parameter
+
+BACKGROUND_PARAMETERS: dict[Background, tuple[Parameter, ...]] = {
+    "none": (),
+    "flat": (Parameter("offset", "level far from the line", "y"),),
+    "sloped": (
+        Parameter("offset", "level at the center of a resonance, at x = 0 otherwise", "y"),
+        Parameter("slope", "change of the background with x", "y/x"),
+    ),
+}
+
+
+@dataclass(frozen=True)
+class Layout:
+    """A line shape with a background and some parameters fixed; P nonlinear coordinates, L columns.
+
+    The columns are those of the shape, then 1 and the slope: ``u - center`` for a resonance, otherwise
+    ``u + shift`` (shift is zero unless the offset, which is defined at x = 0, is fixed).
+    """
+
+    shape: LineShape
+    background: Background
+    fixed: frozenset[str]
+
+    @cached_property
+    def parameters(self) -> tuple[Parameter, ...]:
+        """Reported parameters, the background's last."""
+        return (*self.shape.parameters, *BACKGROUND_PARAMETERS[self.background])
+
+    @cached_property
+    def names(self) -> tuple[str, ...]:
+        """Reported names."""
+        return tuple(parameter.name for parameter in self.parameters)
+
+    @cached_property
+    def free_names(self) -> tuple[str, ...]:
+        """Reported names that are not fixed."""
+        return tuple(name for name in self.names if name not in self.fixed)
+
+    @cached_property
+    def column_names(self) -> tuple[str | None, ...]:
+        """Reported name that each column carries, None where it carries none by itself."""
+        return (*self.shape.linear, *(p.name for p in BACKGROUND_PARAMETERS[self.background]))
+
+    @cached_property
+    def free_theta(self) -> Bools:
+        """(P,) bool: which nonlinear coordinates are fitted."""
+        return np.array([theta.name not in self.fixed for theta in self.shape.theta], dtype=bool)
+
+    @cached_property
+    def free_columns(self) -> Bools:
+        """(L,) bool: which coefficients are fitted."""
+        return np.array([name not in self.fixed for name in self.column_names], dtype=bool)
+
+    @cached_property
+    def all_columns_free(self) -> bool:
+        """Whether no coefficient is fixed."""
+        return bool(self.free_columns.all())
+
+    @cached_property
+    def free_count(self) -> int:
+        """Number of fitted numbers, p."""
+        return int(self.free_theta.sum() + self.free_columns.sum())
+
+    @property
+    def resonance(self) -> bool:
+        """Whether the background's slope counts from the line's center."""
+        return self.shape.kind == "resonance"
+
+    def columns(self, u: Floats, theta: Floats, shift: Floats) -> Floats:
+        """Return all columns, (M, L, n)."""
+        return self._with_background(self.shape.columns(u, theta), u, theta, shift)
+
+    def basis(self, u: Floats, theta: Floats, shift: Floats) -> tuple[Floats, Floats]:
+        """Return all columns, (M, L, n), and the derivatives of the shape's, (M, P, Ls, n)."""
+        columns, derivatives = self.shape.basis(u, theta)
+        return self._with_background(columns, u, theta, shift), derivatives
+
+    def slopes(self, derivatives: Floats, c: Floats) -> Floats:
+        """Return the derivative of the model for each nonlinear coordinate, (M, P, n)."""
+        count = derivatives.shape[2]
+        if count == 1:
+            slopes = derivatives[:, :, 0] * c[:, :1, None]
+        else:
+            slopes = (derivatives * c[:, None, :count, None]).sum(axis=2)
+        if self.resonance and self.background == "sloped":
+            slopes[:, 0] -= c[:, -1:]
+        return slopes
+
+    def _with_background(self, columns: Floats, u: Floats, theta: Floats, shift: Floats) -> Floats:
+        if self.background == "none":
+            return columns
+        count = columns.shape[1]
+        full = np.empty((len(columns), len(self.column_names), columns.shape[2]))
+        full[:, :count] = columns
+        full[:, count] = 1.0
+        if self.background == "sloped":
+            full[:, count + 1] = u - theta[:, :1] if self.resonance else u + shift
+        return full
+
+    def shift(self, frame: Frame) -> Floats:
+        """Return the shift of the slope's column, (B, 1)."""
+        shift = frame.x0 / frame.xs if "offset" in self.fixed else np.zeros(len(frame.xs))
+        return np.asarray(shift[:, None])
+
+    def report(self, theta: Floats, c: Floats, frame: Frame) -> tuple[Floats, Floats]:
+        """Return q of all reported parameters, (M, R), and derivatives for theta and c, (M, R, P + L)."""
+        q, dq = self.shape.report(theta, c, frame)
+        if self.background == "none":
+            return q, dq
+        size, count, rows = len(self.shape.theta), q.shape[1], len(self.parameters)
+        q = np.concatenate([q, np.zeros((len(q), rows - count))], axis=1)
+        dq = np.concatenate([dq, np.zeros((len(q), rows - count, dq.shape[2]))], axis=1)
+        first = len(self.shape.linear)
+        q[:, count] = frame.y0 + frame.ys * c[:, first]
+        dq[:, count, size + first] = frame.ys
+        if self.background == "sloped":
+            scale = frame.ys / frame.xs
+            q[:, count + 1] = scale * c[:, first + 1]
+            dq[:, count + 1, size + first + 1] = scale
+            if not self.resonance:
+                lever = self.shift(frame)[:, 0] - frame.x0 / frame.xs
+                q[:, count] += frame.ys * lever * c[:, first + 1]
+                dq[:, count, size + first + 1] = frame.ys * lever
+        return q, dq
+
+    def fixed_theta(self, values: dict[str, float], frame: Frame) -> Floats:
+        """Return (B, P): theta of the fixed or given parameters, nan elsewhere."""
+        theta = np.full((len(frame.xs), len(self.shape.theta)), np.nan)
+        for j, coordinate in enumerate(self.shape.theta):
+            if coordinate.name in values:
+                theta[:, j] = coordinate.from_value(values[coordinate.name], frame)
+        return theta
+
+    def fixed_coefficients(self, values: dict[str, float], frame: Frame) -> Floats:
+        """Return (B, L): coefficients of the fixed columns, zero elsewhere."""
+        c = np.zeros((len(frame.xs), len(self.column_names)))
+        for j, name in enumerate(self.column_names):
+            if name is None or name not in values:
+                continue
+            value = values[name]
+            if name == "slope" and j >= len(self.shape.linear):
+                c[:, j] = value * frame.xs / frame.ys
+            elif name == "offset" and j >= len(self.shape.linear):
+                c[:, j] = (value - frame.y0) / frame.ys
+            else:
+                c[:, j] = value / frame.ys
+        return c

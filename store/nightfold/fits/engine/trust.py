@@ -1,0 +1,211 @@
+"""Do not trust this: what is wrong with a fit, each with a code, a plain sentence and what to do next."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from math import exp, inf, isfinite
+
+from nightfold.fits.engine.feature import LEVEL
+
+MOST_SPREAD = {"rate": 0.4, "width": 0.5}
+"""Largest standard uncertainty of ln rate and of ln width."""
+FREQUENCY_SPREAD = 0.25
+"""Largest standard uncertainty of a frequency, times the window."""
+LEAST_PERIODS = 0.8
+
+
+@dataclass(frozen=True)
+class FitWarning:
+    """Something to know about a fit.
+
+    Attributes
+    ----------
+    code : str
+        Short name, stable across versions (``no-feature``).
+    message : str
+        A plain sentence with the figures and what to do next.
+    advisory : bool
+        Whether the numbers can be trusted all the same.
+    """
+
+    code: str
+    message: str
+    advisory: bool = False
+
+
+@dataclass(frozen=True)
+class Facts:
+    """What the checks look at, for one data set; lengths in the unit of x.
+
+    ``value``, ``stderr`` and ``spread`` are by reported name, ``roles`` tell which free name is a position,
+    width, rate or frequency, ``bound`` lists names that ended at the edge of what is searched.
+    """
+
+    model: str
+    value: dict[str, float]
+    stderr: dict[str, float]
+    spread: dict[str, float]
+    roles: dict[str, str]
+    bound: tuple[str, ...]
+    low: float
+    high: float
+    count: int
+    spare: float
+    converged: bool
+    feature_p: float
+    constant: bool
+    unit_x: str
+
+
+def judge(facts: Facts) -> tuple[FitWarning, ...]:
+    """Return every warning that applies, the gravest first."""
+    found = [
+        _feature(facts),
+        _converged(facts),
+        *(_role_warning(facts, name) for name in facts.roles),
+        *(_at_bound(facts, name) for name in facts.bound),
+        _spare(facts),
+        _known(facts),
+    ]
+    codes: set[tuple[str, str]] = set()
+    kept = []
+    for warning in found:
+        if warning is not None and (warning.code, warning.message) not in codes:
+            codes.add((warning.code, warning.message))
+            kept.append(warning)
+    return tuple(kept)
+
+
+def _with_unit(value: float, unit: str) -> str:
+    return f"{value:.4g} {unit}".rstrip()
+
+
+def _per_unit(value: float, unit: str) -> str:
+    return f"{value:.4g}/{unit}" if unit else f"{value:.4g}"
+
+
+def _feature(facts: Facts) -> FitWarning | None:
+    if facts.constant:
+        return FitWarning(
+            "no-feature",
+            f"all {facts.count} values are the same; check the observable, then take the scan again",
+        )
+    if not facts.feature_p > LEVEL:
+        return None
+    return FitWarning(
+        "no-feature",
+        f"nothing stands out of the scatter: {100 * facts.feature_p:.2g} % of random shuffles of the shots"
+        f" look as much like a {facts.model} line; take more shots or scan elsewhere",
+    )
+
+
+def _converged(facts: Facts) -> FitWarning | None:
+    if facts.converged:
+        return None
+    return FitWarning(
+        "not-converged",
+        "the fit did not settle on a minimum; give start values, fix a parameter or try another model",
+    )
+
+
+def _role_warning(facts: Facts, name: str) -> FitWarning | None:
+    role = facts.roles[name]
+    if role == "position":
+        return _outside(facts, name) or _position(facts, name)
+    if role == "frequency":
+        return _periods(facts, name) or _frequency(facts, name)
+    if role in MOST_SPREAD and not facts.spread[name] <= MOST_SPREAD[role]:
+        return _factor(facts, name, role)
+    return None
+
+
+def _outside(facts: Facts, name: str) -> FitWarning | None:
+    value = facts.value[name]
+    if facts.low <= value <= facts.high:
+        return None
+    side, edge = ("below", facts.low) if value < facts.low else ("above", facts.high)
+    return FitWarning(
+        "center-outside",
+        f"the {name}, {_with_unit(value, facts.unit_x)}, lies outside the scan"
+        f" ({facts.low:.6g} to {_with_unit(facts.high, facts.unit_x)});"
+        f" extend the scan {side} {_with_unit(edge, facts.unit_x)}",
+    )
+
+
+def _position(facts: Facts, name: str) -> FitWarning | None:
+    width = next((facts.value[w] for w, role in facts.roles.items() if role == "width"), None)
+    limit = (facts.value.get("fwhm", inf) if width is None else width) / 2
+    if facts.stderr[name] <= limit:
+        return None
+    return FitWarning(
+        "poorly-determined",
+        f"the {name} is uncertain by {_with_unit(facts.stderr[name], facts.unit_x)}, more than half the width"
+        f" of the line; take more shots around {_with_unit(facts.value[name], facts.unit_x)}",
+    )
+
+
+def _periods(facts: Facts, name: str) -> FitWarning | None:
+    window = facts.high - facts.low
+    periods = facts.value[name] * window
+    if periods >= LEAST_PERIODS:
+        return None
+    wanted = facts.low + 1.0 / facts.value[name] if facts.value[name] > 0 else inf
+    return FitWarning(
+        "under-one-period",
+        f"the scan covers only {periods:.2g} of a period; extend it to"
+        f" {_with_unit(wanted, facts.unit_x)} or beyond",
+    )
+
+
+def _frequency(facts: Facts, name: str) -> FitWarning | None:
+    window = facts.high - facts.low
+    if facts.stderr[name] * window <= FREQUENCY_SPREAD:
+        return None
+    return FitWarning(
+        "poorly-determined",
+        f"the {name}, {_per_unit(facts.value[name], facts.unit_x)}, is uncertain by"
+        f" {_per_unit(facts.stderr[name], facts.unit_x)}, more than a quarter of 1/(length of the scan);"
+        " take more shots or a longer scan",
+    )
+
+
+def _factor(facts: Facts, name: str, role: str) -> FitWarning:
+    spread = facts.spread[name]
+    how_well = f"only known to a factor {exp(spread):.2g}" if spread < 5 else "not determined by this scan"
+    advice = {
+        "width": "take more shots across the line, or a wider scan",
+        "rate": "scan longer, with shots both early and late",
+    }[role]
+    return FitWarning("poorly-determined", f"the {name} is {how_well}; {advice}, or fix it")
+
+
+def _at_bound(facts: Facts, name: str) -> FitWarning:
+    return FitWarning(
+        "at-bound",
+        f"the {name} ran to the edge of what this scan can tell ({facts.value[name]:.4g}); scan a range that"
+        " shows the whole line, or fix it",
+    )
+
+
+def _spare(facts: Facts) -> FitWarning | None:
+    if facts.spare > 0:
+        return None
+    return FitWarning(
+        "too-few-points",
+        f"{facts.count} points and as many free parameters leave nothing to judge the scatter by;"
+        " add shots or fix a parameter",
+    )
+
+
+def _known(facts: Facts) -> FitWarning | None:
+    """Return a warning when a free number has no finite value or uncertainty for no other reason given."""
+    if facts.spare <= 0 or facts.constant:
+        return None
+    lost = [n for n, s in facts.stderr.items() if not (isfinite(s) or isfinite(facts.spread[n]))]
+    lost += [n for n, v in facts.value.items() if v != v]
+    if not lost:
+        return None
+    return FitWarning(
+        "poorly-determined",
+        f"the data leave {' and '.join(dict.fromkeys(lost))} open; fix one or use a simpler background",
+    )

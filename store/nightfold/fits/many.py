@@ -1,0 +1,229 @@
+"""Many fits in one call."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from nightfold.errors import FitError
+from nightfold.fits.engine.arrays import Bools, Floats, Ints
+from nightfold.fits.engine.trust import Facts, FitWarning, judge
+from nightfold.fits.estimate import EstimateColumn, compose_unit
+from nightfold.fits.fitting import Outcome, fit_sets
+from nightfold.fits.request import as_points, check_stderr, make_request
+from nightfold.fits.result import FitResult
+
+
+def fit_many(
+    x: ArrayLike,
+    Y: ArrayLike,
+    model: object,
+    *,
+    full: bool = False,
+    stderr: ArrayLike | None = None,
+    absolute_stderr: bool = False,
+    background: str | None = None,
+    fixed: Mapping[str, float] | None = None,
+    start: Mapping[str, float] | None = None,
+    weights: str = "auto",
+    robust: bool = True,
+    unit_x: str = "",
+    unit_y: str = "",
+) -> FitTable:
+    """Return the fits of one model to many data sets that share x, all at once.
+
+    Parameters
+    ----------
+    x : (n,) float array
+    Y : (B, n) float array
+        One data set a row; nan points are left out.
+    model, absolute_stderr, background, fixed, start, weights, robust, unit_x, unit_y
+        As in `fit_curve`.
+    full : bool
+        Work out the warnings at once; otherwise the permutation test behind ``no-feature`` waits until
+        `FitTable.warnings` or `FitTable.trusted` is first read. The numbers are the same.
+    stderr : float, (n,) or (B, n) float array, optional
+        Standard uncertainties of y.
+
+    Returns
+    -------
+    FitTable
+        The same numbers as `fit_curve` gives for each row. A row with too few points has nan estimates and
+        a ``too-few-points`` warning.
+
+    Raises
+    ------
+    FitError
+        When the request cannot be met, as in `fit_curve`.
+    NotFound
+        When no model has that name.
+    """
+    points, values = as_points("x", x, 1), as_points("Y", Y, 2)
+    if values.shape[1] != len(points):
+        raise FitError(f"Y: found shape {values.shape}, wanted one column for each of the {len(points)} x")
+    errors = check_stderr(stderr, values.shape)
+    options: dict[str, Any] = {
+        "absolute_stderr": absolute_stderr,
+        "background": background,
+        "fixed": fixed,
+        "start": start,
+        "weights": weights,
+        "robust": robust,
+        "unit_x": unit_x,
+        "unit_y": unit_y,
+    }
+    table = fit_table(points, values, model, errors, options)
+    if full:
+        _ = table.warnings
+    return table
+
+
+def fit_table(
+    x: Floats, Y: Floats, model: object, stderr: Floats | None, options: dict[str, Any]
+) -> FitTable:
+    """Return the fits of checked arrays; options as in `make_request`."""
+    first = Y[0] if len(Y) else np.zeros_like(x)
+    request = make_request(model, x, first, has_stderr=stderr is not None, **options)
+    return FitTable(x, Y, fit_sets(request, x, Y, stderr))
+
+
+@dataclass(frozen=True, repr=False)
+class FitTable:
+    """Fits of one model to B data sets.
+
+    Attributes
+    ----------
+    x : (n,) float array
+    Y : (B, n) float array
+        As handed in.
+    outcome : Outcome
+        The arrays behind the properties.
+    """
+
+    x: Floats
+    Y: Floats
+    outcome: Outcome
+
+    def __len__(self) -> int:
+        return len(self.Y)
+
+    def __repr__(self) -> str:
+        return f"<FitTable {self.model}, {len(self)} fits of {', '.join(self.estimates)}>"
+
+    @property
+    def model(self) -> str:
+        """Name of the model."""
+        return self.outcome.request.model
+
+    @property
+    def background(self) -> str:
+        """Style of the background: none, flat or sloped."""
+        return self.outcome.request.layout.background
+
+    @property
+    def settings(self) -> dict[str, Any]:
+        """What it takes to fit again."""
+        return self.outcome.request.settings
+
+    @property
+    def free_names(self) -> tuple[str, ...]:
+        """Names of the fitted parameters, in the order of the covariances."""
+        return self.outcome.request.layout.free_names
+
+    @property
+    def n(self) -> Ints:
+        """Number of points used, (B,)."""
+        return self.outcome.count
+
+    @property
+    def dof(self) -> Ints:
+        """Points less free parameters, (B,)."""
+        return self.outcome.count - self.outcome.request.layout.free_count
+
+    @property
+    def residual_stderr(self) -> Floats:
+        """Scatter of a point about the curve, (B,), unit of y."""
+        return np.sqrt(self.outcome.variance)
+
+    @property
+    def covariances(self) -> Floats:
+        """Covariances of the fitted parameters, (B, F, F)."""
+        return self.outcome.covariance
+
+    @property
+    def converged(self) -> Bools:
+        """Whether each fit settled on a minimum, (B,)."""
+        return self.outcome.converged
+
+    @cached_property
+    def estimates(self) -> dict[str, EstimateColumn]:
+        """The model's parameters, then the background's, by name."""
+        out, request = self.outcome, self.outcome.request
+        links = request.layout.shape.links()
+        return {
+            parameter.name: EstimateColumn(
+                out.value[:, row],
+                out.stderr[:, row],
+                compose_unit(parameter.unit, request.unit_x, request.unit_y),
+                links[row] if row < len(links) else "linear",
+                out.spread[:, row],
+                out.dof,
+            )
+            for row, parameter in enumerate(request.layout.parameters)
+        }
+
+    @cached_property
+    def warnings(self) -> list[tuple[FitWarning, ...]]:
+        """The warnings of each fit, B tuples."""
+        return [self._judge(row) for row in range(len(self))]
+
+    @cached_property
+    def trusted(self) -> Bools:
+        """Whether each fit has no warning but advisory ones, (B,)."""
+        return np.array([all(w.advisory for w in found) for found in self.warnings], dtype=bool)
+
+    def result(self, row: int) -> FitResult:
+        """Return one fit by itself."""
+        used = np.flatnonzero(self.outcome.used(self.x, self.Y[row], row))
+        return FitResult(
+            self.outcome.request,
+            {name: column[row] for name, column in self.estimates.items()},
+            self.warnings[row],
+            (),
+            float(self.residual_stderr[row]),
+            self.x[used],
+            self.Y[row][used],
+            used,
+            self.outcome.covariance[row],
+        )
+
+    def _judge(self, row: int) -> tuple[FitWarning, ...]:
+        out, layout = self.outcome, self.outcome.request.layout
+        if not np.isfinite(out.low[row]):
+            return (FitWarning("too-few-points", out.shortage(row)),)
+        names = layout.names
+        roles = {theta.name: theta.role for theta in layout.shape.theta if theta.name not in layout.fixed}
+        bound = tuple(t.name for t, held in zip(layout.shape.theta, out.bound[row], strict=True) if held)
+        return judge(
+            Facts(
+                layout.shape.name,
+                dict(zip(names, out.value[row].tolist(), strict=True)),
+                dict(zip(names, out.stderr[row].tolist(), strict=True)),
+                dict(zip(names, out.spread[row].tolist(), strict=True)),
+                dict(roles),
+                bound,
+                float(out.low[row]),
+                float(out.high[row]),
+                int(out.count[row]),
+                float(out.dof[row]),
+                bool(out.converged[row]),
+                float(out.feature_p[row]),
+                bool(out.constant[row]),
+                out.request.unit_x,
+            )
+        )
