@@ -203,3 +203,20 @@ def test_the_examples_of_a_starter_card_are_right() -> None:
     card = parse_card("\n".join(opened))
     assert card.main_observable == "atom_number"
     assert card.parameters["coil_current"].high == 120
+
+
+def test_the_example_in_the_docs_is_a_card_and_its_tables_name_every_key() -> None:
+    page = (Path(__file__).parents[1] / "docs" / "machine-card.md").read_text(encoding="utf-8")
+    card = parse_card(page.split("```toml\n")[1].split("```")[0])
+    assert (card.machine, card.zone, card.main_observable) == ("heron", "Europe/Vienna", "atom_number")
+    for title, table in (
+        ("the machine", ""),
+        ("a parameter", "[parameters.x]"),
+        ("an observable", "[observables.x]"),
+    ):
+        section = page.split(f"## Keys of {title}")[1].split("\n## ")[0]
+        documented = [line.split("`")[1] for line in section.splitlines() if line.startswith("| `")]
+        with pytest.raises(CardError) as problem:
+            parse_card(f'machine = "a"\n{table}\nunheard = 1\n')
+        known = str(problem.value).split("wanted one of ")[1].split(", ")
+        assert documented == [key for key in known if key not in ("parameters", "observables")]

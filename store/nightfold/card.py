@@ -166,7 +166,7 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
 
 def _parameter(name: str, entry: Table) -> NamedQuantity:
     """Return what an entry of ``[parameters]`` says."""
-    entry.check_keys("unit", "range", "description", "kind")
+    entry.check_keys("unit", "range", "kind", "description")
     unit, limits, kind = entry.unit("unit"), entry.limits("range"), entry.kind("kind")
     numeric = [key for key, value in (("unit", unit), ("range", limits)) if value is not None]
     if numeric and kind in ("text", "truth"):

@@ -7,7 +7,7 @@ import math
 import re
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from datetime import time
-from typing import Any, Literal
+from typing import Any, Literal, TypeVar
 
 from nightfold.errors import CardError, NotFound, UnitError
 from nightfold.records import clean_name, clean_text, shorten
@@ -15,6 +15,7 @@ from nightfold.timestamps import find_zone
 
 TIME_ZONE = "Europe/Vienna"
 Kind = Literal["number", "text", "truth"]
+Wanted = TypeVar("Wanted")
 _KINDS: Mapping[str | None, Kind] = {"number": "number", "text": "text", "truth": "truth"}
 _ISOTOPE = re.compile(r"[1-9][0-9]{0,2}[A-Z][a-z]?")
 _CLOCK = re.compile(r"[0-2][0-9]:[0-5][0-9](:[0-5][0-9])?")
@@ -167,12 +168,12 @@ class Table:
             return _KINDS.get(value)
         raise self.error(key, shorten(value), wanted)
 
-    def _typed(self, key: str, wanted_type: type[Any], wanted: str) -> Any:
+    def _typed(self, key: str, wanted_type: type[Wanted], wanted: str) -> Wanted | None:
         """Return the value of a key if it has the type, None if the key is absent."""
         value = self._content.get(key)
-        if value is not None and type(value) is not wanted_type:
-            raise self.error(key, shorten(value), wanted)
-        return value
+        if value is None or type(value) is wanted_type:
+            return value
+        raise self.error(key, shorten(value), wanted)
 
     def _convert(self, key: str | tuple[str, ...], value: str, convert: Callable[[Any], str]) -> str:
         """Return a text made clean, or say what it should be."""

@@ -153,6 +153,16 @@ def test_no_header_at_all(path: Path, data: str) -> None:
         read(path, data, NEWCOMER)
 
 
+def test_a_header_that_cannot_be_read(path: Path) -> None:
+    with pytest.raises(RecordError, match=r"night\.csv:2: found byte 0xe9 at offset 5 of the line"):
+        read(path, b"# by hand\nx,caf\xe9\n1,2\n", NEWCOMER)
+
+
+def test_a_whole_number_without_end(path: Path) -> None:
+    (item,) = read(path, "x,y\n" + "1" * 5000 + ",1\n", NEWCOMER)
+    assert str(item.problem) == "x: found a whole number of 5000 digits, wanted at most 4300 digits"
+
+
 @pytest.mark.parametrize("data", ["", "\n", "# only words\n\n", "\ufeff", "x,y\n", "x,y\n,\n\n"])
 def test_no_rows(path: Path, data: str) -> None:
     assert read(path, data, NEWCOMER) == []
