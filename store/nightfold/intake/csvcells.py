@@ -105,7 +105,7 @@ class RowReader:
         if len(cells) != len(self.columns):
             hint = "; are there decimal commas?" if len(cells) == 2 * len(self.columns) else ""
             wanted = f"{len(self.columns)}, as many as the header names{hint}"
-            raise RecordError("", f"{len(cells)} cells", wanted)
+            raise RecordError("", f"{len(cells)} cells" if len(cells) > 1 else "1 cell", wanted)
         record: dict[str, Any] = {"format": 1}
         for name in ("machine", "sequence", "scan"):
             default = self.machine if name == "machine" else getattr(self.options, name)
