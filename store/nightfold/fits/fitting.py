@@ -285,14 +285,7 @@ def _solve_batch(request: Request, groups: list[Group], outcome: Outcome) -> Non
     layout = request.layout
     data = stack([group.data for group in groups])
     rows = np.concatenate([group.rows for group in groups])
-    sets, starts, first = [], [], 0
-    for group in groups:
-        which, theta = group.starts()
-        sets.append(which + first)
-        starts.append(theta)
-        first += len(group.rows)
-    origin = np.concatenate(sets)
-    theta = np.concatenate(starts)
+    origin, theta = _gather_starts(groups)
     held = layout.fixed_theta(request.fixed, data.frame)[origin]
     theta = np.where(np.isfinite(held), held, theta)
     whole = len(origin) == len(rows)
@@ -300,18 +293,28 @@ def _solve_batch(request: Request, groups: list[Group], outcome: Outcome) -> Non
     if not whole:
         solution = _best_of(solution, origin)
     given = np.concatenate([g.weight_one for g in groups]) ** 2 if request.absolute else None
-    reported = report(layout, data, solution.point, given)
+    reported = report(layout, data, solution.theta, given)
     for name in ("value", "stderr", "spread", "covariance", "dof", "variance"):
         getattr(outcome, name)[rows] = getattr(reported, name)
     outcome.converged[rows] = solution.converged
     floors = np.array([theta.floor for theta in layout.shape.theta], dtype=bool)
-    at_floor = floors & (solution.point.theta <= data.low)
+    at_floor = floors & (solution.theta <= data.low)
     outcome.bound[rows] = solution.bound & ~at_floor
 
 
 def _best_of(solution: Solution, origin: Ints) -> Solution:
     """Return the best of each data set's solutions; the first among equals."""
-    order = np.lexsort((np.arange(len(origin)), solution.point.sse, origin))
+    order = np.lexsort((np.arange(len(origin)), solution.sse, origin))
     _, first = np.unique(origin[order], return_index=True)
-    best = order[first]
-    return Solution(solution.point.take(best), solution.converged[best], solution.bound[best])
+    return solution.take(order[first])
+
+
+def _gather_starts(groups: list[Group]) -> tuple[Ints, Floats]:
+    """Return data set (within the batch) and theta of every start of every group."""
+    sets, starts, first = [], [], 0
+    for group in groups:
+        which, theta = group.starts()
+        sets.append(which + first)
+        starts.append(theta)
+        first += len(group.rows)
+    return np.concatenate(sets), np.concatenate(starts)

@@ -37,9 +37,7 @@ def permutation_p(grid: Grid, reduction: Reduction, u: Floats, roots: Floats, Z:
     Notes
     -----
     Shuffles follow a generator seeded by the order of the data's values, so that the same data give the same
-    number in any unit and in any order of taking. At most ``LEVEL`` is told apart: once enough shuffles
-    reach the data's gain that p exceeds it, the rest would not change the answer, but all are done, so that
-    p can be shown.
+    number in any unit and in any order of taking.
     """
     rows = np.vstack([roots, roots * u][: 1 + (null == "sloped")])
     q, _ = np.linalg.qr(rows.T)
@@ -50,7 +48,7 @@ def permutation_p(grid: Grid, reduction: Reduction, u: Floats, roots: Floats, Z:
         generator = np.random.Generator(np.random.PCG64(seed_of(residual)))
         shuffled = generator.permuted(np.broadcast_to(residual, (SHUFFLES, len(residual))), axis=1)
         gains = grid.best_gains(reduction.whiten(shuffled))
-        reached = np.count_nonzero(gains >= observed[row] * (1 - 1e-9))
+        reached = np.count_nonzero(gains >= observed[row] * (1 - 1e-6))
         p[row] = (1 + reached) / (1 + SHUFFLES)
     return p
 

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
-from nightfold.fits.engine.arrays import Bools, Floats, Ints
+from nightfold.fits.engine.arrays import AnyArray, Bools, Floats, Ints
 from nightfold.fits.engine.layout import Layout
 from nightfold.fits.engine.reduction import Reduction
 from nightfold.fits.models.shape import Window
@@ -16,6 +17,7 @@ RIVAL_SHARE = 0.35
 """A start is followed unless it explains this share less than the best one: the grid is so fine that no
 minimum can gain more than that on its nearest grid point."""
 CHUNK = 4_000_000
+CACHE = 60_000
 DEGENERATE = 1e-9
 
 
@@ -26,7 +28,7 @@ class Grid:
     Attributes
     ----------
     theta : (G, P) float array
-    templates : (G, K, d) float array
+    templates : (K, G, d) float array
         Orthonormal columns of the shape, orthogonal to the background; zero where degenerate.
     null : (k, d) float array
         Orthonormal columns of the background.
@@ -39,14 +41,30 @@ class Grid:
     def gains(self, z: Floats) -> Floats:
         """Return what each template explains of whitened, reduced data (B, d), as sums of squares (B, G)."""
         z = z - (z @ self.null.T) @ self.null
-        flat = self.templates.reshape(-1, self.templates.shape[2])
-        projections = (z @ flat.T) ** 2
-        return np.asarray(projections.reshape(len(z), len(self.theta), -1).sum(axis=2))
+        return sum_of_squares(z, self.templates)
 
     def best_gains(self, z: Floats) -> Floats:
-        """Return what the best template explains, (B,), in chunks that fit the cache."""
-        step = max(1, CHUNK // self.templates[:, :, 0].size)
-        return np.concatenate([self.gains(z[i : i + step]).max(axis=1) for i in range(0, len(z), step)])
+        """Return what the best template explains, (B,), in single precision and chunks that fit the cache."""
+        z = z - (z @ self.null.T) @ self.null
+        single, templates = z.astype(np.float32), self._single
+        step = max(1, CACHE // len(self.theta))
+        parts = [sum_of_squares(single[i : i + step], templates).max(axis=1) for i in range(0, len(z), step)]
+        return np.concatenate(parts).astype(np.float64)
+
+    @cached_property
+    def _single(self) -> AnyArray:
+        return self.templates.astype(np.float32)
+
+
+def sum_of_squares(z: AnyArray, templates: AnyArray) -> AnyArray:
+    """Return the squared projections of z (B, d) on templates (K, G, d), summed over K: (B, G)."""
+    total = z @ templates[0].T
+    total *= total
+    for template in templates[1:]:
+        more = z @ template.T
+        more *= more
+        total += more
+    return total
 
 
 def place_starts(layout: Layout, window: Window, given: Floats) -> Floats:
@@ -86,7 +104,7 @@ def make_grid(layout: Layout, reduction: Reduction, theta: Floats, null: str) ->
         orthonormal(layout.shape.columns(reduction.u[None], theta[i : i + step]) * reduction.roots, against)
         for i in range(0, len(theta), step)
     ]
-    return Grid(theta, np.concatenate(parts), against)
+    return Grid(theta, np.ascontiguousarray(np.concatenate(parts).transpose(1, 0, 2)), against)
 
 
 def general_sse(
@@ -115,19 +133,27 @@ def choose_starts(layout: Layout, theta: Floats, sse: Floats, reference: Floats)
     sets, points : (M,) int arrays
         Data set and grid point of each start, sorted by data set, the best start of each first.
     """
-    open_sse = sse.copy()
     rows = np.arange(len(sse))
-    chosen = [(rows, np.argmin(sse, axis=1))]
-    limit = sse[rows, chosen[0][1]]
+    points = np.argmin(sse, axis=1)
+    limit = sse[rows, points]
     limit = limit + RIVAL_SHARE * np.maximum(reference - limit, 0.0)
-    while len(chosen) < MOST_STARTS and len(rows):
-        previous = chosen[-1][1]
-        near: Bools = layout.shape.near(theta[None], theta[previous][:, None])
-        open_sse[rows] = np.where(near, np.inf, open_sse[rows])
-        points = np.argmin(open_sse[rows], axis=1)
-        good = open_sse[rows, points] <= limit[rows]
-        rows, points = rows[good], points[good]
+    possible = sse <= limit[:, None]
+    chosen = [(rows, points)]
+    while len(chosen) < MOST_STARTS:
+        possible &= ~_near_each(layout, theta, points)
+        some = possible.any(axis=1)
+        if not some.any():
+            break
+        rows, sse, possible = rows[some], sse[some], possible[some]
+        points = np.argmin(np.where(possible, sse, np.inf), axis=1)
         chosen.append((rows, points))
     sets = np.concatenate([pair[0] for pair in chosen])
     order = np.argsort(sets, kind="stable")
     return sets[order], np.concatenate([pair[1] for pair in chosen])[order]
+
+
+def _near_each(layout: Layout, theta: Floats, points: Ints) -> Bools:
+    """Return which grid points lead to the same minimum as each of some, (len(points), G)."""
+    distinct, which = np.unique(points, return_inverse=True)
+    near = layout.shape.near(theta[None], theta[distinct][:, None])
+    return near[which]

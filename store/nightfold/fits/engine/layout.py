@@ -64,6 +64,11 @@ class Layout:
         return np.array([name not in self.fixed for name in self.column_names], dtype=bool)
 
     @cached_property
+    def all_theta_free(self) -> bool:
+        """Whether no nonlinear coordinate is fixed."""
+        return bool(self.free_theta.all())
+
+    @cached_property
     def all_columns_free(self) -> bool:
         """Whether no coefficient is fixed."""
         return bool(self.free_columns.all())

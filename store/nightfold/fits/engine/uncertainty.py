@@ -8,9 +8,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from nightfold.fits.engine.arrays import Floats
+from nightfold.fits.engine.batched import combine, diagonal, gram, inverse
 from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.layout import Layout
-from nightfold.fits.engine.solver import Point, inverse
+from nightfold.fits.engine.solver import expand
 
 if TYPE_CHECKING:
     from nightfold.fits.models.shape import Link
@@ -42,7 +43,7 @@ class Reported:
     variance: Floats
 
 
-def report(layout: Layout, data: DataSets, point: Point, given: Floats | None) -> Reported:
+def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) -> Reported:
     """Return the reported parameters and their scaled covariance.
 
     Parameters
@@ -55,21 +56,23 @@ def report(layout: Layout, data: DataSets, point: Point, given: Floats | None) -
     ``cov = s^2 (F F^T)^-1`` with F the derivatives for all free theta and coefficients and
     ``s^2 = SSE / (n - p)``, or the given one.
     """
-    q, dq = layout.report(point.theta, point.c, data.frame)
+    about = expand(layout, data, theta, refine=True)
+    q, dq = layout.report(theta, about.c, data.frame)
     free = np.concatenate([layout.free_theta, layout.free_columns])
-    whole = np.concatenate([point.slopes, point.columns], axis=1)
-    size = np.sqrt(np.einsum("mpn,mpn->mp", whole, whole))
+    whole = np.concatenate([about.slopes, about.columns], axis=1)
+    products = gram(whole, whole)
+    size = np.sqrt(diagonal(products))
     size = np.where(size > 0, size, np.nan)
-    scaled = whole / size[:, :, None]
+    sizes = size[:, :, None] * size[:, None]
+    sse = np.einsum("mn,mn->m", about.residual, about.residual)
     spare = (data.count - layout.free_count).astype(np.float64)
     with np.errstate(divide="ignore", invalid="ignore"):
-        variance = np.where(spare > 0, point.sse / spare, np.nan)
+        variance = np.where(spare > 0, sse / spare, np.nan)
         scale = variance if given is None else given
-        unscaled = inverse(np.nan_to_num(scaled @ scaled.transpose(0, 2, 1)))
-        basic = unscaled / (size[:, :, None] * size[:, None]) * scale[:, None, None]
+        basic = inverse(np.nan_to_num(products / sizes)) / sizes * scale[:, None, None]
         jacobian = dq[:, :, free]
-        cov_q = jacobian @ basic @ jacobian.transpose(0, 2, 1)
-        spread = np.sqrt(np.einsum("mrr->mr", cov_q))
+        cov_q = combine(jacobian, combine(basic, jacobian.transpose(0, 2, 1)))
+        spread = np.sqrt(diagonal(cov_q))
     value, steepness = from_coordinates(q, layout.shape.links())
     fixed = np.array([name in layout.fixed for name in layout.names])
     spread = np.where(fixed, 0.0, np.where(np.isfinite(spread), spread, np.inf))
