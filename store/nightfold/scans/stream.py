@@ -1,0 +1,78 @@
+"""The shots of one stream (one machine and sequence), as folding sees them."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from math import isfinite
+
+Point = tuple[float | str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class StreamShot:
+    """One shot of a stream.
+
+    Attributes
+    ----------
+    id : int
+        Any number that names the shot; found scans are given back as these.
+    started_us : int
+        Start, microseconds since the epoch.
+    swept : frozenset of str
+        Parameters declared as swept; may be empty.
+    values : mapping of str to str
+        Parameter -> token; equal tokens mean equal settings. A token that reads as a number is also used as
+        one (is this point on the grid of that scan?), so numbers are best written as ``repr`` writes them.
+    changed : frozenset of str
+        Names whose token differs from the shot before in the list, names that appeared or vanished included;
+        empty for the first shot.
+    """
+
+    id: int
+    started_us: int
+    swept: frozenset[str]
+    values: Mapping[str, str]
+    changed: frozenset[str]
+
+
+@dataclass(frozen=True, slots=True)
+class FoundScan:
+    """A scan found in a stream.
+
+    Attributes
+    ----------
+    shot_ids : tuple of int
+        Its shots, in order of start.
+    axes : tuple of str
+        Its swept parameters. Found: without those that move along with others, most points first.
+        Declared: as declared, by name.
+    origin : str
+        ``found`` or ``declared``.
+    """
+
+    shot_ids: tuple[int, ...]
+    axes: tuple[str, ...]
+    origin: str
+
+
+def read_token(token: str | None) -> float | str:
+    """Return a token as a finite number where it reads as one, else as it stands; empty for none."""
+    if token is None:
+        return ""
+    try:
+        number = float(token)
+    except ValueError:
+        return token
+    return number if isfinite(number) else token
+
+
+def moved_names(shots: Sequence[StreamShot], start: int, stop: int) -> frozenset[str]:
+    """Return the names that moved within a stretch of shots (not on entering it)."""
+    return frozenset().union(*(shot.changed for shot in shots[start + 1 : stop]))
+
+
+def columns_of(shots: Iterable[StreamShot], names: Iterable[str]) -> dict[str, list[float | str]]:
+    """Return the values of some parameters, one list a name."""
+    shots = list(shots)
+    return {name: [read_token(shot.values.get(name)) for shot in shots] for name in names}
