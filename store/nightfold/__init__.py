@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from nightfold.fits.many import FitTable, fit_many
     from nightfold.fits.model import Model
     from nightfold.fits.result import Estimate, FitResult, FitWarning
-    from nightfold.ledger.intake import Intake
+    from nightfold.ledger.outcome import Intake
     from nightfold.scans.scan import Scan
     from nightfold.store import Store, open_store
 
@@ -25,7 +25,7 @@ _HOMES = {
     "FitResult": "nightfold.fits.result",
     "FitTable": "nightfold.fits.many",
     "FitWarning": "nightfold.fits.result",
-    "Intake": "nightfold.ledger.intake",
+    "Intake": "nightfold.ledger.outcome",
     "Model": "nightfold.fits.model",
     "Scan": "nightfold.scans.scan",
     "Store": "nightfold.store",

@@ -219,12 +219,15 @@ def record_schema() -> dict[str, Any]:
         schema = adapter.json_schema()
         definitions |= schema.pop("$defs", {})
         definitions[name] = schema
-    return _resolve({
-        "$schema": "https://json-schema.org/draft/2020-12/schema",
-        "title": "nightfold shot record, format 1",
-        "anyOf": [{"$ref": "#/$defs/ShotRecord"}, {"$ref": "#/$defs/Amendment"}],
-        "$defs": dict(sorted(definitions.items())),
-    })
+    resolved: dict[str, Any] = _resolve(
+        {
+            "$schema": "https://json-schema.org/draft/2020-12/schema",
+            "title": "nightfold shot record, format 1",
+            "anyOf": [{"$ref": "#/$defs/ShotRecord"}, {"$ref": "#/$defs/Amendment"}],
+            "$defs": dict(sorted(definitions.items())),
+        }
+    )
+    return resolved
 
 
 def _resolve(schema: Any) -> Any:

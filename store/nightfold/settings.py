@@ -127,7 +127,7 @@ def _canonical(value: Any, field: str) -> Value:
             raise RecordError(field, shorten(value), str(problem)) from None
     if isinstance(value, bool) or type(value).__name__ in ("bool_", "bool"):
         return Value("truth", 1.0 if value else 0.0, None)
-    if isinstance(value, (list, tuple)) or hasattr(value, "tolist") and getattr(value, "ndim", 0) == 1:
+    if isinstance(value, (list, tuple)) or (hasattr(value, "tolist") and getattr(value, "ndim", 0) == 1):
         return _ramp(list(value), field)
     number = number_value(value)
     if number is None:
@@ -142,7 +142,9 @@ def _ramp(values: list[Any], field: str) -> Value:
         if number is None:
             raise RecordError(field, shorten(item), "numbers only in a list")
         whole = number.plain
-        plain.append(int(whole) if isinstance(whole, float) and whole.is_integer() and abs(whole) < 1e15 else whole)
+        plain.append(
+            int(whole) if isinstance(whole, float) and whole.is_integer() and abs(whole) < 1e15 else whole
+        )
     return Value("text", None, json.dumps(plain, separators=(",", ":")))
 
 
@@ -157,7 +159,9 @@ def reading_value(raw: Any, field: str) -> tuple[ReadValue, str | None]:
     value, stderr, unit = raw, None, None
     if isinstance(raw, Mapping):
         if not raw.keys() <= {"value", "stderr", "unit"} or "value" not in raw:
-            raise RecordError(field, shorten(dict(raw)), "an object with value, stderr and unit, nothing else")
+            raise RecordError(
+                field, shorten(dict(raw)), "an object with value, stderr and unit, nothing else"
+            )
         value, stderr, unit = raw["value"], raw.get("stderr"), raw.get("unit")
     if unit is not None and type(unit) is not str:
         raise RecordError(f"{field}.unit", shorten(unit), "a unit as text")

@@ -34,7 +34,9 @@ def find_zone(name: str) -> ZoneInfo:
     try:
         return ZoneInfo(name)
     except (ZoneInfoNotFoundError, ValueError, OSError) as problem:
-        raise NotFound(f"time zone {name!r} is not known; wanted an IANA name such as Europe/Vienna") from problem
+        raise NotFound(
+            f"time zone {name!r} is not known; wanted an IANA name such as Europe/Vienna"
+        ) from problem
 
 
 def to_us(moment: datetime) -> int:
@@ -128,8 +130,6 @@ def night_of(us: int, zone: str, boundary: time = time(12)) -> date:
 
 def local_times(started_us: NDArray[np.int64], zone: str) -> pd.DatetimeIndex:
     """Return the moments as an index of the given zone."""
-    import pandas as pd
-
     return utc_times(started_us).tz_convert(find_zone(zone))
 
 

@@ -147,7 +147,9 @@ def _round(number: float, digits: int = 15) -> float:
 def _registry() -> UnitRegistry[Any]:
     from pint import UnitRegistry
 
-    registry: UnitRegistry[Any] = UnitRegistry(cache_folder=None, autoconvert_offset_to_baseunit=True)
+    registry: UnitRegistry[Any] = UnitRegistry(
+        cache_folder=None, autoconvert_offset_to_baseunit=True, on_redefinition="ignore"
+    )
     for definition in _DEFINITIONS:
         registry.define(definition)
     return registry
@@ -169,6 +171,12 @@ def _angle(unit: Any) -> int:
     registry = _registry()
     total = 0
     for name, power in unit._units.items():
-        if registry.parse_units(name).dimensionless and name in {"radian", "degree", "turn", "arcminute", "arcsecond"}:
+        if registry.parse_units(name).dimensionless and name in {
+            "radian",
+            "degree",
+            "turn",
+            "arcminute",
+            "arcsecond",
+        }:
             total += int(power)
     return total

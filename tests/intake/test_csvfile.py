@@ -16,7 +16,7 @@ from hypothesis import strategies as st
 from nightfold.card import parse_card
 from nightfold.errors import ChoiceNeeded, RecordError
 from nightfold.intake.csvfile import CsvColumns, read_csv
-from nightfold.intake.incoming import Incoming
+from nightfold.ledger.outcome import Incoming
 from nightfold.records import ShotRecord, parse_record
 
 PEAK = Path(__file__).parents[1] / "reference" / "lmfit_test_peak"

@@ -8,8 +8,8 @@ import pytest
 from nightfold.errors import RecordError
 from nightfold.intake import jsondocument
 from nightfold.intake.files import read_file
-from nightfold.intake.incoming import Incoming
 from nightfold.intake.jsondocument import is_document, read_json_document
+from nightfold.ledger.outcome import Incoming
 
 RECORDS = [{"uid": "a", "note": "é 🪶"}, {"uid": "b", "n": 9007199254740993}, {"uid": "c"}]
 

@@ -12,8 +12,8 @@ from hypothesis import strategies as st
 
 from nightfold.errors import RecordError
 from nightfold.intake import lines
-from nightfold.intake.incoming import Incoming
 from nightfold.intake.jsonlines import read_json_lines
+from nightfold.ledger.outcome import Incoming
 
 
 def read(path: Path, data: bytes, **options: int) -> list[Incoming]:

@@ -11,8 +11,8 @@ from nightfold.card import MachineCard
 from nightfold.errors import RecordError
 from nightfold.intake.csvcells import RowReader, is_number
 from nightfold.intake.csvcolumns import CsvColumns, read_header
-from nightfold.intake.incoming import Incoming
 from nightfold.intake.lines import Line, read_lines, too_long, undecodable
+from nightfold.ledger.outcome import Incoming
 
 __all__ = ["CsvColumns", "read_csv"]
 

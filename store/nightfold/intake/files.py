@@ -10,9 +10,9 @@ from pathlib import Path
 from nightfold.card import MachineCard
 from nightfold.errors import NotFound, RecordError
 from nightfold.intake.csvfile import CsvColumns, read_csv
-from nightfold.intake.incoming import Incoming
 from nightfold.intake.jsondocument import is_document, read_json_document
 from nightfold.intake.jsonlines import read_json_lines
+from nightfold.ledger.outcome import Incoming
 
 JSON_LINES = (".jsonl", ".ndjson")
 CSV = (".csv", ".tsv", ".dat", ".txt")

@@ -11,8 +11,8 @@ from typing import Any
 from pydantic_core import from_json
 
 from nightfold.errors import RecordError
-from nightfold.intake.incoming import Incoming
 from nightfold.intake.lines import LONGEST_LINE, read_lines, undecodable
+from nightfold.ledger.outcome import Incoming
 
 _GAP = re.compile(r"[\s,]*")
 

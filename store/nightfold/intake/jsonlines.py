@@ -11,8 +11,8 @@ from typing import Any
 from pydantic_core import from_json
 
 from nightfold.errors import RecordError
-from nightfold.intake.incoming import Incoming
 from nightfold.intake.lines import Line, read_lines, too_long, undecodable
+from nightfold.ledger.outcome import Incoming
 
 _WANTED = "one JSON object on each line"
 _PLACE = re.compile(r" at line 1 column (\d+)$")

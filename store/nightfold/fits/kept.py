@@ -1,0 +1,324 @@
+"""Keeping fits in the store with their provenance, and reading them back."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+from dataclasses import dataclass
+from datetime import datetime
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from sqlalchemy import Connection, Row, insert, select
+
+from nightfold import __version__, tables
+from nightfold.errors import FitError, NightfoldError
+from nightfold.fits.many import FitTable
+from nightfold.fits.result import FitResult, FitWarning
+from nightfold.fits.scanfit import FitRequest, SliceFit, digest_data, fit_slices, slice_rows
+from nightfold.ledger.names import insert_row
+from nightfold.ledger.selecting import scan_key
+from nightfold.scans.scan import Scan, find_scan
+from nightfold.session import Session
+from nightfold.timestamps import from_us, now_us
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+LEVEL_68 = 0.6827
+LEVEL_95 = 0.95
+
+
+@dataclass(frozen=True)
+class KeptEstimate:
+    """One number of a kept fit, with the two intervals that are kept."""
+
+    value: float
+    stderr: float
+    unit: str
+    interval68: tuple[float, float]
+    interval95: tuple[float, float]
+    fixed: bool
+
+    def interval(self, level: float) -> tuple[float, float]:
+        """Return the interval kept for 68.27 % or 95 %.
+
+        Raises
+        ------
+        FitError
+            For any other level: fit again to have it.
+        """
+        for kept, limits in ((LEVEL_68, self.interval68), (LEVEL_95, self.interval95)):
+            if abs(level - kept) < 1e-3:
+                return limits
+        raise FitError(
+            f"interval: found level {level:g}; a kept fit has {LEVEL_68} and {LEVEL_95}, fit again for others"
+        )
+
+
+@dataclass(frozen=True)
+class KeptFit:
+    """A fit as it was kept.
+
+    Attributes
+    ----------
+    id : int
+    at : datetime
+        When it was done (UTC).
+    scan_key, model, background, observable, along : str
+    slice : dict
+        Values of the other axes.
+    estimates : dict of str to KeptEstimate
+    trusted : bool
+    warnings : tuple of FitWarning
+    shots, set_aside : int
+        Shots used, and left out.
+    settings : dict
+        What it takes to fit again.
+    stale : bool
+        Whether the scan's data have changed since.
+    version : str
+        The nightfold that did it.
+    replaces : int or None
+        The earlier fit that this one replaced.
+    """
+
+    id: int
+    at: datetime
+    scan_key: str
+    model: str
+    background: str
+    observable: str
+    along: str
+    slice: dict[str, Any]
+    estimates: dict[str, KeptEstimate]
+    trusted: bool
+    warnings: tuple[FitWarning, ...]
+    shots: int
+    set_aside: int
+    settings: dict[str, Any]
+    stale: bool
+    version: str
+    replaces: int | None
+
+
+def fit_scan(session: Session, scan: Scan, request: FitRequest, *, keep: bool) -> FitResult | FitTable:
+    """Fit a scan and keep what came out.
+
+    Raises
+    ------
+    ChoiceNeeded, NotFound, FitError
+        As in `Store.fit`.
+    """
+    outcome, parts = fit_slices(scan, request)
+    if keep:
+        left_out = scan.table(set_aside=True).query("set_aside")["shot_id"].tolist()
+        with session.writing() as connection:
+            for part in parts:
+                _keep(connection, scan, request, part, left_out)
+    return outcome
+
+
+def _keep(
+    connection: Connection, scan: Scan, request: FitRequest, part: SliceFit, left_out: Sequence[int]
+) -> None:
+    result, fit = part.result, tables.fit
+    observable_id = _observable_id(connection, scan, request.observable)
+    same = {
+        "scan_id": scan.id,
+        "observable_id": observable_id,
+        "along": part.along,
+        "slice": json.dumps(part.where, ensure_ascii=False),
+        "model": result.model,
+        "background": result.background,
+    }
+    rest = {
+        "settings": json.dumps(result.settings, default=float),
+        "data_digest": part.digest(request.observable),
+        "program": __version__,
+    }
+    earlier = connection.execute(
+        select(fit)
+        .where(*(fit.c[name] == value for name, value in same.items()))
+        .order_by(fit.c.id.desc())
+        .limit(1)
+    ).first()
+    if earlier is not None and all(earlier._mapping[name] == value for name, value in rest.items()):
+        return  # the same fit of the same data is there already
+    covariance = {"names": list(result.free_names), "rows": result.covariance_matrix.tolist()}
+    row = {
+        **same,
+        **rest,
+        "covariance": json.dumps(covariance),
+        "trusted": result.trusted,
+        "dof": result.dof,
+        "residual_stderr": _finite(result.residual_stderr),
+        "at_us": now_us(),
+        "replaces": earlier.id if earlier is not None else None,
+    }
+    fit_id = insert_row(connection, fit, row)
+    connection.execute(insert(tables.fit_shot), _fit_shots(fit_id, part, left_out))
+    connection.execute(insert(tables.estimate), _estimates(fit_id, result))
+    warnings = [
+        {"fit_id": fit_id, "code": item.code, "message": item.message, "advisory": item.advisory}
+        for item in result.warnings
+    ]
+    if warnings:
+        connection.execute(insert(tables.fit_warning), warnings)
+
+
+def _fit_shots(fit_id: int, part: SliceFit, left_out: Sequence[int]) -> list[dict[str, Any]]:
+    shot_ids = part.table["shot_id"].tolist()
+    used = {int(row) for row in part.result.used}
+    outliers = set(part.result.outliers)
+    roles = {
+        shot_id: "outlier" if row in outliers else "used" if row in used else "no value"
+        for row, shot_id in enumerate(shot_ids)
+    }
+    roles |= dict.fromkeys(left_out, "set aside")
+    return [{"fit_id": fit_id, "shot_id": shot_id, "role": role} for shot_id, role in roles.items()]
+
+
+def _estimates(fit_id: int, result: FitResult) -> list[dict[str, Any]]:
+    rows = []
+    for position, (name, estimate) in enumerate(result.estimates.items()):
+        low68, high68 = estimate.interval(LEVEL_68)
+        low95, high95 = estimate.interval(LEVEL_95)
+        numbers = {
+            "value": estimate.value,
+            "stderr": estimate.stderr,
+            "low68": low68,
+            "high68": high68,
+            "low95": low95,
+            "high95": high95,
+        }
+        kept = {key: _finite(number) for key, number in numbers.items()}
+        fixed = name not in result.free_names
+        rows.append(
+            {
+                "fit_id": fit_id,
+                "name": name,
+                "position": position,
+                "unit": estimate.unit,
+                "fixed": fixed,
+                **kept,
+            }
+        )
+    return rows
+
+
+def _finite(number: float) -> float | None:
+    return float(number) if np.isfinite(number) else None
+
+
+def _observable_id(connection: Connection, scan: Scan, observable: str) -> int:
+    query = (
+        select(tables.observable.c.id)
+        .join(tables.machine, tables.machine.c.id == tables.observable.c.machine_id)
+        .where(tables.machine.c.name == scan.machine, tables.observable.c.name == observable)
+    )
+    return int(connection.execute(query).scalar_one())
+
+
+def list_fits(session: Session, scan: Scan | None) -> list[KeptFit]:
+    """Return the fits kept, oldest first, of one scan or of all; those replaced by a newer one are left out."""
+    fit, observable = tables.fit, tables.observable
+    replaced = select(fit.c.replaces).where(fit.c.replaces.isnot(None))
+    query = (
+        select(fit, observable.c.name.label("observable"), tables.scan.c.label, tables.scan.c.round)
+        .join(observable, observable.c.id == fit.c.observable_id)
+        .join(tables.scan, tables.scan.c.id == fit.c.scan_id)
+        .where(fit.c.id.notin_(replaced))
+        .order_by(fit.c.at_us, fit.c.id)
+    )
+    if scan is not None:
+        query = query.where(fit.c.scan_id == scan.id)
+    with session.reading() as connection:
+        rows = list(connection.execute(query))
+        parts = {row.id: _parts(connection, row.id) for row in rows}
+    current = _current_digests(session, rows)
+    return [_make_kept(row, *parts[row.id], current.get(row.id)) for row in rows]
+
+
+def _parts(
+    connection: Connection, fit_id: int
+) -> tuple[dict[str, KeptEstimate], list[FitWarning], dict[str, int]]:
+    estimate, warning, role = tables.estimate, tables.fit_warning, tables.fit_shot
+    estimates = {
+        row.name: KeptEstimate(
+            _number(row.value),
+            _number(row.stderr),
+            row.unit,
+            (_number(row.low68), _number(row.high68)),
+            (_number(row.low95), _number(row.high95)),
+            bool(row.fixed),
+        )
+        for row in connection.execute(
+            select(estimate).where(estimate.c.fit_id == fit_id).order_by(estimate.c.position)
+        )
+    }
+    warnings = [
+        FitWarning(row.code, row.message, bool(row.advisory))
+        for row in connection.execute(
+            select(warning).where(warning.c.fit_id == fit_id).order_by(warning.c.code)
+        )
+    ]
+    counts: dict[str, int] = {}
+    for name in connection.execute(select(role.c.role).where(role.c.fit_id == fit_id)).scalars():
+        counts[name] = counts.get(name, 0) + 1
+    return estimates, warnings, counts
+
+
+def _number(value: float | None) -> float:
+    return float("nan") if value is None else value
+
+
+def _current_digests(session: Session, rows: Sequence[Row[Any]]) -> dict[int, bytes]:
+    """Return the digest that each fit's data have today; none where the scan no longer has such a slice."""
+    digests: dict[int, bytes] = {}
+    scans: dict[int, tuple[Scan, pd.DataFrame]] = {}
+    for row in rows:
+        try:
+            if row.scan_id not in scans:
+                scan = find_scan(session, row.scan_id)
+                scans[row.scan_id] = scan, scan.table()
+            scan, table = scans[row.scan_id]
+            chosen = table
+            where = json.loads(row.slice)
+            if where:
+                found = [rows for values, rows in slice_rows(scan, table, row.along) if values == where]
+                if not found:
+                    continue
+                chosen = table.iloc[found[0]]
+            digests[row.id] = digest_data(chosen, row.along, row.observable)
+        except (NightfoldError, KeyError):
+            continue  # the scan, axis or observable is gone: the fit is stale
+    return digests
+
+
+def _make_kept(
+    row: Row[Any],
+    estimates: dict[str, KeptEstimate],
+    warnings: Sequence[FitWarning],
+    counts: dict[str, int],
+    digest: bytes | None,
+) -> KeptFit:
+    return KeptFit(
+        id=row.id,
+        at=from_us(row.at_us),
+        scan_key=scan_key(row.scan_id, row.label, row.round) or "",
+        model=row.model,
+        background=row.background,
+        observable=row.observable,
+        along=row.along,
+        slice=json.loads(row.slice),
+        estimates=estimates,
+        trusted=bool(row.trusted),
+        warnings=tuple(warnings),
+        shots=counts.get("used", 0),
+        set_aside=counts.get("set aside", 0),
+        settings=json.loads(row.settings),
+        stale=digest is None or digest != bytes(row.data_digest),
+        version=row.program,
+        replaces=row.replaces,
+    )

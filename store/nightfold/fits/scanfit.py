@@ -1,0 +1,215 @@
+"""Fitting a scan: its points along one axis, slice by slice over the others."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from nightfold.errors import ChoiceNeeded, FitError, NotFound
+from nightfold.fits.curve import fit_curve
+from nightfold.fits.many import FitTable, fit_many
+from nightfold.fits.result import FitResult
+from nightfold.ledger.selecting import near_miss
+from nightfold.scans.axes import encode
+from nightfold.settings import digest_text
+
+if TYPE_CHECKING:
+    import pandas as pd
+    from numpy.typing import NDArray
+
+    from nightfold.scans.scan import Scan
+
+
+@dataclass(frozen=True)
+class FitRequest:
+    """What is to be fitted, and how; as the arguments of `Store.fit`."""
+
+    model: Any
+    observable: str
+    along: str | None = None
+    background: str | None = None
+    fixed: dict[str, float] = field(default_factory=dict)
+    start: dict[str, float] = field(default_factory=dict)
+    weights: str = "auto"
+    robust: bool = True
+
+    @property
+    def options(self) -> dict[str, Any]:
+        """The arguments that `fit_curve` takes too."""
+        return {
+            "background": self.background,
+            "fixed": self.fixed or None,
+            "start": self.start or None,
+            "weights": self.weights,
+            "robust": self.robust,
+        }
+
+
+@dataclass(frozen=True)
+class SliceFit:
+    """One fit of a scan, with what it rests on.
+
+    Attributes
+    ----------
+    where : dict
+        Values of the other axes.
+    along : str
+    result : FitResult
+    table : DataFrame
+        The slice's shots, as `Scan.table`; `result.used` counts in its rows.
+    """
+
+    where: dict[str, Any]
+    along: str
+    result: FitResult
+    table: pd.DataFrame
+
+    def digest(self, observable: str) -> bytes:
+        """Return a digest of the data: uids, points, values and their stderr."""
+        return digest_data(self.table, self.along, observable)
+
+
+def digest_data(table: pd.DataFrame, along: str, observable: str) -> bytes:
+    """Return a digest of the shots behind a fit: uids, points, values and their stderr."""
+    columns = ["uid", along, observable, f"{observable}_stderr"]
+    return digest_text([table[column].tolist() for column in columns])
+
+
+def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, list[SliceFit]]:
+    """Fit a scan and return the result as people get it, and fit by fit.
+
+    Raises
+    ------
+    ChoiceNeeded, NotFound, FitError
+        As in `Store.fit`.
+    """
+    along = choose_along(scan, request.along)
+    observable = choose_observable(scan, request.observable)
+    table = scan.table()
+    units: dict[str, Any] = {"unit_x": scan.units.get(along, ""), "unit_y": scan.units.get(observable, "")}
+    x = _numbers(scan, table, along)
+    slices = slice_rows(scan, table, along)
+    if len(scan.axes) < 2:
+        result = fit_curve(
+            x,
+            table[observable].to_numpy(),
+            request.model,
+            stderr=_stderr(table, observable, request),
+            **request.options,
+            **units,
+        )
+        return result, [SliceFit({}, along, result, table)]
+    values = np.full((len(slices), len(table)), np.nan)
+    for number, (_, rows) in enumerate(slices):
+        values[number, rows] = table[observable].to_numpy()[rows]
+    stderr = _stderr(table, observable, request)
+    fits = fit_many(
+        x,
+        values,
+        request.model,
+        full=True,
+        stderr=None if stderr is None else np.broadcast_to(stderr, values.shape),
+        **request.options,
+        **units,
+    )
+    fits = replace(fits, slices=tuple(where for where, _ in slices))
+    parts = [
+        SliceFit(where, along, _within(fits.result(number), rows), table.iloc[rows].reset_index(drop=True))
+        for number, (where, rows) in enumerate(slices)
+    ]
+    return fits, parts
+
+
+def choose_along(scan: Scan, along: str | None) -> str:
+    """Return the axis, or a parameter that moves along with one, to fit along.
+
+    Raises
+    ------
+    ChoiceNeeded
+        If the scan has several axes and none is named.
+    NotFound
+        If it does not have the one named.
+    FitError
+        If nothing was swept.
+    """
+    axes = [axis.parameter for axis in scan.axes]
+    if not axes:
+        raise FitError(f"scan {scan.key}: nothing was swept, so there is nothing to fit along")
+    if along is None:
+        if len(axes) > 1:
+            raise ChoiceNeeded(
+                f"scan {scan.key}: it has {len(axes)} axes, {', '.join(axes)}; name one with along"
+            )
+        return axes[0]
+    if along not in axes and along not in scan.followers:
+        raise NotFound(f"scan {scan.key}: no axis {along!r}; {near_miss(along, [*axes, *scan.followers])}")
+    return along
+
+
+def choose_observable(scan: Scan, observable: str) -> str:
+    """Return the observable to fit.
+
+    Raises
+    ------
+    NotFound
+        If no shot of the scan has it.
+    """
+    if observable not in scan.observables:
+        raise NotFound(
+            f"scan {scan.key}: no observable {observable!r}; {near_miss(observable, scan.observables)}"
+        )
+    return observable
+
+
+def slice_rows(scan: Scan, table: pd.DataFrame, along: str) -> list[tuple[dict[str, Any], NDArray[np.intp]]]:
+    """Return the slices of a scan: values of the axes not fitted along, and the rows of the table."""
+    leader = scan.followers.get(along, along)
+    others = [axis.parameter for axis in scan.axes if axis.parameter != leader]
+    columns = [encode(table[name].tolist()) for name in others]
+    if not columns:
+        return [({}, np.arange(len(table)))]
+    codes = np.stack([column.codes for column in columns], axis=1)
+    found = []
+    for key in np.unique(codes[(codes >= 0).all(axis=1)], axis=0):
+        where = {
+            name: _plain(column.values[code]) for name, column, code in zip(others, columns, key, strict=True)
+        }
+        found.append((where, np.flatnonzero((codes == key).all(axis=1))))
+    return found
+
+
+def _plain(value: Any) -> Any:
+    return value.item() if isinstance(value, np.generic) else value
+
+
+def _within(result: FitResult, rows: Sequence[int] | NDArray[np.intp]) -> FitResult:
+    """Return the result with `used` counted within the slice."""
+    place: Mapping[int, int] = {int(row): number for number, row in enumerate(rows)}
+    return replace(result, used=np.array([place[int(row)] for row in result.used], dtype=np.intp))
+
+
+def _numbers(scan: Scan, table: pd.DataFrame, along: str) -> NDArray[np.float64]:
+    column = table[along]
+    if column.dtype == object or column.dtype == bool:
+        found = next(
+            (value for value in column if not isinstance(value, (int, float)) or isinstance(value, bool)),
+            None,
+        )
+        if found is not None:
+            raise FitError(
+                f"scan {scan.key}: {along} is no number (found {found!r}); a fit needs numbers to go along"
+            )
+    return column.to_numpy(dtype=np.float64)
+
+
+def _stderr(table: pd.DataFrame, observable: str, request: FitRequest) -> NDArray[np.float64] | None:
+    """Return the stated uncertainties if every value has one; they are required with weights 'given'."""
+    stderr = table[f"{observable}_stderr"].to_numpy(dtype=np.float64)
+    known = np.isfinite(table[observable].to_numpy(dtype=np.float64))
+    if request.weights == "given":
+        return stderr
+    usable = np.isfinite(stderr) & (stderr > 0)
+    return stderr if known.any() and usable[known].all() else None

@@ -1,0 +1,1 @@
+"""Writing and reading shots: the ingest rule, amendments, queries, edits, what was set aside."""

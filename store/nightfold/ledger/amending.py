@@ -1,0 +1,206 @@
+"""A record of a shot that is in the store already: known, an amendment, or refused."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from typing import Any
+
+from sqlalchemy import Connection, Row, and_, delete, insert, select
+
+from nightfold import tables
+from nightfold.errors import RecordError
+from nightfold.ledger.checking import CheckedShot, readings_digest
+from nightfold.ledger.names import MachineNames, insert_row
+from nightfold.records import Derivation, shorten
+from nightfold.settings import ReadValue, digest_text, hash_setting, plain_value, token_of
+from nightfold.timestamps import from_us
+
+
+def amend_shot(connection: Connection, stored: Row[Any], shot: CheckedShot, at_us: int) -> bool:
+    """Compare a whole record with the shot stored under its uid; return whether anything was changed.
+
+    Raises
+    ------
+    RecordError
+        If settings, time, sequence or scan differ: a shot's settings are never overwritten.
+    """
+    if bytes(stored.content_digest) == shot.content_digest or _seen(
+        connection, stored.id, shot.content_digest
+    ):
+        return False
+    _check_identity(connection, stored, shot)
+    changed = _amend(connection, stored.id, shot.machine, shot.readings, shot.derivation, at_us)
+    if shot.failed is not None and set_failed(connection, stored.id, shot.failed, at_us):
+        changed = True
+    changed = _add_notes_and_frames(connection, stored.id, shot, at_us) or changed
+    _remember(connection, stored.id, shot.content_digest, at_us)
+    return changed
+
+
+def amend_readings(
+    connection: Connection,
+    stored: Row[Any],
+    machine: MachineNames,
+    readings: Mapping[str, ReadValue],
+    derivation: Derivation | None,
+    at_us: int,
+) -> bool:
+    """Bring later observables to a stored shot; return whether anything was changed."""
+    digest = digest_text("amendment", *readings_digest(readings, derivation))
+    if _seen(connection, stored.id, digest):
+        return False
+    changed = _amend(connection, stored.id, machine, readings, derivation, at_us)
+    _remember(connection, stored.id, digest, at_us)
+    return changed
+
+
+def _seen(connection: Connection, shot_id: int, digest: bytes) -> bool:
+    table = tables.amendment
+    same = and_(table.c.shot_id == shot_id, table.c.digest == digest)
+    return connection.execute(select(table.c.at_us).where(same)).first() is not None
+
+
+def _remember(connection: Connection, shot_id: int, digest: bytes, at_us: int) -> None:
+    connection.execute(insert(tables.amendment).values(shot_id=shot_id, digest=digest, at_us=at_us))
+
+
+def _check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) -> None:
+    taken = "as stored under this uid; a shot's settings are never overwritten"
+    if stored.sequence_id != shot.machine.sequences.get(shot.sequence):
+        raise RecordError(
+            "sequence", shorten(f"{shot.machine.name}: {shot.sequence}"), f"machine and sequence {taken}"
+        )
+    if stored.started_us != shot.started_us:
+        raise RecordError(
+            "started",
+            from_us(shot.started_us).isoformat(),
+            f"{from_us(stored.started_us).isoformat()}, {taken}",
+        )
+    if bytes(stored.values_digest) != shot.values_digest:
+        raise _differing_setting(connection, stored, shot, taken)
+    if bool(stored.reference) != shot.reference:
+        raise RecordError("reference", str(shot.reference), taken)
+    scan = tables.scan
+    label = connection.execute(select(scan.c.label).where(scan.c.id == stored.scan_id)).scalar()
+    if label != shot.wish.label:
+        raise RecordError("scan", shorten(shot.wish.label), f"{shorten(label)}, {taken}")
+
+
+def _differing_setting(
+    connection: Connection, stored: Row[Any], shot: CheckedShot, taken: str
+) -> RecordError:
+    entries = {**(shot.resting or {}), **shot.moving}
+    kept = {}
+    for name, (kind, _unit, num, exact, _swept) in stored_settings(
+        connection, stored.id, stored.set_id
+    ).items():
+        kept[name] = kind, num, exact
+    for name in sorted({*entries, *kept}):
+        field = f"parameters.{name}"
+        if name not in kept:
+            return RecordError(field, shorten(entries[name].value.plain), f"no such parameter, {taken}")
+        if name not in entries:
+            return RecordError(field, "nothing", f"{shorten(plain_value(*kept[name]))}, {taken}")
+        if hash_setting(name, token_of(*kept[name])) != entries[name].hash:
+            found = shorten(entries[name].value.plain)
+            return RecordError(field, found, f"{shorten(plain_value(*kept[name]))}, {taken}")
+    return RecordError("parameters", "other settings", taken)
+
+
+def stored_settings(
+    connection: Connection, shot_id: int, set_id: int
+) -> dict[str, tuple[str, str | None, float | None, str | None, bool]]:
+    """Return kind, unit, num, exact and swept of every setting of a stored shot, by name."""
+    parameter, rest, move = tables.parameter, tables.set_value, tables.shot_value
+    columns = parameter.c.name, parameter.c.kind, parameter.c.unit
+    resting = select(*columns, rest.c.num, rest.c.exact).join(rest, rest.c.parameter_id == parameter.c.id)
+    moving = select(*columns, move.c.num, move.c.exact, move.c.swept).join(
+        move, move.c.parameter_id == parameter.c.id
+    )
+    found = {
+        row.name: (row.kind, row.unit, row.num, row.exact, False)
+        for row in connection.execute(resting.where(rest.c.set_id == set_id))
+    }
+    for row in connection.execute(moving.where(move.c.shot_id == shot_id)):
+        found[row.name] = (row.kind, row.unit, row.num, row.exact, bool(row.swept))
+    return found
+
+
+def _amend(
+    connection: Connection,
+    shot_id: int,
+    machine: MachineNames,
+    readings: Mapping[str, ReadValue],
+    derivation: Derivation | None,
+    at_us: int,
+) -> bool:
+    table = tables.reading
+    derivation_id = find_derivation(connection, derivation)
+    current = {
+        row.observable_id: row for row in connection.execute(select(table).where(table.c.shot_id == shot_id))
+    }
+    changed = False
+    for name, read in readings.items():
+        observable_id = machine.observables[name].id
+        old = current.get(observable_id) if observable_id is not None else None
+        new = read.value, read.stderr, read.state, derivation_id
+        if old is not None:
+            if (old.value, old.stderr, old.state, old.derivation_id) == new:
+                continue
+            if old.state == "null" == read.state:
+                continue
+            past = {**old._mapping, "until_us": at_us}
+            connection.execute(insert(tables.past_reading).values(**past))
+            same = and_(table.c.shot_id == shot_id, table.c.observable_id == observable_id)
+            connection.execute(delete(table).where(same))
+        columns = dict(zip(("value", "stderr", "state", "derivation_id"), new, strict=True))
+        connection.execute(insert(table).values(shot_id=shot_id, observable_id=observable_id, **columns))
+        changed = True
+    return changed
+
+
+def find_derivation(connection: Connection, derivation: Derivation | None) -> int | None:
+    """Return the id of a derivation; an unknown one is entered."""
+    if derivation is None:
+        return None
+    table = tables.derivation
+    settings = json.dumps(derivation.settings, sort_keys=True, ensure_ascii=False)
+    row = {"name": derivation.name, "version": derivation.version, "settings": settings}
+    same = and_(*(table.c[column] == value for column, value in row.items()))
+    found = connection.execute(select(table.c.id).where(same)).scalar()
+    return found if found is not None else insert_row(connection, table, row)
+
+
+def set_failed(connection: Connection, shot_id: int, reason: str, at_us: int) -> bool:
+    """Set a shot aside because its record says that it failed; False if that stands already."""
+    table = tables.set_aside
+    same = and_(table.c.shot_id == shot_id, table.c.rule == "failed", table.c.reason == reason)
+    if connection.execute(select(table.c.id).where(same)).first():
+        return False
+    connection.execute(
+        insert(table).values(shot_id=shot_id, reason=reason, by=None, rule="failed", at_us=at_us)
+    )
+    return True
+
+
+def _add_notes_and_frames(connection: Connection, shot_id: int, shot: CheckedShot, at_us: int) -> bool:
+    changed = False
+    note, frame = tables.note, tables.frame
+    subject = note_subject(shot_id)
+    if shot.note:
+        same = and_(note.c.subject == subject, note.c.text == shot.note)
+        if not connection.execute(select(note.c.id).where(same)).first():
+            connection.execute(insert(note).values(subject=subject, text=shot.note, by=None, at_us=at_us))
+            changed = True
+    for item in shot.frames:
+        same = and_(frame.c.shot_id == shot_id, frame.c.camera == item.camera, frame.c.role == item.role)
+        if not connection.execute(select(frame.c.path).where(same)).first():
+            connection.execute(insert(frame).values(shot_id=shot_id, **item.model_dump()))
+            changed = True
+    return changed
+
+
+def note_subject(shot_id: int) -> str:
+    """Return how a note names its shot."""
+    return f"shot {shot_id}"

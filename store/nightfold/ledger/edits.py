@@ -1,0 +1,168 @@
+"""The edit history: which parameters a person changed, and when.
+
+Per stream the resting value of every parameter is followed through time: a value set is looked at only where it differs
+from the one before, and a moved value only where it was neither declared swept nor an axis of the shot's scan. The same
+change seen in several sequences is one edit.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any
+
+from sqlalchemy import Connection, and_, select
+
+from nightfold import tables
+from nightfold.ledger.rows import chunks
+from nightfold.ledger.selecting import find_machine, moment_us
+from nightfold.settings import plain_value, token_of
+
+Stored = tuple[float | None, str | None]
+
+
+@dataclass(frozen=True, slots=True)
+class Edit:
+    """One change by hand: the first shot that shows it, the parameter, its value before and after."""
+
+    at_us: int
+    parameter: str
+    unit: str
+    old: Any
+    new: Any
+    machine: str
+    sequence: str
+
+
+@dataclass(frozen=True, slots=True)
+class _Parameter:
+    name: str
+    kind: str
+    unit: str
+
+
+def find_edits(
+    connection: Connection,
+    since: datetime | str | None = None,
+    until: datetime | str | None = None,
+    machine: str | None = None,
+) -> list[Edit]:
+    """Return the edits of all machines, or of one, in time order.
+
+    Raises
+    ------
+    NotFound
+        If the machine is not in the store.
+    """
+    if machine is not None:
+        find_machine(connection, machine)
+    edits: list[Edit] = []
+    for row in connection.execute(select(tables.machine)).all():
+        if machine is not None and row.name != machine:
+            continue
+        low = moment_us(since, row.zone) if since is not None else None
+        high = moment_us(until, row.zone) if until is not None else None
+        for edit in _edits_of(connection, row.id, row.name):
+            if (low is None or edit.at_us >= low) and (high is None or edit.at_us < high):
+                edits.append(edit)
+    return sorted(edits, key=lambda edit: edit.at_us)
+
+
+def _edits_of(connection: Connection, machine_id: int, machine: str) -> list[Edit]:
+    table = tables.parameter
+    query = select(table).where(table.c.machine_id == machine_id)
+    known = {row.id: _Parameter(row.name, row.kind, row.unit or "") for row in connection.execute(query)}
+    sequences = select(tables.sequence.c.id, tables.sequence.c.name).where(
+        tables.sequence.c.machine_id == machine_id
+    )
+    seen: list[Edit] = []
+    for sequence_id, name in connection.execute(sequences).tuples().all():
+        for at_us, parameter_id, old, new in _walk(connection, sequence_id, known):
+            parameter = known[parameter_id]
+            before, after = (plain_value(parameter.kind, *value) for value in (old, new))
+            seen.append(Edit(at_us, parameter.name, parameter.unit, before, after, machine, name))
+    return _merge(seen)
+
+
+def _walk(
+    connection: Connection, sequence_id: int, known: Mapping[int, _Parameter]
+) -> Iterator[tuple[int, int, Stored, Stored]]:
+    """Yield (time, parameter, old, new) wherever a resting value of the stream changes."""
+    shot = tables.shot
+    contents: dict[int, dict[int, Stored]] = {}
+    resting: dict[int, Stored] = {}
+    last_set = None
+    moved = _unswept_rows(connection, sequence_id)
+    query = select(shot.c.id, shot.c.started_us, shot.c.set_id).where(shot.c.sequence_id == sequence_id)
+    rows = connection.execute(query.order_by(shot.c.started_us, shot.c.id)).all()
+    sets = sorted({row.set_id for row in rows})
+    axes = _axes_by_set(connection, sequence_id)
+    for part in chunks(sets):
+        rest = tables.set_value
+        for row in connection.execute(select(rest).where(rest.c.set_id.in_(part))):
+            contents.setdefault(row.set_id, {})[row.parameter_id] = (row.num, row.exact)
+    for row in rows:
+        values = moved.get(row.id, {})
+        if row.set_id != last_set:
+            skip = axes.get(row.id, frozenset())
+            values = {
+                **{key: val for key, val in contents.get(row.set_id, {}).items() if key not in skip},
+                **values,
+            }
+            last_set = row.set_id
+        for parameter_id, value in values.items():
+            old = resting.get(parameter_id)
+            if old is not None and _token(known[parameter_id], old) != _token(known[parameter_id], value):
+                yield row.started_us, parameter_id, old, value
+            resting[parameter_id] = value
+
+
+def _token(parameter: _Parameter, value: Stored) -> str:
+    return token_of(parameter.kind, *value)
+
+
+def _unswept_rows(connection: Connection, sequence_id: int) -> dict[int, dict[int, Stored]]:
+    shot, value, axis = tables.shot, tables.shot_value, tables.scan_axis
+    is_axis = and_(axis.c.scan_id == shot.c.scan_id, axis.c.parameter_id == value.c.parameter_id)
+    query = (
+        select(value.c.shot_id, value.c.parameter_id, value.c.num, value.c.exact)
+        .join(shot, shot.c.id == value.c.shot_id)
+        .outerjoin(axis, is_axis)
+        .where(shot.c.sequence_id == sequence_id, ~value.c.swept, axis.c.scan_id.is_(None))
+    )
+    found: dict[int, dict[int, Stored]] = {}
+    for row in connection.execute(query):
+        found.setdefault(row.shot_id, {})[row.parameter_id] = (row.num, row.exact)
+    return found
+
+
+def _axes_by_set(connection: Connection, sequence_id: int) -> dict[int, frozenset[int]]:
+    """Return the axes of the scan of every shot, by shot: a value that rests in a set may still be a scan's point."""
+    shot, axis = tables.shot, tables.scan_axis
+    of_scan: dict[int, set[int]] = {}
+    for row in connection.execute(select(axis)):
+        of_scan.setdefault(row.scan_id, set()).add(row.parameter_id)
+    frozen = {scan_id: frozenset(ids) for scan_id, ids in of_scan.items()}
+    query = select(shot.c.id, shot.c.scan_id).where(
+        shot.c.sequence_id == sequence_id, shot.c.scan_id.isnot(None)
+    )
+    return {row.id: frozen.get(row.scan_id, frozenset()) for row in connection.execute(query)}
+
+
+def _merge(seen: list[Edit]) -> list[Edit]:
+    """Make one edit of the same change seen in several sequences, unless the value went elsewhere in between."""
+    merged: list[Edit] = []
+    last: dict[str, list[Edit]] = {}
+    for edit in sorted(seen, key=lambda item: item.at_us):
+        recent = last.setdefault(edit.parameter, [])
+        twin = next((e for e in recent if _same(e, edit)), None)
+        if twin is not None and edit.sequence != twin.sequence:
+            continue
+        merged.append(edit)
+        last[edit.parameter] = [edit] if not recent or not _same(recent[0], edit) else [*recent, edit]
+    return merged
+
+
+def _same(one: Edit, other: Edit) -> bool:
+    return (repr(one.old), repr(one.new)) == (repr(other.old), repr(other.new))

@@ -1,0 +1,293 @@
+"""What the store knows by name: machines, their parameters and observables with kind and unit, sequences.
+
+A writer keeps this in memory. It is read again whenever another writer has changed the store, and forgotten after a
+rollback (SQLite gives the same ids out again). Nothing here is written before a whole record has been found good.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+from sqlalchemy import Connection, Table, func, insert, select, update
+
+from nightfold import tables
+from nightfold.card import MachineCard, parse_card
+from nightfold.errors import CardError, RecordError, UnitError
+from nightfold.records import shorten
+from nightfold.settings import ReadValue, Value
+from nightfold.units import conversion, convertible, parse_unit
+
+if TYPE_CHECKING:
+    from zoneinfo import ZoneInfo
+
+
+@dataclass(frozen=True, slots=True)
+class Known:
+    """A parameter or an observable: kind (``reading`` for an observable), the unit stored, the unit of bare numbers."""
+
+    kind: str
+    unit: str | None
+    bare: str | None
+    id: int | None = None
+
+
+@dataclass(slots=True)
+class MachineNames:
+    """Everything known by name of one machine."""
+
+    id: int
+    name: str
+    zone: str = "UTC"
+    card: MachineCard | None = None
+    parameters: dict[str, Known] = field(default_factory=dict)
+    observables: dict[str, Known] = field(default_factory=dict)
+    sequences: dict[str, int] = field(default_factory=dict)
+    versions: dict[tuple[int, bytes], int] = field(default_factory=dict)
+    generation: int = 0
+
+    @property
+    def naive_zone(self) -> ZoneInfo | None:
+        """The zone in which times without an offset are read; None where the card does not opt in."""
+        from nightfold.timestamps import find_zone
+
+        return find_zone(self.zone) if self.card is not None and self.card.naive_times else None
+
+    def settle(self, name: str, value: Value, unit: str | None, field: str) -> tuple[Value, Known]:
+        """Return the setting in the unit stored, and what would then be known of its parameter.
+
+        Raises
+        ------
+        RecordError
+            If kind or unit contradict what is known, or the name is an observable's.
+        """
+        if name in self.observables:
+            raise RecordError(field, "a parameter", f"another name: {name!r} is an observable of {self.name}")
+        known = self.parameters.get(name) or self._fresh_parameter(name, value)
+        if value.kind != known.kind:
+            value = _reread(value, known.kind, field)
+        if value.kind != "number":
+            return value, known
+        known = self._adopt(known, unit, field)
+        stated = known.bare if unit is None else parse_unit(unit)
+        return _convert_value(value, stated, known.unit, field), known
+
+    def settle_reading(
+        self, name: str, read: ReadValue, unit: str | None, field: str
+    ) -> tuple[ReadValue, Known]:
+        """Return the reading in the unit stored, and what would then be known of its observable.
+
+        Raises
+        ------
+        RecordError
+            If the unit contradicts what is known, or the name is a parameter's.
+        """
+        if name in self.parameters:
+            raise RecordError(field, "an observable", f"another name: {name!r} is a parameter of {self.name}")
+        known = self.observables.get(name) or self._fresh_observable(name)
+        known = self._adopt(known, unit, field)
+        stated = known.bare if unit is None else parse_unit(unit)
+        if stated in (None, known.unit) or known.unit is None:
+            return read, known
+        try:
+            rule = conversion(stated or "", known.unit)
+            value = None if read.value is None else rule.value(read.value)
+            stderr = None if read.stderr is None else rule.stderr(read.stderr)
+        except UnitError as problem:
+            raise RecordError(field, shorten(unit), str(problem)) from None
+        return ReadValue(value, stderr, read.state), known
+
+    def _fresh_parameter(self, name: str, value: Value) -> Known:
+        entry = self.card.parameters.get(name) if self.card else None
+        if entry is None:
+            return Known(value.kind, None, None)
+        kind = entry.kind or ("number" if entry.unit is not None else value.kind)
+        return Known(kind, entry.unit, entry.unit)
+
+    def _fresh_observable(self, name: str) -> Known:
+        entry = self.card.observable(name) if self.card else None
+        unit = entry.unit if entry else None
+        return Known("reading", unit, unit)
+
+    def _adopt(self, known: Known, unit: str | None, field: str) -> Known:
+        """Take the first unit stated; refuse one that cannot be converted into it."""
+        if unit is None:
+            return known
+        try:
+            stated = parse_unit(unit)
+            if known.unit is None:
+                return Known(known.kind, stated, known.bare if known.bare is not None else stated, known.id)
+            if not convertible(stated, known.unit):
+                raise UnitError(f"a unit that converts to {known.unit or 'a pure number'}")
+        except UnitError as problem:
+            raise RecordError(f"{field}.unit", shorten(unit), str(problem)) from None
+        return known
+
+
+def _reread(value: Value, kind: str, field: str) -> Value:
+    if kind == "truth" and value.kind == "text" and (value.exact or "").lower() in ("true", "false"):
+        return Value("truth", 1.0 if (value.exact or "").lower() == "true" else 0.0, None)
+    raise RecordError(
+        field, f"{shorten(value.plain)} ({value.kind})", f"a {kind}, as stated before for this parameter"
+    )
+
+
+def _convert_value(value: Value, stated: str | None, target: str | None, field: str) -> Value:
+    if stated is None or target is None or stated == target or value.num is None:
+        return value
+    try:
+        return Value("number", conversion(stated, target).value(value.num) + 0.0, None)
+    except UnitError as problem:
+        raise RecordError(f"{field}.unit", shorten(stated), str(problem)) from None
+
+
+class Names:
+    """The names of every machine in the store, kept in memory by a writer."""
+
+    def __init__(self) -> None:
+        self.machines: dict[str, MachineNames] = {}
+        self._loaded = False
+
+    def forget(self) -> None:
+        """Drop everything remembered."""
+        self.machines.clear()
+        self._loaded = False
+
+    def load(self, connection: Connection) -> None:
+        """Read everything once, if it is not in memory."""
+        if self._loaded:
+            return
+        self.machines = read_names(connection)
+        self._loaded = True
+
+    def machine(self, connection: Connection, name: str) -> MachineNames:
+        """Return a machine's names; an unknown machine is entered."""
+        found = self.machines.get(name)
+        if found is None:
+            machine_id = insert_row(connection, tables.machine, {"name": name, "zone": "UTC"})
+            found = self.machines[name] = MachineNames(machine_id, name)
+        return found
+
+    def sequence(self, connection: Connection, machine: MachineNames, name: str) -> int:
+        """Return the id of a sequence; an unknown one is entered."""
+        if name not in machine.sequences:
+            row = {"machine_id": machine.id, "name": name}
+            machine.sequences[name] = insert_row(connection, tables.sequence, row)
+        return machine.sequences[name]
+
+    def version(
+        self, connection: Connection, machine: MachineNames, sequence_id: int, structure: str, digest: bytes
+    ) -> int:
+        """Return the id of a version of a sequence; an unknown one is entered."""
+        key = (sequence_id, digest)
+        if key not in machine.versions:
+            row = {"sequence_id": sequence_id, "digest": digest, "structure": structure}
+            machine.versions[key] = insert_row(connection, tables.version, row)
+        return machine.versions[key]
+
+    def keep(self, connection: Connection, machine: MachineNames, plan: dict[str, Known]) -> None:
+        """Enter new parameters and observables, and units adopted, of a record found good."""
+        for name, known in plan.items():
+            reading = known.kind == "reading"
+            home = machine.observables if reading else machine.parameters
+            table = tables.observable if reading else tables.parameter
+            before = home.get(name)
+            if before is None:
+                row: dict[str, Any] = {"machine_id": machine.id, "name": name, "unit": known.unit}
+                if not reading:
+                    row["kind"] = known.kind
+                home[name] = Known(known.kind, known.unit, known.bare, insert_row(connection, table, row))
+            elif before.unit != known.unit:
+                connection.execute(update(table).where(table.c.id == before.id).values(unit=known.unit))
+                home[name] = Known(known.kind, known.unit, known.bare, before.id)
+                machine.generation += 1
+
+
+def read_names(connection: Connection) -> dict[str, MachineNames]:
+    """Return everything known by name, machine by machine."""
+    machines = {
+        row.id: MachineNames(row.id, row.name, row.zone) for row in connection.execute(select(tables.machine))
+    }
+    for machine_id, toml in newest_cards(connection).items():
+        machines[machine_id].card = parse_card(toml, source="the card in the store")
+    for row in connection.execute(select(tables.parameter)):
+        entry = _card_entry(machines[row.machine_id], "parameters", row.name)
+        known = Known(row.kind, row.unit, entry if entry is not None else row.unit, row.id)
+        machines[row.machine_id].parameters[row.name] = known
+    for row in connection.execute(select(tables.observable)):
+        entry = _card_entry(machines[row.machine_id], "observables", row.name)
+        known = Known("reading", row.unit, entry if entry is not None else row.unit, row.id)
+        machines[row.machine_id].observables[row.name] = known
+    of_sequence = {}
+    for row in connection.execute(select(tables.sequence)):
+        machines[row.machine_id].sequences[row.name] = row.id
+        of_sequence[row.id] = machines[row.machine_id]
+    for row in connection.execute(
+        select(tables.version.c.id, tables.version.c.sequence_id, tables.version.c.digest)
+    ):
+        of_sequence[row.sequence_id].versions[row.sequence_id, bytes(row.digest)] = row.id
+    return {machine.name: machine for machine in machines.values()}
+
+
+def _card_entry(machine: MachineNames, kind: str, name: str) -> str | None:
+    if machine.card is None:
+        return None
+    entry = machine.card.observable(name) if kind == "observables" else machine.card.parameters.get(name)
+    return entry.unit if entry else None
+
+
+def newest_cards(connection: Connection) -> dict[int, str]:
+    """Return the text of the card in force of each machine, by machine id."""
+    newest = select(tables.card.c.machine_id, func.max(tables.card.c.at_us).label("at_us"))
+    newest = newest.group_by(tables.card.c.machine_id)
+    chosen = newest.subquery()
+    rows = select(tables.card.c.machine_id, tables.card.c.toml).join(
+        chosen,
+        (chosen.c.machine_id == tables.card.c.machine_id) & (chosen.c.at_us == tables.card.c.at_us),
+    )
+    return {row.machine_id: row.toml for row in connection.execute(rows)}
+
+
+def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: int) -> None:
+    """Make a card the one in force; parameters and observables without a unit take the card's.
+
+    Raises
+    ------
+    CardError
+        If a unit of the card does not convert into the one stored, or a kind contradicts the one stored.
+    """
+    machine = names.machine(connection, card.machine)
+    for kind, table in (("parameters", tables.parameter), ("observables", tables.observable)):
+        for name, known in getattr(machine, kind).items():
+            entry = card.observable(name) if kind == "observables" else card.parameters.get(name)
+            if entry is None:
+                continue
+            if entry.kind is not None and known.kind not in ("reading", entry.kind):
+                raise CardError(
+                    f"card of {card.machine}: {kind}.{name}.kind: found {entry.kind}, the store has {known.kind}"
+                )
+            if entry.unit is None:
+                continue
+            if known.unit is None:
+                connection.execute(update(table).where(table.c.id == known.id).values(unit=entry.unit))
+            elif not convertible(entry.unit, known.unit):
+                raise CardError(
+                    f"card of {card.machine}: {kind}.{name}.unit: found {entry.unit!r}, "
+                    f"wanted a unit that converts to {known.unit!r}, in which the store holds it"
+                )
+    connection.execute(update(tables.machine).where(tables.machine.c.id == machine.id).values(zone=card.zone))
+    digest = card.digest
+    same = (tables.card.c.machine_id == machine.id) & (tables.card.c.digest == digest)
+    if connection.execute(select(tables.card.c.id).where(same)).first():
+        connection.execute(update(tables.card).where(same).values(at_us=at_us))
+    else:
+        row = {"machine_id": machine.id, "digest": digest, "toml": card.toml, "at_us": at_us}
+        connection.execute(insert(tables.card).values(**row))
+    names.forget()
+
+
+def insert_row(connection: Connection, table: Table, row: dict[str, Any]) -> int:
+    """Insert one row and return its id (the caller is the only writer)."""
+    key = connection.execute(insert(table).values(**row)).inserted_primary_key
+    assert key is not None
+    return int(key[0])

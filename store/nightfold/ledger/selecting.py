@@ -1,0 +1,340 @@
+"""Choosing shots and reading their settings and readings as a table."""
+
+from __future__ import annotations
+
+import difflib
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from datetime import datetime
+from typing import TYPE_CHECKING, Any
+
+from sqlalchemy import ColumnElement, Connection, Row, Select, Table, and_, exists, select
+
+from nightfold import tables
+from nightfold.errors import ChoiceNeeded, NotFound
+from nightfold.ledger.rows import chunks
+from nightfold.settings import plain_value
+from nightfold.timestamps import parse_moment, utc_times
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+_MANY = 5000
+_STDERR = "_stderr"
+
+
+@dataclass(frozen=True, slots=True)
+class Selection:
+    """Which shots: every field that is given narrows the choice.
+
+    Attributes
+    ----------
+    machine, sequence : str or None
+    scan_id : int or None
+    since, until : datetime or str or None
+        From (included) and to (excluded); ISO 8601 with an offset, an aware datetime, or local time of the machine.
+    set_aside : bool
+        Include the shots set aside.
+    limit : int or None
+        Only the newest so many.
+    """
+
+    machine: str | None = None
+    sequence: str | None = None
+    scan_id: int | None = None
+    since: datetime | str | None = None
+    until: datetime | str | None = None
+    set_aside: bool = False
+    limit: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Named:
+    """A parameter or observable by name: its ids (one a machine), kind and unit."""
+
+    name: str
+    ids: tuple[int, ...]
+    kind: str
+    unit: str
+
+
+def moment_us(value: datetime | str, zone: str) -> int:
+    """Return a time as microseconds since 1970; without an offset it is read in `zone`, a date is its midnight.
+
+    Raises
+    ------
+    NotFound
+        If it is no time.
+    """
+    from nightfold.timestamps import find_zone
+
+    text = f"{value}T00:00" if isinstance(value, str) and len(value) == 10 else value
+    try:
+        return parse_moment(text, find_zone(zone))
+    except ValueError as problem:
+        raise NotFound(f"time {value!r}: wanted {problem}") from None
+
+
+def find_machine(connection: Connection, name: str) -> Row[Any]:
+    """Return the row of a machine.
+
+    Raises
+    ------
+    NotFound
+    """
+    rows = {row.name: row for row in connection.execute(select(tables.machine))}
+    if name not in rows:
+        raise NotFound(f"machine {name!r}: not in this store; {near_miss(name, rows)}")
+    return rows[name]
+
+
+def near_miss(name: str, known: Iterable[str]) -> str:
+    """Return what to say about the names there are, near ones first."""
+    names = list(known)
+    near = difflib.get_close_matches(name, names, 3, 0.5) or sorted(names)[:8]
+    return "it has " + ", ".join(near) if near else "it has none yet"
+
+
+def set_aside_now(shot_id: ColumnElement[int]) -> ColumnElement[bool]:
+    """Return the condition that a shot is set aside at present."""
+    table = tables.set_aside
+    return exists().where(table.c.shot_id == shot_id, table.c.lifted_us.is_(None))
+
+
+def conditions(connection: Connection, selection: Selection) -> ColumnElement[bool]:
+    """Return the selection as a condition on the shot table.
+
+    Raises
+    ------
+    NotFound
+        If the machine or sequence is not in the store.
+    """
+    shot, sequence = tables.shot, tables.sequence
+    terms: list[ColumnElement[bool]] = []
+    zone = "UTC"
+    if selection.machine is not None:
+        row = find_machine(connection, selection.machine)
+        zone = row.zone
+        of_machine = select(sequence.c.id).where(sequence.c.machine_id == row.id)
+        terms.append(shot.c.sequence_id.in_(of_machine))
+    else:
+        zones = set(connection.execute(select(tables.machine.c.zone)).scalars())
+        zone = zones.pop() if len(zones) == 1 else "UTC"
+    if selection.sequence is not None:
+        found = {row.id: row.name for row in connection.execute(select(sequence.c.id, sequence.c.name))}
+        ids = [key for key, name in found.items() if name == selection.sequence]
+        if not ids:
+            known = near_miss(selection.sequence, set(found.values()))
+            raise NotFound(f"sequence {selection.sequence!r}: not in this store; {known}")
+        terms.append(shot.c.sequence_id.in_(ids))
+    if selection.scan_id is not None:
+        terms.append(shot.c.scan_id == selection.scan_id)
+    if selection.since is not None:
+        terms.append(shot.c.started_us >= moment_us(selection.since, zone))
+    if selection.until is not None:
+        terms.append(shot.c.started_us < moment_us(selection.until, zone))
+    if not selection.set_aside:
+        terms.append(~set_aside_now(shot.c.id))
+    return and_(*terms) if terms else shot.c.id.isnot(None)
+
+
+def find_named(
+    connection: Connection, table: Table, names: Sequence[str], machine: str | None
+) -> list[Named]:
+    """Return parameters or observables by name.
+
+    Raises
+    ------
+    NotFound
+        If the machine has none of that name.
+    ChoiceNeeded
+        If several machines have it in different units or kinds.
+    """
+    query = select(table, tables.machine.c.name.label("machine")).join(
+        tables.machine, tables.machine.c.id == table.c.machine_id
+    )
+    rows = [row for row in connection.execute(query) if machine is None or row.machine == machine]
+    found = []
+    for name in names:
+        own = [row for row in rows if row.name == name]
+        if not own:
+            known = sorted({row.name for row in rows})
+            raise NotFound(f"{table.name} {name!r}: not in this store; {near_miss(name, known)}")
+        kinds = {(getattr(row, "kind", "number"), row.unit or "") for row in own}
+        if len(kinds) > 1:
+            machines = ", ".join(sorted(row.machine for row in own))
+            raise ChoiceNeeded(
+                f"{table.name} {name!r}: differs in kind or unit between {machines}; name the machine"
+            )
+        kind, unit = kinds.pop()
+        found.append(Named(name, tuple(row.id for row in own), kind, unit))
+    return found
+
+
+def named_by_id(connection: Connection, table: Table, ids: Iterable[int]) -> list[Named]:
+    """Return parameters or observables of one machine by id, in order."""
+    rows = {row.id: row for row in connection.execute(select(table).where(table.c.id.in_(list(ids))))}
+    return [Named(rows[n].name, (n,), getattr(rows[n], "kind", "number"), rows[n].unit or "") for n in ids]
+
+
+def select_shots(
+    connection: Connection, selection: Selection
+) -> tuple[list[Row[Any]], ColumnElement[bool] | None]:
+    """Return the shots chosen, in time order, and the condition that chose them if there are very many."""
+    shot, sequence, scan = tables.shot, tables.sequence, tables.scan
+    where = conditions(connection, selection)
+    query: Select[Any] = (
+        select(
+            shot.c.id, shot.c.uid, shot.c.started_us, shot.c.set_id, shot.c.reference, shot.c.scan_id,
+            sequence.c.name.label("sequence"), scan.c.label, scan.c.round,
+        )
+        .join(sequence, sequence.c.id == shot.c.sequence_id)
+        .outerjoin(scan, scan.c.id == shot.c.scan_id)
+        .where(where)
+    )  # fmt: skip
+    if selection.limit is None:
+        rows = list(connection.execute(query.order_by(shot.c.started_us, shot.c.id)))
+        return rows, where if len(rows) > _MANY else None
+    newest = query.order_by(shot.c.started_us.desc(), shot.c.id.desc()).limit(selection.limit)
+    return list(connection.execute(newest))[::-1], None
+
+
+def scan_key(scan_id: int | None, label: str | None, number: int | None) -> str | None:
+    """Return how a scan is named: ``label#round``, or its id where it has no label."""
+    if scan_id is None:
+        return None
+    return str(scan_id) if label is None else f"{label}#{number}"
+
+
+def read_table(
+    connection: Connection, selection: Selection, parameters: Sequence[str], observables: Sequence[str]
+) -> pd.DataFrame:
+    """Return a frame with a row a shot: uid, started (UTC), sequence, scan, then what was asked for.
+
+    Units stand in ``attrs["units"]``.
+    """
+    import numpy as np
+    import pandas as pd
+
+    rows, where = select_shots(connection, selection)
+    wanted = find_named(connection, tables.parameter, parameters, selection.machine)
+    plain, errors = _split_stderr(connection, observables, selection.machine)
+    read = find_named(connection, tables.observable, plain + errors, selection.machine)
+    frame = pd.DataFrame(
+        {
+            "uid": [row.uid for row in rows],
+            "started": utc_times(np.array([row.started_us for row in rows], dtype=np.int64)),
+            "sequence": [row.sequence for row in rows],
+            "scan": [scan_key(row.scan_id, row.label, row.round) for row in rows],
+        }
+    )
+    columns = setting_columns(connection, rows, wanted, where)
+    values = reading_columns(connection, rows, read, where)
+    for name in parameters:
+        frame[name] = columns[name]
+    for name in observables:
+        base = name.removesuffix(_STDERR) if name not in values else name
+        frame[name] = values[base][0 if name == base else 1]
+    frame.attrs["units"] = {item.name: item.unit for item in [*wanted, *read]}
+    return frame
+
+
+def _split_stderr(
+    connection: Connection, names: Sequence[str], machine: str | None
+) -> tuple[list[str], list[str]]:
+    known = set(connection.execute(select(tables.observable.c.name)).scalars())
+    errors = [n.removesuffix(_STDERR) for n in names if n.endswith(_STDERR) and n not in known]
+    plain = [n for n in names if n in known or not n.endswith(_STDERR)]
+    return plain, [name for name in dict.fromkeys(errors) if name not in plain]
+
+
+def setting_columns(
+    connection: Connection,
+    rows: Sequence[Row[Any]],
+    wanted: Sequence[Named],
+    where: ColumnElement[bool] | None,
+) -> dict[str, Any]:
+    """Return one column a parameter: float64, or object where text, truth or large whole numbers stand."""
+    if not wanted:
+        return {}
+    names = {number: item for item in wanted for number in item.ids}
+    move, rest = tables.shot_value, tables.set_value
+    found: dict[str, dict[int, Any]] = {item.name: {} for item in wanted}
+    of_shots = select(move.c.shot_id, move.c.parameter_id, move.c.num, move.c.exact)
+    for row in _rows_of(
+        connection, of_shots.where(move.c.parameter_id.in_(names)), move.c.shot_id, rows, where
+    ):
+        item = names[row.parameter_id]
+        found[item.name][row.shot_id] = plain_value(item.kind, row.num, row.exact)
+    resting: dict[str, dict[int, Any]] = {item.name: {} for item in wanted}
+    of_sets = select(rest.c.set_id, rest.c.parameter_id, rest.c.num, rest.c.exact).where(
+        rest.c.parameter_id.in_(names)
+    )
+    for part in chunks(sorted({row.set_id for row in rows})):
+        for kept in connection.execute(of_sets.where(rest.c.set_id.in_(part))):
+            item = names[kept.parameter_id]
+            resting[item.name][kept.set_id] = plain_value(item.kind, kept.num, kept.exact)
+    return {
+        item.name: _column(
+            [found[item.name].get(row.id, resting[item.name].get(row.set_id)) for row in rows], item.kind
+        )
+        for item in wanted
+    }
+
+
+def reading_columns(
+    connection: Connection,
+    rows: Sequence[Row[Any]],
+    wanted: Sequence[Named],
+    where: ColumnElement[bool] | None,
+) -> dict[str, tuple[Any, Any]]:
+    """Return values and standard uncertainties of each observable, NaN where there is none."""
+    import numpy as np
+
+    if not wanted:
+        return {}
+    names = {number: item.name for item in wanted for number in item.ids}
+    place = {row.id: index for index, row in enumerate(rows)}
+    columns = {item.name: (np.full(len(rows), np.nan), np.full(len(rows), np.nan)) for item in wanted}
+    table = tables.reading
+    query = select(table.c.shot_id, table.c.observable_id, table.c.value, table.c.stderr, table.c.state)
+    for row in _rows_of(
+        connection, query.where(table.c.observable_id.in_(names)), table.c.shot_id, rows, where
+    ):
+        value, stderr = columns[names[row.observable_id]]
+        index = place[row.shot_id]
+        value[index] = read_value(row.value, row.state)
+        stderr[index] = math.nan if row.stderr is None else row.stderr
+    return columns
+
+
+def read_value(value: float | None, state: str | None) -> float:
+    """Return a stored reading as a float."""
+    if value is not None:
+        return value
+    return float(state) if state in ("inf", "-inf") else math.nan
+
+
+def _rows_of(
+    connection: Connection,
+    query: Select[Any],
+    shot_id: ColumnElement[int],
+    rows: Sequence[Row[Any]],
+    where: ColumnElement[bool] | None,
+) -> Iterable[Row[Any]]:
+    if where is not None:
+        yield from connection.execute(query.join(tables.shot, tables.shot.c.id == shot_id).where(where))
+        return
+    for part in chunks([row.id for row in rows]):
+        yield from connection.execute(query.where(shot_id.in_(part)))
+
+
+def _column(values: list[Any], kind: str) -> Any:
+    import numpy as np
+
+    if kind == "number" and not any(type(value) is int for value in values):
+        return np.array([math.nan if value is None else value for value in values], dtype=np.float64)
+    column = np.empty(len(values), dtype=object)
+    column[:] = values
+    return column

@@ -1,0 +1,116 @@
+"""Everything the store knows of one shot."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import datetime
+
+from sqlalchemy import Connection, select
+
+from nightfold import tables
+from nightfold.ledger.amending import note_subject, stored_settings
+from nightfold.ledger.selecting import read_value, scan_key
+from nightfold.ledger.setting_aside import find_shots
+from nightfold.settings import plain_value
+from nightfold.timestamps import from_us
+
+
+@dataclass(frozen=True, slots=True)
+class ShotSetting:
+    """One setting of a shot: value, unit, and whether it was declared swept."""
+
+    value: float | int | str | bool
+    unit: str
+    swept: bool
+
+
+@dataclass(frozen=True, slots=True)
+class ShotReading:
+    """One observable of a shot: value (NaN where there is none, and `state` says why), stderr or None, unit."""
+
+    value: float
+    stderr: float | None
+    unit: str
+    state: str | None
+    derivation: str | None
+
+
+@dataclass(frozen=True, slots=True)
+class ShotView:
+    """One shot in full; times are aware, in UTC."""
+
+    uid: str
+    started: datetime
+    machine: str
+    zone: str
+    sequence: str
+    scan: str | None
+    reference: bool
+    parameters: dict[str, ShotSetting]
+    observables: dict[str, ShotReading]
+    set_aside: str | None
+    notes: tuple[str, ...]
+    frames: tuple[tuple[str, str, str], ...]
+    source: str | None
+    line: int | None
+
+
+def view_shot(connection: Connection, uid: str) -> ShotView:
+    """Return one shot in full.
+
+    Raises
+    ------
+    NotFound
+    """
+    shot = next(iter(find_shots(connection, [uid]).values()))
+    sequence = connection.execute(
+        select(tables.sequence.c.name, tables.machine.c.name.label("machine"), tables.machine.c.zone)
+        .join(tables.machine, tables.machine.c.id == tables.sequence.c.machine_id)
+        .where(tables.sequence.c.id == shot.sequence_id)
+    ).one()
+    scan = connection.execute(select(tables.scan).where(tables.scan.c.id == shot.scan_id)).first()
+    aside, note, frame, source = tables.set_aside, tables.note, tables.frame, tables.source
+    reason = connection.execute(
+        select(aside.c.reason).where(aside.c.shot_id == shot.id, aside.c.lifted_us.is_(None))
+    ).scalar()
+    notes = connection.execute(select(note.c.text).where(note.c.subject == note_subject(shot.id))).scalars()
+    frames = connection.execute(
+        select(frame.c.camera, frame.c.role, frame.c.path).where(frame.c.shot_id == shot.id)
+    )
+    path = connection.execute(select(source.c.path).where(source.c.id == shot.source_id)).scalar()
+    return ShotView(
+        uid=shot.uid,
+        started=from_us(shot.started_us),
+        machine=sequence.machine,
+        zone=sequence.zone,
+        sequence=sequence.name,
+        scan=scan_key(scan.id, scan.label, scan.round) if scan else None,
+        reference=bool(shot.reference),
+        parameters={
+            name: ShotSetting(plain_value(kind, num, exact), unit or "", swept)
+            for name, (kind, unit, num, exact, swept) in sorted(
+                stored_settings(connection, shot.id, shot.set_id).items()
+            )
+        },
+        observables=_readings(connection, shot.id),
+        set_aside=reason,
+        notes=tuple(notes),
+        frames=tuple((row.camera, row.role, row.path) for row in frames),
+        source=path,
+        line=shot.line,
+    )
+
+
+def _readings(connection: Connection, shot_id: int) -> dict[str, ShotReading]:
+    reading, observable, derivation = tables.reading, tables.observable, tables.derivation
+    rows = connection.execute(
+        select(reading, observable.c.name, observable.c.unit, derivation.c.name.label("by"))
+        .join(observable, observable.c.id == reading.c.observable_id)
+        .outerjoin(derivation, derivation.c.id == reading.c.derivation_id)
+        .where(reading.c.shot_id == shot_id)
+        .order_by(observable.c.name)
+    )
+    return {
+        row.name: ShotReading(read_value(row.value, row.state), row.stderr, row.unit or "", row.state, row.by)
+        for row in rows
+    }

@@ -1,0 +1,82 @@
+"""Which scan a shot belongs to: labels with their rounds, and folding of the unlabelled rest, kept in the store."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+from sqlalchemy import Connection
+
+from nightfold.ledger.checking import CheckedShot
+from nightfold.ledger.names import newest_cards
+from nightfold.scans import refolding, rounds
+from nightfold.scans.keeping import settle_axes
+from nightfold.scans.rounds import Round
+
+DEFAULT_REJOIN_S = 86400.0
+
+
+@dataclass(slots=True)
+class ScanFolder:
+    """Places labelled shots as they come, folds unlabelled ones, and folds again when shots come late."""
+
+    _newest: dict[tuple[int, str], Round] = field(default_factory=dict)
+    _rejoin_us: dict[int, int] | None = None
+
+    def forget(self) -> None:
+        """Drop what is remembered of the store."""
+        self._newest.clear()
+        self._rejoin_us = None
+
+    def place(self, connection: Connection, shots: Sequence[CheckedShot]) -> None:
+        """Give labelled shots their scan: the newest round of the label, or a new one."""
+        for shot in sorted(shots, key=lambda item: item.started_us):
+            if shot.wish.label is None or shot.reference:
+                continue
+            key = (shot.sequence_id, shot.wish.label)
+            current = self._newest.get(key) or rounds.newest_round(connection, *key)
+            swept = _swept_ids(shot)
+            if current is None or not current.takes(shot.started_us, swept, self.rejoin_us(connection, shot)):
+                number = 1 if current is None else current.round + 1
+                current = rounds.open_round(connection, key[0], key[1], number, shot.started_us, swept)
+            current.add(shot.started_us, shot.wish.planned_shots, shot.wish.last)
+            self._newest[key] = current
+            shot.scan_id = current.scan_id
+
+    def fold(self, connection: Connection, shots: Sequence[CheckedShot]) -> None:
+        """Fold the streams of the shots just written, and labels to which shots came late."""
+        labelled: dict[tuple[int, str], list[CheckedShot]] = {}
+        free: dict[int, list[int]] = {}
+        for shot in shots:
+            if shot.reference:
+                continue
+            if shot.wish.label is None:
+                free.setdefault(shot.sequence_id, []).append(shot.started_us)
+            else:
+                labelled.setdefault((shot.sequence_id, shot.wish.label), []).append(shot)
+        for key, members in labelled.items():
+            current = self._newest[key]
+            if current.late:
+                rounds.fold_label(connection, *key, self.rejoin_us(connection, members[0]))
+                del self._newest[key]
+            else:
+                rounds.save_progress(connection, current)
+                for scan_id in {shot.scan_id for shot in members if shot.scan_id is not None}:
+                    settle_axes(connection, scan_id, current.swept)
+        for sequence_id, started in free.items():
+            refolding.fold_span(connection, sequence_id, min(started), max(started))
+
+    def rejoin_us(self, connection: Connection, shot: CheckedShot) -> int:
+        """Return for how long after its last shot a label still resumes its round."""
+        if self._rejoin_us is None:
+            from nightfold.card import parse_card
+
+            cards = {
+                machine: parse_card(toml, source="card") for machine, toml in newest_cards(connection).items()
+            }
+            self._rejoin_us = {machine: int(card.rejoin_within_s * 1e6) for machine, card in cards.items()}
+        return self._rejoin_us.get(shot.machine.id, int(DEFAULT_REJOIN_S * 1e6))
+
+
+def _swept_ids(shot: CheckedShot) -> tuple[int, ...]:
+    return tuple(shot.machine.parameters[name].id or 0 for name in shot.wish.swept)

@@ -1,0 +1,178 @@
+"""Folding the unlabelled shots of a stream where new ones came in, between one pause and the next."""
+
+from __future__ import annotations
+
+from collections import ChainMap
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+from sqlalchemy import ColumnElement, Connection, Row, and_, or_, select, update
+
+from nightfold import tables
+from nightfold.ledger.names import insert_row
+from nightfold.ledger.rows import chunks
+from nightfold.scans.folding import FoundScan, StreamShot, fold_stream, pause_limit_us
+from nightfold.scans.keeping import set_axes, settle_axes
+from nightfold.scans.rounds import move_shots, retire
+from nightfold.settings import token_of
+
+REACH = 500
+
+
+def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: int) -> None:
+    """Fold a stream's unlabelled shots again, around the times of the shots just written.
+
+    The span reaches to the nearest pause on either side, so the outcome does not depend on the order of arrival; where
+    the machine never pauses, to the bounds of the scans about 500 shots away.
+    """
+    rows = _span(connection, sequence_id, first_us, last_us)
+    names = dict(
+        connection.execute(
+            select(tables.parameter.c.id, tables.parameter.c.name)
+            .join(tables.sequence, tables.sequence.c.machine_id == tables.parameter.c.machine_id)
+            .where(tables.sequence.c.id == sequence_id)
+        )
+        .tuples()
+        .all()
+    )
+    found = fold_stream(_stream(connection, rows, names))
+    _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()})
+
+
+def _span(connection: Connection, sequence_id: int, first_us: int, last_us: int) -> list[Row[Any]]:
+    shot = tables.shot
+    before = _unlabelled(connection, sequence_id, shot.c.started_us < first_us, newest_first=True)[::-1]
+    inside = _unlabelled(connection, sequence_id, shot.c.started_us.between(first_us, last_us), limit=None)
+    after = _unlabelled(connection, sequence_id, shot.c.started_us > last_us)
+    rows = [*before, *inside, *after]
+    pause = pause_limit_us([row.started_us for row in rows])
+    low, high = len(before), len(before) + len(inside)
+    while low > 0 and rows[low].started_us - rows[low - 1].started_us <= pause:
+        low -= 1
+    while high < len(rows) and rows[high].started_us - rows[high - 1].started_us <= pause:
+        high += 1
+    if low == 0 and len(before) == REACH:
+        low = _scan_bound(rows, 0, 1)
+    if high == len(rows) and len(after) == REACH:
+        high = _scan_bound(rows, len(rows) - 1, -1) + 1
+    return rows[low:high]
+
+
+def _scan_bound(rows: Sequence[Row[Any]], start: int, step: int) -> int:
+    """Return the first place, going inwards, that is not in the scan cut through at `start`."""
+    scan_id, place = rows[start].scan_id, start
+    while scan_id is not None and 0 <= place + step < len(rows) and rows[place].scan_id == scan_id:
+        place += step
+    return place
+
+
+def _unlabelled(
+    connection: Connection,
+    sequence_id: int,
+    when: ColumnElement[bool],
+    *,
+    newest_first: bool = False,
+    limit: int | None = REACH,
+) -> list[Row[Any]]:
+    shot, scan = tables.shot, tables.scan
+    own = and_(shot.c.sequence_id == sequence_id, ~shot.c.reference, when)
+    free = or_(shot.c.scan_id.is_(None), scan.c.label.is_(None))
+    order = (shot.c.started_us.desc(), shot.c.id.desc()) if newest_first else (shot.c.started_us, shot.c.id)
+    query = (
+        select(shot.c.id, shot.c.started_us, shot.c.scan_id, shot.c.set_id)
+        .outerjoin(scan, scan.c.id == shot.c.scan_id)
+        .where(own, free)
+        .order_by(*order)
+    )
+    return list(connection.execute(query.limit(limit) if limit else query))
+
+
+def _stream(connection: Connection, rows: Sequence[Row[Any]], names: Mapping[int, str]) -> list[StreamShot]:
+    resting = _resting(connection, {row.set_id for row in rows}, names)
+    moving, swept = _moving(connection, [row.id for row in rows], names)
+    shots: list[StreamShot] = []
+    last_set, last_moved = None, dict[str, str]()
+    for row in rows:
+        moved = moving.get(row.id, {})
+        values = ChainMap(moved, resting[row.set_id])
+        changed = frozenset[str]()
+        if shots:
+            previous = shots[-1].values
+            looked_at = {*moved, *last_moved}
+            if row.set_id != last_set:
+                looked_at |= {*resting[row.set_id], *resting[last_set or 0]}
+            changed = frozenset(name for name in looked_at if previous.get(name) != values.get(name))
+        shots.append(StreamShot(row.id, row.started_us, frozenset(swept.get(row.id, ())), values, changed))
+        last_set, last_moved = row.set_id, moved
+    return shots
+
+
+def _resting(connection: Connection, sets: set[int], names: Mapping[int, str]) -> dict[int, dict[str, str]]:
+    kinds, table = _kinds(connection), tables.set_value
+    found: dict[int, dict[str, str]] = {set_id: {} for set_id in sets}
+    for part in chunks(sorted(sets)):
+        for row in connection.execute(select(table).where(table.c.set_id.in_(part))):
+            token = token_of(kinds[row.parameter_id], row.num, row.exact)
+            found[row.set_id][names[row.parameter_id]] = token
+    return found
+
+
+def _moving(
+    connection: Connection, shot_ids: Sequence[int], names: Mapping[int, str]
+) -> tuple[dict[int, dict[str, str]], dict[int, set[str]]]:
+    kinds, table = _kinds(connection), tables.shot_value
+    values: dict[int, dict[str, str]] = {}
+    swept: dict[int, set[str]] = {}
+    for part in chunks(shot_ids):
+        for row in connection.execute(select(table).where(table.c.shot_id.in_(part))):
+            name = names[row.parameter_id]
+            values.setdefault(row.shot_id, {})[name] = token_of(kinds[row.parameter_id], row.num, row.exact)
+            if row.swept:
+                swept.setdefault(row.shot_id, set()).add(name)
+    return values, swept
+
+
+def _kinds(connection: Connection) -> dict[int, str]:
+    return dict(connection.execute(select(tables.parameter.c.id, tables.parameter.c.kind)).tuples().all())
+
+
+def _keep(
+    connection: Connection,
+    sequence_id: int,
+    rows: Sequence[Row[Any]],
+    found: Sequence[FoundScan],
+    ids: Mapping[str, int],
+) -> None:
+    """Bring the scans found into the store; a scan keeps its id as long as it keeps most of its shots."""
+    now = {row.id: row.scan_id for row in rows}
+    free = {scan_id for scan_id in now.values() if scan_id is not None}
+    heirs: dict[int, int] = {}
+    placed: set[int] = set()
+    touched: dict[int, list[int]] = {}
+    for scan in found:
+        counts: dict[int, int] = {}
+        for shot_id in scan.shot_ids:
+            old = now[shot_id]
+            if old is not None:
+                counts[old] = counts.get(old, 0) + 1
+        best = max((old for old in counts if old in free), key=lambda old: counts[old], default=None)
+        if best is None:
+            row = {"sequence_id": sequence_id, "label": None, "round": 1, "origin": scan.origin}
+            best = insert_row(connection, tables.scan, row)
+        else:
+            free.discard(best)
+            connection.execute(update(tables.scan).where(tables.scan.c.id == best).values(origin=scan.origin))
+        heirs |= dict.fromkeys(counts, best)
+        moved = [shot_id for shot_id in scan.shot_ids if now[shot_id] != best]
+        lost = sum(1 for old in now.values() if old == best) > counts.get(best, 0)
+        move_shots(connection, best, moved)
+        if moved or lost:
+            touched[best] = [ids[name] for name in scan.axes]
+        placed.update(scan.shot_ids)
+    loose = [shot_id for shot_id, scan_id in now.items() if scan_id is not None and shot_id not in placed]
+    move_shots(connection, None, loose)
+    for scan_id, axes in touched.items():
+        set_axes(connection, scan_id, axes)
+        settle_axes(connection, scan_id, axes)
+    for scan_id in free:
+        retire(connection, scan_id, heirs.get(scan_id))

@@ -1,0 +1,106 @@
+"""Making and upgrading the tables of a store, by the revisions in `migrations/`."""
+
+from __future__ import annotations
+
+import sqlite3
+from dataclasses import dataclass
+from pathlib import Path
+
+from sqlalchemy import Connection, insert, inspect
+
+from nightfold.errors import NotAStore, StoreError, StoreReadOnly
+from nightfold.session import APPLICATION_ID, Place, Session, check_file, revision_of
+from nightfold.tables import REVISION, metadata, turn
+
+
+@dataclass(frozen=True, slots=True)
+class UpgradeReport:
+    """What an upgrade did: revisions before and after, and where the copy of the old file lies."""
+
+    before: str
+    after: str
+    copy: Path | None
+
+
+def create_tables(session: Session) -> None:
+    """Make every table in an empty file or database.
+
+    Raises
+    ------
+    NotAStore
+        If the database holds other things already.
+    """
+    with session.writing(empty=True) as connection:
+        found = inspect(connection).get_table_names()
+        if found:
+            raise NotAStore(
+                f"store {session.place}: holds other tables already ({', '.join(sorted(found)[:3])})"
+            )
+        _migrate(connection)
+        connection.execute(insert(turn).values(id=1, taken=0))
+        if connection.dialect.name == "sqlite":
+            connection.exec_driver_sql(f"PRAGMA application_id={APPLICATION_ID}")
+
+
+def upgrade_tables(place: Place) -> UpgradeReport:
+    """Bring a store to the revision of this program; a file is copied beside itself first.
+
+    Raises
+    ------
+    StoreMissing, NotAStore, StoreReadOnly, StoreError
+    """
+    check_file(place)
+    session = Session(place)
+    try:
+        with session.reading() as connection:
+            before = revision_of(connection)
+        if before is None:
+            raise NotAStore(f"store {place}: a database, but no nightfold store")
+        if before == REVISION:
+            return UpgradeReport(before, before, None)
+        if before > REVISION:
+            raise StoreError(f"store {place}: revision {before} is newer than this nightfold ({REVISION})")
+        copy = _copy(place, before, session) if place.path else None
+        with session.writing(empty=True) as connection:
+            _migrate(connection)
+        return UpgradeReport(before, REVISION, copy)
+    finally:
+        session.close()
+
+
+def _copy(place: Place, before: str, session: Session) -> Path:
+    assert place.path is not None
+    if session.read_only:
+        raise StoreReadOnly(f"store {place}: cannot be written, so it cannot be upgraded")
+    copy = place.path.with_name(f"{place.path.name}.before-{REVISION}")
+    if copy.exists():
+        raise StoreError(f"store {place}: {copy} exists already; move it away first")
+    with sqlite3.connect(place.path) as old, sqlite3.connect(copy) as new:
+        old.backup(new)
+    return copy
+
+
+def _migrate(connection: Connection) -> None:
+    from alembic import command
+    from alembic.config import Config
+
+    config = Config()
+    config.set_main_option("script_location", str(migrations_folder()).replace("%", "%%"))
+    config.attributes["connection"] = connection
+    config.attributes["metadata"] = metadata
+    command.upgrade(config, "head")
+
+
+def migrations_folder() -> Path:
+    """Return where the revisions lie: inside the installed package, or in the checkout.
+
+    Raises
+    ------
+    StoreError
+        If the installation lacks them.
+    """
+    here = Path(__file__).resolve().parent
+    for folder in (here / "migrations", here.parents[1] / "migrations"):
+        if (folder / "env.py").is_file():
+            return folder
+    raise StoreError(f"this installation of nightfold lacks its migrations (looked in {here / 'migrations'})")
