@@ -36,6 +36,13 @@ def command_parser(command: str, module: ModuleType) -> ArgumentParser:
     return parser
 
 
+def add_scan_key(parser: ArgumentParser) -> None:
+    """Declare the argument that names a scan."""
+    parser.add_argument(
+        "key", metavar="KEY", type=scan_key, help="id, label (its newest round) or label#round of a scan"
+    )
+
+
 def named_number(text: str) -> tuple[str, float]:
     """Return name and number of ``name=value``."""
     name, equals, number = text.partition("=")

@@ -3,23 +3,16 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.concise import asymmetric, interval, plain
-from nightfold_cli.render import Cell, Column, Row
+from nightfold_cli.render import Cell, Row
 
 if TYPE_CHECKING:
     from nightfold.fits.result import Estimate, FitWarning
 
 LEVEL_68, LEVEL_95 = 0.6827, 0.95
-COLUMNS = (
-    Column("estimate"),
-    Column("value", right=True),
-    Column("unit"),
-    Column("95 % interval", plain_name="low95"),
-    Column("", plain_name="high95"),
-)
 
 
 def value_text(estimate: Estimate, *, fixed: bool = False) -> str:
@@ -37,7 +30,7 @@ def interval_text(estimate: Estimate) -> str:
     return interval(low, high, estimate.value, estimate.stderr)
 
 
-def rows(estimates: Mapping[str, Estimate], fixed: Sequence[str]) -> list[Row]:
+def rows(estimates: Mapping[str, Estimate], fixed: Collection[str]) -> list[Row]:
     """Return a line an estimate, for the columns name, value, unit and interval."""
     return [
         [

@@ -4,11 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from datetime import UTC, datetime
-from typing import TYPE_CHECKING, Any
+from typing import Any
 from zoneinfo import ZoneInfo
-
-if TYPE_CHECKING:
-    from nightfold.card import MachineCard
 
 
 class LocalTimes:
@@ -23,11 +20,6 @@ class LocalTimes:
     def __init__(self, zones: Mapping[str, str]) -> None:
         self._zones = {machine: ZoneInfo(zone) for machine, zone in zones.items()}
         self._names = dict(zones)
-
-    @classmethod
-    def of(cls, cards: Mapping[str, MachineCard]) -> LocalTimes:
-        """Return the local times of all machines that have a card."""
-        return cls({machine: card.zone for machine, card in cards.items()})
 
     def zone(self, machine: str | None = None) -> ZoneInfo:
         """Return the zone of a machine; without a name, the one zone there is, or UTC."""

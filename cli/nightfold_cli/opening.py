@@ -5,7 +5,7 @@ from __future__ import annotations
 from argparse import Namespace
 from collections.abc import Iterator
 from contextlib import contextmanager
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.localtimes import LocalTimes, parse_moment
 from nightfold_cli.render import Screen
@@ -13,12 +13,14 @@ from nightfold_cli.render import Screen
 if TYPE_CHECKING:
     from datetime import datetime
 
+    from pandas import DataFrame
+
     from nightfold.store import Store
 
 
 @contextmanager
 def opened(args: Namespace, screen: Screen, *, create: bool = False) -> Iterator[Store]:
-    """Open the store of the arguments and name it on the screen."""
+    """Open the store of the arguments, with `create` make it if it is not there, and name it."""
     from nightfold.store import open_store
 
     with open_store(args.store, create=create) as store:
@@ -28,7 +30,12 @@ def opened(args: Namespace, screen: Screen, *, create: bool = False) -> Iterator
 
 def local_times(store: Store) -> LocalTimes:
     """Return the local times of the store's machines."""
-    return LocalTimes.of(store.cards())
+    return LocalTimes({machine: store.zone(machine) for machine in store.machines()})
+
+
+def records(table: DataFrame) -> list[dict[str, Any]]:
+    """Return the rows of a table, each by column name."""
+    return [{str(name): value for name, value in row.items()} for row in table.to_dict("records")]
 
 
 def moment(text: str | None, store: Store, machine: str | None = None) -> datetime | None:

@@ -155,6 +155,16 @@ class Chart:
             *(_margin(names.get(row, ""), self.glyphs) + canvas.line(row) for row in range(height)),
         ]
 
+    @property
+    def legend(self) -> str:
+        """Return what the marks mean."""
+        marks = [f"{self.glyphs.mark} mean", f"{self.glyphs.bar} one stderr either way"]
+        if any(self.points.flagged):
+            marks.append(f"{self.glyphs.flagged} outlier, not used")
+        if self.curve is not None:
+            marks.append("fine dots: the fit")
+        return ", ".join(marks)
+
     def frame(self) -> Frame | None:
         """Return the rectangle that holds all points and the curve, None where nothing is finite."""
         kept = [(x, y) for x, y in zip(self.points.x, self.points.y, strict=True) if _finite(x, y)]

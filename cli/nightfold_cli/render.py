@@ -35,6 +35,7 @@ class Cell:
 
     screen: str
     plain: str = ""
+    strong: bool = False
 
     @classmethod
     def of(cls, lines: Sequence[str], plain: str | None = None) -> Cell:
@@ -59,6 +60,8 @@ class Column:
         Whether long cells may run over several lines.
     plain_name : str
         The name in a pipe, where it differs.
+    quiet : bool
+        Whether nothing is said when there is no room for it.
     """
 
     name: str
@@ -66,6 +69,7 @@ class Column:
     spare: int = 0
     wraps: bool = False
     plain_name: str = ""
+    quiet: bool = False
 
 
 Row = Sequence[str | Cell]
@@ -136,7 +140,7 @@ class Screen:
         """Start a part of the answer; only people need it."""
         if not self.terminal:
             return
-        self._blank()
+        self.gap()
         self._runs([(printable(title), "bold"), ("  " + printable(detail) if detail else "", "")])
 
     def text(self, text: str, *, strong: bool = False, indent: str = "") -> None:
@@ -183,20 +187,20 @@ class Screen:
         if not listed:
             self._wrapped(empty, "", "")
             return
-        self._blank()
-        self._drawn(columns, [[_of(cell, screen=True) for cell in row] for row in listed], spaced)
+        self.gap()
+        self._drawn(columns, listed, spaced)
 
-    def _drawn(self, columns: Sequence[Column], rows: list[list[str]], spaced: bool) -> None:
+    def _drawn(self, columns: Sequence[Column], rows: Sequence[Row], spaced: bool) -> None:
         """Draw a table on the terminal with the columns there is room for."""
         from rich.table import Table
         from rich.text import Text
 
-        widths = [_width(column, [row[index] for row in rows]) for index, column in enumerate(columns)]
+        texts = [[_of(cell, screen=True) for cell in row] for row in rows]
+        widths = [_width(column, [row[index] for row in texts]) for index, column in enumerate(columns)]
         shown = _fitting(columns, widths, self.width)
         table = Table(
             box=None,
-            padding=(0, _GAP, 1 if spaced else 0, 0),
-            collapse_padding=False,
+            padding=(0, _GAP, 0, 0),
             pad_edge=False,
             show_edge=False,
             header_style="bold",
@@ -210,10 +214,16 @@ class Screen:
                 overflow="fold",
                 min_width=min(widths[index], self.width),
             )
-        for row in rows:
-            table.add_row(*(Text(row[index]) for index in shown))
+        after_strong = False
+        for number, row in enumerate(rows):
+            strong = isinstance(row[0], Cell) and row[0].strong
+            if spaced and number and not after_strong:
+                table.add_row()
+            table.add_row(*(Text(texts[number][index]) for index in shown), style="bold" if strong else None)
+            after_strong = strong
         self._rich().print(table)
-        hidden = [column.name for index, column in enumerate(columns) if index not in shown]
+        left_out = (column for index, column in enumerate(columns) if index not in shown)
+        hidden = dict.fromkeys(column.name for column in left_out if not column.quiet)
         if hidden:
             self.note(f"no room for: {', '.join(hidden)}")
 
@@ -244,9 +254,10 @@ class Screen:
         """Write one line in one style."""
         self._runs([(text, style)])
 
-    def _blank(self) -> None:
-        """Write an empty line."""
-        self._runs([])
+    def gap(self) -> None:
+        """Leave a line empty; only people need it."""
+        if self.terminal:
+            self._runs([])
 
     def _runs(self, runs: Sequence[tuple[str, str]]) -> None:
         """Write one line made of runs of text."""

@@ -8,9 +8,8 @@ from typing import TYPE_CHECKING, Any
 from nightfold_cli.concise import short
 
 if TYPE_CHECKING:
-    from nightfold.scans.scan import Scan
-
     from nightfold.scans.axes import Axis
+    from nightfold.scans.scan import Scan
 
 _VALUES = 4
 
@@ -37,7 +36,7 @@ def grid(scan: Scan) -> str:
 def repeats(scan: Scan) -> float:
     """Return shots for each point of the grid."""
     points: int = math.prod(axis.points for axis in scan.axes) or 1
-    return scan.shots / points
+    return float(scan.shots / points)
 
 
 def repeats_text(scan: Scan) -> str:

@@ -14,18 +14,17 @@ from nightfold_cli.concise import concise, interval, plain
 from nightfold_cli.estimates import LEVEL_95
 from nightfold_cli.failures import UsageError
 from nightfold_cli.localtimes import compact, heading
-from nightfold_cli.opening import local_times
+from nightfold_cli.opening import local_times, records
 from nightfold_cli.progress import Progress
 from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.result import Estimate, FitResult
-    from nightfold.scans.scan import Scan
-    from nightfold.store import Store
-
     from nightfold.ledger.outcome import Intake
+    from nightfold.scans.scan import Scan
     from nightfold.simulator import Campaign, TrueEdit, Truth
+    from nightfold.store import Store
 
 HELP = "play six weeks of an invented machine"
 EXAMPLES = ("nightfold demo", "nightfold demo /tmp/heron --json")
@@ -68,22 +67,22 @@ class Found:
 
 def run(args: Namespace) -> int:
     """Write the campaign, take it, fit it, compare."""
-    from nightfold.store import open_store
-
     from nightfold.simulator import write_campaign
+    from nightfold.simulator.schedule import NIGHTS
+    from nightfold.store import open_store
 
     screen = Screen.here(args.json)
     folder: Path = args.folder
     _check_free(folder)
     began = time.monotonic()
-    with Progress("simulating nights", 0, sys.stderr) as progress:
+    with Progress("simulating nights", NIGHTS, sys.stderr) as progress:
         campaign = write_campaign(folder, progress=progress)
     with open_store(folder / STORE, create=True) as store:
         screen.store(store.where)
         store.use_card(campaign.card)
         intake = _take(store, campaign)
         found = _fit(store, campaign.truths)
-        edits = store.edits().to_dict("records")
+        edits = records(store.edits())
         if screen.json:
             screen.answer(_entry(store, campaign, intake, found, edits))
             return 0
@@ -169,9 +168,7 @@ def _show_counts(screen: Screen, store: Store, campaign: Campaign, intake: Intak
     scans = store.scans()
     labelled = sum(scan.label is not None for scan in scans)
     settings = len(store.parameters())
-    screen.heading(
-        "heron", "an invented potassium-39 machine; its truths are known because they were made up"
-    )
+    screen.heading("heron", "an invented potassium-39 machine, whose true numbers are known")
     screen.fields(
         [
             ("nights", str(len(campaign.files))),

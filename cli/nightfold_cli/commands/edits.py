@@ -5,7 +5,7 @@ from __future__ import annotations
 from argparse import ArgumentParser, Namespace
 
 from nightfold_cli.localtimes import compact, heading
-from nightfold_cli.opening import local_times, moment, opened
+from nightfold_cli.opening import local_times, moment, opened, records
 from nightfold_cli.render import Cell, Column, Screen
 from nightfold_cli.settings import setting
 
@@ -26,7 +26,10 @@ def run(args: Namespace) -> int:
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
         span = {key: moment(getattr(args, key), store, args.machine) for key in ("since", "until")}
-        edits = store.edits(span["since"], span["until"], machine=args.machine).to_dict("records")
+        table = store.edits(span["since"], span["until"], machine=args.machine)
+        edits = [
+            {**edit, "unit": table.attrs["units"].get(edit["parameter"]) or None} for edit in records(table)
+        ]
         times = local_times(store)
     if args.parameter:
         edits = [edit for edit in edits if edit["parameter"] == args.parameter]
@@ -45,8 +48,8 @@ def run(args: Namespace) -> int:
         [
             Cell(when, at.isoformat(timespec="seconds")),
             edit["parameter"],
-            setting(edit["old"]),
-            setting(edit["new"]),
+            setting(edit["old"], edit["unit"]),
+            setting(edit["new"], edit["unit"]),
             edit["sequence"],
         ]
         for when, at, edit in zip(compact(moments), moments, edits, strict=True)

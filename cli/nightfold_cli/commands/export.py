@@ -6,7 +6,7 @@ from argparse import ArgumentParser, Namespace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from nightfold_cli.arguments import scan_key
+from nightfold_cli.arguments import add_scan_key
 from nightfold_cli.failures import UsageError
 from nightfold_cli.opening import opened
 from nightfold_cli.render import Screen
@@ -21,7 +21,7 @@ _KINDS = {".nc": "netCDF", ".csv": "CSV"}
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
-    parser.add_argument("key", metavar="KEY", type=scan_key, help="id, label or label#round of a scan")
+    add_scan_key(parser)
     parser.add_argument(
         "file", metavar="FILE", type=Path, help="what to write: NAME.nc (a grid) or NAME.csv (a row a shot)"
     )

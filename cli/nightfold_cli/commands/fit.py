@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli import estimates
-from nightfold_cli.arguments import named_number, scan_key
+from nightfold_cli.arguments import add_scan_key, named_number
 from nightfold_cli.charts import chart_of_points
 from nightfold_cli.failures import UsageError
 from nightfold_cli.opening import opened
@@ -20,10 +20,9 @@ from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.result import FitResult
+    from nightfold.scans.axes import Axis
     from nightfold.scans.scan import Scan
     from nightfold.store import Store
-
-    from nightfold.scans.axes import Axis
 
 HELP = "fit models to a scan, with intervals and warnings"
 EXAMPLES = (
@@ -45,29 +44,16 @@ class Slice:
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
-    parser.add_argument(
-        "key", metavar="KEY", type=scan_key, help="id, label (its newest round) or label#round"
-    )
-    parser.add_argument(
-        "models", metavar="MODEL", nargs="+", help="one or more; 'nightfold models' lists them"
-    )
-    parser.add_argument(
-        "-o", "--observable", metavar="NAME", help="what to fit (default: the machine's main one)"
-    )
+    add_scan_key(parser)
+    parser.add_argument("models", metavar="MODEL", nargs="+", help="'nightfold models' lists them")
+    parser.add_argument("-o", "--observable", metavar="NAME", help="default: the machine's main one")
     parser.add_argument("--along", metavar="PARAMETER", help="the axis to fit along, where there are several")
     parser.add_argument("--background", choices=("none", "flat", "sloped"), help="default: that of the model")
     parser.add_argument("--plain", action="store_true", help="equal weights and no robust step")
-    parser.add_argument(
-        "--fixed",
-        metavar="NAME=VALUE",
-        type=named_number,
-        action="append",
-        default=[],
-        help="hold a parameter",
-    )
-    parser.add_argument(
-        "--start", metavar="NAME=VALUE", type=named_number, action="append", default=[], help="where to begin"
-    )
+    for name, help_line in (("--fixed", "hold a parameter"), ("--start", "where to begin")):
+        parser.add_argument(
+            name, metavar="NAME=VALUE", type=named_number, action="append", default=[], help=help_line
+        )
     parser.add_argument("--no-keep", action="store_true", help="do not keep the fit in the store")
 
 
@@ -171,9 +157,8 @@ def _verdict(screen: Screen, result: FitResult) -> None:
     minor = [warning for warning in result.warnings if warning.advisory]
     if not screen.terminal:
         for warning in result.warnings:
-            screen.say(
-                f"{'note' if warning.advisory else 'do not trust this'}: {warning.code}: {warning.message}"
-            )
+            kind = "to know" if warning.advisory else "do not trust this"
+            screen.say(f"{kind}: {warning.code}: {warning.message}")
         return
     if grave:
         screen.heading("DO NOT TRUST THIS FIT")

@@ -12,11 +12,6 @@ if TYPE_CHECKING:
 
 HELP = "list the models, or show one in full"
 EXAMPLES = ("nightfold models", "nightfold models lorentzian")
-BACKGROUNDS = (
-    ("none", ""),
-    ("flat", "+ offset"),
-    ("sloped", "+ offset + slope (x - center) for resonances, + offset + slope x for the others"),
-)
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -40,13 +35,18 @@ def run(args: Namespace) -> int:
 
 
 def _list(screen: Screen, shapes: tuple[LineShape, ...]) -> None:
-    """Draw a line or two for each model."""
-    columns = [
-        Column("model"),
-        Column("f(x)", wraps=True),
-        Column("parameters", wraps=True),
-        Column("background", plain_name="default_background"),
-    ]
+    """Draw two lines for each model."""
+    if screen.terminal:
+        for shape in shapes:
+            names = ", ".join(parameter.name for parameter in shape.parameters)
+            screen.heading(shape.name, names)
+            screen.text(shape.formula, indent="    ")
+            screen.text(f"background {shape.default_background}", indent="    ")
+        screen.note(
+            "\nAnother background: --background none, flat (+ offset) or sloped (+ offset + slope x)."
+        )
+        return
+    heads = ("model", "formula", "parameters", "default_background")
     rows = [
         [
             shape.name,
@@ -56,15 +56,12 @@ def _list(screen: Screen, shapes: tuple[LineShape, ...]) -> None:
         ]
         for shape in shapes
     ]
-    screen.table(columns, rows, empty="no models", spaced=True)
-    screen.note(
-        "background: the default one; --background none, flat (+ offset) or sloped (+ offset + slope x)"
-    )
+    screen.table([Column(name) for name in heads], rows, empty="no models")
 
 
 def _show(screen: Screen, shape: LineShape) -> None:
     """Draw one model in full."""
-    screen.heading(shape.name, f"f(x) = {shape.formula}")
+    screen.heading(shape.name)
     screen.fields(
         [
             ("formula", shape.formula),

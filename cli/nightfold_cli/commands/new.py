@@ -7,7 +7,6 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from nightfold_cli.failures import UsageError
-from nightfold_cli.opening import opened
 from nightfold_cli.render import Screen
 
 if TYPE_CHECKING:
@@ -32,11 +31,14 @@ def add_arguments(parser: ArgumentParser) -> None:
 
 def run(args: Namespace) -> int:
     """Make the store, then write and use the card."""
+    from nightfold.store import create_store
+
     screen = Screen.here(args.json)
     path: Path | None = args.card or (Path(f"{args.machine}.toml") if args.machine else None)
     if args.machine:
         _check_free(path)
-    with opened(args, screen, create=True) as store:
+    with create_store(args.store) as store:
+        screen.store(store.where)
         if args.machine and path:
             _write_starter(path, args.machine, args.zone)
         card = store.use_card(path) if path else None

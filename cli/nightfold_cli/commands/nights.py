@@ -6,7 +6,7 @@ from argparse import ArgumentParser, Namespace
 from typing import Any
 
 from nightfold_cli.arguments import positive
-from nightfold_cli.opening import local_times, opened
+from nightfold_cli.opening import local_times, opened, records
 from nightfold_cli.render import Cell, Column, Screen
 
 HELP = "list the nights, a line each"
@@ -23,7 +23,7 @@ def run(args: Namespace) -> int:
     """List the nights, the oldest first."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
-        nights = store.nights().to_dict("records")
+        nights = records(store.nights())
         times = local_times(store)
     if args.machine:
         nights = [night for night in nights if night["machine"] == args.machine]

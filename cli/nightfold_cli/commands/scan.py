@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
+import math
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.arguments import scan_key
+from nightfold_cli.arguments import add_scan_key
 from nightfold_cli.charts import chart_of_points, map_of_points
-from nightfold_cli.concise import concise, short
+from nightfold_cli.concise import Scale, scale_of, short
 from nightfold_cli.failures import UsageError
 from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.opening import local_times, opened
-from nightfold_cli.points import Point, Reading, points_of
+from nightfold_cli.points import Point, Reading, Setting, points_of
 from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.scantext import axis_line, entry, repeats_text, status
 from nightfold_cli.settings import setting
@@ -32,9 +33,7 @@ _HEIGHT = 16
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
-    parser.add_argument(
-        "key", metavar="KEY", type=scan_key, help="id, label (its newest round) or label#round"
-    )
+    add_scan_key(parser)
     parser.add_argument(
         "-o", "--observable", metavar="NAME", help="chart this one (default: the machine's main one)"
     )
@@ -104,34 +103,66 @@ def _header(screen: Screen, scan: Scan, times: LocalTimes) -> None:
 def _tabulate(
     screen: Screen, scan: Scan, points: Sequence[Point], observables: Sequence[str], units: dict[str, str]
 ) -> None:
-    """Draw a line a point: mean with its stderr, and the scatter of single shots."""
+    """Draw a line a point: mean and scatter of single shots, to the same place in a whole column."""
+    scales = {name: _scale([point.readings[name] for point in points]) for name in observables}
+    settings = [_aligned([point.at[rank] for point in points]) for rank in range(len(scan.axes))]
     columns = [
         Column(_named(axis.parameter, axis.unit), right=axis.low is not None, plain_name=axis.parameter)
         for axis in scan.axes
     ]
     columns.append(Column("shots", right=True))
     for rank, name in enumerate(observables):
-        columns.append(Column(_named(name, units[name]), right=True, spare=2 * rank, plain_name=name))
-        columns.append(Column("scatter", right=True, spare=2 * rank + 1, plain_name=f"{name}_scatter"))
+        scale = scales[name]
+        power = "1" + scale.suffix if scale and scale.suffix else ""
+        head = _named(name, f"{power} {units[name]}".strip())
+        columns.append(Column(head, right=True, spare=2 * rank, plain_name=name))
+        columns.append(
+            Column("scatter", right=True, spare=2 * rank + 1, plain_name=f"{name}_scatter", quiet=True)
+        )
     rows: list[Row] = [
         [
-            *(setting(value) for value in point.at),
+            *(column[place] for column in settings),
             str(point.shots),
-            *(cell for name in observables for cell in _cells(point.readings[name])),
+            *(cell for name in observables for cell in _cells(point.readings[name], scales[name])),
         ]
-        for point in points
+        for place, point in enumerate(points)
     ]
     screen.table(columns, rows, empty="no shots but those set aside; --set-aside shows them")
 
 
-def _cells(reading: Reading) -> tuple[Cell, Cell]:
+def _scale(readings: Sequence[Reading]) -> Scale | None:
+    """Return the place to which a column is written, from its largest mean and its typical scatter."""
+    means = [abs(reading.mean) for reading in readings if math.isfinite(reading.mean)]
+    scatters = sorted(
+        scatter
+        for reading in readings
+        for scatter in [reading.scatter if reading.count > 1 else reading.stderr]
+        if scatter > 0
+    )
+    return scale_of(max(means), scatters[len(scatters) // 2]) if means and scatters else None
+
+
+def _cells(reading: Reading, scale: Scale | None) -> tuple[Cell, Cell]:
     """Return mean and scatter of a point."""
-    if not reading.count:
-        return Cell("-", "nan"), Cell("-", "nan")
-    known = reading.stderr > 0
-    mean = concise(reading.mean, reading.stderr) if known else short(reading.mean)
-    scatter = short(reading.scatter) if reading.count > 1 else "-"
-    return Cell(mean, repr(reading.mean)), Cell(scatter, repr(reading.scatter))
+
+    def text(number: float) -> str:
+        if not math.isfinite(number):
+            return "-"
+        return scale.digits(number) if scale else short(number)
+
+    return (
+        Cell(text(reading.mean), repr(reading.mean)),
+        Cell("± " + text(reading.scatter) if reading.count > 1 else "", repr(reading.scatter)),
+    )
+
+
+def _aligned(values: Sequence[Setting]) -> list[Cell]:
+    """Return settings with the same number of decimals."""
+    texts = [setting(value) for value in values]
+    if any("e" in text or isinstance(value, str | bool) for text, value in zip(texts, values, strict=True)):
+        return [Cell(text) for text in texts]
+    decimals = max((len(text.partition(".")[2]) for text in texts), default=0)
+    return [Cell(f"{float(value):.{decimals}f}", text) for text, value in zip(texts, values, strict=True)]
 
 
 def _draw(screen: Screen, scan: Scan, points: Sequence[Point], observable: str, unit: str) -> None:
@@ -140,9 +171,10 @@ def _draw(screen: Screen, scan: Scan, points: Sequence[Point], observable: str, 
         return
     numeric = [axis for axis in scan.axes if axis.low is not None]
     if len(scan.axes) == 1 and numeric:
-        screen.heading(observable)
+        screen.gap()
         chart = chart_of_points(points, numeric[0], observable, unit, screen.width, _HEIGHT, screen.unicode)
         screen.chart(chart.lines())
+        screen.note(chart.legend)
         screen.note(f"next: nightfold fit {scan.key} MODEL -o {observable}")
     elif len(scan.axes) == 2:
         screen.heading(observable, unit)

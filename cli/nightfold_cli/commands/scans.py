@@ -4,16 +4,19 @@ from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
+from datetime import date, time
 from typing import TYPE_CHECKING
+from zoneinfo import ZoneInfo
 
 from nightfold_cli.arguments import positive
-from nightfold_cli.localtimes import LocalTimes, compact, heading
+from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.opening import local_times, moment, opened
-from nightfold_cli.render import Cell, Column, Screen
+from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status
 
 if TYPE_CHECKING:
     from nightfold.scans.scan import Scan
+    from nightfold.store import Store
 
 HELP = "list the scans, with axes and a small trend"
 EXAMPLES = (
@@ -22,7 +25,8 @@ EXAMPLES = (
     "nightfold scans --json | jq '.scans[].label'",
 )
 _ON_SCREEN = 20
-_TREND = 14
+_TREND = 12
+_NARROW = 90
 _PLAIN_HEIGHTS = "_.-=+*#%"
 
 
@@ -55,7 +59,9 @@ def run(args: Namespace) -> int:
         if screen.json:
             screen.answer({"scans": [entry(scan) for scan in listed]})
         elif screen.terminal:
-            _draw(screen, listed, times)
+            _draw(screen, listed, _nights(store, listed))
+            if listed:
+                screen.note(times.note(scan.machine for scan in listed))
             if len(found) > len(listed):
                 screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
         else:
@@ -63,37 +69,46 @@ def run(args: Namespace) -> int:
     return 0
 
 
-def _draw(screen: Screen, scans: Sequence[Scan], times: LocalTimes) -> None:
-    """Draw two or more lines a scan."""
-    moments = [times.local(scan.first, scan.machine) for scan in scans]
+def _draw(screen: Screen, scans: Sequence[Scan], nights: Sequence[date]) -> None:
+    """Draw two or more lines a scan, night by night."""
     trends = {scan.main_observable for scan in scans if scan.main_observable}
     shared = trends.copy().pop() if len(trends) == 1 else None
+    several = len({scan.machine for scan in scans}) > 1
     columns = [
         Column("scan", wraps=True),
         Column("axes", wraps=True),
         Column("points"),
         Column("shots"),
-        Column(heading(moments)),
+        Column("from"),
         Column(shared or "trend", spare=1),
     ]
-    several = len({scan.machine for scan in scans}) > 1
-    rows = []
-    for scan, when in zip(scans, compact(moments), strict=True):
+    rows: list[Row] = []
+    for place, (scan, night) in enumerate(zip(scans, nights, strict=True)):
+        if not place or night != nights[place - 1]:
+            rows.append([Cell(f"{night:%a %Y-%m-%d}", strong=True), *[""] * 5])
         aside = f"{scan.set_aside} aside" if scan.set_aside else ""
+        began = scan.first.astimezone(ZoneInfo(scan.zone))
         trend = trend_of(scan, unicode=screen.unicode)
         rows.append(
             [
                 Cell.of((scan.key, _stream(scan) if several else scan.sequence)),
-                Cell.of(_axes(scan)),
+                Cell.of(_axes(scan, narrow=screen.width < _NARROW)),
                 Cell.of((grid(scan), f"x {repeats_text(scan)}")),
                 Cell.of((str(scan.shots), aside)),
-                Cell.of((when, status(scan))),
+                Cell.of((f"{began:%H:%M}", "" if scan.complete else status(scan))),
                 Cell.of((trend, "" if shared else scan.main_observable or "")),
             ]
         )
     screen.table(columns, rows, empty="no scans yet; 'nightfold take FILE…' takes shots in", spaced=True)
-    if rows:
-        screen.note(times.note(scan.machine for scan in scans))
+
+
+def _nights(store: Store, scans: Sequence[Scan]) -> list[date]:
+    """Return the night each scan began in."""
+    from nightfold.timestamps import night_of, to_us
+
+    noon = time(12)
+    bounds = {machine: card.night_boundary for machine, card in store.cards().items()}
+    return [night_of(to_us(scan.first), scan.zone, bounds.get(scan.machine, noon)) for scan in scans]
 
 
 def trend_of(scan: Scan, *, unicode: bool) -> str:
@@ -110,12 +125,12 @@ def trend_of(scan: Scan, *, unicode: bool) -> str:
     return bars if unicode else bars.translate(str.maketrans(HEIGHTS, _PLAIN_HEIGHTS))
 
 
-def _axes(scan: Scan) -> list[str]:
-    """Return the lines that describe the axes: two for one axis, else one each."""
+def _axes(scan: Scan, *, narrow: bool) -> list[str]:
+    """Return the lines that describe the axes: name and range on two lines, or on one if there are several."""
     if not scan.axes:
         return ["(nothing moved)"]
-    if len(scan.axes) == 1:
-        return [scan.axes[0].parameter, span(scan.axes[0])]
+    if narrow or len(scan.axes) == 1:
+        return [line for axis in scan.axes for line in (axis.parameter, span(axis))]
     return [axis_line(axis) for axis in scan.axes]
 
 

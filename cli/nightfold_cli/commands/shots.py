@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
@@ -9,12 +10,12 @@ from nightfold_cli.arguments import positive, scan_key
 from nightfold_cli.concise import concise
 from nightfold_cli.failures import UsageError
 from nightfold_cli.localtimes import LocalTimes, compact, heading
-from nightfold_cli.opening import local_times, moment, opened
+from nightfold_cli.opening import local_times, moment, opened, records
 from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
-    from nightfold.ledger.queries import ShotView
+    from nightfold.ledger.shot import ShotReading, ShotView
     from nightfold.store import Store
 
 HELP = "list shots, or show one in full"
@@ -71,7 +72,7 @@ def _list(screen: Screen, store: Store, args: Namespace, times: LocalTimes) -> N
     limit = args.limit or (_ON_SCREEN + 1 if screen.terminal else None)
     table = store.shots(
         args.parameter,
-        args.observable,
+        [*args.observable, *(f"{name}_stderr" for name in args.observable if screen.terminal)],
         machine=args.machine,
         sequence=args.sequence,
         scan=args.scan,
@@ -80,20 +81,19 @@ def _list(screen: Screen, store: Store, args: Namespace, times: LocalTimes) -> N
         set_aside=args.set_aside,
         limit=limit,
     )
-    rows = table.to_dict("records")
+    rows = records(table)
     if screen.json:
-        screen.answer({"shots": rows})
+        screen.answer({"shots": rows, "units": dict(table.attrs["units"])})
         return
     cut = not args.limit and screen.terminal and len(rows) > _ON_SCREEN
-    _draw(
-        screen, rows[-_ON_SCREEN:] if cut else rows, [*args.parameter, *args.observable], args.machine, times
-    )
+    asked = {name: table.attrs["units"].get(name, "") for name in (*args.parameter, *args.observable)}
+    _draw(screen, rows[-_ON_SCREEN:] if cut else rows, asked, args.machine, times)
     if cut:
         screen.note(f"the last {_ON_SCREEN} shots; --limit N shows more")
 
 
 def _draw(
-    screen: Screen, rows: list[dict[str, Any]], asked: list[str], machine: str | None, times: LocalTimes
+    screen: Screen, rows: list[dict[str, Any]], asked: dict[str, str], machine: str | None, times: LocalTimes
 ) -> None:
     """Draw a line a shot."""
     moments = [times.local(row["started"], machine) for row in rows]
@@ -102,21 +102,32 @@ def _draw(
         Column(heading(moments, "started"), plain_name="started"),
         Column("sequence", spare=2),
         Column("scan", spare=1),
-        *(Column(name, right=True) for name in asked),
+        *(
+            Column(f"{name} ({unit})" if unit else name, right=True, plain_name=name)
+            for name, unit in asked.items()
+        ),
     ]
     lines: list[Row] = [
         [
             str(row["uid"]),
             Cell(f"{when}:{at:%S}", at.isoformat(timespec="milliseconds")),
             setting(row["sequence"]),
-            setting(row["scan"]),
-            *(setting(row[name]) for name in asked),
+            row["scan"] if isinstance(row["scan"], str) else "-",
+            *(_cell(row, name) for name in asked),
         ]
         for row, when, at in zip(rows, compact(moments), moments, strict=True)
     ]
     screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
     if lines:
         screen.note(times.note([machine]))
+
+
+def _cell(row: dict[str, Any], name: str) -> str:
+    """Return a setting or a reading; where its stderr was read too, in concise notation."""
+    stderr = row.get(f"{name}_stderr")
+    if isinstance(stderr, float) and stderr > 0 and isinstance(row[name], float):
+        return concise(row[name], stderr)
+    return setting(row[name])
 
 
 def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
@@ -131,37 +142,35 @@ def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
             ("started", times.full(shot.started, shot.machine)),
             ("machine", shot.machine),
             ("sequence", shot.sequence),
-            ("scan", setting(shot.scan)),
+            ("scan", shot.scan or "none"),
+            ("reference", "yes" if shot.reference else ""),
             ("set aside", shot.set_aside or "no"),
-            ("note", shot.note or ""),
-            ("from", f"{shot.source}:{shot.line}" if shot.line else str(shot.source or "")),
-            ("frames", ", ".join(str(frame) for frame in shot.frames)),
+            *(("note", note) for note in shot.notes),
+            ("taken from", f"{shot.source}:{shot.line}" if shot.source else ""),
+            *((f"frame {camera}", f"{role}: {path}") for camera, role, path in shot.frames),
         )
         if value
     )
     screen.table(
-        [Column("observable"), Column("value", right=True), Column("unit"), Column("state", spare=1)],
-        [
-            [name, _reading(value, stderr, state), unit or "", state or ""]
-            for name, (value, stderr, unit, state) in shot.observables.items()
-        ],
+        [Column("observable"), Column("value", right=True), Column("unit")],
+        [[name, _reading(reading), reading.unit] for name, reading in shot.observables.items()],
         empty="no observables yet",
     )
     screen.table(
         [Column("parameter"), Column("value", right=True, wraps=True), Column("unit"), Column("swept")],
         [
-            [name, setting(value), unit or "", "swept" if swept else ""]
-            for name, (value, unit, swept) in shot.parameters.items()
+            [name, setting(part.value), part.unit, "swept" if part.swept else ""]
+            for name, part in shot.parameters.items()
         ],
         empty="no parameters",
     )
 
 
-def _reading(value: float | None, stderr: float | None, state: str | None) -> str:
+def _reading(reading: ShotReading) -> str:
     """Return a reading with its uncertainty, or the word for having none."""
-    if value is None:
-        return state or "-"
-    return concise(value, stderr) if stderr else setting(float(value))
+    if math.isnan(reading.value):
+        return reading.state or "nan"
+    return concise(reading.value, reading.stderr) if reading.stderr else setting(reading.value)
 
 
 def _entry(shot: ShotView) -> dict[str, Any]:
@@ -172,17 +181,23 @@ def _entry(shot: ShotView) -> dict[str, Any]:
         "machine": shot.machine,
         "sequence": shot.sequence,
         "scan": shot.scan,
+        "reference": shot.reference,
         "set_aside": shot.set_aside,
-        "note": shot.note,
+        "notes": shot.notes,
         "source": shot.source,
         "line": shot.line,
-        "frames": [str(frame) for frame in shot.frames],
+        "frames": [{"camera": camera, "role": role, "path": path} for camera, role, path in shot.frames],
         "parameters": {
-            name: {"value": value, "unit": unit, "swept": swept}
-            for name, (value, unit, swept) in shot.parameters.items()
+            name: {"value": part.value, "unit": part.unit or None, "swept": part.swept}
+            for name, part in shot.parameters.items()
         },
         "observables": {
-            name: {"value": value, "stderr": stderr, "unit": unit, "state": state}
-            for name, (value, stderr, unit, state) in shot.observables.items()
+            name: {
+                "value": reading.value,
+                "stderr": reading.stderr,
+                "unit": reading.unit or None,
+                "state": reading.state,
+            }
+            for name, reading in shot.observables.items()
         },
     }

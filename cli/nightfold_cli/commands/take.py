@@ -13,10 +13,9 @@ from nightfold_cli.progress import Progress
 from nightfold_cli.render import Column, Screen
 
 if TYPE_CHECKING:
-    from nightfold.ledger.intake import Intake
+    from nightfold.intake.csvcolumns import CsvColumns
+    from nightfold.ledger.outcome import Intake
     from nightfold.store import Store
-
-    from nightfold.intake.csvfile import CsvColumns
 
 HELP = "take shots from files into the store"
 EXAMPLES = (
@@ -61,7 +60,7 @@ def run(args: Namespace) -> int:
     """Take all files; one that cannot be read does not keep the others out."""
     screen = Screen.here(args.json)
     total = _Total()
-    with opened(args, screen, create=args.new and _absent(args.store)) as store:
+    with opened(args, screen, create=args.new) as store:
         if args.card:
             store.use_card(args.card)
         for name in args.files:
@@ -157,11 +156,6 @@ def _list_refused(screen: Screen, total: _Total) -> None:
         screen.say(f"refused {place}: {item['reason']}")
     kept = sum(total.counts().values())
     screen.say(f"{len(total.refused)} refused, {kept} kept; mend the refused ones and take the file again")
-
-
-def _absent(where: str) -> bool:
-    """Return whether a store's file is not there yet."""
-    return "://" not in where and not Path(where).exists()
 
 
 def _names(text: str | None) -> tuple[str, ...] | Literal["rest"] | None:
