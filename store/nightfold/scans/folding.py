@@ -41,6 +41,7 @@ TOLL = 8.0
 
 FEWEST_SHOTS = 4
 FEWEST_POINTS = 3
+SAMPLE = 128
 SHORTEST_PAUSE_US = 300_000_000
 
 
@@ -112,13 +113,23 @@ def _parts(shots: Sequence[StreamShot], stretch: Stretch, first: int) -> list[St
     if not stretch.moving:
         return []
     axes = _axes(shots, stretch)
+    if not axes:
+        return []
     parts = split_at_rests(shots, trim(shots, stretch, axes, first), axes)
     return [trim(shots, part, axes, first) for part in parts] if len(parts) > 1 else parts
 
 
 def _axes(shots: Sequence[StreamShot], stretch: Stretch) -> tuple[str, ...]:
-    columns = columns_of(shots[stretch.start : stretch.stop], sorted(stretch.moving))
-    return choose_axes(columns, ())[0]
+    """Return the parameters swept in a stretch; none where far too many moved on their own."""
+    names = sorted(stretch.moving)
+    if len(names) == 1:
+        return (names[0],)
+    sample = shots[stretch.start : min(stretch.stop, stretch.start + SAMPLE)]
+    if len(names) > 2 * MOST_AXES and len(stretch) > SAMPLE:
+        axes, _ = choose_axes(columns_of(sample, names), ())
+        if len(axes) > 2 * MOST_AXES:
+            return ()
+    return choose_axes(columns_of(shots[stretch.start : stretch.stop], names), ())[0]
 
 
 def _is_scan(shots: Sequence[StreamShot], scan: Stretch, axes: Sequence[str]) -> bool:

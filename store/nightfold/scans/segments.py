@@ -50,30 +50,30 @@ def cut(changes: Sequence[Names], toll: float) -> list[tuple[int, int]]:
     doi:10.1080/01621459.2012.737745, theorem 3.1 (the pruning rule, with its constant K = 0).
     """
     prices = _Prices()
-    marks = [prices.mark(names) for names in changes]
     best = [0.0]
     origin = [0]
     active: list[tuple[int, int]] = []
-    for stop in range(1, len(changes) + 1):
-        mark = marks[stop - 1]
-        active = [(start, seen | mark) for start, seen in active]
+    for stop, names in enumerate(changes, start=1):
+        if mark := prices.mark(names):
+            active = [(start, seen | mark) for start, seen in active]
         active.append((stop - 1, 0))
-        costs = [best[start] + (stop - start) * prices.moving(seen) for start, seen in active]
+        costs = [best[start] + (stop - start) * prices[seen] for start, seen in active]
         least = min(costs)
-        latest = max(k for k, cost in enumerate(costs) if cost == least)
         best.append(least + toll)
+        latest = len(costs) - 1 - costs[::-1].index(least)
         origin.append(active[latest][0])
-        active = [each for each, cost in zip(active, costs, strict=True) if cost < least + toll]
+        if max(costs) >= least + toll:
+            active = [each for each, cost in zip(active, costs, strict=True) if cost < least + toll]
     return _walk_back(origin)
 
 
-class _Prices:
+class _Prices(dict[int, int]):
     """How many settings move, for any collection of sets of changed names, held as bits of an integer."""
 
     def __init__(self) -> None:
+        super().__init__({0: 0})
         self._marks: dict[Names, int] = {}
         self._met: list[Names] = []
-        self._known: dict[int, int] = {0: 0}
 
     def mark(self, names: Names) -> int:
         """Return the bit of one set of names; 0 for the empty one."""
@@ -85,11 +85,9 @@ class _Prices:
             self._met.append(names)
         return mark
 
-    def moving(self, seen: int) -> int:
-        """Return the number of settings that moved in a collection of sets."""
-        count = self._known.get(seen)
-        if count is None:
-            count = self._known[seen] = len(group_together(self._members(seen)))
+    def __missing__(self, seen: int) -> int:
+        """Return, and remember, the number of settings that moved in a collection of sets."""
+        count = self[seen] = len(group_together(self._members(seen)))
         return count
 
     def _members(self, seen: int) -> Iterator[Names]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from math import isfinite
 
 Point = tuple[float | str, ...]
@@ -56,6 +57,7 @@ class FoundScan:
     origin: str
 
 
+@lru_cache(maxsize=1 << 16)
 def read_token(token: str | None) -> float | str:
     """Return a token as a finite number where it reads as one, else as it stands; empty for none."""
     if token is None:

@@ -73,6 +73,7 @@ def _rejoin(shots: Sequence[StreamShot], one: Stretch, other: Stretch) -> Stretc
         return whole
     lesser = one if other.moving == moving else other
     greater = other if lesser is one else one
-    if greater.moving != moving or not lesser.moving or len(lesser) >= min(CHANCE_LENGTH, len(greater)):
+    longest = min(CHANCE_LENGTH, len(greater)) if lesser.moving else 2
+    if greater.moving != moving or len(lesser) >= longest:
         return None
     return whole if len(moving) > 1 and _is_one(shots, whole) else None
