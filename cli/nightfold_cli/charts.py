@@ -20,16 +20,18 @@ _WIDEST = 100
 
 def chart_of_points(
     points: Sequence[Point],
-    axis: Axis,
-    observable: str,
-    unit: str,
+    x: Label,
+    y: Label,
     width: int,
     height: int,
     unicode: bool,
     curve: tuple[Sequence[float], Sequence[float]] | None = None,
 ) -> Chart:
-    """Return a chart of means with bars of one stderr, and a curve if there is one."""
-    readings = [point.readings[observable] for point in points]
+    """Return a chart of means with bars of one stderr, and a curve if there is one.
+
+    The names of `y` and of the reading that is drawn are the same.
+    """
+    readings = [point.readings[y.name] for point in points]
     data = Points(
         [float(point.at[0]) for point in points],
         [reading.mean for reading in readings],
@@ -37,8 +39,8 @@ def chart_of_points(
     )
     return Chart(
         data,
-        Label(axis.parameter, axis.unit or ""),
-        Label(observable, unit),
+        x,
+        y,
         width=min(width, _WIDEST) - 1,
         height=height,
         curve=curve,

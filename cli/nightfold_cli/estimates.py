@@ -10,12 +10,16 @@ from nightfold_cli.concise import asymmetric, interval, plain
 from nightfold_cli.render import Cell, Row
 
 if TYPE_CHECKING:
-    from nightfold.fits.result import Estimate, FitWarning
+    from nightfold.fits.estimate import Estimate
+    from nightfold.fits.kept import KeptEstimate
+    from nightfold.fits.result import FitWarning
+
+    AnyEstimate = Estimate | KeptEstimate
 
 LEVEL_68, LEVEL_95 = 0.6827, 0.95
 
 
-def value_text(estimate: Estimate, *, fixed: bool = False) -> str:
+def value_text(estimate: AnyEstimate, *, fixed: bool = False) -> str:
     """Return an estimate in concise notation, with its 68 % interval where that is lopsided."""
     if fixed:
         return f"{plain(estimate.value)} fixed"
@@ -24,7 +28,7 @@ def value_text(estimate: Estimate, *, fixed: bool = False) -> str:
     return asymmetric(estimate.value, estimate.stderr, *estimate.interval(LEVEL_68))
 
 
-def interval_text(estimate: Estimate) -> str:
+def interval_text(estimate: AnyEstimate) -> str:
     """Return the 95 % interval, to the same place as the value."""
     low, high = estimate.interval(LEVEL_95)
     return interval(low, high, estimate.value, estimate.stderr)
@@ -43,7 +47,7 @@ def rows(estimates: Mapping[str, Estimate], fixed: Collection[str]) -> list[Row]
     ]
 
 
-def entry(estimate: Estimate) -> dict[str, Any]:
+def entry(estimate: AnyEstimate) -> dict[str, Any]:
     """Return an estimate for JSON."""
     return {
         "value": estimate.value,

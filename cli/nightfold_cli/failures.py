@@ -36,8 +36,9 @@ def explain(error: Exception) -> tuple[str, int]:
         return _system(error), NOT_FOUND
     if isinstance(error, OSError):
         return _system(error), REFUSED
+    first = str(error).partition("\n")[0]
     return (
-        f"this is a fault of nightfold itself ({type(error).__name__}: {error}); "
+        f"this is a fault of nightfold itself ({type(error).__name__}: {first}); "
         "the same command with --debug shows where",
         BROKEN,
     )

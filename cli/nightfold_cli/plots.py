@@ -111,7 +111,7 @@ class Chart:
         if self.curve is not None:
             _draw_curve(canvas, frame, *self.curve)
         _draw_points(canvas, frame, self.points, self.glyphs)
-        across = ticks_between(frame.low_x, frame.high_x, max(2, canvas.width // 12))
+        across = ticks_between(frame.low_x, frame.high_x, max(2, canvas.width // 10))
         up = ticks_between(frame.low_y, frame.high_y, max(2, canvas.height // 2))
         rows = {
             frame.cell(canvas, frame.low_x, at)[1]: name

@@ -7,8 +7,6 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from nightfold.scans.axes import encode
-
 if TYPE_CHECKING:
     import pandas as pd
 Setting = float | str | bool
@@ -65,6 +63,8 @@ def points_of(table: pd.DataFrame, axes: Sequence[str], observables: Sequence[st
     axes, observables : sequence of str
         Columns to group by, columns to average.
     """
+    from nightfold.scans.axes import encode
+
     columns = [encode(table[axis].tolist()) for axis in axes]
     groups: dict[tuple[int, ...], list[int]] = {}
     for row in range(len(table)):

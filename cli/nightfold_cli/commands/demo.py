@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from nightfold_cli.commands.fit import Slice, parts_of
 from nightfold_cli.concise import concise, interval, plain
 from nightfold_cli.estimates import LEVEL_95
 from nightfold_cli.failures import UsageError
@@ -20,7 +21,9 @@ from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
-    from nightfold.fits.result import Estimate, FitResult
+    from nightfold.fits.estimate import Estimate
+    from nightfold.fits.many import FitTable
+    from nightfold.fits.result import FitResult
     from nightfold.ledger.outcome import Intake
     from nightfold.scans.scan import Scan
     from nightfold.simulator import Campaign, TrueEdit, Truth
@@ -156,9 +159,13 @@ def _found(store: Store, truth: Truth, scan: Scan | None) -> Found:
     return Found(truth, scan.key, result.estimates[truth.parameter], result.trusted)
 
 
-def _slice(outcome: Any, truth: Truth) -> FitResult:
-    """Return the fit of the slice a truth speaks of."""
-    raise NotImplementedError(outcome, truth)
+def _slice(outcome: FitResult | FitTable, truth: Truth) -> FitResult:
+    """Return the fit of the slice a truth speaks of: the one nearest to where it is stated."""
+
+    def distance(part: Slice) -> float:
+        return sum(abs(float(part.where[name]) - value) for name, value in truth.where.items())
+
+    return min(parts_of(outcome), key=distance).result
 
 
 def _show_counts(screen: Screen, store: Store, campaign: Campaign, intake: Intake) -> None:

@@ -13,14 +13,15 @@ from nightfold_cli.arguments import add_scan_key, named_number
 from nightfold_cli.charts import chart_of_points
 from nightfold_cli.failures import UsageError
 from nightfold_cli.opening import opened
+from nightfold_cli.plots import Label
 from nightfold_cli.points import points_of
 from nightfold_cli.progress import Progress
 from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
+    from nightfold.fits.many import FitTable
     from nightfold.fits.result import FitResult
-    from nightfold.scans.axes import Axis
     from nightfold.scans.scan import Scan
     from nightfold.store import Store
 
@@ -65,11 +66,17 @@ def run(args: Namespace) -> int:
         observable = _observable(scan, args.observable)
         fits = [(model, _fit(store, scan, model, observable, args)) for model in args.models]
         if screen.json:
-            entries = [_entry(scan, model, observable, part, args) for model, parts in fits for part in parts]
+            along = args.along or scan.axes[0].parameter
+            aside = _aside(scan, along)
+            entries = [
+                _entry(scan, observable, part, along, aside[place])
+                for _, parts in fits
+                for place, part in enumerate(parts)
+            ]
             screen.answer({"fits": entries})
             return 0
         for model, parts in fits:
-            if args.along and len(scan.axes) > 1:
+            if len(scan.axes) > 1:
                 _show_slices(screen, scan, model, observable, parts, args)
             else:
                 _show(screen, scan, model, observable, parts[0].result, args)
@@ -78,11 +85,10 @@ def run(args: Namespace) -> int:
 
 def _observable(scan: Scan, asked: str | None) -> str:
     """Return the observable to fit."""
-    if asked:
-        return asked
-    if scan.main_observable is None:
-        raise UsageError(f"scan {scan.key}: name what to fit, -o {' or '.join(scan.observables) or 'NAME'}")
-    return scan.main_observable
+    chosen = asked or scan.main_observable
+    if chosen is None:
+        raise UsageError(f"scan {scan.key}: it has no observable yet, so there is nothing to fit")
+    return chosen
 
 
 def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace) -> list[Slice]:
@@ -100,24 +106,33 @@ def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace)
             robust=not args.plain,
             keep=not args.no_keep,
         )
-    raise NotImplementedError(outcome)
+    return parts_of(outcome)
 
 
-def _title(scan: Scan, model: str, observable: str, along: str, args: Namespace) -> tuple[str, str]:
+def parts_of(outcome: FitResult | FitTable) -> list[Slice]:
+    """Return the fits of an outcome, one a slice."""
+    from nightfold.fits.many import FitTable
+
+    if isinstance(outcome, FitTable):
+        return [Slice(dict(where), outcome.result(row)) for row, where in enumerate(outcome.slices)]
+    return [Slice({}, outcome)]
+
+
+def _title(scan: Scan, model: str, observable: str, along: str, background: str) -> tuple[str, str]:
     """Return what was fitted to what."""
-    background = f", {args.background} background" if args.background else ""
-    return f"{model} through {observable} of {scan.key}", f"along {along}{background}"
+    under = "no background" if background == "none" else f"{background} background"
+    return f"{scan.key}  {model}", f"{observable} along {along}, {under}"
 
 
 def _show(
     screen: Screen, scan: Scan, model: str, observable: str, result: FitResult, args: Namespace
 ) -> None:
     """Show one fit: chart and residuals first, so that the numbers end up where the eye is."""
-    axis = next(axis for axis in scan.axes if not args.along or axis.parameter == args.along)
+    along = args.along or scan.axes[0].parameter
     if screen.terminal:
-        screen.heading(*_title(scan, model, observable, axis.parameter, args))
-        _draw(screen, scan, axis, observable, result)
-        screen.heading("estimates", _counts(scan))
+        screen.heading(*_title(scan, model, observable, along, result.background))
+        _draw(screen, scan, along, observable, result)
+        screen.heading("estimates", _counts(scan, result))
     columns = [
         Column("estimate"),
         Column("value", right=True),
@@ -128,27 +143,30 @@ def _show(
     _verdict(screen, result)
 
 
-def _draw(screen: Screen, scan: Scan, axis: Axis, observable: str, result: FitResult) -> None:
+def _draw(screen: Screen, scan: Scan, along: str, observable: str, result: FitResult) -> None:
     """Draw data, curve and residuals."""
-    points = points_of(scan.table(), [axis.parameter], [observable])
-    if axis.low is None or axis.high is None or not points:
+    points = points_of(scan.table(), [along], [observable])
+    if not points or not all(isinstance(point.at[0], int | float) for point in points):
         return
-    margin = (axis.high - axis.low) * 0.03
-    step = (axis.high - axis.low + 2 * margin) / _DENSE
-    dense = [axis.low - margin + step * index for index in range(_DENSE + 1)]
+    low, high = float(points[0].at[0]), float(points[-1].at[0])
+    margin = (high - low) * 0.03
+    step = (high - low + 2 * margin) / _DENSE
+    dense = [low - margin + step * index for index in range(_DENSE + 1)]
     curve = (dense, [float(value) for value in result.predict(dense)])
-    unit = scan.units.get(observable, "") or ""
-    chart = chart_of_points(points, axis, observable, unit, screen.width, _HEIGHT, screen.unicode, curve)
+    x, y = (Label(name, scan.units.get(name) or "") for name in (along, observable))
+    chart = chart_of_points(points, x, y, screen.width, _HEIGHT, screen.unicode, curve)
     screen.chart(chart.lines())
     fitted = [float(value) for value in result.predict([float(point.at[0]) for point in points])]
     residuals = [point.readings[observable].mean - value for point, value in zip(points, fitted, strict=True)]
     screen.chart(chart.residuals(residuals, "residuals, in units of their rms"))
+    screen.note(chart.legend)
 
 
-def _counts(scan: Scan) -> str:
+def _counts(scan: Scan, result: FitResult) -> str:
     """Return how many shots were used."""
-    aside = f", {scan.set_aside} set aside left out" if scan.set_aside else ""
-    return f"from {scan.shots} shots{aside}"
+    aside = f", {scan.set_aside} set aside" if scan.set_aside else ""
+    missing = scan.shots - result.n
+    return f"from {result.n} shots{aside}" + (f", {missing} without a value" if missing else "")
 
 
 def _verdict(screen: Screen, result: FitResult) -> None:
@@ -169,15 +187,17 @@ def _verdict(screen: Screen, result: FitResult) -> None:
         for warning in minor:
             screen.item(warning.code, warning.message)
     if not result.warnings:
-        screen.note("no warnings")
+        screen.gap()
+        screen.text("No warnings; the residuals have a say too.")
 
 
 def _show_slices(
     screen: Screen, scan: Scan, model: str, observable: str, parts: Sequence[Slice], args: Namespace
 ) -> None:
     """Show a line a slice."""
-    screen.heading(*_title(scan, model, observable, args.along, args))
-    others = [axis for axis in scan.axes if axis.parameter != args.along]
+    background = parts[0].result.background if parts else "none"
+    screen.heading(*_title(scan, model, observable, args.along, background))
+    others = [axis for axis in scan.axes if parts and axis.parameter in parts[0].where]
     names = list(parts[0].result.estimates) if parts else []
     units = {name: parts[0].result.estimates[name].unit for name in names}
     columns = [
@@ -222,18 +242,27 @@ def _named(name: str, unit: str | None) -> str:
     return f"{name} ({unit})" if unit else name
 
 
-def _entry(scan: Scan, model: str, observable: str, part: Slice, args: Namespace) -> dict[str, Any]:
+def _aside(scan: Scan, along: str) -> list[int]:
+    """Return how many shots of each slice are set aside."""
+    from nightfold.fits.scanfit import slice_rows
+
+    table = scan.table(set_aside=True)
+    return [int(table["set_aside"].to_numpy()[rows].sum()) for _, rows in slice_rows(scan, table, along)]
+
+
+def _entry(scan: Scan, observable: str, part: Slice, along: str, aside: int) -> dict[str, Any]:
     """Return one fit for JSON."""
     result = part.result
     return {
         "scan": scan.key,
-        "model": model,
+        "model": result.model,
+        "background": result.background,
         "observable": observable,
-        "along": args.along or (scan.axes[0].parameter if scan.axes else None),
+        "along": along,
         "slice": part.where,
         "estimates": {name: estimates.entry(estimate) for name, estimate in result.estimates.items()},
         "trusted": result.trusted,
         "warnings": [estimates.warning_entry(warning) for warning in result.warnings],
-        "shots": scan.shots,
-        "set_aside": scan.set_aside,
+        "shots": result.n,
+        "set_aside": aside,
     }

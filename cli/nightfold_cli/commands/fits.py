@@ -5,11 +5,13 @@ from __future__ import annotations
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
+from nightfold_cli import estimates
 from nightfold_cli.arguments import positive, scan_key
-from nightfold_cli.concise import concise, short
+from nightfold_cli.concise import short
+from nightfold_cli.estimates import value_text
 from nightfold_cli.localtimes import compact, heading
 from nightfold_cli.opening import local_times, opened
-from nightfold_cli.render import Cell, Column, Screen
+from nightfold_cli.render import Cell, Column, Row, Screen
 
 if TYPE_CHECKING:
     from nightfold.fits.kept import KeptFit
@@ -47,7 +49,7 @@ def run(args: Namespace) -> int:
         Column(heading(moments, "kept"), spare=1, plain_name="kept"),
         Column("shots", right=True, spare=3),
     ]
-    rows = [
+    rows: list[Row] = [
         [
             fit.scan_key + _slice(fit),
             fit.model,
@@ -70,7 +72,7 @@ def run(args: Namespace) -> int:
 def _estimates(fit: KeptFit) -> Cell:
     """Return the estimates, one a line on a screen."""
     texts = [
-        f"{name} {concise(estimate.value, estimate.stderr)} {estimate.unit or ''}".rstrip()
+        f"{name} {value_text(estimate, fixed=estimate.fixed)} {estimate.unit}".rstrip()
         for name, estimate in fit.estimates.items()
     ]
     return Cell("\n".join(texts), "; ".join(texts))
@@ -109,16 +111,12 @@ def _entry(fit: KeptFit) -> dict[str, Any]:
         "observable": fit.observable,
         "along": fit.along,
         "slice": fit.slice or {},
-        "estimates": {
-            name: {"value": estimate.value, "stderr": estimate.stderr, "unit": estimate.unit}
-            for name, estimate in fit.estimates.items()
-        },
+        "estimates": {name: estimates.entry(estimate) for name, estimate in fit.estimates.items()},
         "trusted": fit.trusted,
-        "warnings": [
-            {"code": warning.code, "message": warning.message, "advisory": warning.advisory}
-            for warning in fit.warnings
-        ],
+        "warnings": [estimates.warning_entry(warning) for warning in fit.warnings],
         "shots": fit.shots,
+        "set_aside": fit.set_aside,
+        "settings": fit.settings,
         "stale": fit.stale,
         "version": fit.version,
     }

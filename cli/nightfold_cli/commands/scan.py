@@ -13,6 +13,7 @@ from nightfold_cli.concise import Scale, scale_of, short
 from nightfold_cli.failures import UsageError
 from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.opening import local_times, opened
+from nightfold_cli.plots import Label
 from nightfold_cli.points import Point, Reading, Setting, points_of
 from nightfold_cli.render import Cell, Column, Row, Screen
 from nightfold_cli.scantext import axis_line, entry, repeats_text, status
@@ -172,7 +173,8 @@ def _draw(screen: Screen, scan: Scan, points: Sequence[Point], observable: str, 
     numeric = [axis for axis in scan.axes if axis.low is not None]
     if len(scan.axes) == 1 and numeric:
         screen.gap()
-        chart = chart_of_points(points, numeric[0], observable, unit, screen.width, _HEIGHT, screen.unicode)
+        x = Label(numeric[0].parameter, numeric[0].unit)
+        chart = chart_of_points(points, x, Label(observable, unit), screen.width, _HEIGHT, screen.unicode)
         screen.chart(chart.lines())
         screen.note(chart.legend)
         screen.note(f"next: nightfold fit {scan.key} MODEL -o {observable}")
