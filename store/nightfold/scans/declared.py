@@ -5,7 +5,8 @@ from __future__ import annotations
 from bisect import bisect_left
 from collections.abc import Mapping, Sequence
 
-from nightfold.scans.axes import encode, follows
+from nightfold.scans.axes import follows
+from nightfold.scans.columns import encode
 from nightfold.scans.segments import Names
 from nightfold.scans.stream import StreamShot, columns_of
 

@@ -7,6 +7,9 @@ from dataclasses import dataclass
 from functools import lru_cache
 from math import isfinite
 
+NUMBER = "u:"
+"""What the tokens of numbers begin with."""
+
 Point = tuple[float | str, ...]
 
 
@@ -23,8 +26,8 @@ class StreamShot:
     swept : frozenset of str
         Parameters declared as swept; may be empty.
     values : mapping of str to str
-        Parameter -> token; equal tokens mean equal settings. A token that reads as a number is also used as
-        one (is this point on the grid of that scan?), so numbers are best written as ``repr`` writes them.
+        Parameter -> token; equal tokens mean equal settings. Tokens of numbers are ``u:`` and their ``repr``, as
+        `nightfold.settings` writes them; they are also used as numbers (is this point on the grid of that scan?).
     changed : frozenset of str
         Names whose token differs from the shot before in the list, names that appeared or vanished included;
         empty for the first shot.
@@ -59,11 +62,13 @@ class FoundScan:
 
 @lru_cache(maxsize=1 << 16)
 def read_token(token: str | None) -> float | str:
-    """Return a token as a finite number where it reads as one, else as it stands; empty for none."""
+    """Return a token as a number where it is one and finite, else as it stands; empty for none."""
     if token is None:
         return ""
+    if not token.startswith(NUMBER):
+        return token
     try:
-        number = float(token)
+        number = float(token.removeprefix(NUMBER))
     except ValueError:
         return token
     return number if isfinite(number) else token

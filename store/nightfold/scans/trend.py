@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from nightfold.scans.axes import encode
+from nightfold.scans.columns import encode
 
 HEIGHTS = "▁▂▃▄▅▆▇█"
 
