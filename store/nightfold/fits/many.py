@@ -103,11 +103,14 @@ class FitTable:
         As handed in.
     outcome : Outcome
         The arrays behind the properties.
+    slices : tuple of dict
+        Of fits along one axis of a scan: the values of the other axes, one dict a row. Empty otherwise.
     """
 
     x: Floats
     Y: Floats
     outcome: Outcome
+    slices: tuple[dict[str, Any], ...] = ()
 
     def __len__(self) -> int:
         return len(self.Y)
@@ -180,7 +183,8 @@ class FitTable:
     @cached_property
     def warnings(self) -> list[tuple[FitWarning, ...]]:
         """The warnings of each fit, B tuples."""
-        return [self._judge(row) for row in range(len(self))]
+        with np.errstate(all="ignore"):
+            return [self._judge(row) for row in range(len(self))]
 
     @cached_property
     def trusted(self) -> Bools:

@@ -13,6 +13,7 @@ from nightfold.fits.engine.reduction import Reduction
 from nightfold.fits.models.shape import Window
 
 MOST_STARTS = 4
+MOST_LOOKS = 10
 RIVAL_SHARE = 0.35
 """A start is followed unless it explains this share less than the best one: the grid is so fine that no
 minimum can gain more than that on its nearest grid point."""
@@ -58,7 +59,7 @@ class Grid:
 
 def sum_of_squares(z: AnyArray, templates: AnyArray) -> AnyArray:
     """Return the squared projections of z (B, d) on templates (K, G, d), summed over K: (B, G)."""
-    total = z @ templates[0].T
+    total: AnyArray = z @ templates[0].T
     total *= total
     for template in templates[1:]:
         more = z @ template.T
@@ -119,7 +120,7 @@ def general_sse(
 
 
 def choose_starts(layout: Layout, theta: Floats, sse: Floats, reference: Floats) -> tuple[Ints, Ints]:
-    """Return which starts to follow.
+    """Return which starts to follow: the best, and distant local minima on the grid that may beat it.
 
     Parameters
     ----------
@@ -138,15 +139,19 @@ def choose_starts(layout: Layout, theta: Floats, sse: Floats, reference: Floats)
     limit = sse[rows, points]
     limit = limit + RIVAL_SHARE * np.maximum(reference - limit, 0.0)
     possible = sse <= limit[:, None]
-    chosen = [(rows, points)]
-    while len(chosen) < MOST_STARTS:
-        possible &= ~_near_each(layout, theta, points)
-        some = possible.any(axis=1)
+    chosen, taken = [(rows, points)], np.ones(len(sse), dtype=np.intp)
+    near = _near_each(layout, theta, points)
+    for _ in range(MOST_LOOKS):
+        possible &= ~near
+        some = possible.any(axis=1) & (taken < MOST_STARTS)
         if not some.any():
             break
-        rows, sse, possible = rows[some], sse[some], possible[some]
+        rows, sse, possible, taken = rows[some], sse[some], possible[some], taken[some]
         points = np.argmin(np.where(possible, sse, np.inf), axis=1)
-        chosen.append((rows, points))
+        near = _near_each(layout, theta, points)
+        top = np.where(near, sse, np.inf).min(axis=1) >= sse[np.arange(len(sse)), points]
+        chosen.append((rows[top], points[top]))
+        taken = taken + top
     sets = np.concatenate([pair[0] for pair in chosen])
     order = np.argsort(sets, kind="stable")
     return sets[order], np.concatenate([pair[1] for pair in chosen])[order]

@@ -9,7 +9,7 @@ import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
 from nightfold.fits.engine.frame import Frame
-from nightfold.fits.models.shape import Background, LineShape, Parameter
+from nightfold.fits.models.shape import UNITY, Background, LineShape, Parameter
 
 BACKGROUND_PARAMETERS: dict[Background, tuple[Parameter, ...]] = {
     "none": (),
@@ -61,7 +61,7 @@ class Layout:
     @cached_property
     def free_columns(self) -> Bools:
         """(L,) bool: which coefficients are fitted."""
-        return np.array([name not in self.fixed for name in self.column_names], dtype=bool)
+        return np.array([n not in self.fixed and n != UNITY for n in self.column_names], dtype=bool)
 
     @cached_property
     def all_theta_free(self) -> bool:
@@ -152,6 +152,8 @@ class Layout:
         """Return (B, L): coefficients of the fixed columns, zero elsewhere."""
         c = np.zeros((len(frame.xs), len(self.column_names)))
         for j, name in enumerate(self.column_names):
+            if name == UNITY:
+                c[:, j] = 1.0 / frame.ys
             if name is None or name not in values:
                 continue
             value = values[name]

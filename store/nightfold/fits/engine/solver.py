@@ -17,7 +17,7 @@ from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.layout import Layout
 
 MAX_STEPS = 80
-STEP_TOLERANCE = 1e-13
+STEP_TOLERANCE = 1e-12
 """A step is the last one when the fall of the sum of squares it promises is this share of it."""
 EXACT = 1e-28
 """Residuals this small, relative to the data squared, are rounding."""
@@ -70,6 +70,16 @@ class Solution:
     sse: Floats
     converged: Bools
     bound: Bools
+
+    def replace(self, rows: Bools, other: Solution) -> Solution:
+        """Return this solution with some rows of another."""
+        wide = rows[:, None]
+        return Solution(
+            np.where(wide, other.theta, self.theta),
+            np.where(rows, other.sse, self.sse),
+            np.where(rows, other.converged, self.converged),
+            np.where(wide, other.bound, self.bound),
+        )
 
     def take(self, rows: Ints) -> Solution:
         """Return some rows."""

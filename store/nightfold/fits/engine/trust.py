@@ -58,7 +58,7 @@ class Facts:
 
 
 def judge(facts: Facts) -> tuple[FitWarning, ...]:
-    """Return every warning that applies, the gravest first."""
+    """Return every warning that applies, the gravest first, one for each code."""
     found = [
         _feature(facts),
         _converged(facts),
@@ -67,17 +67,19 @@ def judge(facts: Facts) -> tuple[FitWarning, ...]:
         _spare(facts),
         _known(facts),
     ]
-    codes: set[tuple[str, str]] = set()
-    kept = []
+    messages: dict[str, list[str]] = {}
     for warning in found:
-        if warning is not None and (warning.code, warning.message) not in codes:
-            codes.add((warning.code, warning.message))
-            kept.append(warning)
-    return tuple(kept)
+        if warning is not None:
+            messages.setdefault(warning.code, []).append(warning.message)
+    return tuple(FitWarning(code, "; also, ".join(dict.fromkeys(texts))) for code, texts in messages.items())
 
 
 def _with_unit(value: float, unit: str) -> str:
     return f"{value:.4g} {unit}".rstrip()
+
+
+def _figure(value: float, unit: str) -> str:
+    return f"{value:.6g} {unit}".rstrip()
 
 
 def _per_unit(value: float, unit: str) -> str:
@@ -120,15 +122,21 @@ def _role_warning(facts: Facts, name: str) -> FitWarning | None:
 
 
 def _outside(facts: Facts, name: str) -> FitWarning | None:
-    value = facts.value[name]
-    if facts.low <= value <= facts.high:
+    """Return a warning when the position lies outside the scan, or within its stderr of the edge."""
+    value, stderr = facts.value[name], min(facts.stderr[name], facts.high - facts.low)
+    if facts.low + stderr <= value <= facts.high - stderr:
         return None
-    side, edge = ("below", facts.low) if value < facts.low else ("above", facts.high)
+    upper = value > (facts.low + facts.high) / 2
+    side, edge = ("above", facts.high) if upper else ("below", facts.low)
+    inside = facts.low <= value <= facts.high
+    if inside and facts.stderr[name] > (facts.high - facts.low) / 4:
+        return None
+    where = "cannot be told from the edge of" if inside else "lies outside"
     return FitWarning(
         "center-outside",
-        f"the {name}, {_with_unit(value, facts.unit_x)}, lies outside the scan"
-        f" ({facts.low:.6g} to {_with_unit(facts.high, facts.unit_x)});"
-        f" extend the scan {side} {_with_unit(edge, facts.unit_x)}",
+        f"the {name}, {_figure(value, facts.unit_x)}, {where} the scan"
+        f" ({facts.low:.6g} to {_figure(facts.high, facts.unit_x)});"
+        f" extend the scan {side} {_figure(edge, facts.unit_x)}",
     )
 
 
@@ -147,12 +155,12 @@ def _position(facts: Facts, name: str) -> FitWarning | None:
 def _periods(facts: Facts, name: str) -> FitWarning | None:
     window = facts.high - facts.low
     periods = facts.value[name] * window
-    if periods >= LEAST_PERIODS:
+    if periods - min(facts.stderr[name] * window, FREQUENCY_SPREAD) >= LEAST_PERIODS:
         return None
-    wanted = facts.low + 1.0 / facts.value[name] if facts.value[name] > 0 else inf
+    wanted = facts.low + 2.0 / facts.value[name] if facts.value[name] > 0 else inf
     return FitWarning(
         "under-one-period",
-        f"the scan covers only {periods:.2g} of a period; extend it to"
+        f"the scan covers only {periods:.2g} periods, too few to tell them from a drift; extend it to"
         f" {_with_unit(wanted, facts.unit_x)} or beyond",
     )
 

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import ClassVar
-
 import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
@@ -31,15 +29,15 @@ class DampedOscillation(LineShape):
     point; A and phi at x = 0 follow. No damping (g = 0, an infinite decay time) is a value like any other.
     """
 
-    name: ClassVar[str] = "damped-oscillation"
-    formula: ClassVar[str] = "amplitude exp(-x / decay_time) cos(2 pi frequency x + phase)"
-    source: ClassVar[str] = (
+    name: str = "damped-oscillation"
+    formula: str = "amplitude exp(-x / decay_time) cos(2 pi frequency x + phase)"
+    source: str = (
         "solution of z'' + 2 z'/T + (2 pi f0)^2 z = 0, f0^2 = frequency^2 + 1/(2 pi T)^2;"
         " Landau and Lifshitz, Mechanics (1976), section 25"
     )
-    kind: ClassVar[Kind] = "time"
-    default_background: ClassVar[Background] = "flat"
-    parameters: ClassVar[tuple[Parameter, ...]] = (
+    kind: Kind = "time"
+    default_background: Background = "flat"
+    parameters: tuple[Parameter, ...] = (
         Parameter("amplitude", "amplitude at x = 0, positive", "y"),
         Parameter("frequency", "frequency of the damped oscillation", "1/x"),
         Parameter("decay_time", "1/e time of the amplitude; infinite without damping", "x"),

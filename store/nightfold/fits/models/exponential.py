@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import ClassVar
-
 import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
@@ -29,12 +27,12 @@ class Exponential(LineShape):
     at zero; the amplitude reported is the one at x = 0.
     """
 
-    name: ClassVar[str] = "exponential"
-    formula: ClassVar[str] = "amplitude exp(-x / lifetime)"
-    source: ClassVar[str] = "E. Rutherford and F. Soddy (1902); one-body loss dN/dt = -N / lifetime"
-    kind: ClassVar[Kind] = "time"
-    default_background: ClassVar[Background] = "none"
-    parameters: ClassVar[tuple[Parameter, ...]] = (
+    name: str = "exponential"
+    formula: str = "amplitude exp(-x / lifetime)"
+    source: str = "E. Rutherford and F. Soddy (1902); one-body loss dN/dt = -N / lifetime"
+    kind: Kind = "time"
+    default_background: Background = "none"
+    parameters: tuple[Parameter, ...] = (
         Parameter("amplitude", "value at x = 0, above the background", "y"),
         Parameter("lifetime", "1/e time", "x"),
     )

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from typing import ClassVar
 
 import numpy as np
 
@@ -29,12 +28,12 @@ FOUR_LN2 = 4.0 * math.log(2.0)
 class Gaussian(LineShape):
     """``A exp(-4 ln 2 ((x - c) / w)^2)``."""
 
-    name: ClassVar[str] = "gaussian"
-    formula: ClassVar[str] = "amplitude exp(-4 ln 2 ((x - center) / fwhm)^2)"
-    source: ClassVar[str] = "C. F. Gauss (1809); Demtröder, Laser Spectroscopy 1 (2014), section 3.2"
-    kind: ClassVar[Kind] = "resonance"
-    default_background: ClassVar[Background] = "flat"
-    parameters: ClassVar[tuple[Parameter, ...]] = (
+    name: str = "gaussian"
+    formula: str = "amplitude exp(-4 ln 2 ((x - center) / fwhm)^2)"
+    source: str = "C. F. Gauss (1809); Demtröder, Laser Spectroscopy 1 (2014), section 3.2"
+    kind: Kind = "resonance"
+    default_background: Background = "flat"
+    parameters: tuple[Parameter, ...] = (
         Parameter("center", "position of the line", "x"),
         Parameter("fwhm", "full width at half maximum", "x"),
         Parameter("amplitude", "height above the background; negative for a dip", "y"),

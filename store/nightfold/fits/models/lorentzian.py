@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import ClassVar
-
 import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
@@ -26,12 +24,12 @@ from nightfold.fits.models.shape import (
 class Lorentzian(LineShape):
     """``A / (1 + (2 (x - c) / w)^2)``."""
 
-    name: ClassVar[str] = "lorentzian"
-    formula: ClassVar[str] = "amplitude / (1 + (2 (x - center) / fwhm)^2)"
-    source: ClassVar[str] = "H. A. Lorentz (1906); Demtröder, Laser Spectroscopy 1 (2014), section 3.1"
-    kind: ClassVar[Kind] = "resonance"
-    default_background: ClassVar[Background] = "flat"
-    parameters: ClassVar[tuple[Parameter, ...]] = (
+    name: str = "lorentzian"
+    formula: str = "amplitude / (1 + (2 (x - center) / fwhm)^2)"
+    source: str = "H. A. Lorentz (1906); Demtröder, Laser Spectroscopy 1 (2014), section 3.1"
+    kind: Kind = "resonance"
+    default_background: Background = "flat"
+    parameters: tuple[Parameter, ...] = (
         Parameter("center", "position of the line", "x"),
         Parameter("fwhm", "full width at half maximum", "x"),
         Parameter("amplitude", "height above the background; negative for a dip", "y"),

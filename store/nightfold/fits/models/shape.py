@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from dataclasses import dataclass
-from typing import ClassVar, Literal
+from typing import Literal
 
 import numpy as np
 
@@ -14,6 +14,8 @@ from nightfold.fits.engine.frame import Frame, Origin
 Link = Literal["linear", "log", "reciprocal"]
 Kind = Literal["resonance", "time"]
 Background = Literal["none", "flat", "sloped"]
+UNITY = "1"
+"""Name of a column whose coefficient is one (a part of the model no coefficient scales)."""
 
 
 @dataclass(frozen=True)
@@ -110,12 +112,12 @@ class LineShape(ABC):
     where a column is no reported parameter by itself).
     """
 
-    name: ClassVar[str]
-    formula: ClassVar[str]
-    source: ClassVar[str]
-    kind: ClassVar[Kind]
-    default_background: ClassVar[Background]
-    parameters: ClassVar[tuple[Parameter, ...]]
+    name: str
+    formula: str
+    source: str
+    kind: Kind
+    default_background: Background
+    parameters: tuple[Parameter, ...]
     theta: tuple[Theta, ...]
     linear: tuple[str | None, ...]
     origin: Origin
@@ -150,6 +152,11 @@ class LineShape(ABC):
     @abstractmethod
     def grid(self, window: Window) -> Floats:
         """Return the start grid, (G, P), every place a minimum could hide from its neighbours."""
+
+    def more_starts(self, window: Window) -> Floats:
+        """Return further starts, (K, P), to try when none of the grid leads to a minimum."""
+        del window
+        return np.zeros((0, len(self.theta)))
 
     @abstractmethod
     def bounds(self, window: Window) -> tuple[Floats, Floats]:
@@ -192,7 +199,7 @@ class LineShape(ABC):
             q[:, row] = offset + slope * theta[:, j]
             dq[:, row, j] = slope
         for j, name in enumerate(self.linear):
-            if name is not None:
+            if name in names:
                 row = names.index(name)
                 q[:, row] = frame.ys * c[:, j]
                 dq[:, row, size + j] = frame.ys

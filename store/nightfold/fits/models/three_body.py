@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import ClassVar
-
 import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
@@ -25,15 +23,15 @@ from nightfold.fits.models.shape import (
 class ThreeBody(LineShape):
     """``amplitude / sqrt(1 + 2 three_body_rate x)``."""
 
-    name: ClassVar[str] = "three-body"
-    formula: ClassVar[str] = "amplitude / sqrt(1 + 2 three_body_rate x)"
-    source: ClassVar[str] = (
+    name: str = "three-body"
+    formula: str = "amplitude / sqrt(1 + 2 three_body_rate x)"
+    source: str = (
         "integrated dn/dt = -L3 n^3, three_body_rate = L3 <n^2>(0); Söding et al., Appl. Phys. B 69, 257"
         " (1999)"
     )
-    kind: ClassVar[Kind] = "time"
-    default_background: ClassVar[Background] = "none"
-    parameters: ClassVar[tuple[Parameter, ...]] = (
+    kind: Kind = "time"
+    default_background: Background = "none"
+    parameters: tuple[Parameter, ...] = (
         Parameter("amplitude", "value at x = 0, above the background", "y"),
         Parameter("three_body_rate", "initial loss rate, L3 times the mean squared density at x = 0", "1/x"),
     )

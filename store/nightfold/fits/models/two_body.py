@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import ClassVar
-
 import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
@@ -25,14 +23,14 @@ from nightfold.fits.models.shape import (
 class TwoBody(LineShape):
     """``amplitude / (1 + two_body_rate x)``."""
 
-    name: ClassVar[str] = "two-body"
-    formula: ClassVar[str] = "amplitude / (1 + two_body_rate x)"
-    source: ClassVar[str] = (
+    name: str = "two-body"
+    formula: str = "amplitude / (1 + two_body_rate x)"
+    source: str = (
         "integrated dn/dt = -L2 n^2, two_body_rate = L2 <n>(0); Weiner et al., Rev. Mod. Phys. 71, 1 (1999)"
     )
-    kind: ClassVar[Kind] = "time"
-    default_background: ClassVar[Background] = "none"
-    parameters: ClassVar[tuple[Parameter, ...]] = (
+    kind: Kind = "time"
+    default_background: Background = "none"
+    parameters: tuple[Parameter, ...] = (
         Parameter("amplitude", "value at x = 0, above the background", "y"),
         Parameter("two_body_rate", "initial loss rate, L2 times the mean density at x = 0", "1/x"),
     )

@@ -1,0 +1,182 @@
+"""Data sets made ready: those with the same points left in and the same weights go together."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from nightfold.fits.engine.arrays import Bools, Floats, Ints
+from nightfold.fits.engine.data import DataSets
+from nightfold.fits.engine.feature import permutation_p
+from nightfold.fits.engine.frame import make_frame
+from nightfold.fits.engine.grid import Grid, choose_starts, general_sse, make_grid, place_starts
+from nightfold.fits.engine.reduction import Reduction, reduce_points
+from nightfold.fits.models.shape import Background, Window
+from nightfold.fits.request import Request
+
+BATCH_POINTS = 16_000
+"""Data sets are solved in batches of about this many points: larger ones leave the cache."""
+
+
+@dataclass(frozen=True)
+class Group:
+    """Data sets with the same points left in and the same weights, ready to be fitted.
+
+    ``rows`` are their places among all data sets; ``u``, ``roots`` (n,) and ``Z`` (b, n) are sorted by x.
+    """
+
+    request: Request
+    rows: Ints
+    data: DataSets
+    window: Window
+    weight_one: Floats
+
+    @cached_property
+    def reduction(self) -> Reduction:
+        """The points as the grid sees them."""
+        return reduce_points(self.data.u[0], self.roots)
+
+    @property
+    def roots(self) -> Floats:
+        """Root weights, (n,)."""
+        if self.data.root_weights is None:
+            return np.ones(self.data.u.shape[1])
+        return np.asarray(self.data.root_weights[0])
+
+    def grid(self, null: str, start: bool) -> Grid:
+        """Return the grid against a background; with or without the start values asked for."""
+        given = dict(self.request.fixed)
+        if start:
+            given.update(self.request.start)
+        layout = self.request.layout
+        one = np.arange(1)
+        theta = place_starts(layout, self.window, layout.fixed_theta(given, self.data.frame.take(one))[0])
+        return make_grid(layout, self.reduction, theta, null)
+
+    @cached_property
+    def start_grid(self) -> Grid:
+        """The grid that starts are taken from."""
+        return self.grid(self.request.layout.background, start=True)
+
+    def starts(self, more: bool = False) -> tuple[Ints, Floats]:
+        """Return data set (within the group) and theta of each start to follow.
+
+        With `more`, those a model of one's own is tried from when its given start leads nowhere.
+        """
+        layout, request = self.request.layout, self.request
+        if not layout.shape.searchable:
+            given = layout.fixed_theta(request.fixed, self.data.frame.take(np.arange(1)))[0]
+            theta = layout.shape.more_starts(self.window) if more else layout.shape.grid(self.window)
+            theta = np.where(np.isfinite(given), given, theta)
+            return np.repeat(np.arange(len(self.rows)), len(theta)), np.tile(theta, (len(self.rows), 1))
+        if not layout.shape.theta:
+            return np.arange(len(self.rows)), np.zeros((len(self.rows), 0))
+        z = self.reduction.whiten(self.data.z)
+        if layout.all_columns_free:
+            grid = self.start_grid
+            theta = grid.theta
+            beyond = z - (z @ grid.null.T) @ grid.null
+            sse = np.einsum("bd,bd->b", beyond, beyond)[:, None] - grid.gains(z)
+        else:
+            given = layout.fixed_theta({**request.fixed, **request.start}, self.data.frame.take(np.arange(1)))
+            theta = place_starts(layout, self.window, given[0])
+            shift = self.data.shift[:, 0]
+            sse = np.stack(
+                [
+                    general_sse(layout, self.reduction, theta, z[b], self.data.coefficients[b], shift[b])
+                    for b in range(len(z))
+                ]
+            )
+        level = self.reduction.roots / np.linalg.norm(self.reduction.roots)
+        reference = np.einsum("bd,bd->b", z, z) - (z @ level) ** 2
+        sets, points = choose_starts(layout, theta, sse, reference)
+        return sets, theta[points]
+
+    def feature_p(self) -> Floats:
+        """Return the p value of "nothing but background" of each data set; zero where it cannot be asked."""
+        layout = self.request.layout
+        if not layout.shape.searchable:
+            return np.zeros(len(self.rows))
+        null = "sloped" if layout.background == "sloped" else "flat"
+        same = layout.background == null and layout.all_columns_free and not self.request.start
+        grid = self.start_grid if same else self.grid(null, start=False)
+        return permutation_p(grid, self.reduction, self.data.u[0], self.roots, self.data.z, null)
+
+
+def patterns(x: Floats, Y: Floats, stderr: Floats | None) -> Iterator[tuple[Ints, Bools, Floats | None]]:
+    """Yield rows with the same points left in and the same stderr, at most a batch at a time."""
+    keep = np.isfinite(Y) & np.isfinite(x)
+    keys = keep.astype(np.float64)
+    if stderr is not None:
+        keep &= np.isfinite(stderr)
+        keys = np.where(keep, stderr, 0.0)
+    if len(Y) > 1 and not (keys == keys[0]).all():
+        members: dict[bytes, list[int]] = {}
+        for row, key in enumerate(keys):
+            members.setdefault(key.tobytes(), []).append(row)
+        sets = [np.array(rows, dtype=np.intp) for rows in members.values()]
+    else:
+        sets = [np.arange(len(Y))]
+    size = max(1, BATCH_POINTS // max(1, len(x)))
+    for rows in sets:
+        for first in range(0, len(rows), size):
+            part = rows[first : first + size]
+            kept = keep[part[0]]
+            yield part, kept, None if stderr is None else keys[part[0]][kept]
+
+
+def make_group(request: Request, rows: Ints, x: Floats, Y: Floats, errors: Floats | None) -> Group:
+    """Return data sets that share their points x, sorted and in their frames, with their start grid's window."""
+    layout, shape = request.layout, request.layout.shape
+    order = np.argsort(x, kind="stable") if errors is None else np.lexsort((errors, x))
+    x, Y = x[order], Y[:, order]
+    tied = np.diff(x) == 0
+    roots = weight_one = None
+    if errors is not None:
+        errors = errors[order]
+        weight_one = np.sqrt(len(errors) / np.sum(errors**-2.0))
+        roots = (weight_one / errors)[None]
+        tied = tied & (np.diff(errors) == 0)
+    if tied.any():
+        block = np.concatenate([[0], np.cumsum(~tied)])
+        Y = np.take_along_axis(Y, np.lexsort((Y, np.broadcast_to(block, Y.shape)), axis=-1), axis=1)
+    base = None
+    if layout.background == "none" or "offset" in layout.fixed:
+        base = np.full(len(rows), request.fixed.get("offset", 0.0))
+    frame = make_frame(x, Y, shape.origin, base)
+    u = (x - frame.x0[0]) / frame.xs[0]
+    z = (Y - frame.y0[:, None]) / frame.ys[:, None]
+    window = _window(u, layout.background)
+    low, high = shape.bounds(window)
+    wished = layout.fixed_theta(request.start, frame.take(np.arange(1)))[0]
+    low, high = np.fmin(low, wished), np.fmax(high, wished)
+    data = DataSets(
+        u[None],
+        roots,
+        z if roots is None else z * roots,
+        layout.fixed_coefficients(request.fixed, frame),
+        layout.shift(frame),
+        low[None],
+        high[None],
+        frame,
+        np.full(len(rows), len(x)),
+    )
+    scale = np.full(len(rows), np.nan if weight_one is None else weight_one) / frame.ys
+    return Group(request, rows, data, window, scale)
+
+
+def _window(u: Floats, background: Background) -> Window:
+    steps = np.diff(u)
+    steps = steps[steps > 0]
+    span = float(u[-1] - u[0])
+    return Window(
+        float(u[0]),
+        float(u[-1]),
+        span / len(steps),
+        float(max(steps.min(), span * 1e-6)),
+        len(steps) + 1,
+        background,
+    )
