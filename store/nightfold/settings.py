@@ -12,8 +12,9 @@ import math
 import numbers
 import operator
 from collections.abc import Mapping
-from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Any, Literal, NamedTuple
+
+import pydantic_core
 
 from nightfold.errors import RecordError
 from nightfold.records import clean_text, shorten
@@ -24,8 +25,7 @@ _MASK = (1 << 128) - 1
 _WANTED = "a number, text, true or false, a list of numbers, or an object with value and unit"
 
 
-@dataclass(frozen=True, slots=True)
-class Value:
+class Value(NamedTuple):
     """One setting in canonical form.
 
     Attributes
@@ -52,8 +52,7 @@ class Value:
         return plain_value(self.kind, self.num, self.exact)
 
 
-@dataclass(frozen=True, slots=True)
-class ReadValue:
+class ReadValue(NamedTuple):
     """One reading in canonical form: value, standard uncertainty, and why there is no value (``null``, ``nan`` …)."""
 
     value: float | None
@@ -79,6 +78,8 @@ def plain_value(kind: str, num: float | None, exact: str | None) -> float | int 
 
 def number_value(raw: Any) -> Value | None:
     """Return the canonical form of a number, numpy scalars included; None if it is no number."""
+    if type(raw) is float and math.isfinite(raw):
+        return Value("number", raw + 0.0, None)  # adding 0.0 turns -0.0 into 0.0
     if isinstance(raw, numbers.Integral) or hasattr(raw, "__index__"):
         whole = operator.index(raw)
         if abs(whole) <= LARGEST_EXACT:
@@ -90,7 +91,7 @@ def number_value(raw: Any) -> Value | None:
     if isinstance(raw, numbers.Real) or hasattr(raw, "as_integer_ratio"):
         number = float(raw)
         if math.isfinite(number):
-            return Value("number", number + 0.0, None)  # adding 0.0 turns -0.0 into 0.0
+            return Value("number", number + 0.0, None)
         return Value("number", None, repr(number))
     return None
 
@@ -157,6 +158,11 @@ def reading_value(raw: Any, field: str) -> tuple[ReadValue, str | None]:
         If it is neither a number, null, nor an object with value, stderr and unit, or the stderr is negative.
     """
     value, stderr, unit = raw, None, None
+    if type(raw) is dict and len(raw) == 2 and "stderr" in raw:
+        value, stderr = raw.get("value"), raw["stderr"]
+        plain = type(value) is float and type(stderr) is float
+        if plain and math.isfinite(value) and math.isfinite(stderr) and stderr >= 0:
+            return ReadValue(value + 0.0, stderr + 0.0, None), None
     if isinstance(raw, Mapping):
         if not raw.keys() <= {"value", "stderr", "unit"} or "value" not in raw:
             raise RecordError(
@@ -197,7 +203,12 @@ def digest_of_sum(total: int) -> bytes:
     return (total & _MASK).to_bytes(16, "little")
 
 
-def digest_text(*parts: Any) -> bytes:
-    """Return a 16-byte digest of a list of plain values, in order."""
-    text = json.dumps(parts, ensure_ascii=False, separators=(",", ":"), default=str)
-    return hashlib.blake2b(text.encode("utf-8", "surrogatepass"), digest_size=16).digest()
+def digest_text(*parts: str) -> bytes:
+    """Return a 16-byte digest of texts, in order; the same for ever (uids are made of it)."""
+    return hashlib.blake2b("\0".join(parts).encode("utf-8", "surrogatepass"), digest_size=16).digest()
+
+
+def digest_content(content: Any) -> bytes:
+    """Return a 16-byte digest of plain values: equal for equal content, to tell what is known already."""
+    text = pydantic_core.to_json(content, inf_nan_mode="constants", fallback=str)
+    return hashlib.blake2b(text, digest_size=16).digest()

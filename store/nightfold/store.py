@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import copy
 import os
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from datetime import datetime
@@ -98,7 +99,7 @@ class Store:
         Records are taken in batches of 500, each one transaction. Handing the same records over again is harmless.
         """
         stream = (
-            Incoming(record, "records", number, number)
+            Incoming(_own(record), "records", number, number)
             for number, record in enumerate(_refuse_one(records), 1)
         )
         return self._writer.take(stream, progress=progress)
@@ -447,6 +448,19 @@ def _unused(opened: session.Session) -> bool:
 
 def _listed(names: Sequence[str]) -> Sequence[str]:
     return (names,) if isinstance(names, str) else tuple(names)
+
+
+def _own(record: Any) -> Any:
+    """Return a copy of a record that stays as it is when the caller goes on to change and reuse his."""
+    if not isinstance(record, Mapping):
+        return record
+    own = dict(record)
+    for name, value in own.items():
+        if name in ("parameters", "observables") and isinstance(value, Mapping):
+            own[name] = {key: item.copy() if type(item) is dict else item for key, item in value.items()}
+        elif isinstance(value, (list, Mapping)):
+            own[name] = copy.deepcopy(value)
+    return own
 
 
 def _refuse_one(records: Iterable[Mapping[str, Any]]) -> Iterable[Mapping[str, Any]]:

@@ -14,7 +14,7 @@ from nightfold.fits.many import FitTable, fit_many
 from nightfold.fits.result import FitResult
 from nightfold.ledger.selecting import near_miss
 from nightfold.scans.axes import encode
-from nightfold.settings import digest_text
+from nightfold.settings import digest_content
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -75,7 +75,7 @@ class SliceFit:
 def digest_data(table: pd.DataFrame, along: str, observable: str) -> bytes:
     """Return a digest of the shots behind a fit: uids, points, values and their stderr."""
     columns = ["uid", along, observable, f"{observable}_stderr"]
-    return digest_text([table[column].tolist() for column in columns])
+    return digest_content([table[column].tolist() for column in columns])
 
 
 def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, list[SliceFit]]:

@@ -10,10 +10,10 @@ from sqlalchemy import Connection, Row, and_, delete, insert, select
 
 from nightfold import tables
 from nightfold.errors import RecordError
-from nightfold.ledger.checking import CheckedShot, readings_digest
+from nightfold.ledger.checking import CheckedShot, readings_content
 from nightfold.ledger.names import MachineNames, insert_row
 from nightfold.records import Derivation, shorten
-from nightfold.settings import ReadValue, digest_text, hash_setting, plain_value, token_of
+from nightfold.settings import ReadValue, digest_content, hash_setting, plain_value, token_of
 from nightfold.timestamps import from_us
 
 
@@ -47,7 +47,7 @@ def amend_readings(
     at_us: int,
 ) -> bool:
     """Bring later observables to a stored shot; return whether anything was changed."""
-    digest = digest_text("amendment", *readings_digest(readings, derivation))
+    digest = digest_content(("amendment", *readings_content(readings, derivation)))
     if _seen(connection, stored.id, digest):
         return False
     changed = _amend(connection, stored.id, machine, readings, derivation, at_us)

@@ -11,7 +11,14 @@ from nightfold.errors import RecordError
 from nightfold.ledger.names import Known, MachineNames
 from nightfold.ledger.streams import Entry, Settled, StreamMemory
 from nightfold.records import Derivation, Frame, SequenceSteps, ShotRecord, clean_name, shorten
-from nightfold.settings import ReadValue, digest_of_sum, digest_text, hash_setting, reading_value
+from nightfold.settings import (
+    ReadValue,
+    digest_content,
+    digest_of_sum,
+    digest_text,
+    hash_setting,
+    reading_value,
+)
 from nightfold.timestamps import parse_moment
 
 
@@ -50,6 +57,7 @@ class CheckedShot:
     line: int | None = None
     id: int = 0
     sequence_id: int = 0
+    version_id: int | None = None
     scan_id: int | None = None
 
 
@@ -161,24 +169,23 @@ def check_shot(
     resting_sum = memory.total - sum(entry.hash for entry in moving.values())
     set_digest = digest_of_sum(resting_sum + hash_setting(machine.name, "machine"))
     derivation = derivation_of(record.derivation)
-    derived_uid = digest_text(machine.name, started_us, name, values_digest.hex()).hex()
-    content = digest_text(
+    uid = record.uid or digest_text(machine.name, str(started_us), name, values_digest.hex()).hex()
+    content = digest_content((
         machine.name, name, started_us, values_digest.hex(), structure and structure[0], record.scan, sorted(swept),
         record.planned_shots, record.last, record.reference, record.failed, record.note,
-        [frame.model_dump() for frame in record.frames], *readings_digest(readings, derivation),
-    )  # fmt: skip
+        [frame.model_dump() for frame in record.frames], *readings_content(readings, derivation),
+    ))  # fmt: skip
     wish = ScanWish(record.scan, swept, record.planned_shots, record.last)
     shot = CheckedShot(
-        record.uid or derived_uid, machine, name, structure, started_us, wish, record.reference, values_digest,
+        uid, machine, name, structure, started_us, wish, record.reference, values_digest,
         set_digest, content, None, moving, readings, derivation, record.failed, record.note, record.frames,
     )  # fmt: skip
     return shot, plan
 
 
-def readings_digest(readings: Mapping[str, ReadValue], derivation: Derivation | None) -> tuple[Any, Any]:
+def readings_content(readings: Mapping[str, ReadValue], derivation: Derivation | None) -> tuple[Any, Any]:
     """Return plain values that are equal for equal readings by the same derivation."""
-    items = sorted((name, read.value, read.stderr, read.state) for name, read in readings.items())
-    return items, derivation.model_dump() if derivation else None
+    return sorted(readings.items()), derivation.model_dump() if derivation else None
 
 
 def _swept(record: ShotRecord, settled: Settled, memory: StreamMemory) -> tuple[str, ...]:

@@ -69,7 +69,7 @@ class MachineNames:
         if value.kind != "number":
             return value, known
         known = self._adopt(known, unit, field)
-        stated = known.bare if unit is None else parse_unit(unit)
+        stated = known.bare if unit is None else unit
         return _convert_value(value, stated, known.unit, field), known
 
     def settle_reading(
@@ -86,11 +86,11 @@ class MachineNames:
             raise RecordError(field, "an observable", f"another name: {name!r} is a parameter of {self.name}")
         known = self.observables.get(name) or self._fresh_observable(name)
         known = self._adopt(known, unit, field)
-        stated = known.bare if unit is None else parse_unit(unit)
+        stated = known.bare if unit is None else unit
         if stated in (None, known.unit) or known.unit is None:
             return read, known
         try:
-            rule = conversion(stated or "", known.unit)
+            rule = conversion(parse_unit(stated or ""), known.unit)
             value = None if read.value is None else rule.value(read.value)
             stderr = None if read.stderr is None else rule.stderr(read.stderr)
         except UnitError as problem:
@@ -111,7 +111,7 @@ class MachineNames:
 
     def _adopt(self, known: Known, unit: str | None, field: str) -> Known:
         """Take the first unit stated; refuse one that cannot be converted into it."""
-        if unit is None:
+        if unit is None or unit == known.unit:
             return known
         try:
             stated = parse_unit(unit)
@@ -136,7 +136,7 @@ def _convert_value(value: Value, stated: str | None, target: str | None, field: 
     if stated is None or target is None or stated == target or value.num is None:
         return value
     try:
-        return Value("number", conversion(stated, target).value(value.num) + 0.0, None)
+        return Value("number", conversion(parse_unit(stated), target).value(value.num) + 0.0, None)
     except UnitError as problem:
         raise RecordError(f"{field}.unit", shorten(stated), str(problem)) from None
 

@@ -22,14 +22,16 @@ from nightfold.settings import Value, hash_setting, setting_value, token_of
 MEMORY = 20
 
 
+class _UNREAD:  # noqa: N801 (a mark, never an instance)
+    """The type of nothing: a setting that must be read again when it is next stated."""
+
+
 @dataclass(slots=True)
 class Entry:
     """The last value of one parameter in a stream, as stated and in canonical form."""
 
     raw: Any
     raw_type: type
-    raw_unit: str | None
-    raw_size: int
     value: Value
     hash: int
     moved_at: int = -MEMORY
@@ -70,15 +72,9 @@ class StreamMemory:
         hits = 0
         for key, raw in settings.items():
             entry = entries.get(key)
-            if entry is not None:
-                if type(raw) is dict:
-                    value = raw.get("value")
-                    unit = raw.get("unit")
-                    same = entry.raw_type is type(value) and entry.raw == value and entry.raw_unit == unit
-                    if same and len(raw) == entry.raw_size:
-                        hits += 1
-                        continue
-                elif entry.raw_type is type(raw) and entry.raw == raw and not entry.raw_size:
+            if entry is not None and entry.raw == raw:
+                stated = raw["value"] if type(raw) is dict else raw
+                if type(stated) is entry.raw_type:  # 1, 1.0 and True are equal to Python
                     hits += 1
                     continue
             self._settle_one(key, raw, machine, changed, plan)
@@ -103,9 +99,8 @@ class StreamMemory:
         if known.id is None or known is not machine.parameters.get(name):
             plan[name] = known
         inner = raw.get("value") if isinstance(raw, Mapping) else raw
-        kind = object if isinstance(inner, (list, tuple)) else type(inner)  # lists are always looked at again
-        size = len(raw) if isinstance(raw, Mapping) else 0
-        changed[name] = Entry(inner, kind, settled[1], size, value, hash_setting(name, value.token))
+        kind = type(inner) if isinstance(inner, (float, int, str)) else _UNREAD
+        changed[name] = Entry(raw, kind, value, hash_setting(name, value.token))
 
     def _missing(self, settings: Mapping[Any, Any], changed: dict[str, Entry]) -> list[str]:
         stated = {clean_name(key) for key, raw in settings.items() if not _is_null(raw)}
@@ -114,7 +109,7 @@ class StreamMemory:
     def _reread(self, machine: MachineNames) -> None:
         """After a unit was adopted or the card changed: what was stated must be read again, the values stand."""
         for entry in self.entries.values():
-            entry.raw_type = object
+            entry.raw_type = _UNREAD
         self.generation = machine.generation
 
     def remember(self, settled: Settled) -> None:
@@ -182,7 +177,7 @@ def recall(connection: Connection, machine: MachineNames, sequence_id: int) -> S
         previous = values
     for name, value in previous.items():
         code = hash_setting(name, token_of(value.kind, value.num, value.exact))
-        memory.entries[name] = Entry(None, object, None, -1, value, code, memory.recent.get(name, -MEMORY))
+        memory.entries[name] = Entry(None, _UNREAD, value, code, memory.recent.get(name, -MEMORY))
         memory.total += code
     memory.recent = {name: at for name, at in memory.recent.items() if name in memory.entries}
     return memory

@@ -11,11 +11,12 @@ from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
 from nightfold.errors import RecordError
-from nightfold.ledger.amending import amend_readings, amend_shot, find_derivation, note_subject
+from nightfold.ledger.amending import amend_readings, amend_shot
 from nightfold.ledger.checking import CheckedShot, check_shot, derivation_of, readings_of, sequence_name
+from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
 from nightfold.ledger.outcome import Incoming, Intake, Refused
-from nightfold.ledger.rows import chunks, insert_many, next_id
+from nightfold.ledger.rows import chunks, next_id
 from nightfold.ledger.sources import SourceLog
 from nightfold.ledger.streams import StreamMemory, recall
 from nightfold.records import Amendment, parse_record
@@ -213,69 +214,15 @@ class Writer:
         for shot_id, shot in enumerate(shots, first):
             shot.id = shot_id
             shot.sequence_id = self._names.sequence(connection, shot.machine, shot.sequence)
-        self._make_sets(connection, shots)
+            if shot.structure is not None:
+                shot.version_id = self._names.version(
+                    connection, shot.machine, shot.sequence_id, *shot.structure
+                )
+        insert_sets(connection, shots, self._sets)
         self._placer.place(connection, shots)
-        self._insert(connection, shots)
+        insert_shots(connection, shots, self._sets)
         self._placer.fold(connection, shots)
         batch.intake.new += len(shots)
-
-    def _make_sets(self, connection: Connection, shots: Sequence[CheckedShot]) -> None:
-        missing = {shot.set_digest: shot for shot in shots if shot.set_digest not in self._sets}
-        table = tables.value_set
-        for part in chunks(sorted(missing)):
-            for row in connection.execute(select(table.c.id, table.c.digest).where(table.c.digest.in_(part))):
-                self._sets[bytes(row.digest)] = row.id
-        new = [digest for digest in sorted(missing) if digest not in self._sets]
-        if not new:
-            return
-        rows, contents = [], []
-        for set_id, digest in enumerate(new, next_id(connection, table)):
-            shot = missing[digest]
-            resting = shot.resting or {}
-            ids = shot.machine.parameters
-            rows.append((set_id, digest, len(resting)))
-            contents += [
-                (set_id, ids[name].id, entry.value.num, entry.value.exact) for name, entry in resting.items()
-            ]
-            self._sets[digest] = set_id
-        insert_many(connection, table, rows)
-        insert_many(connection, tables.set_value, contents)
-
-    def _insert(self, connection: Connection, shots: Sequence[CheckedShot]) -> None:
-        shot_rows, values, readings, asides, notes, frames = [], [], [], [], [], []
-        at_us = now_us()
-        for shot in shots:
-            version_id = None
-            if shot.structure is not None:
-                version_id = self._names.version(connection, shot.machine, shot.sequence_id, *shot.structure)
-            shot_rows.append((
-                shot.id, shot.uid, shot.started_us, shot.sequence_id, version_id, shot.scan_id, shot.reference,
-                self._sets[shot.set_digest], shot.values_digest, shot.content_digest, shot.source_id, shot.line,
-            ))  # fmt: skip
-            parameters, observables = shot.machine.parameters, shot.machine.observables
-            swept = shot.wish.swept
-            for name, entry in shot.moving.items():
-                value = entry.value
-                values.append((shot.id, parameters[name].id, value.num, value.exact, name in swept))
-            if shot.readings:
-                derivation_id = find_derivation(connection, shot.derivation)
-                for name, read in shot.readings.items():
-                    observable_id = observables[name].id
-                    readings.append(
-                        (shot.id, observable_id, read.value, read.stderr, read.state, derivation_id)
-                    )
-            if shot.failed is not None:
-                asides.append({"shot_id": shot.id, "reason": shot.failed, "rule": "failed", "at_us": at_us})
-            if shot.note:
-                notes.append({"subject": note_subject(shot.id), "text": shot.note, "at_us": at_us})
-            frames += [(shot.id, frame.camera, frame.role, frame.path, None) for frame in shot.frames]
-        insert_many(connection, tables.shot, shot_rows)
-        insert_many(connection, tables.shot_value, values)
-        insert_many(connection, tables.reading, readings)
-        insert_many(connection, tables.frame, frames)
-        for table, rows in ((tables.set_aside, asides), (tables.note, notes)):
-            if rows:
-                connection.execute(table.insert(), rows)
 
 
 def _uid(shot: CheckedShot | _Late) -> str:

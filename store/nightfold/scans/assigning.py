@@ -40,6 +40,7 @@ class ScanFolder:
                 number = 1 if current is None else current.round + 1
                 current = rounds.open_round(connection, key[0], key[1], number, shot.started_us, swept)
             current.add(shot.started_us, shot.wish.planned_shots, shot.wish.last)
+            current.watch_settings(shot.set_digest, len(shot.moving))
             self._newest[key] = current
             shot.scan_id = current.scan_id
 
@@ -61,7 +62,8 @@ class ScanFolder:
                 del self._newest[key]
             else:
                 rounds.save_progress(connection, current)
-                for scan_id in {shot.scan_id for shot in members if shot.scan_id is not None}:
+                done = {current.scan_id} if current.plain else set()
+                for scan_id in {shot.scan_id for shot in members if shot.scan_id is not None} - done:
                     settle_axes(connection, scan_id, current.swept)
         for sequence_id, started in free.items():
             refolding.fold_span(connection, sequence_id, min(started), max(started))

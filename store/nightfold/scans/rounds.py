@@ -25,6 +25,8 @@ class Round:
     planned: int | None = None
     closed_us: int | None = None
     late: bool = False
+    set_digest: bytes | None = None
+    plain: bool = False
 
     def takes(self, started_us: int, swept: Sequence[int], rejoin_us: int) -> bool:
         """Return whether a shot of that time and sweep resumes this round."""
@@ -34,6 +36,11 @@ class Round:
         if self.closed_us is not None or (self.planned is not None and self.shots >= self.planned):
             return False
         return started_us - self.last_us <= rejoin_us and frozenset(swept) == self.swept
+
+    def watch_settings(self, set_digest: bytes, moving: int) -> None:
+        """Note whether nothing but the one swept parameter has ever moved: then the axes need no second look."""
+        self.plain = self.plain and self.set_digest in (None, set_digest) and moving == len(self.swept) == 1
+        self.set_digest = set_digest
 
     def add(self, started_us: int, planned: int | None, last: bool) -> None:
         """Count a shot in."""
@@ -59,7 +66,7 @@ def open_round(
     row = {"sequence_id": sequence_id, "label": label, "round": number, "origin": "label"}
     scan_id = insert_row(connection, tables.scan, row)
     set_axes(connection, scan_id, swept)
-    return Round(scan_id, number, frozenset(swept), started_us, 0)
+    return Round(scan_id, number, frozenset(swept), started_us, 0, plain=True)
 
 
 def newest_round(connection: Connection, sequence_id: int, label: str) -> Round | None:
