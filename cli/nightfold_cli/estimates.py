@@ -7,7 +7,7 @@ from collections.abc import Collection, Mapping
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.concise import asymmetric, interval, plain
-from nightfold_cli.render import Cell, Row
+from nightfold_cli.render import Column, Row
 
 if TYPE_CHECKING:
     from nightfold.fits.estimate import Estimate
@@ -17,6 +17,13 @@ if TYPE_CHECKING:
     AnyEstimate = Estimate | KeptEstimate
 
 LEVEL_68, LEVEL_95 = 0.6827, 0.95
+ON_SCREEN = (
+    Column("estimate"),
+    Column("value", right=True),
+    Column("unit"),
+    Column("95 % interval"),
+)
+PIPED = tuple(Column(name) for name in ("estimate", "value", "stderr", "unit", "low95", "high95"))
 
 
 def value_text(estimate: AnyEstimate, *, fixed: bool = False) -> str:
@@ -40,8 +47,22 @@ def rows(estimates: Mapping[str, Estimate], fixed: Collection[str]) -> list[Row]
         [
             name,
             value_text(estimate, fixed=name in fixed),
-            estimate.unit or "",
-            Cell("" if name in fixed else interval_text(estimate), " "),
+            estimate.unit,
+            "" if name in fixed else interval_text(estimate),
+        ]
+        for name, estimate in estimates.items()
+    ]
+
+
+def plain_rows(estimates: Mapping[str, Estimate]) -> list[Row]:
+    """Return a line an estimate for programs, with all digits."""
+    return [
+        [
+            name,
+            repr(estimate.value),
+            repr(estimate.stderr),
+            estimate.unit,
+            *(repr(end) for end in estimate.interval(LEVEL_95)),
         ]
         for name, estimate in estimates.items()
     ]

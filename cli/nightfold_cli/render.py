@@ -58,6 +58,8 @@ class Column:
         0 for a column that is always shown; others are left out on a narrow screen, the highest first.
     wraps : bool
         Whether long cells may run over several lines.
+    least : int
+        How wide a column that wraps must stay before spare ones go.
     plain_name : str
         The name in a pipe, where it differs.
     quiet : bool
@@ -68,6 +70,7 @@ class Column:
     right: bool = False
     spare: int = 0
     wraps: bool = False
+    least: int = 0
     plain_name: str = ""
     quiet: bool = False
 
@@ -149,6 +152,11 @@ class Screen:
             self._wrapped(text, indent, "bold" if strong else "")
         elif self.mode == "piped":
             self.out.write(indent + printable(text) + "\n")
+
+    def command(self, text: str) -> None:
+        """Write a command to copy: on one line, however long."""
+        if self.terminal:
+            self._styled("  " + printable(text), "")
 
     def item(self, head: str, text: str) -> None:
         """Write one item of a list: a head, then a sentence below or beside it."""
@@ -311,7 +319,7 @@ def _width(column: Column, cells: Sequence[str]) -> int:
     texts = (column.name, *cells)
     parts = [part for text in texts for part in (text.split() if column.wraps else text.split("\n"))]
     longest = max((cell_len(part) for part in parts), default=0)
-    return min(longest, _WIDEST_WORD) if column.wraps else longest
+    return max(column.least, min(longest, _WIDEST_WORD)) if column.wraps else longest
 
 
 def _fitting(columns: Sequence[Column], widths: Sequence[int], width: int) -> list[int]:

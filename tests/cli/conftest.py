@@ -4,7 +4,7 @@ import io
 import os
 import subprocess
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -40,12 +40,12 @@ def heron(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 
 @pytest.fixture
-def at_home(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Path]:
+def at_home(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     """Work in an empty folder, with no settings from outside."""
     monkeypatch.chdir(tmp_path)
     for name in ("NIGHTFOLD_STORE", "COLUMNS", "NO_COLOR"):
         monkeypatch.delenv(name, raising=False)
-    yield tmp_path
+    return tmp_path
 
 
 @pytest.fixture
@@ -83,13 +83,18 @@ def _without_styles(text: str) -> str:
     return re.sub(r"\x1b\[[0-9;]*m", "", text)
 
 
-def in_a_process(*arguments: str | Path, **environment: str) -> Answer:
-    """Run the command line in a process of its own."""
-    done = subprocess.run(
-        [sys.executable, "-m", "nightfold_cli.main", *map(str, arguments)],
-        capture_output=True,
-        text=True,
-        env={**os.environ, **environment},
-        timeout=60,
-    )
-    return Answer(done.returncode, done.stdout, done.stderr)
+@pytest.fixture
+def in_a_process(at_home: Path) -> Run:
+    """Return a function that runs the command line in a process of its own."""
+
+    def run_command(*arguments: str | Path, **environment: str) -> Answer:
+        done = subprocess.run(
+            [sys.executable, "-m", "nightfold_cli.main", *map(str, arguments)],
+            capture_output=True,
+            text=True,
+            env={**os.environ, **environment},
+            timeout=60,
+        )
+        return Answer(done.returncode, done.stdout, done.stderr)
+
+    return run_command

@@ -71,7 +71,9 @@ def test_every_command_has_help_with_an_example(name: str, capsys: pytest.Captur
     assert main([name, "--help"]) == 0
     text = capsys.readouterr().out
     assert "examples:\n  nightfold" in text
-    assert all(f"nightfold {name}" in line or f" {name}" in line or line[0] == " " for line in module.EXAMPLES)
+    assert all(
+        f"nightfold {name}" in line or f" {name}" in line or line[0] == " " for line in module.EXAMPLES
+    )
 
 
 def test_help_by_word(capsys: pytest.CaptureFixture[str]) -> None:
@@ -95,7 +97,9 @@ def test_nothing_asked_shows_the_overview_as_a_usage_error(capsys: pytest.Captur
 )
 def test_mistyped_command(typed: str, meant: str, capsys: pytest.CaptureFixture[str]) -> None:
     assert main([typed]) == 2
-    assert capsys.readouterr().err.startswith(f"nightfold: there is no command '{typed}'; did you mean {meant}")
+    assert capsys.readouterr().err.startswith(
+        f"nightfold: there is no command '{typed}'; did you mean {meant}"
+    )
 
 
 def test_unheard_of_command(capsys: pytest.CaptureFixture[str]) -> None:

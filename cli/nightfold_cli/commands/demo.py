@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from nightfold_cli.arguments import positive
 from nightfold_cli.commands.fit import Slice, parts_of
 from nightfold_cli.concise import concise, interval, plain
 from nightfold_cli.estimates import LEVEL_95
@@ -45,6 +46,8 @@ def add_arguments(parser: ArgumentParser) -> None:
         help="where the files and the store go; empty or not there yet (default: nightfold-demo)",
     )
 
+    parser.add_argument("--nights", metavar="N", type=positive, help="only the first so many nights")
+
 
 @dataclass(frozen=True, slots=True)
 class Found:
@@ -78,8 +81,9 @@ def run(args: Namespace) -> int:
     folder: Path = args.folder
     _check_free(folder)
     began = time.monotonic()
-    with Progress("simulating nights", NIGHTS, sys.stderr) as progress:
-        campaign = write_campaign(folder, progress=progress)
+    nights = args.nights or NIGHTS
+    with Progress("simulating nights", nights, sys.stderr) as progress:
+        campaign = write_campaign(folder, nights=nights, progress=progress)
     with open_store(folder / STORE, create=True) as store:
         screen.store(store.where)
         store.use_card(campaign.card)
@@ -192,7 +196,7 @@ def _show_truths(screen: Screen, found: Sequence[Found]) -> None:
     """Show what was found beside the truth."""
     screen.heading("found and true", "every scan whose truth is stated, fitted with the defaults")
     columns = [
-        Column("what", wraps=True),
+        Column("what", wraps=True, least=30),
         Column("true", right=True, plain_name="truth"),
         Column("found", right=True, plain_name="value"),
         Column("unit"),
@@ -289,7 +293,7 @@ def _go_on(screen: Screen, where: Path, found: Sequence[Found], elapsed_s: float
         f"fit {key} {truth.model} -o {truth.observable}",
         "edits",
     ):
-        screen.text(f"{store} {command}", indent="  ")
+        screen.command(f"{store} {command}")
 
 
 def _entry(

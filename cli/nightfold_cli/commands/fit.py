@@ -133,13 +133,11 @@ def _show(
         screen.heading(*_title(scan, model, observable, along, result.background))
         _draw(screen, scan, along, observable, result)
         screen.heading("estimates", _counts(scan, result))
-    columns = [
-        Column("estimate"),
-        Column("value", right=True),
-        Column("unit"),
-        Column("95 % interval"),
-    ]
-    screen.table(columns, estimates.rows(result.estimates, dict(args.fixed)), empty="no estimates")
+    fixed = dict(args.fixed)
+    if screen.terminal:
+        screen.table(estimates.ON_SCREEN, estimates.rows(result.estimates, fixed), empty="no estimates")
+    else:
+        screen.table(estimates.PIPED, estimates.plain_rows(result.estimates), empty="no estimates")
     _verdict(screen, result)
 
 

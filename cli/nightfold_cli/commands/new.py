@@ -30,43 +30,39 @@ def add_arguments(parser: ArgumentParser) -> None:
 
 
 def run(args: Namespace) -> int:
-    """Make the store, then write and use the card."""
+    """Make the store, then write and use the card; a card that is wrong leaves no store behind."""
+    from nightfold.card import read_card
     from nightfold.store import create_store
 
     screen = Screen.here(args.json)
     path: Path | None = args.card or (Path(f"{args.machine}.toml") if args.machine else None)
-    if args.machine:
-        _check_free(path)
+    starter = _starter(path, args.machine, args.zone) if args.machine and path else None
+    if path and starter is None:
+        read_card(path)
     with create_store(args.store) as store:
         screen.store(store.where)
-        if args.machine and path:
-            _write_starter(path, args.machine, args.zone)
+        if path and starter is not None:
+            with path.open("x", encoding="utf-8") as file:
+                file.write(starter)
         card = store.use_card(path) if path else None
         where = store.where
     if screen.json:
         screen.answer({"store": where, "machine": card.machine if card else None, "card": _name(path)})
         return 0
     screen.text(f"A new store: {where}")
-    _advise(screen, path, card, written=bool(args.machine))
+    _advise(screen, path, card, written=starter is not None)
     return 0
 
 
-def _check_free(path: Path | None) -> None:
-    """Refuse to write a card over a file."""
-    if path is None or path.name != str(path.name).strip("/") or path.name in ("", ".", ".."):
-        raise UsageError(f"{path}: not a file name; name one with --card FILE")
-    if path.exists():
-        raise UsageError(f"{path} is there already; use it with --card {path} and without --machine")
-
-
-def _write_starter(path: Path, machine: str, zone: str) -> None:
-    """Write a card to begin with."""
+def _starter(path: Path, machine: str, zone: str) -> str:
+    """Return the text of a card to begin with, which will not be written over a file."""
     from nightfold.card import parse_card, starter_card
 
+    if path.exists():
+        raise UsageError(f"{path} is there already; use it with --card {path} and without --machine")
     text = starter_card(machine, zone)
     parse_card(text, source=f"the card for {machine!r}")
-    with path.open("x", encoding="utf-8") as file:
-        file.write(text)
+    return text
 
 
 def _advise(screen: Screen, path: Path | None, card: MachineCard | None, *, written: bool) -> None:

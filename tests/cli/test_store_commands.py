@@ -1,0 +1,406 @@
+from __future__ import annotations
+
+import json
+import shutil
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+Run = Callable[..., Any]
+
+RECORD = {
+    "format": 1,
+    "machine": "heron",
+    "started": "2026-10-05T21:14:03+02:00",
+    "sequence": "hold-in-trap",
+    "parameters": {"coil_current": {"value": 61.25, "unit": "A"}},
+    "observables": {"atom_number": {"value": 121000, "stderr": 3100}},
+}
+
+
+def write_lines(path: Path, *records: dict[str, Any] | str) -> Path:
+    lines = [record if isinstance(record, str) else json.dumps(record) for record in records]
+    path.write_text("".join(line + "\n" for line in lines), encoding="utf-8")
+    return path
+
+
+def decoded(answer: Any) -> dict[str, Any]:
+    document: dict[str, Any] = json.loads(answer.out)
+    assert document["schema"] == 1
+    assert answer.out.count("\n") == 1
+    return document
+
+
+@pytest.fixture
+def copy(heron: Path, at_home: Path) -> Path:
+    """Return a store of two nights that may be changed."""
+    return Path(shutil.copy(heron / "heron.sqlite", at_home / "copy.sqlite"))
+
+
+# ---------------------------------------------------------------- which store
+
+
+def test_store_is_named_on_stderr_when_piped(heron: Path, run: Run) -> None:
+    where = heron / "heron.sqlite"
+    for arguments in (
+        ["--store", where, "nights"],
+        ["nights", "--store", where],
+        ["nights", f"--store={where}"],
+    ):
+        answer = run(*arguments)
+        assert answer.code == 0
+        assert answer.err == f"nightfold: store {where}\n"
+        assert str(where) not in answer.out
+
+
+def test_store_from_the_environment(heron: Path, run: Run, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("NIGHTFOLD_STORE", str(heron / "heron.sqlite"))
+    assert "heron.sqlite" in run("nights", "--json").err
+
+
+def test_store_is_named_on_the_terminal(heron: Path, on_screen: Callable[..., str]) -> None:
+    where = heron / "heron.sqlite"
+    assert on_screen("--store", where, "nights").startswith(f"store {where}\n")
+
+
+@pytest.mark.parametrize("command", ["nights", "shots", "scans", "edits", "fits"])
+def test_missing_store(command: str, run: Run) -> None:
+    answer = run(command)
+    assert (answer.code, answer.out) == (3, "")
+    assert "nightfold.sqlite" in answer.err
+    assert "no such file; make one with 'nightfold" in answer.err
+    assert "Traceback" not in answer.err
+
+
+def test_file_that_is_no_store(run: Run, at_home: Path) -> None:
+    (at_home / "nightfold.sqlite").write_text("hello, I am a text of some length")
+    answer = run("nights")
+    assert answer.code == 5
+    assert "nightfold.sqlite" in answer.err
+
+
+# ---------------------------------------------------------------- new and take
+
+
+def test_new_makes_a_store_once(run: Run, at_home: Path) -> None:
+    assert decoded(run("new", "--json"))["store"].endswith("nightfold.sqlite")
+    again = run("new")
+    assert again.code == 5
+    assert "exists" in again.err
+
+
+def test_new_writes_a_starter_card(run: Run, at_home: Path) -> None:
+    answer = run("new", "--machine", "egret", "--zone", "Europe/Vienna", "--json")
+    assert decoded(answer)["card"] == "egret.toml"
+    assert 'machine = "egret"' in (at_home / "egret.toml").read_text()
+    other = run("--store", "other.sqlite", "new", "--machine", "egret")
+    assert other.code == 2
+    assert "egret.toml is there already" in other.err
+    assert not (at_home / "other.sqlite").exists()
+
+
+def test_new_with_an_impossible_zone_leaves_nothing(run: Run, at_home: Path) -> None:
+    answer = run("new", "--machine", "egret", "--zone", "Europe/Atlantis")
+    assert answer.code == 5
+    assert "Atlantis" in answer.err
+    assert list(at_home.iterdir()) == []
+
+
+def test_take_needs_a_store_or_new(run: Run, at_home: Path) -> None:
+    path = write_lines(at_home / "a.jsonl", RECORD)
+    refused = run("take", path)
+    assert refused.code == 3
+    assert not (at_home / "nightfold.sqlite").exists()
+    taken = run("take", path, "--new", "--json")
+    assert taken.code == 0
+    assert decoded(taken) == {"schema": 1, "new": 1, "known": 0, "amended": 0, "refused": []}
+    assert decoded(run("take", path, "--json"))["known"] == 1
+
+
+def test_refused_records_are_listed_and_the_good_ones_kept(run: Run, at_home: Path) -> None:
+    bad = {**RECORD, "started": "yesterday"}
+    path = write_lines(at_home / "a.jsonl", RECORD, bad, "{torn")
+    answer = run("take", path, "--new")
+    assert answer.code == 5
+    assert answer.out.split("\n")[1].split("\t") == [str(path), "1", "0", "0", "2"]
+    assert f"nightfold: refused {path}:2: started: found 'yesterday', wanted" in answer.err
+    assert f"nightfold: refused {path}:3: " in answer.err
+    assert "2 refused, 1 kept" in answer.err
+    as_json = run("take", path, "--json")
+    assert as_json.code == 5
+    document = decoded(as_json)
+    assert (document["new"], document["known"]) == (0, 1)
+    assert [item["line"] for item in document["refused"]] == [2, 3]
+    assert set(document["refused"][0]) == {"source", "line", "reason"}
+
+
+def test_a_missing_file_does_not_keep_the_others_out(run: Run, at_home: Path) -> None:
+    path = write_lines(at_home / "a.jsonl", RECORD)
+    answer = run("take", at_home / "gone.jsonl", path, "--new", "--json")
+    assert answer.code == 3
+    document = decoded(answer)
+    assert document["new"] == 1
+    assert "gone.jsonl" in document["refused"][0]["reason"]
+
+
+def test_take_a_table(run: Run, at_home: Path) -> None:
+    table = at_home / "decay.csv"
+    table.write_text("hold_time [ms],atom_number [atoms]\n0,1000\n10,800\n20,640\n")
+    words = [
+        "--machine",
+        "heron",
+        "--sequence",
+        "hold",
+        "--swept",
+        "hold_time",
+        "--observables",
+        "atom_number",
+        "--cycle",
+        "18",
+    ]
+    answer = run("take", table, *words, "--started-at", "2026-10-05T21:14:00+02:00", "--new", "--json")
+    assert (answer.code, decoded(answer)["new"]) == (0, 3)
+    shots = decoded(run("shots", "-p", "hold_time", "-o", "atom_number", "--json"))
+    assert [shot["hold_time"] for shot in shots["shots"]] == [0, 10, 20]
+    assert shots["shots"][1]["started"] == "2026-10-05T19:14:18+00:00"
+    assert shots["units"] == {"hold_time": "ms", "atom_number": "atoms"}
+
+
+def test_a_table_that_says_too_little(run: Run, at_home: Path) -> None:
+    table = at_home / "decay.csv"
+    table.write_text("hold_time [ms],atom_number [atoms]\n0,1000\n")
+    answer = run("take", table, "--machine", "heron", "--new")
+    assert answer.code == 2
+    assert "hold_time" in answer.err
+
+
+# ---------------------------------------------------------------- looking
+
+
+def test_nights(heron: Path, run: Run) -> None:
+    store = ("--store", heron / "heron.sqlite")
+    first = decoded(run(*store, "nights", "--json"))["nights"][0]
+    assert first["night"] == "2026-09-28"
+    assert first["first"].endswith("+00:00")
+    assert isinstance(first["sequences"], list)
+    lines = run(*store, "nights").out.splitlines()
+    assert lines[0].split("\t")[:3] == ["night", "machine", "from"]
+    assert len({line.count("\t") for line in lines}) == 1
+    assert len(decoded(run(*store, "nights", "--last", "1", "--json"))["nights"]) == 1
+    assert decoded(run(*store, "nights", "--machine", "egret", "--json"))["nights"] == []
+
+
+def test_shots(heron: Path, run: Run) -> None:
+    store = ("--store", heron / "heron.sqlite")
+    every = decoded(run(*store, "shots", "--set-aside", "--json"))["shots"]
+    assert len(every) > len(decoded(run(*store, "shots", "--json"))["shots"])
+    assert list(every[0]) == ["uid", "started", "sequence", "scan"]
+    of_scan = decoded(run(*store, "shots", "--scan", "loss-coarse", "-o", "atom_number", "--json"))["shots"]
+    assert {shot["scan"] for shot in of_scan} == {"loss-coarse#1"}
+    assert len(decoded(run(*store, "shots", "--limit", "3", "--json"))["shots"]) == 3
+    late = decoded(run(*store, "shots", "--since", "2026-09-29", "--json"))["shots"]
+    assert min(shot["started"] for shot in late) >= "2026-09-28T22:00:00+00:00"
+
+
+def test_one_shot(heron: Path, run: Run) -> None:
+    answer = run("--store", heron / "heron.sqlite", "shots", "heron-20260928-0000", "--json")
+    shot = decoded(answer)["shot"]
+    assert shot["uid"] == "heron-20260928-0000"
+    assert shot["parameters"]["coil_current"]["unit"] == "A"
+    assert set(shot["observables"]["atom_number"]) == {"value", "stderr", "unit", "state"}
+    assert shot["line"] == 1
+
+
+@pytest.mark.parametrize(
+    ("arguments", "code", "said"),
+    [
+        (["shots", "nobody"], 3, "nobody"),
+        (["shots", "heron-20260928-0000", "--limit", "3"], 2, "--limit is for lists"),
+        (["shots", "-o", "atom_numbr"], 3, "atom_number"),
+        (["shots", "--since", "yesterday"], 2, "found 'yesterday', wanted a day or a time"),
+        (["scan", "loss-corse"], 3, "loss-coarse"),
+        (["scan", "loss-coarse", "-o", "colour"], 2, "atom_number"),
+        (["fit", "loss-coarse", "lorenzian"], 3, "lorentzian"),
+        (["fit", "evaporation-map", "gaussian"], 2, "axes"),
+        (["fit", "loss-coarse", "lorentzian", "-o", "colour"], 3, "colour"),
+        (["export", "loss-coarse", "loss.txt"], 2, "wanted .nc or .csv"),
+        (["set-aside", "nobody", "--reason", "why"], 3, "nobody"),
+        (["set-aside", "nobody"], 2, "--reason"),
+    ],
+)
+def test_what_cannot_be_done(arguments: list[str], code: int, said: str, heron: Path, run: Run) -> None:
+    answer = run("--store", heron / "heron.sqlite", *arguments)
+    assert answer.code == code, answer.err
+    assert said in answer.err
+    assert answer.out == ""
+
+
+def test_scans(heron: Path, run: Run) -> None:
+    store = ("--store", heron / "heron.sqlite")
+    scans = decoded(run(*store, "scans", "--json"))["scans"]
+    coarse = next(scan for scan in scans if scan["label"] == "loss-coarse")
+    wanted = {"id", "label", "round", "machine", "sequence", "axes", "shots", "set_aside", "first", "last"}
+    assert wanted <= set(coarse)
+    axis = coarse["axes"][0]
+    assert list(axis) == ["parameter", "unit", "points", "low", "high", "values"]
+    assert (axis["parameter"], axis["unit"], axis["points"]) == ("coil_current", "A", 31)
+    assert coarse["first"].endswith("+00:00")
+    assert scans == sorted(scans, key=lambda scan: str(scan["first"]))
+    assert len(decoded(run(*store, "scans", "--last", "2", "--json"))["scans"]) == 2
+    only = decoded(run(*store, "scans", "--sequence", "kick-and-hold", "--json"))["scans"]
+    assert {scan["sequence"] for scan in only} == {"kick-and-hold"}
+    head, *lines = run(*store, "scans").out.splitlines()
+    assert head.split("\t")[1] == "scan"
+    assert len(lines) == len(scans)
+
+
+def test_axis_of_words(run: Run, at_home: Path) -> None:
+    records = [
+        {
+            **RECORD,
+            "started": f"2026-10-05T21:{minute:02}:00+02:00",
+            "scan": "looks",
+            "swept": ["imaging_axis"],
+            "parameters": {"imaging_axis": "xyz"[minute % 3]},
+        }
+        for minute in range(6)
+    ]
+    run("take", write_lines(at_home / "a.jsonl", *records), "--new")
+    axis = decoded(run("scans", "--json"))["scans"][0]["axes"][0]
+    assert axis == {
+        "parameter": "imaging_axis",
+        "unit": None,
+        "points": 3,
+        "low": None,
+        "high": None,
+        "values": ["x", "y", "z"],
+    }
+
+
+def test_scan(heron: Path, run: Run) -> None:
+    store = ("--store", heron / "heron.sqlite")
+    document = decoded(run(*store, "scan", "loss-coarse", "--json"))
+    assert document["scan"]["key"] == "loss-coarse#1"
+    assert len(document["points"]) == 31
+    point = document["points"][0]
+    assert set(point["observables"]["atom_number"]) == {"count", "mean", "scatter", "stderr"}
+    head, *lines = run(*store, "scan", "loss-coarse").out.splitlines()
+    assert head.split("\t")[:4] == ["coil_current", "shots", "atom_number", "atom_number_scatter"]
+    assert len(lines) == 31
+
+
+def test_edits_are_a_list(heron: Path, run: Run) -> None:
+    assert isinstance(decoded(run("--store", heron / "heron.sqlite", "edits", "--json"))["edits"], list)
+
+
+# ---------------------------------------------------------------- changing
+
+
+def test_set_aside_and_put_back(copy: Path, run: Run) -> None:
+    uid = "heron-20260928-0003"
+    store = ("--store", copy)
+    assert decoded(run(*store, "set-aside", uid, "--reason", "laser off lock", "--json"))["set_aside"] == 1
+    shot = decoded(run(*store, "shots", uid, "--json"))["shot"]
+    assert shot["set_aside"] == "laser off lock"
+    assert "1 were so already" in run(*store, "set-aside", uid, "--reason", "again").out
+    assert decoded(run(*store, "set-aside", uid, "--put-back", "--json"))["put_back"] == 1
+    assert decoded(run(*store, "shots", uid, "--json"))["shot"]["set_aside"] is None
+
+
+def test_upgrade_of_a_store_of_today(copy: Path, run: Run) -> None:
+    document = decoded(run("--store", copy, "upgrade", "--json"))
+    assert document["before"] == document["after"]
+    assert document["copy"] is None
+
+
+def test_export(heron: Path, run: Run, at_home: Path) -> None:
+    store = ("--store", heron / "heron.sqlite")
+    document = decoded(run(*store, "export", "loss-coarse", "loss.nc", "--json"))
+    assert document["format"] == "netCDF"
+    import xarray
+
+    with xarray.open_dataset(at_home / "loss.nc", engine="h5netcdf") as dataset:
+        assert dataset["atom_number"].attrs["units"]
+        assert dataset.sizes["coil_current"] == 31
+    refused = run(*store, "export", "loss-coarse", "loss.nc")
+    assert refused.code == 2
+    assert "--force" in refused.err
+    assert run(*store, "export", "loss-coarse", "loss.csv").code == 0
+    assert (at_home / "loss.csv").read_text().startswith("uid,")
+    assert run(*store, "export", "loss-coarse", "loss.csv", "--force").code == 0
+    assert sorted(path.name for path in at_home.iterdir()) == ["loss.csv", "loss.nc"]
+
+
+# ---------------------------------------------------------------- fitting
+
+
+def test_fit(copy: Path, run: Run) -> None:
+    answer = run(
+        "--store", copy, "fit", "loss-coarse", "lorentzian", "gaussian", "-o", "atom_number", "--json"
+    )
+    assert answer.code == 0
+    fits = decoded(answer)["fits"]
+    assert [fit["model"] for fit in fits] == ["lorentzian", "gaussian"]
+    fit = fits[0]
+    keys = {"scan", "model", "observable", "slice", "estimates", "trusted", "warnings", "shots", "set_aside"}
+    assert keys <= set(fit)
+    assert (fit["scan"], fit["slice"], fit["shots"]) == ("loss-coarse#1", {}, 61)
+    center = fit["estimates"]["center"]
+    assert set(center) == {"value", "stderr", "interval68", "interval95", "unit"}
+    assert center["interval95"][0] < center["interval68"][0] < center["value"]
+    assert center["unit"] == "A"
+    kept = decoded(run("--store", copy, "fits", "loss-coarse", "--json"))["fits"]
+    assert [item["model"] for item in kept] == ["lorentzian", "gaussian"]
+    assert kept[0]["estimates"]["center"]["value"] == pytest.approx(center["value"])
+
+
+def test_fit_that_is_not_kept(copy: Path, run: Run) -> None:
+    words = [
+        "fit",
+        "loss-coarse",
+        "lorentzian",
+        "--plain",
+        "--background",
+        "sloped",
+        "--fixed",
+        "fwhm=0.92",
+        "--no-keep",
+        "--json",
+    ]
+    fit = decoded(run("--store", copy, *words))["fits"][0]
+    assert fit["estimates"]["fwhm"]["value"] == 0.92
+    assert fit["estimates"]["fwhm"]["stderr"] == 0
+    assert "slope" in fit["estimates"]
+    assert decoded(run("--store", copy, "fits", "--json"))["fits"] == []
+
+
+def test_fit_slice_by_slice(copy: Path, run: Run) -> None:
+    words = ["fit", "evaporation-map", "gaussian", "--along", "evaporate#3.end_power", "--no-keep", "--json"]
+    fits = decoded(run("--store", copy, *words))["fits"]
+    assert len(fits) == 5
+    assert list(fits[0]["slice"]) == ["evaporate#3.duration"]
+    assert all(fit["along"] == "evaporate#3.end_power" for fit in fits)
+
+
+def test_fit_in_a_pipe_warns_on_stderr(copy: Path, run: Run) -> None:
+    answer = run("--store", copy, "fit", "loss-coarse", "lorentzian", "-o", "temperature", "--no-keep")
+    head, *lines = answer.out.splitlines()
+    assert head == "estimate\tvalue\tstderr\tunit\tlow95\thigh95"
+    assert all(line.count("\t") == 5 for line in lines)
+    assert "do not trust this: " in answer.err
+
+
+def test_demo_refuses_a_folder_in_use(run: Run, at_home: Path) -> None:
+    (at_home / "nightfold-demo").mkdir()
+    (at_home / "nightfold-demo" / "mine.txt").touch()
+    answer = run("demo")
+    assert answer.code == 2
+    assert "not empty" in answer.err
+
+
+def test_in_a_process_of_its_own(heron: Path, in_a_process: Run) -> None:
+    answer = in_a_process("nights", "--json", NIGHTFOLD_STORE=str(heron / "heron.sqlite"))
+    assert answer.code == 0
+    assert decoded(answer)["nights"]
