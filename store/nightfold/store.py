@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import copy
 import os
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from datetime import datetime
 from pathlib import Path
 from types import TracebackType
@@ -96,11 +96,13 @@ class Store:
 
         Notes
         -----
-        Records are taken in batches of 500, each one transaction. Handing the same records over again is harmless.
+        Records are taken in batches, each one transaction: one by one from an iterator that makes us wait for each
+        (so that a shot is safe as soon as it is handed over), up to 500 from one that does not. Handing the same
+        records over again is harmless.
         """
         stream = (
-            Incoming(_own(record), "records", number, number)
-            for number, record in enumerate(_refuse_one(records), 1)
+            Incoming(record, "records", number, number)
+            for number, record in enumerate(_own(records), 1)
         )
         return self._writer.take(stream, progress=progress)
 
@@ -450,23 +452,11 @@ def _listed(names: Sequence[str]) -> Sequence[str]:
     return (names,) if isinstance(names, str) else tuple(names)
 
 
-def _own(record: Any) -> Any:
-    """Return a copy of a record that stays as it is when the caller goes on to change and reuse his."""
-    if not isinstance(record, Mapping):
-        return record
-    own = dict(record)
-    for name, value in own.items():
-        if name in ("parameters", "observables") and isinstance(value, Mapping):
-            own[name] = {key: item.copy() if type(item) is dict else item for key, item in value.items()}
-        elif isinstance(value, (list, Mapping)):
-            own[name] = copy.deepcopy(value)
-    return own
-
-
-def _refuse_one(records: Iterable[Mapping[str, Any]]) -> Iterable[Mapping[str, Any]]:
-    """Return the records, unless a single one was handed over, which would be taken apart key by key."""
-    if isinstance(records, (Mapping, str, bytes)):
-        raise TypeError(
-            f"take: found one {type(records).__name__}, wanted an iterable of records such as [record]"
-        )
-    return records
+def _own(records: Iterable[Mapping[str, Any]]) -> Iterator[Any]:
+    """Yield the records; those of a generator as copies, for it may go on to change and reuse what it gave."""
+    if isinstance(records, (Mapping, str, bytes)):  # it would be taken apart key by key
+        raise TypeError(f"take: found one {type(records).__name__}, wanted an iterable of records such as [record]")
+    if isinstance(records, (list, tuple)):
+        yield from records
+    else:
+        yield from map(copy.deepcopy, records)

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
+import time
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
-from itertools import islice
 from typing import Any, Protocol
 
 from sqlalchemy import Connection, Row, select
@@ -24,6 +24,7 @@ from nightfold.session import Session, turn_of
 from nightfold.timestamps import now_us
 
 BATCH = 500
+PATIENCE_S = 0.02
 
 
 class ScanPlacer(Protocol):
@@ -230,6 +231,16 @@ def _uid(shot: CheckedShot | _Late) -> str:
 
 
 def _batches(records: Iterable[Incoming]) -> Iterator[Sequence[Incoming]]:
-    stream = iter(records)
-    while batch := list(islice(stream, BATCH)):
-        yield batch
+    """Yield the records in batches that double up to 500, and at once whatever there is when one was waited for."""
+    stream, size, batch = iter(records), 1, list[Incoming]()
+    while True:
+        asked = time.monotonic()
+        item = next(stream, None)
+        waited = time.monotonic() - asked > PATIENCE_S
+        if item is not None:
+            batch.append(item)
+        if batch and (item is None or waited or len(batch) >= size):
+            yield batch
+            size, batch = (1 if waited else min(2 * size, BATCH)), []
+        if item is None:
+            return
