@@ -65,11 +65,10 @@ def dwell_lengths(changes: Sequence[Names]) -> list[int]:
 def is_steady(lengths: Sequence[int]) -> bool:
     """Return whether points were held for the same number of shots each, as in repeats in a row.
 
-    A last point cut short is forgiven, twice the number is allowed (where a sweep turns round), and
-    one point in four may be off (shots get lost, or tried again).
+    A last point cut short is forgiven, and one point in four may be off (shots get lost, or tried again).
     """
     common = Counter(lengths).most_common()
     usual = min(length for length, count in common if count == common[0][1])
     judged = lengths[:-1] if lengths[-1] < usual else lengths
-    odd = sum(length not in (usual, 2 * usual) for length in judged)
+    odd = sum(length != usual for length in judged)
     return len(judged) >= 2 and odd <= 0.25 * len(judged)
