@@ -115,11 +115,13 @@ def interval(value: Floats, spread: Floats, dof: Floats, link: Link, level: floa
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
         half = np.where(spread == 0, 0.0, reach * spread)
         if link == "log":
-            return np.asarray(value * np.exp(-half)), np.asarray(value * np.exp(half))
-        if link == "reciprocal":
-            rate = 1.0 / value
-            return np.asarray(1.0 / (rate + half)), np.asarray(1.0 / np.maximum(rate - half, 0.0))
-        return value - half, value + half
+            low, high = value * np.exp(-half), value * np.exp(half)
+        elif link == "reciprocal":
+            low, high = 1.0 / (1.0 / value + half), 1.0 / np.maximum(1.0 / value - half, 0.0)
+        else:
+            low, high = value - half, value + half
+    known = half == 0
+    return np.where(known, value, low), np.where(known, value, high)
 
 
 def t_quantile(probability: float, dof: Floats) -> Floats:
