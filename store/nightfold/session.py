@@ -15,7 +15,18 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import URL, Connection, Engine, create_engine, event, make_url, select, text, update
+from sqlalchemy import (
+    URL,
+    Connection,
+    Engine,
+    QueuePool,
+    create_engine,
+    event,
+    make_url,
+    select,
+    text,
+    update,
+)
 from sqlalchemy.exc import DatabaseError, OperationalError, SQLAlchemyError
 
 from nightfold import tables
@@ -198,7 +209,7 @@ def _sqlite_engine(path: Path, read_only: bool) -> Engine:
             address, timeout=_WAIT_S, isolation_level=None, check_same_thread=False, uri=read_only
         )
 
-    engine = create_engine("sqlite+pysqlite://", creator=connect)
+    engine = create_engine("sqlite+pysqlite://", creator=connect, poolclass=QueuePool)
 
     @event.listens_for(engine, "connect")
     def prepare(connection: Any, _record: Any) -> None:

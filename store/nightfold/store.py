@@ -101,8 +101,7 @@ class Store:
         records over again is harmless.
         """
         stream = (
-            Incoming(record, "records", number, number)
-            for number, record in enumerate(_own(records), 1)
+            Incoming(record, "records", number, number) for number, record in enumerate(_own(records), 1)
         )
         return self._writer.take(stream, progress=progress)
 
@@ -291,7 +290,7 @@ class Store:
 
     def scans(self) -> list[Scan]:
         """Return every scan, oldest first."""
-        from nightfold.scans.scan import list_scans
+        from nightfold.scans.listing import list_scans
 
         return list_scans(self._session)
 
@@ -305,7 +304,7 @@ class Store:
         ChoiceNeeded
             If the label is used by several sequences.
         """
-        from nightfold.scans.scan import find_scan
+        from nightfold.scans.listing import find_scan
 
         return find_scan(self._session, key)
 
@@ -455,7 +454,9 @@ def _listed(names: Sequence[str]) -> Sequence[str]:
 def _own(records: Iterable[Mapping[str, Any]]) -> Iterator[Any]:
     """Yield the records; those of a generator as copies, for it may go on to change and reuse what it gave."""
     if isinstance(records, (Mapping, str, bytes)):  # it would be taken apart key by key
-        raise TypeError(f"take: found one {type(records).__name__}, wanted an iterable of records such as [record]")
+        raise TypeError(
+            f"take: found one {type(records).__name__}, wanted an iterable of records such as [record]"
+        )
     if isinstance(records, (list, tuple)):
         yield from records
     else:

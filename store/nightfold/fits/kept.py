@@ -12,13 +12,14 @@ import numpy as np
 from sqlalchemy import Connection, Row, insert, select
 
 from nightfold import __version__, tables
-from nightfold.errors import FitError, NightfoldError
+from nightfold.errors import FitError, NotFound
 from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult, FitWarning
 from nightfold.fits.scanfit import FitRequest, SliceFit, digest_data, fit_slices, slice_rows
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.selecting import scan_key
-from nightfold.scans.scan import Scan, find_scan
+from nightfold.scans.listing import find_scan
+from nightfold.scans.scan import Scan
 from nightfold.session import Session
 from nightfold.timestamps import from_us, now_us
 
@@ -291,7 +292,7 @@ def _current_digests(session: Session, rows: Sequence[Row[Any]]) -> dict[int, by
                     continue
                 chosen = table.iloc[found[0]]
             digests[row.id] = digest_data(chosen, row.along, row.observable)
-        except (NightfoldError, KeyError):
+        except (NotFound, KeyError):
             continue  # the scan, axis or observable is gone: the fit is stale
     return digests
 

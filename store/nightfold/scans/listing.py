@@ -1,0 +1,147 @@
+"""Finding scans in the store, one by its key or all of them."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from sqlalchemy import Connection, Row, func, select
+
+from nightfold import tables
+from nightfold.errors import ChoiceNeeded, NotFound
+from nightfold.ledger.selecting import near_miss, set_aside_now
+from nightfold.scans.scan import Scan
+from nightfold.session import Session
+from nightfold.timestamps import from_us, now_us
+
+IDLE_CYCLES = 5
+_FIRST_CYCLE_US = 60_000_000
+
+
+def list_scans(session: Session) -> list[Scan]:
+    """Return every scan, in the order in which they began."""
+    with session.reading() as connection:
+        return _read_scans(connection, session, None)
+
+
+def find_scan(session: Session, key: int | str) -> Scan:
+    """Return the scan that an id, a label (newest round) or ``label#round`` names.
+
+    Raises
+    ------
+    NotFound
+        If there is none.
+    ChoiceNeeded
+        If several sequences use the label.
+    """
+    with session.reading() as connection:
+        found = _read_scans(connection, session, _find_id(connection, key))
+    if not found:
+        raise NotFound(f"scan {key!r}: it has no shots any more")
+    return found[0]
+
+
+def _find_id(connection: Connection, key: int | str) -> int:
+    scan = tables.scan
+    query = select(scan.c.id, scan.c.label, scan.c.round, scan.c.sequence_id)
+    rows: list[Row[Any]] = list(connection.execute(query))
+    if isinstance(key, int) and not isinstance(key, bool):
+        found = [row for row in rows if row.id == key]
+    else:
+        found = _by_text(rows, str(key))
+    if not found:
+        known = near_miss(str(key), dict.fromkeys(row.label for row in rows if row.label is not None))
+        raise NotFound(f"scan {key!r}: not among the {len(rows)} scans of this store; of labels {known}")
+    if len({row.sequence_id for row in found}) > 1:
+        choices = ", ".join(str(row.id) for row in found)
+        raise ChoiceNeeded(f"scan {key!r}: several sequences use this label; name it by id: {choices}")
+    return int(max(found, key=lambda row: row.round).id)
+
+
+def _by_text(rows: list[Row[Any]], key: str) -> list[Row[Any]]:
+    """Return the scans that a text names: as a whole label first, then ``label#round``, then an id."""
+    found = [row for row in rows if row.label == key]
+    label, mark, number = key.rpartition("#")
+    if not found and mark and number.isascii() and number.isdigit():
+        found = [row for row in rows if row.label == label and row.round == int(number)]
+    if not found and key.isascii() and key.isdigit():
+        found = [row for row in rows if row.id == int(key)]
+    return found
+
+
+def _read_scans(connection: Connection, session: Session, scan_id: int | None) -> list[Scan]:
+    scan, shot, sequence, machine = tables.scan, tables.shot, tables.sequence, tables.machine
+    taken = (
+        select(
+            shot.c.scan_id, func.count().label("taken"),
+            func.min(shot.c.started_us).label("first_us"), func.max(shot.c.started_us).label("last_us"),
+        )
+        .where(shot.c.scan_id.isnot(None) if scan_id is None else shot.c.scan_id == scan_id)
+        .group_by(shot.c.scan_id)
+        .subquery()
+    )  # fmt: skip
+    query = (
+        select(
+            scan, sequence.c.name.label("sequence"), machine.c.name.label("machine"), machine.c.zone,
+            machine.c.id.label("machine_id"), taken.c.taken, taken.c.first_us, taken.c.last_us,
+        )
+        .join(taken, taken.c.scan_id == scan.c.id)
+        .join(sequence, sequence.c.id == scan.c.sequence_id)
+        .join(machine, machine.c.id == sequence.c.machine_id)
+        .order_by(taken.c.first_us, scan.c.id)
+    )  # fmt: skip
+    rows = list(connection.execute(query))
+    aside = _set_aside_counts(connection, scan_id)
+    newest = {key: _newest_first_us(connection, key) for key in {row.sequence_id for row in rows}}
+    return [_make_scan(row, session, aside.get(row.id, 0), newest) for row in rows]
+
+
+def _make_scan(row: Row[Any], session: Session, aside: int, newest: Mapping[int, int]) -> Scan:
+    return Scan(
+        id=row.id,
+        label=row.label,
+        round=row.round,
+        machine=row.machine,
+        sequence=row.sequence,
+        zone=row.zone,
+        origin=row.origin,
+        shots=row.taken - aside,
+        set_aside=aside,
+        first=from_us(row.first_us),
+        last=from_us(row.last_us),
+        complete=_is_complete(row, newest[row.sequence_id]),
+        _session=session,
+        _machine_id=row.machine_id,
+    )
+
+
+def _is_complete(row: Row[Any], newest_first_us: int) -> bool:
+    """Planned shots reached, said to be the last, overtaken by a later scan of its sequence, or idle for 5 cycles."""
+    if row.closed_us is not None or (row.planned_shots is not None and row.taken >= row.planned_shots):
+        return True
+    if newest_first_us > row.last_us:
+        return True
+    cycle = (row.last_us - row.first_us) / (row.taken - 1) if row.taken > 1 else _FIRST_CYCLE_US
+    return bool(now_us() - row.last_us > IDLE_CYCLES * cycle)
+
+
+def _newest_first_us(connection: Connection, sequence_id: int) -> int:
+    """Return when the scan to which a sequence's newest scanned shot belongs began."""
+    shot = tables.shot
+    newest = (
+        select(shot.c.scan_id)
+        .where(shot.c.sequence_id == sequence_id, shot.c.scan_id.isnot(None))
+        .order_by(shot.c.started_us.desc())
+        .limit(1)
+        .scalar_subquery()
+    )
+    return (
+        connection.execute(select(func.min(shot.c.started_us)).where(shot.c.scan_id == newest)).scalar() or 0
+    )
+
+
+def _set_aside_counts(connection: Connection, scan_id: int | None) -> dict[int, int]:
+    shot = tables.shot
+    query = select(shot.c.scan_id, func.count()).where(set_aside_now(shot.c.id))
+    query = query.where(shot.c.scan_id.isnot(None) if scan_id is None else shot.c.scan_id == scan_id)
+    return dict(connection.execute(query.group_by(shot.c.scan_id)).tuples().all())
