@@ -7,7 +7,7 @@ from collections.abc import Collection, Mapping
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.concise import asymmetric, interval, plain
-from nightfold_cli.render import Column, Row
+from nightfold_cli.layout import Column, Row
 
 if TYPE_CHECKING:
     from nightfold.fits.estimate import Estimate

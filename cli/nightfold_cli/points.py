@@ -63,7 +63,7 @@ def points_of(table: pd.DataFrame, axes: Sequence[str], observables: Sequence[st
     axes, observables : sequence of str
         Columns to group by, columns to average.
     """
-    from nightfold.scans.axes import encode
+    from nightfold.scans.columns import encode
 
     columns = [encode(table[axis].tolist()) for axis in axes]
     groups: dict[tuple[int, ...], list[int]] = {}

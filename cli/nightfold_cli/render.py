@@ -13,69 +13,18 @@ import shutil
 import sys
 import textwrap
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Literal, TextIO
 
 from nightfold_cli.canvas import Line
 from nightfold_cli.jsonout import document
+from nightfold_cli.layout import Cell, Column, Row, cell_text, lay_out
 from nightfold_cli.printable import printable
 
 if TYPE_CHECKING:
     from rich.console import Console
 
-_GAP = 2
 _STYLES = {"axis": "dim", "curve": "cyan", "data": "bold", "label": "", "plain": ""}
 _WIDEST_TEXT = 100
-_WIDEST_WORD = 24
-
-
-@dataclass(frozen=True, slots=True)
-class Cell:
-    """A cell that reads differently on a screen, where it may have several lines, and in a pipe."""
-
-    screen: str
-    plain: str = ""
-    strong: bool = False
-
-    @classmethod
-    def of(cls, lines: Sequence[str], plain: str | None = None) -> Cell:
-        """Return a cell of several lines; in a pipe they are parted by semicolons."""
-        kept = [printable(line) for line in lines]
-        return cls("\n".join(kept), "; ".join(line for line in kept if line) if plain is None else plain)
-
-
-@dataclass(frozen=True, slots=True)
-class Column:
-    """A column of a table.
-
-    Attributes
-    ----------
-    name : str
-        What stands above it.
-    right : bool
-        Whether it is aligned to the right, as numbers are.
-    spare : int
-        0 for a column that is always shown; others are left out on a narrow screen, the highest first.
-    wraps : bool
-        Whether long cells may run over several lines.
-    least : int
-        How wide a column that wraps must stay before spare ones go.
-    plain_name : str
-        The name in a pipe, where it differs.
-    quiet : bool
-        Whether nothing is said when there is no room for it.
-    """
-
-    name: str
-    right: bool = False
-    spare: int = 0
-    wraps: bool = False
-    least: int = 0
-    plain_name: str = ""
-    quiet: bool = False
-
-
-Row = Sequence[str | Cell]
 
 
 class Screen:
@@ -144,7 +93,12 @@ class Screen:
         if not self.terminal:
             return
         self.gap()
-        self._runs([(printable(title), "bold"), ("  " + printable(detail) if detail else "", "")])
+        title, detail = printable(title), printable(detail)
+        if len(title) + len(detail) + 2 <= self.width:
+            self._runs([(title, "bold"), ("  " + detail if detail else "", "")])
+            return
+        self._wrapped(title, "", "bold")
+        self._wrapped(detail, "  ", "")
 
     def text(self, text: str, *, strong: bool = False, indent: str = "") -> None:
         """Write a sentence of the answer, wrapped on a terminal."""
@@ -167,7 +121,7 @@ class Screen:
 
     def fields(self, pairs: Iterable[tuple[str, str | Cell]]) -> None:
         """Write names and values below each other."""
-        listed = [(name, _of(value, self.terminal)) for name, value in pairs]
+        listed = [(name, cell_text(value, screen=self.terminal)) for name, value in pairs]
         if not self.terminal:
             self._tabbed([[name, value] for name, value in listed])
             return
@@ -188,7 +142,7 @@ class Screen:
         listed = [list(row) for row in rows]
         if not self.terminal:
             self._tabbed([[column.plain_name or column.name for column in columns]])
-            self._tabbed([[_of(cell, screen=False) for cell in row] for row in listed])
+            self._tabbed([[cell_text(cell, screen=False) for cell in row] for row in listed])
             if not listed:
                 self.say(empty)
             return
@@ -200,40 +154,19 @@ class Screen:
 
     def _drawn(self, columns: Sequence[Column], rows: Sequence[Row], spaced: bool) -> None:
         """Draw a table on the terminal with the columns there is room for."""
-        from rich.table import Table
-        from rich.text import Text
-
-        texts = [[_of(cell, screen=True) for cell in row] for row in rows]
-        widths = [_width(column, [row[index] for row in texts]) for index, column in enumerate(columns)]
-        shown = _fitting(columns, widths, self.width)
-        table = Table(
-            box=None,
-            padding=(0, _GAP, 0, 0),
-            pad_edge=False,
-            show_edge=False,
-            header_style="bold",
-        )
-        for index in shown:
-            column = columns[index]
-            table.add_column(
-                Text(column.name),
-                justify="right" if column.right else "left",
-                no_wrap=not column.wraps,
-                overflow="fold",
-                min_width=min(widths[index], self.width),
-            )
-        after_strong = False
-        for number, row in enumerate(rows):
+        laid = lay_out(columns, rows, self.width)
+        for line in laid.head:
+            self._styled(line, "bold")
+        after_strong = True
+        for row, lines in zip(rows, laid.rows, strict=True):
             strong = isinstance(row[0], Cell) and row[0].strong
-            if spaced and number and not after_strong:
-                table.add_row()
-            table.add_row(*(Text(texts[number][index]) for index in shown), style="bold" if strong else None)
+            if spaced and not after_strong:
+                self.gap()
+            for line in lines:
+                self._styled(line, "bold" if strong else "")
             after_strong = strong
-        self._rich().print(table)
-        left_out = (column for index, column in enumerate(columns) if index not in shown)
-        hidden = dict.fromkeys(column.name for column in left_out if not column.quiet)
-        if hidden:
-            self.note(f"no room for: {', '.join(hidden)}")
+        if laid.hidden:
+            self.note(f"no room for: {', '.join(laid.hidden)}")
 
     def _tabbed(self, rows: Iterable[Sequence[str]]) -> None:
         """Write lines of cells separated by tabs."""
@@ -301,37 +234,3 @@ def _can_show(stream: TextIO, characters: str) -> bool:
     except (UnicodeEncodeError, LookupError):
         return False
     return True
-
-
-def _of(cell: str | Cell, screen: bool) -> str:
-    """Return the text of a cell; a line break of ours survives on a screen."""
-    if isinstance(cell, str):
-        return printable(cell)
-    return (
-        "\n".join(map(printable, cell.screen.split("\n"))) if screen else printable(cell.plain or cell.screen)
-    )
-
-
-def _width(column: Column, cells: Sequence[str]) -> int:
-    """Return how wide a column must be: as its longest line, or its longest word where lines may wrap."""
-    from rich.cells import cell_len
-
-    texts = (column.name, *cells)
-    parts = [part for text in texts for part in (text.split() if column.wraps else text.split("\n"))]
-    longest = max((cell_len(part) for part in parts), default=0)
-    return max(column.least, min(longest, _WIDEST_WORD)) if column.wraps else longest
-
-
-def _fitting(columns: Sequence[Column], widths: Sequence[int], width: int) -> list[int]:
-    """Return which columns there is room for: spare ones go first, the most spare before all."""
-    shown = list(range(len(columns)))
-
-    def needed() -> int:
-        return sum(widths[index] + _GAP for index in shown) - _GAP
-
-    while needed() > width:
-        spare = max(shown, key=lambda index: (columns[index].spare, index))
-        if columns[spare].spare == 0:
-            break
-        shown.remove(spare)
-    return shown

@@ -56,9 +56,8 @@ def test_reads_back_to_half_the_last_digit(value: float, stderr: float) -> None:
         return
     back, back_stderr = parse_concise(text)
     quantum = 10.0 ** (math.floor(math.log10(stderr)) - 1)
-    assert abs(Decimal(back) - Decimal(value)) <= Decimal(quantum * 5.0001) + abs(Decimal(value)) * Decimal(
-        1e-15
-    )
+    rounding = abs(Decimal(value)) * Decimal("1e-15")
+    assert abs(Decimal(back) - Decimal(value)) <= Decimal(quantum * 5.0001) + rounding
     assert back_stderr == pytest.approx(stderr, rel=0.051)
 
 

@@ -6,28 +6,23 @@ import sys
 import time
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
-from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.arguments import positive
-from nightfold_cli.commands.fit import Slice, parts_of
 from nightfold_cli.concise import concise, interval, plain
-from nightfold_cli.estimates import LEVEL_95
 from nightfold_cli.failures import UsageError
+from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import compact, heading
 from nightfold_cli.opening import local_times, records
 from nightfold_cli.progress import Progress
-from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.render import Screen
 from nightfold_cli.settings import setting
+from nightfold_cli.truths import Found, fit_truths
 
 if TYPE_CHECKING:
-    from nightfold.fits.estimate import Estimate
-    from nightfold.fits.many import FitTable
-    from nightfold.fits.result import FitResult
     from nightfold.ledger.outcome import Intake
-    from nightfold.scans.scan import Scan
-    from nightfold.simulator import Campaign, TrueEdit, Truth
+    from nightfold.simulator import Campaign, TrueEdit
     from nightfold.store import Store
 
 HELP = "play six weeks of an invented machine"
@@ -49,28 +44,6 @@ def add_arguments(parser: ArgumentParser) -> None:
     parser.add_argument("--nights", metavar="N", type=positive, help="only the first so many nights")
 
 
-@dataclass(frozen=True, slots=True)
-class Found:
-    """A truth, and what a fit made of it; `estimate` is None where nothing could be fitted."""
-
-    truth: Truth
-    scan: str | None
-    estimate: Estimate | None
-    trusted: bool
-    problem: str = ""
-
-    @property
-    def interval95(self) -> tuple[float, float] | None:
-        """Return the 95 % interval."""
-        return self.estimate.interval(LEVEL_95) if self.estimate else None
-
-    @property
-    def held(self) -> bool | None:
-        """Return whether the 95 % interval holds the truth; None without an interval."""
-        ends = self.interval95
-        return None if ends is None else ends[0] <= self.truth.value <= ends[1]
-
-
 def run(args: Namespace) -> int:
     """Write the campaign, take it, fit it, compare."""
     from nightfold.simulator import write_campaign
@@ -88,7 +61,7 @@ def run(args: Namespace) -> int:
         screen.store(store.where)
         store.use_card(campaign.card)
         intake = _take(store, campaign)
-        found = _fit(store, campaign.truths)
+        found = fit_truths(store, campaign.truths)
         edits = records(store.edits())
         if screen.json:
             screen.answer(_entry(store, campaign, intake, found, edits))
@@ -118,58 +91,6 @@ def _take(store: Store, campaign: Campaign) -> Intake:
             progress(count)
             total = total + store.take_file(path)
     return total
-
-
-def _fit(store: Store, truths: Sequence[Truth]) -> list[Found]:
-    """Fit the scan behind each truth."""
-    scans = store.scans()
-    found = []
-    with Progress("fitting scans", len(truths), sys.stderr) as progress:
-        for count, truth in enumerate(truths):
-            progress(count)
-            found.append(_found(store, truth, _scan_of(scans, truth)))
-    return found
-
-
-def _scan_of(scans: Sequence[Scan], truth: Truth) -> Scan | None:
-    """Return the scan a truth speaks of: by its key, or by sequence and time where it has no label."""
-    for scan in scans:
-        if scan.key == truth.scan:
-            return scan
-    within = [
-        scan
-        for scan in scans
-        if scan.sequence == truth.sequence
-        and scan.first <= truth.last
-        and scan.last >= truth.first
-        and {axis.parameter for axis in scan.axes} >= set(truth.swept[:1])
-    ]
-    return max(within, key=lambda scan: scan.shots, default=None)
-
-
-def _found(store: Store, truth: Truth, scan: Scan | None) -> Found:
-    """Fit one scan, and pick the estimate that the truth speaks of."""
-    from nightfold.errors import NightfoldError
-
-    if scan is None:
-        return Found(truth, None, None, False, "no such scan was found")
-    try:
-        outcome = store.fit(
-            scan, truth.model, observable=truth.observable, along=truth.along, background=truth.background
-        )
-    except NightfoldError as error:
-        return Found(truth, scan.key, None, False, str(error))
-    result = _slice(outcome, truth)
-    return Found(truth, scan.key, result.estimates[truth.parameter], result.trusted)
-
-
-def _slice(outcome: FitResult | FitTable, truth: Truth) -> FitResult:
-    """Return the fit of the slice a truth speaks of: the one nearest to where it is stated."""
-
-    def distance(part: Slice) -> float:
-        return sum(abs(float(part.where[name]) - value) for name, value in truth.where.items())
-
-    return min(parts_of(outcome), key=distance).result
 
 
 def _show_counts(screen: Screen, store: Store, campaign: Campaign, intake: Intake) -> None:

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
 
+from nightfold_cli.layout import Cell, Column
 from nightfold_cli.localtimes import compact, heading
 from nightfold_cli.opening import local_times, moment, opened, records
-from nightfold_cli.render import Cell, Column, Screen
+from nightfold_cli.render import Screen
 from nightfold_cli.settings import setting
 
 HELP = "list the settings that people changed"

@@ -12,12 +12,13 @@ from nightfold_cli import estimates
 from nightfold_cli.arguments import add_scan_key, named_number
 from nightfold_cli.charts import chart_of_points
 from nightfold_cli.failures import UsageError
+from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.opening import opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import points_of
 from nightfold_cli.progress import Progress
-from nightfold_cli.render import Cell, Column, Row, Screen
-from nightfold_cli.settings import setting
+from nightfold_cli.render import Screen
+from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
     from nightfold.fits.many import FitTable
@@ -204,16 +205,17 @@ def _show_slices(
         Column("trust", wraps=True),
     ]
     fixed = dict(args.fixed)
+    settings = [aligned([part.where[axis.parameter] for part in parts]) for axis in others]
     rows: list[Row] = [
         [
-            *(setting(part.where[axis.parameter]) for axis in others),
+            *(column[place] for column in settings),
             *(
                 estimates.value_text(estimate, fixed=name in fixed)
                 for name, estimate in part.result.estimates.items()
             ),
             _trust(part.result),
         ]
-        for part in parts
+        for place, part in enumerate(parts)
     ]
     screen.table(columns, rows, empty="no slices")
     doubted = [part for part in parts if not part.result.trusted]

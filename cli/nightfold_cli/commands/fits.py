@@ -9,9 +9,10 @@ from nightfold_cli import estimates
 from nightfold_cli.arguments import positive, scan_key
 from nightfold_cli.concise import short
 from nightfold_cli.estimates import value_text
+from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import compact, heading
 from nightfold_cli.opening import local_times, opened
-from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.render import Screen
 
 if TYPE_CHECKING:
     from nightfold.fits.kept import KeptFit

@@ -5,7 +5,8 @@ from __future__ import annotations
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.layout import Cell, Column, Row
+from nightfold_cli.render import Screen
 
 if TYPE_CHECKING:
     from nightfold.fits.models.shape import LineShape

@@ -6,17 +6,20 @@ from argparse import ArgumentParser, Namespace
 from typing import Any
 
 from nightfold_cli.arguments import positive
+from nightfold_cli.layout import Cell, Column
 from nightfold_cli.opening import local_times, opened, records
-from nightfold_cli.render import Cell, Column, Screen
+from nightfold_cli.render import Screen
 
 HELP = "list the nights, a line each"
 EXAMPLES = ("nightfold nights", "nightfold nights --last 7")
+_ON_SCREEN = 40
 
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("--machine", metavar="NAME", help="of this machine only")
-    parser.add_argument("--last", metavar="N", type=positive, help="the last N nights only")
+    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
+    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
 
 
 def run(args: Namespace) -> int:
@@ -27,7 +30,9 @@ def run(args: Namespace) -> int:
         times = local_times(store)
     if args.machine:
         nights = [night for night in nights if night["machine"] == args.machine]
-    nights = nights[-args.last :] if args.last else nights
+    last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(nights))
+    earlier = len(nights) - last
+    nights = nights[-last:] if last else []
     if screen.json:
         screen.answer({"nights": [_entry(night) for night in nights]})
         return 0
@@ -58,6 +63,8 @@ def run(args: Namespace) -> int:
     screen.table(columns, rows, empty="no shots yet; 'nightfold take FILE…' takes some in")
     if rows:
         screen.note(times.note(night["machine"] for night in nights))
+    if earlier > 0:
+        screen.note(f"{earlier} earlier ones not shown; --all shows them")
     return 0
 
 

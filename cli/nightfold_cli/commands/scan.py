@@ -11,13 +11,14 @@ from nightfold_cli.arguments import add_scan_key
 from nightfold_cli.charts import chart_of_points, map_of_points
 from nightfold_cli.concise import Scale, scale_of, short
 from nightfold_cli.failures import UsageError
+from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.plots import Label
-from nightfold_cli.points import Point, Reading, Setting, points_of
-from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.points import Point, Reading, points_of
+from nightfold_cli.render import Screen
 from nightfold_cli.scantext import axis_line, entry, repeats_text, status
-from nightfold_cli.settings import setting
+from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
     from nightfold.scans.scan import Scan
@@ -106,7 +107,7 @@ def _tabulate(
 ) -> None:
     """Draw a line a point: mean and scatter of single shots, to the same place in a whole column."""
     scales = {name: _scale([point.readings[name] for point in points]) for name in observables}
-    settings = [_aligned([point.at[rank] for point in points]) for rank in range(len(scan.axes))]
+    settings = [aligned([point.at[rank] for point in points]) for rank in range(len(scan.axes))]
     columns = [
         Column(_named(axis.parameter, axis.unit), right=axis.low is not None, plain_name=axis.parameter)
         for axis in scan.axes
@@ -155,15 +156,6 @@ def _cells(reading: Reading, scale: Scale | None) -> tuple[Cell, Cell]:
         Cell(text(reading.mean), repr(reading.mean)),
         Cell("± " + text(reading.scatter) if reading.count > 1 else "", repr(reading.scatter)),
     )
-
-
-def _aligned(values: Sequence[Setting]) -> list[Cell]:
-    """Return settings with the same number of decimals."""
-    texts = [setting(value) for value in values]
-    if any("e" in text or isinstance(value, str | bool) for text, value in zip(texts, values, strict=True)):
-        return [Cell(text) for text in texts]
-    decimals = max((len(text.partition(".")[2]) for text in texts), default=0)
-    return [Cell(f"{float(value):.{decimals}f}", text) for text, value in zip(texts, values, strict=True)]
 
 
 def _draw(screen: Screen, scan: Scan, points: Sequence[Point], observable: str, unit: str) -> None:

@@ -9,9 +9,10 @@ from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
 from nightfold_cli.arguments import positive
+from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.opening import local_times, moment, opened
-from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.render import Screen
 from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status
 
 if TYPE_CHECKING:

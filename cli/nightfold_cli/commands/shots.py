@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import math
+import re
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.arguments import positive, scan_key
 from nightfold_cli.concise import concise
 from nightfold_cli.failures import UsageError
+from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
 from nightfold_cli.opening import local_times, moment, opened, records
-from nightfold_cli.render import Cell, Column, Row, Screen
+from nightfold_cli.render import Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
@@ -25,6 +27,8 @@ EXAMPLES = (
     "nightfold shots 5f3a9c0e",
 )
 _ON_SCREEN = 40
+_DIGEST = re.compile("[0-9a-f]{32}")
+_DIGITS = 12
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -109,7 +113,7 @@ def _draw(
     ]
     lines: list[Row] = [
         [
-            str(row["uid"]),
+            Cell(_short(str(row["uid"])), str(row["uid"])),
             Cell(f"{when}:{at:%S}", at.isoformat(timespec="milliseconds")),
             setting(row["sequence"]),
             row["scan"] if isinstance(row["scan"], str) else "-",
@@ -120,6 +124,11 @@ def _draw(
     screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
     if lines:
         screen.note(times.note([machine]))
+
+
+def _short(uid: str) -> str:
+    """Return what is shown of a uid: the beginning of a derived one, which is a digest; others in full."""
+    return uid[:_DIGITS] if _DIGEST.fullmatch(uid) else uid
 
 
 def _cell(row: dict[str, Any], name: str) -> str:

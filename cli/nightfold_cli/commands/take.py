@@ -8,9 +8,10 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 from nightfold_cli.failures import NOT_FOUND, REFUSED, explain
+from nightfold_cli.layout import Column
 from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
-from nightfold_cli.render import Column, Screen
+from nightfold_cli.render import Screen
 
 if TYPE_CHECKING:
     from nightfold.intake.csvcolumns import CsvColumns

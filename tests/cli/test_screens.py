@@ -1,0 +1,144 @@
+from __future__ import annotations
+
+import json
+import shutil
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+Show = Callable[..., str]
+WIDTHS = pytest.mark.parametrize("width", [80, 120])
+
+
+def body(text: str) -> list[str]:
+    """Return the lines below the one that names the store."""
+    return text.rstrip("\n").split("\n")[1:]
+
+
+@pytest.fixture
+def where(heron: Path, at_home: Path) -> Path:
+    """Return a store of two nights that may be changed."""
+    return Path(shutil.copy(heron / "heron.sqlite", at_home / "copy.sqlite"))
+
+
+def test_nights_at_80(where: Path, on_screen: Show) -> None:
+    assert body(on_screen("--store", where, "nights")) == [
+        "",
+        "night           from   to     shots  set aside  scans  sequences",
+        "Mon 2026-09-28  20:03  01:09    186          2      3  hold-in-trap,",
+        "                                                       kick-and-hold, long-hold",
+        "Tue 2026-09-29  20:02  02:12    183          5      4  evaporate-and-look,",
+        "                                                       hold-in-trap, long-hold",
+        "no room for: machine, references",
+        "times in Europe/Vienna",
+    ]
+
+
+def test_scans_at_80(where: Path, on_screen: Show) -> None:
+    assert body(on_screen("--store", where, "scans", "--last", "2")) == [
+        "",
+        "scan                axes                   points  shots  from   atom_number",
+        "Tue 2026-09-29",
+        "evaporation-map#1   evaporate#3.end_power  8x5     40     23:57  ▁▂▄▄▅▆▇█",
+        "evaporate-and-look  0.3…1 W                x 1",
+        "                    evaporate#3.duration",
+        "                    0.8…2.4 s",
+        "",
+        "7                   hold_time              15      30     02:00  █▆▅▄▃▃▂▂▂▁▁▁",
+        "long-hold           500…21500 ms           x 2",
+        "times in Europe/Vienna",
+        "5 earlier ones not shown; --all shows them",
+    ]
+
+
+def test_scans_at_120(where: Path, on_screen: Show) -> None:
+    assert body(on_screen("--store", where, "scans", "--last", "2", width=120))[1:5] == [
+        "scan                axes                            points  shots  from   atom_number",
+        "Tue 2026-09-29",
+        "evaporation-map#1   evaporate#3.end_power 0.3…1 W   8x5     40     23:57  ▁▂▄▄▅▆▇█",
+        "evaporate-and-look  evaporate#3.duration 0.8…2.4 s  x 1",
+    ]
+
+
+@WIDTHS
+@pytest.mark.parametrize(
+    "command",
+    [
+        "nights",
+        "scans",
+        "scan loss-coarse",
+        "scan evaporation-map",
+        "shots --limit 5 -p coil_current -o atom_number -o temperature",
+        "shots heron-20260928-0003",
+        "edits",
+        "fit loss-coarse lorentzian",
+        "fit evaporation-map gaussian --along evaporate#3.end_power",
+        "fits",
+        "models",
+        "models damped-oscillation",
+    ],
+)
+def test_no_line_is_wider_than_the_screen(command: str, width: int, where: Path, on_screen: Show) -> None:
+    text = on_screen(*command.split(), "--store", where, width=width)
+    assert max(map(len, text.split("\n")[1:])) <= width
+
+
+def test_fit_ends_with_the_numbers(where: Path, on_screen: Show) -> None:
+    lines = body(on_screen("--store", where, "fit", "loss-coarse", "lorentzian", "-o", "atom_number"))
+    assert lines[1] == "loss-coarse#1  lorentzian  atom_number along coil_current, flat background"
+    assert "residuals, in units of their rms" in lines
+    start = lines.index("estimates  from 61 shots, 1 set aside")
+    assert lines[start + 2 : start + 7] == [
+        "estimate         value  unit   95 % interval",
+        "center      61.362(20)  A      61.321 … 61.403",
+        "fwhm         1.019(78)  A      0.874 … 1.189",
+        "amplitude  -7.01(28)e4  atoms  -7.58e4 … -6.44e4",
+        "offset     1.426(12)e5  atoms  1.401e5 … 1.451e5",
+    ]
+
+
+def test_a_fit_not_to_trust_says_so_in_words(where: Path, on_screen: Show) -> None:
+    lines = body(
+        on_screen("--store", where, "fit", "loss-coarse", "lorentzian", "-o", "temperature", "--no-keep")
+    )
+    start = lines.index("DO NOT TRUST THIS FIT")
+    assert lines[start + 1].startswith("  - no-feature: nothing stands out of the scatter")
+
+
+def test_scan_shows_points_and_a_chart(where: Path, on_screen: Show) -> None:
+    lines = body(on_screen("--store", where, "scan", "loss-coarse", "-o", "atom_number"))
+    assert lines[1:5] == [
+        "loss-coarse#1  hold-in-trap on heron, by label, complete",
+        "  axis   coil_current 58.4…64.4 A, 31 points",
+        "  shots  61, 2 a point, and 1 set aside",
+        "  taken  2026-09-28 20:13:59 to 20:29:28 CEST",
+    ]
+    assert "atom_number (1e3 atoms)" in lines
+    assert lines[-1] == "next: nightfold fit loss-coarse#1 MODEL -o atom_number"
+
+
+def test_map_of_two_axes(where: Path, on_screen: Show) -> None:
+    lines = body(on_screen("--store", where, "scan", "evaporation-map", "-o", "atom_number"))
+    assert sum(line.endswith("|") for line in lines) == 5
+    assert any("??" in line for line in lines)
+
+
+def test_demo_of_two_nights(at_home: Path, run: Callable[..., Any]) -> None:
+    answer = run("demo", "--nights", "2", "--json")
+    assert answer.code == 0
+    document = json.loads(answer.out)
+    assert document["schema"] == 1
+    assert document["store"] == "nightfold-demo/heron.sqlite"
+    assert document["new"] == document["shots"]
+    assert set(document["truths"][0]) >= {"what", "truth", "value", "stderr", "interval95"}
+    assert all(truth["value"] is not None for truth in document["truths"])
+    assert [set(change) for change in document["changes"]] == [{"truth", "found"}] * len(document["changes"])
+    assert (at_home / "nightfold-demo" / "heron.sqlite").exists()
+
+
+def test_demo_names_the_commands_to_go_on_with(on_screen: Show) -> None:
+    text = on_screen("demo", "mine", "--nights", "1")
+    assert "  nightfold --store mine/heron.sqlite scan loss-coarse#1\n" in text
+    assert "intervals hold the truth" in text
