@@ -16,8 +16,10 @@ SETS = 600
 @pytest.mark.parametrize("level", [0.6827, 0.95])
 @pytest.mark.parametrize("example", EXAMPLES.values(), ids=lambda e: e.model)
 def test_intervals_cover(example: Example, level: float) -> None:
-    table = fit_many(example.x, example.noisy(99, 0.05, (SETS,)), example.model, background=example.background)
-    least, most = binom.ppf([2e-4, 1 - 2e-4], SETS, level)
+    table = fit_many(
+        example.x, example.noisy(99, 0.05, (SETS,)), example.model, background=example.background
+    )
+    least, most = (binom.ppf(tail, SETS, level) for tail in (2e-4, 1 - 2e-4))
     for name, truth in example.truth.items():
         low, high = table.estimates[name].interval(level)
         middle = table.estimates[name].value

@@ -145,9 +145,15 @@ def test_small_line_on_a_huge_offset() -> None:
 
 
 def fixed_fits() -> list[Any]:
-    cases = [(model, (name,)) for model, example in EXAMPLES.items() for name in example.truth]
+    cases: list[tuple[str, tuple[str, ...]]] = [
+        (model, (name,)) for model, example in EXAMPLES.items() for name in example.truth
+    ]
     cases += [("damped-oscillation", ("phase", "offset")), ("damped-oscillation", ("amplitude", "phase"))]
-    cases += [("gaussian", ("slope", "amplitude")), ("gaussian", ("center", "fwhm")), ("exponential", ("amplitude",))]
+    cases += [
+        ("gaussian", ("slope", "amplitude")),
+        ("gaussian", ("center", "fwhm")),
+        ("exponential", ("amplitude",)),
+    ]
     return cases
 
 
@@ -257,7 +263,9 @@ def test_units_follow_from_those_of_x_and_y() -> None:
         "offset": "atoms",
         "slope": "atoms/G",
     }
-    result = fit_curve(SHORT, EXAMPLES["damped-oscillation"].noisy(1, 0.05), "damped-oscillation", unit_x="ms")
+    result = fit_curve(
+        SHORT, EXAMPLES["damped-oscillation"].noisy(1, 0.05), "damped-oscillation", unit_x="ms"
+    )
     assert units(result) == {
         "amplitude": "",
         "frequency": "1/ms",
@@ -269,7 +277,9 @@ def test_units_follow_from_those_of_x_and_y() -> None:
 
 def test_result_tells_what_was_done() -> None:
     example = EXAMPLES["lorentzian"]
-    result = fit_curve(example.x, example.noisy(1, 0.05), "lorentzian", fixed={"offset": 1.1}, weights="equal")
+    result = fit_curve(
+        example.x, example.noisy(1, 0.05), "lorentzian", fixed={"offset": 1.1}, weights="equal"
+    )
     assert (result.model, result.background, result.n, result.dof) == ("lorentzian", "flat", 31, 28)
     assert result.settings == {
         "weights": "equal",

@@ -19,7 +19,9 @@ def assert_same_as_single(table: FitTable, example: Example, Y: np.ndarray, **op
             column = table.estimates[name]
             assert column.value[row] == pytest.approx(estimate.value, rel=1e-7)
             assert column.stderr[row] == pytest.approx(estimate.stderr, rel=1e-5)
-            assert [limit[row] for limit in column.interval(0.95)] == pytest.approx(estimate.interval(0.95), rel=1e-6)
+            assert [limit[row] for limit in column.interval(0.95)] == pytest.approx(
+                estimate.interval(0.95), rel=1e-6
+            )
         assert bool(table.trusted[row]) == single.trusted
         assert [w.code for w in table.warnings[row]] == [w.code for w in single.warnings]
         assert table.n[row] == single.n
@@ -51,7 +53,9 @@ def test_batched_equals_single_with_stderr_row_by_row() -> None:
     stderr = np.random.default_rng(6).uniform(0.02, 0.1, Y.shape)
     table = fit_many(example.x, Y, "gaussian", stderr=stderr, weights="given", background="sloped")
     for row in range(len(Y)):
-        single = fit_curve(example.x, Y[row], "gaussian", stderr=stderr[row], weights="given", background="sloped")
+        single = fit_curve(
+            example.x, Y[row], "gaussian", stderr=stderr[row], weights="given", background="sloped"
+        )
         for name, estimate in single.estimates.items():
             assert table.estimates[name].value[row] == pytest.approx(estimate.value, rel=1e-6)
             assert table.estimates[name].stderr[row] == pytest.approx(estimate.stderr, rel=1e-4)
@@ -89,5 +93,7 @@ def test_no_rows_give_an_empty_table() -> None:
 
 
 def test_columns_must_match_x() -> None:
-    with pytest.raises(FitError, match=re.escape("Y: found shape (2, 4), wanted one column for each of the 3 x")):
+    with pytest.raises(
+        FitError, match=re.escape("Y: found shape (2, 4), wanted one column for each of the 3 x")
+    ):
         fit_many([1.0, 2.0, 3.0], np.zeros((2, 4)), "lorentzian")

@@ -38,7 +38,9 @@ def test_shifting_x_shifts_the_center_alone(model: str, seed: int, shift: float)
     one, other = fit(example, example.x, y), fit(example, example.x + shift, y)
     for name, estimate in one.estimates.items():
         moved = other.estimates[name]
-        assert moved.value - (shift if name == "center" else 0.0) == pytest.approx(estimate.value, rel=1e-5, abs=1e-6)
+        assert moved.value - (shift if name == "center" else 0.0) == pytest.approx(
+            estimate.value, rel=1e-5, abs=1e-6
+        )
         assert moved.stderr == pytest.approx(estimate.stderr, rel=1e-5)
 
 

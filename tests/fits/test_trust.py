@@ -46,7 +46,9 @@ def test_no_feature_says_how_often_chance_does_as_well() -> None:
     y = 1.0 + 0.1 * np.random.default_rng(35).normal(size=31)
     found = fit_curve(FIELD, y, "lorentzian")
     assert not found.trusted
-    assert "% of random shuffles of the shots look as much like a lorentzian line" in message(found, "no-feature")
+    assert "% of random shuffles of the shots look as much like a lorentzian line" in message(
+        found, "no-feature"
+    )
 
 
 def test_constant_values_have_no_feature() -> None:

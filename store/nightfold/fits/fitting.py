@@ -62,7 +62,7 @@ class Outcome:
         """The p value of "nothing but background" of each data set, worked out when first asked for."""
         p = np.zeros(len(self.value))
         for group in self.groups:
-            p[group.rows] = group.feature_p()
+            p[group.rows] = group.feature_p(self.variance[group.rows])
         return p
 
 

@@ -10,7 +10,7 @@ import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats, Ints
 from nightfold.fits.engine.data import DataSets
-from nightfold.fits.engine.feature import permutation_p
+from nightfold.fits.engine.feature import constant_p, permutation_p
 from nightfold.fits.engine.frame import make_frame
 from nightfold.fits.engine.grid import Grid, choose_starts, general_sse, make_grid, place_starts
 from nightfold.fits.engine.reduction import Reduction, reduce_points
@@ -95,11 +95,13 @@ class Group:
         sets, points = choose_starts(layout, theta, sse, reference)
         return sets, theta[points]
 
-    def feature_p(self) -> Floats:
-        """Return the p value of "nothing but background" of each data set; zero where it cannot be asked."""
+    def feature_p(self, variance: Floats) -> Floats:
+        """Return the p value of "nothing but background" of each data set, residual variances given."""
         layout = self.request.layout
         if not layout.shape.searchable:
-            return np.zeros(len(self.rows))
+            spare = self.data.u.shape[1] - layout.free_count
+            sse = variance / self.data.frame.ys**2 * spare
+            return constant_p(self.data.z, self.roots, sse, layout.free_count)
         null = "sloped" if layout.background == "sloped" else "flat"
         same = layout.background == null and layout.all_columns_free and not self.request.start
         grid = self.start_grid if same else self.grid(null, start=False)

@@ -16,9 +16,9 @@ def adopt_lmfit(
 ) -> NumericShape:
     """Return the shape of an `lmfit.Model`.
 
-    Its start comes from `start`, then the values set on the model, then its own guess. Parameters that are
-    expressions of others (``fwhm`` of a peak, say) follow the others and are not reported; those set not to
-    vary must be given in `fixed`.
+    Its start comes from `start`, then the values set on the model, then its own guess, then its defaults.
+    Parameters that are expressions of others (``fwhm`` of a peak, say) follow the others and are not
+    reported; those set not to vary must be given in `fixed`.
 
     Raises
     ------
@@ -34,10 +34,10 @@ def adopt_lmfit(
     if still:
         value = parameters[still[0]].value
         raise FitError(f"{model.name}: {still[0]} is set not to vary; give fixed={{'{still[0]}': {value:g}}}")
-    values = {n: float(parameters[n].value) for n in names if _has_value(parameters[n])}
-    if any(n not in values and n not in start and n not in fixed for n in names):
+    values = _hints(model, names) | start | fixed
+    if any(n not in values for n in names):
         values = _guess(model, x, y, variable, names) | values
-    values |= start | fixed
+    values = {n: float(parameters[n].value) for n in names if _has_value(parameters[n])} | values
     limits = {n: (float(parameters[n].min), float(parameters[n].max)) for n in names}
     bounds = {n: pair for n, pair in limits.items() if np.isfinite(pair).any()}
     direct = not hasattr(model, "op") and all(parameters[n].expr is None for n in model.param_names)
@@ -53,6 +53,14 @@ def adopt_lmfit(
         return np.broadcast_to(np.asarray(found, dtype=np.float64), x.shape)
 
     return build_shape(str(model.name), names, None, evaluate, values, bounds, x, fixed)
+
+
+def _hints(model: Any, names: tuple[str, ...]) -> dict[str, float]:
+    """Return the values a person set on the model, of a composite one on its parts."""
+    if hasattr(model, "op"):
+        return _hints(model.left, names) | _hints(model.right, names)
+    hints = {f"{model.prefix}{n}": hint.get("value") for n, hint in model.param_hints.items()}
+    return {n: float(value) for n, value in hints.items() if value is not None and n in names}
 
 
 def _has_value(parameter: Any) -> bool:

@@ -227,6 +227,7 @@ class FitTable:
                 float(out.dof[row]),
                 bool(out.converged[row]),
                 float(out.feature_p[row]),
+                layout.shape.searchable,
                 bool(out.constant[row]),
                 out.request.unit_x,
             )

@@ -46,7 +46,9 @@ def test_derivatives_match_differences(shape: LineShape) -> None:
 @pytest.mark.parametrize("background", ["none", "flat", "sloped"])
 @pytest.mark.parametrize("fixed", [frozenset[str](), frozenset({"offset"})], ids=["free", "offset fixed"])
 @pytest.mark.parametrize("shape", SHAPES, ids=lambda s: type(s).__name__)
-def test_reported_derivatives_match_differences(shape: LineShape, background: str, fixed: frozenset[str]) -> None:
+def test_reported_derivatives_match_differences(
+    shape: LineShape, background: str, fixed: frozenset[str]
+) -> None:
     if fixed and background == "none":
         pytest.skip("no offset to fix")
     layout = Layout(shape, background, fixed)  # type: ignore[arg-type]
@@ -56,7 +58,9 @@ def test_reported_derivatives_match_differences(shape: LineShape, background: st
     q, dq = layout.report(theta, c, frame)
     assert q.shape == (1, len(layout.names))
     for j in range(theta.shape[1]):
-        assert dq[:, :, j] == pytest.approx(central(lambda t: layout.report(t, c, frame)[0], theta, j), rel=1e-6, abs=1e-7)
+        assert dq[:, :, j] == pytest.approx(
+            central(lambda t: layout.report(t, c, frame)[0], theta, j), rel=1e-6, abs=1e-7
+        )
     for j in range(c.shape[1]):
         wanted = central(lambda k: layout.report(theta, k, frame)[0], c, j)
         assert dq[:, :, theta.shape[1] + j] == pytest.approx(wanted, rel=1e-6, abs=1e-7)
@@ -76,7 +80,7 @@ def test_every_shape_says_what_it_is(shape: LineShape) -> None:
 
 
 def test_names_are_those_of_the_docs() -> None:
-    assert MODEL_NAMES == tuple(THETA)
+    assert tuple(THETA) == MODEL_NAMES
     assert [shape.name for shape in list_models()] == list(THETA)
     assert find_model("lorentzian") is find_model("lorentzian")
 

@@ -53,6 +53,22 @@ def permutation_p(grid: Grid, reduction: Reduction, u: Floats, roots: Floats, Z:
     return p
 
 
+def constant_p(z: Floats, root_weights: Floats, sse: Floats, free: int) -> Floats:
+    """Return the p value of an F test of each fit against a constant, one a data set.
+
+    For models without a start grid, which can be asked no more than whether they follow the data at all.
+    """
+    from scipy.special import fdtrc
+
+    level = root_weights / np.linalg.norm(root_weights)
+    constant = np.einsum("bn,bn->b", z, z) - (z @ level) ** 2
+    spare = z.shape[1] - free
+    if free < 2 or spare < 1:
+        return np.zeros(len(z))
+    gain = np.maximum(constant - sse, 0.0) / (free - 1)
+    return np.asarray(fdtrc(free - 1, spare, gain / np.maximum(sse / spare, 1e-300)))
+
+
 def seed_of(values: Floats) -> int:
     """Return a seed that depends on the order of the values alone."""
     ranks = np.argsort(values, kind="stable").astype("<i8")

@@ -17,7 +17,7 @@ from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.layout import Layout
 
 MAX_STEPS = 80
-STEP_TOLERANCE = 1e-12
+STEP_TOLERANCE = 1e-13
 """A step is the last one when the fall of the sum of squares it promises is this share of it."""
 EXACT = 1e-24
 """Residuals this small, relative to the data squared, are rounding."""

@@ -38,7 +38,8 @@ class Facts:
     """What the checks look at, for one data set; lengths in the unit of x.
 
     ``value``, ``stderr`` and ``spread`` are by reported name, ``roles`` tell which free name is a position,
-    width, rate or frequency, ``bound`` lists names that ended at the edge of what is searched.
+    width, rate or frequency, ``bound`` lists names that ended at the edge of what is searched; ``feature_p``
+    is that of the permutation test when a start grid was ``searched``, else that of an F test.
     """
 
     model: str
@@ -53,6 +54,7 @@ class Facts:
     spare: float
     converged: bool
     feature_p: float
+    searched: bool
     constant: bool
     unit_x: str
 
@@ -94,6 +96,12 @@ def _feature(facts: Facts) -> FitWarning | None:
         )
     if not facts.feature_p > LEVEL:
         return None
+    if not facts.searched:
+        return FitWarning(
+            "no-feature",
+            f"{facts.model} follows the data hardly better than a constant (F test, p ="
+            f" {facts.feature_p:.2g}); give other start values, or take more shots",
+        )
     return FitWarning(
         "no-feature",
         f"nothing stands out of the scatter: {100 * facts.feature_p:.2g} % of random shuffles of the shots"
