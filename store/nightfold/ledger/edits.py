@@ -77,11 +77,11 @@ def _edits_of(connection: Connection, machine_id: int, machine: str) -> list[Edi
         tables.sequence.c.machine_id == machine_id
     )
     seen: list[Edit] = []
-    for sequence_id, name in connection.execute(sequences).tuples().all():
-        for at_us, parameter_id, old, new in _walk(connection, sequence_id, known):
+    for row in connection.execute(sequences).all():
+        for at_us, parameter_id, old, new in _walk(connection, row.id, known):
             parameter = known[parameter_id]
             before, after = (plain_value(parameter.kind, *value) for value in (old, new))
-            seen.append(Edit(at_us, parameter.name, parameter.unit, before, after, machine, name))
+            seen.append(Edit(at_us, parameter.name, parameter.unit, before, after, machine, row.name))
     return _merge(seen)
 
 

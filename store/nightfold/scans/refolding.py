@@ -26,15 +26,12 @@ def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: 
     the machine never pauses, to the bounds of the scans about 500 shots away.
     """
     rows = _span(connection, sequence_id, first_us, last_us)
-    names = dict(
-        connection.execute(
-            select(tables.parameter.c.id, tables.parameter.c.name)
-            .join(tables.sequence, tables.sequence.c.machine_id == tables.parameter.c.machine_id)
-            .where(tables.sequence.c.id == sequence_id)
-        )
-        .tuples()
-        .all()
+    query = (
+        select(tables.parameter.c.id, tables.parameter.c.name)
+        .join(tables.sequence, tables.sequence.c.machine_id == tables.parameter.c.machine_id)
+        .where(tables.sequence.c.id == sequence_id)
     )
+    names = {row.id: row.name for row in connection.execute(query)}
     found = fold_stream(_stream(connection, rows, names))
     _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()})
 
@@ -133,7 +130,8 @@ def _moving(
 
 
 def _kinds(connection: Connection) -> dict[int, str]:
-    return dict(connection.execute(select(tables.parameter.c.id, tables.parameter.c.kind)).tuples().all())
+    query = select(tables.parameter.c.id, tables.parameter.c.kind)
+    return {row.id: row.kind for row in connection.execute(query)}
 
 
 def _keep(
