@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import random
 from collections.abc import Iterable, Mapping, Sequence
+from time import process_time
 
 import pytest
 from hypothesis import given, settings
@@ -263,7 +264,7 @@ def test_readings_that_change_at_every_shot_are_no_scan() -> None:
 
 @st.composite
 def scans(draw: st.DrawFn, parameter: str) -> list[Row]:
-    values = steps(draw(st.integers(4, 15)), 10, draw(st.sampled_from([11.0, 15.0, 1000.0])))
+    values = steps(draw(st.integers(6, 15)), 10, draw(st.sampled_from([11.0, 15.0, 1000.0])))
     rows = sweep(values * draw(st.integers(1, 2)), parameter)
     return rows if draw(st.booleans()) else shuffled(rows, draw(st.integers(0, 99)))
 
@@ -309,3 +310,24 @@ def test_tokens_are_read_as_the_store_writes_them() -> None:
     assert read_token(token_of("text", None, "61")) == "e:61"
     assert read_token(token_of("truth", 1.0, None)) == "r:1.0"
     assert read_token(None) == ""
+
+
+def test_time_grows_with_the_number_of_shots_only() -> None:
+    draw = random.Random(4)
+    rows: list[Row] = []
+    while len(rows) < 16_000:
+        size = draw.randint(8, 40)
+        rows += idle(draw.randint(0, 20))
+        rows += shuffled(sweep(steps(size, 10, 11) * draw.randint(1, 3), draw.choice("xyz")), size)
+        rows += grid(size, draw.randint(3, 6))
+        rows += [{f"hold_{draw.randrange(20)}": draw.random()} for _ in range(10)]
+    shots = stream(rows)
+    assert len(fold_stream(shots)) > 150
+    few, many = (min(seconds(shots[:count]) for _ in range(3)) for count in (2_000, 16_000))
+    assert many < 3 * 8 * few
+
+
+def seconds(shots: Sequence[StreamShot]) -> float:
+    begin = process_time()
+    fold_stream(shots)
+    return process_time() - begin

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from itertools import pairwise
-from math import log, prod
+from math import isfinite, log, prod
 from statistics import median_low
 
 from nightfold.scans.patterns import FILLED, dwell_lengths
@@ -80,11 +80,13 @@ def _fits(numbers: Sequence[float], value: float) -> bool | None:
     if not step > 0:
         return None
     places = [(each - numbers[0]) / step for each in numbers]
-    if any(abs(place - round(place)) > 1e-3 for place in places):
+    place = (value - numbers[0]) / step
+    if not (isfinite(places[-1]) and isfinite(place)):
+        return None
+    if any(abs(each - round(each)) > 1e-3 for each in places):
         return None
     if places[-1] + 1 - len(places) > 1 + len(places) / 4:
         return None
-    place = (value - numbers[0]) / step
     if abs(place - round(place)) > 1e-3:
         return False if len(numbers) >= ENOUGH_POINTS else None
     return True if -1 <= round(place) <= round(places[-1]) + 1 else None

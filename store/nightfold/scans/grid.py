@@ -73,7 +73,9 @@ def build_dataset(
     is spread over all dimensions. A parameter that is called like one of the dimensions above gets a
     ``_`` behind its name. Attributes follow CF-1.11 (``units``, ``long_name``, ``ancillary_variables``).
     """
-    rows = table.sort_values(["started", "uid"], kind="stable", ignore_index=True)
+    rows = table
+    if not (table["started"].is_monotonic_increasing and table["started"].is_unique):
+        rows = table.sort_values(["started", "uid"], kind="stable", ignore_index=True)
     layout = lay_out(rows, axes, tolerance)
     names = _Names(units, descriptions)
     coords = {free_name(axis): _axis(rows, layout, axis, names) for axis in axes}

@@ -66,12 +66,21 @@ def lay_out(rows: pd.DataFrame, axes: Sequence[str], tolerance: float | Mapping[
     cells = (
         np.ravel_multi_index([column.codes for column in points.values()], sizes) if count else np.arange(0)
     )
-    repeats = pd.Series(cells).groupby(cells).cumcount().to_numpy(np.intp)
+    repeats = _count_repeats(cells)
     most = int(repeats.max()) + 1 if count else 1
     dims = tuple(free_name(axis) for axis in axes)
     if most == 1:
         return Layout(dims, sizes, cells, points)
     return Layout((*dims, "repeat"), (*sizes, most), cells * most + repeats, points)
+
+
+def _count_repeats(cells: Codes) -> Codes:
+    """Return how many shots before each one went into the same cell."""
+    order = np.argsort(cells, kind="stable")
+    ordered = cells[order]
+    repeats = np.empty_like(cells)
+    repeats[order] = np.arange(len(cells)) - np.searchsorted(ordered, ordered)
+    return repeats
 
 
 def read_settings(rows: pd.DataFrame, name: str) -> Sequence[Any] | NDArray[Any]:

@@ -13,6 +13,9 @@ FINE_TOLL = 2.0
 CHANCE_LENGTH = 8
 """In random order some axis may stand still for a few shots; for this many it hardly does."""
 
+NEAR = 256
+"""So many shots before a doubtful part are looked at to judge it."""
+
 
 @dataclass(frozen=True, slots=True)
 class Stretch:
@@ -76,4 +79,5 @@ def _rejoin(shots: Sequence[StreamShot], one: Stretch, other: Stretch) -> Stretc
     longest = min(CHANCE_LENGTH, len(greater)) if lesser.moving else 2
     if greater.moving != moving or len(lesser) >= longest:
         return None
-    return whole if len(moving) > 1 and _is_one(shots, whole) else None
+    near = Stretch(max(one.start, other.start - NEAR), other.stop, moving)
+    return whole if len(moving) > 1 and _is_one(shots, near) else None
