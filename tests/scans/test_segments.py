@@ -17,7 +17,7 @@ def price(changes: list[Names], stretches: list[tuple[int, int]], toll: float) -
     )
 
 
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=100, deadline=None)
 @given(CHANGES, st.sampled_from([1.0, 2.0, 4.0]))
 def test_cut_is_the_cheapest_of_all(changes: list[Names], toll: float) -> None:
     found = cut(changes, toll)

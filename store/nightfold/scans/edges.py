@@ -9,16 +9,11 @@ from math import isfinite, log, prod
 from statistics import median_low
 
 from nightfold.scans.patterns import FILLED, dwell_lengths
-from nightfold.scans.stream import Point, StreamShot, moved_names, read_token
+from nightfold.scans.stream import Point, Run, moved_names
 from nightfold.scans.stretches import Stretch
 
 ENOUGH_POINTS = 5
 """From so many other points on, one that does not fit among them is taken for no point of the scan."""
-
-
-def read_points(shots: Sequence[StreamShot], axes: Sequence[str]) -> list[Point]:
-    """Return the point that each shot was taken at."""
-    return [tuple(read_token(shot.values.get(axis)) for axis in axes) for shot in shots]
 
 
 def wanted_shots(visits: Mapping[Point, int], point: Point) -> int | None:
@@ -92,20 +87,19 @@ def _fits(numbers: Sequence[float], value: float) -> bool | None:
     return True if -1 <= round(place) <= round(places[-1]) + 1 else None
 
 
-def split_at_rests(shots: Sequence[StreamShot], stretch: Stretch, axes: Sequence[str]) -> list[Stretch]:
+def split_at_rests(run: Run, stretch: Stretch, axes: Sequence[str]) -> list[Stretch]:
     """Return the parts of a scan between rests at one point that it does not lack.
 
     A rest is longer than 4 shots and than 3 usual dwells; or longer than a usual dwell, back at the point
     that was set before the scan and never visited in it. Where it cannot be told whether the scan lacks the
     point, the rest is kept inside: shots may be tried again and again at one point, when something fails.
     """
-    inside = shots[stretch.start : stretch.stop]
-    lengths = dwell_lengths([shot.changed for shot in inside[1:]])
+    lengths = dwell_lengths([shot.changed for shot in run.shots[stretch.start + 1 : stretch.stop]])
     usual = median_low(lengths)
     if max(lengths[1:-1], default=0) <= usual:
         return [stretch]
-    points = read_points(inside, axes)
-    before = read_points(shots[max(stretch.start - 1, 0) : stretch.start], axes)
+    points = run.points(axes, stretch.start, stretch.stop)
+    before = run.points(axes, stretch.start - 1, stretch.start)
     bounds = [stretch.start]
     place = lengths[0]
     for length in lengths[1:-1]:
@@ -118,41 +112,40 @@ def split_at_rests(shots: Sequence[StreamShot], stretch: Stretch, axes: Sequence
         place += length
     bounds.append(stretch.stop)
     parts = zip(bounds[::2], bounds[1::2], strict=True)
-    return [Stretch(start, stop, moved_names(shots, start, stop)) for start, stop in parts]
+    return [Stretch(start, stop, moved_names(run.shots, start, stop)) for start, stop in parts]
 
 
-def trim(shots: Sequence[StreamShot], stretch: Stretch, axes: Sequence[str], first: int) -> Stretch:
+def trim(run: Run, stretch: Stretch, axes: Sequence[str]) -> Stretch:
     """Return a scan without the shots at its ends that were only taken at the settings found or left there.
 
     Those are shots at one point which did not move to it, or which the next shots after the scan still
-    sit at, and which the rest of the scan does not lack. `first` is the first shot of the run: where the
-    same point was set before the scan, a point lacked is sought there, see `extend`.
+    sit at, and which the rest of the scan does not lack. Where the same point was set before the scan, a
+    point lacked is sought there, see `extend`.
     """
-    inside = shots[stretch.start : stretch.stop]
-    lengths = dwell_lengths([shot.changed for shot in inside[1:]])
+    lengths = dwell_lengths([shot.changed for shot in run.shots[stretch.start + 1 : stretch.stop]])
     if len(lengths) < 3:
         return stretch
     head, tail, usual = lengths[0], lengths[-1], median_low(lengths)
-    points = read_points(inside, axes)
+    points = run.points(axes, stretch.start, stretch.stop)
     rest = points[head:-tail]
-    stays_before = _stays(shots, stretch, stretch.start, head, points[0] not in rest)
-    stays_after = _stays(shots, stretch, stretch.stop, tail, points[-1] not in rest)
+    stays_before = _stays(run, stretch, stretch.start, head, points[0] not in rest)
+    stays_after = _stays(run, stretch, stretch.stop, tail, points[-1] not in rest)
     begin, end = points[:head], points[-tail:]
     if stays_before:
         begin = begin[: _kept(rest if stays_after else rest + end, begin[0], head, usual)]
-    found_there = stretch.start > first and shots[stretch.start].changed <= stretch.moving
-    if stays_after and found_there and read_points([shots[stretch.start - 1]], axes) == end[:1]:
+    found_there = stretch.start > run.first and run.shots[stretch.start].changed <= stretch.moving
+    if stays_after and found_there and run.points(axes, stretch.start - 1, stretch.start) == end[:1]:
         end = []
     elif stays_after:
         end = end[: _kept(begin + rest, end[0], tail, usual)]
     start, stop = stretch.start + head - len(begin), stretch.stop - tail + len(end)
-    return Stretch(start, stop, moved_names(shots, start, stop))
+    return Stretch(start, stop, moved_names(run.shots, start, stop))
 
 
-def _stays(shots: Sequence[StreamShot], stretch: Stretch, place: int, length: int, strange: bool) -> bool:
+def _stays(run: Run, stretch: Stretch, place: int, length: int, strange: bool) -> bool:
     """Return whether settings did not move across one end of a scan (or may not have: nothing is there)."""
-    if 0 < place < len(shots):
-        return not shots[place].changed & stretch.moving
+    if 0 < place < len(run.shots):
+        return not run.shots[place].changed & stretch.moving
     return length >= 2 or strange
 
 
@@ -163,20 +156,20 @@ def _kept(others: Sequence[Point], point: Point, length: int, usual: int) -> int
     return min(length, wanted)
 
 
-def extend(shots: Sequence[StreamShot], stretch: Stretch, axes: Sequence[str], first: int) -> Stretch:
-    """Return a scan together with shots just before it that its first point lacks, back to shot `first`.
+def extend(run: Run, stretch: Stretch, axes: Sequence[str], free: int) -> Stretch:
+    """Return a scan together with shots just before it that its first point lacks, back to shot `free`.
 
     So a scan whose first point is the setting found there still has that point.
     """
     start = stretch.start
-    if start <= first or not shots[start].changed <= stretch.moving:
+    if start <= free or not run.shots[start].changed <= stretch.moving:
         return stretch
-    visits = Counter(read_points(shots[start : stretch.stop], axes))
-    wanted = wanted_shots(visits, read_points([shots[start - 1]], axes)[0]) or 0
-    while wanted > 0 and start > first:
+    visits = Counter(run.points(axes, start, stretch.stop))
+    wanted = wanted_shots(visits, run.points(axes, start - 1, start)[0]) or 0
+    while wanted > 0 and start > free:
         start -= 1
         wanted -= 1
-        if shots[start].changed:
+        if run.shots[start].changed:
             break
     return Stretch(start, stretch.stop, stretch.moving)
 
@@ -189,12 +182,12 @@ def is_in_order(column: Sequence[float | str]) -> bool:
     return numbers in (sorted(numbers), sorted(numbers, reverse=True))
 
 
-def is_set_apart(shots: Sequence[StreamShot], start: int, free: int) -> bool:
+def is_set_apart(run: Run, start: int, free: int) -> bool:
     """Return whether a scan that begins at `start` has shots at rest, another scan or nothing before it.
 
     `free` is the first shot of the run that is in no scan; fewer than 4 shots at rest are looked through.
     """
     quiet = 0
-    while start - 1 - quiet > free and not shots[start - 1 - quiet].changed:
+    while start - 1 - quiet > free and not run.shots[start - 1 - quiet].changed:
         quiet += 1
     return quiet + 1 >= 4 or start - quiet - 1 <= free

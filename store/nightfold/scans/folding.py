@@ -25,13 +25,12 @@ from nightfold.scans.edges import (
     is_in_order,
     is_regular,
     is_set_apart,
-    read_points,
     split_at_rests,
     trim,
 )
 from nightfold.scans.patterns import MOST_AXES, dwell_lengths, is_steady
 from nightfold.scans.rows import join_rows
-from nightfold.scans.stream import FoundScan, StreamShot, columns_of
+from nightfold.scans.stream import FoundScan, Run, StreamShot
 from nightfold.scans.stretches import Stretch, find_stretches
 
 __all__ = ["FoundScan", "StreamShot", "fold_stream", "pause_limit_us"]
@@ -74,7 +73,7 @@ def fold_stream(shots: Sequence[StreamShot], *, pause_us: int | None = None) -> 
             parts = cut_at_edits(shots, start, stop)
             found.extend(FoundScan(_ids(shots, *part), axes, "declared") for part in parts)
         else:
-            found.extend(_find(shots, start, stop))
+            found.extend(_find(Run(shots, start, stop)))
     return found
 
 
@@ -92,67 +91,66 @@ def _runs(shots: Sequence[StreamShot], limit: int) -> list[tuple[int, int]]:
     return list(pairwise([0, *bounds, len(shots)])) if shots else []
 
 
-def _find(shots: Sequence[StreamShot], start: int, stop: int) -> list[FoundScan]:
+def _find(run: Run) -> list[FoundScan]:
     """Return the scans in a run of shots that declare nothing."""
     found: list[FoundScan] = []
-    free = start
-    for stretch in join_rows(shots, find_stretches(shots, start, stop, TOLL)):
-        for part in _parts(shots, stretch, start):
-            axes = _axes(shots, part)
-            scan = extend(shots, part, axes, free)
-            if _is_scan(shots, scan, axes) and (
-                _is_clear(shots, scan, axes) or is_set_apart(shots, scan.start, free)
+    free = run.first
+    for stretch in join_rows(run.shots, find_stretches(run.shots, run.first, run.stop, TOLL)):
+        for part in _parts(run, stretch):
+            axes = _axes(run, part)
+            scan = extend(run, part, axes, free)
+            if _is_scan(run, scan, axes) and (
+                _is_clear(run, scan, axes) or is_set_apart(run, scan.start, free)
             ):
-                found.append(FoundScan(_ids(shots, scan.start, scan.stop), axes, "found"))
+                found.append(FoundScan(_ids(run.shots, scan.start, scan.stop), axes, "found"))
                 free = scan.stop
     return found
 
 
-def _parts(shots: Sequence[StreamShot], stretch: Stretch, first: int) -> list[Stretch]:
+def _parts(run: Run, stretch: Stretch) -> list[Stretch]:
     """Return what remains of a stretch without shots at rest before, after and within it."""
     if not stretch.moving:
         return []
-    axes = _axes(shots, stretch)
+    axes = _axes(run, stretch)
     if not axes:
         return []
-    parts = split_at_rests(shots, trim(shots, stretch, axes, first), axes)
-    return [trim(shots, part, axes, first) for part in parts] if len(parts) > 1 else parts
+    parts = split_at_rests(run, trim(run, stretch, axes), axes)
+    return [trim(run, part, axes) for part in parts] if len(parts) > 1 else parts
 
 
-def _axes(shots: Sequence[StreamShot], stretch: Stretch) -> tuple[str, ...]:
+def _axes(run: Run, stretch: Stretch) -> tuple[str, ...]:
     """Return the parameters swept in a stretch; none where far too many moved on their own."""
     names = sorted(stretch.moving)
     if len(names) == 1:
         return (names[0],)
-    sample = shots[stretch.start : min(stretch.stop, stretch.start + SAMPLE)]
     if len(names) > 2 * MOST_AXES and len(stretch) > SAMPLE:
-        axes, _ = choose_axes(columns_of(sample, names), ())
+        axes, _ = choose_axes(run.columns(names, stretch.start, stretch.start + SAMPLE), ())
         if len(axes) > 2 * MOST_AXES:
             return ()
-    return choose_axes(columns_of(shots[stretch.start : stretch.stop], names), ())[0]
+    return choose_axes(run.columns(names, stretch.start, stretch.stop), ())[0]
 
 
-def _is_scan(shots: Sequence[StreamShot], scan: Stretch, axes: Sequence[str]) -> bool:
+def _is_scan(run: Run, scan: Stretch, axes: Sequence[str]) -> bool:
     """Return whether a stretch has shots and points enough, and held its points as scans do."""
     if len(scan) < FEWEST_SHOTS or not 0 < len(axes) <= MOST_AXES:
         return False
-    points = read_points(shots[scan.start : scan.stop], axes)
+    points = run.points(axes, scan.start, scan.stop)
     if max(len(set(column)) for column in zip(*points, strict=True)) < FEWEST_POINTS:
         return False
-    lengths = dwell_lengths([shot.changed for shot in shots[scan.start + 1 : scan.stop]])
+    lengths = dwell_lengths([shot.changed for shot in run.shots[scan.start + 1 : scan.stop]])
     return len(lengths) > len(set(points)) or is_steady(lengths)
 
 
-def _is_clear(shots: Sequence[StreamShot], scan: Stretch, axes: Sequence[str]) -> bool:
+def _is_clear(run: Run, scan: Stretch, axes: Sequence[str]) -> bool:
     """Return whether a scan cannot be taken for hand tuning, whatever stands before it.
 
     It is long, or its points are evenly spaced, in order, or were visited more than once.
     """
     if len(scan) >= TOLL:
         return True
-    points = read_points(shots[scan.start : scan.stop], axes)
+    points = run.points(axes, scan.start, scan.stop)
     columns = [list(column) for column in zip(*points, strict=True)]
-    lengths = dwell_lengths([shot.changed for shot in shots[scan.start + 1 : scan.stop]])
+    lengths = dwell_lengths([shot.changed for shot in run.shots[scan.start + 1 : scan.stop]])
     return any(is_regular(list(set(column))) or is_in_order(column) for column in columns) or (
         len(lengths) >= 2 * len(set(points))
     )

@@ -79,7 +79,40 @@ def moved_names(shots: Sequence[StreamShot], start: int, stop: int) -> frozenset
     return frozenset().union(*(shot.changed for shot in shots[start + 1 : stop]))
 
 
-def columns_of(shots: Iterable[StreamShot], names: Iterable[str]) -> dict[str, list[float | str]]:
-    """Return the values of some parameters, one list a name."""
-    shots = list(shots)
-    return {name: [read_token(shot.values.get(name)) for shot in shots] for name in names}
+def columns_of(shots: Sequence[StreamShot], names: Iterable[str]) -> dict[str, list[float | str]]:
+    """Return the values of some parameters over consecutive shots, one list a name."""
+    return {name: _column(shots, name) for name in names}
+
+
+def _column(shots: Sequence[StreamShot], name: str) -> list[float | str]:
+    column: list[float | str] = []
+    value: float | str | None = None
+    for shot in shots:
+        if value is None or name in shot.changed:
+            value = read_token(shot.values.get(name))
+        column.append(value)
+    return column
+
+
+class Run:
+    """The shots ``first`` to ``stop`` (exclusive) of a stream, without a pause; their settings are read once."""
+
+    def __init__(self, shots: Sequence[StreamShot], first: int, stop: int) -> None:
+        self.shots = shots
+        self.first = first
+        self.stop = stop
+        self._columns: dict[str, list[float | str]] = {}
+
+    def columns(self, names: Iterable[str], start: int, stop: int) -> dict[str, list[float | str]]:
+        """Return the values of some parameters over shots of the run, one list a name."""
+        columns = {}
+        for name in names:
+            if name not in self._columns:
+                self._columns[name] = _column(self.shots[self.first : self.stop], name)
+            columns[name] = self._columns[name][start - self.first : stop - self.first]
+        return columns
+
+    def points(self, axes: Sequence[str], start: int, stop: int) -> list[Point]:
+        """Return the points that shots of the run were taken at; none for shots outside of it."""
+        start = max(start, self.first)
+        return list(zip(*self.columns(axes, start, stop).values(), strict=True))
