@@ -6,8 +6,17 @@ import os
 import re
 from argparse import ArgumentParser, ArgumentTypeError, RawDescriptionHelpFormatter
 from types import ModuleType
+from typing import NoReturn
 
 DEFAULT_STORE = "nightfold.sqlite"
+
+
+class CommandParser(ArgumentParser):
+    """A parser that says in one line what is wrong."""
+
+    def error(self, message: str) -> NoReturn:
+        """Leave with exit code 2."""
+        self.exit(2, f"{self.prog}: {message}\n'{self.prog} --help' shows what can be said\n")
 
 
 def command_parser(command: str, module: ModuleType) -> ArgumentParser:
@@ -16,7 +25,7 @@ def command_parser(command: str, module: ModuleType) -> ArgumentParser:
     The module brings ``HELP`` (one line), ``EXAMPLES`` (lines of shell) and ``add_arguments``; options that
     all commands know are added here.
     """
-    parser = ArgumentParser(
+    parser = CommandParser(
         prog=f"nightfold {command}",
         description=module.HELP[0].upper() + module.HELP[1:] + ".",
         epilog="examples:\n" + "".join(f"  {line}\n" for line in module.EXAMPLES),

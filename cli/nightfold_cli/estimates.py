@@ -54,7 +54,7 @@ def rows(estimates: Mapping[str, Estimate], fixed: Collection[str]) -> list[Row]
     ]
 
 
-def plain_rows(estimates: Mapping[str, Estimate]) -> list[Row]:
+def plain_rows(estimates: Mapping[str, AnyEstimate]) -> list[Row]:
     """Return a line an estimate for programs, with all digits."""
     return [
         [

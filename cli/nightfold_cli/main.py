@@ -30,6 +30,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         What stands behind ``nightfold``; by default that of this process.
     """
     given = list(sys.argv[1:] if arguments is None else arguments)
+    _never_fail_to_write()
     try:
         code = _dispatch(given)
         sys.stdout.flush()
@@ -126,10 +127,18 @@ def _guarded(module: ModuleType, args: Namespace) -> int:
 
             traceback.print_exc()
         from nightfold_cli.failures import explain
+        from nightfold_cli.printable import say
 
         message, code = explain(error)
-        sys.stderr.write(f"nightfold: {message}\n")
+        say(message, sys.stderr)
     return code
+
+
+def _never_fail_to_write() -> None:
+    """Show signs that an output cannot hold as escapes."""
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="backslashreplace")
 
 
 def _mute_stdout() -> None:

@@ -11,14 +11,13 @@ from __future__ import annotations
 import os
 import shutil
 import sys
-import textwrap
 from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any, Literal, TextIO
 
 from nightfold_cli.canvas import Line
 from nightfold_cli.jsonout import document
 from nightfold_cli.layout import Cell, Column, Row, cell_text, lay_out
-from nightfold_cli.printable import printable
+from nightfold_cli.printable import paragraph, printable, say
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -53,9 +52,6 @@ class Screen:
         mode: Literal["terminal", "piped", "json"] = (
             "json" if json else "terminal" if sys.stdout.isatty() else "piped"
         )
-        for stream in (sys.stdout, sys.stderr):
-            if hasattr(stream, "reconfigure"):
-                stream.reconfigure(errors="backslashreplace")
         return cls(sys.stdout, sys.stderr, mode, shutil.get_terminal_size().columns)
 
     @property
@@ -81,7 +77,12 @@ class Screen:
 
     def say(self, text: str) -> None:
         """Say something that is not the answer, on stderr."""
-        self.err.write(f"nightfold: {printable(text)}\n")
+        say(text, self.err)
+
+    def part(self) -> None:
+        """Begin another table, below an empty line in a pipe; on a screen every table does."""
+        if self.mode == "piped":
+            self.out.write("\n")
 
     def note(self, text: str) -> None:
         """Add a remark below an answer; only people need it."""
@@ -175,20 +176,7 @@ class Screen:
     def _wrapped(self, text: str, first: str, style: str, rest: str | None = None) -> None:
         """Write a paragraph, wrapped at the width of the screen."""
         width = min(self.width, _WIDEST_TEXT + len(first))
-        following = first if rest is None else rest
-        lines = [
-            line
-            for part in text.split("\n")
-            for line in textwrap.wrap(
-                printable(part),
-                width,
-                initial_indent=first,
-                subsequent_indent=following,
-                break_on_hyphens=False,
-            )
-            or [first.rstrip()]
-        ]
-        for line in lines:
+        for line in paragraph(text, width, first, first if rest is None else rest):
             self._styled(line, style)
 
     def _styled(self, text: str, style: str) -> None:

@@ -3,16 +3,17 @@
 from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli import estimates
 from nightfold_cli.arguments import positive, scan_key
-from nightfold_cli.concise import short
 from nightfold_cli.estimates import value_text
 from nightfold_cli.layout import Cell, Column, Row
-from nightfold_cli.localtimes import compact, heading
+from nightfold_cli.localtimes import LocalTimes, compact, heading
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.render import Screen
+from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.kept import KeptFit
@@ -20,6 +21,7 @@ if TYPE_CHECKING:
 HELP = "list the fits that were kept"
 EXAMPLES = ("nightfold fits", "nightfold fits loss-coarse", "nightfold fits --json")
 _ON_SCREEN = 20
+_EMPTY = "no fits yet; 'nightfold fit KEY MODEL -o OBSERVABLE' makes one"
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -40,65 +42,86 @@ def run(args: Namespace) -> int:
     if screen.json:
         screen.answer({"fits": [_entry(fit) for fit in listed]})
         return 0
-    moments = [times.local(fit.at) for fit in listed]
-    columns = [
-        Column("scan", wraps=True),
-        Column("model", wraps=True),
-        Column("observable", wraps=True, spare=2),
-        Column("estimates"),
-        Column("trust"),
-        Column(heading(moments, "kept"), spare=1, plain_name="kept"),
-        Column("shots", right=True, spare=3),
-    ]
-    rows: list[Row] = [
-        [
-            fit.scan_key + _slice(fit),
-            fit.model,
-            fit.observable,
-            _estimates(fit),
-            Cell(*_trust(fit)),
-            Cell(when, at.isoformat(timespec="seconds")),
-            str(fit.shots),
-        ]
-        for fit, when, at in zip(listed, compact(moments), moments, strict=True)
-    ]
-    screen.table(
-        columns, rows, empty="no fits yet; 'nightfold fit KEY MODEL -o OBSERVABLE' makes one", spaced=True
-    )
+    if not screen.terminal:
+        _tabulate(screen, listed, times)
+        return 0
+    _draw(screen, listed, times)
+    if any(fit.stale for fit in listed):
+        screen.note("stale: the shots of the scan have changed since; fit it again")
     if len(kept) > len(listed):
         screen.note(f"{len(kept) - len(listed)} earlier ones not shown; --all shows them")
     return 0
 
 
-def _estimates(fit: KeptFit) -> Cell:
-    """Return the estimates, one a line on a screen."""
-    texts = [
+def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:
+    """Draw a few lines a fit."""
+    moments = [times.local(fit.at) for fit in fits]
+    columns = [
+        Column("scan", wraps=True),
+        Column("model", wraps=True),
+        Column("estimates"),
+        Column("trust"),
+        Column(heading(moments, "kept"), spare=1),
+        Column("shots", right=True, spare=2),
+    ]
+    rows: list[Row] = [
+        [
+            Cell.of((fit.scan_key, fit.observable, *_slice(fit))),
+            Cell.of((fit.model, f"along {fit.along}")),
+            Cell.of(_estimates(fit)),
+            Cell.of(_trust(fit)),
+            when,
+            str(fit.shots),
+        ]
+        for fit, when in zip(fits, compact(moments), strict=True)
+    ]
+    screen.table(columns, rows, empty=_EMPTY, spaced=True)
+
+
+def _tabulate(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:
+    """Write a line an estimate, for programs."""
+    heads = (
+        *("fit", "kept", "scan", "model", "background", "observable", "along", "slice"),
+        *("estimate", "value", "stderr", "unit", "low95", "high95", "trusted", "stale", "shots"),
+    )
+    rows: list[Row] = [
+        [
+            str(fit.id),
+            times.stamp(fit.at),
+            fit.scan_key,
+            fit.model,
+            fit.background,
+            fit.observable,
+            fit.along,
+            ", ".join(_slice(fit)),
+            *row,
+            setting(fit.trusted),
+            setting(fit.stale),
+            str(fit.shots),
+        ]
+        for fit in fits
+        for row in estimates.plain_rows(fit.estimates)
+    ]
+    screen.table([Column(head) for head in heads], rows, empty=_EMPTY)
+
+
+def _estimates(fit: KeptFit) -> list[str]:
+    """Return the estimates, one a line."""
+    return [
         f"{name} {value_text(estimate, fixed=estimate.fixed)} {estimate.unit}".rstrip()
         for name, estimate in fit.estimates.items()
     ]
-    return Cell("\n".join(texts), "; ".join(texts))
 
 
-def _trust(fit: KeptFit) -> tuple[str, str]:
-    """Return whether to trust a fit, for a screen and for a pipe."""
+def _trust(fit: KeptFit) -> list[str]:
+    """Return whether to trust a fit, and why not."""
     codes = [warning.code for warning in fit.warnings if not warning.advisory]
-    words = ["yes"] if fit.trusted else ["NO", *codes]
-    if fit.stale:
-        words.append("stale")
-    return "\n".join(words), ", ".join(words)
+    return (["yes"] if fit.trusted else ["NO", *codes]) + (["stale"] if fit.stale else [])
 
 
-def _slice(fit: KeptFit) -> str:
-    """Return where a slice was taken: `` at hold_time 240``."""
-    where = ", ".join(f"{name} {_value(value)}" for name, value in (fit.slice or {}).items())
-    return f" at {where}" if where else ""
-
-
-def _value(value: Any) -> str:
-    """Return a setting of a slice."""
-    return (
-        short(float(value)) if isinstance(value, int | float) and not isinstance(value, bool) else str(value)
-    )
+def _slice(fit: KeptFit) -> list[str]:
+    """Return where a slice was taken: ``hold_time 240``."""
+    return [f"{name} {setting(value)}" for name, value in fit.slice.items()]
 
 
 def _entry(fit: KeptFit) -> dict[str, Any]:

@@ -160,11 +160,13 @@ def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
         )
         if value
     )
+    screen.part()
     screen.table(
         [Column("observable"), Column("value", right=True), Column("unit")],
         [[name, _reading(reading), reading.unit] for name, reading in shot.observables.items()],
         empty="no observables yet",
     )
+    screen.part()
     screen.table(
         [Column("parameter"), Column("value", right=True, wraps=True), Column("unit"), Column("swept")],
         [

@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import sys
 from argparse import ArgumentParser, Namespace
+from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
-from nightfold_cli.failures import NOT_FOUND, REFUSED, explain
+from nightfold_cli.failures import REFUSED, explain
 from nightfold_cli.layout import Column
 from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
@@ -26,6 +27,7 @@ EXAMPLES = (
     "      --started-at 2026-10-05T21:14:00+02:00 --cycle 18",
 )
 _SHOWN = 20
+_LISTED = 50
 _TABLE_OPTIONS = (
     ("--machine", "NAME", "machine of all rows"),
     ("--sequence", "NAME", "sequence of all rows"),
@@ -59,19 +61,36 @@ def add_arguments(parser: ArgumentParser) -> None:
 
 def run(args: Namespace) -> int:
     """Take all files; one that cannot be read does not keep the others out."""
+    from nightfold.card import read_card
+
     screen = Screen.here(args.json)
     total = _Total()
+    if args.card:
+        read_card(args.card)
     with opened(args, screen, create=args.new) as store:
         if args.card:
             store.use_card(args.card)
         for name in args.files:
-            total.add(name, *_take(store, name, args))
+            outcome = _take(store, name, args)
+            if isinstance(outcome, Unreadable):
+                total.add_unreadable(outcome)
+            else:
+                total.add(name, outcome)
     if screen.json:
         screen.answer({**total.counts(), "refused": total.refused})
     else:
         total.show(screen)
     _list_refused(screen, total)
     return total.code
+
+
+@dataclass(frozen=True, slots=True)
+class Unreadable:
+    """A file of which nothing could be taken, why, and the exit code of that."""
+
+    name: str
+    reason: str
+    code: int
 
 
 class _Total:
@@ -82,13 +101,13 @@ class _Total:
         self.refused: list[dict[str, Any]] = []
         self.code = 0
 
-    def add(self, name: str, intake: Intake | None, failure: tuple[str, int] | None) -> None:
+    def add_unreadable(self, file: Unreadable) -> None:
+        """Count a file of which nothing could be taken."""
+        self.refused.append({"source": file.name, "line": None, "reason": file.reason})
+        self.code = max(self.code, file.code)
+
+    def add(self, name: str, intake: Intake) -> None:
         """Count what came of one file."""
-        if failure is not None:
-            self.refused.append({"source": name, "line": None, "reason": failure[0]})
-            self.code = max(self.code, REFUSED if failure[1] != NOT_FOUND else NOT_FOUND)
-            return
-        assert intake is not None
         self.rows.append((name, intake.new, intake.known, intake.amended, len(intake.refused)))
         self.refused += [
             {"source": item.source, "line": item.line, "reason": item.reason} for item in intake.refused
@@ -114,17 +133,20 @@ class _Total:
         screen.table(columns, rows, empty="no file could be read")
 
 
-def _take(store: Store, name: str, args: Namespace) -> tuple[Intake | None, tuple[str, int] | None]:
-    """Take one file; return what was taken, or why it could not be read and the exit code of that."""
+def _take(store: Store, name: str, args: Namespace) -> Intake | Unreadable:
+    """Take one file, or return why it could not be read; a store that fails is no fault of the file."""
+    from nightfold.errors import NightfoldError, StoreError
+
+    path = Path(name)
     try:
-        size = Path(name).stat().st_size
-        with Progress(f"taking {Path(name).name}", size, sys.stderr) as progress:
-            return store.take_file(name, columns=_columns(args), progress=progress), None
-    except (OSError, ValueError) as error:
-        message, code = explain(error)
-        if args.debug or code not in (NOT_FOUND, REFUSED):
+        with Progress(
+            f"taking {path.name}", path.stat().st_size if path.is_file() else 0, sys.stderr
+        ) as progress:
+            return store.take_file(name, columns=_columns(args), progress=progress)
+    except (NightfoldError, OSError) as error:
+        if args.debug or isinstance(error, StoreError):
             raise
-        return None, (message, code)
+        return Unreadable(name, *explain(error))
 
 
 def _columns(args: Namespace) -> CsvColumns:
@@ -152,11 +174,17 @@ def _list_refused(screen: Screen, total: _Total) -> None:
     """List what was refused, on stderr; as JSON it is in the answer."""
     if screen.json or not total.refused:
         return
-    for item in total.refused:
-        place = f"{item['source']}:{item['line']}" if item["line"] else item["source"]
-        screen.say(f"refused {place}: {item['reason']}")
-    kept = sum(total.counts().values())
-    screen.say(f"{len(total.refused)} refused, {kept} kept; mend the refused ones and take the file again")
+    most = _LISTED if screen.err.isatty() else len(total.refused)
+    for item in total.refused[:most]:
+        screen.say(
+            f"refused {item['source']}:{item['line']}: {item['reason']}" if item["line"] else item["reason"]
+        )
+    if len(total.refused) > most:
+        screen.say(f"and {len(total.refused) - most} more; 2> FILE lists them all")
+    if any(item["line"] for item in total.refused):
+        kept = sum(total.counts().values())
+        refused = sum(row[4] for row in total.rows)
+        screen.say(f"{refused} refused, {kept} kept; mend the refused ones and take the file again")
 
 
 def _names(text: str | None) -> tuple[str, ...] | Literal["rest"] | None:
