@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from nightfold.scans.columns import JITTER, Column, Floats, encode, merge_jitter
 
-__all__ = ["Axis", "choose_axes", "co_moving", "describe_axis", "merge_jitter"]
+__all__ = ["Axis", "choose_axes", "co_moving", "describe_axis", "encode", "merge_jitter"]
 
 MANY_POINTS = 5
 """From here on a monotone relation between two parameters is no accident (2/n! for random ones)."""
