@@ -20,7 +20,6 @@ from nightfold.errors import RecordError
 from nightfold.records import clean_text, shorten
 
 Kind = Literal["number", "text", "truth"]
-LARGEST_EXACT = 2**53
 _MASK = (1 << 128) - 1
 _WANTED = "a number, text, true or false, a list of numbers, or an object with value and unit"
 
@@ -80,19 +79,19 @@ def number_value(raw: Any) -> Value | None:
     """Return the canonical form of a number, numpy scalars included; None if it is no number."""
     if type(raw) is float and math.isfinite(raw):
         return Value("number", raw + 0.0, None)  # adding 0.0 turns -0.0 into 0.0
-    if isinstance(raw, numbers.Integral) or hasattr(raw, "__index__"):
-        whole = operator.index(raw)
-        if abs(whole) <= LARGEST_EXACT:
-            return Value("number", float(whole), None)
-        try:
-            return Value("number", float(whole), str(whole))
-        except (OverflowError, ValueError):
-            return None
-    if isinstance(raw, numbers.Real) or hasattr(raw, "as_integer_ratio"):
-        number = float(raw)
-        if math.isfinite(number):
-            return Value("number", number + 0.0, None)
-        return Value("number", None, repr(number))
+    if getattr(raw, "ndim", None) == 0:
+        raw = raw.item()  # a numpy scalar, or an array without dimensions
+    try:
+        if isinstance(raw, numbers.Integral) or hasattr(raw, "__index__"):
+            whole = operator.index(raw)
+            return Value("number", float(whole), None if float(whole) == whole else str(whole))
+        if isinstance(raw, numbers.Real) or hasattr(raw, "as_integer_ratio"):
+            number = float(raw)
+            if math.isfinite(number):
+                return Value("number", number + 0.0, None)
+            return Value("number", None, repr(number))
+    except (OverflowError, TypeError, ValueError):  # beyond a float, or a number in name only
+        pass
     return None
 
 

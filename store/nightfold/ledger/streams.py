@@ -72,25 +72,34 @@ class StreamMemory:
         hits = 0
         for key, raw in settings.items():
             entry = entries.get(key)
-            if entry is not None and entry.raw == raw:
-                stated = raw["value"] if type(raw) is dict else raw
-                if type(stated) is entry.raw_type:  # 1, 1.0 and True are equal to Python
-                    hits += 1
-                    continue
-            self._settle_one(key, raw, machine, changed, plan)
+            try:
+                if entry is not None and entry.raw == raw:
+                    stated = raw["value"] if type(raw) is dict else raw
+                    if type(stated) is entry.raw_type:  # 1, 1.0 and True are equal to Python
+                        hits += 1
+                        continue
+            except ValueError:  # arrays do not tell at once whether they are equal
+                pass
+            self._settle_one(key, raw, settings, machine, changed, plan)
         old = sum(1 for name in changed if name in entries)
         vanished = [] if hits + old == len(entries) else self._missing(settings, changed)
         return Settled(changed, vanished, plan)
 
     def _settle_one(
-        self, key: Any, raw: Any, machine: MachineNames, changed: dict[str, Entry], plan: dict[str, Known]
+        self,
+        key: Any,
+        raw: Any,
+        settings: Mapping[Any, Any],
+        machine: MachineNames,
+        changed: dict[str, Entry],
+        plan: dict[str, Known],
     ) -> None:
         try:
             name = clean_name(key)
         except ValueError as problem:
             raise RecordError("parameters", f"the name {shorten(key)}", str(problem)) from None
         path = f"parameters.{name}"
-        if name in changed:
+        if name in changed or (name != key and name in settings):
             raise RecordError(path, "the same name twice", "each parameter once")
         settled = setting_value(raw, path)
         if settled is None:
