@@ -6,6 +6,7 @@ were stated; `nightfold.settings` brings them into canonical form. `record_schem
 
 from __future__ import annotations
 
+import json
 import re
 import unicodedata
 from collections.abc import Mapping
@@ -13,6 +14,7 @@ from datetime import datetime
 from typing import Annotated, Any, Literal
 
 from pydantic import (
+    AfterValidator,
     BaseModel,
     BeforeValidator,
     ConfigDict,
@@ -119,13 +121,21 @@ class Frame(BaseModel):
     path: Text
 
 
+def _plain_object(value: Any) -> Any:
+    try:
+        json.dumps(value, ensure_ascii=False).encode()
+    except (TypeError, ValueError, RecursionError):
+        raise ValueError("an object that JSON can hold") from None
+    return value
+
+
 class Derivation(BaseModel):
     """How the observables of a record were obtained."""
 
     model_config = ConfigDict(extra="forbid")
     name: Name
     version: Text = ""
-    settings: dict[str, Any] = {}
+    settings: Annotated[dict[str, Any], BeforeValidator(_plain_object)] = {}
 
 
 Setting = _Number | StrictStr | StrictBool | list[_Number] | Quantity | None
@@ -147,6 +157,21 @@ def _time(value: Any) -> Any:
     if isinstance(value, (str, datetime)):
         return value
     raise ValueError("an ISO 8601 time with an offset, such as 2026-10-05T21:14:03+02:00")
+
+
+def _reason(value: Any) -> str | None:
+    if value is None:
+        return None
+    text = clean_text(value)
+    if not text.strip():
+        raise ValueError("a reason, or null for a shot that did not fail")
+    return text
+
+
+def _each_once(frames: list[Frame]) -> list[Frame]:
+    if len({(frame.camera, frame.role) for frame in frames}) < len(frames):
+        raise ValueError("each camera and role once")
+    return frames
 
 
 class ShotRecord(BaseModel):
@@ -171,8 +196,8 @@ class ShotRecord(BaseModel):
     reference: StrictBool = False
     parameters: _Settings = {}
     observables: _Readings = {}
-    failed: Text | None = None
-    frames: list[Frame] = []
+    failed: Annotated[str | None, BeforeValidator(_reason)] = None
+    frames: Annotated[list[Frame], AfterValidator(_each_once)] = []
     note: Text = ""
     derivation: Name | Derivation | None = None
 
@@ -250,6 +275,8 @@ _WANTED = {
     "literal_error": "format 1",
     "bool_type": "true or false",
     "int_type": "a whole number",
+    "string_type": "text",
+    "invalid_key": "text as the name of a field",
     "dict_type": "an object",
     "list_type": "a list",
     "greater_than_equal": "a number of at least 1",
@@ -257,8 +284,14 @@ _WANTED = {
 
 
 def _explain(problem: ValidationError, record: Mapping[str, Any], model: type[BaseModel]) -> RecordError:
-    first = problem.errors()[0]
-    path = [part for part in first["loc"] if part not in ("str", "SequenceSteps", "Derivation", "[key]")]
+    problems = problem.errors()
+    first = problems[0]
+    if isinstance(record.get("derivation"), Mapping):
+        first = next((item for item in problems if "Derivation" in item["loc"]), first)
+    skipped = ("str", "SequenceSteps", "Derivation", "[key]")
+    path = [
+        part for part in first["loc"] if part not in skipped and not str(part).startswith("function-before[")
+    ]
     field = ".".join(str(part) for part in path)
     if first["type"] == "missing":
         return RecordError(field, "nothing", "this field; a shot needs machine, started and sequence")
