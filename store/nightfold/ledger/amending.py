@@ -13,7 +13,7 @@ from nightfold.errors import RecordError
 from nightfold.ledger.checking import CheckedShot, readings_content
 from nightfold.ledger.names import MachineNames, insert_row
 from nightfold.records import Derivation, shorten
-from nightfold.settings import ReadValue, digest_content, hash_setting, plain_value, token_of
+from nightfold.settings import ReadValue, Value, digest_content
 from nightfold.timestamps import from_us
 
 
@@ -29,7 +29,7 @@ def amend_shot(connection: Connection, stored: Row[Any], shot: CheckedShot, at_u
         connection, stored.id, shot.content_digest
     ):
         return False
-    _check_identity(connection, stored, shot)
+    check_identity(connection, stored, shot)
     changed = _amend(connection, stored.id, shot.machine, shot.readings, shot.derivation, at_us)
     if shot.failed is not None and set_failed(connection, stored.id, shot.failed, at_us):
         changed = True
@@ -65,7 +65,13 @@ def _remember(connection: Connection, shot_id: int, digest: bytes, at_us: int) -
     connection.execute(insert(tables.amendment).values(shot_id=shot_id, digest=digest, at_us=at_us))
 
 
-def _check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) -> None:
+def check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) -> None:
+    """Refuse a record whose settings, time, sequence or scan are not those of the shot stored under its uid.
+
+    Raises
+    ------
+    RecordError
+    """
     taken = "as stored under this uid; a shot's settings are never overwritten"
     if stored.sequence_id != shot.machine.sequences.get(shot.sequence):
         raise RecordError(
@@ -83,29 +89,45 @@ def _check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot)
         raise RecordError("reference", str(shot.reference), taken)
     scan = tables.scan
     label = connection.execute(select(scan.c.label).where(scan.c.id == stored.scan_id)).scalar()
-    if label != shot.wish.label:
-        raise RecordError("scan", shorten(shot.wish.label), f"{shorten(label)}, {taken}")
+    wished = None if shot.reference else shot.wish.label
+    if label != wished:
+        raise RecordError("scan", _label(wished), f"{_label(label)}, {taken}")
+
+
+def _label(label: str | None) -> str:
+    return "no label" if label is None else shorten(label)
 
 
 def _differing_setting(
     connection: Connection, stored: Row[Any], shot: CheckedShot, taken: str
 ) -> RecordError:
-    entries = {**(shot.resting or {}), **shot.moving}
-    kept = {}
-    for name, (kind, _unit, num, exact, _swept) in stored_settings(
-        connection, stored.id, stored.set_id
-    ).items():
-        kept[name] = kind, num, exact
-    for name in sorted({*entries, *kept}):
+    stated = {name: entry.value for name, entry in ((shot.resting or {}) | shot.moving).items()}
+    if shot.resting is None:
+        stated |= _set_content(connection, shot.set_digest)
+    kept = {
+        name: Value(kind, num, exact)  # type: ignore[arg-type]
+        for name, (kind, _, num, exact, _) in stored_settings(connection, stored.id, stored.set_id).items()
+    }
+    for name in sorted({*stated, *kept}):
         field = f"parameters.{name}"
         if name not in kept:
-            return RecordError(field, shorten(entries[name].value.plain), f"no such parameter, {taken}")
-        if name not in entries:
-            return RecordError(field, "nothing", f"{shorten(plain_value(*kept[name]))}, {taken}")
-        if hash_setting(name, token_of(*kept[name])) != entries[name].hash:
-            found = shorten(entries[name].value.plain)
-            return RecordError(field, found, f"{shorten(plain_value(*kept[name]))}, {taken}")
+            return RecordError(field, shorten(stated[name].plain), f"no such parameter, {taken}")
+        if name not in stated:
+            return RecordError(field, "nothing", f"{shorten(kept[name].plain)}, {taken}")
+        if kept[name].token != stated[name].token:
+            return RecordError(field, shorten(stated[name].plain), f"{shorten(kept[name].plain)}, {taken}")
     return RecordError("parameters", "other settings", taken)
+
+
+def _set_content(connection: Connection, digest: bytes) -> dict[str, Value]:
+    parameter, rest, whole = tables.parameter, tables.set_value, tables.value_set
+    query = (
+        select(parameter.c.name, parameter.c.kind, rest.c.num, rest.c.exact)
+        .join(rest, rest.c.parameter_id == parameter.c.id)
+        .join(whole, whole.c.id == rest.c.set_id)
+        .where(whole.c.digest == digest)
+    )
+    return {row.name: Value(row.kind, row.num, row.exact) for row in connection.execute(query)}
 
 
 def stored_settings(

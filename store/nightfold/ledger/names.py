@@ -34,7 +34,7 @@ class Known:
 
 @dataclass(slots=True)
 class MachineNames:
-    """Everything known by name of one machine."""
+    """Everything known by name of one machine; the id is 0 while it is not in the store."""
 
     id: int
     name: str
@@ -61,9 +61,12 @@ class MachineNames:
         RecordError
             If kind or unit contradict what is known, or the name is an observable's.
         """
-        if name in self.observables:
-            raise RecordError(field, "a parameter", f"another name: {name!r} is an observable of {self.name}")
-        known = self.parameters.get(name) or self._fresh_parameter(name, value)
+        known = self.parameters.get(name)
+        if known is None:
+            if name in self.observables or (self.card is not None and name in self.card.observables):
+                wanted = f"another name: {name!r} is an observable of {self.name}"
+                raise RecordError(field, "a parameter", wanted)
+            known = self._fresh_parameter(name, value)
         if value.kind != known.kind:
             value = _reread(value, known.kind, field)
         if value.kind != "number":
@@ -82,9 +85,12 @@ class MachineNames:
         RecordError
             If the unit contradicts what is known, or the name is a parameter's.
         """
-        if name in self.parameters:
-            raise RecordError(field, "an observable", f"another name: {name!r} is a parameter of {self.name}")
-        known = self.observables.get(name) or self._fresh_observable(name)
+        known = self.observables.get(name)
+        if known is None:
+            if name in self.parameters or (self.card is not None and name in self.card.parameters):
+                wanted = f"another name: {name!r} is a parameter of {self.name}"
+                raise RecordError(field, "an observable", wanted)
+            known = self._fresh_observable(name)
         known = self._adopt(known, unit, field)
         stated = known.bare if unit is None else unit
         if stated in (None, known.unit) or known.unit is None:
@@ -160,13 +166,15 @@ class Names:
         self.machines = read_names(connection)
         self._loaded = True
 
-    def machine(self, connection: Connection, name: str) -> MachineNames:
-        """Return a machine's names; an unknown machine is entered."""
-        found = self.machines.get(name)
-        if found is None:
-            machine_id = insert_row(connection, tables.machine, {"name": name, "zone": "UTC"})
-            found = self.machines[name] = MachineNames(machine_id, name)
-        return found
+    def find(self, name: str) -> MachineNames:
+        """Return a machine's names; those of an unknown machine have no id until they are entered."""
+        return self.machines.get(name) or MachineNames(0, name)
+
+    def enter(self, connection: Connection, machine: MachineNames) -> None:
+        """Enter a machine that is not in the store yet."""
+        if not machine.id:
+            machine.id = insert_row(connection, tables.machine, {"name": machine.name, "zone": machine.zone})
+            self.machines[machine.name] = machine
 
     def sequence(self, connection: Connection, machine: MachineNames, name: str) -> int:
         """Return the id of a sequence; an unknown one is entered."""
@@ -256,7 +264,16 @@ def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: in
     CardError
         If a unit of the card does not convert into the one stored, or a kind contradicts the one stored.
     """
-    machine = names.machine(connection, card.machine)
+    machine = names.find(card.machine)
+    names.enter(connection, machine)
+    for kind, stored, other in (
+        ("parameters", machine.observables, "an observable"),
+        ("observables", machine.parameters, "a parameter"),
+    ):
+        for name in getattr(card, kind).keys() & stored.keys():
+            raise CardError(
+                f"card of {card.machine}: {kind}.{name}: found an entry, wanted none: the store has {other} of that name"
+            )
     for kind, table in (("parameters", tables.parameter), ("observables", tables.observable)):
         for name, known in getattr(machine, kind).items():
             entry = card.observable(name) if kind == "observables" else card.parameters.get(name)

@@ -11,7 +11,7 @@ from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
 from nightfold.errors import RecordError
-from nightfold.ledger.amending import amend_readings, amend_shot
+from nightfold.ledger.amending import amend_readings, amend_shot, check_identity
 from nightfold.ledger.checking import CheckedShot, check_shot, derivation_of, readings_of, sequence_name
 from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
@@ -104,13 +104,7 @@ class Writer:
                 batch = _Batch(connection, log.enter(connection) if log else None)
                 for item in items:
                     self._check(batch, item)
-                self._look_up(batch, [_uid(shot) for _, shot in batch.checked])
-                for item, shot in batch.checked:
-                    try:
-                        self._settle(batch, item, shot)
-                    except RecordError as problem:
-                        batch.refused.append((item, problem))
-                self._flush(batch)
+                self._settle_all(batch)
                 if log is not None:
                     log.save(connection, items, batch.refused)
         except BaseException:
@@ -138,7 +132,7 @@ class Writer:
             if isinstance(record, Amendment):
                 batch.checked.append((item, _Late(record)))
                 return
-            machine = self._names.machine(batch.connection, record.machine)
+            machine = self._names.find(record.machine)
             key = (record.machine, sequence_name(record))
             memory = self._streams.get(key)
             if memory is None:
@@ -148,15 +142,42 @@ class Writer:
                     memory = recall(batch.connection, machine, sequence_id)
                 self._streams[key] = memory
             shot, plan = check_shot(record, machine, memory)
-            self._names.keep(batch.connection, machine, plan)
             if shot.set_digest not in self._sets:
                 moving = shot.moving
                 shot.resting = {name: entry for name, entry in memory.entries.items() if name not in moving}
+            if plan or not machine.id:
+                self._check_twin(batch, shot)
+            self._names.enter(batch.connection, machine)
+            self._names.keep(batch.connection, machine, plan)
             shot.source_id = batch.source_id
             shot.line = item.line if batch.source_id is not None else None
             batch.checked.append((item, shot))
         except RecordError as problem:
             batch.refused.append((item, problem))
+
+    def _check_twin(self, batch: _Batch, shot: CheckedShot) -> None:
+        """Refuse a shot that differs from the one of its uid before any name that it brings is entered.
+
+        Raises
+        ------
+        RecordError
+        """
+        if any(_uid(other) == shot.uid for _, other in batch.checked):
+            self._settle_all(batch)
+        self._look_up(batch, [shot.uid])
+        if shot.uid in batch.stored:
+            check_identity(batch.connection, batch.stored[shot.uid], shot)
+
+    def _settle_all(self, batch: _Batch) -> None:
+        """Write what has been checked: new shots, and amendments of stored ones."""
+        self._look_up(batch, [_uid(shot) for _, shot in batch.checked])
+        for item, shot in batch.checked:
+            try:
+                self._settle(batch, item, shot)
+            except RecordError as problem:
+                batch.refused.append((item, problem))
+        batch.checked.clear()
+        self._flush(batch)
 
     def _look_up(self, batch: _Batch, uids: Sequence[str]) -> None:
         table = tables.shot
