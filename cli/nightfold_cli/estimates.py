@@ -23,7 +23,6 @@ ON_SCREEN = (
     Column("unit"),
     Column("95 % interval"),
 )
-PIPED = tuple(Column(name) for name in ("estimate", "value", "stderr", "unit", "low95", "high95"))
 
 
 def value_text(estimate: AnyEstimate, *, fixed: bool = False) -> str:

@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import json
 import shutil
+import sqlite3
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -385,11 +386,17 @@ def test_fit_slice_by_slice(copy: Path, run: Run) -> None:
 
 
 def test_fit_in_a_pipe_warns_on_stderr(copy: Path, run: Run) -> None:
-    answer = run("--store", copy, "fit", "loss-coarse", "lorentzian", "-o", "temperature", "--no-keep")
+    words = ("fit", "loss-coarse", "lorentzian", "gaussian", "-o", "temperature", "--no-keep")
+    answer = run("--store", copy, *words)
     head, *lines = answer.out.splitlines()
-    assert head == "estimate\tvalue\tstderr\tunit\tlow95\thigh95"
-    assert all(line.count("\t") == 5 for line in lines)
-    assert "do not trust this: " in answer.err
+    assert head.split("\t")[:5] == ["model", "slice", "estimate", "value", "stderr"]
+    assert {line.split("\t")[0] for line in lines} == {"lorentzian", "gaussian"}
+    assert {line.count("\t") for line in lines} == {head.count("\t")}
+    assert "lorentzian: do not trust this: no-feature: " in answer.err
+    sliced = run(
+        "--store", copy, "fit", "evaporation-map", "gaussian", "--along", "evaporate#3.end_power", "--no-keep"
+    )
+    assert sliced.out.splitlines()[1].split("\t")[1] == "evaporate#3.duration 0.8"
 
 
 def test_demo_refuses_a_folder_in_use(run: Run, at_home: Path) -> None:
@@ -404,3 +411,61 @@ def test_in_a_process_of_its_own(heron: Path, in_a_process: Run) -> None:
     answer = in_a_process("nights", "--json", NIGHTFOLD_STORE=str(heron / "heron.sqlite"))
     assert answer.code == 0
     assert decoded(answer)["nights"]
+
+
+@pytest.mark.parametrize(("revision", "said"), [("9999", "newer"), ("0000", "upgrade")])
+def test_store_of_another_revision(revision: str, said: str, copy: Path, run: Run) -> None:
+    with sqlite3.connect(copy) as connection:
+        connection.execute("UPDATE alembic_version SET version_num = ?", [revision])
+    connection.close()
+    answer = run("--store", copy, "nights")
+    assert answer.code in (4, 5)
+    assert revision in answer.err or said in answer.err
+    assert answer.out == ""
+
+
+def test_piped_lists_are_tables_of_one_width(copy: Path, run: Run) -> None:
+    store = ("--store", copy)
+    run(*store, "fit", "loss-coarse", "lorentzian")
+    for words in ("fits", "scans", "nights", "edits", "shots -o atom_number", "scan loss-coarse", "models"):
+        head, *lines = run(*words.split(), *store[:2] if words != "models" else ()).out.splitlines()
+        assert {line.count("\t") for line in lines} <= {head.count("\t")}, words
+    head, first, *_ = run(*store, "fits").out.splitlines()
+    row = dict(zip(head.split("\t"), first.split("\t"), strict=True))
+    assert (row["scan"], row["estimate"], row["trusted"], row["stale"]) == (
+        "loss-coarse#1",
+        "center",
+        "true",
+        "false",
+    )
+    assert float(row["low95"]) < float(row["value"]) < float(row["high95"])
+
+
+def test_a_fit_goes_stale_when_its_shots_change(copy: Path, run: Run) -> None:
+    store = ("--store", copy)
+    run(*store, "fit", "loss-coarse", "lorentzian")
+    shots = decoded(run(*store, "shots", "--scan", "loss-coarse", "--json"))["shots"]
+    run(*store, "set-aside", shots[0]["uid"], "--reason", "test")
+    assert decoded(run(*store, "fits", "--json"))["fits"][0]["stale"] is True
+
+
+def test_new_says_what_to_do_next(run: Run, at_home: Path, heron: Path) -> None:
+    assert "A card to fill in: egret.toml" in run("new", "--machine", "egret").out
+    said = run("--store", "other.sqlite", "new", "--card", heron / "heron.toml").out
+    assert "Machine heron: 140 parameters, 8 observables." in said
+    wrong = run("--store", "third.sqlite", "new", "--card", at_home / "gone.toml")
+    assert wrong.code == 5
+    assert not (at_home / "third.sqlite").exists()
+
+
+def test_upgrade_says_there_is_nothing_to_do(copy: Path, run: Run) -> None:
+    assert "Nothing to do: the store is at revision" in run("--store", copy, "upgrade").out
+
+
+def test_refused_files_are_counted_apart(run: Run, at_home: Path) -> None:
+    (at_home / "odd.xyz").write_text("?")
+    answer = run("take", "odd.xyz", at_home, "--new")
+    assert answer.code == 5
+    assert "the suffix '.xyz'" in answer.err
+    assert "a folder" in answer.err
+    assert "mend" not in answer.err

@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from nightfold.store import Store
 
 HELP = "play six weeks of an invented machine"
-EXAMPLES = ("nightfold demo", "nightfold demo /tmp/heron --json")
+EXAMPLES = ("nightfold demo", "nightfold demo heron-demo --json")
 STORE = "heron.sqlite"
 
 

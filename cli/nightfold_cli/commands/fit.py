@@ -18,7 +18,7 @@ from nightfold_cli.plots import Label
 from nightfold_cli.points import points_of
 from nightfold_cli.progress import Progress
 from nightfold_cli.render import Screen
-from nightfold_cli.settings import aligned
+from nightfold_cli.settings import aligned, setting
 
 if TYPE_CHECKING:
     from nightfold.fits.many import FitTable
@@ -76,6 +76,9 @@ def run(args: Namespace) -> int:
             ]
             screen.answer({"fits": entries})
             return 0
+        if not screen.terminal:
+            _tabulate(screen, fits)
+            return 0
         for model, parts in fits:
             if len(scan.axes) > 1:
                 _show_slices(screen, scan, model, observable, parts, args)
@@ -119,6 +122,23 @@ def parts_of(outcome: FitResult | FitTable) -> list[Slice]:
     return [Slice({}, outcome)]
 
 
+def _tabulate(screen: Screen, fits: Sequence[tuple[str, list[Slice]]]) -> None:
+    """Write a line an estimate, for programs; warnings go to stderr."""
+    heads = ("model", "slice", "estimate", "value", "stderr", "unit", "low95", "high95", "trusted")
+    rows: list[Row] = []
+    for model, parts in fits:
+        for part in parts:
+            where = ", ".join(f"{name} {setting(value)}" for name, value in part.where.items())
+            trusted = setting(part.result.trusted)
+            rows += [[model, where, *row, trusted] for row in estimates.plain_rows(part.result.estimates)]
+            for warning in part.result.warnings:
+                kind = "to know" if warning.advisory else "do not trust this"
+                screen.say(
+                    f"{model}{' at ' + where if where else ''}: {kind}: {warning.code}: {warning.message}"
+                )
+    screen.table([Column(head) for head in heads], rows, empty="no estimates")
+
+
 def _title(scan: Scan, model: str, observable: str, along: str, background: str) -> tuple[str, str]:
     """Return what was fitted to what."""
     under = "no background" if background == "none" else f"{background} background"
@@ -130,15 +150,12 @@ def _show(
 ) -> None:
     """Show one fit: chart and residuals first, so that the numbers end up where the eye is."""
     along = args.along or scan.axes[0].parameter
-    if screen.terminal:
-        screen.heading(*_title(scan, model, observable, along, result.background))
-        _draw(screen, scan, along, observable, result)
-        screen.heading("estimates", _counts(scan, result))
-    fixed = dict(args.fixed)
-    if screen.terminal:
-        screen.table(estimates.ON_SCREEN, estimates.rows(result.estimates, fixed), empty="no estimates")
-    else:
-        screen.table(estimates.PIPED, estimates.plain_rows(result.estimates), empty="no estimates")
+    screen.heading(*_title(scan, model, observable, along, result.background))
+    _draw(screen, scan, along, observable, result)
+    screen.heading("estimates", _counts(scan, result))
+    screen.table(
+        estimates.ON_SCREEN, estimates.rows(result.estimates, dict(args.fixed)), empty="no estimates"
+    )
     _verdict(screen, result)
 
 
@@ -172,11 +189,6 @@ def _verdict(screen: Screen, result: FitResult) -> None:
     """Say whether to trust the fit, and what to do if not."""
     grave = [warning for warning in result.warnings if not warning.advisory]
     minor = [warning for warning in result.warnings if warning.advisory]
-    if not screen.terminal:
-        for warning in result.warnings:
-            kind = "to know" if warning.advisory else "do not trust this"
-            screen.say(f"{kind}: {warning.code}: {warning.message}")
-        return
     if grave:
         screen.heading("DO NOT TRUST THIS FIT")
         for warning in grave:
@@ -219,7 +231,7 @@ def _show_slices(
     ]
     screen.table(columns, rows, empty="no slices")
     doubted = [part for part in parts if not part.result.trusted]
-    if doubted and screen.terminal:
+    if doubted:
         screen.heading(f"DO NOT TRUST {len(doubted)} of {len(parts)} slices")
         seen: dict[str, str] = {}
         for part in doubted:
