@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+
 from nightfold import FitResult, FitTable, Store, fit_curve, open_store
 from nightfold.errors import ChoiceNeeded, FitError, NotFound
 
@@ -18,7 +19,9 @@ def line(x: np.ndarray[Any, Any], center: float) -> np.ndarray[Any, Any]:
     return 1e5 - 4e4 / (1 + (2 * (x - center) / 0.8) ** 2)
 
 
-def records(label: str, holds: tuple[float, ...] = (100.0,), *, swept: tuple[str, ...] = ("coil_current",)) -> list[Any]:
+def records(
+    label: str, holds: tuple[float, ...] = (100.0,), *, swept: tuple[str, ...] = ("coil_current",)
+) -> list[Any]:
     rng = np.random.default_rng(11)
     made = []
     for hold in holds:
@@ -59,7 +62,10 @@ def test_a_scan_fit_is_the_curve_fit_of_its_table(store: Store) -> None:
     table = store.scan("loss").table()
     alone = fit_curve(table.coil_current, table.atom_number, "lorentzian", unit_x="A")
     for name, estimate in result.estimates.items():
-        assert (estimate.value, estimate.stderr) == (alone.estimates[name].value, alone.estimates[name].stderr)
+        assert (estimate.value, estimate.stderr) == (
+            alone.estimates[name].value,
+            alone.estimates[name].stderr,
+        )
     assert result.estimates["center"].unit == "A"
     assert result.estimates["center"].value == pytest.approx(61.1, abs=5 * result.estimates["center"].stderr)
 

@@ -12,8 +12,8 @@ from nightfold.errors import ChoiceNeeded, FitError, NotFound
 from nightfold.fits.curve import fit_curve
 from nightfold.fits.many import FitTable, fit_many
 from nightfold.fits.result import FitResult
-from nightfold.ledger.selecting import near_miss
-from nightfold.scans.axes import encode
+from nightfold.ledger.selecting import column_name, near_miss
+from nightfold.scans.columns import encode
 from nightfold.settings import digest_content
 
 if TYPE_CHECKING:
@@ -74,6 +74,7 @@ class SliceFit:
 
 def digest_data(table: pd.DataFrame, along: str, observable: str) -> bytes:
     """Return a digest of the shots behind a fit: uids, points, values and their stderr."""
+    along, observable = column_name(along), column_name(observable)
     columns = ["uid", along, observable, f"{observable}_stderr"]
     return digest_content([table[column].tolist() for column in columns])
 
@@ -95,7 +96,7 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
     if len(scan.axes) < 2:
         result = fit_curve(
             x,
-            table[observable].to_numpy(),
+            table[column_name(observable)].to_numpy(),
             request.model,
             stderr=_stderr(table, observable, request),
             **request.options,
@@ -104,7 +105,7 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
         return result, [SliceFit({}, along, result, table)]
     values = np.full((len(slices), len(table)), np.nan)
     for number, (_, rows) in enumerate(slices):
-        values[number, rows] = table[observable].to_numpy()[rows]
+        values[number, rows] = table[column_name(observable)].to_numpy()[rows]
     stderr = _stderr(table, observable, request)
     fits = fit_many(
         x,
@@ -168,7 +169,7 @@ def slice_rows(scan: Scan, table: pd.DataFrame, along: str) -> list[tuple[dict[s
     """Return the slices of a scan: values of the axes not fitted along, and the rows of the table."""
     leader = scan.followers.get(along, along)
     others = [axis.parameter for axis in scan.axes if axis.parameter != leader]
-    columns = [encode(table[name].tolist()) for name in others]
+    columns = [encode(table[column_name(name)].tolist()) for name in others]
     if not columns:
         return [({}, np.arange(len(table)))]
     codes = np.stack([column.codes for column in columns], axis=1)
@@ -192,23 +193,17 @@ def _within(result: FitResult, rows: Sequence[int] | NDArray[np.intp]) -> FitRes
 
 
 def _numbers(scan: Scan, table: pd.DataFrame, along: str) -> NDArray[np.float64]:
-    column = table[along]
-    if column.dtype == object or column.dtype == bool:
-        found = next(
-            (value for value in column if not isinstance(value, (int, float)) or isinstance(value, bool)),
-            None,
-        )
-        if found is not None:
-            raise FitError(
-                f"scan {scan.key}: {along} is no number (found {found!r}); a fit needs numbers to go along"
-            )
-    return column.to_numpy(dtype=np.float64)
+    values = table[column_name(along)].tolist()
+    strange = next((value for value in values if isinstance(value, (str, bool))), None)
+    if strange is not None:
+        raise FitError(f"scan {scan.key}: {along} is no number (found {strange!r}); a fit goes along numbers")
+    return np.array([np.nan if value is None else value for value in values], dtype=np.float64)
 
 
 def _stderr(table: pd.DataFrame, observable: str, request: FitRequest) -> NDArray[np.float64] | None:
     """Return the stated uncertainties if every value has one; they are required with weights 'given'."""
-    stderr = table[f"{observable}_stderr"].to_numpy(dtype=np.float64)
-    known = np.isfinite(table[observable].to_numpy(dtype=np.float64))
+    stderr = table[f"{column_name(observable)}_stderr"].to_numpy(dtype=np.float64)
+    known = np.isfinite(table[column_name(observable)].to_numpy(dtype=np.float64))
     if request.weights == "given":
         return stderr
     usable = np.isfinite(stderr) & (stderr > 0)

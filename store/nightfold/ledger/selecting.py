@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 _MANY = 5000
 _STDERR = "_stderr"
+_OWN_COLUMNS = {"uid", "shot_id", "started", "sequence", "scan", "set_aside"}
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,6 +58,11 @@ class Named:
     ids: tuple[int, ...]
     kind: str
     unit: str
+
+
+def column_name(name: str) -> str:
+    """Return the column of a setting or reading in a table of shots: its name, with ``_`` if it is the shot's own."""
+    return f"{name}_" if name in _OWN_COLUMNS else name
 
 
 def moment_us(value: datetime | str, zone: str) -> int:
@@ -232,10 +238,10 @@ def read_table(
     columns = setting_columns(connection, rows, wanted, where)
     values = reading_columns(connection, rows, read, where)
     for name in parameters:
-        frame[name] = columns[name]
+        frame[column_name(name)] = columns[name]
     for name in observables:
         base = name.removesuffix(_STDERR) if name not in values else name
-        frame[name] = values[base][0 if name == base else 1]
+        frame[column_name(name)] = values[base][0 if name == base else 1]
     frame.attrs["units"] = {item.name: item.unit for item in [*wanted, *read]}
     return frame
 

@@ -21,11 +21,13 @@ class ScanFolder:
     """Places labelled shots as they come, folds unlabelled ones, and folds again when shots come late."""
 
     _newest: dict[tuple[int, str], Round] = field(default_factory=dict)
+    _touched: dict[tuple[int, str], dict[int, Round]] = field(default_factory=dict)
     _rejoin_us: dict[int, int] | None = None
 
     def forget(self) -> None:
         """Drop what is remembered of the store."""
         self._newest.clear()
+        self._touched.clear()
         self._rejoin_us = None
 
     def place(self, connection: Connection, shots: Sequence[CheckedShot]) -> None:
@@ -42,6 +44,7 @@ class ScanFolder:
             current.add(shot.started_us, shot.wish.planned_shots, shot.wish.last)
             current.watch_settings(shot.set_digest, len(shot.moving))
             self._newest[key] = current
+            self._touched.setdefault(key, {})[current.scan_id] = current
             shot.scan_id = current.scan_id
 
     def fold(self, connection: Connection, shots: Sequence[CheckedShot]) -> None:
@@ -56,15 +59,16 @@ class ScanFolder:
             else:
                 labelled.setdefault((shot.sequence_id, shot.wish.label), []).append(shot)
         for key, members in labelled.items():
-            current = self._newest[key]
-            if current.late:
+            touched = self._touched.pop(key)
+            for current in touched.values():
+                rounds.save_progress(connection, current)
+            if any(current.late for current in touched.values()):
                 rounds.fold_label(connection, *key, self.rejoin_us(connection, members[0]))
                 del self._newest[key]
-            else:
-                rounds.save_progress(connection, current)
-                done = {current.scan_id} if current.plain else set()
-                for scan_id in {shot.scan_id for shot in members if shot.scan_id is not None} - done:
-                    settle_axes(connection, scan_id, current.swept)
+                continue
+            for current in touched.values():
+                if not current.plain:
+                    settle_axes(connection, current.scan_id, current.swept)
         for sequence_id, started in free.items():
             refolding.fold_span(connection, sequence_id, min(started), max(started))
 

@@ -14,6 +14,7 @@ from nightfold.ledger.names import newest_cards
 from nightfold.ledger.selecting import (
     Named,
     Selection,
+    column_name,
     named_by_id,
     reading_columns,
     select_shots,
@@ -135,10 +136,11 @@ def read_shots(connection: Connection, scan_id: int, details: ScanDetails, set_a
         "started": utc_times(np.array([row.started_us for row in rows], dtype=np.int64)),
         "set_aside": np.array([row.id in aside for row in rows], dtype=bool),
     }
-    columns |= setting_columns(connection, rows, details.settings, where)
+    settings = setting_columns(connection, rows, details.settings, where)
+    columns |= {column_name(name): values for name, values in settings.items()}
     for name, (value, stderr) in reading_columns(connection, rows, details.observables, where).items():
-        columns[name] = value
-        columns[f"{name}_stderr"] = stderr
+        columns[column_name(name)] = value
+        columns[f"{column_name(name)}_stderr"] = stderr
     frame = pd.DataFrame(columns)
     frame.attrs["units"] = details.units
     return frame

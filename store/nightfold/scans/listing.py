@@ -142,6 +142,6 @@ def _newest_first_us(connection: Connection, sequence_id: int) -> int:
 
 def _set_aside_counts(connection: Connection, scan_id: int | None) -> dict[int, int]:
     shot = tables.shot
-    query = select(shot.c.scan_id, func.count()).where(set_aside_now(shot.c.id))
+    query = select(shot.c.scan_id, func.count().label("aside")).where(set_aside_now(shot.c.id))
     query = query.where(shot.c.scan_id.isnot(None) if scan_id is None else shot.c.scan_id == scan_id)
-    return dict(connection.execute(query.group_by(shot.c.scan_id)).tuples().all())
+    return {row.scan_id: row.aside for row in connection.execute(query.group_by(shot.c.scan_id))}

@@ -25,18 +25,20 @@ def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: 
     The span reaches to the nearest pause on either side, so the outcome does not depend on the order of arrival; where
     the machine never pauses, to the bounds of the scans about 500 shots away.
     """
-    rows = _span(connection, sequence_id, first_us, last_us)
+    rows, pause_us = _span(connection, sequence_id, first_us, last_us)
     query = (
         select(tables.parameter.c.id, tables.parameter.c.name)
         .join(tables.sequence, tables.sequence.c.machine_id == tables.parameter.c.machine_id)
         .where(tables.sequence.c.id == sequence_id)
     )
     names = {row.id: row.name for row in connection.execute(query)}
-    found = fold_stream(_stream(connection, rows, names))
+    found = fold_stream(_stream(connection, rows, names), pause_us=pause_us)
     _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()})
 
 
-def _span(connection: Connection, sequence_id: int, first_us: int, last_us: int) -> list[Row[Any]]:
+def _span(
+    connection: Connection, sequence_id: int, first_us: int, last_us: int
+) -> tuple[list[Row[Any]], int]:
     shot = tables.shot
     before = _unlabelled(connection, sequence_id, shot.c.started_us < first_us, newest_first=True)[::-1]
     inside = _unlabelled(connection, sequence_id, shot.c.started_us.between(first_us, last_us), limit=None)
@@ -52,7 +54,7 @@ def _span(connection: Connection, sequence_id: int, first_us: int, last_us: int)
         low = _scan_bound(rows, 0, 1)
     if high == len(rows) and len(after) == REACH:
         high = _scan_bound(rows, len(rows) - 1, -1) + 1
-    return rows[low:high]
+    return rows[low:high], pause
 
 
 def _scan_bound(rows: Sequence[Row[Any]], start: int, step: int) -> int:

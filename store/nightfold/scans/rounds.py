@@ -80,13 +80,9 @@ def newest_round(connection: Connection, sequence_id: int, label: str) -> Round 
     ).first()
     if row is None:
         return None
-    span = connection.execute(
-        select(func.min(shot.c.started_us), func.max(shot.c.started_us), func.count()).where(
-            shot.c.scan_id == row.id
-        )
-    ).one()
-    swept = _swept_of(connection, [row.id]).get(row.id, frozenset())
-    last, count = span
+    span = select(func.max(shot.c.started_us), func.count()).where(shot.c.scan_id == row.id)
+    last, count = connection.execute(span).one()
+    swept = _swept_of(connection, row.id)
     return Round(row.id, row.round, swept, last or 0, count, row.planned_shots, row.closed_us)
 
 
@@ -171,17 +167,14 @@ def _members(connection: Connection, scan_ids: Sequence[int]) -> list[_Member]:
     ]
 
 
-def _swept_of(connection: Connection, scan_ids: Sequence[int]) -> dict[int, frozenset[int]]:
-    """Return the parameters the records of each scan declared swept, by its newest shot."""
+def _swept_of(connection: Connection, scan_id: int) -> frozenset[int]:
+    """Return the parameters that the records of a scan declared swept, by its newest shot."""
     shot, value = tables.shot, tables.shot_value
-    found = {}
-    for scan_id in scan_ids:
-        newest = connection.execute(
-            select(shot.c.id).where(shot.c.scan_id == scan_id).order_by(shot.c.started_us.desc()).limit(1)
-        ).scalar()
-        rows = select(value.c.parameter_id).where(value.c.shot_id == newest, value.c.swept)
-        found[scan_id] = frozenset(connection.execute(rows).scalars())
-    return found
+    newest = (
+        select(shot.c.id).where(shot.c.scan_id == scan_id).order_by(shot.c.started_us.desc()).limit(1)
+    ).scalar_subquery()
+    rows = select(value.c.parameter_id).where(value.c.shot_id == newest, value.c.swept)
+    return frozenset(connection.execute(rows).scalars())
 
 
 def move_shots(connection: Connection, scan_id: int | None, shot_ids: Sequence[int]) -> None:

@@ -7,7 +7,7 @@ from datetime import datetime
 from functools import cached_property
 from typing import TYPE_CHECKING
 
-from nightfold.ledger.selecting import scan_key
+from nightfold.ledger.selecting import column_name, scan_key
 from nightfold.scans.axes import Axis
 from nightfold.scans.details import ScanDetails, read_details, read_shots
 from nightfold.session import Session
@@ -126,10 +126,10 @@ class Scan:
 
         dataset: xr.Dataset = build_dataset(
             self.table(set_aside),
-            [axis.parameter for axis in self.axes],
-            co_moving=self.followers,
-            observables=self.observables,
-            units=self.units,
+            [column_name(axis.parameter) for axis in self.axes],
+            co_moving={column_name(name): column_name(axis) for name, axis in self.followers.items()},
+            observables=[column_name(name) for name in self.observables],
+            units={column_name(name): unit for name, unit in self.units.items()},
             descriptions=self._details.descriptions,
             attrs={
                 "scan": self.key,
