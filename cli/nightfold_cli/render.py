@@ -24,6 +24,7 @@ if TYPE_CHECKING:
 
 _STYLES = {"axis": "dim", "curve": "cyan", "data": "bold", "label": "", "plain": ""}
 _WIDEST_TEXT = 100
+_ENDLESS = 100_000  # lines are wrapped here or not at all
 
 
 class Screen:
@@ -192,10 +193,10 @@ class Screen:
         """Write one line made of runs of text."""
         from rich.text import Text
 
-        line = Text(no_wrap=True, overflow="ignore", end="")
+        line = Text(no_wrap=True, overflow="ignore")
         for text, style in runs:
             line.append(text, style or None)
-        self._rich().print(line, crop=False, soft_wrap=True)
+        self._rich().print(line)
 
     def _rich(self) -> Console:
         """Return the console, made when first needed."""
@@ -204,7 +205,7 @@ class Screen:
 
             self._console = Console(
                 file=self.out,
-                width=self.width,
+                width=_ENDLESS,
                 highlight=False,
                 markup=False,
                 emoji=False,

@@ -131,3 +131,10 @@ def test_signs_that_the_terminal_cannot_show_are_replaced() -> None:
     latin = io.TextIOWrapper(io.BytesIO(), encoding="latin-1")
     assert not Screen(latin, latin, "terminal", 80).unicode
     assert Screen(io.StringIO(), io.StringIO(), "terminal", 80).unicode
+
+
+def test_commands_to_copy_are_never_broken(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("NO_COLOR", "1")
+    here, out, _ = screen("terminal", width=40)
+    here.command("nightfold --store " + "very-long-folder/" * 9 + "heron.sqlite scans")
+    assert out.getvalue().count("\n") == 1
