@@ -2,8 +2,8 @@
 
 Run ``python tests/bench/fits.py [repeats]``. Prints for every model the time of one fit and of a thousand in
 one call as ratios to those floors, which are looped over the same data from a start a careful person would
-give (curve_fit) or from lmfit's own guess where it has one. Every figure is the best of several tries, taken
-in turns, so that a busy machine disturbs all alike.
+give (curve_fit) or from lmfit's own guess where it has one. Every figure is processor time, the best of several tries
+taken in turns, so that a busy machine disturbs all alike.
 """
 
 from __future__ import annotations
@@ -13,7 +13,7 @@ import os
 import sys
 from collections.abc import Callable
 from dataclasses import dataclass
-from time import perf_counter
+from time import process_time
 from typing import Any
 
 os.environ.setdefault("OMP_NUM_THREADS", "1")
@@ -105,9 +105,9 @@ def lmfit_once(case: Case, y: Array) -> Any:
 
 
 def seconds(action: Callable[[], object]) -> float:
-    began = perf_counter()
+    began = process_time()
     action()
-    return perf_counter() - began
+    return process_time() - began
 
 
 def measure(case: Case, repeats: int) -> dict[str, float]:

@@ -145,9 +145,9 @@ def test_small_line_on_a_huge_offset() -> None:
 
 
 def fixed_fits() -> list[Any]:
-    cases: list[tuple[str, tuple[str, ...]]] = [
-        (model, (name,)) for model, example in EXAMPLES.items() for name in example.truth
-    ]
+    cases: list[tuple[str, tuple[str, ...]]] = []
+    for model, example in EXAMPLES.items():
+        cases += [(model, (name,)) for name in example.truth]
     cases += [("damped-oscillation", ("phase", "offset")), ("damped-oscillation", ("amplitude", "phase"))]
     cases += [
         ("gaussian", ("slope", "amplitude")),

@@ -16,7 +16,7 @@ from .examples import EXAMPLES, Example
 
 SEEDS = st.integers(0, 10_000)
 SCALES = st.floats(-9, 9).map(lambda power: 10.0**power)
-QUICK = settings(max_examples=25, deadline=None)
+QUICK = settings(max_examples=12, deadline=None)
 ALL = pytest.mark.parametrize("example", EXAMPLES.values(), ids=lambda e: e.model)
 
 

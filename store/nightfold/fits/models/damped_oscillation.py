@@ -6,6 +6,7 @@ import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
 from nightfold.fits.engine.frame import Frame, Origin
+from nightfold.fits.engine.reduction import MOST_BINS
 from nightfold.fits.models.shape import (
     Background,
     Kind,
@@ -17,6 +18,8 @@ from nightfold.fits.models.shape import (
 )
 
 TWO_PI = 2.0 * np.pi
+MOST_PERIODS = 200
+"""Unevenly taken scans are searched beyond the mean Nyquist frequency up to this many periods."""
 FREQUENCY = Theta("frequency", "frequency", power=-1)
 DECAY = Theta("decay_time", "decay", "reciprocal", power=-1, floor=True)
 PHASE = Theta("phase", "angle")
@@ -78,8 +81,14 @@ class DampedOscillation(LineShape):
         return columns, derivatives
 
     def grid(self, window: Window) -> Floats:
-        """Return frequencies an eighth of 1/window apart up to the highest that can be told, three decays."""
-        frequencies = np.arange(0.25 / window.span, highest_frequency(window) + 1e-9, 0.125 / window.span)
+        """Return frequencies an eighth of 1/window apart, three decays.
+
+        Long scans are searched up to the Nyquist frequency of the bins the grid sees; beyond it `start` helps.
+        """
+        spacing = max(window.spacing, window.span / MOST_BINS)
+        searched = max(0.5 / spacing, min(1.0 / spacing, MOST_PERIODS / window.span))
+        highest = min(highest_frequency(window), searched)
+        frequencies = np.arange(0.25 / window.span, highest * (1 + 1e-9), 0.125 / window.span)
         decays = np.array([0.0, 1.0, 4.0]) / window.span
         f, g = np.meshgrid(frequencies, decays, indexing="ij")
         return np.column_stack([f.ravel(), g.ravel()])
@@ -147,8 +156,8 @@ class PhasedOscillation(DampedOscillation):
 
 
 def highest_frequency(window: Window) -> float:
-    """Return the Nyquist frequency of the finest spacing, at most four times that of the mean one."""
-    return min(0.5 / window.finest, 2.0 / window.spacing)
+    """Return the Nyquist frequency of the finest spacing, at most twice that of the mean one."""
+    return min(0.5 / window.finest, 1.0 / window.spacing)
 
 
 def wrap(angle: Floats) -> Floats:
