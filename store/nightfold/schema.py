@@ -23,7 +23,7 @@ class UpgradeReport:
 
 
 def create_tables(session: Session) -> None:
-    """Make every table in an empty file or database.
+    """Make every table in an empty file or database; those of a store are left as they are.
 
     Raises
     ------
@@ -31,6 +31,8 @@ def create_tables(session: Session) -> None:
         If the database holds other things already.
     """
     with session.writing(empty=True) as connection:
+        if revision_of(connection) is not None:
+            return  # somebody else made them in this moment
         found = inspect(connection).get_table_names()
         if found:
             raise NotAStore(

@@ -56,7 +56,7 @@ class Place:
     url: URL
 
     def __str__(self) -> str:
-        return str(self.path) if self.path else self.url.render_as_string(hide_password=True)
+        return str(self.path) if self.path else self.url.set(drivername="postgresql").render_as_string()
 
 
 def find_place(where: str | os.PathLike[str] | URL) -> Place:
@@ -73,8 +73,10 @@ def find_place(where: str | os.PathLike[str] | URL) -> Place:
         return Place(path, URL.create("sqlite+pysqlite", database=str(path)))
     try:
         url = make_url(written)
-    except SQLAlchemyError as problem:
-        raise StoreError(f"store {written!r}: no path and no database URL") from problem
+    except (SQLAlchemyError, ValueError):  # the URL may hold a password, so it is not repeated
+        raise StoreError(
+            "store: this is no path and no database URL such as postgresql://host/name"
+        ) from None
     if url.get_backend_name() != "postgresql":
         raise StoreError(f"store {url.render_as_string()}: wanted a file path or a postgresql:// URL")
     if "+" not in url.drivername:
@@ -93,8 +95,11 @@ class Session:
     @contextmanager
     def reading(self) -> Iterator[Connection]:
         """Give a connection that sees one state of the store."""
-        with _explained(self.place), self.engine.connect() as connection, connection.begin():
-            yield connection
+        with _explained(self.place), self.engine.connect() as connection:
+            if connection.dialect.name == "postgresql":
+                connection = connection.execution_options(isolation_level="REPEATABLE READ")
+            with connection.begin():
+                yield connection
 
     @contextmanager
     def writing(self, *, empty: bool = False) -> Iterator[Connection]:
@@ -121,6 +126,23 @@ class Session:
                     table = tables.turn
                     connection.execute(update(table).values(taken=table.c.taken + 1))
                 yield connection
+
+    def choose_journal(self) -> None:
+        """Use a write-ahead log, or a rollback journal on a network share; the file keeps to it.
+
+        Only done once the file is known to be a store: that of another program is left as it is.
+        """
+        path = self.place.path
+        if path is None or self.read_only:
+            return
+        mode = "DELETE" if network_file_system(path.absolute().parent) else "WAL"
+        plain = self.engine.raw_connection()
+        try:
+            plain.cursor().execute(f"PRAGMA journal_mode={mode}")
+        except sqlite3.OperationalError as problem:
+            raise StoreBusy(f"store {self.place}: somebody else is using it ({problem})") from problem
+        finally:
+            plain.close()
 
     def close(self) -> None:
         """Give back every connection."""
@@ -160,8 +182,11 @@ def check_file(place: Place) -> None:
         raise NotAStore(f"store {path}: this is a folder; name the file in it")
     if not path.exists():
         raise StoreMissing(f"store {path}: no such file; make one with 'nightfold --store {path} new'")
-    with path.open("rb") as file:
-        head = file.read(100)
+    try:
+        with path.open("rb") as file:
+            head = file.read(100)
+    except OSError as problem:
+        raise StoreError(f"store {path}: it cannot be read ({problem.strerror})") from problem
     if not head.startswith(_HEADER):
         raise NotAStore(
             f"store {path}: this is no nightfold store (found {head[:16]!r}, wanted an SQLite file)"
@@ -198,7 +223,6 @@ def _writable(path: Path) -> bool:
 
 def _sqlite_engine(path: Path, read_only: bool) -> Engine:
     full = path.absolute()
-    shared = network_file_system(full.parent)
 
     def connect() -> sqlite3.Connection:
         address: str = str(full)
@@ -216,7 +240,6 @@ def _sqlite_engine(path: Path, read_only: bool) -> Engine:
         cursor = connection.cursor()
         cursor.execute("PRAGMA foreign_keys=ON")
         if not read_only:
-            cursor.execute(f"PRAGMA journal_mode={'DELETE' if shared else 'WAL'}")
             cursor.execute("PRAGMA synchronous=FULL")
         cursor.execute("PRAGMA cache_size=-65536")
         cursor.close()
@@ -235,7 +258,7 @@ def _postgresql_engine(place: Place) -> Engine:
     @event.listens_for(engine, "connect")
     def prepare(connection: Any, _record: Any) -> None:
         with connection.cursor() as cursor:
-            cursor.execute("SET lock_timeout = '30s'")
+            cursor.execute(f"SET lock_timeout = {_WAIT_S * 1000:.0f}")
         connection.commit()
 
     return engine
@@ -248,11 +271,11 @@ def _explained(place: Place) -> Iterator[None]:
         yield
     except OperationalError as problem:
         words = str(problem.orig).lower()
-        if "locked" in words or "lock timeout" in words or "busy" in words:
+        if "is locked" in words or "lock timeout" in words:
             raise StoreBusy(f"store {place}: another writer held it for over {_WAIT_S:.0f} s") from problem
         if "readonly" in words or "read-only" in words:
             raise StoreReadOnly(f"store {place}: it cannot be written") from problem
-        if "full" in words:
+        if "disk is full" in words or "no space left" in words:
             raise StoreError(
                 f"store {place}: the disk is full; nothing of this batch was stored"
             ) from problem

@@ -388,9 +388,10 @@ def open_store(where: Where, create: bool = False) -> Store:
         session.check_file(place)
     opened = session.Session(place)
     try:
-        if fresh or (create and place.path is None and _unused(opened)):
+        if fresh or (create and _unused(opened)):
             schema.create_tables(opened)
         session.check_revision(opened)
+        opened.choose_journal()
     except BaseException:
         opened.close()
         raise
