@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
+from contextlib import closing
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -52,7 +53,7 @@ def upgrade_tables(place: Place) -> UpgradeReport:
     StoreMissing, NotAStore, StoreReadOnly, StoreError
     """
     check_file(place)
-    session = Session(place)
+    session = Session(place, foreign_keys=False)
     try:
         with session.reading() as connection:
             before = revision_of(connection)
@@ -65,6 +66,7 @@ def upgrade_tables(place: Place) -> UpgradeReport:
         copy = _copy(place, before, session) if place.path else None
         with session.writing(empty=True) as connection:
             _migrate(connection)
+            _check_references(connection, place)
         return UpgradeReport(before, REVISION, copy)
     finally:
         session.close()
@@ -77,9 +79,20 @@ def _copy(place: Place, before: str, session: Session) -> Path:
     copy = place.path.with_name(f"{place.path.name}.before-{REVISION}")
     if copy.exists():
         raise StoreError(f"store {place}: {copy} exists already; move it away first")
-    with sqlite3.connect(place.path) as old, sqlite3.connect(copy) as new:
+    with closing(sqlite3.connect(place.path)) as old, closing(sqlite3.connect(copy)) as new:
         old.backup(new)
     return copy
+
+
+def _check_references(connection: Connection, place: Place) -> None:
+    """Raise, and so undo the upgrade, if a row refers to one that is gone (SQLite did not look while upgrading)."""
+    if connection.dialect.name != "sqlite":
+        return
+    lost = connection.exec_driver_sql("PRAGMA foreign_key_check").first()
+    if lost is not None:
+        raise StoreError(
+            f"store {place}: the upgrade would leave rows of {lost[0]} without their {lost[2]}; nothing was changed"
+        )
 
 
 def _migrate(connection: Connection) -> None:

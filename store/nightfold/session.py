@@ -85,12 +85,24 @@ def find_place(where: str | os.PathLike[str] | URL) -> Place:
 
 
 class Session:
-    """An open store: reading and writing transactions on one engine."""
+    """An open store: reading and writing transactions on one engine.
 
-    def __init__(self, place: Place) -> None:
+    Parameters
+    ----------
+    place : Place
+    foreign_keys : bool
+        False for an upgrade only: SQLite writes a table anew to change it, and dropping the old one would take what
+        refers to it along. The setting cannot be changed within a transaction.
+    """
+
+    def __init__(self, place: Place, *, foreign_keys: bool = True) -> None:
         self.place = place
         self.read_only = place.path is not None and not _writable(place.path)
-        self.engine = _sqlite_engine(place.path, self.read_only) if place.path else _postgresql_engine(place)
+        self.engine = (
+            _sqlite_engine(place.path, self.read_only, foreign_keys)
+            if place.path
+            else _postgresql_engine(place)
+        )
 
     @contextmanager
     def reading(self) -> Iterator[Connection]:
@@ -221,7 +233,7 @@ def _writable(path: Path) -> bool:
     return os.access(path.parent, os.W_OK)
 
 
-def _sqlite_engine(path: Path, read_only: bool) -> Engine:
+def _sqlite_engine(path: Path, read_only: bool, foreign_keys: bool) -> Engine:
     full = path.absolute()
 
     def connect() -> sqlite3.Connection:
@@ -238,7 +250,7 @@ def _sqlite_engine(path: Path, read_only: bool) -> Engine:
     @event.listens_for(engine, "connect")
     def prepare(connection: Any, _record: Any) -> None:
         cursor = connection.cursor()
-        cursor.execute("PRAGMA foreign_keys=ON")
+        cursor.execute(f"PRAGMA foreign_keys={int(foreign_keys)}")
         if not read_only:
             cursor.execute("PRAGMA synchronous=FULL")
         cursor.execute("PRAGMA cache_size=-65536")
