@@ -17,7 +17,7 @@ from nightfold.fits.engine.reduction import Reduction, reduce_points
 from nightfold.fits.models.shape import Background, Window
 from nightfold.fits.request import Request
 
-BATCH_POINTS = 16_000
+BATCH_POINTS = 32_000
 """Data sets are solved in batches of about this many points: larger ones leave the cache."""
 
 
