@@ -158,10 +158,9 @@ def reading_value(raw: Any, field: str) -> tuple[ReadValue, str | None]:
     """
     value, stderr, unit = raw, None, None
     if type(raw) is dict and len(raw) == 2 and "stderr" in raw:
-        value, stderr = raw.get("value"), raw["stderr"]
-        plain = type(value) is float and type(stderr) is float
-        if plain and math.isfinite(value) and math.isfinite(stderr) and stderr >= 0:
-            return ReadValue(value + 0.0, stderr + 0.0, None), None
+        number, error = raw.get("value"), raw["stderr"]
+        if type(number) is float and type(error) is float and error >= 0 and math.isfinite(number + error):
+            return ReadValue(number + 0.0, error + 0.0, None), None
     if isinstance(raw, Mapping):
         if not raw.keys() <= {"value", "stderr", "unit"} or "value" not in raw:
             raise RecordError(

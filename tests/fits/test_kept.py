@@ -23,7 +23,7 @@ def records(
     label: str, holds: tuple[float, ...] = (100.0,), *, swept: tuple[str, ...] = ("coil_current",)
 ) -> list[Any]:
     rng = np.random.default_rng(11)
-    made = []
+    made: list[Any] = []
     for hold in holds:
         x = rng.permutation(np.linspace(59, 63, 21))
         y = line(x, 61 + hold / 1000) * (1 + 0.01 * rng.normal(size=21))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from nightfold import Store, open_store
 from nightfold.errors import ChoiceNeeded, NotFound
 
@@ -40,7 +41,7 @@ def shot(
 
 
 def sweep(
-    first: float, values: Sequence[float], name: str = "coil_current", **fields: Any
+    first: float, values: Iterable[Any], name: str = "coil_current", **fields: Any
 ) -> list[dict[str, Any]]:
     """Return shots 15 s apart that take a parameter through values."""
     extra = fields.pop("parameters", {})
@@ -238,7 +239,7 @@ def test_keys(tmp_path: Path) -> None:
         assert store.scan(2).id == 2
         with pytest.raises(ChoiceNeeded, match="several sequences use this label; name it by id: 1, 3"):
             store.scan("loss")
-        with pytest.raises(NotFound, match="scan 'lose'.*it has loss"):
+        with pytest.raises(NotFound, match=r"scan 'lose'.*it has loss"):
             store.scan("lose")
         with pytest.raises(NotFound, match="scan 99"):
             store.scan(99)

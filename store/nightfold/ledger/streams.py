@@ -22,7 +22,7 @@ from nightfold.settings import Value, hash_setting, setting_value, token_of
 MEMORY = 20
 
 
-class _UNREAD:  # noqa: N801 (a mark, never an instance)
+class _UNREAD:
     """The type of nothing: a setting that must be read again when it is next stated."""
 
 

@@ -50,11 +50,23 @@ def _span(
         low -= 1
     while high < len(rows) and rows[high].started_us - rows[high - 1].started_us <= pause:
         high += 1
+    low, high = _whole_scans(rows, low, high)
     if low == 0 and len(before) == REACH:
         low = _scan_bound(rows, 0, 1)
     if high == len(rows) and len(after) == REACH:
         high = _scan_bound(rows, len(rows) - 1, -1) + 1
     return rows[low:high], pause
+
+
+def _whole_scans(rows: Sequence[Row[Any]], low: int, high: int) -> tuple[int, int]:
+    """Return the span widened so that it cuts through no scan as it stands (what counts as a pause may have changed)."""
+    while True:
+        inside = {row.scan_id for row in rows[low:high]} - {None}
+        places = [place for place, row in enumerate(rows) if row.scan_id in inside]
+        wider = min([low, *places]), max([high, *(place + 1 for place in places)])
+        if wider == (low, high):
+            return wider
+        low, high = wider
 
 
 def _scan_bound(rows: Sequence[Row[Any]], start: int, step: int) -> int:

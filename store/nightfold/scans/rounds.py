@@ -184,8 +184,10 @@ def move_shots(connection: Connection, scan_id: int | None, shot_ids: Sequence[i
 
 
 def retire(connection: Connection, scan_id: int, heir: int | None) -> None:
-    """Remove a scan that has lost its shots; its kept fits go to the scan that has them now."""
-    fit = tables.fit
+    """Remove a scan if it has lost all its shots; its kept fits go to the scan that has them now."""
+    fit, shot = tables.fit, tables.shot
+    if connection.execute(select(shot.c.id).where(shot.c.scan_id == scan_id).limit(1)).first() is not None:
+        return
     has_fits = (
         connection.execute(select(fit.c.id).where(fit.c.scan_id == scan_id).limit(1)).first() is not None
     )
