@@ -6,7 +6,7 @@ import difflib
 import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from datetime import datetime
+from datetime import date, datetime, time
 from typing import TYPE_CHECKING, Any
 
 from sqlalchemy import ColumnElement, Connection, Row, Select, Table, and_, exists, select
@@ -15,7 +15,7 @@ from nightfold import tables
 from nightfold.errors import ChoiceNeeded, NotFound
 from nightfold.ledger.rows import chunks
 from nightfold.settings import plain_value
-from nightfold.timestamps import parse_moment, utc_times
+from nightfold.timestamps import parse_moment, to_us, utc_times
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -66,7 +66,7 @@ def column_name(name: str) -> str:
 
 
 def moment_us(value: datetime | str, zone: str) -> int:
-    """Return a time as microseconds since 1970; without an offset it is read in `zone`, a date is its midnight.
+    """Return a time as microseconds since 1970; without an offset it is read in `zone`, a date is its first moment.
 
     Raises
     ------
@@ -75,9 +75,11 @@ def moment_us(value: datetime | str, zone: str) -> int:
     """
     from nightfold.timestamps import find_zone
 
-    text = f"{value}T00:00" if isinstance(value, str) and len(value) == 10 else value
+    where = find_zone(zone)
     try:
-        return parse_moment(text, find_zone(zone))
+        if isinstance(value, str) and len(value) == 10:
+            return to_us(datetime.combine(date.fromisoformat(value), time(), where))
+        return parse_moment(value, where)
     except ValueError as problem:
         raise NotFound(f"time {value!r}: wanted {problem}") from None
 
