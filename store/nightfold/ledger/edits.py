@@ -66,7 +66,11 @@ def find_edits(
         for edit in _edits_of(connection, row.id, row.name):
             if (low is None or edit.at_us >= low) and (high is None or edit.at_us < high):
                 edits.append(edit)
-    return sorted(edits, key=lambda edit: edit.at_us)
+    return sorted(edits, key=_order)
+
+
+def _order(edit: Edit) -> tuple[int, str, str, str]:
+    return edit.at_us, edit.machine, edit.parameter, edit.sequence
 
 
 def _edits_of(connection: Connection, machine_id: int, machine: str) -> list[Edit]:
@@ -92,7 +96,7 @@ def _walk(
     shot = tables.shot
     contents: dict[int, dict[int, Stored]] = {}
     resting: dict[int, Stored] = {}
-    last_set = None
+    looked_at = None
     moved = _unswept_rows(connection, sequence_id)
     query = select(shot.c.id, shot.c.started_us, shot.c.set_id).where(shot.c.sequence_id == sequence_id)
     rows = connection.execute(query.order_by(shot.c.started_us, shot.c.id)).all()
@@ -104,13 +108,16 @@ def _walk(
             contents.setdefault(row.set_id, {})[row.parameter_id] = (row.num, row.exact)
     for row in rows:
         values = moved.get(row.id, {})
-        if row.set_id != last_set:
-            skip = axes.get(row.id, frozenset())
+        skip = axes.get(row.id, frozenset())
+        if (
+            row.set_id,
+            skip,
+        ) != looked_at:  # a value at rest may be a scan's point, and stay when the scan is over
             values = {
                 **{key: val for key, val in contents.get(row.set_id, {}).items() if key not in skip},
                 **values,
             }
-            last_set = row.set_id
+            looked_at = (row.set_id, skip)
         for parameter_id, value in values.items():
             old = resting.get(parameter_id)
             if old is not None and _token(known[parameter_id], old) != _token(known[parameter_id], value):
@@ -154,7 +161,7 @@ def _merge(seen: list[Edit]) -> list[Edit]:
     """Make one edit of the same change seen in several sequences, unless the value went elsewhere in between."""
     merged: list[Edit] = []
     last: dict[str, list[Edit]] = {}
-    for edit in sorted(seen, key=lambda item: item.at_us):
+    for edit in sorted(seen, key=_order):
         recent = last.setdefault(edit.parameter, [])
         twin = next((e for e in recent if _same(e, edit)), None)
         if twin is not None and edit.sequence != twin.sequence:
