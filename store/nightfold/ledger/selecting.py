@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 _MANY = 5000
 _STDERR = "_stderr"
+_COLUMNS = ("uid", "started", "sequence", "scan")
 _OWN_COLUMNS = {"uid", "shot_id", "started", "sequence", "scan", "set_aside"}
 
 
@@ -221,10 +222,20 @@ def read_table(
     """Return a frame with a row a shot: uid, started (UTC), sequence, scan, then what was asked for.
 
     Units stand in ``attrs["units"]``.
+
+    Raises
+    ------
+    NotFound
+        If something asked for is not in the store.
+    ChoiceNeeded
+        If one column would have to show two things.
     """
     import numpy as np
     import pandas as pd
 
+    for name in (*parameters, *observables):
+        if name in _COLUMNS or (name in parameters and name in observables):
+            raise ChoiceNeeded(f"column {name!r}: two things have this name; read one shot at a time for it")
     rows, where = select_shots(connection, selection)
     wanted = find_named(connection, tables.parameter, parameters, selection.machine)
     plain, errors = _split_stderr(connection, observables, selection.machine)

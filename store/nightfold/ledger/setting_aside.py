@@ -5,12 +5,13 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Any
 
-from sqlalchemy import Connection, Row, insert, select, update
+from sqlalchemy import Connection, Row, func, insert, select, update
 
 from nightfold import tables
 from nightfold.errors import NotFound
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import set_aside_now
+from nightfold.records import clean_text
 from nightfold.timestamps import now_us
 
 
@@ -37,7 +38,8 @@ def _by_beginning(connection: Connection, uid: str) -> Row[Any]:
     shot = tables.shot
     rows = []
     if len(uid) >= 4:
-        begins = shot.c.uid.startswith(uid, autoescape=True)
+        # SQLite's LIKE takes small and large letters as one
+        begins = shot.c.uid.startswith(uid, autoescape=True) & (func.substr(shot.c.uid, 1, len(uid)) == uid)
         rows = list(connection.execute(select(shot).where(begins).limit(2)))
     if len(rows) == 1:
         return rows[0]
@@ -55,15 +57,20 @@ def set_shots_aside(
     NotFound, ValueError
         If a shot is not there, or no reason is given.
     """
-    if not reason.strip():
-        raise ValueError("set aside: found no reason, wanted a few words that say why")
+    try:
+        reason = clean_text(reason).strip()
+    except ValueError:
+        reason = ""
+    if not reason:
+        raise ValueError(
+            "set aside: found no reason, wanted a few words that say why, without control characters"
+        )
     rows = find_shots(connection, uids)
     already = _aside(connection, [row.id for row in rows.values()])
     new = {row.id for row in rows.values()} - already
     at_us = now_us()
     values = [
-        {"shot_id": key, "reason": reason.strip(), "by": by, "rule": rule, "at_us": at_us}
-        for key in sorted(new)
+        {"shot_id": key, "reason": reason, "by": by, "rule": rule, "at_us": at_us} for key in sorted(new)
     ]
     if values:
         connection.execute(insert(tables.set_aside), values)
