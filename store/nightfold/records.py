@@ -71,7 +71,10 @@ def _named(definition: str) -> dict[str, Any]:
     return {"x-definition": definition}  # resolved in record_schema: pydantic knows no such definition yet
 
 
-Name = Annotated[str, BeforeValidator(clean_name)]
+_PRINTABLE = r"[^\u0000-\u001f\u007f]*"
+_NAME_SCHEMA = {"type": "string", "maxLength": LONGEST_NAME, "pattern": rf"^{_PRINTABLE}\S{_PRINTABLE}$"}
+_REASON_SCHEMA = {"anyOf": [{"type": "string", "pattern": r"\S"}, {"type": "null"}]}
+Name = Annotated[str, BeforeValidator(clean_name), WithJsonSchema(_NAME_SCHEMA)]
 Text = Annotated[str, BeforeValidator(clean_text)]
 _Number = StrictInt | StrictFloat
 
@@ -89,7 +92,7 @@ class Reading(BaseModel):
 
     model_config = ConfigDict(extra="forbid")
     value: _Number | None
-    stderr: Annotated[_Number, Field(ge=0)] | None = None
+    stderr: Annotated[_Number, Field(ge=0), WithJsonSchema({"type": "number", "minimum": 0})] | None = None
     unit: StrictStr | None = None
 
 
@@ -187,7 +190,7 @@ class ShotRecord(BaseModel):
     sequence: Annotated[
         str | SequenceSteps,
         BeforeValidator(_whole_sequence),
-        WithJsonSchema({"anyOf": [{"type": "string", "minLength": 1}, _named("SequenceSteps")]}),
+        WithJsonSchema({"anyOf": [_NAME_SCHEMA, _named("SequenceSteps")]}),
     ]
     scan: Name | None = None
     swept: list[Name] = []
@@ -196,7 +199,7 @@ class ShotRecord(BaseModel):
     reference: StrictBool = False
     parameters: _Settings = {}
     observables: _Readings = {}
-    failed: Annotated[str | None, BeforeValidator(_reason)] = None
+    failed: Annotated[str | None, BeforeValidator(_reason), WithJsonSchema(_REASON_SCHEMA)] = None
     frames: Annotated[list[Frame], AfterValidator(_each_once)] = []
     note: Text = ""
     derivation: Name | Derivation | None = None
