@@ -20,6 +20,7 @@ from nightfold.records import clean_name, shorten
 from nightfold.settings import Value, hash_setting, setting_value, token_of
 
 MEMORY = 20
+_PLAIN = {float, int, str, bool}
 
 
 class _UNREAD:
@@ -72,14 +73,11 @@ class StreamMemory:
         hits = 0
         for key, raw in settings.items():
             entry = entries.get(key)
-            try:
-                if entry is not None and entry.raw == raw:
-                    stated = raw["value"] if type(raw) is dict else raw
-                    if type(stated) is entry.raw_type:  # 1, 1.0 and True are equal to Python
-                        hits += 1
-                        continue
-            except ValueError:  # arrays do not tell at once whether they are equal
-                pass
+            if entry is not None:
+                stated = raw.get("value") if type(raw) is dict else raw
+                if type(stated) is entry.raw_type and entry.raw == raw:  # 1, 1.0 and True are equal to Python
+                    hits += 1
+                    continue
             self._settle_one(key, raw, settings, machine, changed, plan)
         old = sum(1 for name in changed if name in entries)
         vanished = [] if hits + old == len(entries) else self._missing(settings, changed)
@@ -108,7 +106,9 @@ class StreamMemory:
         if known.id is None or known is not machine.parameters.get(name):
             plan[name] = known
         inner = raw.get("value") if isinstance(raw, Mapping) else raw
-        kind = type(inner) if isinstance(inner, (float, int, str)) else _UNREAD
+        kind = (
+            type(inner) if type(inner) in _PLAIN else _UNREAD
+        )  # arrays do not tell at once whether they are equal
         changed[name] = Entry(raw, kind, value, hash_setting(name, value.token))
 
     def _missing(self, settings: Mapping[Any, Any], changed: dict[str, Entry]) -> list[str]:
