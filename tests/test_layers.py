@@ -135,7 +135,8 @@ def test_using_the_library_loads_no_terminal_or_figure() -> None:
 import nightfold, tempfile, pathlib
 for name in nightfold.__all__:
     getattr(nightfold, name)
-with tempfile.TemporaryDirectory() as folder, nightfold.open_store(pathlib.Path(folder) / "a.sqlite", create=True) as store:
+folder = tempfile.TemporaryDirectory()
+with nightfold.open_store(pathlib.Path(folder.name) / "a.sqlite", create=True) as store:
     store.take([{"machine": "m", "sequence": "s", "started": "2026-10-05T20:00:00Z", "parameters": {"a": 1}}])
     store.shots(["a"])
 """

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -40,6 +41,7 @@ STEPS = {
 }
 
 
+@cache
 def validator() -> Any:
     schema = record_schema()
     jsonschema.Draft202012Validator.check_schema(schema)
@@ -96,11 +98,12 @@ def test_bad_records(record: Any, store: Store) -> None:
     assert len(outcome.refused) == 1
 
 
+KEYS = ["value", "unit", "stderr", "name", "steps", "camera", "role", "path", "a"]
 JSON = st.recursive(
-    st.one_of(st.none(), st.booleans(), st.integers(-9, 9), st.floats(-9, 9), st.sampled_from(["", "x", "A", "2026-10-05T21:14:03Z"])),
+    st.one_of(st.none(), st.booleans(), st.integers(-9, 9), st.floats(-9, 9), st.sampled_from(["", "x", "A"])),
     lambda inner: st.one_of(
         st.lists(inner, max_size=2),
-        st.dictionaries(st.sampled_from(["value", "unit", "stderr", "name", "steps", "camera", "role", "path", "a"]), inner, max_size=3),
+        st.dictionaries(st.sampled_from(KEYS), inner, max_size=3),
     ),
     max_leaves=5,
 )  # fmt: skip

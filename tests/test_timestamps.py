@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from datetime import UTC, date, datetime, time, timedelta, timezone
-from pathlib import Path
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -212,7 +211,3 @@ def test_since_as_a_datetime() -> None:
     for bad in ("yesterday", "2026-13-05", "2026-10-5", "2026-03-29T02:30"):
         with pytest.raises(NotFound, match=r"time '.*': wanted"):
             moment_us(bad, "Europe/Vienna")
-
-
-def test_the_database_is_there() -> None:
-    assert Path(__import__("tzdata").__file__).is_file()

@@ -162,6 +162,12 @@ def _time(value: Any) -> Any:
     raise ValueError("an ISO 8601 time with an offset, such as 2026-10-05T21:14:03+02:00")
 
 
+def _no_truth(value: Any) -> Any:
+    if isinstance(value, bool):  # true equals 1 to Python
+        raise ValueError("format 1")
+    return value
+
+
 def _reason(value: Any) -> str | None:
     if value is None:
         return None
@@ -181,7 +187,7 @@ class ShotRecord(BaseModel):
     """One shot: its settings and what was read from it."""
 
     model_config = ConfigDict(extra="forbid")
-    format: Literal[1] = 1
+    format: Annotated[Literal[1], BeforeValidator(_no_truth)] = 1
     uid: Name | None = None
     machine: Name
     started: Annotated[
@@ -209,7 +215,7 @@ class Amendment(BaseModel):
     """Observables that come later than their shot, or replace earlier ones."""
 
     model_config = ConfigDict(extra="forbid")
-    format: Literal[1] = 1
+    format: Annotated[Literal[1], BeforeValidator(_no_truth)] = 1
     uid: Name
     observables: _Readings
     derivation: Name | Derivation | None = None

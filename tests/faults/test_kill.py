@@ -19,8 +19,8 @@ from sqlalchemy import text
 from nightfold.store import Store, create_store, open_store
 
 PROGRAM = Path(__file__).parent / "growing.py"
-KILLS = int(os.environ.get("NIGHTFOLD_KILLS", "5"))
-SHOTS = 60
+KILLS = int(os.environ.get("NIGHTFOLD_KILLS", "4"))
+SHOTS = 40
 
 
 def shot(number: int) -> dict[str, Any]:
@@ -95,7 +95,7 @@ def test_a_stream_taken_shot_by_shot(
         else:
             where = str(request.getfixturevalue("new_schema")())
             create_store(where).close()
-        told, killed = kill_while_taking(where, stream, "each", chance.uniform(0, 0.25))
+        told, killed = kill_while_taking(where, stream, "each", chance.uniform(0, 0.15))
         with open_store(where) as store:
             kept = set(store.shots(set_aside=True).uid)
             between += killed and 0 < len(kept) < SHOTS

@@ -61,7 +61,7 @@ def test_swept_parameters_are_not_edited(store: Store) -> None:
     assert told(store) == []
 
 
-@pytest.mark.parametrize("size", [1, 7, 500])
+@pytest.mark.parametrize("size", [5, 500])
 def test_axes_found_by_folding_and_followers_are_not_edited(store: Store, size: int) -> None:
     sweep = [{**CALM, "hold": 1 + n * 7 % 12, "delay": 2.0 * (1 + n * 7 % 12)} for n in range(36)]
     rest = {**CALM, "hold": 1, "delay": 2.0}
@@ -129,19 +129,24 @@ def test_edits_between_times(store: Store) -> None:
 
 
 def test_reference_shots_and_untidy_values(store: Store) -> None:
-    untidy: list[Record] = [{"a": 1, "b": float("nan")}, {"a": 1.0, "b": float("nan")}, {"a": 1, "b": float("nan"), "c": 1},
-                            {"a": 1, "b": float("nan"), "c": None}, {"a": 1, "b": float("nan"), "c": 1}]  # fmt: skip
-    store.take(shots(untidy))
-    store.take(shots([{"a": 1, "b": float("nan"), "c": 1}] * 3, 300, reference=True))
+    nan = float("nan")
+    untidy = [
+        {"a": 1, "b": nan},
+        {"a": 1.0, "b": nan},
+        {"a": 1, "b": nan, "c": 1},
+        {"a": 1, "b": nan, "c": None},
+    ]
+    store.take(shots([*untidy, untidy[2]]))
+    store.take(shots([untidy[2]] * 3, 300, reference=True))
     assert told(store) == []
 
 
 @pytest.mark.parametrize("order", ["reversed", "halves", "interleaved"])
 def test_edits_do_not_depend_on_the_order_of_arrival(store: Store, tmp_path: Path, order: str) -> None:
-    sweep = [{**CALM, "hold": n % 6, "coil": 1.5 if n < 90 else 1.7} for n in range(120)]
+    sweep = [{**CALM, "hold": n % 6, "coil": 1.5 if n < 40 else 1.7} for n in range(60)]
     records = [
-        *shots([{**CALM, "coil": 1.0}] * 30), *shots([CALM] * 30, 600), *shots(sweep, 4000),
-        *shots([{**CALM, "coil": 1.7, "hold": 33}] * 40, 12000), *shots([CALM] * 50, 20000, sequence="other"),
+        *shots([{**CALM, "coil": 1.0}] * 25), *shots([CALM] * 25, 600), *shots(sweep, 4000),
+        *shots([{**CALM, "coil": 1.7, "hold": 33}] * 25, 12000), *shots([CALM] * 25, 20000, sequence="other"),
     ]  # fmt: skip
     store.take(records)
     with open_store(tmp_path / "other.sqlite", create=True) as other:
@@ -150,8 +155,8 @@ def test_edits_do_not_depend_on_the_order_of_arrival(store: Store, tmp_path: Pat
             "halves": records[len(records) // 2 :] + records[: len(records) // 2],
             "interleaved": records[::2] + records[1::2],
         }[order]
-        for start in range(0, len(arrived), 11):
-            other.take(arrived[start : start + 11])
+        for start in range(0, len(arrived), 23):
+            other.take(arrived[start : start + 23])
         assert other.edits().astype(str).to_numpy().tolist() == store.edits().astype(str).to_numpy().tolist()
     assert ("coil", 1.0, 1.5) in told(store)
     assert ("coil", 1.5, 1.7) in told(store)

@@ -52,8 +52,7 @@ def test_noon_to_noon_in_the_zone_of_the_card(store: Store, tmp_path: Path) -> N
         )
     )
     assert nights(store) == [(date(2026, 10, 4), 1), (date(2026, 10, 5), 3), (date(2026, 10, 6), 1)]
-    first = store.nights().loc[1, "first"]
-    assert first.isoformat() == "2026-10-05T14:00:00+02:00"
+    assert [str(first) for first in store.nights()["first"]][1] == "2026-10-05 14:00:00+02:00"
 
 
 def test_the_card_moves_the_boundary(store: Store, tmp_path: Path) -> None:
@@ -77,7 +76,8 @@ def test_a_pause_at_noon_parts_two_nights(store: Store, tmp_path: Path) -> None:
 
 def test_a_machine_that_never_pauses(store: Store, tmp_path: Path) -> None:
     use_card(store, tmp_path)
-    store.take(shots(*[f"2026-10-{day:02d} {hour:02d}:{minute:02d}" for day in (5, 6, 7) for hour in range(24) for minute in (0, 20, 40)]))  # fmt: skip
+    clock = [f"{hour:02d}:{minute:02d}" for hour in range(24) for minute in (0, 20, 40)]
+    store.take(shots(*[f"2026-10-{day:02d} {time}" for day in (5, 6, 7) for time in clock]))
     assert nights(store) == [
         (date(2026, 10, day), count) for day, count in ((4, 36), (5, 72), (6, 72), (7, 36))
     ]

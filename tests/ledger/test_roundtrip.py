@@ -118,7 +118,7 @@ def expected(raw: Any, unit: str) -> Any:
     value, stated = (raw["value"], raw.get("unit")) if isinstance(raw, Mapping) else (raw, None)
     if isinstance(value, str):
         return unicodedata.normalize("NFC", value)
-    if isinstance(value, (list, tuple)) or getattr(value, "ndim", 0):
+    if isinstance(value, (list, tuple)) or getattr(value, "ndim", None):
         return [float(item) for item in value]
     if isinstance(value, (bool, np.bool_)):
         return bool(value)
@@ -263,7 +263,7 @@ WAYS: list[Way] = [in_batches, in_new_processes, by_two_writers, with_a_broken_s
 
 @pytest.mark.parametrize("way", WAYS)
 def test_what_goes_in_comes_out(way: Way, empty_store: Path) -> None:
-    @settings(max_examples=10 * MORE)
+    @settings(max_examples=8 * MORE)
     @given(records())
     def holds(made: list[Record]) -> None:
         with tempfile.TemporaryDirectory() as folder:
@@ -296,7 +296,7 @@ def content(store: Store) -> list[tuple[Any, ...]]:
     ]  # fmt: skip
 
 
-@settings(max_examples=10 * MORE)
+@settings(max_examples=8 * MORE)
 @given(st.data())
 def test_the_order_of_arrival_never_shows(empty_store: Path, data: st.DataObject) -> None:
     made = data.draw(records())

@@ -16,8 +16,10 @@ from nightfold.store import Store, open_store
 
 
 def shot(number: int, **changes: Any) -> dict[str, Any]:
-    return {"machine": "heron", "sequence": "s", "started": f"2026-10-05T20:{number:02d}:00Z", "uid": f"shot{number:02d}",
-            "parameters": {"a": number, "mode": "x"}, "observables": {"n": {"value": 10 * number, "stderr": 1}}, **changes}  # fmt: skip
+    return {
+        "machine": "heron", "sequence": "s", "started": f"2026-10-05T20:{number:02d}:00Z", "uid": f"shot{number:02d}",
+        "parameters": {"a": number, "mode": "x"}, "observables": {"n": {"value": 10 * number, "stderr": 1}}, **changes,
+    }  # fmt: skip
 
 
 def test_the_columns_of_the_contract(anywhere: str) -> None:
@@ -80,8 +82,13 @@ def test_local_times_are_those_of_the_machine(store: Store, tmp_path: Path) -> N
 
 
 def test_what_is_missing_is_missing(store: Store) -> None:
-    store.take([shot(0, parameters={"a": 1, "on": True, "ramp": [1, 2]}), shot(1, parameters={}, observables={"n": math.inf}),
-                shot(2, parameters={"a": 2**60 + 1, "mode": "x"}, observables={"n": None})])  # fmt: skip
+    store.take(
+        [
+            shot(0, parameters={"a": 1, "on": True, "ramp": [1, 2]}),
+            shot(1, parameters={}, observables={"n": math.inf}),
+            shot(2, parameters={"a": 2**60 + 1, "mode": "x"}, observables={"n": None}),
+        ]
+    )
     frame = store.shots(["a", "on", "mode", "ramp"], ["n", "n_stderr"])
     assert frame.a.tolist() == [1, None, 2**60 + 1]
     assert frame.on.tolist() == [True, None, None]
@@ -104,7 +111,9 @@ def test_units_that_differ_between_machines(store: Store) -> None:
 
 
 def test_very_many_shots(store: Store, monkeypatch: pytest.MonkeyPatch) -> None:
-    store.take([shot(n % 60, uid=f"s{n}", started=f"2026-10-05T{n // 3600:02d}:{n // 60 % 60:02d}:{n % 60:02d}Z") for n in range(700)])  # fmt: skip
+    store.take(
+        shot(n % 60, uid=f"s{n}", started=f"2026-10-05T00:{n // 60:02d}:{n % 60:02d}Z") for n in range(700)
+    )
     plain = store.shots(["a", "mode"], ["n"])
     monkeypatch.setattr(selecting, "_MANY", 100)
     pd.testing.assert_frame_equal(store.shots(["a", "mode"], ["n"]), plain)

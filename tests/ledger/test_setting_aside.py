@@ -11,8 +11,10 @@ from nightfold.store import Store, open_store
 
 
 def shot(number: int, **changes: Any) -> dict[str, Any]:
-    return {"machine": "heron", "sequence": "s", "started": f"2026-10-05T20:00:{number:02d}Z", "uid": f"shot{number:02d}",
-            "parameters": {"a": number}, "observables": {"n": number}, **changes}  # fmt: skip
+    return {
+        "machine": "heron", "sequence": "s", "started": f"2026-10-05T20:00:{number:02d}Z", "uid": f"shot{number:02d}",
+        "parameters": {"a": number}, "observables": {"n": number}, **changes,
+    }  # fmt: skip
 
 
 def test_there_and_back(anywhere: str) -> None:

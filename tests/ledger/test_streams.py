@@ -51,9 +51,9 @@ def test_two_scans_taking_turns_share_nothing_but_cost_nothing(store: Store) -> 
 
 
 def test_a_new_process_goes_on_with_the_stream(store_path: Path) -> None:
-    for start in range(0, 120, 2):
+    for start in range(0, 100, 4):
         with open_store(store_path) as store:
-            store.take([shot(n) for n in range(start, start + 2)])
+            store.take([shot(n) for n in range(start, start + 4)])
     with open_store(store_path) as store:
         sets, _, moved = sizes(store)
     assert sets <= 3
@@ -62,7 +62,7 @@ def test_a_new_process_goes_on_with_the_stream(store_path: Path) -> None:
 
 def test_two_writers_on_one_stream(store_path: Path) -> None:
     with open_store(store_path) as one, open_store(store_path) as other:
-        for number in range(120):
+        for number in range(70):
             (one, other)[number % 2].take([shot(number)])
         sets, _, moved = sizes(one)
     assert sets <= 3

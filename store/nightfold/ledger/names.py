@@ -272,7 +272,8 @@ def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: in
     ):
         for name in getattr(card, kind).keys() & stored.keys():
             raise CardError(
-                f"card of {card.machine}: {kind}.{name}: found an entry, wanted none: the store has {other} of that name"
+                f"card of {card.machine}: {kind}.{name}: found an entry, wanted none: "
+                f"the store has {other} of that name"
             )
     for kind, table in (("parameters", tables.parameter), ("observables", tables.observable)):
         for name, known in getattr(machine, kind).items():
