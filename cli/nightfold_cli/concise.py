@@ -19,6 +19,8 @@ from decimal import ROUND_HALF_EVEN, Context, Decimal
 _CONTEXT = Context(prec=800, rounding=ROUND_HALF_EVEN)
 _NEGLIGIBLE = 1e-16  # a stderr below this share of the value is lost in a double
 _ASYMMETRIC = 1.10
+_UNDETERMINED = 1e3  # one side of an interval longer than the other by this: no digits worth reading
+_LONGEST = 14
 _PLAIN_EXPONENTS = range(-3, 6)
 _PATTERN = re.compile(
     r"(?P<value>[+-]?\d+(?:\.\d+)?)\((?P<stderr>\d+(?:\.\d+)?)\)(?:e(?P<exponent>[+-]?\d+))?"
@@ -96,7 +98,8 @@ def concise(value: float, stderr: float) -> str:
 def asymmetric(value: float, stderr: float, low: float, high: float) -> str:
     """Return the value with its 68 % interval: ``33.612(14)``, or ``33.612 +0.018/-0.011`` where lopsided.
 
-    The two-sided form is used where one side is longer than the other by more than a tenth.
+    The two-sided form is used where one side is longer than the other by more than a tenth; beyond a thousandfold
+    the value is given as ``1.2 (not determined)``.
     """
     up, down = high - value, value - low
     if not (math.isfinite(up) and math.isfinite(down)) or up <= 0 or down <= 0:
@@ -106,6 +109,8 @@ def asymmetric(value: float, stderr: float, low: float, high: float) -> str:
     scale = scale_of(value, min(up, down))
     if scale is None:
         return concise(value, stderr)
+    if max(up, down) > _UNDETERMINED * min(up, down):
+        return f"{short(value)} (not determined)"
     body = f"{scale.digits(value)} +{scale.digits(up)}/-{scale.digits(down)}"
     return f"({body}){scale.suffix}" if scale.suffix else body
 
@@ -113,8 +118,15 @@ def asymmetric(value: float, stderr: float, low: float, high: float) -> str:
 def interval(low: float, high: float, value: float, stderr: float) -> str:
     """Return ``33.584 … 33.640``, written to the same place as the value they belong to."""
     scale = scale_of(value, stderr)
-    ends = [scale.text(end) if scale else plain(end) for end in (low, high)]
-    return " … ".join(ends)
+    return " … ".join(_end(end, scale) for end in (low, high))
+
+
+def _end(end: float, scale: Scale | None) -> str:
+    text = scale.text(end) if scale else plain(end)
+    if scale is None or not math.isfinite(end):
+        return text
+    lost = end != 0 and not float(scale.digits(end))
+    return text if len(text) <= _LONGEST and not lost else plain(float(f"{end:.2g}"))
 
 
 def plain(number: float, digits: int = 12) -> str:

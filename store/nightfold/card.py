@@ -26,7 +26,7 @@ class NamedQuantity:
     unit : str or None
         None until stated; the empty text for a pure number.
     low, high : float or None
-        Plausible range; a value outside is remarked, never refused.
+        Plausible range; a value outside is never refused.
     description : str
     kind : {'number', 'text', 'truth'} or None
         None until a record shows it.
@@ -209,7 +209,7 @@ zone = {zone}
 
 # [parameters.coil_current]
 # unit = "A"
-# range = [0, 120]               # plausible values; one outside is remarked, never refused
+# range = [0, 120]               # plausible values; one outside is never refused
 # description = "current of the Feshbach coils"
 
 # [observables.atom_number]

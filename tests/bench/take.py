@@ -1,7 +1,7 @@
 """Bulk taking against the same rows by raw sqlite3, in one process: `python tests/bench/take.py [SHOTS]`.
 
-Prints CPU seconds and their ratios: the floor is `executemany` of exactly the rows that the store ended up with, into the
-same tables with the same indexes, in batches of the same size.
+Prints CPU seconds and their ratios: the floor is `executemany` of exactly the rows that the store ended up with, into
+the same tables with the same indexes, in batches of the same size.
 """
 
 from __future__ import annotations
@@ -17,6 +17,7 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+
 from nightfold import open_store
 from nightfold.ledger.writing import BATCH
 

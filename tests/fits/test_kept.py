@@ -122,7 +122,7 @@ def test_keep_false_keeps_nothing(store: Store) -> None:
 
 
 def test_slices_over_the_other_axis(store: Store) -> None:
-    with pytest.raises(ChoiceNeeded, match="it has 2 axes, coil_current, hold_time; name one"):
+    with pytest.raises(ChoiceNeeded, match="it has 2 axes, coil_current, hold_time; name the one"):
         store.fit("map", "lorentzian", observable="atom_number")
     table = store.fit("map", "lorentzian", observable="atom_number", along="coil_current")
     assert isinstance(table, FitTable)

@@ -46,7 +46,7 @@ def test_no_feature_says_how_often_chance_does_as_well() -> None:
     y = 1.0 + 0.1 * np.random.default_rng(35).normal(size=31)
     found = fit_curve(FIELD, y, "lorentzian")
     assert not found.trusted
-    assert "% of random shuffles of the shots look as much like a lorentzian line" in message(
+    assert "% of random shuffles of the shots look as much like the model (lorentzian)" in message(
         found, "no-feature"
     )
 

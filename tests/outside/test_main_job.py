@@ -1,7 +1,8 @@
 """The whole path, from records through the command line to numbers, against values from outside the project.
 
 Sources: NIST Statistical Reference Datasets, nonlinear regression, Eckerle4 (measured; certified values to 11 digits,
-https://www.itl.nist.gov/div898/strd/nls/data/eckerle4.shtml); lmfit's own fits of the peak of its examples; Misra1a and BoxBOD (same NIST collection) through `lmfit.Model`; the IANA time zone database as Python ships it.
+https://www.itl.nist.gov/div898/strd/nls/data/eckerle4.shtml), Misra1a and BoxBOD; lmfit's own fits of the peak that
+comes with its examples; the IANA time zone database as Python ships it.
 """
 
 from __future__ import annotations

@@ -54,7 +54,9 @@ def _write(scan: Scan, path: Path, kind: str, set_aside: bool) -> None:
     part = path.with_name(path.name + ".part")
     try:
         if kind == "netCDF":
-            scan.dataset(set_aside=set_aside).to_netcdf(part, engine="h5netcdf")
+            from nightfold.scans.netcdf import write_netcdf
+
+            write_netcdf(scan.dataset(set_aside=set_aside), part)
         else:
             scan.table(set_aside=set_aside).to_csv(part, index=False)
         part.replace(path)

@@ -142,7 +142,7 @@ def choose_along(scan: Scan, along: str | None) -> str:
     if along is None:
         if len(axes) > 1:
             raise ChoiceNeeded(
-                f"scan {scan.key}: it has {len(axes)} axes, {', '.join(axes)}; name one with along"
+                f"scan {scan.key}: it has {len(axes)} axes, {', '.join(axes)}; name the one to fit along"
             )
         return axes[0]
     if along not in axes and along not in scan.followers:

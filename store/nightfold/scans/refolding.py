@@ -59,7 +59,7 @@ def _span(
 
 
 def _whole_scans(rows: Sequence[Row[Any]], low: int, high: int) -> tuple[int, int]:
-    """Return the span widened so that it cuts through no scan as it stands (what counts as a pause may have changed)."""
+    """Return the span widened to cut through no scan as it stands: what counts as a pause may have changed."""
     while True:
         inside = {row.scan_id for row in rows[low:high]} - {None}
         places = [place for place, row in enumerate(rows) if row.scan_id in inside]

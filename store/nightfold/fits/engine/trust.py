@@ -105,7 +105,7 @@ def _feature(facts: Facts) -> FitWarning | None:
     return FitWarning(
         "no-feature",
         f"nothing stands out of the scatter: {100 * facts.feature_p:.2g} % of random shuffles of the shots"
-        f" look as much like a {facts.model} line; take more shots or scan elsewhere",
+        f" look as much like the model ({facts.model}); take more shots or scan elsewhere",
     )
 
 
