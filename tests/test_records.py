@@ -109,7 +109,7 @@ JSON = st.recursive(
 )  # fmt: skip
 
 
-@settings(max_examples=300)
+@settings(max_examples=120)
 @given(st.sampled_from(sorted(WHOLE)), JSON)
 def test_schema_and_program_agree_on_one_field_gone_wrong(name: str, value: Any) -> None:
     record = {**WHOLE, name: value}

@@ -94,7 +94,8 @@ from alembic import op
 revision, down_revision, branch_labels, depends_on = "0900", "{head}", None, None
 def upgrade():
     for name in ("machine", "shot", "parameter", "value_set"):
-        with op.batch_alter_table(name, recreate="always" if op.get_bind().dialect.name == "sqlite" else "never") as table:
+        recreate = "always" if op.get_bind().dialect.name == "sqlite" else "never"
+        with op.batch_alter_table(name, recreate=recreate) as table:
             table.add_column(sa.Column("colour", sa.Text(), nullable=False, server_default="blue"))
 {more}
 '''

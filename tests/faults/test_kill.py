@@ -19,7 +19,7 @@ from sqlalchemy import text
 from nightfold.store import Store, create_store, open_store
 
 PROGRAM = Path(__file__).parent / "growing.py"
-KILLS = int(os.environ.get("NIGHTFOLD_KILLS", "4"))
+KILLS = int(os.environ.get("NIGHTFOLD_KILLS", "3"))
 SHOTS = 40
 
 

@@ -130,14 +130,16 @@ def test_edits_between_times(store: Store) -> None:
 
 def test_reference_shots_and_untidy_values(store: Store) -> None:
     nan = float("nan")
-    untidy = [
+    tidy: Record = {"a": 1, "b": nan, "c": 1}
+    untidy: list[Record] = [
         {"a": 1, "b": nan},
         {"a": 1.0, "b": nan},
-        {"a": 1, "b": nan, "c": 1},
+        tidy,
         {"a": 1, "b": nan, "c": None},
+        tidy,
     ]
-    store.take(shots([*untidy, untidy[2]]))
-    store.take(shots([untidy[2]] * 3, 300, reference=True))
+    store.take(shots(untidy))
+    store.take(shots([tidy] * 3, 300, reference=True))
     assert told(store) == []
 
 

@@ -263,7 +263,7 @@ WAYS: list[Way] = [in_batches, in_new_processes, by_two_writers, with_a_broken_s
 
 @pytest.mark.parametrize("way", WAYS)
 def test_what_goes_in_comes_out(way: Way, empty_store: Path) -> None:
-    @settings(max_examples=8 * MORE)
+    @settings(max_examples=5 * MORE)
     @given(records())
     def holds(made: list[Record]) -> None:
         with tempfile.TemporaryDirectory() as folder:
@@ -276,7 +276,7 @@ def test_what_goes_in_comes_out(way: Way, empty_store: Path) -> None:
 
 @pytest.mark.parametrize("way", WAYS)
 def test_what_goes_in_comes_out_of_postgresql(way: Way, new_schema: Callable[[], str]) -> None:
-    @settings(max_examples=2 * MORE)
+    @settings(max_examples=MORE)
     @given(records(8))
     def holds(made: list[Record]) -> None:
         url = new_schema()
@@ -296,7 +296,7 @@ def content(store: Store) -> list[tuple[Any, ...]]:
     ]  # fmt: skip
 
 
-@settings(max_examples=8 * MORE)
+@settings(max_examples=5 * MORE)
 @given(st.data())
 def test_the_order_of_arrival_never_shows(empty_store: Path, data: st.DataObject) -> None:
     made = data.draw(records())
