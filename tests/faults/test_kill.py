@@ -56,8 +56,13 @@ def kill_while_taking(where: str, stream: Path, mode: str, after_s: float) -> tu
 
 
 def whole(store: Store) -> dict[str, Any]:
-    """Return everything a store says of its shots."""
-    return {uid: without(store.shot(uid)) for uid in store.shots(set_aside=True).uid}
+    """Return everything a store says of its shots, and how they are folded; the ids of scans found may differ."""
+    table = store.shots(set_aside=True)
+    folded = {str(key): tuple(own.uid) for key, own in table.groupby("scan")}
+    return {
+        uid: (without(store.shot(uid), "scan"), folded.get(str(key)))
+        for uid, key in zip(table.uid, table.scan, strict=True)
+    }
 
 
 def without(view: Any, *names: str) -> str:
