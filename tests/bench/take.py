@@ -92,10 +92,13 @@ def main() -> None:
         for labelled in (True, False):
             made = records(shots, labelled=labelled)
             where = Path(folder) / f"take-{labelled}.sqlite"
+            fresh = [
+                json.loads(json.dumps(record)) for record in made
+            ]  # no shared parts, as from a control program
             lines = Path(folder) / "records.jsonl"
             lines.write_text("".join(json.dumps(record) + "\n" for record in made), encoding="utf-8")
             with open_store(where, create=True) as store:
-                taken = cpu(lambda: store.take(made))  # noqa: B023
+                taken = cpu(lambda: store.take(fresh))  # noqa: B023
             with open_store(Path(folder) / f"file-{labelled}.sqlite", create=True) as store:
                 read = cpu(lambda: store.take_file(lines))  # noqa: B023
             floor = raw_seconds(where, Path(folder) / f"raw-{labelled}.sqlite")

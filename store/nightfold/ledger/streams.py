@@ -29,10 +29,15 @@ class _UNREAD:
 
 @dataclass(slots=True)
 class Entry:
-    """The last value of one parameter in a stream, as stated and in canonical form."""
+    """The last value of one parameter in a stream, as stated and in canonical form.
+
+    What is stated next is the same if it is of `raw_type`, equal to `raw`, and, because 1, 1.0 and True are equal to
+    Python, its value is of `inner_type`, where that is not None.
+    """
 
     raw: Any
     raw_type: type
+    inner_type: type | None
     value: Value
     hash: int
     moved_at: int = -MEMORY
@@ -68,14 +73,15 @@ class StreamMemory:
         if self.generation != machine.generation:
             self._reread(machine)
         entries = self.entries
+        known = entries.get
         changed: dict[str, Entry] = {}
         plan: dict[str, Known] = {}
         hits = 0
         for key, raw in settings.items():
-            entry = entries.get(key)
-            if entry is not None:
-                stated = raw.get("value") if type(raw) is dict else raw
-                if type(stated) is entry.raw_type and entry.raw == raw:  # 1, 1.0 and True are equal to Python
+            entry = known(key)
+            if entry is not None and type(raw) is entry.raw_type and entry.raw == raw:
+                inner = entry.inner_type
+                if inner is None or type(raw["value"]) is inner:  # type: ignore[index] # then it is a dict
                     hits += 1
                     continue
             self._settle_one(key, raw, settings, machine, changed, plan)
@@ -105,11 +111,7 @@ class StreamMemory:
         value, known = machine.settle(name, *settled, path)
         if known.id is None or known is not machine.parameters.get(name):
             plan[name] = known
-        inner = raw.get("value") if isinstance(raw, Mapping) else raw
-        kind = (
-            type(inner) if type(inner) in _PLAIN else _UNREAD
-        )  # arrays do not tell at once whether they are equal
-        changed[name] = Entry(raw, kind, value, hash_setting(name, value.token))
+        changed[name] = Entry(raw, *_types_of(raw), value, hash_setting(name, value.token))
 
     def _missing(self, settings: Mapping[Any, Any], changed: dict[str, Entry]) -> list[str]:
         stated = {clean_name(key) for key, raw in settings.items() if not _is_null(raw)}
@@ -151,6 +153,17 @@ class StreamMemory:
         return {name: entries[name] for name in names if name in entries}
 
 
+def _types_of(raw: Any) -> tuple[type, type | None]:
+    """Return `raw_type` and `inner_type` of an entry; lists and arrays are read again every time."""
+    if type(raw) is not dict:
+        return (type(raw), None) if type(raw) in _PLAIN else (_UNREAD, None)
+    inner = raw["value"]
+    if type(inner) not in _PLAIN:
+        return _UNREAD, None
+    unmistakable = type(inner) is str or (type(inner) is float and not inner.is_integer())
+    return dict, None if unmistakable else type(inner)
+
+
 def _is_null(raw: Any) -> bool:
     return raw is None or (isinstance(raw, Mapping) and raw.get("value") is None)
 
@@ -186,7 +199,7 @@ def recall(connection: Connection, machine: MachineNames, sequence_id: int) -> S
         previous = values
     for name, value in previous.items():
         code = hash_setting(name, token_of(value.kind, value.num, value.exact))
-        memory.entries[name] = Entry(None, _UNREAD, value, code, memory.recent.get(name, -MEMORY))
+        memory.entries[name] = Entry(None, _UNREAD, None, value, code, memory.recent.get(name, -MEMORY))
         memory.total += code
     memory.recent = {name: at for name, at in memory.recent.items() if name in memory.entries}
     return memory
