@@ -9,7 +9,8 @@ from uuid import uuid4
 import pytest
 from hypothesis import HealthCheck, settings
 
-from nightfold.store import Store, create_store, open_store
+from nightfold.opening import create_store, open_store
+from nightfold.store import Store
 
 settings.register_profile(
     "nightfold",

@@ -14,7 +14,7 @@ import nightfold
 ROOT = Path(nightfold.__file__).parent
 COMMANDS = ROOT.parents[1] / "cli" / "nightfold_cli"
 LAYERS: list[set[str]] = [
-    {"errors"},
+    {"errors", "version"},
     {"units", "timestamps", "mounts"},
     {"records", "cardkeys"},
     {"settings", "card"},
@@ -24,6 +24,7 @@ LAYERS: list[set[str]] = [
     {"ledger"},
     {"intake", "scans", "fits", "simulator"},
     {"store"},
+    {"opening"},
 ]
 """From the lowest to the highest. Modules of one layer may import each other."""
 RANK = {name: rank for rank, layer in enumerate(LAYERS) for name in layer}

@@ -16,8 +16,8 @@ from sqlalchemy import create_engine, inspect, text
 
 from nightfold import schema, session, tables
 from nightfold.errors import StoreError
+from nightfold.opening import create_store, open_store, upgrade_store
 from nightfold.session import Session, find_place
-from nightfold.store import create_store, open_store, upgrade_store
 
 
 def revisions(folder: Path) -> ScriptDirectory:

@@ -24,7 +24,7 @@ from nightfold.errors import (
     StoreReadOnly,
     StoreTooNew,
 )
-from nightfold.store import create_store, open_store, upgrade_store
+from nightfold.opening import create_store, open_store, upgrade_store
 
 
 def shot(number: int = 0) -> dict[str, Any]:

@@ -60,9 +60,7 @@ def test_what_does_not_convert(one: str, other: str) -> None:
         convert(1, one, other)
 
 
-@pytest.mark.parametrize(
-    "unit", ["blorps", "m/", "A;A", "1 +", "x" * 101, "__import__('os')", "="]
-)
+@pytest.mark.parametrize("unit", ["blorps", "m/", "A;A", "1 +", "x" * 101, "__import__('os')", "="])
 def test_unknown_units(unit: str) -> None:
     with pytest.raises(UnitError, match="is not known; examples: A, ms, MHz, nK, G, atoms"):
         parse_unit(unit)

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 @contextmanager
 def opened(args: Namespace, screen: Screen, *, create: bool = False) -> Iterator[Store]:
     """Open the store of the arguments, with `create` make it if it is not there, and name it."""
-    from nightfold.store import open_store
+    from nightfold.opening import open_store
 
     with open_store(args.store, create=create) as store:
         screen.store(store.where)

@@ -9,16 +9,17 @@ from __future__ import annotations
 from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
+from nightfold.version import __version__ as __version__
+
 if TYPE_CHECKING:
     from nightfold.fits.curve import fit_curve
     from nightfold.fits.many import FitTable, fit_many
     from nightfold.fits.model import Model
     from nightfold.fits.result import Estimate, FitResult, FitWarning
     from nightfold.ledger.outcome import Intake
+    from nightfold.opening import open_store
     from nightfold.scans.scan import Scan
-    from nightfold.store import Store, open_store
-
-__version__ = "0.1.0"
+    from nightfold.store import Store
 
 _HOMES = {
     "Estimate": "nightfold.fits.result",
@@ -31,7 +32,7 @@ _HOMES = {
     "Store": "nightfold.store",
     "fit_curve": "nightfold.fits.curve",
     "fit_many": "nightfold.fits.many",
-    "open_store": "nightfold.store",
+    "open_store": "nightfold.opening",
 }
 
 __all__ = [

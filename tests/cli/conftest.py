@@ -27,8 +27,8 @@ Run = Callable[..., Answer]
 @pytest.fixture(scope="session")
 def heron(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """Return a folder with two nights of heron and a store `heron.sqlite` that holds them."""
+    from nightfold.opening import create_store
     from nightfold.simulator import write_campaign
-    from nightfold.store import create_store
 
     folder = tmp_path_factory.mktemp("heron")
     campaign = write_campaign(folder, nights=2)

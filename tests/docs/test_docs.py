@@ -14,8 +14,8 @@ from typing import Any
 import pytest
 
 import nightfold
+from nightfold.opening import create_store
 from nightfold.simulator import write_campaign
-from nightfold.store import create_store
 from nightfold_cli.main import main
 from nightfold_cli.overview import names
 

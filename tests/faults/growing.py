@@ -9,7 +9,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from nightfold.store import open_store
+from nightfold.opening import open_store
 
 
 def follow(path: Path) -> Iterator[dict[str, Any]]:

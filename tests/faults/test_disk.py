@@ -13,7 +13,7 @@ from typing import Any
 import pytest
 
 from nightfold.errors import StoreError
-from nightfold.store import create_store, open_store
+from nightfold.opening import create_store, open_store
 
 
 def shot(number: int) -> dict[str, Any]:

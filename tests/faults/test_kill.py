@@ -16,7 +16,8 @@ from typing import Any
 import pytest
 from sqlalchemy import text
 
-from nightfold.store import Store, create_store, open_store
+from nightfold.opening import create_store, open_store
+from nightfold.store import Store
 
 PROGRAM = Path(__file__).parent / "growing.py"
 KILLS = int(os.environ.get("NIGHTFOLD_KILLS", "3"))

@@ -11,7 +11,8 @@ import pandas as pd
 import pytest
 
 from nightfold.errors import NotFound
-from nightfold.store import Store, open_store
+from nightfold.opening import open_store
+from nightfold.store import Store
 
 Record = dict[str, Any]
 

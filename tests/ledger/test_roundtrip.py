@@ -21,7 +21,8 @@ from hypothesis import strategies as st
 
 from nightfold.ledger.shot import ShotView
 from nightfold.ledger.writing import Writer
-from nightfold.store import Store, create_store, open_store
+from nightfold.opening import create_store, open_store
+from nightfold.store import Store
 
 Record = dict[str, Any]
 MORE = int(os.environ.get("NIGHTFOLD_MORE_EXAMPLES", "1"))

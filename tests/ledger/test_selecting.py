@@ -12,7 +12,8 @@ import pytest
 
 from nightfold.errors import ChoiceNeeded, NotFound
 from nightfold.ledger import selecting
-from nightfold.store import Store, open_store
+from nightfold.opening import open_store
+from nightfold.store import Store
 
 
 def shot(number: int, **changes: Any) -> dict[str, Any]:

@@ -7,7 +7,8 @@ from typing import Any
 import pytest
 
 from nightfold.errors import NotFound
-from nightfold.store import Store, open_store
+from nightfold.opening import open_store
+from nightfold.store import Store
 
 
 def shot(number: int, **changes: Any) -> dict[str, Any]:

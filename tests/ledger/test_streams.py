@@ -10,7 +10,8 @@ from sqlalchemy import func, select
 
 from nightfold import tables
 from nightfold.ledger.streams import MEMORY
-from nightfold.store import Store, open_store
+from nightfold.opening import open_store
+from nightfold.store import Store
 
 CONSTANTS = {f"constant {number}": float(number) for number in range(40)}
 

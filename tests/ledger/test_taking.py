@@ -14,7 +14,8 @@ from sqlalchemy import func, select
 
 from nightfold import tables
 from nightfold.errors import CardError
-from nightfold.store import Store, open_store
+from nightfold.opening import open_store
+from nightfold.store import Store
 
 
 def record(number: int = 0, **changes: Any) -> dict[str, Any]:

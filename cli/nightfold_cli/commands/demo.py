@@ -46,9 +46,9 @@ def add_arguments(parser: ArgumentParser) -> None:
 
 def run(args: Namespace) -> int:
     """Write the campaign, take it, fit it, compare."""
+    from nightfold.opening import open_store
     from nightfold.simulator import write_campaign
     from nightfold.simulator.schedule import NIGHTS
-    from nightfold.store import open_store
 
     screen = Screen.here(args.json)
     folder: Path = args.folder

@@ -32,7 +32,7 @@ def add_arguments(parser: ArgumentParser) -> None:
 def run(args: Namespace) -> int:
     """Make the store, then write and use the card; a card that is wrong leaves no store behind."""
     from nightfold.card import read_card
-    from nightfold.store import create_store
+    from nightfold.opening import create_store
 
     screen = Screen.here(args.json)
     path: Path | None = args.card or (Path(f"{args.machine}.toml") if args.machine else None)

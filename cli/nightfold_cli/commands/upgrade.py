@@ -16,7 +16,7 @@ def add_arguments(parser: ArgumentParser) -> None:
 
 def run(args: Namespace) -> int:
     """Upgrade the store; a file is copied first."""
-    from nightfold.store import upgrade_store
+    from nightfold.opening import upgrade_store
 
     screen = Screen.here(args.json)
     screen.store(args.store)

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from sqlalchemy import Connection, Row, insert, select
 
-from nightfold import __version__, tables
+from nightfold import tables
 from nightfold.errors import FitError, NotFound
 from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult, FitWarning
@@ -22,6 +22,7 @@ from nightfold.scans.listing import find_scan
 from nightfold.scans.scan import Scan
 from nightfold.session import Session
 from nightfold.timestamps import from_us, now_us
+from nightfold.version import __version__
 
 if TYPE_CHECKING:
     import pandas as pd
