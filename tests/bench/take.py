@@ -24,13 +24,14 @@ from nightfold.ledger.writing import BATCH
 TABLES = ("value_set", "set_value", "shot", "shot_value", "reading")
 
 
-def records(shots: int, *, labelled: bool = True) -> list[dict[str, Any]]:
-    """Return shots of 120 parameters and 8 observables, in scans of 100 with one swept parameter."""
-    rng = np.random.default_rng(7)
+def records(shots: int, *, labelled: bool = True, first: int = 0) -> list[dict[str, Any]]:
+    """Return shots of 120 parameters and 8 observables, in scans of 100, counted from `first`; one is swept."""
+    rng = np.random.default_rng(7 + first)
     start = datetime(2026, 3, 1, 20, tzinfo=UTC)
-    resting = {f"setting_{k:03d}": {"value": round(float(rng.normal()), 4), "unit": "V"} for k in range(118)}
+    constant = np.random.default_rng(7).normal(size=118)
+    resting = {f"setting_{k:03d}": {"value": round(float(constant[k]), 4), "unit": "V"} for k in range(118)}
     made = []
-    for k in range(shots):
+    for k in range(first, first + shots):
         noise = rng.normal(size=8)
         parameters = {
             **resting,

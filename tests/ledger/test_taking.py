@@ -66,6 +66,15 @@ def frame(**changes: str) -> dict[str, str]:
     return {"camera": "side", "role": "atoms", "path": "frames/1.tif", **changes}
 
 
+def test_several_records_twice_in_one_batch(anywhere: str) -> None:
+    """As a file has them whose writer repeats its tail after a restart."""
+    order = [0, 1, 2, 3, 4, 3, 4, 2, 5, 6, 5, 6, 0]
+    with open_store(anywhere) as store:
+        outcome = store.take([record(n, uid=f"shot {n}") for n in order])
+        assert (outcome.new, outcome.known, outcome.refused) == (7, 6, [])
+        assert sorted(store.shots().uid) == [f"shot {n}" for n in range(7)]
+
+
 def test_the_same_record_twice_in_one_batch(store: Store) -> None:
     one = record(0)
     outcome = store.take([one, one, record(1), one])

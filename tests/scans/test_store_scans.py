@@ -15,6 +15,7 @@ from hypothesis import strategies as st
 
 from nightfold import Store, open_store
 from nightfold.errors import ChoiceNeeded, NotFound
+from nightfold.scans.keeping import settle_axes
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
 _numbers = itertools.count()
@@ -237,7 +238,9 @@ def test_keys(tmp_path: Path) -> None:
     with taken(tmp_path, records) as store:
         assert store.scan("2").label == "2"
         assert store.scan(2).id == 2
-        with pytest.raises(ChoiceNeeded, match="several sequences use this label; name it by id: 1, 3"):
+        with pytest.raises(
+            ChoiceNeeded, match=r"use this label; name it by id: 1 \(heron, hold\), 3 \(heron, other\)"
+        ):
             store.scan("loss")
         with pytest.raises(NotFound, match=r"scan 'lose'.*it has loss"):
             store.scan("lose")
@@ -263,3 +266,59 @@ def test_two_axes_in_random_order_with_holes_and_repeats(tmp_path: Path) -> None
         assert int(dataset.atom_number.notnull().sum()) == 6
         assert bool(dataset.atom_number.sel(coil_current=61.0, hold_time=50.0).isnull().all())
         assert dataset.hold_time.attrs["units"] == "ms"
+
+
+def test_a_record_that_does_not_say_what_is_swept_sweeps_what_the_others_do(tmp_path: Path) -> None:
+    records = sweep(0, np.repeat(GRID, 2), label="loss", swept=["coil_current"])
+    for record in records[::3]:
+        del record["swept"]
+    with taken(tmp_path, records) as straight, taken(tmp_path, records[::-1], 4) as backwards:
+        (scan,) = straight.scans()
+        assert (scan.key, scan.shots, [axis.parameter for axis in scan.axes]) == (
+            "loss#1",
+            26,
+            ["coil_current"],
+        )
+        assert layout(backwards) == layout(straight)
+
+
+def test_an_edit_within_a_label_that_declares_nothing_is_an_edit(tmp_path: Path) -> None:
+    records = sweep(0, np.random.default_rng(4).permutation(np.repeat(GRID, 2)), label="loss")
+    for record in records[9:]:
+        record["parameters"]["bias"] = 2.0
+    for record in records[:9]:
+        record["parameters"]["bias"] = 1.0
+    with taken(tmp_path, records) as store:
+        assert [axis.parameter for axis in store.scan("loss").axes] == ["coil_current"]
+        assert store.edits()[["parameter", "old", "new"]].values.tolist() == [["bias", 1.0, 2.0]]
+
+
+@pytest.mark.parametrize("label", ["loss", None])
+def test_a_counter_or_a_thermometer_among_the_parameters_is_no_axis(
+    tmp_path: Path, label: str | None
+) -> None:
+    rng = np.random.default_rng(5)
+    records = sweep(0, rng.permutation(np.repeat(GRID, 2)), label=label)
+    for number, record in enumerate(records):
+        record["parameters"] |= {"counter": number, "room": 21 + float(rng.normal())}
+    with taken(tmp_path, records) as store:
+        (scan,) = store.scans()
+        assert [axis.parameter for axis in scan.axes] == ["coil_current"]
+        assert scan.dataset().sizes == {"coil_current": 13, "repeat": 2}
+        assert store.edits().empty
+
+
+def test_a_long_round_is_not_read_again_with_every_shot(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    looks: list[int] = []
+
+    def counted(connection: Any, scan_id: int, swept: Any) -> None:
+        looks.append(scan_id)
+        settle_axes(connection, scan_id, swept)
+
+    monkeypatch.setattr("nightfold.scans.assigning.settle_axes", counted)
+    with fresh(tmp_path) as store:
+        for record in sweep(0, np.resize(GRID, 400), label="loss", swept=["coil_current"]):
+            store.take([record])
+        assert len(looks) < 100

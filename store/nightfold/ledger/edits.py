@@ -2,12 +2,13 @@
 
 Per stream the resting value of every parameter is followed through time: a value set is looked at only where it differs
 from the one before, and a moved value only where it was neither declared swept nor an axis of the shot's scan. The same
-change seen in several sequences is one edit.
+change seen in several sequences is one edit. What changes at more than 6 shots in a row is a reading among the
+parameters (a counter, a thermometer), not a person's doing.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
@@ -20,6 +21,7 @@ from nightfold.ledger.selecting import find_machine, moment_us
 from nightfold.settings import plain_value, token_of
 
 Stored = tuple[float | None, str | None]
+LONGEST_TUNING = 6
 
 
 @dataclass(frozen=True, slots=True)
@@ -33,6 +35,17 @@ class Edit:
     new: Any
     machine: str
     sequence: str
+
+
+@dataclass(frozen=True, slots=True)
+class _Change:
+    """A resting value that differs from the one before, at the shot of that place in the stream."""
+
+    place: int
+    at_us: int
+    parameter_id: int
+    old: Stored
+    new: Stored
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,17 +95,40 @@ def _edits_of(connection: Connection, machine_id: int, machine: str) -> list[Edi
     )
     seen: list[Edit] = []
     for row in connection.execute(sequences).all():
-        for at_us, parameter_id, old, new in _walk(connection, row.id, known):
-            parameter = known[parameter_id]
-            before, after = (plain_value(parameter.kind, *value) for value in (old, new))
-            seen.append(Edit(at_us, parameter.name, parameter.unit, before, after, machine, row.name))
+        for change in _by_hand(_walk(connection, row.id, known)):
+            parameter = known[change.parameter_id]
+            before, after = (plain_value(parameter.kind, *value) for value in (change.old, change.new))
+            seen.append(Edit(change.at_us, parameter.name, parameter.unit, before, after, machine, row.name))
     return _merge(seen)
 
 
-def _walk(
-    connection: Connection, sequence_id: int, known: Mapping[int, _Parameter]
-) -> Iterator[tuple[int, int, Stored, Stored]]:
-    """Yield (time, parameter, old, new) wherever a resting value of the stream changes."""
+def _by_hand(changes: Iterable[_Change]) -> list[_Change]:
+    """Leave out what changes shot after shot: nobody turns a knob every ten seconds, but a counter or a sensor does."""
+    by_parameter: dict[int, list[_Change]] = {}
+    for change in changes:
+        by_parameter.setdefault(change.parameter_id, []).append(change)
+    return [
+        change
+        for own in by_parameter.values()
+        for run in _runs(own)
+        if len(run) <= LONGEST_TUNING
+        for change in run
+    ]
+
+
+def _runs(changes: Sequence[_Change]) -> Iterator[list[_Change]]:
+    """Yield the changes of one parameter in runs at consecutive shots."""
+    run: list[_Change] = []
+    for change in changes:
+        if run and change.place != run[-1].place + 1:
+            yield run
+            run = []
+        run.append(change)
+    yield run
+
+
+def _walk(connection: Connection, sequence_id: int, known: Mapping[int, _Parameter]) -> Iterator[_Change]:
+    """Yield every change of a resting value of the stream, in time order."""
     shot = tables.shot
     contents: dict[int, dict[int, Stored]] = {}
     resting: dict[int, Stored] = {}
@@ -106,7 +142,7 @@ def _walk(
         rest = tables.set_value
         for row in connection.execute(select(rest).where(rest.c.set_id.in_(part))):
             contents.setdefault(row.set_id, {})[row.parameter_id] = (row.num, row.exact)
-    for row in rows:
+    for place, row in enumerate(rows):
         values = moved.get(row.id, {})
         skip = axes.get(row.id, frozenset())
         if (
@@ -121,7 +157,7 @@ def _walk(
         for parameter_id, value in values.items():
             old = resting.get(parameter_id)
             if old is not None and _token(known[parameter_id], old) != _token(known[parameter_id], value):
-                yield row.started_us, parameter_id, old, value
+                yield _Change(place, row.started_us, parameter_id, old, value)
             resting[parameter_id] = value
 
 

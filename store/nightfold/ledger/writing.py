@@ -190,8 +190,9 @@ class Writer:
     def _settle(self, batch: _Batch, item: Incoming, shot: CheckedShot | _Late) -> None:
         uid = _uid(shot)
         if uid in batch.fresh:
+            written = list(batch.fresh)
             self._flush(batch)
-            self._look_up(batch, [uid])
+            self._look_up(batch, written)
         stored = batch.stored.get(uid)
         if isinstance(shot, _Late):
             self._amend_by_uid(batch, shot.amendment, stored)

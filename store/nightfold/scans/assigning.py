@@ -41,8 +41,8 @@ class ScanFolder:
             if current is None or not current.takes(shot.started_us, swept, self.rejoin_us(connection, shot)):
                 number = 1 if current is None else current.round + 1
                 current = rounds.open_round(connection, key[0], key[1], number, shot.started_us, swept)
-            current.add(shot.started_us, shot.wish.planned_shots, shot.wish.last)
-            current.watch_settings(shot.set_digest, len(shot.moving))
+            current.add(shot.started_us, swept, shot.wish.planned_shots, shot.wish.last)
+            current.watch_settings(shot.set_digest, shot.moving)
             self._newest[key] = current
             self._touched.setdefault(key, {})[current.scan_id] = current
             shot.scan_id = current.scan_id
@@ -67,8 +67,9 @@ class ScanFolder:
                 del self._newest[key]
                 continue
             for current in touched.values():
-                if not current.plain:
+                if current.unsettled or current is not self._newest[key]:
                     settle_axes(connection, current.scan_id, current.swept)
+                    current.settled_at = current.shots
         for sequence_id, started in free.items():
             refolding.fold_span(connection, sequence_id, min(started), max(started))
 

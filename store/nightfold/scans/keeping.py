@@ -9,6 +9,7 @@ from sqlalchemy import Connection, delete, insert, select
 from nightfold import tables
 from nightfold.ledger.selecting import Selection, named_by_id, select_shots, setting_columns
 from nightfold.scans.axes import choose_axes
+from nightfold.scans.likely import likely_axes
 
 
 def set_axes(
@@ -26,13 +27,17 @@ def set_axes(
         connection.execute(insert(table), rows)
 
 
-def settle_axes(connection: Connection, scan_id: int, swept: Collection[int]) -> None:
+def settle_axes(
+    connection: Connection, scan_id: int, swept: Collection[int], *, declared: bool = True
+) -> None:
     """Find out from a scan's shots what its axes are and what moves along with them, and enter it.
 
     Parameters
     ----------
     swept : collection of int
         Parameters declared or found to be swept; empty where nothing is known, then whatever moves may be an axis.
+    declared : bool
+        Whether the records say so; otherwise `likely_axes` has a say.
     """
     moving = moving_parameters(connection, scan_id)
     old = (
@@ -51,7 +56,10 @@ def settle_axes(connection: Connection, scan_id: int, swept: Collection[int]) ->
     named = named_by_id(connection, tables.parameter, [*wanted, *others])
     ids = {item.name: item.ids[0] for item in named}
     columns = setting_columns(connection, rows, named, where)
-    axes, followers = choose_axes(columns, [item.name for item in named if item.ids[0] in swept])
+    chosen = [item.name for item in named if item.ids[0] in swept]
+    if columns and not (declared and chosen):
+        chosen = likely_axes({name: columns[name] for name in chosen or columns})
+    axes, followers = choose_axes(columns, chosen)
     set_axes(
         connection,
         scan_id,

@@ -43,19 +43,38 @@ def find_scan(session: Session, key: int | str) -> Scan:
 
 def _find_id(connection: Connection, key: int | str) -> int:
     scan = tables.scan
-    query = select(scan.c.id, scan.c.label, scan.c.round, scan.c.sequence_id)
+    sequence, machine = tables.sequence, tables.machine
+    query = (
+        select(
+            scan.c.id, scan.c.label, scan.c.round, scan.c.sequence_id,
+            sequence.c.name.label("sequence"), machine.c.name.label("machine"),
+        )
+        .join(sequence, sequence.c.id == scan.c.sequence_id)
+        .join(machine, machine.c.id == sequence.c.machine_id)
+    )  # fmt: skip
     rows: list[Row[Any]] = list(connection.execute(query))
     if isinstance(key, int) and not isinstance(key, bool):
         found = [row for row in rows if row.id == key]
     else:
         found = _by_text(rows, str(key))
     if not found:
-        known = near_miss(str(key), dict.fromkeys(row.label for row in rows if row.label is not None))
-        raise NotFound(f"scan {key!r}: not among the {len(rows)} scans of this store; of labels {known}")
+        raise NotFound(f"scan {key!r}: not among the {len(rows)} scans of this store; {_nearest(rows, key)}")
     if len({row.sequence_id for row in found}) > 1:
-        choices = ", ".join(str(row.id) for row in found)
-        raise ChoiceNeeded(f"scan {key!r}: several sequences use this label; name it by id: {choices}")
+        choices = ", ".join(f"{row.id} ({row.machine}, {row.sequence})" for row in found)
+        raise ChoiceNeeded(
+            f"scan {key!r}: several machines or sequences use this label; name it by id: {choices}"
+        )
     return int(max(found, key=lambda row: row.round).id)
+
+
+def _nearest(rows: list[Row[Any]], key: int | str) -> str:
+    label = str(key).rpartition("#")[0]
+    rounds = sorted(row.round for row in rows if row.label == label)
+    if rounds:
+        return f"label {label!r} has the rounds {', '.join(map(str, rounds))}"
+    return (
+        f"of labels {near_miss(str(key), dict.fromkeys(row.label for row in rows if row.label is not None))}"
+    )
 
 
 def _by_text(rows: list[Row[Any]], key: str) -> list[Row[Any]]:

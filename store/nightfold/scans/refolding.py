@@ -160,7 +160,7 @@ def _keep(
     free = {scan_id for scan_id in now.values() if scan_id is not None}
     heirs: dict[int, int] = {}
     placed: set[int] = set()
-    touched: dict[int, list[int]] = {}
+    touched: dict[int, tuple[list[int], bool]] = {}
     for scan in found:
         counts: dict[int, int] = {}
         for shot_id in scan.shot_ids:
@@ -179,12 +179,12 @@ def _keep(
         lost = sum(1 for old in now.values() if old == best) > counts.get(best, 0)
         move_shots(connection, best, moved)
         if moved or lost:
-            touched[best] = [ids[name] for name in scan.axes]
+            touched[best] = [ids[name] for name in scan.axes], scan.origin == "declared"
         placed.update(scan.shot_ids)
     loose = [shot_id for shot_id, scan_id in now.items() if scan_id is not None and shot_id not in placed]
     move_shots(connection, None, loose)
-    for scan_id, axes in touched.items():
+    for scan_id, (axes, declared) in touched.items():
         set_axes(connection, scan_id, axes)
-        settle_axes(connection, scan_id, axes)
+        settle_axes(connection, scan_id, axes, declared=declared)
     for scan_id in free:
         retire(connection, scan_id, heirs.get(scan_id))

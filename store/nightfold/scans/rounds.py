@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field
 
 from sqlalchemy import Connection, delete, func, select, update
 
@@ -11,6 +11,8 @@ from nightfold import tables
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.rows import chunks
 from nightfold.scans.keeping import set_axes, settle_axes
+
+ALWAYS_SETTLED = 64
 
 
 @dataclass(slots=True)
@@ -25,8 +27,8 @@ class Round:
     planned: int | None = None
     closed_us: int | None = None
     late: bool = False
-    set_digest: bytes | None = None
-    plain: bool = False
+    settled_at: int = 0
+    seen: set[tuple[bytes, frozenset[str]]] = field(default_factory=set)
 
     def takes(self, started_us: int, swept: Sequence[int], rejoin_us: int) -> bool:
         """Return whether a shot of that time and sweep resumes this round."""
@@ -35,20 +37,33 @@ class Round:
             return True
         if self.closed_us is not None or (self.planned is not None and self.shots >= self.planned):
             return False
-        return started_us - self.last_us <= rejoin_us and frozenset(swept) == self.swept
+        return started_us - self.last_us <= rejoin_us and _same_sweep(self.swept, frozenset(swept))
 
-    def watch_settings(self, set_digest: bytes, moving: int) -> None:
-        """Note whether nothing but the one swept parameter has ever moved: then the axes need no second look."""
-        self.plain = self.plain and self.set_digest in (None, set_digest) and moving == len(self.swept) == 1
-        self.set_digest = set_digest
+    def watch_settings(self, set_digest: bytes, moving: Iterable[str]) -> None:
+        """Note what moved: what has moved in every combination seen before needs no second look at the axes."""
+        pattern = set_digest, frozenset(moving)
+        if pattern not in self.seen:
+            self.seen.add(pattern)
+            self.settled_at = 0
 
-    def add(self, started_us: int, planned: int | None, last: bool) -> None:
+    @property
+    def unsettled(self) -> bool:
+        """Whether the axes must be looked at again: on anything new, and whenever the round has grown by a quarter."""
+        return self.shots < ALWAYS_SETTLED or self.shots >= 1.25 * self.settled_at
+
+    def add(self, started_us: int, swept: Sequence[int], planned: int | None, last: bool) -> None:
         """Count a shot in."""
         self.shots += 1
+        self.swept = self.swept or frozenset(swept)
         self.last_us = max(self.last_us, started_us)
         self.planned = planned if planned is not None else self.planned
         if last:
             self.closed_us = max(started_us, self.closed_us or started_us)
+
+
+def _same_sweep(one: frozenset[int], other: frozenset[int]) -> bool:
+    """Whether two shots of a label sweep the same; one that does not say so sweeps what the others do."""
+    return one == other or not one or not other
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,7 +81,7 @@ def open_round(
     row = {"sequence_id": sequence_id, "label": label, "round": number, "origin": "label"}
     scan_id = insert_row(connection, tables.scan, row)
     set_axes(connection, scan_id, swept)
-    return Round(scan_id, number, frozenset(swept), started_us, 0, plain=True)
+    return Round(scan_id, number, frozenset(swept), started_us, 0)
 
 
 def newest_round(connection: Connection, sequence_id: int, label: str) -> Round | None:
@@ -124,7 +139,7 @@ def fold_label(connection: Connection, sequence_id: int, label: str, rejoin_us: 
         values = {"round": number, "planned_shots": planned, "closed_us": max(ends, default=None)}
         connection.execute(update(scan).where(scan.c.id == scan_id).values(**values))
         move_shots(connection, scan_id, [member.id for member in group if member.scan_id != scan_id])
-        settle_axes(connection, scan_id, group[0].swept)
+        settle_axes(connection, scan_id, next((m.swept for m in group if m.swept), frozenset()))
     for scan_id in free:
         retire(connection, scan_id, chosen[0])
 
@@ -133,6 +148,7 @@ def _cut(
     members: Sequence[_Member], closed: set[int], planned: int | None, rejoin_us: int
 ) -> list[list[_Member]]:
     groups: list[list[_Member]] = []
+    swept: frozenset[int] = frozenset()
     for member in members:
         last = groups[-1] if groups else None
         joins = (
@@ -140,12 +156,14 @@ def _cut(
             and last[-1].started_us not in closed
             and (planned is None or len(last) < planned)
             and member.started_us - last[-1].started_us <= rejoin_us
-            and member.swept == last[-1].swept
+            and _same_sweep(swept, member.swept)
         )
         if joins and last is not None:
             last.append(member)
+            swept = swept or member.swept
         else:
             groups.append([member])
+            swept = member.swept
     return groups
 
 
@@ -168,13 +186,12 @@ def _members(connection: Connection, scan_ids: Sequence[int]) -> list[_Member]:
 
 
 def _swept_of(connection: Connection, scan_id: int) -> frozenset[int]:
-    """Return the parameters that the records of a scan declared swept, by its newest shot."""
+    """Return the parameters that the records of a scan declared swept."""
     shot, value = tables.shot, tables.shot_value
-    newest = (
-        select(shot.c.id).where(shot.c.scan_id == scan_id).order_by(shot.c.started_us.desc()).limit(1)
-    ).scalar_subquery()
-    rows = select(value.c.parameter_id).where(value.c.shot_id == newest, value.c.swept)
-    return frozenset(connection.execute(rows).scalars())
+    rows = select(value.c.parameter_id).join(shot, shot.c.id == value.c.shot_id)
+    return frozenset(
+        connection.execute(rows.where(shot.c.scan_id == scan_id, value.c.swept).distinct()).scalars()
+    )
 
 
 def move_shots(connection: Connection, scan_id: int | None, shot_ids: Sequence[int]) -> None:
