@@ -15,12 +15,14 @@ import math
 import re
 from dataclasses import dataclass
 from decimal import ROUND_HALF_EVEN, Context, Decimal
+from typing import Literal
 
 _CONTEXT = Context(prec=800, rounding=ROUND_HALF_EVEN)
 _NEGLIGIBLE = 1e-16  # a stderr below this share of the value is lost in a double
 _ASYMMETRIC = 1.10
 _UNDETERMINED = 1e3  # one side of an interval longer than the other by this: no digits worth reading
 _LONGEST = 14
+NOT_DETERMINED = "not determined"
 _PLAIN_EXPONENTS = range(-3, 6)
 _PATTERN = re.compile(
     r"(?P<value>[+-]?\d+(?:\.\d+)?)\((?P<stderr>\d+(?:\.\d+)?)\)(?:e(?P<exponent>[+-]?\d+))?"
@@ -98,10 +100,12 @@ def concise(value: float, stderr: float) -> str:
 def asymmetric(value: float, stderr: float, low: float, high: float) -> str:
     """Return the value with its 68 % interval: ``33.612(14)``, or ``33.612 +0.018/-0.011`` where lopsided.
 
-    The two-sided form is used where one side is longer than the other by more than a tenth; beyond a thousandfold
-    the value is given as ``1.2 (not determined)``.
+    The two-sided form is used where one side is longer than the other by more than a tenth; beyond a thousandfold,
+    and where neither side ends, it is ``not determined``.
     """
     up, down = high - value, value - low
+    if _open_side(low, high, value) is not None:
+        return NOT_DETERMINED
     if not (math.isfinite(up) and math.isfinite(down)) or up <= 0 or down <= 0:
         return concise(value, stderr)
     if max(up, down) <= _ASYMMETRIC * min(up, down):
@@ -109,16 +113,52 @@ def asymmetric(value: float, stderr: float, low: float, high: float) -> str:
     scale = scale_of(value, min(up, down))
     if scale is None:
         return concise(value, stderr)
-    if max(up, down) > _UNDETERMINED * min(up, down):
-        return f"{short(value)} (not determined)"
     body = f"{scale.digits(value)} +{scale.digits(up)}/-{scale.digits(down)}"
     return f"({body}){scale.suffix}" if scale.suffix else body
 
 
 def interval(low: float, high: float, value: float, stderr: float) -> str:
-    """Return ``33.584 … 33.640``, written to the same place as the value they belong to."""
+    """Return ``33.584 … 33.640``, written to the same place as the value they belong to.
+
+    Where only one end means something it is ``above 3.1e3`` or ``below 0.25``, where none does ``not determined``.
+    """
+    side = _open_side(low, high, value)
+    if side == "both":
+        return NOT_DETERMINED
+    if side is not None:
+        return f"above {_one_end(low, value)}" if side == "up" else f"below {_one_end(high, value)}"
     scale = scale_of(value, stderr)
     return " … ".join(_end(end, scale) for end in (low, high))
+
+
+def _open_side(low: float, high: float, value: float) -> Literal["up", "down", "both"] | None:
+    """Return the side to which an interval has no end worth reading, None where both ends are good.
+
+    An end a thousand times farther off than the other one says nothing, and neither does the zero below a number
+    that cannot be negative, nor one a thousand times below or above such a number.
+    """
+    up, down = high - value, value - low
+    if math.isnan(low) or math.isnan(high):
+        return "both"
+    no_up = not math.isfinite(up) or up > _UNDETERMINED * down > 0
+    no_down = not math.isfinite(down) or down > _UNDETERMINED * up > 0
+    if no_up and not no_down:
+        vanishing = math.isfinite(up) and 0 < low < value / _UNDETERMINED
+        no_down = low == 0 or vanishing
+    if no_up or no_down:
+        return "both" if no_up and no_down else "up" if no_up else "down"
+    return None
+
+
+def _one_end(end: float, value: float) -> str:
+    """Return the one end that is known, in two digits, or more where it is close to the value."""
+    closeness = abs(end) / abs(value - end) if math.isfinite(value) and value != end else 1.0
+    digits = 2 + max(0, math.ceil(math.log10(closeness))) if closeness > 0 else 2
+    rounded = float(f"{end:.{min(digits, 12)}g}")
+    if 1e-3 <= abs(rounded) < 1e3 or not rounded:
+        return plain(rounded)
+    mantissa, _, exponent = f"{rounded:.{min(digits, 12) - 1}e}".partition("e")
+    return f"{mantissa}e{int(exponent)}"
 
 
 def _end(end: float, scale: Scale | None) -> str:

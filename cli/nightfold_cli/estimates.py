@@ -6,7 +6,7 @@ import math
 from collections.abc import Collection, Mapping
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import asymmetric, interval, plain
+from nightfold_cli.concise import NOT_DETERMINED, asymmetric, interval, plain
 from nightfold_cli.layout import Column, Row
 
 if TYPE_CHECKING:
@@ -30,7 +30,7 @@ def value_text(estimate: AnyEstimate, *, fixed: bool = False) -> str:
     if fixed:
         return f"{plain(estimate.value)} fixed"
     if not math.isfinite(estimate.stderr):
-        return f"{plain(estimate.value, 6)}(?)"
+        return NOT_DETERMINED
     return asymmetric(estimate.value, estimate.stderr, *estimate.interval(LEVEL_68))
 
 

@@ -1,19 +1,19 @@
 """Tables in columns: what there is room for, and how the cells are wrapped and aligned.
 
-Pure text; `render` prints it. Columns that may be spared go before anything is cut, cells that may wrap are wrapped,
-and heads are broken in two before a column goes.
+Pure text; `render` prints it. No line is ever wider than the screen: heads are broken in two, cells that may wrap are
+wrapped, columns that may be spared go, and where all that does not suffice a row goes on in a further line.
 """
 
 from __future__ import annotations
 
-import unicodedata
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
-from nightfold_cli.printable import printable
+from nightfold_cli.printable import cell_width, printable, wrap
 
 GAP = 2
 _WIDEST_WORD = 24
+_INDENT = "    "
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,45 +94,59 @@ def cell_text(cell: str | Cell, *, screen: bool) -> str:
 
 
 def lay_out(columns: Sequence[Column], rows: Sequence[Row], width: int) -> Laid:
-    """Return a table that is at most so wide, if only the columns that must be shown allow it."""
+    """Return a table that is at most so wide."""
     texts = [[cell_text(cell, screen=True) for cell in row] for row in rows]
     heads = [column.name for column in columns]
     every = range(len(columns))
-    if _needed(_least(columns, heads, texts), every) > width:
+    if _needed(_least(columns, heads, texts, width), every) > width:
         heads = [name.replace(" (", "\n(") for name in heads]
-    least = _least(columns, heads, texts)
+    least = _least(columns, heads, texts, width)
     shown = _fitting(columns, least, width)
-    widths = _widths(columns, heads, texts, least, shown, width)
-    kept = [columns[index] for index in shown]
+    if _needed(least, shown) > width:
+        columns = [column if column.right else replace(column, wraps=True) for column in columns]
+        least = _least(columns, heads, texts, width)
+    groups = _groups(shown, least, width)
+    rooms = [width] + [width - len(_INDENT)] * (len(groups) - 1)
+    widths = [
+        _widths(columns, heads, texts, least, group, room) for group, room in zip(groups, rooms, strict=True)
+    ]
 
     def lines(cells: Sequence[str]) -> tuple[str, ...]:
-        return _lines([cells[index] for index in shown], kept, [widths[index] for index in shown])
+        return tuple(
+            indent + line
+            for group, own, indent in zip(groups, widths, [""] + [_INDENT] * len(groups), strict=False)
+            for line in _lines(
+                [cells[i] for i in group], [columns[i] for i in group], [own[i] for i in group]
+            )
+        )
 
     hidden = dict.fromkeys(columns[i].name for i in every if i not in shown and not columns[i].quiet)
     return Laid(lines(heads), tuple(lines(row) for row in texts), tuple(hidden))
 
 
-def cell_width(text: str) -> int:
-    """Return how many cells of a terminal a text takes: two for wide characters, none for combining ones."""
-    if text.isascii():
-        return len(text)
-    return sum(_character_width(character) for character in text)
+def _groups(shown: Sequence[int], least: Sequence[int], width: int) -> list[list[int]]:
+    """Return the columns that stand side by side, for each line of a row: one line where there is room for all."""
+    groups: list[list[int]] = [[]]
+    for index in shown:
+        room = width if len(groups) == 1 else width - len(_INDENT)
+        if groups[-1] and _needed(least, [*groups[-1], index]) > room:
+            groups.append([])
+        groups[-1].append(index)
+    return groups
 
 
-def _character_width(character: str) -> int:
-    if unicodedata.combining(character) or character in "\u200d\ufe0e\ufe0f":
-        return 0
-    return 2 if unicodedata.east_asian_width(character) in "WF" else 1
-
-
-def _least(columns: Sequence[Column], heads: Sequence[str], texts: Sequence[Sequence[str]]) -> list[int]:
+def _least(
+    columns: Sequence[Column], heads: Sequence[str], texts: Sequence[Sequence[str]], width: int
+) -> list[int]:
     """Return how wide each column must be: as its longest line, or its longest word where it may wrap."""
+    most = width - len(_INDENT)
     least = []
     for index, column in enumerate(columns):
         cells = [heads[index], *(row[index] for row in texts)]
         parts = [part for text in cells for part in (text.split() if column.wraps else text.split("\n"))]
         longest = max(map(cell_width, parts), default=0)
-        least.append(max(column.least, min(longest, _WIDEST_WORD)) if column.wraps else longest)
+        wanted = max(column.least, min(longest, _WIDEST_WORD)) if column.wraps else longest
+        least.append(min(wanted, most))
     return least
 
 
@@ -182,7 +196,10 @@ def _widths(
 
 def _lines(cells: Sequence[str], columns: Sequence[Column], widths: Sequence[int]) -> tuple[str, ...]:
     """Return the lines of one row, without blanks at their ends."""
-    wrapped = [_wrap(cell, width) for cell, width in zip(cells, widths, strict=True)]
+    wrapped = [
+        [line for part in cell.split("\n") for line in wrap(part, width)]
+        for cell, width in zip(cells, widths, strict=True)
+    ]
     lines = []
     for number in range(max(map(len, wrapped))):
         parts = []
@@ -192,31 +209,3 @@ def _lines(cells: Sequence[str], columns: Sequence[Column], widths: Sequence[int
             parts.append(blanks + text if column.right else text + blanks)
         lines.append((" " * GAP).join(parts).rstrip())
     return tuple(lines)
-
-
-def _wrap(text: str, width: int) -> list[str]:
-    """Return a text in lines of at most so many cells, broken between words, or within one that is too long."""
-    lines: list[str] = []
-    for part in text.split("\n"):
-        line = ""
-        for word in part.split(" "):
-            joined = f"{line} {word}" if line else word
-            if cell_width(joined) <= width:
-                line = joined
-                continue
-            if line:
-                lines.append(line)
-            while cell_width(word) > width:
-                lines.append(_cut(word, width))
-                word = word[len(lines[-1]) :]
-            line = word
-        lines.append(line)
-    return lines
-
-
-def _cut(word: str, width: int) -> str:
-    """Return the beginning of a word that fits; one character at least."""
-    end = 1
-    while end < len(word) and cell_width(word[: end + 1]) <= width:
-        end += 1
-    return word[:end]

@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING, Any, Literal, TextIO
 from nightfold_cli.canvas import Line
 from nightfold_cli.jsonout import document
 from nightfold_cli.layout import Cell, Column, Row, cell_text, lay_out
-from nightfold_cli.printable import paragraph, printable, say
+from nightfold_cli.printable import cell_width, paragraph, printable, say
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -43,7 +43,7 @@ class Screen:
     def __init__(
         self, out: TextIO, err: TextIO, mode: Literal["terminal", "piped", "json"], width: int
     ) -> None:
-        self.out, self.err, self.mode, self.width = out, err, mode, max(40, width)
+        self.out, self.err, self.mode, self.width = out, err, mode, max(20, width)
         self.unicode = _can_show(out, "●⣿█")
         self._console: Console | None = None
 
@@ -70,7 +70,7 @@ class Screen:
         self.out.write(document(answer) + "\n")
 
     def store(self, where: str) -> None:
-        """Name the store in use."""
+        """Name the store in use, in one piece so that it can be copied."""
         if self.terminal:
             self._styled("store " + printable(where), "dim")
         else:
@@ -96,7 +96,7 @@ class Screen:
             return
         self.gap()
         title, detail = printable(title), printable(detail)
-        if len(title) + len(detail) + 2 <= self.width:
+        if cell_width(title) + cell_width(detail) + 2 <= self.width:
             self._runs([(title, "bold"), ("  " + detail if detail else "", "")])
             return
         self._wrapped(title, "", "bold")
@@ -127,15 +127,23 @@ class Screen:
         if not self.terminal:
             self._tabbed([[name, value] for name, value in listed])
             return
-        widest = max((len(name) for name, _ in listed), default=0)
+        widest = min(max((len(name) for name, _ in listed), default=0), self.width // 3)
         for name, value in listed:
-            self._wrapped(value, f"  {name.ljust(widest)}  ", "", " " * (widest + 4))
+            head = f"  {name.ljust(widest)}  "
+            if len(name) > widest:
+                self._wrapped(name, "  ", "")
+                head = " " * (widest + 4)
+            self._wrapped(value, head, "", " " * (widest + 4))
 
     def chart(self, lines: Iterable[Line]) -> None:
         """Draw a chart; only people need it."""
         if self.terminal:
             for line in lines:
-                self._runs([(text, _STYLES[role]) for text, role in line])
+                whole = "".join(text for text, _ in line)
+                if cell_width(whole) <= self.width:
+                    self._runs([(text, _STYLES[role]) for text, role in line])
+                else:
+                    self._wrapped(whole, " " * min(4, len(whole) - len(whole.lstrip())), "")
 
     def table(
         self, columns: Sequence[Column], rows: Iterable[Row], *, empty: str, spaced: bool = False

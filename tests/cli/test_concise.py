@@ -84,13 +84,30 @@ def test_lopsided_interval_is_shown() -> None:
 
 def test_interval_that_is_nearly_even_is_not() -> None:
     assert asymmetric(33.6, 0.0137, 33.6 - 0.0130, 33.6 + 0.0142) == "33.600(14)"
-    assert asymmetric(33.6, 0.0137, -math.inf, 33.62) == "33.600(14)"
 
 
 def test_interval_is_as_fine_as_its_value() -> None:
     assert interval(33.57, 33.64, 33.6, 0.014) == "33.570 … 33.640"
     assert interval(1.18e5, 1.25e5, 1.2e5, 2e3) == "1.180e5 … 1.250e5"
-    assert interval(-math.inf, 33.64, 33.6, 0.014) == "-inf … 33.640"
+
+
+@pytest.mark.parametrize(
+    ("value", "stderr", "low", "high", "shown", "ends"),
+    [
+        (33.6, 0.014, -math.inf, 33.64, "not determined", "below 33.64"),
+        (12836.0, 2.5e7, 3100.0, math.inf, "not determined", "above 3.1e3"),
+        (12836.0, 2.5e7, 3.2, 1e12, "not determined", "not determined"),
+        (1e7, 1e12, 0.0, math.inf, "not determined", "not determined"),
+        (0.86, 9.7, 8e-11, 9.3e9, "not determined", "not determined"),
+        (1e7, math.nan, -math.inf, math.inf, "not determined", "not determined"),
+        (1e7, math.nan, math.nan, math.nan, "not determined", "not determined"),
+    ],
+)
+def test_what_is_not_determined_has_no_digits(
+    value: float, stderr: float, low: float, high: float, shown: str, ends: str
+) -> None:
+    assert asymmetric(value, stderr, low, high) == shown
+    assert interval(low, high, value, stderr) == ends
 
 
 @pytest.mark.parametrize(

@@ -6,7 +6,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from nightfold_cli.layout import Cell, Column, Row, cell_width, lay_out
+from nightfold_cli.layout import Cell, Column, Row, lay_out
+from nightfold_cli.printable import cell_width, paragraph
 from nightfold_cli.render import Screen
 
 COLUMNS = (
@@ -138,3 +139,27 @@ def test_commands_to_copy_are_never_broken(monkeypatch: pytest.MonkeyPatch) -> N
     here, out, _ = screen("terminal", width=40)
     here.command("nightfold --store " + "very-long-folder/" * 9 + "heron.sqlite scans")
     assert out.getvalue().count("\n") == 1
+
+
+@pytest.mark.parametrize("width", [20, 40, 80])
+def test_a_table_of_columns_that_must_stay_is_never_wider_than_the_screen(width: int) -> None:
+    columns = [Column("shot"), *(Column(f"reading_{n} (1e3 atoms)", right=True) for n in range(7))]
+    rows: list[Row] = [["a" * 100, *(f"{n}.000(12)e5" for n in range(7))], ["漢字" * 30, *["-"] * 7]]
+    laid = lay_out(columns, rows, width)
+    assert laid.hidden == ()
+    assert max(cell_width(line) for line in (*laid.head, *laid.rows[0], *laid.rows[1])) <= width
+    assert all(f"{n}.000(12)e5" in "\n".join(laid.rows[0]) for n in range(7))
+
+
+def test_a_paragraph_counts_cells() -> None:
+    lines = paragraph("漢字 " * 20, 21, "- ", "  ")
+    assert max(map(cell_width, lines)) <= 21
+    assert lines[0].startswith("- 漢字")
+    assert lines[1].startswith("  漢字")
+
+
+def test_a_long_field_name_does_not_push_its_value_out(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setenv("NO_COLOR", "1")
+    here, out, _ = screen("terminal", width=40)
+    here.fields([("frame " + "x" * 60, "words and more words " * 5)])
+    assert max(map(len, out.getvalue().split("\n"))) <= 40

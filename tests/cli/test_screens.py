@@ -70,7 +70,11 @@ def test_scans_at_120(where: Path, on_screen: Show) -> None:
         "scans",
         "scan loss-coarse",
         "scan evaporation-map",
+        "nights --all",
+        "scans --all",
+        "scan loss-coarse -o temperature --points",
         "shots --limit 5 -p coil_current -o atom_number -o temperature",
+        "shots -p coil_current -p trap_mirror_x -o atom_number -o temperature -o center_x -o center_y -o optical_depth",
         "shots heron-20260928-0003",
         "edits",
         "fit loss-coarse lorentzian",
@@ -81,8 +85,31 @@ def test_scans_at_120(where: Path, on_screen: Show) -> None:
     ],
 )
 def test_no_line_is_wider_than_the_screen(command: str, width: int, where: Path, on_screen: Show) -> None:
+    if command == "fits":
+        on_screen("fit", "loss-coarse", "lorentzian", "damped-oscillation", "--store", where)
+        on_screen("fit", "evaporation-map", "gaussian", "--along", "evaporate#3.end_power", "--store", where)
     text = on_screen(*command.split(), "--store", where, width=width)
     assert max(map(len, text.split("\n")[1:])) <= width
+
+
+def test_columns_that_were_asked_for_are_shown_on_further_lines(where: Path, on_screen: Show) -> None:
+    asked = ["center_x", "center_y", "optical_depth", "atom_number", "temperature"]
+    words = ["-p", "coil_current", "-p", "hold_time", *(word for name in asked for word in ("-o", name))]
+    lines = body(on_screen("--store", where, "shots", "--limit", "1", *words))
+    text = "\n".join(lines)
+    assert all(name in text for name in asked)
+    assert any(line.startswith("    ") and "optical_depth" in line for line in lines)
+
+
+def test_readings_without_stderr_have_six_digits(
+    where: Path, on_screen: Show, run: Callable[..., Any]
+) -> None:
+    words = ("--store", where, "shots", "heron-20260928-0003")
+    full = json.loads(run(*words, "--json").out)["shot"]["observables"]["optical_depth"]["value"]
+    (line,) = [line for line in body(on_screen(*words)) if line.split()[:1] == ["optical_depth"]]
+    shown = line.split()[1]
+    assert len(shown.replace(".", "").lstrip("0")) <= 6
+    assert float(shown) == pytest.approx(full, rel=1e-5)
 
 
 def test_fit_ends_with_the_numbers(where: Path, on_screen: Show) -> None:

@@ -14,7 +14,7 @@ from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
 from nightfold_cli.opening import local_times, moment, opened, records
 from nightfold_cli.render import Screen
-from nightfold_cli.settings import setting
+from nightfold_cli.settings import ENOUGH, aligned, setting
 
 if TYPE_CHECKING:
     from nightfold.ledger.shot import ShotReading, ShotView
@@ -111,15 +111,16 @@ def _draw(
             for name, unit in asked.items()
         ),
     ]
+    cells = {name: _cells(rows, name) for name in asked}
     lines: list[Row] = [
         [
             Cell(_short(str(row["uid"])), str(row["uid"])),
             Cell(f"{when}:{at:%S}", at.isoformat(timespec="milliseconds")),
             setting(row["sequence"]),
             row["scan"] if isinstance(row["scan"], str) else "-",
-            *(_cell(row, name) for name in asked),
+            *(cells[name][place] for name in asked),
         ]
-        for row, when, at in zip(rows, compact(moments), moments, strict=True)
+        for place, (row, when, at) in enumerate(zip(rows, compact(moments), moments, strict=True))
     ]
     screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
     if lines:
@@ -131,12 +132,19 @@ def _short(uid: str) -> str:
     return uid[:_DIGITS] if _DIGEST.fullmatch(uid) else uid
 
 
-def _cell(row: dict[str, Any], name: str) -> str:
-    """Return a setting or a reading; where its stderr was read too, in concise notation."""
-    stderr = row.get(f"{name}_stderr")
-    if isinstance(stderr, float) and stderr > 0 and isinstance(row[name], float):
-        return concise(row[name], stderr)
-    return setting(row[name])
+def _cells(rows: list[dict[str, Any]], name: str) -> list[Cell]:
+    """Return a column of settings or readings; readings with their stderr in concise notation, on a screen."""
+    values = [row[name] if name in row else row.get(f"{name}_") for row in rows]
+    if not any(f"{name}_stderr" in row for row in rows):
+        return aligned(values)
+    return [_reading_cell(value, row.get(f"{name}_stderr")) for value, row in zip(values, rows, strict=True)]
+
+
+def _reading_cell(value: Any, stderr: Any) -> Cell:
+    """Return a reading with its stderr; without one six digits of it."""
+    if isinstance(stderr, float) and stderr > 0 and isinstance(value, float):
+        return Cell(concise(value, stderr), setting(value))
+    return Cell(setting(value, digits=ENOUGH), setting(value))
 
 
 def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
@@ -177,11 +185,13 @@ def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
     )
 
 
-def _reading(reading: ShotReading) -> str:
+def _reading(reading: ShotReading) -> str | Cell:
     """Return a reading with its uncertainty, or the word for having none."""
     if math.isnan(reading.value):
         return reading.state or "nan"
-    return concise(reading.value, reading.stderr) if reading.stderr else setting(reading.value)
+    if reading.stderr:
+        return concise(reading.value, reading.stderr)
+    return Cell(setting(reading.value, digits=ENOUGH), setting(reading.value))
 
 
 def _entry(shot: ShotView) -> dict[str, Any]:
