@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import difflib
-import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from datetime import date, datetime, time
@@ -13,14 +12,12 @@ from sqlalchemy import ColumnElement, Connection, Row, Select, Table, and_, exis
 
 from nightfold import tables
 from nightfold.errors import ChoiceNeeded, NotFound
-from nightfold.ledger.rows import chunks
-from nightfold.settings import plain_value
+from nightfold.ledger.columns import Named, reading_columns, setting_columns
 from nightfold.timestamps import parse_moment, to_us, utc_times
 
 if TYPE_CHECKING:
     import pandas as pd
 
-_MANY = 5000
 _STDERR = "_stderr"
 _COLUMNS = ("uid", "started", "sequence", "scan")
 _OWN_COLUMNS = {"uid", "shot_id", "started", "sequence", "scan", "set_aside"}
@@ -49,16 +46,6 @@ class Selection:
     until: datetime | str | None = None
     set_aside: bool = False
     limit: int | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class Named:
-    """A parameter or observable by name: its ids (one a machine), kind and unit."""
-
-    name: str
-    ids: tuple[int, ...]
-    kind: str
-    unit: str
 
 
 def column_name(name: str) -> str:
@@ -190,7 +177,7 @@ def named_by_id(connection: Connection, table: Table, ids: Iterable[int]) -> lis
 def select_shots(
     connection: Connection, selection: Selection
 ) -> tuple[list[Row[Any]], ColumnElement[bool] | None]:
-    """Return the shots chosen, in time order, and the condition that chose them if there are very many."""
+    """Return the shots chosen, in time order, and the condition that chose them (None for the newest few)."""
     shot, sequence, scan = tables.shot, tables.sequence, tables.scan
     where = conditions(connection, selection)
     query: Select[Any] = (
@@ -204,7 +191,7 @@ def select_shots(
     )  # fmt: skip
     if selection.limit is None:
         rows = list(connection.execute(query.order_by(shot.c.started_us, shot.c.id)))
-        return rows, where if len(rows) > _MANY else None
+        return rows, where
     newest = query.order_by(shot.c.started_us.desc(), shot.c.id.desc()).limit(selection.limit)
     return list(connection.execute(newest))[::-1], None
 
@@ -266,94 +253,3 @@ def _split_stderr(
     errors = [n.removesuffix(_STDERR) for n in names if n.endswith(_STDERR) and n not in known]
     plain = [n for n in names if n in known or not n.endswith(_STDERR)]
     return plain, [name for name in dict.fromkeys(errors) if name not in plain]
-
-
-def setting_columns(
-    connection: Connection,
-    rows: Sequence[Row[Any]],
-    wanted: Sequence[Named],
-    where: ColumnElement[bool] | None,
-) -> dict[str, Any]:
-    """Return one column a parameter: float64, or object where text, truth or large whole numbers stand."""
-    if not wanted:
-        return {}
-    names = {number: item for item in wanted for number in item.ids}
-    move, rest = tables.shot_value, tables.set_value
-    found: dict[str, dict[int, Any]] = {item.name: {} for item in wanted}
-    of_shots = select(move.c.shot_id, move.c.parameter_id, move.c.num, move.c.exact)
-    for row in _rows_of(
-        connection, of_shots.where(move.c.parameter_id.in_(names)), move.c.shot_id, rows, where
-    ):
-        item = names[row.parameter_id]
-        found[item.name][row.shot_id] = plain_value(item.kind, row.num, row.exact)
-    resting: dict[str, dict[int, Any]] = {item.name: {} for item in wanted}
-    of_sets = select(rest.c.set_id, rest.c.parameter_id, rest.c.num, rest.c.exact).where(
-        rest.c.parameter_id.in_(names)
-    )
-    for part in chunks(sorted({row.set_id for row in rows})):
-        for kept in connection.execute(of_sets.where(rest.c.set_id.in_(part))):
-            item = names[kept.parameter_id]
-            resting[item.name][kept.set_id] = plain_value(item.kind, kept.num, kept.exact)
-    return {
-        item.name: _column(
-            [found[item.name].get(row.id, resting[item.name].get(row.set_id)) for row in rows], item.kind
-        )
-        for item in wanted
-    }
-
-
-def reading_columns(
-    connection: Connection,
-    rows: Sequence[Row[Any]],
-    wanted: Sequence[Named],
-    where: ColumnElement[bool] | None,
-) -> dict[str, tuple[Any, Any]]:
-    """Return values and standard uncertainties of each observable, NaN where there is none."""
-    import numpy as np
-
-    if not wanted:
-        return {}
-    names = {number: item.name for item in wanted for number in item.ids}
-    place = {row.id: index for index, row in enumerate(rows)}
-    columns = {item.name: (np.full(len(rows), np.nan), np.full(len(rows), np.nan)) for item in wanted}
-    table = tables.reading
-    query = select(table.c.shot_id, table.c.observable_id, table.c.value, table.c.stderr, table.c.state)
-    for row in _rows_of(
-        connection, query.where(table.c.observable_id.in_(names)), table.c.shot_id, rows, where
-    ):
-        value, stderr = columns[names[row.observable_id]]
-        index = place[row.shot_id]
-        value[index] = read_value(row.value, row.state)
-        stderr[index] = math.nan if row.stderr is None else row.stderr
-    return columns
-
-
-def read_value(value: float | None, state: str | None) -> float:
-    """Return a stored reading as a float."""
-    if value is not None:
-        return value
-    return float(state) if state in ("inf", "-inf") else math.nan
-
-
-def _rows_of(
-    connection: Connection,
-    query: Select[Any],
-    shot_id: ColumnElement[int],
-    rows: Sequence[Row[Any]],
-    where: ColumnElement[bool] | None,
-) -> Iterable[Row[Any]]:
-    if where is not None:
-        yield from connection.execute(query.join(tables.shot, tables.shot.c.id == shot_id).where(where))
-        return
-    for part in chunks([row.id for row in rows]):
-        yield from connection.execute(query.where(shot_id.in_(part)))
-
-
-def _column(values: list[Any], kind: str) -> Any:
-    import numpy as np
-
-    if kind == "number" and not any(type(value) is int for value in values):
-        return np.array([math.nan if value is None else value for value in values], dtype=np.float64)
-    column = np.empty(len(values), dtype=object)
-    column[:] = values
-    return column

@@ -9,7 +9,8 @@ from sqlalchemy import Connection, select
 
 from nightfold import tables
 from nightfold.ledger.amending import note_subject, stored_settings
-from nightfold.ledger.selecting import read_value, scan_key
+from nightfold.ledger.columns import read_value
+from nightfold.ledger.selecting import scan_key
 from nightfold.ledger.setting_aside import find_shots
 from nightfold.settings import plain_value
 from nightfold.timestamps import from_us

@@ -10,17 +10,9 @@ from sqlalchemy import Connection, Table, select
 
 from nightfold import tables
 from nightfold.card import MachineCard, parse_card
+from nightfold.ledger.columns import Named, reading_columns, setting_columns
 from nightfold.ledger.names import newest_cards
-from nightfold.ledger.selecting import (
-    Named,
-    Selection,
-    column_name,
-    named_by_id,
-    reading_columns,
-    select_shots,
-    set_aside_now,
-    setting_columns,
-)
+from nightfold.ledger.selecting import Selection, column_name, named_by_id, select_shots, set_aside_now
 from nightfold.scans.axes import Axis, describe_axis
 from nightfold.timestamps import utc_times
 

@@ -7,7 +7,8 @@ from collections.abc import Collection, Mapping, Sequence
 from sqlalchemy import Connection, delete, insert, select
 
 from nightfold import tables
-from nightfold.ledger.selecting import Selection, named_by_id, select_shots, setting_columns
+from nightfold.ledger.columns import setting_columns
+from nightfold.ledger.selecting import Selection, named_by_id, select_shots
 from nightfold.scans.axes import choose_axes
 from nightfold.scans.likely import likely_axes
 
