@@ -12,6 +12,7 @@ import pytest
 
 from nightfold.errors import ChoiceNeeded, NotFound
 from nightfold.ledger import selecting
+from nightfold.ledger.columns import setting_columns
 from nightfold.opening import open_store
 from nightfold.store import Store
 
@@ -124,7 +125,7 @@ def test_very_many_shots(store: Store) -> None:
 def test_many_shots_while_another_writes(postgresql_url: str, monkeypatch: pytest.MonkeyPatch) -> None:
     with open_store(postgresql_url, create=True) as store, open_store(postgresql_url) as other:
         store.take([shot(n) for n in range(5)])
-        columns = selecting.setting_columns
+        columns = setting_columns
 
         def and_write(*arguments: Any) -> Any:
             other.take([shot(30)])
