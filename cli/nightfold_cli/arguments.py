@@ -47,9 +47,7 @@ def command_parser(command: str, module: ModuleType) -> ArgumentParser:
 
 def add_scan_key(parser: ArgumentParser) -> None:
     """Declare the argument that names a scan."""
-    parser.add_argument(
-        "key", metavar="KEY", type=scan_key, help="id, label (its newest round) or label#round of a scan"
-    )
+    parser.add_argument("key", metavar="KEY", help="id, label (its newest round) or label#round of a scan")
 
 
 def named_number(text: str) -> tuple[str, float]:
@@ -66,8 +64,3 @@ def positive(text: str) -> int:
     if not re.fullmatch(r"0*[1-9]\d*", text):
         raise ArgumentTypeError(f"found {text!r}, wanted a whole number above zero")
     return int(text)
-
-
-def scan_key(text: str) -> int | str:
-    """Return a scan's key: a number is an id, anything else a label or ``label#round``."""
-    return int(text) if text.isascii() and text.isdigit() else text

@@ -49,13 +49,18 @@ def status(scan: Scan) -> str:
     return "complete" if scan.complete else "open"
 
 
-def entry(scan: Scan) -> dict[str, Any]:
-    """Return a scan for JSON."""
+def title(scan: Scan, name: str) -> str:
+    """Return what stands above a scan: its name, with the label where the name is an id for want of another."""
+    return name if scan.label is None or name == scan.key else f"{name} ({scan.key})"
+
+
+def entry(scan: Scan, name: str) -> dict[str, Any]:
+    """Return a scan, and what it is called, for JSON."""
     return {
         "id": scan.id,
         "label": scan.label,
         "round": scan.round,
-        "key": scan.key,
+        "key": name,
         "machine": scan.machine,
         "sequence": scan.sequence,
         "origin": scan.origin,

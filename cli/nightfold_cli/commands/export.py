@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from nightfold_cli.arguments import add_scan_key
 from nightfold_cli.failures import UsageError
+from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import opened
 from nightfold_cli.render import Screen
 
@@ -39,9 +40,9 @@ def run(args: Namespace) -> int:
     if path.exists() and not args.force:
         raise UsageError(f"{path} is there already; --force writes over it")
     with opened(args, screen) as store:
-        scan = store.scan(args.key)
+        scan = named_scan(store, args.key, screen)
         _write(scan, path, kind, args.set_aside)
-        key, shots = scan.key, scan.shots + (scan.set_aside if args.set_aside else 0)
+        key, shots = name_in(store, scan), scan.shots + (scan.set_aside if args.set_aside else 0)
     if screen.json:
         screen.answer({"scan": key, "file": str(path), "format": kind, "shots": shots})
         return 0

@@ -13,11 +13,13 @@ from nightfold_cli.arguments import add_scan_key, named_number
 from nightfold_cli.charts import chart_of_points
 from nightfold_cli.failures import UsageError
 from nightfold_cli.layout import Cell, Column, Row
+from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import points_of
 from nightfold_cli.progress import Progress
 from nightfold_cli.render import Screen
+from nightfold_cli.scantext import title
 from nightfold_cli.settings import aligned, setting
 
 if TYPE_CHECKING:
@@ -63,14 +65,15 @@ def run(args: Namespace) -> int:
     """Fit every model, show them one below the other."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
-        scan = store.scan(args.key)
+        scan = named_scan(store, args.key, screen)
+        name = name_in(store, scan)
         observable = _observable(scan, args.observable)
         fits = [(model, _fit(store, scan, model, observable, args)) for model in args.models]
         if screen.json:
             along = args.along or scan.axes[0].parameter
             aside = _aside(scan, along)
             entries = [
-                _entry(scan, observable, part, along, aside[place])
+                _entry(name, observable, part, along, aside[place])
                 for _, parts in fits
                 for place, part in enumerate(parts)
             ]
@@ -81,9 +84,9 @@ def run(args: Namespace) -> int:
             return 0
         for model, parts in fits:
             if len(scan.axes) > 1:
-                _show_slices(screen, scan, model, observable, parts, args)
+                _show_slices(screen, scan, name, model, observable, parts, args)
             else:
-                _show(screen, scan, model, observable, parts[0].result, args)
+                _show(screen, scan, name, model, observable, parts[0].result, args)
     return 0
 
 
@@ -139,18 +142,20 @@ def _tabulate(screen: Screen, fits: Sequence[tuple[str, list[Slice]]]) -> None:
     screen.table([Column(head) for head in heads], rows, empty="no estimates")
 
 
-def _title(scan: Scan, model: str, observable: str, along: str, background: str) -> tuple[str, str]:
+def _title(
+    scan: Scan, name: str, model: str, observable: str, along: str, background: str
+) -> tuple[str, str]:
     """Return what was fitted to what."""
     under = "no background" if background == "none" else f"{background} background"
-    return f"{scan.key}  {model}", f"{observable} along {along}, {under}"
+    return f"{title(scan, name)}  {model}", f"{observable} along {along}, {under}"
 
 
 def _show(
-    screen: Screen, scan: Scan, model: str, observable: str, result: FitResult, args: Namespace
+    screen: Screen, scan: Scan, name: str, model: str, observable: str, result: FitResult, args: Namespace
 ) -> None:
     """Show one fit: chart and residuals first, so that the numbers end up where the eye is."""
     along = args.along or scan.axes[0].parameter
-    screen.heading(*_title(scan, model, observable, along, result.background))
+    screen.heading(*_title(scan, name, model, observable, along, result.background))
     _draw(screen, scan, along, observable, result)
     screen.heading("estimates", _counts(scan, result))
     screen.table(
@@ -203,11 +208,17 @@ def _verdict(screen: Screen, result: FitResult) -> None:
 
 
 def _show_slices(
-    screen: Screen, scan: Scan, model: str, observable: str, parts: Sequence[Slice], args: Namespace
+    screen: Screen,
+    scan: Scan,
+    name: str,
+    model: str,
+    observable: str,
+    parts: Sequence[Slice],
+    args: Namespace,
 ) -> None:
     """Show a line a slice."""
     background = parts[0].result.background if parts else "none"
-    screen.heading(*_title(scan, model, observable, args.along, background))
+    screen.heading(*_title(scan, name, model, observable, args.along, background))
     others = [axis for axis in scan.axes if parts and axis.parameter in parts[0].where]
     names = list(parts[0].result.estimates) if parts else []
     units = {name: parts[0].result.estimates[name].unit for name in names}
@@ -262,11 +273,11 @@ def _aside(scan: Scan, along: str) -> list[int]:
     return [int(table["set_aside"].to_numpy()[rows].sum()) for _, rows in slice_rows(scan, table, along)]
 
 
-def _entry(scan: Scan, observable: str, part: Slice, along: str, aside: int) -> dict[str, Any]:
+def _entry(scan: str, observable: str, part: Slice, along: str, aside: int) -> dict[str, Any]:
     """Return one fit for JSON."""
     result = part.result
     return {
-        "scan": scan.key,
+        "scan": scan,
         "model": result.model,
         "background": result.background,
         "observable": observable,

@@ -4,19 +4,23 @@ from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli import estimates
-from nightfold_cli.arguments import positive, scan_key
+from nightfold_cli.arguments import positive
 from nightfold_cli.estimates import value_text
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
+from nightfold_cli.naming import ambiguous_labels, name_in, name_of, named_scan
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.render import Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.kept import KeptFit
+    from nightfold.scans.scan import Scan
+    from nightfold.store import Store
 
 HELP = "list the fits that were kept"
 EXAMPLES = ("nightfold fits", "nightfold fits loss-coarse", "nightfold fits --json")
@@ -26,7 +30,7 @@ _EMPTY = "no fits yet; 'nightfold fit KEY MODEL -o OBSERVABLE' makes one"
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
-    parser.add_argument("key", metavar="KEY", nargs="?", type=scan_key, help="of this scan only")
+    parser.add_argument("key", metavar="KEY", nargs="?", help="of this scan only")
     parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
     parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
 
@@ -35,7 +39,9 @@ def run(args: Namespace) -> int:
     """List the fits, the newest last."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
-        kept = sorted(store.fits(args.key), key=lambda fit: (fit.at, fit.id))
+        scan = None if args.key is None else named_scan(store, args.key, screen)
+        kept = sorted(store.fits(scan.id if scan else None), key=lambda fit: (fit.at, fit.id))
+        kept = _named(store, kept, scan)
         times = local_times(store)
     last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(kept))
     listed = kept[-last:] if last else []
@@ -51,6 +57,23 @@ def run(args: Namespace) -> int:
     if len(kept) > len(listed):
         screen.note(f"{len(kept) - len(listed)} earlier ones not shown; --all shows them")
     return 0
+
+
+def _named(store: Store, kept: Sequence[KeptFit], scan: Scan | None) -> list[KeptFit]:
+    """Return the fits, those of scans that share a label with the id of theirs as its name."""
+    if not kept:
+        return []
+    if scan is not None:
+        return [replace(fit, scan_key=name_in(store, scan)) for fit in kept]
+    scans = store.scans()
+    ambiguous = ambiguous_labels(scans)
+    names = {
+        fit.id: name_of(scan, ambiguous)
+        for scan in scans
+        if scan.label in ambiguous
+        for fit in store.fits(scan.id)
+    }
+    return [replace(fit, scan_key=names.get(fit.id, fit.scan_key)) for fit in kept]
 
 
 def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:

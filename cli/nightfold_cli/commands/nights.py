@@ -6,6 +6,7 @@ from argparse import ArgumentParser, Namespace
 from typing import Any
 
 from nightfold_cli.arguments import positive
+from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column
 from nightfold_cli.opening import local_times, opened, records
 from nightfold_cli.render import Screen
@@ -26,6 +27,7 @@ def run(args: Namespace) -> int:
     """List the nights, the oldest first."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
+        check_machine(store, args.machine)
         nights = records(store.nights())
         times = local_times(store)
     if args.machine:

@@ -10,14 +10,15 @@ from typing import TYPE_CHECKING, Any
 from nightfold_cli.arguments import add_scan_key
 from nightfold_cli.charts import chart_of_points, map_of_points
 from nightfold_cli.concise import Scale, scale_of, short
-from nightfold_cli.failures import UsageError
+from nightfold_cli.known import check_observable
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
+from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import Point, Reading, points_of
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import axis_line, entry, repeats_text, status
+from nightfold_cli.scantext import axis_line, entry, repeats_text, status, title
 from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
@@ -49,32 +50,30 @@ def run(args: Namespace) -> int:
     """Show the scan."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
-        scan = store.scan(args.key)
+        scan = named_scan(store, args.key, screen)
+        name = name_in(store, scan)
         observables = _observables(scan, args.observable)
         axes = [axis.parameter for axis in scan.axes]
         points = points_of(scan.table(set_aside=args.set_aside), axes, observables)
         units = {name: unit or "" for name, unit in _units(scan, observables).items()}
         times = local_times(store)
     if screen.json:
-        screen.answer({"scan": entry(scan), "points": [_entry(scan, point) for point in points]})
+        screen.answer({"scan": entry(scan, name), "points": [_entry(scan, point) for point in points]})
         return 0
     if screen.terminal:
-        _header(screen, scan, times)
+        _header(screen, scan, name, times)
     if not screen.terminal or args.points or len(points) <= _MOST_POINTS:
         _tabulate(screen, scan, points, observables, units)
     else:
         screen.note(f"{len(points)} points; --points lists them")
     if observables:
-        _draw(screen, scan, points, observables[0], units[observables[0]])
+        _draw(screen, scan, name, points, observables[0], units[observables[0]])
     return 0
 
 
 def _observables(scan: Scan, asked: str | None) -> list[str]:
     """Return the observables to show, the one to draw first."""
-    if asked and asked not in scan.observables:
-        raise UsageError(
-            f"scan {scan.key} has no observable {asked!r}; it has {', '.join(scan.observables) or 'none'}"
-        )
+    check_observable(asked, scan.observables, f"in scan {scan.key}")
     first = asked or scan.main_observable
     return sorted(scan.observables, key=lambda name: (name != first, scan.observables.index(name)))
 
@@ -84,12 +83,12 @@ def _units(scan: Scan, observables: Sequence[str]) -> dict[str, str]:
     return {name: scan.units.get(name, "") for name in observables}
 
 
-def _header(screen: Screen, scan: Scan, times: LocalTimes) -> None:
+def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes) -> None:
     """Say what the scan is."""
     origin = {"label": "by label", "found": "found by itself", "declared": "declared"}.get(
         scan.origin, scan.origin
     )
-    screen.heading(scan.key, f"{scan.sequence} on {scan.machine}, {origin}, {status(scan)}")
+    screen.heading(title(scan, name), f"{scan.sequence} on {scan.machine}, {origin}, {status(scan)}")
     aside = f", and {scan.set_aside} set aside" if scan.set_aside else ""
     first, last = times.local(scan.first, scan.machine), times.local(scan.last, scan.machine)
     until = f"{last:%H:%M:%S %Z}" if first.date() == last.date() else f"{last:%Y-%m-%d %H:%M:%S %Z}"
@@ -158,7 +157,7 @@ def _cells(reading: Reading, scale: Scale | None) -> tuple[Cell, Cell]:
     )
 
 
-def _draw(screen: Screen, scan: Scan, points: Sequence[Point], observable: str, unit: str) -> None:
+def _draw(screen: Screen, scan: Scan, name: str, points: Sequence[Point], observable: str, unit: str) -> None:
     """Draw the observable over one axis, or as a map over two."""
     if not screen.terminal:
         return
@@ -169,11 +168,11 @@ def _draw(screen: Screen, scan: Scan, points: Sequence[Point], observable: str, 
         chart = chart_of_points(points, x, Label(observable, unit), screen.width, _HEIGHT, screen.unicode)
         screen.chart(chart.lines())
         screen.note(chart.legend)
-        screen.note(f"next: nightfold fit {scan.key} MODEL -o {observable}")
+        screen.note(f"next: nightfold fit {name} MODEL -o {observable}")
     elif len(scan.axes) == 2:
         screen.heading(observable, unit)
         screen.chart(map_of_points(points, scan.axes, observable, unicode=screen.unicode))
-        screen.note(f"next: nightfold fit {scan.key} MODEL -o {observable} --along {scan.axes[0].parameter}")
+        screen.note(f"next: nightfold fit {name} MODEL -o {observable} --along {scan.axes[0].parameter}")
 
 
 def _named(name: str, unit: str) -> str:

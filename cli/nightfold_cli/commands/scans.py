@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from datetime import date, time
 from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
 from nightfold_cli.arguments import positive
+from nightfold_cli.known import check_machine, check_sequence
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
+from nightfold_cli.naming import ambiguous_labels, name_of
 from nightfold_cli.opening import local_times, moment, opened
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status
+from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status, title
 
 if TYPE_CHECKING:
     from nightfold.scans.scan import Scan
@@ -46,9 +48,13 @@ def run(args: Namespace) -> int:
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
         since, until = moment(args.since, store, args.machine), moment(args.until, store, args.machine)
+        check_machine(store, args.machine)
+        every = store.scans()
+        check_sequence(args.sequence, [scan.sequence for scan in every])
+        ambiguous = ambiguous_labels(every)
         found = [
             scan
-            for scan in sorted(store.scans(), key=lambda scan: scan.first)
+            for scan in sorted(every, key=lambda scan: scan.first)
             if (not args.machine or scan.machine == args.machine)
             and (not args.sequence or scan.sequence == args.sequence)
             and (since is None or scan.last >= since)
@@ -56,21 +62,22 @@ def run(args: Namespace) -> int:
         ]
         last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(found))
         listed = found[-last:] if last else []
+        names = {scan.id: name_of(scan, ambiguous) for scan in listed}
         times = local_times(store)
         if screen.json:
-            screen.answer({"scans": [entry(scan) for scan in listed]})
+            screen.answer({"scans": [entry(scan, names[scan.id]) for scan in listed]})
         elif screen.terminal:
-            _draw(screen, listed, _nights(store, listed))
+            _draw(screen, listed, names, _nights(store, listed))
             if listed:
                 screen.note(times.note(scan.machine for scan in listed))
             if len(found) > len(listed):
                 screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
         else:
-            _tabulate(screen, listed, times)
+            _tabulate(screen, listed, names, times)
     return 0
 
 
-def _draw(screen: Screen, scans: Sequence[Scan], nights: Sequence[date]) -> None:
+def _draw(screen: Screen, scans: Sequence[Scan], names: Mapping[int, str], nights: Sequence[date]) -> None:
     """Draw two or more lines a scan, night by night."""
     trends = {scan.main_observable for scan in scans if scan.main_observable}
     shared = trends.copy().pop() if len(trends) == 1 else None
@@ -92,7 +99,7 @@ def _draw(screen: Screen, scans: Sequence[Scan], nights: Sequence[date]) -> None
         trend = trend_of(scan, unicode=screen.unicode)
         rows.append(
             [
-                Cell.of((scan.key, _stream(scan) if several else scan.sequence)),
+                Cell.of((title(scan, names[scan.id]), _stream(scan) if several else scan.sequence)),
                 Cell.of(_axes(scan, narrow=screen.width < _NARROW)),
                 Cell.of((grid(scan), f"x {repeats_text(scan)}")),
                 Cell.of((str(scan.shots), aside)),
@@ -140,7 +147,7 @@ def _stream(scan: Scan) -> str:
     return f"{scan.machine}: {scan.sequence}"
 
 
-def _tabulate(screen: Screen, scans: Sequence[Scan], times: LocalTimes) -> None:
+def _tabulate(screen: Screen, scans: Sequence[Scan], named: Mapping[int, str], times: LocalTimes) -> None:
     """Write one line a scan, for programs."""
     names = (
         *("id", "scan", "machine", "sequence", "axes", "points", "repeats", "shots", "set_aside"),
@@ -149,7 +156,7 @@ def _tabulate(screen: Screen, scans: Sequence[Scan], times: LocalTimes) -> None:
     rows = [
         [
             str(scan.id),
-            scan.key,
+            named[scan.id],
             scan.machine,
             scan.sequence,
             "; ".join(axis_line(axis) for axis in scan.axes),

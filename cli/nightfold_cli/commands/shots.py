@@ -7,11 +7,12 @@ import re
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.arguments import positive, scan_key
+from nightfold_cli.arguments import positive
 from nightfold_cli.concise import concise
 from nightfold_cli.failures import UsageError
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
+from nightfold_cli.naming import named_scan, shared_names
 from nightfold_cli.opening import local_times, moment, opened, records
 from nightfold_cli.render import Screen
 from nightfold_cli.settings import ENOUGH, aligned, setting
@@ -42,7 +43,7 @@ def add_arguments(parser: ArgumentParser) -> None:
     )
     parser.add_argument("--machine", metavar="NAME", help="of this machine only")
     parser.add_argument("--sequence", metavar="NAME", help="of this sequence only")
-    parser.add_argument("--scan", metavar="KEY", type=scan_key, help="of this scan only")
+    parser.add_argument("--scan", metavar="KEY", help="of this scan only")
     parser.add_argument("--since", metavar="TIME", help="from this day or time on (local to the machine)")
     parser.add_argument("--until", metavar="TIME", help="before this day or time")
     parser.add_argument(
@@ -74,36 +75,71 @@ def _filters(args: Namespace) -> list[str]:
 def _list(screen: Screen, store: Store, args: Namespace, times: LocalTimes) -> None:
     """List shots."""
     limit = args.limit or (_ON_SCREEN + 1 if screen.terminal else None)
+    scan = None if args.scan is None else named_scan(store, args.scan, screen)
+    chosen: dict[str, Any] = {
+        "sequence": args.sequence,
+        "scan": scan.id if scan else None,
+        "since": moment(args.since, store, args.machine),
+        "until": moment(args.until, store, args.machine),
+        "set_aside": args.set_aside,
+        "limit": limit,
+    }
     table = store.shots(
         args.parameter,
         [*args.observable, *(f"{name}_stderr" for name in args.observable if screen.terminal)],
         machine=args.machine,
-        sequence=args.sequence,
-        scan=args.scan,
-        since=moment(args.since, store, args.machine),
-        until=moment(args.until, store, args.machine),
-        set_aside=args.set_aside,
-        limit=limit,
+        **chosen,
     )
-    rows = records(table)
+    rows = _with_machines(store, records(table), args.machine, chosen)
     if screen.json:
         screen.answer({"shots": rows, "units": dict(table.attrs["units"])})
         return
     cut = not args.limit and screen.terminal and len(rows) > _ON_SCREEN
     asked = {name: table.attrs["units"].get(name, "") for name in (*args.parameter, *args.observable)}
-    _draw(screen, rows[-_ON_SCREEN:] if cut else rows, asked, args.machine, times)
+    several = args.machine is None and len(store.machines()) > 1
+    _draw(screen, rows[-_ON_SCREEN:] if cut else rows, asked, several, times)
     if cut:
         screen.note(f"the last {_ON_SCREEN} shots; --limit N shows more")
 
 
+def _with_machines(
+    store: Store, rows: list[dict[str, Any]], machine: str | None, chosen: dict[str, Any]
+) -> list[dict[str, Any]]:
+    """Return the rows with the machine of each shot, behind its time."""
+    machines = [machine] if machine else store.machines()
+    of_shot: dict[str, str] = {}
+    if len(machines) > 1:
+        for name in machines:
+            of_shot.update(dict.fromkeys(store.shots(machine=name, **chosen)["uid"], name))
+    only = machines[0] if len(machines) == 1 else None
+    names = shared_names(store) if any("#" in str(row["scan"]) for row in rows) else {}
+    return [
+        {
+            "uid": row["uid"],
+            "started": row["started"],
+            "machine": machine,
+            "sequence": row["sequence"],
+            "scan": names.get((machine, row["sequence"], row["scan"]), row["scan"]),
+            **{
+                name: value
+                for name, value in row.items()
+                if name not in ("uid", "started", "sequence", "scan")
+            },
+        }
+        for row in rows
+        for machine in [only or of_shot.get(str(row["uid"]))]
+    ]
+
+
 def _draw(
-    screen: Screen, rows: list[dict[str, Any]], asked: dict[str, str], machine: str | None, times: LocalTimes
+    screen: Screen, rows: list[dict[str, Any]], asked: dict[str, str], several: bool, times: LocalTimes
 ) -> None:
     """Draw a line a shot."""
-    moments = [times.local(row["started"], machine) for row in rows]
+    moments = [times.local(row["started"], row["machine"]) for row in rows]
     columns = [
         Column("shot", plain_name="uid"),
         Column(heading(moments, "started"), plain_name="started"),
+        *([Column("machine", spare=3)] if several else []),
         Column("sequence", spare=2),
         Column("scan", spare=1),
         *(
@@ -116,6 +152,7 @@ def _draw(
         [
             Cell(_short(str(row["uid"])), str(row["uid"])),
             Cell(f"{when}:{at:%S}", at.isoformat(timespec="milliseconds")),
+            *([setting(row["machine"])] if several else []),
             setting(row["sequence"]),
             row["scan"] if isinstance(row["scan"], str) else "-",
             *(cells[name][place] for name in asked),
@@ -124,7 +161,7 @@ def _draw(
     ]
     screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
     if lines:
-        screen.note(times.note([machine]))
+        screen.note(times.note(row["machine"] for row in rows))
 
 
 def _short(uid: str) -> str:

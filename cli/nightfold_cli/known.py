@@ -1,0 +1,64 @@
+"""Whether the names that a command was asked for are known to the store."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from nightfold.store import Store
+
+
+def check_machine(store: Store, name: str | None) -> None:
+    """Refuse a machine that is not in the store; None stands for all.
+
+    Raises
+    ------
+    NotFound
+    """
+    if name is not None:
+        _check("machine", name, store.machines(), "in this store")
+
+
+def check_parameter(store: Store, name: str | None, machine: str | None = None) -> None:
+    """Refuse a parameter that no shot has; None stands for all.
+
+    Raises
+    ------
+    NotFound
+    """
+    if name is not None:
+        place = f"of {machine}" if machine else "in this store"
+        _check("parameter", name, store.parameters(machine)["name"].tolist(), place)
+
+
+def check_sequence(name: str | None, known: Iterable[str]) -> None:
+    """Refuse a sequence that is not among those known; None stands for all.
+
+    Raises
+    ------
+    NotFound
+    """
+    if name is not None:
+        _check("sequence", name, known, "in this store")
+
+
+def check_observable(name: str | None, known: Iterable[str], where: str) -> None:
+    """Refuse an observable that is not among those known; None stands for the main one.
+
+    Raises
+    ------
+    NotFound
+    """
+    if name is not None:
+        _check("observable", name, known, where)
+
+
+def _check(what: str, name: str, known: Iterable[str], where: str) -> None:
+    """Refuse a name that is not among those known, and say which come close."""
+    from nightfold.errors import NotFound
+    from nightfold.ledger.selecting import near_miss
+
+    names = list(dict.fromkeys(known))
+    if name not in names:
+        raise NotFound(f"{what} {name!r}: not {where}; {near_miss(name, names)}")
