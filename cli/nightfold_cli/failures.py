@@ -46,7 +46,8 @@ def explain(error: Exception) -> tuple[str, int]:
 
 def _sentence(error: Exception) -> str:
     """Return the message of one of our errors; those that are lookup errors too must not be quoted."""
-    return str(error.args[0]) if error.args else type(error).__name__
+    text = str(error.args[0]) if error.args else type(error).__name__
+    return "; ".join(part.strip() for part in text.split("\n") if part.strip())
 
 
 def _system(error: OSError) -> str:

@@ -37,8 +37,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except BrokenPipeError:
         _mute_stdout()
         return DONE
-    except KeyboardInterrupt:
-        sys.stderr.write("\nnightfold: interrupted\n")
+    except KeyboardInterrupt as stop:
+        said = f": {stop}" if str(stop) else ""
+        sys.stderr.write(f"\nnightfold: interrupted{said}\n")
         return INTERRUPTED
     return code
 

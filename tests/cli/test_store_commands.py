@@ -137,6 +137,57 @@ def test_refused_records_are_listed_and_the_good_ones_kept(run: Run, at_home: Pa
     assert set(document["refused"][0]) == {"source", "line", "reason"}
 
 
+def test_refusals_of_one_reason_are_one_line(run: Run, at_home: Path) -> None:
+    bad = {**RECORD, "started": "yesterday"}
+    path = write_lines(at_home / "a.jsonl", RECORD, *[bad] * 50, RECORD, bad, "{torn")
+    answer = run("take", path, "--new")
+    assert f"nightfold: refused {path}: lines 2-51, 53 (51): started: found 'yesterday', wanted" in answer.err
+    assert answer.err.count("yesterday") == 1
+    assert f"nightfold: refused {path}:54: " in answer.err
+    assert "52 refused, 2 kept" in answer.err
+    assert len(decoded(run("take", path, "--json"))["refused"]) == 52
+
+
+def test_an_interruption_says_how_far_it_came(
+    run: Run, at_home: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    records = [
+        {**RECORD, "started": f"2026-10-{day:02}T{hour:02}:{minute:02}:03+02:00"}
+        for day in (5, 6)
+        for hour in range(10)
+        for minute in range(60)
+    ]
+    path = write_lines(at_home / "a.jsonl", *records)
+    from nightfold_cli.progress import Progress
+
+    calls: list[int] = []
+
+    def interrupt(self: Progress, done: int) -> None:
+        calls.append(done)
+        if len(calls) == 3:
+            raise KeyboardInterrupt
+
+    monkeypatch.setattr(Progress, "__call__", interrupt)
+    answer = run("take", path, "--new")
+    monkeypatch.undo()
+    assert answer.code == 130
+    taken = int(answer.err.partition("interrupted: the first ")[2].split()[0])
+    assert 0 < taken < len(records)
+    assert (
+        f"the first {taken} lines of {path} taken and safe in the store; taking the file again goes on there"
+        in answer.err
+    )
+    again = decoded(run("take", path, "--json", "--store", at_home / "nightfold.sqlite"))
+    assert (again["known"], again["new"]) == (taken, len(records) - taken)
+
+
+def test_a_file_of_bytes_is_refused_by_its_name(run: Run, at_home: Path) -> None:
+    (at_home / "camera.dat").write_bytes(bytes(range(256)) * 40)
+    answer = run("take", "camera.dat", "--machine", "heron", "--sequence", "hold", "--new")
+    assert answer.code in (2, 5)
+    assert any("camera.dat" in line and "found" in line for line in answer.err.split("\n"))
+
+
 def test_a_missing_file_does_not_keep_the_others_out(run: Run, at_home: Path) -> None:
     path = write_lines(at_home / "a.jsonl", RECORD)
     answer = run("take", at_home / "gone.jsonl", path, "--new", "--json")
@@ -343,6 +394,53 @@ def test_export(heron: Path, run: Run, at_home: Path) -> None:
     assert (at_home / "loss.csv").read_text().startswith("uid,")
     assert run(*store, "export", "loss-coarse", "loss.csv", "--force").code == 0
     assert sorted(path.name for path in at_home.iterdir()) == ["loss.csv", "loss.nc"]
+
+
+def test_an_exported_table_can_be_taken_again(heron: Path, run: Run, at_home: Path) -> None:
+    run("--store", heron / "heron.sqlite", "export", "loss-coarse", "loss.csv")
+    head = (at_home / "loss.csv").read_text().split("\n")[0].split(",")
+    assert "coil_current [A]" in head
+    assert "atom_number [atoms]" in head
+    assert "atom_number_stderr [atoms]" in head
+    words = [
+        "--machine",
+        "heron",
+        "--sequence",
+        "hold-in-trap",
+        "--scan",
+        "loss-coarse",
+        "--swept",
+        "coil_current",
+    ]
+    settings = ["--parameters", "shot_id,set_aside", "--observables", "rest"]
+    answer = run("take", "loss.csv", *words, *settings, "--new", "--json")
+    assert answer.code == 0, answer.err
+    assert decoded(answer)["new"] == 61
+    scan = decoded(run("scan", "loss-coarse", "--json"))["scan"]
+    assert (scan["shots"], scan["axes"][0]["unit"]) == (61, "A")
+
+
+@pytest.mark.parametrize("name", ["loss.nc", "loss.csv"])
+def test_export_into_a_folder_that_is_not_there(name: str, heron: Path, run: Run) -> None:
+    answer = run("--store", heron / "heron.sqlite", "export", "loss-coarse", f"gone/{name}")
+    assert answer.code == 3
+    assert f"nightfold: gone/{name}: there is no folder 'gone'; make it, or name another one" in answer.err
+
+
+@pytest.mark.parametrize("name", ["loss.nc", "loss.csv"])
+def test_export_that_cannot_be_written_says_why(name: str, heron: Path, run: Run, at_home: Path) -> None:
+    (at_home / f"{name}.part").mkdir()
+    answer = run("--store", heron / "heron.sqlite", "export", "loss-coarse", name)
+    assert answer.code == 5
+    assert answer.err.split("\n")[1].startswith(f"nightfold: {name}")
+    assert "errno" not in answer.err
+
+
+def test_messages_of_several_lines_become_one() -> None:
+    from nightfold.errors import StoreError
+    from nightfold_cli.failures import explain
+
+    assert explain(StoreError("no answer\n\tIs it running?\n")) == ("no answer; Is it running?", 5)
 
 
 # ---------------------------------------------------------------- fitting

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+import re
 from argparse import ArgumentParser, Namespace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -13,8 +15,11 @@ from nightfold_cli.opening import opened
 from nightfold_cli.render import Screen
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from nightfold.scans.scan import Scan
 
+_ERRNO = re.compile(r"errno = (\d+)")
 HELP = "write a scan to a netCDF or CSV file"
 EXAMPLES = ("nightfold export loss-coarse loss.nc", "nightfold export 41 decay.csv --set-aside")
 _KINDS = {".nc": "netCDF", ".csv": "CSV"}
@@ -32,6 +37,8 @@ def add_arguments(parser: ArgumentParser) -> None:
 
 def run(args: Namespace) -> int:
     """Write the scan as its suffix says; never half a file."""
+    from nightfold.errors import NotFound
+
     screen = Screen.here(args.json)
     path: Path = args.file
     kind = _KINDS.get(path.suffix.lower())
@@ -39,6 +46,8 @@ def run(args: Namespace) -> int:
         raise UsageError(f"{path}: found the suffix {path.suffix or '(none)'!r}, wanted .nc or .csv")
     if path.exists() and not args.force:
         raise UsageError(f"{path} is there already; --force writes over it")
+    if not path.absolute().parent.is_dir():
+        raise NotFound(f"{path}: there is no folder {str(path.parent)!r}; make it, or name another one")
     with opened(args, screen) as store:
         scan = named_scan(store, args.key, screen)
         _write(scan, path, kind, args.set_aside)
@@ -51,7 +60,13 @@ def run(args: Namespace) -> int:
 
 
 def _write(scan: Scan, path: Path, kind: str, set_aside: bool) -> None:
-    """Write beside the file, then move into its place."""
+    """Write beside the file, then move into its place.
+
+    Raises
+    ------
+    OSError
+        With file and reason, whatever the library that writes says.
+    """
     part = path.with_name(path.name + ".part")
     try:
         if kind == "netCDF":
@@ -59,7 +74,20 @@ def _write(scan: Scan, path: Path, kind: str, set_aside: bool) -> None:
 
             write_netcdf(scan.dataset(set_aside=set_aside), part)
         else:
-            scan.table(set_aside=set_aside).to_csv(part, index=False)
+            _with_units(scan.table(set_aside=set_aside)).to_csv(part, index=False)
         part.replace(path)
+    except OSError as error:
+        number = error.errno or int((_ERRNO.search(str(error)) or [0, 0])[1])
+        raise OSError(number, os.strerror(number) if number else "it cannot be written", str(path)) from error
     finally:
         part.unlink(missing_ok=True)
+
+
+def _with_units(table: pd.DataFrame) -> pd.DataFrame:
+    """Return the table with its units in the heads, ``hold_time [ms]``, so that `take` reads it back."""
+    units = table.attrs["units"]
+    heads = {}
+    for name in map(str, table.columns):
+        unit = units.get(name) or units.get(name.removesuffix("_stderr"))
+        heads[name] = f"{name} [{unit}]" if unit else name
+    return table.rename(columns=heads)

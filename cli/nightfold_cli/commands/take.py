@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sys
 from argparse import ArgumentParser, Namespace
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
@@ -12,6 +13,7 @@ from nightfold_cli.failures import REFUSED, explain
 from nightfold_cli.layout import Column
 from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
+from nightfold_cli.refusals import summarise
 from nightfold_cli.render import Screen
 
 if TYPE_CHECKING:
@@ -138,15 +140,49 @@ def _take(store: Store, name: str, args: Namespace) -> Intake | Unreadable:
     from nightfold.errors import NightfoldError, StoreError
 
     path = Path(name)
+    reached = _Reached()
     try:
         with Progress(
             f"taking {path.name}", path.stat().st_size if path.is_file() else 0, sys.stderr
         ) as progress:
-            return store.take_file(name, columns=_columns(args), progress=progress)
+            return store.take_file(name, columns=_columns(args), progress=reached.then(progress))
+    except KeyboardInterrupt as stop:
+        raise KeyboardInterrupt(_how_far(path, reached.byte)) from stop
     except (NightfoldError, OSError) as error:
         if args.debug or isinstance(error, StoreError):
             raise
-        return Unreadable(name, *explain(error))
+        reason, code = explain(error)
+        return Unreadable(name, reason if path.name in reason else f"{name}: {reason}", code)
+
+
+class _Reached:
+    """Remembers how far a file was taken."""
+
+    def __init__(self) -> None:
+        self.byte: int | None = None
+
+    def then(self, progress: Progress) -> Callable[[int], None]:
+        """Return a function that remembers the offset of the last line taken, then reports it."""
+
+        def report(byte: int) -> None:
+            self.byte = byte
+            progress(byte)
+
+        return report
+
+
+def _how_far(path: Path, byte: int | None) -> str:
+    """Return how many lines of a file were taken before an interruption, and how to go on."""
+    count = 0
+    if byte is not None:
+        with path.open("rb") as stream:
+            for line in stream:
+                count += bool(line.strip())
+                byte -= len(line)
+                if byte < 0:
+                    break
+    done = {0: "nothing", 1: "the first line"}.get(count, f"the first {count} lines")
+    return f"{done} of {path} taken and safe in the store; taking the file again goes on there"
 
 
 def _columns(args: Namespace) -> CsvColumns:
@@ -174,13 +210,12 @@ def _list_refused(screen: Screen, total: _Total) -> None:
     """List what was refused, on stderr; as JSON it is in the answer."""
     if screen.json or not total.refused:
         return
-    most = _LISTED if screen.err.isatty() else len(total.refused)
-    for item in total.refused[:most]:
-        screen.say(
-            f"refused {item['source']}:{item['line']}: {item['reason']}" if item["line"] else item["reason"]
-        )
-    if len(total.refused) > most:
-        screen.say(f"and {len(total.refused) - most} more; 2> FILE lists them all")
+    lines = summarise(total.refused)
+    most = _LISTED if screen.err.isatty() else len(lines)
+    for line in lines[:most]:
+        screen.say(line)
+    if len(lines) > most:
+        screen.say(f"and {len(lines) - most} more reasons; 2> FILE lists them all")
     if any(item["line"] for item in total.refused):
         kept = sum(total.counts().values())
         refused = sum(row[4] for row in total.rows)
