@@ -154,11 +154,7 @@ def _one_end(end: float, value: float) -> str:
     """Return the one end that is known, in two digits, or more where it is close to the value."""
     closeness = abs(end) / abs(value - end) if math.isfinite(value) and value != end else 1.0
     digits = 2 + max(0, math.ceil(math.log10(closeness))) if closeness > 0 else 2
-    rounded = float(f"{end:.{min(digits, 12)}g}")
-    if 1e-3 <= abs(rounded) < 1e3 or not rounded:
-        return plain(rounded)
-    mantissa, _, exponent = f"{rounded:.{min(digits, 12) - 1}e}".partition("e")
-    return f"{mantissa}e{int(exponent)}"
+    return rounded(end, min(digits, 12))
 
 
 def _end(end: float, scale: Scale | None) -> str:
@@ -178,6 +174,17 @@ def plain(number: float, digits: int = 12) -> str:
     text = f"{number:.{digits}g}"
     mantissa, _, exponent = text.partition("e")
     return f"{mantissa}e{int(exponent)}" if exponent else text
+
+
+def rounded(number: float, digits: int = 2) -> str:
+    """Return a number in so many digits: ``0.25``, ``3.1e3``."""
+    if not math.isfinite(number):
+        return f"{number:g}"
+    near = float(f"{number:.{digits}g}")
+    if 1e-3 <= abs(near) < 1e3 or not near:
+        return plain(near)
+    mantissa, _, exponent = f"{near:.{digits - 1}e}".partition("e")
+    return f"{mantissa}e{int(exponent)}"
 
 
 def short(number: float) -> str:

@@ -136,9 +136,15 @@ def _guarded(module: ModuleType, args: Namespace) -> int:
 
 
 def _never_fail_to_write() -> None:
-    """Show signs that an output cannot hold as escapes."""
+    """Spell signs that a terminal cannot show; in a pipe they are escapes, so that nothing is lost."""
     for stream in (sys.stdout, sys.stderr):
-        if hasattr(stream, "reconfigure"):
+        if not hasattr(stream, "reconfigure"):
+            continue
+        if stream.isatty() and (stream.encoding or "utf-8").lower().replace("-", "") != "utf8":
+            from nightfold_cli.spelling import HANDLER
+
+            stream.reconfigure(errors=HANDLER)
+        else:
             stream.reconfigure(errors="backslashreplace")
 
 

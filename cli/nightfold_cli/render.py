@@ -12,6 +12,7 @@ import os
 import shutil
 import sys
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any, Literal, TextIO
 
 from nightfold_cli.canvas import Line
@@ -45,6 +46,7 @@ class Screen:
     ) -> None:
         self.out, self.err, self.mode, self.width = out, err, mode, max(20, width)
         self.unicode = _can_show(out, "●⣿█")
+        self._encoding = None if self.unicode else out.encoding
         self._console: Console | None = None
 
     @classmethod
@@ -95,7 +97,7 @@ class Screen:
         if not self.terminal:
             return
         self.gap()
-        title, detail = printable(title), printable(detail)
+        title, detail = self._spelled(printable(title)), self._spelled(printable(detail))
         if cell_width(title) + cell_width(detail) + 2 <= self.width:
             self._runs([(title, "bold"), ("  " + detail if detail else "", "")])
             return
@@ -138,7 +140,7 @@ class Screen:
     def chart(self, lines: Iterable[Line]) -> None:
         """Draw a chart; only people need it."""
         if self.terminal:
-            for line in lines:
+            for line in ([(self._spelled(text), role) for text, role in line] for line in lines):
                 whole = "".join(text for text, _ in line)
                 if cell_width(whole) <= self.width:
                     self._runs([(text, _STYLES[role]) for text, role in line])
@@ -164,7 +166,9 @@ class Screen:
 
     def _drawn(self, columns: Sequence[Column], rows: Sequence[Row], spaced: bool) -> None:
         """Draw a table on the terminal with the columns there is room for."""
-        laid = lay_out(columns, rows, self.width)
+        heads = [replace(column, name=self._spelled(column.name)) for column in columns]
+        cells = [[Cell(self._spelled(cell_text(cell, screen=True))) for cell in row] for row in rows]
+        laid = lay_out(heads, cells, self.width)
         for line in laid.head:
             self._styled(line, "bold")
         after_strong = True
@@ -184,6 +188,7 @@ class Screen:
 
     def _wrapped(self, text: str, first: str, style: str, rest: str | None = None) -> None:
         """Write a paragraph, wrapped at the width of the screen."""
+        text, first = self._spelled(text), self._spelled(first)
         width = min(self.width, _WIDEST_TEXT + len(first))
         for line in paragraph(text, width, first, first if rest is None else rest):
             self._styled(line, style)
@@ -191,6 +196,14 @@ class Screen:
     def _styled(self, text: str, style: str) -> None:
         """Write one line in one style."""
         self._runs([(text, style)])
+
+    def _spelled(self, text: str) -> str:
+        """Return the text as this output can show it."""
+        if self._encoding is None:
+            return text
+        from nightfold_cli.spelling import spelled
+
+        return spelled(text, self._encoding)
 
     def gap(self) -> None:
         """Leave a line empty; only people need it."""

@@ -33,6 +33,11 @@ def grid(scan: Scan) -> str:
     return "x".join(str(axis.points) for axis in scan.axes) or "1"
 
 
+def counted(count: int, what: str) -> str:
+    """Return a number of things: ``1 point``, ``31 points``."""
+    return f"{count} {what}" if count == 1 else f"{count} {what}s"
+
+
 def repeats(scan: Scan) -> float:
     """Return shots for each point of the grid."""
     points: int = math.prod(axis.points for axis in scan.axes) or 1

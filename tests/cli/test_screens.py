@@ -1,12 +1,18 @@
 from __future__ import annotations
 
+import io
 import json
+import re
 import shutil
+import sys
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
 import pytest
+
+from nightfold_cli.main import main
+from nightfold_cli.render import Screen
 
 Show = Callable[..., str]
 WIDTHS = pytest.mark.parametrize("width", [80, 120])
@@ -169,3 +175,98 @@ def test_demo_names_the_commands_to_go_on_with(on_screen: Show) -> None:
     text = on_screen("demo", "mine", "--nights", "1")
     assert "  nightfold --store mine/heron.sqlite scan loss-coarse#1\n" in text
     assert "intervals hold the truth" in text
+
+
+def take(run: Callable[..., Any], values: list[float], **more: Any) -> None:
+    """Take shots of one scan, one for each value."""
+    lines = [
+        {
+            "format": 1,
+            "machine": "heron",
+            "started": f"2026-10-05T20:{minute:02}:00+02:00",
+            "sequence": "hold",
+            "scan": "decay",
+            "swept": ["hold_time"],
+            "parameters": {"hold_time": {"value": 10.0 * minute, "unit": "ms"}},
+            "observables": {"atom_number": {"value": value, "unit": "atoms", **more}},
+        }
+        for minute, value in enumerate(values)
+    ]
+    Path("a.jsonl").write_text("".join(json.dumps(line) + "\n" for line in lines), encoding="utf-8")
+    assert run("take", "a.jsonl", "--new").code == 0
+
+
+DECAY = [1234.56789, 987.65432, 801.0, 650.123456, 12.5]
+
+
+def test_points_that_are_not_repeated_share_their_decimals(run: Callable[..., Any], on_screen: Show) -> None:
+    take(run, DECAY)
+    lines = body(on_screen("scan", "decay"))
+    start = next(place for place, line in enumerate(lines) if "hold_time (ms)" in line)
+    assert lines[start].split() == ["hold_time", "(ms)", "shots", "atom_number", "(atoms)"]
+    assert [line.split()[2] for line in lines[start + 1 : start + 6]] == [
+        "1234.6", "987.7", "801.0", "650.1", "12.5",
+    ]  # fmt: skip
+
+
+def test_a_given_stderr_is_shown_beside_points_that_are_not_repeated(
+    run: Callable[..., Any], on_screen: Show
+) -> None:
+    take(run, DECAY, stderr=31.0)
+    lines = body(on_screen("scan", "decay"))
+    start = next(place for place, line in enumerate(lines) if "hold_time (ms)" in line)
+    assert lines[start].split()[-1] == "stderr"
+    assert lines[start + 1].split()[2:] == ["1235", "±", "31"]
+
+
+def test_one_point_has_no_chart(run: Callable[..., Any], on_screen: Show) -> None:
+    take(run, DECAY[:1])
+    text = on_screen("scan", "decay")
+    assert "1 point\n" in text
+    assert "1 points" not in text
+    assert "●" not in text
+    assert "a chart needs two points" in text
+
+
+def test_a_poor_fit_shows_at_a_glance(run: Callable[..., Any], on_screen: Show) -> None:
+    take(run, [1000.0 / (1 + minute / 5) + 3 * (-1) ** minute for minute in range(40)])
+    run("fit", "decay", "exponential")
+    lines = body(on_screen("fit", "decay", "exponential", "--no-keep"))
+    (summary,) = [line for line in lines if line.startswith("rms ")]
+    assert " atoms, " in summary
+    assert " runs of signs in 40 points (about " in summary
+    text = " ".join(lines)
+    assert (
+        "No warnings, but the residuals follow a pattern: the curve may not be of this shape." in text
+    ) or ("DO NOT TRUST" in text)
+
+
+def test_a_good_fit_has_as_many_runs_as_chance(where: Path, on_screen: Show) -> None:
+    lines = body(on_screen("--store", where, "fit", "loss-coarse", "lorentzian", "-o", "atom_number"))
+    assert any(
+        re.fullmatch(r"rms \S+ atoms, \d+ runs of signs in 31 points \(about 1\d expected\)", line)
+        for line in lines
+    )
+    assert lines[-1] == "No warnings; the residuals have a say too."
+
+
+@WIDTHS
+@pytest.mark.parametrize(
+    "command",
+    ["scans", "scan loss-coarse", "fit loss-coarse lorentzian", "models", "models lorentzian", "edits"],
+)
+def test_a_terminal_that_knows_only_ascii(
+    command: str, width: int, where: Path, at_home: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    out = io.TextIOWrapper(io.BytesIO(), encoding="ascii", errors="strict")
+    monkeypatch.setenv("NO_COLOR", "1")
+    monkeypatch.setattr(
+        Screen, "here", classmethod(lambda cls, json: cls(out, sys.stderr, "terminal", width))
+    )
+    assert main([*command.split(), "--store", str(where)]) == 0
+    out.flush()
+    raw = out.buffer.getvalue()
+    text = re.sub(r"\x1b\[[0-9;]*m", "", raw.decode("ascii"))
+    assert "\\u" not in text
+    assert "?" not in text.replace("??", "")
+    assert max(map(len, text.split("\n")[1:])) <= width

@@ -13,6 +13,7 @@ from nightfold_cli.failures import UsageError
 from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import opened
 from nightfold_cli.render import Screen
+from nightfold_cli.scantext import counted
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -55,7 +56,7 @@ def run(args: Namespace) -> int:
     if screen.json:
         screen.answer({"scan": key, "file": str(path), "format": kind, "shots": shots})
         return 0
-    screen.text(f"{key}: {shots} shots written to {path} ({kind})")
+    screen.text(f"{key}: {counted(shots, 'shot')} written to {path} ({kind})")
     return 0
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import sys
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
@@ -11,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 from nightfold_cli import estimates
 from nightfold_cli.arguments import add_scan_key, named_number
 from nightfold_cli.charts import chart_of_points
+from nightfold_cli.concise import rounded
 from nightfold_cli.failures import UsageError
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.naming import name_in, named_scan
@@ -19,7 +21,8 @@ from nightfold_cli.plots import Label
 from nightfold_cli.points import points_of
 from nightfold_cli.progress import Progress
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import title
+from nightfold_cli.runs import Runs, runs_of
+from nightfold_cli.scantext import counted, title
 from nightfold_cli.settings import aligned, setting
 
 if TYPE_CHECKING:
@@ -36,6 +39,7 @@ EXAMPLES = (
 )
 _HEIGHT = 15
 _DENSE = 600
+_PATTERN = "No warnings, but the residuals follow a pattern: the curve may not be of this shape."
 
 
 @dataclass(frozen=True, slots=True)
@@ -156,19 +160,19 @@ def _show(
     """Show one fit: chart and residuals first, so that the numbers end up where the eye is."""
     along = args.along or scan.axes[0].parameter
     screen.heading(*_title(scan, name, model, observable, along, result.background))
-    _draw(screen, scan, along, observable, result)
+    runs = _draw(screen, scan, along, observable, result)
     screen.heading("estimates", _counts(scan, result))
     screen.table(
         estimates.ON_SCREEN, estimates.rows(result.estimates, dict(args.fixed)), empty="no estimates"
     )
-    _verdict(screen, result)
+    _verdict(screen, result, runs)
 
 
-def _draw(screen: Screen, scan: Scan, along: str, observable: str, result: FitResult) -> None:
-    """Draw data, curve and residuals."""
+def _draw(screen: Screen, scan: Scan, along: str, observable: str, result: FitResult) -> Runs | None:
+    """Draw data, curve and residuals; return the runs of signs of these."""
     points = points_of(scan.table(), [along], [observable])
-    if not points or not all(isinstance(point.at[0], int | float) for point in points):
-        return
+    if len(points) < 2 or not all(isinstance(point.at[0], int | float) for point in points):
+        return None
     low, high = float(points[0].at[0]), float(points[-1].at[0])
     margin = (high - low) * 0.03
     step = (high - low + 2 * margin) / _DENSE
@@ -180,17 +184,33 @@ def _draw(screen: Screen, scan: Scan, along: str, observable: str, result: FitRe
     fitted = [float(value) for value in result.predict([float(point.at[0]) for point in points])]
     residuals = [point.readings[observable].mean - value for point, value in zip(points, fitted, strict=True)]
     screen.chart(chart.residuals(residuals, "residuals, in units of their rms"))
+    runs = runs_of(residuals)
+    screen.chart([[(_summary(residuals, y.unit, runs), "label")]])
     screen.note(chart.legend)
+    return runs
+
+
+def _summary(residuals: Sequence[float], unit: str, runs: Runs | None) -> str:
+    """Return how large residuals are, and how often they change sign."""
+    finite = [value for value in residuals if math.isfinite(value)]
+    rms = math.sqrt(math.fsum(value * value for value in finite) / len(finite)) if finite else math.nan
+    said = f"rms {rounded(rms)} {unit}".rstrip()
+    if runs is None:
+        return said
+    return (
+        f"{said}, {counted(runs.count, 'run')} of signs in {counted(runs.points, 'point')}"
+        f" (about {runs.expected:.0f} expected)"
+    )
 
 
 def _counts(scan: Scan, result: FitResult) -> str:
     """Return how many shots were used."""
     aside = f", {scan.set_aside} set aside" if scan.set_aside else ""
     missing = scan.shots - result.n
-    return f"from {result.n} shots{aside}" + (f", {missing} without a value" if missing else "")
+    return f"from {counted(result.n, 'shot')}{aside}" + (f", {missing} without a value" if missing else "")
 
 
-def _verdict(screen: Screen, result: FitResult) -> None:
+def _verdict(screen: Screen, result: FitResult, runs: Runs | None) -> None:
     """Say whether to trust the fit, and what to do if not."""
     grave = [warning for warning in result.warnings if not warning.advisory]
     minor = [warning for warning in result.warnings if warning.advisory]
@@ -204,7 +224,10 @@ def _verdict(screen: Screen, result: FitResult) -> None:
             screen.item(warning.code, warning.message)
     if not result.warnings:
         screen.gap()
-        screen.text("No warnings; the residuals have a say too.")
+        if runs is not None and runs.patterned:
+            screen.text(_PATTERN)
+        else:
+            screen.text("No warnings; the residuals have a say too.")
 
 
 def _show_slices(

@@ -18,7 +18,7 @@ from nightfold_cli.opening import local_times, opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import Point, Reading, points_of
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import axis_line, entry, repeats_text, status, title
+from nightfold_cli.scantext import axis_line, counted, entry, repeats_text, status, title
 from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
@@ -32,6 +32,7 @@ EXAMPLES = (
 )
 _MOST_POINTS = 40
 _HEIGHT = 16
+_FINE = 1e-3  # of the largest mean, where no scatter says how fine to write a column
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -65,7 +66,7 @@ def run(args: Namespace) -> int:
     if not screen.terminal or args.points or len(points) <= _MOST_POINTS:
         _tabulate(screen, scan, points, observables, units)
     else:
-        screen.note(f"{len(points)} points; --points lists them")
+        screen.note(f"{counted(len(points), 'point')}; --points lists them")
     if observables:
         _draw(screen, scan, name, points, observables[0], units[observables[0]])
     return 0
@@ -94,7 +95,7 @@ def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes) -> None:
     until = f"{last:%H:%M:%S %Z}" if first.date() == last.date() else f"{last:%Y-%m-%d %H:%M:%S %Z}"
     screen.fields(
         [
-            *(("axis", f"{axis_line(axis)}, {axis.points} points") for axis in scan.axes),
+            *(("axis", f"{axis_line(axis)}, {counted(axis.points, 'point')}") for axis in scan.axes),
             ("shots", f"{scan.shots}, {repeats_text(scan)} a point{aside}"),
             ("taken", f"{first:%Y-%m-%d %H:%M:%S} to {until}"),
         ]
@@ -112,27 +113,45 @@ def _tabulate(
         for axis in scan.axes
     ]
     columns.append(Column("shots", right=True))
+    kinds = {name: _kinds(screen, [point.readings[name] for point in points]) for name in observables}
     for rank, name in enumerate(observables):
         scale = scales[name]
         power = "1" + scale.suffix if scale and scale.suffix else ""
         head = _named(name, f"{power} {units[name]}".strip())
         columns.append(Column(head, right=True, spare=2 * rank, plain_name=name))
-        columns.append(
-            Column("scatter", right=True, spare=2 * rank + 1, plain_name=f"{name}_scatter", quiet=True)
-        )
+        columns += [
+            Column(kind, right=True, spare=2 * rank + 1, plain_name=f"{name}_{kind}", quiet=True)
+            for kind in kinds[name]
+        ]
     rows: list[Row] = [
         [
             *(column[place] for column in settings),
             str(point.shots),
-            *(cell for name in observables for cell in _cells(point.readings[name], scales[name])),
+            *(
+                cell
+                for name in observables
+                for cell in _cells(point.readings[name], scales[name], kinds[name])
+            ),
         ]
         for place, point in enumerate(points)
     ]
     screen.table(columns, rows, empty="no shots but those set aside; --set-aside shows them")
 
 
+def _kinds(screen: Screen, readings: Sequence[Reading]) -> tuple[str, ...]:
+    """Return what stands beside the means: their scatter where points are repeated, else the stderr if given."""
+    if not screen.terminal:
+        return ("scatter", "stderr")
+    if any(reading.count > 1 for reading in readings):
+        return ("scatter",)
+    return ("stderr",) if any(math.isfinite(reading.stderr) for reading in readings) else ()
+
+
 def _scale(readings: Sequence[Reading]) -> Scale | None:
-    """Return the place to which a column is written, from its largest mean and its typical scatter."""
+    """Return the place to which a column is written, from its largest mean and its typical scatter.
+
+    Where there is neither scatter nor stderr, the largest mean has five digits.
+    """
     means = [abs(reading.mean) for reading in readings if math.isfinite(reading.mean)]
     scatters = sorted(
         scatter
@@ -140,26 +159,35 @@ def _scale(readings: Sequence[Reading]) -> Scale | None:
         for scatter in [reading.scatter if reading.count > 1 else reading.stderr]
         if scatter > 0
     )
-    return scale_of(max(means), scatters[len(scatters) // 2]) if means and scatters else None
+    if not means:
+        return None
+    return scale_of(max(means), scatters[len(scatters) // 2] if scatters else max(means) * _FINE)
 
 
-def _cells(reading: Reading, scale: Scale | None) -> tuple[Cell, Cell]:
-    """Return mean and scatter of a point."""
+def _cells(reading: Reading, scale: Scale | None, kinds: Sequence[str]) -> list[Cell]:
+    """Return the mean of a point, and what stands beside it."""
 
     def text(number: float) -> str:
         if not math.isfinite(number):
             return "-"
         return scale.digits(number) if scale else short(number)
 
-    return (
+    beside = {"scatter": reading.scatter, "stderr": reading.stderr}
+    return [
         Cell(text(reading.mean), repr(reading.mean)),
-        Cell("± " + text(reading.scatter) if reading.count > 1 else "", repr(reading.scatter)),
-    )
+        *(
+            Cell("± " + text(beside[kind]) if math.isfinite(beside[kind]) else "", repr(beside[kind]))
+            for kind in kinds
+        ),
+    ]
 
 
 def _draw(screen: Screen, scan: Scan, name: str, points: Sequence[Point], observable: str, unit: str) -> None:
     """Draw the observable over one axis, or as a map over two."""
     if not screen.terminal:
+        return
+    if sum(math.isfinite(point.readings[observable].mean) for point in points) < 2:
+        screen.note("a chart needs two points")
         return
     numeric = [axis for axis in scan.axes if axis.low is not None]
     if len(scan.axes) == 1 and numeric:
