@@ -56,6 +56,8 @@ def test_constant_values_have_no_feature() -> None:
     assert message(result, "no-feature") == (
         "all 31 values are the same; check the observable, then take the scan again"
     )
+    assert codes(result) == ["no-feature"]
+    assert codes(fit_curve(TIME, np.full(len(TIME), 7.0), "exponential")) == ["no-feature"]
     assert result.estimates["offset"].value == pytest.approx(7.0)
     assert not fit_curve(FIELD, np.zeros(31), "exponential").trusted
 
@@ -76,6 +78,34 @@ def test_less_than_a_period() -> None:
     y += 0.01 * np.random.default_rng(3).normal(size=len(SHORT))
     result = fit_curve(SHORT, y, "damped-oscillation", unit_x="s")
     assert "periods, too few to tell them from a drift; extend it to" in message(result, "under-one-period")
+
+
+def test_a_drift_is_no_oscillation_and_gets_no_figures() -> None:
+    y = 3.0 * SHORT + 0.01 * np.random.default_rng(3).normal(size=len(SHORT))
+    result = fit_curve(SHORT, y, "damped-oscillation", unit_x="s")
+    text = message(result, "under-one-period")
+    assert text == (
+        "the scan shows no whole period, only what could be a drift; extend it until it shows several,"
+        " or fit another model"
+    )
+    assert "frequency" not in " ".join(w.message for w in result.warnings if w.code == "at-bound")
+
+
+@pytest.mark.parametrize(("sign", "said"), [(1, "rise instead of fall"), (-1, "fall instead of rise")])
+@pytest.mark.parametrize("model", ["exponential", "two-body"])
+def test_data_that_go_the_other_way(model: str, sign: int, said: str) -> None:
+    if model == "two-body" and sign < 0:
+        pytest.skip("an amount is positive")
+    y = sign * (np.exp(TIME / TIME.max()) + 0.02 * np.random.default_rng(6).normal(size=len(TIME)))
+    result = fit_curve(TIME, y, model, unit_x="s")
+    assert f"the data {said}; fit another model or with a background" in message(result, "at-bound")
+    assert "longer" not in " ".join(warning.message for warning in result.warnings)
+
+
+def test_an_edge_carries_its_unit() -> None:
+    y = 5.0 + 0.1 * np.random.default_rng(8).normal(size=len(TIME))
+    text = message(fit_curve(TIME, y, "exponential", unit_x="s"), "at-bound")
+    assert " s); scan longer, or fix it" in text
 
 
 def test_lifetime_much_longer_than_the_scan() -> None:

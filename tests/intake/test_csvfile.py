@@ -286,14 +286,19 @@ def test_headers_that_are_wrong(path: Path, header: str, message: str) -> None:
         (
             "x,y,z\n",
             {"swept": ("x",)},
-            "what these columns are: 'y', 'z'; name them as parameters or observables",
+            "what these columns are: 'y', 'z'; say --observables y,z, or --parameters y,z for settings that rested",
         ),
         ("x,y_stderr\n", {"parameters": "rest"}, "what these columns are: 'y_stderr'"),
         ("x,coil[A]\n", {"swept": ("x",)}, "if the bracket of 'coil[A]' holds a unit, put a space before it"),
         (
             "x y\n1 2\n",
             {},
-            "'x y'; name them as parameters or observables, or state that the rest is the one or the",
+            "'x y'; say --swept 'x y', --observables 'x y', or --parameters 'x y' for settings that rested",
+        ),
+        (
+            "x,y,z\n",
+            {},
+            "'x', 'y', 'z'; say for example --swept x --observables y,z; --parameters names settings that rested",
         ),
         ("x y\n1 2\n", {}, "if the columns are parted by spaces, say so with the delimiter"),
         ("a,b\n", {"observables": "rest", "swept": ("x",)}, "swept names 'x', but the columns are a, b"),

@@ -7,6 +7,7 @@ import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
+from shlex import quote
 from typing import Literal
 
 from nightfold.card import MachineCard, without_cloud
@@ -213,7 +214,7 @@ def _check_unassigned(unknown: list[str], options: CsvColumns, source: str) -> N
     if not unknown:
         return
     listed = ", ".join(repr(name) for name in unknown[:6]) + (" …" if len(unknown) > 6 else "")
-    advice = "name them as parameters or observables, or state that the rest is the one or the other"
+    advice = _example(unknown, swept_known=bool(options.swept))
     bare = next((name for name in unknown if without_cloud(name) != name), None)
     if bare is not None:
         advice += f"; if the bracket of {bare!r} holds a unit, put a space before it"
@@ -222,6 +223,16 @@ def _check_unassigned(unknown: list[str], options: CsvColumns, source: str) -> N
     raise ChoiceNeeded(
         f"{source}: neither the card nor the options say what these columns are: {listed}; {advice}"
     )
+
+
+def _example(unknown: list[str], *, swept_known: bool) -> str:
+    """Return how to say what columns are, with the options of `take` and the columns themselves."""
+    if swept_known or len(unknown) == 1:
+        names = quote(",".join(unknown))
+        swept = "" if swept_known else f"--swept {names}, "
+        return f"say {swept}--observables {names}, or --parameters {names} for settings that rested"
+    swept, read = quote(unknown[0]), quote(",".join(unknown[1:]))
+    return f"say for example --swept {swept} --observables {read}; --parameters names settings that rested"
 
 
 def _check_stated(names: Sequence[str], options: CsvColumns, source: str) -> None:

@@ -60,20 +60,28 @@ class Facts:
 
 
 def judge(facts: Facts) -> tuple[FitWarning, ...]:
-    """Return every warning that applies, the gravest first, one for each code."""
+    """Return every warning that applies, the gravest first, one for each code; of constant data only that they are."""
     found = [
         _feature(facts),
+    ]
+    if not facts.constant:
+        found += _others(facts)
+    messages: dict[str, list[str]] = {}
+    for warning in found:
+        if warning is not None:
+            messages.setdefault(warning.code, []).append(warning.message)
+    return tuple(FitWarning(code, "; also, ".join(dict.fromkeys(texts))) for code, texts in messages.items())
+
+
+def _others(facts: Facts) -> list[FitWarning | None]:
+    """Return what there is to say beyond whether anything stands out."""
+    return [
         _converged(facts),
         *(_role_warning(facts, name) for name in facts.roles),
         *(_at_bound(facts, name) for name in facts.bound),
         _spare(facts),
         _known(facts),
     ]
-    messages: dict[str, list[str]] = {}
-    for warning in found:
-        if warning is not None:
-            messages.setdefault(warning.code, []).append(warning.message)
-    return tuple(FitWarning(code, "; also, ".join(dict.fromkeys(texts))) for code, texts in messages.items())
 
 
 def _with_unit(value: float, unit: str) -> str:
@@ -124,7 +132,11 @@ def _role_warning(facts: Facts, name: str) -> FitWarning | None:
         return _outside(facts, name) or _position(facts, name)
     if role == "frequency":
         return _periods(facts, name) or _frequency(facts, name)
-    if role in MOST_SPREAD and not facts.spread[name] <= MOST_SPREAD[role]:
+    if (
+        role in MOST_SPREAD
+        and not facts.spread[name] <= MOST_SPREAD[role]
+        and _other_way(facts, name) is None
+    ):
         return _factor(facts, name, role)
     return None
 
@@ -153,6 +165,8 @@ def _position(facts: Facts, name: str) -> FitWarning | None:
     limit = (facts.value.get("fwhm", inf) if width is None else width) / 2
     if facts.stderr[name] <= limit:
         return None
+    if not isfinite(facts.stderr[name]):
+        return FitWarning("poorly-determined", f"the {name} is not determined by this scan; take more shots")
     return FitWarning(
         "poorly-determined",
         f"the {name} is uncertain by {_with_unit(facts.stderr[name], facts.unit_x)}, more than half the width"
@@ -165,7 +179,13 @@ def _periods(facts: Facts, name: str) -> FitWarning | None:
     periods = facts.value[name] * window
     if periods - min(facts.stderr[name] * window, FREQUENCY_SPREAD) >= LEAST_PERIODS:
         return None
-    wanted = facts.low + 2.0 / facts.value[name] if facts.value[name] > 0 else inf
+    if name in facts.bound or not facts.stderr[name] < facts.value[name] / 2:
+        return FitWarning(
+            "under-one-period",
+            "the scan shows no whole period, only what could be a drift; extend it until it shows several,"
+            " or fit another model",
+        )
+    wanted = facts.low + 2.0 / facts.value[name]
     return FitWarning(
         "under-one-period",
         f"the scan covers only {periods:.2g} periods, too few to tell them from a drift; extend it to"
@@ -195,12 +215,45 @@ def _factor(facts: Facts, name: str, role: str) -> FitWarning:
     return FitWarning("poorly-determined", f"the {name} is {how_well}; {advice}, or fix it")
 
 
-def _at_bound(facts: Facts, name: str) -> FitWarning:
+def _at_bound(facts: Facts, name: str) -> FitWarning | None:
+    role = facts.roles.get(name, "free")
+    if role == "frequency" and _periods(facts, name) is not None:
+        return None
+    other_way = _other_way(facts, name)
+    if other_way is not None:
+        return FitWarning("at-bound", f"the {name} ran to the edge of what this scan can tell: {other_way}")
+    advice = "scan longer" if _is_slow(facts, name) else "scan a range that shows the whole line"
     return FitWarning(
         "at-bound",
-        f"the {name} ran to the edge of what this scan can tell ({facts.value[name]:.4g}); scan a range that"
-        " shows the whole line, or fix it",
+        f"the {name} ran to the edge of what this scan can tell ({_in_its_unit(facts, name)}); {advice},"
+        " or fix it",
     )
+
+
+def _in_its_unit(facts: Facts, name: str) -> str:
+    """Return a position, width, time, rate or frequency with its unit."""
+    per = facts.roles.get(name) == "frequency" or name.endswith("rate")
+    return (_per_unit if per else _with_unit)(facts.value[name], facts.unit_x)
+
+
+def _is_slow(facts: Facts, name: str) -> bool:
+    """Return whether a time is longer than the scan, or a rate too low for it."""
+    if facts.roles.get(name) != "rate":
+        return False
+    window = facts.high - facts.low
+    return facts.value[name] * window < 1 if name.endswith("rate") else facts.value[name] > window
+
+
+def _other_way(facts: Facts, name: str) -> str | None:
+    """Return what to say of data that change, but not as the decay of this time or rate would have it."""
+    if name not in facts.bound or not _is_slow(facts, name) or not facts.feature_p <= LEVEL:
+        return None
+    if "slope" in facts.value:
+        return None
+    if "offset" in facts.value:
+        return "the data do not level off; scan longer, or fit without a background"
+    rising = "rise instead of fall" if facts.value.get("amplitude", 1.0) > 0 else "fall instead of rise"
+    return f"the data {rising}; fit another model or with a background"
 
 
 def _spare(facts: Facts) -> FitWarning | None:
