@@ -88,6 +88,22 @@ def test_kept_with_everything_that_it_rests_on(store: Store) -> None:
     assert not kept.stale
 
 
+def test_infinite_numbers_are_kept_as_they_are(tmp_path: Path) -> None:
+    made = records("two")[:3]
+    with open_store(tmp_path / "i.sqlite", create=True) as opened:
+        opened.take(made)
+        result = opened.fit(
+            "two", "gaussian", observable="atom_number", background="flat", fixed={"fwhm": 0.8}
+        )
+        assert isinstance(result, FitResult)
+        (kept,) = opened.fits()
+    center = result.estimates["center"]
+    assert np.isinf([center.stderr, *center.interval(0.95)]).all()
+    assert kept.estimates["center"].stderr == center.stderr
+    for level in (0.6827, 0.95):
+        assert kept.estimates["center"].interval(level) == center.interval(level)
+
+
 def test_same_fit_twice_is_kept_once_and_gives_the_same_numbers(store: Store) -> None:
     one = store.fit("loss", "lorentzian", observable="atom_number")
     two = store.fit("loss", "lorentzian", observable="atom_number")

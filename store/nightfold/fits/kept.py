@@ -154,7 +154,7 @@ def _keep(
         "covariance": json.dumps(covariance),
         "trusted": result.trusted,
         "dof": result.dof,
-        "residual_stderr": _finite(result.residual_stderr),
+        "residual_stderr": _known(result.residual_stderr),
         "at_us": now_us(),
         "replaces": earlier.id if earlier is not None else None,
     }
@@ -194,7 +194,7 @@ def _estimates(fit_id: int, result: FitResult) -> list[dict[str, Any]]:
             "low95": low95,
             "high95": high95,
         }
-        kept = {key: _finite(number) for key, number in numbers.items()}
+        kept = {key: _known(number) for key, number in numbers.items()}
         fixed = name not in result.free_names
         rows.append(
             {
@@ -209,8 +209,9 @@ def _estimates(fit_id: int, result: FitResult) -> list[dict[str, Any]]:
     return rows
 
 
-def _finite(number: float) -> float | None:
-    return float(number) if np.isfinite(number) else None
+def _known(number: float) -> float | None:
+    """Return None for NaN, which databases treat differently; infinities are kept as they are."""
+    return None if np.isnan(number) else float(number)
 
 
 def _observable_id(connection: Connection, scan: Scan, observable: str) -> int:
