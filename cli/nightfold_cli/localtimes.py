@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from datetime import UTC, datetime
+from datetime import UTC, datetime, timedelta
 from typing import Any
 from zoneinfo import ZoneInfo
 
@@ -50,19 +50,35 @@ class LocalTimes:
         )
 
 
-def compact(moments: Iterable[datetime]) -> list[str]:
+def compact(moments: Iterable[datetime], *, seconds: bool = False) -> list[str]:
     """Return local times for one column: no year where all are of one, the zone where there are several.
 
     Parameters
     ----------
     moments : iterable of datetime
         Aware local times.
+    seconds : bool
+        Whether seconds are written.
     """
     listed = list(moments)
     pattern = "%m-%d %H:%M" if len({moment.year for moment in listed}) == 1 else "%Y-%m-%d %H:%M"
+    pattern += ":%S" if seconds else ""
     if len({str(moment.tzinfo) for moment in listed}) > 1:
         pattern += " %Z"
-    return [f"{moment:{pattern}}" for moment in listed]
+    return [f"{moment:{pattern}}{offset_if_it_changes(moment)}" for moment in listed]
+
+
+def offset_if_it_changes(moment: datetime) -> str:
+    """Return `` +02:00`` for a local time of a night in which clocks are changed, else nothing.
+
+    A night goes from noon to noon; its hour after midnight may come twice, and only the offset tells which it is.
+    """
+    noon = moment.replace(hour=12, minute=0, second=0, microsecond=0, fold=0)
+    if moment.hour < 12:
+        noon -= timedelta(days=1)
+    if noon.utcoffset() == (noon + timedelta(days=1)).utcoffset():
+        return ""
+    return " " + moment.isoformat()[-6:]
 
 
 def heading(moments: Iterable[datetime], name: str = "when") -> str:

@@ -148,6 +148,18 @@ def test_refusals_of_one_reason_are_one_line(run: Run, at_home: Path) -> None:
     assert len(decoded(run("take", path, "--json"))["refused"]) == 52
 
 
+def test_records_with_an_offset_and_no_card_lead_to_the_card(run: Run, at_home: Path) -> None:
+    path = write_lines(at_home / "a.jsonl", RECORD, {**RECORD, "started": "2026-10-05T21:15:03+02:00"})
+    hint = "times are shown in UTC, while the records of heron carry +02:00; a machine card names the zone: "
+    assert run("take", path, path, "--new").err.count(hint) == 1
+    winter = write_lines(at_home / "b.jsonl", RECORD, {**RECORD, "started": "2026-12-05T21:15:03+01:00"})
+    assert hint not in run("take", winter).err
+    (at_home / "heron.toml").write_text('machine = "heron"\nzone = "Europe/Vienna"\n')
+    card = run("take", path, "--card", "heron.toml")
+    assert card.code == 0, card.err
+    assert hint not in card.err
+
+
 def test_an_interruption_says_how_far_it_came(
     run: Run, at_home: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

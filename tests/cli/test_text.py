@@ -138,3 +138,18 @@ def test_long_work_says_how_far_it_is(terminal: bool, monkeypatch: pytest.Monkey
         assert written.endswith("\r")
     else:
         assert written == "taking …  50%, 2 s left\ntaking …  90%, 3 s left\n"
+
+
+def test_times_of_a_night_with_a_clock_change_show_their_offset() -> None:
+    zone = ZoneInfo("Europe/Vienna")
+    first = datetime(2026, 10, 25, 0, 30, tzinfo=UTC).astimezone(zone)
+    again = datetime(2026, 10, 25, 1, 30, tzinfo=UTC).astimezone(zone)
+    before = datetime(2026, 10, 24, 8, 0, tzinfo=UTC).astimezone(zone)
+    after = datetime(2026, 10, 25, 11, 30, tzinfo=UTC).astimezone(zone)
+    assert compact([before, first, again, after]) == [
+        "10-24 10:00",
+        "10-25 02:30 +02:00",
+        "10-25 02:30 +01:00",
+        "10-25 12:30",
+    ]
+    assert compact([first], seconds=True) == ["10-25 02:30:00 +02:00"]

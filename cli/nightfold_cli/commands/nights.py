@@ -8,6 +8,7 @@ from typing import Any
 from nightfold_cli.arguments import positive
 from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column
+from nightfold_cli.localtimes import offset_if_it_changes
 from nightfold_cli.opening import local_times, opened, records
 from nightfold_cli.render import Screen
 
@@ -56,8 +57,8 @@ def run(args: Namespace) -> int:
             [
                 Cell(f"{night['night']:%a %Y-%m-%d}", f"{night['night']}"),
                 night["machine"],
-                Cell(f"{first:%H:%M}", first.isoformat(timespec="seconds")),
-                Cell(f"{last:%H:%M}", last.isoformat(timespec="seconds")),
+                Cell(f"{first:%H:%M}{offset_if_it_changes(first)}", first.isoformat(timespec="seconds")),
+                Cell(f"{last:%H:%M}{offset_if_it_changes(last)}", last.isoformat(timespec="seconds")),
                 *(str(night[key]) for key in ("shots", "set_aside", "references", "scans")),
                 night["sequences"],
             ]

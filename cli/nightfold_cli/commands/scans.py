@@ -11,7 +11,7 @@ from zoneinfo import ZoneInfo
 from nightfold_cli.arguments import positive
 from nightfold_cli.known import check_machine, check_sequence
 from nightfold_cli.layout import Cell, Column, Row
-from nightfold_cli.localtimes import LocalTimes
+from nightfold_cli.localtimes import LocalTimes, offset_if_it_changes
 from nightfold_cli.naming import ambiguous_labels, name_of
 from nightfold_cli.opening import local_times, moment, opened
 from nightfold_cli.render import Screen
@@ -103,7 +103,9 @@ def _draw(screen: Screen, scans: Sequence[Scan], names: Mapping[int, str], night
                 Cell.of(_axes(scan, narrow=screen.width < _NARROW)),
                 Cell.of((grid(scan), f"x {repeats_text(scan)}")),
                 Cell.of((str(scan.shots), aside)),
-                Cell.of((f"{began:%H:%M}", "" if scan.complete else status(scan))),
+                Cell.of(
+                    (f"{began:%H:%M}{offset_if_it_changes(began)}", "" if scan.complete else status(scan))
+                ),
                 Cell.of((trend, "" if shared else scan.main_observable or "")),
             ]
         )

@@ -151,13 +151,15 @@ def _draw(
     lines: list[Row] = [
         [
             Cell(_short(str(row["uid"])), str(row["uid"])),
-            Cell(f"{when}:{at:%S}", at.isoformat(timespec="milliseconds")),
+            Cell(when, at.isoformat(timespec="milliseconds")),
             *([setting(row["machine"])] if several else []),
             setting(row["sequence"]),
             row["scan"] if isinstance(row["scan"], str) else "-",
             *(cells[name][place] for name in asked),
         ]
-        for place, (row, when, at) in enumerate(zip(rows, compact(moments), moments, strict=True))
+        for place, (row, when, at) in enumerate(
+            zip(rows, compact(moments, seconds=True), moments, strict=True)
+        )
     ]
     screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
     if lines:

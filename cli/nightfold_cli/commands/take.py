@@ -15,6 +15,7 @@ from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
 from nightfold_cli.refusals import summarise
 from nightfold_cli.render import Screen
+from nightfold_cli.zonehint import zone_hint
 
 if TYPE_CHECKING:
     from nightfold.intake.csvcolumns import CsvColumns
@@ -78,11 +79,14 @@ def run(args: Namespace) -> int:
                 total.add_unreadable(outcome)
             else:
                 total.add(name, outcome)
+        hint = zone_hint(store, [name for name, *_ in total.rows])
     if screen.json:
         screen.answer({**total.counts(), "refused": total.refused})
     else:
         total.show(screen)
     _list_refused(screen, total)
+    if hint:
+        screen.say(hint)
     return total.code
 
 
