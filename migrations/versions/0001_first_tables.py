@@ -208,6 +208,8 @@ def upgrade() -> None:
         sa.Column("version_id", sa.Integer(), nullable=True),
         sa.Column("scan_id", sa.Integer(), nullable=True),
         sa.Column("reference", sa.Boolean(), nullable=False),
+        sa.Column("planned_shots", sa.Integer(), nullable=True),
+        sa.Column("last", sa.Boolean(), nullable=False),
         sa.Column("set_id", sa.BigInteger().with_variant(sa.Integer(), "sqlite"), nullable=False),
         sa.Column("values_digest", sa.LargeBinary(), nullable=False),
         sa.Column("content_digest", sa.LargeBinary(), nullable=False),

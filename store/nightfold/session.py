@@ -19,6 +19,7 @@ from sqlalchemy import (
     URL,
     Connection,
     Engine,
+    NullPool,
     QueuePool,
     create_engine,
     event,
@@ -245,7 +246,9 @@ def _sqlite_engine(path: Path, read_only: bool, foreign_keys: bool) -> Engine:
             address, timeout=_WAIT_S, isolation_level=None, check_same_thread=False, uri=read_only
         )
 
-    engine = create_engine("sqlite+pysqlite://", creator=connect, poolclass=QueuePool)
+    engine = create_engine(
+        "sqlite+pysqlite://", creator=connect, poolclass=NullPool if read_only else QueuePool
+    )
 
     @event.listens_for(engine, "connect")
     def prepare(connection: Any, _record: Any) -> None:

@@ -351,8 +351,9 @@ class Store:
         """
         from nightfold.fits.kept import fit_scan
         from nightfold.fits.scanfit import FitRequest
+        from nightfold.scans.scan import Scan
 
-        chosen = self.scan(scan) if isinstance(scan, (int, str)) else scan
+        chosen = self.scan(scan.id if isinstance(scan, Scan) else scan)
         request = FitRequest(
             model, observable, along, background, dict(fixed or {}), dict(start or {}), weights, robust
         )

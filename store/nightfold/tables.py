@@ -191,6 +191,8 @@ shot = Table(
     _to("version_id", "version", nullable=True),
     _to("scan_id", "scan", nullable=True),
     Column("reference", Boolean(create_constraint=False), nullable=False),
+    Column("planned_shots", Integer),
+    Column("last", Boolean(create_constraint=False), nullable=False),
     _to("set_id", "value_set"),
     Column("values_digest", LargeBinary, nullable=False),
     Column("content_digest", LargeBinary, nullable=False),

@@ -327,7 +327,7 @@ def test_a_clock_going_backwards_is_no_reason_to_refuse(store: Store) -> None:
         ),
         (
             '[parameters.coil]\nunit = "V"',
-            "parameters.coil.unit: found 'V', wanted a unit that converts to 'A'",
+            "parameters.coil.unit: found 'V', wanted 'A', in which the store holds it",
         ),
         ('[parameters.hold]\nkind = "text"', "parameters.hold.kind: found text, the store has number"),
     ],
@@ -341,3 +341,60 @@ def test_a_card_that_contradicts_the_store(store: Store, tmp_path: Path, entry: 
     with pytest.raises(CardError, match=re.escape(message)):
         store.use_card(path)
     assert store.cards() == {}
+
+
+# ---------------------------------------------------------------- found by review
+
+
+def test_a_setting_that_the_caller_changes_and_hands_over_again(store: Store) -> None:
+    current = {"value": 1.5, "unit": "A"}
+    for number in range(4):
+        current["value"] = 1.5 + number
+        store.take([record(number, parameters={"coil": current})])
+    assert store.shots(["coil"]).coil.tolist() == [1.5, 2.5, 3.5, 4.5]
+
+
+def test_a_refused_twin_leaves_nothing_in_memory(store: Store) -> None:
+    store.take([record(0, uid="a", parameters={"p": 1})])
+    outcome = store.take(
+        [record(0, uid="a", parameters={"p": 1, "q": 5}), record(1, uid="b", parameters={"p": 1, "q": 5})]
+    )
+    assert (outcome.new, len(outcome.refused)) == (1, 1)
+    assert store.shots(["q"]).q.dropna().tolist() == [5]
+
+
+def test_a_refused_twin_does_not_keep_its_unit(store: Store) -> None:
+    store.take([record(0, uid="a", parameters={"q": 1})])
+    milli = {"q": {"value": 5, "unit": "mA"}}
+    store.take([record(0, uid="a", parameters=milli), record(1, uid="b", parameters=milli)])
+    store.take([record(2, uid="c", parameters={"q": {"value": 2, "unit": "A"}})])
+    assert store.shot("b").parameters["q"].value == 5
+    assert store.shot("b").parameters["q"].unit == "mA"
+    assert store.shot("c").parameters["q"].value == 2000
+
+
+def test_null_in_a_whole_record_does_not_take_a_value_back(store: Store) -> None:
+    store.take([record(0, uid="a", observables={"t": 5.0})])
+    outcome = store.take([record(0, uid="a", observables={"t": None, "n": 2.0, "w": None})])
+    assert outcome.amended == 1
+    assert store.shot("a").observables["t"].value == 5.0
+    assert store.shot("a").observables["w"].state == "null"
+    store.take([{"uid": "a", "observables": {"t": None}}])  # by uid alone it is meant
+    assert store.shot("a").observables["t"].state == "null"
+
+
+def test_stderr_as_an_observable_of_its_own_belongs_to_its_value(store: Store) -> None:
+    store.take([record(0, uid="a", observables={"n": 10.0, "n_stderr": 0.5})])
+    assert store.shot("a").observables["n"].stderr == 0.5
+    assert list(store.shot("a").observables) == ["n"]
+
+
+def test_the_card_used_last_is_in_force_after_the_clock_was_put_back(
+    store: Store, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    card = tmp_path / "heron.toml"
+    for zone, now in (("Asia/Tokyo", 10), ("Europe/Vienna", 5)):
+        card.write_text(f'machine = "heron"\nzone = "{zone}"\n')
+        monkeypatch.setattr("nightfold.store.now_us", lambda now=now: now)
+        store.use_card(card)
+    assert store.cards()["heron"].zone == store.zone("heron") == "Europe/Vienna"

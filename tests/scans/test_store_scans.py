@@ -322,3 +322,72 @@ def test_a_long_round_is_not_read_again_with_every_shot(
         for record in sweep(0, np.resize(GRID, 400), label="loss", swept=["coil_current"]):
             store.take([record])
         assert len(looks) < 100
+
+
+def test_a_late_shot_leaves_the_other_rounds_of_a_label_alone(tmp_path: Path) -> None:
+    day = 86400
+    first = [
+        r | {"planned_shots": 26} for r in sweep(0, np.resize(GRID, 26), label="loss", swept=["coil_current"])
+    ]
+    second = [r | {"planned_shots": 13} for r in sweep(3 * day, GRID, label="loss", swept=["coil_current"])]
+    third = [r | {"planned_shots": 13} for r in sweep(6 * day, GRID, label="loss", swept=["coil_current"])]
+    with taken(tmp_path, [*first, *second[:5], *second[6:], *third]) as store:
+        for key in ("loss#1", "loss#2", "loss#3"):
+            store.fit(key, "gaussian", observable="atom_number")
+        store.take([second[5]])
+        assert [(scan.key, scan.shots) for scan in store.scans()] == [
+            ("loss#1", 26),
+            ("loss#2", 13),
+            ("loss#3", 13),
+        ]
+        assert [(fit.scan_key, fit.stale) for fit in store.fits()] == [
+            ("loss#1", False), ("loss#2", True), ("loss#3", False),
+        ]  # fmt: skip
+
+
+def test_last_and_planned_shots_end_scans_without_a_label_too(tmp_path: Path) -> None:
+    said_last = sweep(0, GRID, swept=["coil_current"])
+    said_last[-1]["last"] = True
+    planned = [r | {"planned_shots": 13} for r in sweep(195, GRID, swept=["coil_current"])]
+    more = sweep(390, GRID, swept=["coil_current"])
+    with taken(tmp_path, [*said_last, *planned, *more]) as store:
+        assert [scan.shots for scan in store.scans()] == [13, 13, 13]
+        assert [scan.complete for scan in store.scans()][:2] == [True, True]
+
+
+def test_last_may_be_said_afterwards(tmp_path: Path) -> None:
+    begun = (datetime.now(UTC) - START).total_seconds() - 15 * 12
+    records = [
+        r | {"uid": str(k)} for k, r in enumerate(sweep(begun, GRID, label="now", swept=["coil_current"]))
+    ]
+    with taken(tmp_path, records) as store:
+        assert not store.scan("now").complete
+        assert store.take([records[-1] | {"last": True}]).amended == 1
+        assert store.scan("now").complete
+
+
+_SLOW = [
+    shot(seconds, parameters={"coil_current": float(GRID[k % 13])}, swept=["coil_current"])
+    for k, seconds in enumerate(
+        [*(60 * k + (340 if k >= 30 else 0) for k in range(60)), *(6000 + 15 * k for k in range(120))]
+    )
+]
+
+
+@given(st.permutations(range(0, len(_SLOW), 6)), st.integers(5, 60))
+@settings(max_examples=6, deadline=None)
+def test_what_a_pause_is_does_not_depend_on_the_order_of_arrival(
+    tmp_path_factory: pytest.TempPathFactory, order: list[int], batch: int
+) -> None:
+    folder = tmp_path_factory.mktemp("pauses")
+    shuffled = [_SLOW[k + j] for k in order for j in range(6)]
+    with taken(folder, _SLOW) as straight, taken(folder, shuffled, batch) as mixed:
+        assert [scan.shots for scan in straight.scans()] == [60, 120]
+        assert layout(mixed) == layout(straight)
+
+
+def test_a_fit_may_name_its_scan_by_a_whole_number_of_numpy(tmp_path: Path) -> None:
+    with taken(tmp_path, sweep(0, GRID, label="loss", swept=["coil_current"])) as store:
+        scan = store.scan(np.int64(1))  # type: ignore[arg-type]
+        assert scan.key == "loss#1"
+        store.fit(np.int64(1), "gaussian", observable="atom_number")  # type: ignore[arg-type]

@@ -6,7 +6,7 @@ import json
 from collections.abc import Mapping
 from typing import Any
 
-from sqlalchemy import Connection, Row, and_, delete, insert, select
+from sqlalchemy import Connection, Row, and_, delete, insert, select, update
 
 from nightfold import tables
 from nightfold.errors import RecordError
@@ -30,7 +30,13 @@ def amend_shot(connection: Connection, stored: Row[Any], shot: CheckedShot, at_u
     ):
         return False
     check_identity(connection, stored, shot)
-    changed = _amend(connection, stored.id, shot.machine, shot.readings, shot.derivation, at_us)
+    read = shot.readings
+    if shot.derivation is None:  # a null in a whole record says "not read yet", not "take the value back"
+        read = {name: value for name, value in read.items() if value.state != "null"}
+        unread = shot.readings.keys() - read.keys() - _read_names(connection, stored.id)
+        read |= {name: shot.readings[name] for name in unread}
+    changed = _amend(connection, stored.id, shot.machine, read, shot.derivation, at_us)
+    changed = _end_scan(connection, stored, shot) or changed
     if shot.failed is not None and set_failed(connection, stored.id, shot.failed, at_us):
         changed = True
     changed = _add_notes_and_frames(connection, stored.id, shot, at_us) or changed
@@ -53,6 +59,23 @@ def amend_readings(
     changed = _amend(connection, stored.id, machine, readings, derivation, at_us)
     _remember(connection, stored.id, digest, at_us)
     return changed
+
+
+def _read_names(connection: Connection, shot_id: int) -> set[str]:
+    reading, observable = tables.reading, tables.observable
+    query = select(observable.c.name).join(reading, reading.c.observable_id == observable.c.id)
+    return set(connection.execute(query.where(reading.c.shot_id == shot_id)).scalars())
+
+
+def _end_scan(connection: Connection, stored: Row[Any], shot: CheckedShot) -> bool:
+    """Note that a shot was the last of its scan after all; False if that is known or not said."""
+    if not shot.wish.last or stored.last:
+        return False
+    table = tables.shot
+    connection.execute(update(table).where(table.c.id == stored.id).values(last=True))
+    scan = tables.scan
+    connection.execute(update(scan).where(scan.c.id == stored.scan_id).values(closed_us=stored.started_us))
+    return True
 
 
 def _seen(connection: Connection, shot_id: int, digest: bytes) -> bool:

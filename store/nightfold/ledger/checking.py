@@ -21,6 +21,8 @@ from nightfold.settings import (
 )
 from nightfold.timestamps import parse_moment
 
+_STDERR = "_stderr"
+
 
 @dataclass(frozen=True, slots=True)
 class ScanWish:
@@ -120,7 +122,7 @@ def readings_of(
     RecordError
     """
     readings: dict[str, ReadValue] = {}
-    for key, raw in stated.items():
+    for key, raw in _with_stderr(stated).items():
         name = key if key in machine.observables else _name_of(key)
         path = f"observables.{name}"
         if name in readings:
@@ -132,6 +134,18 @@ def readings_of(
         if known.id is None or known is not machine.observables.get(name):
             plan[name] = known
     return readings
+
+
+def _with_stderr(stated: Mapping[Any, Any]) -> Mapping[Any, Any]:
+    """Return the observables with ``n_stderr`` beside a bare ``n`` made its standard uncertainty."""
+    if not any(type(key) is str and key.endswith(_STDERR) for key in stated):
+        return stated
+    joined = dict(stated)
+    for key in stated:
+        base = key.removesuffix(_STDERR) if type(key) is str and key.endswith(_STDERR) else None
+        if base in stated and not isinstance(stated[base], Mapping) and not isinstance(stated[key], Mapping):
+            joined[base] = {"value": stated[base], "stderr": joined.pop(key)}
+    return joined
 
 
 def _name_of(key: Any) -> str:

@@ -64,6 +64,7 @@ def insert_shots(connection: Connection, shots: Sequence[CheckedShot], sets: dic
 def _shot_row(shot: CheckedShot, sets: dict[bytes, int]) -> tuple[Any, ...]:
     return (
         shot.id, shot.uid, shot.started_us, shot.sequence_id, shot.version_id, shot.scan_id, shot.reference,
+        shot.wish.planned_shots, shot.wish.last,
         sets[shot.set_digest], shot.values_digest, shot.content_digest, shot.source_id, shot.line,
     )  # fmt: skip
 

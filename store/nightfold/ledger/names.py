@@ -288,12 +288,15 @@ def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: in
                 continue
             if known.unit is None:
                 connection.execute(update(table).where(table.c.id == known.id).values(unit=entry.unit))
-            elif not convertible(entry.unit, known.unit):
+            elif entry.unit != known.unit:
                 raise CardError(
-                    f"card of {card.machine}: {kind}.{name}.unit: found {entry.unit!r}, "
-                    f"wanted a unit that converts to {known.unit!r}, in which the store holds it"
+                    f"card of {card.machine}: {kind}.{name}.unit: found {entry.unit!r}, wanted {known.unit!r}, "
+                    "in which the store holds it: the meaning of bare numbers taken before must not change "
+                    "(a record may state any unit that converts)"
                 )
     connection.execute(update(tables.machine).where(tables.machine.c.id == machine.id).values(zone=card.zone))
+    newest = select(func.max(tables.card.c.at_us)).where(tables.card.c.machine_id == machine.id)
+    at_us = max(at_us, (connection.execute(newest).scalar() or 0) + 1)  # also after the clock was put back
     digest = card.digest
     same = (tables.card.c.machine_id == machine.id) & (tables.card.c.digest == digest)
     if connection.execute(select(tables.card.c.id).where(same)).first():

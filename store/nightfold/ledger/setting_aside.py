@@ -38,8 +38,9 @@ def _by_beginning(connection: Connection, uid: str) -> Row[Any]:
     shot = tables.shot
     rows = []
     if len(uid) >= 4:
-        # SQLite's LIKE takes small and large letters as one
-        begins = shot.c.uid.startswith(uid, autoescape=True) & (func.substr(shot.c.uid, 1, len(uid)) == uid)
+        # a range can use the index, and SQLite's LIKE takes small and large letters as one
+        near = shot.c.uid.between(uid, uid + "\U0010ffff")
+        begins = near & (func.substr(shot.c.uid, 1, len(uid)) == uid)
         rows = list(connection.execute(select(shot).where(begins).limit(2)))
     if len(rows) == 1:
         return rows[0]

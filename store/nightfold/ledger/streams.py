@@ -111,7 +111,8 @@ class StreamMemory:
         value, known = machine.settle(name, *settled, path)
         if known.id is None or known is not machine.parameters.get(name):
             plan[name] = known
-        changed[name] = Entry(raw, *_types_of(raw), value, hash_setting(name, value.token))
+        own = dict(raw) if type(raw) is dict else raw  # the caller may go on to change his
+        changed[name] = Entry(own, *_types_of(own), value, hash_setting(name, value.token))
 
     def _missing(self, settings: Mapping[Any, Any], changed: dict[str, Entry]) -> list[str]:
         stated = {clean_name(key) for key, raw in settings.items() if not _is_null(raw)}

@@ -148,7 +148,13 @@ class Writer:
                 moving = shot.moving
                 shot.resting = {name: entry for name, entry in memory.entries.items() if name not in moving}
             if plan or not machine.id:
-                self._check_twin(batch, shot)
+                try:
+                    self._check_twin(batch, shot)
+                except RecordError:
+                    del self._streams[
+                        key
+                    ]  # it remembers a shot that is not taken; the next one recalls it afresh
+                    raise
             self._names.enter(batch.connection, machine)
             self._names.keep(batch.connection, machine, plan)
             shot.source_id = batch.source_id

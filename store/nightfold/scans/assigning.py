@@ -63,7 +63,8 @@ class ScanFolder:
             for current in touched.values():
                 rounds.save_progress(connection, current)
             if any(current.late for current in touched.values()):
-                rounds.fold_label(connection, *key, self.rejoin_us(connection, members[0]))
+                fresh = {shot.id for shot in members}
+                rounds.fold_label(connection, *key, self.rejoin_us(connection, members[0]), fresh)
                 del self._newest[key]
                 continue
             for current in touched.values():

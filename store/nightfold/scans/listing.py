@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import operator
 from collections.abc import Mapping
 from typing import Any
 
@@ -53,8 +54,8 @@ def _find_id(connection: Connection, key: int | str) -> int:
         .join(machine, machine.c.id == sequence.c.machine_id)
     )  # fmt: skip
     rows: list[Row[Any]] = list(connection.execute(query))
-    if isinstance(key, int) and not isinstance(key, bool):
-        found = [row for row in rows if row.id == key]
+    if hasattr(key, "__index__") and not isinstance(key, bool):  # whole numbers of numpy too
+        found = [row for row in rows if row.id == operator.index(key)]
     else:
         found = _by_text(rows, str(key))
     if not found:

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections import ChainMap
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
+from itertools import pairwise
 from typing import Any
 
 from sqlalchemy import ColumnElement, Connection, Row, and_, or_, select, update
@@ -11,12 +13,16 @@ from sqlalchemy import ColumnElement, Connection, Row, and_, or_, select, update
 from nightfold import tables
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.rows import chunks
-from nightfold.scans.folding import FoundScan, StreamShot, fold_stream, pause_limit_us
+from nightfold.scans.folding import FoundScan, StreamShot, fold_stream
 from nightfold.scans.keeping import set_axes, settle_axes
+from nightfold.scans.pauses import REACH as PAUSE_REACH
+from nightfold.scans.pauses import find_pauses
 from nightfold.scans.rounds import move_shots, retire
 from nightfold.settings import token_of
 
 REACH = 500
+FARTHEST_US = 2 * 86_400_000_000
+FOR_EVER_US = 2**62
 
 
 def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: int) -> None:
@@ -25,37 +31,59 @@ def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: 
     The span reaches to the nearest pause on either side, so the outcome does not depend on the order of arrival; where
     the machine never pauses, to the bounds of the scans about 500 shots away.
     """
-    rows, pause_us = _span(connection, sequence_id, first_us, last_us)
+    rows = _span(connection, sequence_id, first_us, last_us)
     query = (
         select(tables.parameter.c.id, tables.parameter.c.name)
         .join(tables.sequence, tables.sequence.c.machine_id == tables.parameter.c.machine_id)
         .where(tables.sequence.c.id == sequence_id)
     )
     names = {row.id: row.name for row in connection.execute(query)}
-    found = fold_stream(_stream(connection, rows, names), pause_us=pause_us)
+    stream = _stream(connection, rows, names)
+    bounds = [0, *_cuts(rows), len(rows)]
+    found = [
+        scan
+        for start, stop in pairwise(bounds)
+        for scan in fold_stream(_alone(stream[start:stop]), pause_us=FOR_EVER_US)
+    ]
     _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()})
 
 
-def _span(
-    connection: Connection, sequence_id: int, first_us: int, last_us: int
-) -> tuple[list[Row[Any]], int]:
-    shot = tables.shot
-    before = _unlabelled(connection, sequence_id, shot.c.started_us < first_us, newest_first=True)[::-1]
-    inside = _unlabelled(connection, sequence_id, shot.c.started_us.between(first_us, last_us), limit=None)
-    after = _unlabelled(connection, sequence_id, shot.c.started_us > last_us)
+def _cuts(rows: Sequence[Row[Any]]) -> list[int]:
+    """Return where no scan goes on: after a pause, after a shot said to be the last, after the last planned one."""
+    pauses = set(find_pauses([row.started_us for row in rows]))
+    cuts, count = [], 0
+    for place, row in enumerate(rows):
+        ended = place > 0 and (rows[place - 1].last or count == rows[place - 1].planned_shots)
+        if place > 0 and (place in pauses or ended):
+            cuts.append(place)
+            count = 0
+        count = count + 1 if row.planned_shots is not None else 0
+    return cuts
+
+
+def _alone(shots: Sequence[StreamShot]) -> list[StreamShot]:
+    """Return a piece of a stream whose first shot has nothing before it."""
+    return [replace(shots[0], changed=frozenset()), *shots[1:]] if shots else []
+
+
+def _span(connection: Connection, sequence_id: int, first_us: int, last_us: int) -> list[Row[Any]]:
+    started = tables.shot.c.started_us
+    earlier = and_(started < first_us, started >= first_us - FARTHEST_US)
+    later = and_(started > last_us, started <= last_us + FARTHEST_US)
+    before = _unlabelled(connection, sequence_id, earlier, newest_first=True)[::-1]
+    inside = _unlabelled(connection, sequence_id, started.between(first_us, last_us), limit=None)
+    after = _unlabelled(connection, sequence_id, later)
     rows = [*before, *inside, *after]
-    pause = pause_limit_us([row.started_us for row in rows])
-    low, high = len(before), len(before) + len(inside)
-    while low > 0 and rows[low].started_us - rows[low - 1].started_us <= pause:
-        low -= 1
-    while high < len(rows) and rows[high].started_us - rows[high - 1].started_us <= pause:
-        high += 1
+    cuts = [0, *find_pauses([row.started_us for row in rows]), len(rows)]
+    # a new shot has a say in the gaps near it
+    low = max(cut for cut in cuts if cut <= max(len(before) - PAUSE_REACH, 0))
+    high = min(cut for cut in cuts if cut >= min(len(before) + len(inside) + PAUSE_REACH, len(rows)))
     low, high = _whole_scans(rows, low, high)
     if low == 0 and len(before) == REACH:
         low = _scan_bound(rows, 0, 1)
     if high == len(rows) and len(after) == REACH:
         high = _scan_bound(rows, len(rows) - 1, -1) + 1
-    return rows[low:high], pause
+    return rows[low:high]
 
 
 def _whole_scans(rows: Sequence[Row[Any]], low: int, high: int) -> tuple[int, int]:
@@ -90,7 +118,7 @@ def _unlabelled(
     free = or_(shot.c.scan_id.is_(None), scan.c.label.is_(None))
     order = (shot.c.started_us.desc(), shot.c.id.desc()) if newest_first else (shot.c.started_us, shot.c.id)
     query = (
-        select(shot.c.id, shot.c.started_us, shot.c.scan_id, shot.c.set_id)
+        select(shot.c.id, shot.c.started_us, shot.c.scan_id, shot.c.set_id, shot.c.planned_shots, shot.c.last)
         .outerjoin(scan, scan.c.id == shot.c.scan_id)
         .where(own, free)
         .order_by(*order)
@@ -156,6 +184,7 @@ def _keep(
     ids: Mapping[str, int],
 ) -> None:
     """Bring the scans found into the store; a scan keeps its id as long as it keeps most of its shots."""
+    by_id = {row.id: row for row in rows}
     now = {row.id: row.scan_id for row in rows}
     free = {scan_id for scan_id in now.values() if scan_id is not None}
     heirs: dict[int, int] = {}
@@ -173,7 +202,14 @@ def _keep(
             best = insert_row(connection, tables.scan, row)
         else:
             free.discard(best)
-            connection.execute(update(tables.scan).where(tables.scan.c.id == best).values(origin=scan.origin))
+        members = [by_id[shot_id] for shot_id in scan.shot_ids]
+        planned = [row.planned_shots for row in members if row.planned_shots is not None]
+        said = {
+            "origin": scan.origin,
+            "planned_shots": planned[-1] if planned else None,
+            "closed_us": max((row.started_us for row in members if row.last), default=None),
+        }
+        connection.execute(update(tables.scan).where(tables.scan.c.id == best).values(**said))
         heirs |= dict.fromkeys(counts, best)
         moved = [shot_id for shot_id in scan.shot_ids if now[shot_id] != best]
         lost = sum(1 for old in now.values() if old == best) > counts.get(best, 0)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Collection, Iterable, Sequence
 from dataclasses import dataclass, field
 
 from sqlalchemy import Connection, delete, func, select, update
@@ -72,6 +72,8 @@ class _Member:
     started_us: int
     swept: frozenset[int]
     scan_id: int
+    planned: int | None
+    last: bool
 
 
 def open_round(
@@ -111,23 +113,26 @@ def save_progress(connection: Connection, current: Round) -> None:
     )
 
 
-def fold_label(connection: Connection, sequence_id: int, label: str, rejoin_us: int) -> None:
-    """Cut all shots of a label into rounds again, by the time they started, whatever the order they came in."""
+def fold_label(
+    connection: Connection, sequence_id: int, label: str, rejoin_us: int, fresh: Collection[int]
+) -> None:
+    """Cut all shots of a label into rounds again, by the time they started, whatever the order they came in.
+
+    Parameters
+    ----------
+    fresh : collection of int
+        Ids of the shots that came now: the rounds they are in have their axes looked at again.
+    """
     scan = tables.scan
-    existing = connection.execute(
-        select(scan).where(scan.c.sequence_id == sequence_id, scan.c.label == label).order_by(scan.c.round)
-    ).all()
-    members = _members(connection, [row.id for row in existing])
-    closed = {row.closed_us for row in existing if row.closed_us is not None}
-    planned = next((row.planned_shots for row in reversed(existing) if row.planned_shots is not None), None)
-    groups = _cut(members, closed, planned, rejoin_us)
-    free = [row.id for row in existing]
+    query = select(scan.c.id).where(scan.c.sequence_id == sequence_id, scan.c.label == label)
+    existing = list(connection.execute(query.order_by(scan.c.round)).scalars())
+    groups = _cut(_members(connection, existing), rejoin_us)
+    free = list(existing)
     chosen: list[int] = []
     for group in groups:  # each round keeps the id most of its shots had
-        wanted = max(free, key=lambda scan_id: sum(m.scan_id == scan_id for m in group), default=None)
-        if wanted is None or not any(member.scan_id == wanted for member in group):
-            row = {"sequence_id": sequence_id, "label": label, "round": -1, "origin": "label"}
-            row["round"] = -1 - len(chosen)
+        wanted = max(free, key=lambda scan_id: _held(group, scan_id), default=None)
+        if wanted is None or not _held(group, wanted):
+            row = {"sequence_id": sequence_id, "label": label, "round": -1 - len(chosen), "origin": "label"}
             wanted = insert_row(connection, scan, row)
         else:
             free.remove(wanted)
@@ -135,25 +140,38 @@ def fold_label(connection: Connection, sequence_id: int, label: str, rejoin_us: 
     for position, scan_id in enumerate([*chosen, *free]):  # out of each other's way first: rounds are unique
         connection.execute(update(scan).where(scan.c.id == scan_id).values(round=-1000 - position))
     for number, (scan_id, group) in enumerate(zip(chosen, groups, strict=True), 1):
-        ends = [at for at in closed if group[0].started_us <= at <= group[-1].started_us]
-        values = {"round": number, "planned_shots": planned, "closed_us": max(ends, default=None)}
+        ends = [member.started_us for member in group if member.last]
+        values = {"round": number, "planned_shots": _plan_of(group), "closed_us": max(ends, default=None)}
         connection.execute(update(scan).where(scan.c.id == scan_id).values(**values))
-        move_shots(connection, scan_id, [member.id for member in group if member.scan_id != scan_id])
-        settle_axes(connection, scan_id, next((m.swept for m in group if m.swept), frozenset()))
+        moved = [member.id for member in group if member.scan_id != scan_id]
+        move_shots(connection, scan_id, moved)
     for scan_id in free:
-        retire(connection, scan_id, chosen[0])
+        heir = max(range(len(groups)), key=lambda place: _held(groups[place], scan_id))
+        retire(connection, scan_id, chosen[heir])
+    for scan_id, group in zip(chosen, groups, strict=True):
+        if any(member.scan_id != scan_id or member.id in fresh for member in group):
+            settle_axes(connection, scan_id, next((m.swept for m in group if m.swept), frozenset()))
 
 
-def _cut(
-    members: Sequence[_Member], closed: set[int], planned: int | None, rejoin_us: int
-) -> list[list[_Member]]:
+def _held(group: Sequence[_Member], scan_id: int) -> int:
+    """Return how many of the shots a scan held."""
+    return sum(member.scan_id == scan_id for member in group)
+
+
+def _plan_of(group: Sequence[_Member]) -> int | None:
+    """Return how many shots were planned, by the newest shot that says so."""
+    return next((member.planned for member in reversed(group) if member.planned is not None), None)
+
+
+def _cut(members: Sequence[_Member], rejoin_us: int) -> list[list[_Member]]:
     groups: list[list[_Member]] = []
     swept: frozenset[int] = frozenset()
+    planned: int | None = None
     for member in members:
         last = groups[-1] if groups else None
         joins = (
             last is not None
-            and last[-1].started_us not in closed
+            and not last[-1].last
             and (planned is None or len(last) < planned)
             and member.started_us - last[-1].started_us <= rejoin_us
             and _same_sweep(swept, member.swept)
@@ -161,28 +179,34 @@ def _cut(
         if joins and last is not None:
             last.append(member)
             swept = swept or member.swept
+            planned = planned if member.planned is None else member.planned
         else:
             groups.append([member])
-            swept = member.swept
+            swept, planned = member.swept, member.planned
     return groups
 
 
 def _members(connection: Connection, scan_ids: Sequence[int]) -> list[_Member]:
+    """Return the shots of scans, in time order."""
     shot, value = tables.shot, tables.shot_value
     swept: dict[int, set[int]] = {}
-    of_scans = shot.c.scan_id.in_(scan_ids)
-    rows = select(value.c.shot_id, value.c.parameter_id).join(shot, shot.c.id == value.c.shot_id)
-    for row in connection.execute(rows.where(of_scans, value.c.swept)):
-        swept.setdefault(row.shot_id, set()).add(row.parameter_id)
-    shots = (
-        select(shot.c.id, shot.c.started_us, shot.c.scan_id)
-        .where(of_scans)
-        .order_by(shot.c.started_us, shot.c.id)
-    )
-    return [
-        _Member(row.id, row.started_us, frozenset(swept.get(row.id, ())), row.scan_id)
-        for row in connection.execute(shots)
-    ]
+    members: list[_Member] = []
+    declared = select(value.c.shot_id, value.c.parameter_id).join(shot, shot.c.id == value.c.shot_id)
+    for part in chunks(scan_ids):
+        for row in connection.execute(declared.where(shot.c.scan_id.in_(part), value.c.swept)):
+            swept.setdefault(row.shot_id, set()).add(row.parameter_id)
+        members += [
+            _Member(
+                row.id,
+                row.started_us,
+                frozenset(swept.get(row.id, ())),
+                row.scan_id,
+                row.planned_shots,
+                bool(row.last),
+            )
+            for row in connection.execute(select(shot).where(shot.c.scan_id.in_(part)))
+        ]
+    return sorted(members, key=lambda member: (member.started_us, member.id))
 
 
 def _swept_of(connection: Connection, scan_id: int) -> frozenset[int]:
