@@ -9,8 +9,9 @@ from typing import Any
 import numpy as np
 import pytest
 
-from nightfold import FitResult, FitTable, Store, fit_curve, open_store
+from nightfold import FitResult, FitTable, Model, Store, fit_curve, open_store
 from nightfold.errors import ChoiceNeeded, FitError, NotFound
+from nightfold.fits.scanfit import fingerprint_model
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
 
@@ -111,6 +112,46 @@ def test_same_fit_twice_is_kept_once_and_gives_the_same_numbers(store: Store) ->
     assert isinstance(two, FitResult)
     assert {n: e.value for n, e in one.estimates.items()} == {n: e.value for n, e in two.estimates.items()}
     assert len(store.fits()) == 1
+
+
+def test_another_function_of_the_same_name_is_another_fit(store: Store) -> None:
+    kept = []
+    for own in (
+        Model(lambda x, a, b: a * np.exp(-b * (x - 59)), start={"b": 0.1}),
+        Model(lambda x, a, b: a / (1 + b * (x - 59)), start={"b": 0.1}),
+    ):
+        for _ in range(2):
+            store.fit("loss", own, observable="atom_number")
+        kept += store.fits()
+    assert [fit.model for fit in kept] == ["model", "model"]
+    assert kept[1].replaces == kept[0].id
+    assert kept[0].settings["function"] != kept[1].settings["function"]
+    store.fit("loss", "lorentzian", observable="atom_number")
+    assert "function" not in store.fits()[-1].settings
+
+
+def test_a_function_counts_with_what_it_refers_to() -> None:
+    def power(exponent: float) -> Model:
+        return Model(lambda x, a: a * x**exponent)
+
+    assert fingerprint_model(power(2.0)) == fingerprint_model(power(2.0))
+    assert fingerprint_model(power(2.0)) != fingerprint_model(power(3.0))
+    assert fingerprint_model(Model(line)) != fingerprint_model(Model(line, start={"center": 61.0}))
+
+
+def test_lmfit_models_are_told_apart() -> None:
+    models = pytest.importorskip("lmfit.models")
+    made = [
+        models.GaussianModel(),
+        models.LorentzianModel(),
+        models.GaussianModel(prefix="one_"),
+        models.GaussianModel() + models.ConstantModel(),
+        models.GaussianModel() * models.ConstantModel(),
+        models.ExpressionModel("a * x"),
+        models.ExpressionModel("a / x"),
+    ]
+    assert len({fingerprint_model(model) for model in made}) == len(made)
+    assert fingerprint_model(models.GaussianModel()) == fingerprint_model(made[0])
 
 
 def test_setting_a_shot_aside_makes_a_fit_stale_and_a_new_one_replaces_it(store: Store) -> None:

@@ -76,7 +76,7 @@ class KeptFit:
     shots, set_aside : int
         Shots used, and left out.
     settings : dict
-        What it takes to fit again.
+        What it takes to fit again; for a model of one's own a fingerprint of its ``function`` too.
     stale : bool
         Whether the scan's data have changed since.
     version : str
@@ -134,8 +134,9 @@ def _keep(
         "model": result.model,
         "background": result.background,
     }
+    own = {"function": request.fingerprint} if request.fingerprint else {}
     rest = {
-        "settings": json.dumps(result.settings, default=float),
+        "settings": json.dumps({**result.settings, **own}, default=float),
         "data_digest": part.digest(request.observable),
         "program": __version__,
     }

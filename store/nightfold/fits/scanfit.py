@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import functools
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from types import CellType, CodeType, FunctionType, MethodType
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -46,6 +48,11 @@ class FitRequest:
             "weights": self.weights,
             "robust": self.robust,
         }
+
+    @property
+    def fingerprint(self) -> str | None:
+        """What tells a model of one's own from others of its name; None for the built-in ones."""
+        return None if isinstance(self.model, str) else fingerprint_model(self.model)
 
 
 @dataclass(frozen=True)
@@ -208,3 +215,57 @@ def _stderr(table: pd.DataFrame, observable: str, request: FitRequest) -> NDArra
         return stderr
     usable = np.isfinite(stderr) & (stderr > 0)
     return stderr if known.any() and usable[known].all() else None
+
+
+def fingerprint_model(model: Any) -> str:
+    """Return a digest of a `Model` or lmfit model: of what it computes and where it starts, not of its name.
+
+    Functions count by their code and by the plain values and functions that this refers to. Other objects
+    count by the name of their type only, so a change within one goes unseen.
+    """
+    return digest_content(_model_facts(model)).hex()
+
+
+def _model_facts(model: Any) -> list[Any]:
+    if hasattr(model, "op"):  # a composite of lmfit
+        return [_facts(model.op, {}), _model_facts(model.left), _model_facts(model.right)]
+    function = getattr(model, "function", None) or getattr(model, "func", None)
+    parameters = getattr(model, "parameters", None) or getattr(model, "param_names", None)
+    names = ("linear", "start", "prefix", "independent_vars", "opts", "param_hints", "expr")
+    return [_facts(item, {}) for item in (function, parameters, *(getattr(model, n, None) for n in names))]
+
+
+def _facts(thing: Any, seen: dict[int, Any]) -> Any:
+    """Return plain values that are equal for equal functions and values, in every process."""
+    if isinstance(thing, (bool, int, float, complex, str, bytes, np.generic)):
+        return repr(thing)
+    if isinstance(thing, (FunctionType, Mapping, list)):  # what can come round to itself
+        if id(thing) in seen:
+            return "again"
+        seen[id(thing)] = thing
+    match thing:
+        case Mapping():
+            return [[repr(key), _facts(value, seen)] for key, value in thing.items()]
+        case set() | frozenset():
+            return sorted(repr(_facts(item, seen)) for item in thing)
+        case list() | tuple():
+            return [_facts(item, seen) for item in thing]
+        case np.ndarray():
+            return [str(thing.dtype), thing.shape, thing.tolist()]
+        case CodeType():
+            return [thing.co_code.hex(), _facts(thing.co_consts, seen), thing.co_names, thing.co_freevars]
+        case FunctionType():
+            return _facts(_parts_of(thing), seen)
+        case MethodType():
+            return _facts(thing.__func__, seen)
+        case functools.partial():
+            return _facts((thing.func, thing.args, thing.keywords), seen)
+    kind = thing if hasattr(thing, "__name__") else type(thing)
+    return [getattr(kind, "__module__", None), getattr(kind, "__qualname__", kind.__name__)]
+
+
+def _parts_of(function: FunctionType) -> tuple[Any, ...]:
+    """Return a function's code, and what it refers to outside of itself."""
+    code, known = function.__code__, function.__globals__
+    cells = tuple(cell.cell_contents for cell in function.__closure__ or () if cell != CellType())
+    return code, cells, {name: known[name] for name in code.co_names if name in known}
