@@ -8,10 +8,11 @@ from typing import Any
 
 import numpy as np
 import pytest
+from sqlalchemy import Engine, event
 
 from nightfold import FitResult, FitTable, Model, Store, fit_curve, open_store
 from nightfold.errors import ChoiceNeeded, FitError, NotFound
-from nightfold.fits.scanfit import fingerprint_model
+from nightfold.fits.scanfit import count_left_out, fingerprint_model
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
 
@@ -192,6 +193,52 @@ def test_slices_over_the_other_axis(store: Store) -> None:
     assert center.stderr[1] == pytest.approx(alone.estimates["center"].stderr, rel=1e-6)
     assert [kept.slice for kept in store.fits("map")] == list(table.slices)
     assert all(kept.shots == 21 and not kept.stale for kept in store.fits("map"))
+
+
+def test_shots_set_aside_count_to_the_slice_of_their_values(store: Store) -> None:
+    first, second = [f"map-{row}" for row in range(21)], ["map-25", "map-30"]
+    store.set_aside([*first, *second], "shutter stuck")
+    table = store.fit("map", "lorentzian", observable="atom_number", along="coil_current")
+    assert isinstance(table, FitTable)
+    assert [where["hold_time"] for where in table.slices] == [200.0, 300.0]
+    kept = [(fit.slice["hold_time"], fit.shots, fit.set_aside) for fit in store.fits("map")]
+    assert kept == [(200.0, 19, 2), (300.0, 21, 0)]
+    counts = count_left_out(store.scan("map"), "coil_current")
+    assert counts == [({"hold_time": 200.0}, 2), ({"hold_time": 300.0}, 0)]
+
+
+def test_a_wrong_setting_that_is_set_aside_cuts_no_slices(tmp_path: Path) -> None:
+    made = records("map", (100.0, 200.0), swept=("coil_current", "hold_time"))
+    made[3]["parameters"]["hold_time"]["value"] = 1e12  # would merge 100 and 200 as jitter
+    made[4]["parameters"]["hold_time"]["value"] += 1e-9
+    with open_store(tmp_path / "w.sqlite", create=True) as opened:
+        opened.take(made)
+        opened.set_aside(["map-3", "map-4"], "wrong")
+        opened.fit("map", "lorentzian", observable="atom_number", along="coil_current")
+        kept = [(fit.slice["hold_time"], fit.shots, fit.set_aside) for fit in opened.fits("map")]
+    assert kept == [(100.0, 19, 1), (200.0, 21, 0)]
+
+
+def test_many_fits_are_listed_with_few_statements(store: Store) -> None:
+    def statements() -> int:
+        seen: list[str] = []
+
+        def note(_connection: Any, _cursor: Any, statement: str, *_: Any) -> None:
+            seen.append(statement)
+
+        event.listen(Engine, "before_cursor_execute", note)
+        try:
+            store.fits("map")
+        finally:
+            event.remove(Engine, "before_cursor_execute", note)
+        return len(seen)
+
+    store.fit("map", "lorentzian", observable="atom_number", along="coil_current")
+    few = statements()
+    for model in ("gaussian", "exponential"):
+        store.fit("map", model, observable="atom_number", along="coil_current")
+    assert len(store.fits("map")) == 9
+    assert statements() == few
 
 
 def test_along_a_parameter_that_follows_the_axis(store: Store) -> None:

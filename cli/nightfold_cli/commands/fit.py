@@ -74,12 +74,14 @@ def run(args: Namespace) -> int:
         observable = _observable(scan, args.observable)
         fits = [(model, _fit(store, scan, model, observable, args)) for model in args.models]
         if screen.json:
+            from nightfold.fits.scanfit import count_left_out
+
             along = args.along or scan.axes[0].parameter
-            aside = _aside(scan, along)
+            aside = count_left_out(scan, along)
             entries = [
-                _entry(name, observable, part, along, aside[place])
+                _entry(name, observable, part, along, _of_slice(aside, part.where))
                 for _, parts in fits
-                for place, part in enumerate(parts)
+                for part in parts
             ]
             screen.answer({"fits": entries})
             return 0
@@ -288,12 +290,9 @@ def _named(name: str, unit: str | None) -> str:
     return f"{name} ({unit})" if unit else name
 
 
-def _aside(scan: Scan, along: str) -> list[int]:
-    """Return how many shots of each slice are set aside."""
-    from nightfold.fits.scanfit import slice_rows
-
-    table = scan.table(set_aside=True)
-    return [int(table["set_aside"].to_numpy()[rows].sum()) for _, rows in slice_rows(scan, table, along)]
+def _of_slice(counts: Sequence[tuple[dict[str, Any], int]], where: dict[str, Any]) -> int:
+    """Return the count of the slice with these values."""
+    return next((count for values, count in counts if values == where), 0)
 
 
 def _entry(scan: str, observable: str, part: Slice, along: str, aside: int) -> dict[str, Any]:

@@ -3,29 +3,29 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Sequence
+from collections import defaultdict
+from collections.abc import Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass
 from datetime import datetime
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
-from sqlalchemy import Connection, Row, insert, select
+from sqlalchemy import Connection, Row, func, insert, select
 
 from nightfold import tables
 from nightfold.errors import FitError, NotFound
 from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult, FitWarning
-from nightfold.fits.scanfit import FitRequest, SliceFit, digest_data, fit_slices, slice_rows
+from nightfold.fits.scanfit import FitRequest, SliceFit, cut_scan, digest_data, fit_slices
 from nightfold.ledger.names import insert_row
+from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import scan_key
 from nightfold.scans.listing import find_scan
 from nightfold.scans.scan import Scan
 from nightfold.session import Session
 from nightfold.timestamps import from_us, now_us
 from nightfold.version import __version__
-
-if TYPE_CHECKING:
-    import pandas as pd
 
 LEVEL_68 = 0.6827
 LEVEL_95 = 0.95
@@ -114,23 +114,20 @@ def fit_scan(session: Session, scan: Scan, request: FitRequest, *, keep: bool) -
     """
     outcome, parts = fit_slices(scan, request)
     if keep:
-        left_out = scan.table(set_aside=True).query("set_aside")["shot_id"].tolist()
         with session.writing() as connection:
             for part in parts:
-                _keep(connection, scan, request, part, left_out)
+                _keep(connection, scan, request, part)
     return outcome
 
 
-def _keep(
-    connection: Connection, scan: Scan, request: FitRequest, part: SliceFit, left_out: Sequence[int]
-) -> None:
+def _keep(connection: Connection, scan: Scan, request: FitRequest, part: SliceFit) -> None:
     result, fit = part.result, tables.fit
     observable_id = _observable_id(connection, scan, request.observable)
     same = {
         "scan_id": scan.id,
         "observable_id": observable_id,
         "along": part.along,
-        "slice": json.dumps(part.where, ensure_ascii=False),
+        "slice": _slice_text(part.where),
         "model": result.model,
         "background": result.background,
     }
@@ -160,7 +157,7 @@ def _keep(
         "replaces": earlier.id if earlier is not None else None,
     }
     fit_id = insert_row(connection, fit, row)
-    connection.execute(insert(tables.fit_shot), _fit_shots(fit_id, part, left_out))
+    connection.execute(insert(tables.fit_shot), _fit_shots(fit_id, part))
     connection.execute(insert(tables.estimate), _estimates(fit_id, result))
     warnings = [
         {"fit_id": fit_id, "code": item.code, "message": item.message, "advisory": item.advisory}
@@ -170,7 +167,11 @@ def _keep(
         connection.execute(insert(tables.fit_warning), warnings)
 
 
-def _fit_shots(fit_id: int, part: SliceFit, left_out: Sequence[int]) -> list[dict[str, Any]]:
+def _slice_text(where: Mapping[str, Any]) -> str:
+    return json.dumps(where, ensure_ascii=False)
+
+
+def _fit_shots(fit_id: int, part: SliceFit) -> list[dict[str, Any]]:
     shot_ids = part.table["shot_id"].tolist()
     used = {int(row) for row in part.result.used}
     outliers = set(part.result.outliers)
@@ -178,7 +179,7 @@ def _fit_shots(fit_id: int, part: SliceFit, left_out: Sequence[int]) -> list[dic
         shot_id: "outlier" if row in outliers else "used" if row in used else "no value"
         for row, shot_id in enumerate(shot_ids)
     }
-    roles |= dict.fromkeys(left_out, "set aside")
+    roles |= dict.fromkeys(part.left_out, "set aside")
     return [{"fit_id": fit_id, "shot_id": shot_id, "role": role} for shot_id, role in roles.items()]
 
 
@@ -239,64 +240,87 @@ def list_fits(session: Session, scan: Scan | None) -> list[KeptFit]:
         query = query.where(fit.c.scan_id == scan.id)
     with session.reading() as connection:
         rows = list(connection.execute(query))
-        parts = {row.id: _parts(connection, row.id) for row in rows}
-    current = _current_digests(session, rows)
-    return [_make_kept(row, *parts[row.id], current.get(row.id)) for row in rows]
-
-
-def _parts(
-    connection: Connection, fit_id: int
-) -> tuple[dict[str, KeptEstimate], list[FitWarning], dict[str, int]]:
-    estimate, warning, role = tables.estimate, tables.fit_warning, tables.fit_shot
-    estimates = {
-        row.name: KeptEstimate(
-            _number(row.value),
-            _number(row.stderr),
-            row.unit,
-            (_number(row.low68), _number(row.high68)),
-            (_number(row.low95), _number(row.high95)),
-            bool(row.fixed),
-        )
-        for row in connection.execute(
-            select(estimate).where(estimate.c.fit_id == fit_id).order_by(estimate.c.position)
-        )
-    }
-    warnings = [
-        FitWarning(row.code, row.message, bool(row.advisory))
-        for row in connection.execute(
-            select(warning).where(warning.c.fit_id == fit_id).order_by(warning.c.code)
-        )
+        ids = [row.id for row in rows]
+        estimates, warnings = _read_estimates(connection, ids), _read_warnings(connection, ids)
+        counts = _count_roles(connection, ids)
+    digests = _current_digests(session, rows, scan)
+    return [
+        _make_kept(row, estimates[row.id], warnings[row.id], counts[row.id], digests.get(_data_of(row)))
+        for row in rows
     ]
-    counts: dict[str, int] = {}
-    for name in connection.execute(select(role.c.role).where(role.c.fit_id == fit_id)).scalars():
-        counts[name] = counts.get(name, 0) + 1
-    return estimates, warnings, counts
+
+
+def _read_estimates(connection: Connection, ids: Sequence[int]) -> dict[int, dict[str, KeptEstimate]]:
+    table = tables.estimate
+    found: dict[int, dict[str, KeptEstimate]] = defaultdict(dict)
+    for part in chunks(ids):
+        query = select(table).where(table.c.fit_id.in_(part)).order_by(table.c.fit_id, table.c.position)
+        for row in connection.execute(query):
+            found[row.fit_id][row.name] = KeptEstimate(
+                _number(row.value),
+                _number(row.stderr),
+                row.unit,
+                (_number(row.low68), _number(row.high68)),
+                (_number(row.low95), _number(row.high95)),
+                bool(row.fixed),
+            )
+    return found
+
+
+def _read_warnings(connection: Connection, ids: Sequence[int]) -> dict[int, list[FitWarning]]:
+    table = tables.fit_warning
+    found: dict[int, list[FitWarning]] = defaultdict(list)
+    for part in chunks(ids):
+        query = select(table).where(table.c.fit_id.in_(part)).order_by(table.c.fit_id, table.c.code)
+        for row in connection.execute(query):
+            found[row.fit_id].append(FitWarning(row.code, row.message, bool(row.advisory)))
+    return found
+
+
+def _count_roles(connection: Connection, ids: Sequence[int]) -> dict[int, dict[str, int]]:
+    table = tables.fit_shot
+    found: dict[int, dict[str, int]] = defaultdict(dict)
+    for part in chunks(ids):
+        query = (
+            select(table.c.fit_id, table.c.role, func.count().label("shots"))
+            .where(table.c.fit_id.in_(part))
+            .group_by(table.c.fit_id, table.c.role)
+        )
+        for row in connection.execute(query):
+            found[row.fit_id][row.role] = row.shots
+    return found
 
 
 def _number(value: float | None) -> float:
     return float("nan") if value is None else value
 
 
-def _current_digests(session: Session, rows: Sequence[Row[Any]]) -> dict[int, bytes]:
-    """Return the digest that each fit's data have today; none where the scan no longer has such a slice."""
-    digests: dict[int, bytes] = {}
-    scans: dict[int, tuple[Scan, pd.DataFrame]] = {}
+def _data_of(row: Row[Any]) -> tuple[int, str, str, str]:
+    """Return what says which data a fit rests on: scan, axis, observable and slice."""
+    return row.scan_id, row.along, row.observable, row.slice
+
+
+def _current_digests(
+    session: Session, rows: Sequence[Row[Any]], scan: Scan | None
+) -> dict[tuple[int, str, str, str], bytes]:
+    """Return the digests that the data of fits have today; none where the scan no longer has such a slice."""
+    wanted: dict[int, dict[str, set[tuple[str, str]]]] = defaultdict(lambda: defaultdict(set))
     for row in rows:
+        wanted[row.scan_id][row.along].add((row.observable, row.slice))
+    digests: dict[tuple[int, str, str, str], bytes] = {}
+    for scan_id, axes in wanted.items():
         try:
-            if row.scan_id not in scans:
-                scan = find_scan(session, row.scan_id)
-                scans[row.scan_id] = scan, scan.table()
-            scan, table = scans[row.scan_id]
-            chosen = table
-            where = json.loads(row.slice)
-            if where:
-                found = [rows for values, rows in slice_rows(scan, table, row.along) if values == where]
-                if not found:
-                    continue
-                chosen = table.iloc[found[0]]
-            digests[row.id] = digest_data(chosen, row.along, row.observable)
-        except (NotFound, KeyError):
-            continue  # the scan, axis or observable is gone: the fit is stale
+            found = scan or find_scan(session, scan_id)
+        except NotFound:
+            continue  # it has no shots any more: its fits are stale
+        everything = found.table(set_aside=True)
+        for along, data in axes.items():
+            table, slices = cut_scan(found, everything, along)
+            places = {_slice_text(part.where): part.rows for part in slices}
+            for observable, where in data:
+                with suppress(KeyError):  # slice, axis or observable is gone: the fit is stale
+                    rows_now = table.iloc[places[where]]
+                    digests[scan_id, along, observable, where] = digest_data(rows_now, along, observable)
     return digests
 
 

@@ -15,7 +15,7 @@ from nightfold.fits.curve import fit_curve
 from nightfold.fits.many import FitTable, fit_many
 from nightfold.fits.result import FitResult
 from nightfold.ledger.selecting import column_name, near_miss
-from nightfold.scans.columns import encode
+from nightfold.scans.columns import Column, encode, is_missing
 from nightfold.settings import digest_content
 
 if TYPE_CHECKING:
@@ -67,12 +67,15 @@ class SliceFit:
     result : FitResult
     table : DataFrame
         The slice's shots, as `Scan.table`; `result.used` counts in its rows.
+    left_out : tuple of int
+        Ids of the slice's shots that are set aside.
     """
 
     where: dict[str, Any]
     along: str
     result: FitResult
     table: pd.DataFrame
+    left_out: tuple[int, ...]
 
     def digest(self, observable: str) -> bytes:
         """Return a digest of the data: uids, points, values and their stderr."""
@@ -96,10 +99,9 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
     """
     along = choose_along(scan, request.along)
     observable = choose_observable(scan, request.observable)
-    table = scan.table()
+    table, slices = cut_scan(scan, scan.table(set_aside=True), along)
     units: dict[str, Any] = {"unit_x": scan.units.get(along, ""), "unit_y": scan.units.get(observable, "")}
     x = _numbers(scan, table, along)
-    slices = slice_rows(scan, table, along)
     if len(scan.axes) < 2:
         result = fit_curve(
             x,
@@ -109,10 +111,10 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
             **request.options,
             **units,
         )
-        return result, [SliceFit({}, along, result, table)]
+        return result, [SliceFit({}, along, result, table, slices[0].left_out)]
     values = np.full((len(slices), len(table)), np.nan)
-    for number, (_, rows) in enumerate(slices):
-        values[number, rows] = table[column_name(observable)].to_numpy()[rows]
+    for number, part in enumerate(slices):
+        values[number, part.rows] = table[column_name(observable)].to_numpy()[part.rows]
     stderr = _stderr(table, observable, request)
     fits = fit_many(
         x,
@@ -123,10 +125,16 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
         **request.options,
         **units,
     )
-    fits = replace(fits, slices=tuple(where for where, _ in slices))
+    fits = replace(fits, slices=tuple(part.where for part in slices))
     parts = [
-        SliceFit(where, along, _within(fits.result(number), rows), table.iloc[rows].reset_index(drop=True))
-        for number, (where, rows) in enumerate(slices)
+        SliceFit(
+            part.where,
+            along,
+            _within(fits.result(number), part.rows),
+            table.iloc[part.rows].reset_index(drop=True),
+            part.left_out,
+        )
+        for number, part in enumerate(slices)
     ]
     return fits, parts
 
@@ -172,21 +180,87 @@ def choose_observable(scan: Scan, observable: str) -> str:
     return observable
 
 
-def slice_rows(scan: Scan, table: pd.DataFrame, along: str) -> list[tuple[dict[str, Any], NDArray[np.intp]]]:
-    """Return the slices of a scan: values of the axes not fitted along, and the rows of the table."""
+@dataclass(frozen=True)
+class ScanSlice:
+    """One slice of a scan.
+
+    Attributes
+    ----------
+    where : dict
+        Values of the axes not fitted along.
+    rows : (n,) int array
+        Its rows in the table of the scan's shots in results.
+    left_out : tuple of int
+        Ids of its shots that are set aside.
+    """
+
+    where: dict[str, Any]
+    rows: NDArray[np.intp]
+    left_out: tuple[int, ...]
+
+
+def cut_scan(scan: Scan, everything: pd.DataFrame, along: str) -> tuple[pd.DataFrame, list[ScanSlice]]:
+    """Return the shots in results, and the slices of the scan across the axis fitted along.
+
+    `everything` is the scan's table with the shots set aside. The shots in results alone say which slices
+    there are. Those set aside count to the slice of the same values, and to none where there is no such
+    slice: a setting may be what was wrong with them.
+    """
+    aside = everything["set_aside"].to_numpy(dtype=bool)
+    table = everything[~aside].reset_index(drop=True)
     leader = scan.followers.get(along, along)
     others = [axis.parameter for axis in scan.axes if axis.parameter != leader]
-    columns = [encode(table[column_name(name)].tolist()) for name in others]
-    if not columns:
-        return [({}, np.arange(len(table)))]
+    left_ids = everything["shot_id"].to_numpy()[aside]
+    if not others:
+        return table, [ScanSlice({}, np.arange(len(table)), tuple(left_ids.tolist()))]
+    settings = [everything[column_name(name)].to_numpy() for name in others]
+    columns = [encode(values[~aside].tolist()) for values in settings]
     codes = np.stack([column.codes for column in columns], axis=1)
-    found = []
+    left = np.stack(
+        [
+            _codes_of(values[aside].tolist(), values[~aside].tolist(), column)
+            for values, column in zip(settings, columns, strict=True)
+        ],
+        axis=1,
+    )
+    slices = []
     for key in np.unique(codes[(codes >= 0).all(axis=1)], axis=0):
         where = {
             name: _plain(column.values[code]) for name, column, code in zip(others, columns, key, strict=True)
         }
-        found.append((where, np.flatnonzero((codes == key).all(axis=1))))
-    return found
+        rows, ids = np.flatnonzero((codes == key).all(axis=1)), left_ids[(left == key).all(axis=1)]
+        slices.append(ScanSlice(where, rows, tuple(ids.tolist())))
+    return table, slices
+
+
+def count_left_out(scan: Scan, along: str | None = None) -> list[tuple[dict[str, Any], int]]:
+    """Return how many shots of each slice are set aside, beside the values of the slice.
+
+    Raises
+    ------
+    ChoiceNeeded, NotFound, FitError
+        As in `Store.fit`.
+    """
+    _, slices = cut_scan(scan, scan.table(set_aside=True), choose_along(scan, along))
+    return [(part.where, len(part.left_out)) for part in slices]
+
+
+def _codes_of(values: Sequence[Any], known: Sequence[Any], column: Column) -> NDArray[np.intp]:
+    """Return the codes that values have in a column made of others; -1 for those that are not in it."""
+    codes = np.full(len(values), -1, dtype=np.intp)
+    for row, value in enumerate(values):
+        if is_missing(value):
+            continue
+        if not column.numeric:
+            found = [code for code, other in enumerate(column.values.tolist()) if other == value]
+        elif isinstance(value, (str, bool)):
+            found = []
+        else:
+            near = np.abs(np.array(known, dtype=np.float64) - value)
+            place = int(np.nanargmin(near))
+            found = [column.codes[place]] if near[place] <= column.tolerance else []
+        codes[row] = found[0] if found else -1
+    return codes
 
 
 def _plain(value: Any) -> Any:
