@@ -155,11 +155,9 @@ class Store:
 
     def cards(self) -> dict[str, MachineCard]:
         """Return the card in force of each machine that has one."""
-        from nightfold.card import parse_card
-
         with self._session.reading() as connection:
             texts = names.newest_cards(connection)
-        cards = [parse_card(text, source="the card in the store") for text in texts.values()]
+        cards = [names.stored_card(text) for text in texts.values()]
         return {card.machine: card for card in cards}
 
     def machines(self) -> list[str]:

@@ -7,6 +7,7 @@ rollback (SQLite gives the same ids out again). Nothing here is written before a
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import lru_cache
 from typing import TYPE_CHECKING, Any
 
 from sqlalchemy import Connection, Table, func, insert, select, update
@@ -217,7 +218,7 @@ def read_names(connection: Connection) -> dict[str, MachineNames]:
         row.id: MachineNames(row.id, row.name, row.zone) for row in connection.execute(select(tables.machine))
     }
     for machine_id, toml in newest_cards(connection).items():
-        machines[machine_id].card = parse_card(toml, source="the card in the store")
+        machines[machine_id].card = stored_card(toml)
     for row in connection.execute(select(tables.parameter)):
         entry = _card_entry(machines[row.machine_id], "parameters", row.name)
         known = Known(row.kind, row.unit, entry if entry is not None else row.unit, row.id)
@@ -242,6 +243,12 @@ def _card_entry(machine: MachineNames, kind: str, name: str) -> str | None:
         return None
     entry = machine.card.observable(name) if kind == "observables" else machine.card.parameters.get(name)
     return entry.unit if entry else None
+
+
+@lru_cache(maxsize=32)
+def stored_card(toml: str) -> MachineCard:
+    """Return a card from its text in the store; the same text is read once."""
+    return parse_card(toml, source="the card in the store")
 
 
 def newest_cards(connection: Connection) -> dict[int, str]:

@@ -9,8 +9,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection, select
 
 from nightfold import tables
-from nightfold.card import parse_card
-from nightfold.ledger.names import newest_cards
+from nightfold.ledger.names import newest_cards, stored_card
 from nightfold.ledger.selecting import set_aside_now
 from nightfold.timestamps import local_times, nights_of
 
@@ -48,7 +47,7 @@ def night_table(connection: Connection) -> pd.DataFrame:
         )
         if frame.empty:
             continue
-        card = parse_card(cards[machine.id], source="card") if machine.id in cards else None
+        card = stored_card(cards[machine.id]) if machine.id in cards else None
         started = frame["us"].to_numpy(dtype=np.int64)
         nights = (
             nights_of(started, machine.zone, card.night_boundary)

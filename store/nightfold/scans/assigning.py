@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 from sqlalchemy import Connection
 
 from nightfold.ledger.checking import CheckedShot
-from nightfold.ledger.names import newest_cards
+from nightfold.ledger.names import newest_cards, stored_card
 from nightfold.scans import refolding, rounds
 from nightfold.scans.keeping import settle_axes
 from nightfold.scans.rounds import Round
@@ -77,11 +77,7 @@ class ScanFolder:
     def rejoin_us(self, connection: Connection, shot: CheckedShot) -> int:
         """Return for how long after its last shot a label still resumes its round."""
         if self._rejoin_us is None:
-            from nightfold.card import parse_card
-
-            cards = {
-                machine: parse_card(toml, source="card") for machine, toml in newest_cards(connection).items()
-            }
+            cards = {machine: stored_card(toml) for machine, toml in newest_cards(connection).items()}
             self._rejoin_us = {machine: int(card.rejoin_within_s * 1e6) for machine, card in cards.items()}
         return self._rejoin_us.get(shot.machine.id, int(DEFAULT_REJOIN_S * 1e6))
 

@@ -9,9 +9,9 @@ from typing import TYPE_CHECKING, Any
 from sqlalchemy import Connection, Table, select
 
 from nightfold import tables
-from nightfold.card import MachineCard, parse_card
+from nightfold.card import MachineCard
 from nightfold.ledger.columns import Named, reading_columns, setting_columns
-from nightfold.ledger.names import newest_cards
+from nightfold.ledger.names import newest_cards, stored_card
 from nightfold.ledger.selecting import Selection, column_name, named_by_id, select_shots, set_aside_now
 from nightfold.scans.axes import Axis, describe_axis
 from nightfold.timestamps import utc_times
@@ -79,7 +79,7 @@ def read_details(connection: Connection, scan_id: int, machine_id: int) -> ScanD
 
 def _card_of(connection: Connection, machine_id: int) -> MachineCard | None:
     text = newest_cards(connection).get(machine_id)
-    return parse_card(text, source="the card in the store") if text is not None else None
+    return stored_card(text) if text is not None else None
 
 
 def _entry(card: MachineCard, name: str) -> str:
