@@ -366,6 +366,14 @@ def test_scan(heron: Path, run: Run) -> None:
     assert len(lines) == 31
 
 
+@pytest.mark.parametrize("command", ["shots", "scans"])
+def test_nothing_like_that_is_not_nothing_yet(command: str, heron: Path, run: Run) -> None:
+    none = run("--store", heron / "heron.sqlite", command, "--since", "2031-01-01")
+    assert f"no {command} like that" in none.err
+    run("new")
+    assert f"no {command} yet" in run(command).err
+
+
 def test_edits_are_a_list(heron: Path, run: Run) -> None:
     assert isinstance(decoded(run("--store", heron / "heron.sqlite", "edits", "--json"))["edits"], list)
 

@@ -30,6 +30,8 @@ EXAMPLES = (
 _ON_SCREEN = 20
 _TREND = 12
 _NARROW = 90
+_NONE = "no scans like that; without options all are listed"
+_NONE_YET = "no scans yet; 'nightfold take FILE…' takes shots in"
 _PLAIN_HEIGHTS = "_.-=+*#%"
 
 
@@ -64,20 +66,23 @@ def run(args: Namespace) -> int:
         listed = found[-last:] if last else []
         names = {scan.id: name_of(scan, ambiguous) for scan in listed}
         times = local_times(store)
+        empty = _NONE if every else _NONE_YET
         if screen.json:
             screen.answer({"scans": [entry(scan, names[scan.id]) for scan in listed]})
         elif screen.terminal:
-            _draw(screen, listed, names, _nights(store, listed))
+            _draw(screen, listed, names, _nights(store, listed), empty)
             if listed:
                 screen.note(times.note(scan.machine for scan in listed))
             if len(found) > len(listed):
                 screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
         else:
-            _tabulate(screen, listed, names, times)
+            _tabulate(screen, listed, names, times, empty)
     return 0
 
 
-def _draw(screen: Screen, scans: Sequence[Scan], names: Mapping[int, str], nights: Sequence[date]) -> None:
+def _draw(
+    screen: Screen, scans: Sequence[Scan], names: Mapping[int, str], nights: Sequence[date], empty: str
+) -> None:
     """Draw two or more lines a scan, night by night."""
     trends = {scan.main_observable for scan in scans if scan.main_observable}
     shared = trends.copy().pop() if len(trends) == 1 else None
@@ -109,7 +114,7 @@ def _draw(screen: Screen, scans: Sequence[Scan], names: Mapping[int, str], night
                 Cell.of((trend, "" if shared else scan.main_observable or "")),
             ]
         )
-    screen.table(columns, rows, empty="no scans yet; 'nightfold take FILE…' takes shots in", spaced=True)
+    screen.table(columns, rows, empty=empty, spaced=True)
 
 
 def _nights(store: Store, scans: Sequence[Scan]) -> list[date]:
@@ -149,7 +154,9 @@ def _stream(scan: Scan) -> str:
     return f"{scan.machine}: {scan.sequence}"
 
 
-def _tabulate(screen: Screen, scans: Sequence[Scan], named: Mapping[int, str], times: LocalTimes) -> None:
+def _tabulate(
+    screen: Screen, scans: Sequence[Scan], named: Mapping[int, str], times: LocalTimes, empty: str
+) -> None:
     """Write one line a scan, for programs."""
     names = (
         *("id", "scan", "machine", "sequence", "axes", "points", "repeats", "shots", "set_aside"),
@@ -172,4 +179,4 @@ def _tabulate(screen: Screen, scans: Sequence[Scan], named: Mapping[int, str], t
         ]
         for scan in scans
     ]
-    screen.table([Column(name) for name in names], rows, empty="no scans")
+    screen.table([Column(name) for name in names], rows, empty=empty)

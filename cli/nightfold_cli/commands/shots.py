@@ -30,6 +30,8 @@ EXAMPLES = (
 _ON_SCREEN = 40
 _DIGEST = re.compile("[0-9a-f]{32}")
 _DIGITS = 12
+_NONE = "no shots like that; without options all are listed"
+_NONE_YET = "no shots yet; 'nightfold take FILE…' takes some in"
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -97,7 +99,14 @@ def _list(screen: Screen, store: Store, args: Namespace, times: LocalTimes) -> N
     cut = not args.limit and screen.terminal and len(rows) > _ON_SCREEN
     asked = {name: table.attrs["units"].get(name, "") for name in (*args.parameter, *args.observable)}
     several = args.machine is None and len(store.machines()) > 1
-    _draw(screen, rows[-_ON_SCREEN:] if cut else rows, asked, several, times)
+    _draw(
+        screen,
+        rows[-_ON_SCREEN:] if cut else rows,
+        asked,
+        several,
+        times,
+        _NONE if store.machines() else _NONE_YET,
+    )
     if cut:
         screen.note(f"the last {_ON_SCREEN} shots; --limit N shows more")
 
@@ -132,7 +141,12 @@ def _with_machines(
 
 
 def _draw(
-    screen: Screen, rows: list[dict[str, Any]], asked: dict[str, str], several: bool, times: LocalTimes
+    screen: Screen,
+    rows: list[dict[str, Any]],
+    asked: dict[str, str],
+    several: bool,
+    times: LocalTimes,
+    empty: str,
 ) -> None:
     """Draw a line a shot."""
     moments = [times.local(row["started"], row["machine"]) for row in rows]
@@ -161,7 +175,7 @@ def _draw(
             zip(rows, compact(moments, seconds=True), moments, strict=True)
         )
     ]
-    screen.table(columns, lines, empty="no shots; 'nightfold take FILE…' takes some in")
+    screen.table(columns, lines, empty=empty)
     if lines:
         screen.note(times.note(row["machine"] for row in rows))
 
