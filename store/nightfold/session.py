@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import os
 import sqlite3
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -150,12 +151,22 @@ class Session:
             return
         mode = "DELETE" if network_file_system(path.absolute().parent) else "WAL"
         plain = self.engine.raw_connection()
+        give_up = time.monotonic() + _WAIT_S
         try:
-            plain.cursor().execute(f"PRAGMA journal_mode={mode}")
-        except sqlite3.OperationalError as problem:
-            raise StoreBusy(f"store {self.place}: somebody else is using it ({problem})") from problem
+            while not self._set_journal(plain.cursor(), mode, last=time.monotonic() > give_up):
+                time.sleep(0.02)
         finally:
             plain.close()
+
+    def _set_journal(self, cursor: Any, mode: str, *, last: bool) -> bool:
+        """Change the journal; False if somebody else is using the file, for SQLite does not wait here by itself."""
+        try:
+            cursor.execute(f"PRAGMA journal_mode={mode}")
+        except sqlite3.OperationalError as problem:
+            if last or "locked" not in str(problem):
+                raise StoreBusy(f"store {self.place}: somebody else is using it ({problem})") from problem
+            return False
+        return True
 
     def close(self) -> None:
         """Give back every connection."""
