@@ -200,9 +200,7 @@ def _sighting(true: TrueEdit, edits: Sequence[dict[str, Any]]) -> Cell:
 
 
 def _go_on(screen: Screen, where: Path, found: Sequence[Found], elapsed_s: float) -> None:
-    """Name the commands to go on with."""
-    if not screen.terminal:
-        return
+    """Name the commands to go on with; on stderr where the answer goes into a pipe."""
     key = next((item.scan for item in found if item.scan and item.truth.along is None), "1")
     truth = next(item.truth for item in found if item.scan == key)
     store = f"nightfold --store {where}"
@@ -214,7 +212,10 @@ def _go_on(screen: Screen, where: Path, found: Sequence[Found], elapsed_s: float
         f"fit {key} {truth.model} -o {truth.observable}",
         "edits",
     ):
-        screen.command(f"{store} {command}")
+        if screen.terminal:
+            screen.command(f"{store} {command}")
+        else:
+            screen.say(f"go on with: {store} {command}")
 
 
 def _entry(
