@@ -190,10 +190,9 @@ def select_shots(
         .where(where)
     )  # fmt: skip
     if selection.limit is None:
-        rows = list(connection.execute(query.order_by(shot.c.started_us, shot.c.id)))
-        return rows, where
+        return list(connection.execute(query.order_by(shot.c.started_us, shot.c.id)).all()), where
     newest = query.order_by(shot.c.started_us.desc(), shot.c.id.desc()).limit(selection.limit)
-    return list(connection.execute(newest))[::-1], None
+    return list(connection.execute(newest).all())[::-1], None
 
 
 def scan_key(scan_id: int | None, label: str | None, number: int | None) -> str | None:
