@@ -24,7 +24,7 @@ from sqlalchemy import (
     text,
 )
 
-REVISION = "0001"
+REVISION = "0002"
 
 metadata = MetaData(
     naming_convention={
@@ -64,6 +64,16 @@ machine = Table(
     Column("id", Integer, primary_key=True),
     Column("name", Text, nullable=False, unique=True),
     Column("zone", Text, nullable=False),
+)
+
+machine_alias = Table(
+    "machine_alias",
+    metadata,
+    Column("name", Text, primary_key=True),
+    _to("machine_id", "machine"),
+    Column("by", Text),
+    Column("reason", Text, nullable=False),
+    Column("at_us", BigInteger, nullable=False),
 )
 
 card = Table(
@@ -222,6 +232,47 @@ shot_value = Table(
     sqlite_with_rowid=False,
 )
 
+correction = Table(
+    "correction",
+    metadata,
+    _id(),
+    _to("shot_id", "shot"),
+    _to("parameter_id", "parameter"),
+    Column("old_num", Double),
+    Column("old_exact", Text),
+    Column("new_num", Double),
+    Column("new_exact", Text),
+    Column("old_digest", LargeBinary, nullable=False),
+    Column("reason", Text, nullable=False),
+    Column("by", Text),
+    Column("at_us", BigInteger, nullable=False),
+    Index(None, "shot_id"),
+)
+
+arrangement = Table(
+    "arrangement",
+    metadata,
+    Column("id", Integer, primary_key=True),
+    Column("kind", Text, nullable=False),
+    Column("reason", Text),
+    Column("by", Text),
+    Column("at_us", BigInteger, nullable=False),
+    Column("undone_us", BigInteger),
+    Column("undone_by", Text),
+    CheckConstraint("kind IN ('join', 'split')", name="kind"),
+)
+
+arranged = Table(
+    "arranged",
+    metadata,
+    _to("arrangement_id", "arrangement", primary_key=True),
+    _to("shot_id", "shot", primary_key=True),
+    Column("from_scan", Integer, nullable=False),
+    Column("to_scan", Integer, nullable=False),
+    Index(None, "shot_id"),
+    sqlite_with_rowid=False,
+)
+
 derivation = Table(
     "derivation",
     metadata,
@@ -356,4 +407,25 @@ fit_warning = Table(
     Column("code", Text, primary_key=True),
     Column("message", Text, nullable=False),
     Column("advisory", Boolean(create_constraint=False), nullable=False),
+)
+
+sensor = Table(
+    "sensor",
+    metadata,
+    Column("id", Integer, primary_key=True),
+    _to("machine_id", "machine"),
+    Column("name", Text, nullable=False),
+    Column("unit", Text),
+    UniqueConstraint("machine_id", "name"),
+)
+
+sensor_hour = Table(
+    "sensor_hour",
+    metadata,
+    _to("sensor_id", "sensor", primary_key=True),
+    Column("hour", Integer, primary_key=True),
+    Column("n", Integer, nullable=False),
+    Column("first_us", BigInteger, nullable=False),
+    Column("last_us", BigInteger, nullable=False),
+    Column("readings", LargeBinary, nullable=False),
 )

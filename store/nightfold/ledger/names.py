@@ -263,6 +263,14 @@ def newest_cards(connection: Connection) -> dict[int, str]:
     return {row.machine_id: row.toml for row in connection.execute(rows)}
 
 
+def cards_in_force(connection: Connection) -> dict[str, MachineCard]:
+    """Return the card in force of each machine that has one, by the machine's name."""
+    machines = {row.id: row.name for row in connection.execute(select(tables.machine))}
+    return {
+        machines[machine_id]: stored_card(toml) for machine_id, toml in newest_cards(connection).items()
+    }
+
+
 def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: int) -> None:
     """Make a card the one in force; parameters and observables without a unit take the card's.
 

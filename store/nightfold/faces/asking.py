@@ -1,0 +1,158 @@
+"""Reading: shots, names, nights, edits."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from datetime import datetime
+from typing import TYPE_CHECKING, Any
+
+from sqlalchemy import select
+
+from nightfold import tables
+from nightfold.faces.face import Face
+from nightfold.ledger import edits, names, nightly, selecting
+from nightfold.ledger.shot import ShotView, view_shot
+from nightfold.timestamps import utc_times
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from nightfold.card import MachineCard
+
+
+class Asking(Face):
+    """Reading shots and what hangs on them."""
+
+    def cards(self) -> dict[str, MachineCard]:
+        """Return the card in force of each machine that has one."""
+        with self._session.reading() as connection:
+            return names.cards_in_force(connection)
+
+    def machines(self) -> list[str]:
+        """Return the names of the machines, sorted."""
+        with self._session.reading() as connection:
+            return sorted(connection.execute(select(tables.machine.c.name)).scalars())
+
+    def zone(self, machine: str) -> str:
+        """Return the time zone in which a machine's times are shown."""
+        with self._session.reading() as connection:
+            return str(selecting.find_machine(connection, machine).zone)
+
+    def shots(
+        self,
+        parameters: Sequence[str] = (),
+        observables: Sequence[str] = (),
+        *,
+        machine: str | None = None,
+        sequence: str | None = None,
+        scan: int | str | None = None,
+        since: datetime | str | None = None,
+        until: datetime | str | None = None,
+        set_aside: bool = False,
+        limit: int | None = None,
+    ) -> pd.DataFrame:
+        """Return shots in time order, a row each.
+
+        Parameters
+        ----------
+        parameters, observables : sequence of str
+            A column each; ``<observable>_stderr`` gives the standard uncertainty.
+        machine, sequence, scan, since, until
+            Narrow the choice; without any, all shots. `since` is included, `until` is not.
+        set_aside : bool
+            Include shots set aside.
+        limit : int, optional
+            Only the newest so many.
+
+        Returns
+        -------
+        DataFrame
+            ``uid``, ``started`` (UTC), ``sequence``, ``scan``, then what was asked for; units in ``attrs["units"]``.
+
+        Raises
+        ------
+        NotFound
+            If a machine, sequence, scan, parameter or observable is not in the store.
+        ChoiceNeeded
+            If several machines have a name in different units.
+        """
+        from nightfold.scans.listing import find_scan
+
+        parameters, observables = _listed(parameters), _listed(observables)
+        scan_id = None if scan is None else find_scan(self._session, scan).id
+        chosen = selecting.Selection(machine, sequence, scan_id, since, until, set_aside, limit)
+        with self._session.reading() as connection:
+            return selecting.read_table(connection, chosen, parameters, observables)
+
+    def shot(self, uid: str) -> ShotView:
+        """Return everything of one shot, by its uid or the beginning of it.
+
+        Raises
+        ------
+        NotFound
+        """
+        with self._session.reading() as connection:
+            return view_shot(connection, uid)
+
+    def nights(self) -> pd.DataFrame:
+        """Return a row a night and machine.
+
+        Columns: ``night`` (date of its evening), ``machine``, ``first``, ``last`` (local), ``shots``, ``set_aside``,
+        ``references``, ``scans`` (counts), ``sequences``.
+        """
+        with self._session.reading() as connection:
+            return nightly.night_table(connection)
+
+    def parameters(self, machine: str | None = None) -> pd.DataFrame:
+        """Return the parameters known: machine, name, kind, unit."""
+        return self._named(tables.parameter, machine)
+
+    def observables(self, machine: str | None = None) -> pd.DataFrame:
+        """Return the observables known: machine, name, unit."""
+        return self._named(tables.observable, machine)
+
+    def _named(self, table: Any, machine: str | None) -> pd.DataFrame:
+        import pandas as pd
+
+        with self._session.reading() as connection:
+            query = select(tables.machine.c.name.label("machine"), table).join(
+                tables.machine, tables.machine.c.id == table.c.machine_id
+            )
+            if machine is not None:
+                query = query.where(tables.machine.c.id == selecting.find_machine(connection, machine).id)
+            rows = connection.execute(query.order_by(tables.machine.c.name, table.c.name)).mappings().all()
+        columns = ["machine", "name", *(["kind"] if "kind" in table.c else []), "unit"]
+        return pd.DataFrame([dict(row) for row in rows], columns=columns)
+
+    def edits(
+        self,
+        since: datetime | str | None = None,
+        until: datetime | str | None = None,
+        *,
+        machine: str | None = None,
+    ) -> pd.DataFrame:
+        """Return the parameters that a person changed: at (UTC), parameter, old, new, sequence.
+
+        A swept parameter is not edited, and the same change seen in several sequences is one edit. ``at`` is the first
+        shot that shows the new value.
+        """
+        import numpy as np
+        import pandas as pd
+
+        with self._session.reading() as connection:
+            found = edits.find_edits(connection, since, until, machine)
+        frame = pd.DataFrame(
+            {
+                "at": utc_times(np.array([edit.at_us for edit in found], dtype=np.int64)),
+                "parameter": [edit.parameter for edit in found],
+                "old": pd.Series([edit.old for edit in found], dtype=object),
+                "new": pd.Series([edit.new for edit in found], dtype=object),
+                "sequence": [edit.sequence for edit in found],
+            }
+        )
+        frame.attrs["units"] = {edit.parameter: edit.unit for edit in found}
+        return frame
+
+
+def _listed(names: Sequence[str]) -> Sequence[str]:
+    return (names,) if isinstance(names, str) else tuple(names)

@@ -1,0 +1,99 @@
+"""Handing over: the machine card, records, files."""
+
+from __future__ import annotations
+
+import copy
+from collections.abc import Callable, Iterable, Iterator, Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from nightfold.faces.face import Face, Where
+from nightfold.ledger import names
+from nightfold.ledger.outcome import Incoming, Intake
+from nightfold.ledger.sources import SourceLog
+from nightfold.timestamps import now_us
+
+if TYPE_CHECKING:
+    from nightfold.card import MachineCard
+    from nightfold.intake.csvcolumns import CsvColumns
+
+
+class Taking(Face):
+    """Handing over records and the machine card."""
+
+    def use_card(self, path: Where) -> MachineCard:
+        """Read a machine card, check it against the store and make it the one in force.
+
+        Raises
+        ------
+        CardError
+            If the card cannot be read, or contradicts what is stored.
+        """
+        from nightfold.card import read_card
+
+        card = read_card(Path(path))
+        self._writer.forget()
+        known = names.Names()
+        with self._session.writing() as connection:
+            known.load(connection)
+            names.keep_card(connection, known, card, now_us())
+        return card
+
+    def take(
+        self, records: Iterable[Mapping[str, Any]], *, progress: Callable[[int], None] | None = None
+    ) -> Intake:
+        """Take shot records and return how many were new, known, amended, and which were refused.
+
+        Parameters
+        ----------
+        records : iterable of mappings
+            Shot records, format 1 (docs/shot-record.md).
+        progress : callable, optional
+            Called now and then with the number of records taken.
+
+        Notes
+        -----
+        Records are taken in batches, each one transaction: one by one from an iterator that makes us wait for each
+        (so that a shot is safe as soon as it is handed over), up to 500 from one that does not. Handing the same
+        records over again is harmless.
+        """
+        stream = (
+            Incoming(record, "records", number, number) for number, record in enumerate(_own(records), 1)
+        )
+        return self._writer.take(stream, progress=progress)
+
+    def take_file(
+        self,
+        path: Where,
+        *,
+        columns: CsvColumns | None = None,
+        progress: Callable[[int], None] | None = None,
+    ) -> Intake:
+        """Take a file of JSON lines or CSV; `progress` is called with the number of bytes read.
+
+        Raises
+        ------
+        NotFound, RecordError
+            If there is no such file, or a CSV header cannot be understood.
+        """
+        from nightfold.intake.files import read_file
+
+        where = Path(path)
+        with self._session.reading() as connection:
+            cards = names.cards_in_force(connection)
+        named = columns.machine if columns else None
+        card = cards.get(named) if named else next(iter(cards.values())) if len(cards) == 1 else None
+        records = read_file(where, columns=columns, card=card)
+        return self._writer.take(records, SourceLog(where), progress)
+
+
+def _own(records: Iterable[Mapping[str, Any]]) -> Iterator[Any]:
+    """Yield the records; those of a generator as copies, for it may go on to change and reuse what it gave."""
+    if isinstance(records, (Mapping, str, bytes)):  # it would be taken apart key by key
+        raise TypeError(
+            f"take: found one {type(records).__name__}, wanted an iterable of records such as [record]"
+        )
+    if isinstance(records, (list, tuple)):
+        yield from records
+    else:
+        yield from map(copy.deepcopy, records)
