@@ -266,9 +266,7 @@ def newest_cards(connection: Connection) -> dict[int, str]:
 def cards_in_force(connection: Connection) -> dict[str, MachineCard]:
     """Return the card in force of each machine that has one, by the machine's name."""
     machines = {row.id: row.name for row in connection.execute(select(tables.machine))}
-    return {
-        machines[machine_id]: stored_card(toml) for machine_id, toml in newest_cards(connection).items()
-    }
+    return {machines[machine_id]: stored_card(toml) for machine_id, toml in newest_cards(connection).items()}
 
 
 def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: int) -> None:
