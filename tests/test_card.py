@@ -172,6 +172,18 @@ def test_names_are_brought_into_one_form() -> None:
         parse_card('machine = "a"\n[parameters."cafe\u0301"]\n[observables."caf\u00e9"]')
 
 
+def test_sensors_are_named_with_unit_range_and_description() -> None:
+    card = parse_card(
+        'machine = "a"\n[sensors.room_temperature]\nunit = "degC"\nrange = [19, 23]\ndescription = "beside"'
+    )
+    assert card.sensors == {
+        "room_temperature": NamedQuantity("room_temperature", "degC", 19.0, 23.0, "beside", "number")
+    }
+    for kind, other in (("parameters", "a parameter"), ("observables", "an observable")):
+        with pytest.raises(CardError, match=f"card:4: sensors.x: found a name that is also {other}"):
+            parse_card(f'machine = "a"\n[{kind}.x]\nunit = "A"\n[sensors.x]')
+
+
 def test_a_file_with_byte_order_mark_and_windows_line_ends(tmp_path: Path) -> None:
     path = tmp_path / "heron.toml"
     path.write_bytes(b"\xef\xbb\xbf" + FULL.replace("\n", "\r\n").encode())
@@ -213,10 +225,11 @@ def test_the_example_in_the_docs_is_a_card_and_its_tables_name_every_key() -> No
         ("the machine", ""),
         ("a parameter", "[parameters.x]"),
         ("an observable", "[observables.x]"),
+        ("a sensor", "[sensors.x]"),
     ):
         section = page.split(f"## Keys of {title}")[1].split("\n## ")[0]
         documented = [line.split("`")[1] for line in section.splitlines() if line.startswith("| `")]
         with pytest.raises(CardError) as problem:
             parse_card(f'machine = "a"\n{table}\nunheard = 1\n')
         known = str(problem.value).split("wanted one of ")[1].split(", ")
-        assert documented == [key for key in known if key not in ("parameters", "observables")]
+        assert documented == [key for key in known if key not in ("parameters", "observables", "sensors")]

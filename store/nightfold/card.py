@@ -63,7 +63,7 @@ class MachineCard:
         A scan label used again within this many seconds goes on with its round; later it opens a new one.
     naive_times : bool
         Whether times without an offset are read as local times of `zone`.
-    parameters, observables : mapping of str to NamedQuantity
+    parameters, observables, sensors : mapping of str to NamedQuantity
     main_observable : str or None
         The observable shown when none is named.
     toml : str
@@ -78,6 +78,7 @@ class MachineCard:
     naive_times: bool = False
     parameters: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
     observables: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
+    sensors: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
     main_observable: str | None = None
     toml: str = ""
 
@@ -135,7 +136,7 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
     table = Table(source, text, content)
     table.check_keys(
         *("machine", "species", "zone", "night_boundary", "rejoin_within", "naive_times", "main_observable"),
-        *("parameters", "observables"),
+        *("parameters", "observables", "sensors"),
     )
     machine = table.name("machine")
     if machine is None:
@@ -144,6 +145,10 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
     observables = {name: _observable(name, entry) for name, entry in table.entries("observables")}
     for name in parameters.keys() & observables.keys():
         raise table.error(("observables", name), "a name that is also a parameter", "one or the other")
+    sensors = {name: _observable(name, entry) for name, entry in table.entries("sensors")}
+    for name in sensors.keys() & {*parameters, *observables}:
+        other = "a parameter" if name in parameters else "an observable"
+        raise table.error(("sensors", name), f"a name that is also {other}", "one or the other")
     card = MachineCard(
         machine=machine,
         species=table.species("species"),
@@ -153,6 +158,7 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
         naive_times=table.truth("naive_times") or False,
         parameters=parameters,
         observables=observables,
+        sensors=sensors,
         main_observable=table.name("main_observable"),
         toml=text,
     )
@@ -178,7 +184,7 @@ def _parameter(name: str, entry: Table) -> NamedQuantity:
 
 
 def _observable(name: str, entry: Table) -> NamedQuantity:
-    """Return what an entry of ``[observables]`` says."""
+    """Return what an entry of ``[observables]`` or ``[sensors]`` says."""
     entry.check_keys("unit", "range", "description")
     low, high = entry.limits("range") or (None, None)
     return NamedQuantity(name, entry.unit("unit"), low, high, entry.text("description") or "", "number")
@@ -216,4 +222,9 @@ zone = {zone}
 # unit = "atoms"
 # range = [0, 1e6]
 # description = "atoms in the trap, from the absorption image"
+
+# [sensors.room_temperature]
+# unit = "degC"
+# range = [19, 23]
+# description = "beside the optical table"
 """

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 
 @dataclass(frozen=True, slots=True)
 class Known:
-    """A parameter or an observable: kind (``reading`` for an observable), the unit stored, the unit of bare numbers."""
+    """A parameter, observable or sensor: kind (``reading`` for the last two), the unit stored, that of bare numbers."""
 
     kind: str
     unit: str | None
@@ -43,6 +43,7 @@ class MachineNames:
     card: MachineCard | None = None
     parameters: dict[str, Known] = field(default_factory=dict)
     observables: dict[str, Known] = field(default_factory=dict)
+    sensors: dict[str, Known] = field(default_factory=dict)
     sequences: dict[str, int] = field(default_factory=dict)
     versions: dict[tuple[int, bytes], int] = field(default_factory=dict)
     generation: int = 0
@@ -103,6 +104,27 @@ class MachineNames:
         except UnitError as problem:
             raise RecordError(field, shorten(unit), str(problem)) from None
         return ReadValue(value, stderr, read.state), known
+
+    def settle_sensor(self, name: str, unit: str | None, field: str) -> Known:
+        """Return what is known of a sensor once a reading in this unit (None for a bare number) is taken.
+
+        Raises
+        ------
+        RecordError
+            If the unit contradicts what is known, or the name is that of a parameter or observable.
+        """
+        known = self.sensors.get(name)
+        if known is None:
+            for kind, other in (("parameters", "a parameter"), ("observables", "an observable")):
+                if name in getattr(self, kind) or (
+                    self.card is not None and name in getattr(self.card, kind)
+                ):
+                    wanted = f"another name: {name!r} is {other} of {self.name}"
+                    raise RecordError(field, "a sensor", wanted)
+            entry = self.card.sensors.get(name) if self.card else None
+            stated = entry.unit if entry else None
+            known = Known("reading", stated, stated)
+        return self._adopt(known, unit, field)
 
     def _fresh_parameter(self, name: str, value: Value) -> Known:
         entry = self.card.parameters.get(name) if self.card else None
@@ -227,6 +249,10 @@ def read_names(connection: Connection) -> dict[str, MachineNames]:
         entry = _card_entry(machines[row.machine_id], "observables", row.name)
         known = Known("reading", row.unit, entry if entry is not None else row.unit, row.id)
         machines[row.machine_id].observables[row.name] = known
+    for row in connection.execute(select(tables.sensor)):
+        entry = _card_entry(machines[row.machine_id], "sensors", row.name)
+        known = Known("reading", row.unit, entry if entry is not None else row.unit, row.id)
+        machines[row.machine_id].sensors[row.name] = known
     of_sequence = {}
     for row in connection.execute(select(tables.sequence)):
         machines[row.machine_id].sequences[row.name] = row.id
@@ -241,7 +267,8 @@ def read_names(connection: Connection) -> dict[str, MachineNames]:
 def _card_entry(machine: MachineNames, kind: str, name: str) -> str | None:
     if machine.card is None:
         return None
-    entry = machine.card.observable(name) if kind == "observables" else machine.card.parameters.get(name)
+    card = machine.card
+    entry = card.observable(name) if kind == "observables" else getattr(card, kind).get(name)
     return entry.unit if entry else None
 
 
@@ -270,7 +297,7 @@ def cards_in_force(connection: Connection) -> dict[str, MachineCard]:
 
 
 def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: int) -> None:
-    """Make a card the one in force; parameters and observables without a unit take the card's.
+    """Make a card the one in force; parameters, observables and sensors without a unit take the card's.
 
     Raises
     ------
@@ -282,15 +309,18 @@ def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: in
     for kind, stored, other in (
         ("parameters", machine.observables, "an observable"),
         ("observables", machine.parameters, "a parameter"),
+        ("sensors", machine.parameters, "a parameter"),
+        ("sensors", machine.observables, "an observable"),
     ):
         for name in getattr(card, kind).keys() & stored.keys():
             raise CardError(
                 f"card of {card.machine}: {kind}.{name}: found an entry, wanted none: "
                 f"the store has {other} of that name"
             )
-    for kind, table in (("parameters", tables.parameter), ("observables", tables.observable)):
+    kinds = {"parameters": tables.parameter, "observables": tables.observable, "sensors": tables.sensor}
+    for kind, table in kinds.items():
         for name, known in getattr(machine, kind).items():
-            entry = card.observable(name) if kind == "observables" else card.parameters.get(name)
+            entry = card.observable(name) if kind == "observables" else getattr(card, kind).get(name)
             if entry is None:
                 continue
             if entry.kind is not None and known.kind not in ("reading", entry.kind):
