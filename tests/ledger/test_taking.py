@@ -395,6 +395,6 @@ def test_the_card_used_last_is_in_force_after_the_clock_was_put_back(
     card = tmp_path / "heron.toml"
     for zone, now in (("Asia/Tokyo", 10), ("Europe/Vienna", 5)):
         card.write_text(f'machine = "heron"\nzone = "{zone}"\n')
-        monkeypatch.setattr("nightfold.store.now_us", lambda now=now: now)
+        monkeypatch.setattr("nightfold.faces.taking.now_us", lambda now=now: now)
         store.use_card(card)
     assert store.cards()["heron"].zone == store.zone("heron") == "Europe/Vienna"
