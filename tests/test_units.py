@@ -43,6 +43,14 @@ def test_decimal_conversions_leave_no_dust() -> None:
     assert convert(0.3, "s", "us") == 300000.0
 
 
+@given(st.integers(-27315, 500000))
+def test_conversions_with_an_offset_leave_no_dust(hundredths: int) -> None:
+    assert convert((hundredths + 27315) / 100, "K", "degC") == hundredths / 100
+    assert convert(hundredths / 100, "degC", "K") == (hundredths + 27315) / 100
+    assert convert(hundredths / 100, "degC", "degF") == round(hundredths * 0.018 + 32, 6)
+    assert convert(convert(hundredths / 100, "degC", "degF"), "degF", "degC") == hundredths / 100
+
+
 @given(st.floats(-1e300, 1e300), st.sampled_from([("ms", "s"), ("G", "T"), ("nK", "K"), ("MHz", "Hz")]))
 def test_there_and_back(value: float, units: tuple[str, str]) -> None:
     there = convert(value, *units)
@@ -84,5 +92,6 @@ def test_standard_uncertainties_are_scaled_never_moved() -> None:
 
 
 def test_infinite_and_missing_values() -> None:
-    assert convert(math.inf, "ms", "s") == math.inf
+    assert convert(math.inf, "ms", "s") == convert(math.inf, "K", "degC") == math.inf
+    assert math.isnan(convert(math.nan, "degF", "degC"))
     assert math.isnan(convert(math.nan, "ms", "s"))

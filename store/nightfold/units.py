@@ -7,6 +7,7 @@ Beyond pint's own registry: 1 G = 1e-4 T (SI Brochure, 9th edition, table 8, sta
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import cache
 from typing import TYPE_CHECKING, Any
@@ -22,6 +23,7 @@ _DEFINITIONS = (
     "optical_density = [] = OD",
 )
 _LONGEST = 100
+_FAR = 1e6  # a scale is told from two numbers so far apart that their difference keeps its digits
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,12 +38,15 @@ class Conversion:
         False where an offset or a logarithm is involved.
     source, target : str
         The two units.
+    offset : float
+        What is added after scaling, as from degF to degC; nan for a logarithmic unit.
     """
 
     factor: float
     linear: bool
     source: str
     target: str
+    offset: float = 0.0
 
     def value(self, number: float) -> float:
         """Return the number in the target unit, rounded to 15 digits so that 120 ms is 0.12 s."""
@@ -49,6 +54,8 @@ class Conversion:
             return number
         if self.linear:
             return _round(number * self.factor) if self.factor != 1.0 else number
+        if self.offset == self.offset:
+            return _shifted(number * self.factor, self.offset)
         registry = _registry()
         quantity = registry.Quantity(number, registry.parse_units(self.source))
         return _round(float(quantity.to(registry.parse_units(self.target)).magnitude))
@@ -106,6 +113,15 @@ def convert(value: float, unit: str, to: str) -> float:
     return conversion(unit, to).value(value)
 
 
+def counts_from_zero(unit: str) -> bool:
+    """Return whether ratios of numbers in this unit mean something: not in ``degC`` or ``dBm``."""
+    if not unit:
+        return True
+    registry = _registry()
+    one, two = (registry.Quantity(number, _check(unit)).to_base_units().magnitude for number in (1.0, 2.0))
+    return bool(abs(two - 2 * one) <= 1e-9 * abs(two))
+
+
 @cache
 def conversion(source: str, target: str) -> Conversion:
     """Return how to convert from one unit to another.
@@ -131,16 +147,27 @@ def conversion(source: str, target: str) -> Conversion:
     try:
         zero, unity, two = (float(registry.Quantity(n, one).to(other).magnitude) for n in (0.0, 1.0, 2.0))
     except (pint.errors.PintError, ValueError, ZeroDivisionError, OverflowError):
-        return Conversion(float("nan"), False, source, target)
+        return Conversion(float("nan"), False, source, target, float("nan"))
     factor = unity - zero
     straight = abs((two - unity) - factor) <= 1e-9 * max(abs(two), abs(unity), abs(factor))
     if zero == 0.0 and straight:
         return Conversion(unity, True, source, target)
-    return Conversion(_round(factor, 12) if straight else float("nan"), False, source, target)
+    if straight:
+        far = float(registry.Quantity(_FAR, one).to(other).magnitude)
+        return Conversion(_round((far - zero) / _FAR), False, source, target, zero)
+    return Conversion(float("nan"), False, source, target, float("nan"))
 
 
 def _round(number: float, digits: int = 15) -> float:
     return float(f"{number:.{digits}g}")
+
+
+def _shifted(scaled: float, offset: float) -> float:
+    """Return the sum in 14 digits of its larger part: 294.45 K is 21.3 degC, without dust."""
+    if not math.isfinite(scaled):
+        return scaled
+    larger = max(abs(scaled), abs(offset))
+    return round(scaled + offset, 13 - math.floor(math.log10(larger)))
 
 
 @cache
