@@ -94,8 +94,18 @@ class MachineCard:
 
 def without_cloud(name: str) -> str:
     """Return the name of an observable without its cloud: ``atom_number`` of ``atom_number[up]``."""
-    base, bracket, _ = name.partition("[")
-    return base if base and bracket and name.endswith("]") else name
+    return split_cloud(name)[0]
+
+
+def split_cloud(name: str) -> tuple[str, str | None]:
+    """Return the name of an observable and its cloud: ``atom_number`` and ``up``; None where there is none.
+
+    The cloud is what stands in the last pair of brackets: any text without brackets.
+    """
+    base, bracket, rest = name.rpartition("[")
+    if not (base and bracket and rest.endswith("]")) or "]" in rest[:-1] or rest == "]":
+        return name, None
+    return base, rest[:-1]
 
 
 def read_card(path: str | Path) -> MachineCard:

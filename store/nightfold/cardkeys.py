@@ -128,7 +128,7 @@ class Table:
         if value is None:
             return None
         wanted = 'a time, such as "24 h", or a number of seconds, at least 0'
-        span = _span(value)
+        span = read_span(value)
         if span is None or not 0 <= span < math.inf:
             raise self.error(key, shorten(value), wanted)
         return span
@@ -191,7 +191,7 @@ def _zone_wanted(value: str) -> str:
     return f"an IANA time zone, such as {', '.join(near) or TIME_ZONE}"
 
 
-def _span(value: Any) -> float | None:
+def read_span(value: Any) -> float | None:
     """Return seconds from a number of them or from a text such as ``24 h``; None if it is neither."""
     if type(value) in (int, float):
         return float(value)

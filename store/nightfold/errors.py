@@ -6,9 +6,11 @@
     ├── RecordError        (ValueError)         a shot record cannot be taken
     ├── CardError          (ValueError)         a machine card cannot be used
     ├── UnitError          (ValueError)         a unit is unknown or does not convert
+    ├── FormulaError       (ValueError)         an expression of the card cannot be used
     ├── FitError           (ValueError)         a fit was asked for that cannot be done
     ├── ChoiceNeeded       (ValueError)         the request fits several things; name one
     ├── NotFound           (LookupError)        no such scan, shot, machine, parameter, model
+    │   └── NoReference                         no reference shots near enough, or fit to be divided by
     └── StoreError                              the store itself
         ├── StoreMissing   (FileNotFoundError)  there is no store at that place
         ├── StoreExists    (FileExistsError)    there is one already
@@ -53,6 +55,20 @@ class UnitError(NightfoldError, ValueError):
     """A unit that is not known, or that does not convert into the one wanted."""
 
 
+class FormulaError(NightfoldError, ValueError):
+    """An expression that cannot be used.
+
+    Attributes
+    ----------
+    found, wanted : str
+        What stood there, and what would have been accepted.
+    """
+
+    def __init__(self, found: str, wanted: str) -> None:
+        self.found, self.wanted = found, wanted
+        super().__init__(f"found {found}, wanted {wanted}")
+
+
 class FitError(NightfoldError, ValueError):
     """A fit that cannot be done as asked (a fit that merely does not converge is a result with a warning)."""
 
@@ -63,6 +79,10 @@ class ChoiceNeeded(NightfoldError, ValueError):
 
 class NotFound(NightfoldError, LookupError):
     """No such scan, shot, machine, parameter, observable or model; the message lists near misses."""
+
+
+class NoReference(NotFound):
+    """No reference shots that a scan can be related to; the message says what is missing, and how far they are."""
 
 
 class StoreError(NightfoldError):

@@ -158,6 +158,37 @@ def conversion(source: str, target: str) -> Conversion:
     return Conversion(float("nan"), False, source, target, float("nan"))
 
 
+@cache
+def combine_units(one: str, other: str, power: float = 1) -> str:
+    """Return the unit of a product: of one unit with a power of another.
+
+    Raises
+    ------
+    UnitError
+        If a unit is unknown, or the product is too long to be one.
+    """
+    if not other or power == 0:
+        return one
+    if not one and power == 1:
+        return other
+    found = _check(one) * _check(other) ** (int(power) if power == int(power) else power)
+    text = f"{found:~}"
+    return parse_unit("" if text == "dimensionless" else text)
+
+
+@cache
+def absolute_unit(unit: str) -> str:
+    """Return the unit in which a unit with an offset, such as degC, can be multiplied; other units as they are.
+
+    Logarithmic units have an absolute one too, but no constant factor to it.
+    """
+    registry = _registry()
+    quantity = registry.Quantity(1.0, _check(unit))
+    if quantity._is_multiplicative:
+        return unit
+    return f"{quantity.to_root_units().units:~}"
+
+
 def _round(number: float, digits: int = 15) -> float:
     return float(f"{number:.{digits}g}")
 

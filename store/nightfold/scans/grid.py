@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from types import MappingProxyType
@@ -13,13 +12,13 @@ import pandas as pd
 import xarray as xr
 from numpy.typing import NDArray
 
+from nightfold.card import split_cloud
 from nightfold.scans.columns import Column, encode
 from nightfold.scans.layout import OWN_DIMENSIONS, Layout, free_name, lay_out, read_settings, with_missing
 
 NO_SHOT = -1
 """``shot_id`` of a hole in the grid."""
 
-_CLOUD = re.compile(r"(?P<name>.+)\[(?P<cloud>[^\[\]]+)\]")
 _NOTHING: Mapping[str, Any] = MappingProxyType({})
 
 
@@ -164,8 +163,7 @@ def _by_cloud(observables: Sequence[str]) -> dict[str, dict[str | None, str]]:
     """Return variable -> cloud (None for none) -> observable."""
     variables: dict[str, dict[str | None, str]] = {}
     for observable in observables:
-        match = _CLOUD.fullmatch(observable)
-        name, cloud = (match["name"], match["cloud"]) if match else (observable, None)
+        name, cloud = split_cloud(observable)
         variables.setdefault(name, {})[cloud] = observable
     return variables
 

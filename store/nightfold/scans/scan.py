@@ -2,14 +2,24 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
 from datetime import datetime
 from functools import cached_property
 from typing import TYPE_CHECKING
 
-from nightfold.ledger.selecting import column_name, scan_key
+from nightfold.errors import NotFound
+from nightfold.ledger.selecting import column_name, near_miss, scan_key
 from nightfold.scans.axes import Axis
 from nightfold.scans.details import ScanDetails, read_details, read_shots
+from nightfold.scans.references import (
+    WITHIN,
+    Comparison,
+    check_relative,
+    describe_levels,
+    read_within,
+    relate,
+)
 from nightfold.session import Session
 
 if TYPE_CHECKING:
@@ -89,7 +99,14 @@ class Scan:
         axes = " x ".join(f"{axis.parameter} ({axis.points})" for axis in self.axes) or "no axis"
         return f"<Scan {self.key} of {self.sequence}: {axes}, {self.shots} shots>"
 
-    def table(self, set_aside: bool = False) -> pd.DataFrame:
+    def table(
+        self,
+        set_aside: bool = False,
+        *,
+        observables: Sequence[str] | None = None,
+        relative_to: str | None = None,
+        reference_within: str | float = WITHIN,
+    ) -> pd.DataFrame:
         """Return a frame with a row a shot, in time order.
 
         Columns are ``uid``, ``shot_id``, ``started`` (UTC), ``set_aside``, the axes and the parameters that follow one,
@@ -99,12 +116,52 @@ class Scan:
         ----------
         set_aside : bool
             Include the shots set aside.
-        """
-        details = self._details
-        with self._session.reading() as connection:
-            return read_shots(connection, self.id, details, set_aside)
+        observables : sequence of str, optional
+            Only these.
+        relative_to : {'reference'}, optional
+            Divide each observable by what the reference shots say at that moment, as `level_at` and `ratio_of` of
+            `nightfold.scans.relative` do; that stands beside it as ``<observable>_reference``.
+        reference_within : str or float
+            How far a reference shot may be from a shot: a text with a unit, or seconds.
 
-    def dataset(self, set_aside: bool = False, tolerance: float | None = None) -> xr.Dataset:
+        Raises
+        ------
+        NotFound
+            If no shot of the scan has an observable asked for.
+        NoReference
+            If reference shots are too far, lack the observable, or read what cannot be divided by.
+        """
+        details = self._chosen(observables)
+        with self._session.reading() as connection:
+            table = read_shots(connection, self.id, details, set_aside)
+            if relative_to is None:
+                return table
+            check_relative(relative_to)
+            wanted = Comparison(
+                self.key, self._machine_id, self.sequence, details.observables, read_within(reference_within)
+            )
+            return relate(connection, table, wanted)
+
+    def _chosen(self, names: Sequence[str] | None) -> ScanDetails:
+        """Return the details with these observables only."""
+        if names is None:
+            return self._details
+        known = {item.name: item for item in self._details.observables}
+        wanted = [names] if isinstance(names, str) else list(dict.fromkeys(names))
+        for name in wanted:
+            if name not in known:
+                raise NotFound(f"scan {self.key}: no observable {name!r}; {near_miss(name, known)}")
+        return replace(self._details, observables=tuple(known[name] for name in wanted))
+
+    def dataset(
+        self,
+        set_aside: bool = False,
+        tolerance: float | None = None,
+        *,
+        observables: Sequence[str] | None = None,
+        relative_to: str | None = None,
+        reference_within: str | float = WITHIN,
+    ) -> xr.Dataset:
         """Return the scan on its axes.
 
         Parameters
@@ -114,6 +171,8 @@ class Scan:
         tolerance : float, optional
             Values of an axis closer together than this are one point, in the unit of the axis; default 1e-6 of its
             span.
+        observables, relative_to, reference_within
+            As in `table`.
 
         Returns
         -------
@@ -124,18 +183,26 @@ class Scan:
         """
         from nightfold.scans.grid import build_dataset
 
+        table = self.table(
+            set_aside, observables=observables, relative_to=relative_to, reference_within=reference_within
+        )
+        read = [item.name for item in self._chosen(observables).observables]
+        descriptions = self._details.descriptions
+        if relative_to is not None:
+            read, descriptions = describe_levels(table.attrs["levels"], descriptions)
         dataset: xr.Dataset = build_dataset(
-            self.table(set_aside),
+            table,
             [column_name(axis.parameter) for axis in self.axes],
             co_moving={column_name(name): column_name(axis) for name, axis in self.followers.items()},
-            observables=[column_name(name) for name in self.observables],
-            units={column_name(name): unit for name, unit in self.units.items()},
-            descriptions=self._details.descriptions,
+            observables=[column_name(name) for name in read],
+            units={column_name(name): unit for name, unit in table.attrs["units"].items()},
+            descriptions=descriptions,
             attrs={
                 "scan": self.key,
                 "machine": self.machine,
                 "sequence": self.sequence,
                 "time_zone": self.zone,
+                **table.attrs.get("relative", {}),
             },
             tolerance=tolerance,
         )
