@@ -111,7 +111,7 @@ def read_header(
     ChoiceNeeded
         If it is not said what a column is, or which machine, sequence or times the rows belong to.
     """
-    headings = [_split_heading(cell, place) for place, cell in enumerate(cells, start=1)]
+    headings = [split_heading(cell, place) for place, cell in enumerate(cells, start=1)]
     names = [name for name, _ in headings]
     for name in names:
         if names.count(name) > 1:
@@ -133,7 +133,7 @@ def split_name(heading: str) -> tuple[str, str | None]:
     return match[1], match[2].strip()
 
 
-def _split_heading(cell: str, place: int) -> tuple[str, str | None]:
+def split_heading(cell: str, place: int) -> tuple[str, str | None]:
     """Return name and unit of a header cell, both checked."""
     text, unit = split_name(cell)
     try:

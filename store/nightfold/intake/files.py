@@ -42,20 +42,42 @@ def read_file(
     RecordError
         If it is a folder, cannot be read, or its suffix is not known.
     """
+    if not is_table(path):
+        return read_json(path)
+    if columns is None or columns.delimiter is None:
+        columns = replace(columns or CsvColumns(), delimiter=usual_delimiter(path))
+    return read_csv(path, card=card, columns=columns)
+
+
+def is_table(path: str | Path) -> bool:
+    """Return whether a file is a table by its suffix, and not JSON.
+
+    Raises
+    ------
+    NotFound
+        If there is no such file.
+    RecordError
+        If it is a folder, cannot be read, or its suffix is not known.
+    """
     file = Path(path)
     _check_readable(file)
     suffix = file.suffix.lower()
-    if suffix in JSON_LINES:
-        return read_json_lines(path)
-    if suffix == ".json":
-        return read_json_document(path) if is_document(path) else read_json_lines(path)
-    if suffix in CSV:
-        if suffix == ".tsv":
-            columns = columns or CsvColumns()
-            columns = replace(columns, delimiter=columns.delimiter or "\t")
-        return read_csv(path, card=card, columns=columns)
+    if suffix in (*JSON_LINES, ".json", *CSV):
+        return suffix in CSV
     known = ", ".join((*JSON_LINES, ".json", *CSV))
     raise RecordError(str(path), f"the suffix {suffix!r}" if suffix else "no suffix", f"one of {known}")
+
+
+def usual_delimiter(path: str | Path) -> str | None:
+    """Return the delimiter that a suffix stands for, None where it says nothing."""
+    return "\t" if Path(path).suffix.lower() == ".tsv" else None
+
+
+def read_json(path: str | Path) -> Iterator[Incoming]:
+    """Return an iterator over the objects of a JSON file: one a line, an array, or printed one after another."""
+    if Path(path).suffix.lower() == ".json" and is_document(path):
+        return read_json_document(path)
+    return read_json_lines(path)
 
 
 def _check_readable(file: Path) -> None:
