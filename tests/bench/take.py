@@ -19,7 +19,7 @@ from typing import Any
 import numpy as np
 
 from nightfold import open_store
-from nightfold.ledger.writing import BATCH
+from nightfold.ledger.batches import BATCH
 
 ROUNDS = 3
 TABLES = ("value_set", "set_value", "shot", "shot_value", "reading")

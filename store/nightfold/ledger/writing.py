@@ -2,10 +2,7 @@
 
 from __future__ import annotations
 
-import gc
-import time
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Protocol
 
@@ -14,6 +11,7 @@ from sqlalchemy import Connection, Row, select
 from nightfold import tables
 from nightfold.errors import RecordError
 from nightfold.ledger.amending import amend_readings, amend_shot, check_identity
+from nightfold.ledger.batches import batches, collector_paused
 from nightfold.ledger.checking import CheckedShot, check_shot, derivation_of, readings_of, sequence_name
 from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
@@ -24,9 +22,6 @@ from nightfold.ledger.streams import StreamMemory, recall
 from nightfold.records import Amendment, parse_record
 from nightfold.session import Session, turn_of
 from nightfold.timestamps import now_us
-
-BATCH = 500
-PATIENCE_S = 0.02
 
 
 class ScanPlacer(Protocol):
@@ -93,7 +88,7 @@ class Writer:
         over again: what is stored is then known.
         """
         total = Intake()
-        for batch in _batches(records):
+        for batch in batches(records):
             total = total + self._take_batch(batch, log)
             if progress is not None:
                 progress(batch[-1].byte)
@@ -101,7 +96,7 @@ class Writer:
 
     def _take_batch(self, items: Sequence[Incoming], log: SourceLog | None) -> Intake:
         try:
-            with _collector_paused(), self._session.writing() as connection:
+            with collector_paused(), self._session.writing() as connection:
                 self._refresh(connection)
                 batch = _Batch(connection, log.enter(connection) if log else None)
                 for item in items:
@@ -256,33 +251,5 @@ class Writer:
         batch.intake.new += len(shots)
 
 
-@contextmanager
-def _collector_paused() -> Iterator[None]:
-    """Spare the batch the search for reference cycles: it makes none, and thousands of records cost a quarter more."""
-    was_on = gc.isenabled()
-    gc.disable()
-    try:
-        yield
-    finally:
-        if was_on:
-            gc.enable()
-
-
 def _uid(shot: CheckedShot | _Late) -> str:
     return shot.amendment.uid if isinstance(shot, _Late) else shot.uid
-
-
-def _batches(records: Iterable[Incoming]) -> Iterator[Sequence[Incoming]]:
-    """Yield the records in batches that double up to 500, and at once whatever there is when one was waited for."""
-    stream, size, batch = iter(records), 1, list[Incoming]()
-    while True:
-        asked = time.monotonic()
-        item = next(stream, None)
-        waited = time.monotonic() - asked > PATIENCE_S
-        if item is not None:
-            batch.append(item)
-        if batch and (item is None or waited or len(batch) >= size):
-            yield batch
-            size, batch = (1 if waited else min(2 * size, BATCH)), []
-        if item is None:
-            return
