@@ -36,7 +36,7 @@ class ScanWish:
 
 @dataclass(slots=True)
 class CheckedShot:
-    """A shot ready to be compared with the store and written."""
+    """A shot ready to be compared with the store and written; `named` tells whether its record gave the uid."""
 
     uid: str
     machine: MachineNames
@@ -55,6 +55,7 @@ class CheckedShot:
     failed: str | None
     note: str
     frames: list[Frame]
+    named: bool
     source_id: int | None = None
     line: int | None = None
     id: int = 0
@@ -193,6 +194,7 @@ def check_shot(
     shot = CheckedShot(
         uid, machine, name, structure, started_us, wish, record.reference, values_digest,
         set_digest, content, None, moving, readings, derivation, record.failed, record.note, record.frames,
+        record.uid is not None,
     )  # fmt: skip
     return shot, plan
 

@@ -48,6 +48,25 @@ def _by_beginning(connection: Connection, uid: str) -> Row[Any]:
     raise NotFound(f"shot {uid!r}: {reason}")
 
 
+def clean_reason(what: str, reason: str) -> str:
+    """Return a reason as it is kept, without blanks around it; `what` is done for it.
+
+    Raises
+    ------
+    ValueError
+        If there is none.
+    """
+    try:
+        reason = clean_text(reason).strip()
+    except ValueError:
+        reason = ""
+    if not reason:
+        raise ValueError(
+            f"{what}: found no reason, wanted a few words that say why, without control characters"
+        )
+    return reason
+
+
 def set_shots_aside(
     connection: Connection, uids: Sequence[str], reason: str, by: str | None, rule: str | None
 ) -> int:
@@ -58,14 +77,7 @@ def set_shots_aside(
     NotFound, ValueError
         If a shot is not there, or no reason is given.
     """
-    try:
-        reason = clean_text(reason).strip()
-    except ValueError:
-        reason = ""
-    if not reason:
-        raise ValueError(
-            "set aside: found no reason, wanted a few words that say why, without control characters"
-        )
+    reason = clean_reason("set aside", reason)
     rows = find_shots(connection, uids)
     already = _aside(connection, [row.id for row in rows.values()])
     new = {row.id for row in rows.values()} - already

@@ -46,11 +46,12 @@ def settle_axes(
         .where(tables.scan_axis.c.scan_id == scan_id)
         .order_by(tables.scan_axis.c.position)
     )
-    kept = [row.parameter_id for row in connection.execute(old) if row.parameter_id in swept]
+    known = [row.parameter_id for row in connection.execute(old)]
+    kept = [parameter_id for parameter_id in known if parameter_id in swept]
     wanted = [*kept, *sorted(set(swept) - set(kept))]
     others = [parameter_id for parameter_id in moving if parameter_id not in swept]
     if len(wanted) == 1 and not others:
-        if kept != wanted:
+        if known != wanted:
             set_axes(connection, scan_id, wanted)
         return
     rows, where = select_shots(connection, Selection(scan_id=scan_id, set_aside=True))

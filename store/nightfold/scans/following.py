@@ -1,0 +1,44 @@
+"""Bringing scans up to date when settings of their shots were corrected."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from typing import Any
+
+from sqlalchemy import Connection, Row, select
+
+from nightfold import tables
+from nightfold.ledger.rows import chunks
+from nightfold.scans.keeping import settle_axes
+from nightfold.scans.refolding import FARTHEST_US, fold_span
+from nightfold.scans.rounds import swept_of
+
+
+def follow_corrections(connection: Connection, shots: Sequence[Row[Any]]) -> None:
+    """Settle the axes of labelled scans of corrected shots again, and fold the unlabelled stream around the others."""
+    scan = tables.scan
+    labelled: set[int] = set()
+    for part in chunks(sorted({shot.scan_id for shot in shots if shot.scan_id is not None})):
+        query = select(scan.c.id).where(scan.c.id.in_(part), scan.c.label.isnot(None))
+        labelled.update(connection.execute(query).scalars())
+    for scan_id in sorted(labelled):
+        settle_axes(connection, scan_id, swept_of(connection, scan_id))
+    free: dict[int, list[Row[Any]]] = {}
+    for shot in shots:
+        if shot.scan_id not in labelled and not shot.reference:
+            free.setdefault(shot.sequence_id, []).append(shot)
+    for sequence_id, own in free.items():
+        for near in _near_each_other(own):
+            times = [shot.started_us for shot in near]
+            fold_span(connection, sequence_id, min(times), max(times), fresh={shot.id for shot in near})
+
+
+def _near_each_other(shots: Iterable[Row[Any]]) -> list[list[Row[Any]]]:
+    """Return the shots in groups that lie further apart than folding looks."""
+    groups: list[list[Row[Any]]] = []
+    for shot in sorted(shots, key=lambda shot: shot.started_us):
+        if groups and shot.started_us - groups[-1][-1].started_us <= FARTHEST_US:
+            groups[-1].append(shot)
+        else:
+            groups.append([shot])
+    return groups
