@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import os
 import re
-from argparse import ArgumentParser, ArgumentTypeError, RawDescriptionHelpFormatter
+from argparse import ArgumentParser, ArgumentTypeError, Namespace, RawDescriptionHelpFormatter
 from types import ModuleType
-from typing import NoReturn
+from typing import TYPE_CHECKING, NoReturn
+
+if TYPE_CHECKING:
+    from argparse import _MutuallyExclusiveGroup
 
 DEFAULT_STORE = "nightfold.sqlite"
 
@@ -48,6 +51,32 @@ def command_parser(command: str, module: ModuleType) -> ArgumentParser:
 def add_scan_key(parser: ArgumentParser) -> None:
     """Declare the argument that names a scan."""
     parser.add_argument("key", metavar="KEY", help="id, label (its newest round) or label#round of a scan")
+
+
+def add_subject(parser: ArgumentParser) -> _MutuallyExclusiveGroup:
+    """Declare the options that name what a note is about, one of them at most."""
+    what = parser.add_mutually_exclusive_group()
+    what.add_argument("--shot", metavar="UID", help="on this shot, or the unique beginning of its uid")
+    what.add_argument("--scan", metavar="KEY", help="on this scan")
+    what.add_argument("--fit", metavar="N", type=positive, help="on this fit, by its number in 'fits'")
+    what.add_argument("--night", metavar="DATE", help="on this night, by the date of its evening")
+    return what
+
+
+def add_by(parser: ArgumentParser) -> None:
+    """Declare the option that says who did something."""
+    parser.add_argument("--by", metavar="NAME", help="who says so (default: the user logged in)")
+
+
+def by_whom(args: Namespace) -> str | None:
+    """Return who did something: as the option says, else who is logged in, None where that cannot be told."""
+    import getpass
+
+    named: str | None = args.by
+    try:
+        return named or getpass.getuser()
+    except (OSError, KeyError):
+        return None
 
 
 def named_number(text: str) -> tuple[str, float]:

@@ -7,17 +7,24 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from nightfold.store import Store
+    from nightfold_cli.render import Screen
 
 
-def check_machine(store: Store, name: str | None) -> None:
-    """Refuse a machine that is not in the store; None stands for all.
+def check_machine(store: Store, name: str | None, screen: Screen) -> str | None:
+    """Return the name of a machine as the store has it; None stands for all.
+
+    A name that was merged into another machine's is taken for that one, and a remark says so.
 
     Raises
     ------
     NotFound
     """
-    if name is not None:
-        _check("machine", name, store.machines(), "in this store")
+    if name is None:
+        return None
+    known = store.machine(name)
+    if known != name:
+        screen.say(f"{name} is another name of {known}")
+    return known
 
 
 def check_parameter(store: Store, name: str | None, machine: str | None = None) -> None:

@@ -9,6 +9,7 @@ GROUPS = (
             ("new", "make a store, and a machine card if asked"),
             ("take", "take shots from files into the store"),
             ("set-aside", "leave shots out of results, or put them back"),
+            ("note", "write a note on tonight, a shot, a scan or a fit"),
         ),
     ),
     (
@@ -19,6 +20,7 @@ GROUPS = (
             ("scan", "show one scan: its points and a chart"),
             ("shots", "list shots, or show one in full"),
             ("edits", "list the settings that people changed"),
+            ("notes", "find notes by words, subject or time"),
         ),
     ),
     (

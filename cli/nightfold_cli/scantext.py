@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.concise import short
@@ -59,8 +60,8 @@ def title(scan: Scan, name: str) -> str:
     return name if scan.label is None or name == scan.key else f"{name} ({scan.key})"
 
 
-def entry(scan: Scan, name: str) -> dict[str, Any]:
-    """Return a scan, and what it is called, for JSON."""
+def entry(scan: Scan, name: str, notes: Mapping[str, list[str]]) -> dict[str, Any]:
+    """Return a scan, what it is called and what was noted about it, for JSON."""
     return {
         "id": scan.id,
         "label": scan.label,
@@ -77,6 +78,7 @@ def entry(scan: Scan, name: str) -> dict[str, Any]:
         "complete": scan.complete,
         "observables": list(scan.observables),
         "main_observable": scan.main_observable,
+        "notes": notes.get(f"scan {scan.id}", []),
     }
 
 

@@ -31,7 +31,7 @@ def run(args: Namespace) -> int:
     """List the edits, the oldest first."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
-        check_machine(store, args.machine)
+        args.machine = check_machine(store, args.machine, screen)
         check_parameter(store, args.parameter, args.machine)
         edits = _edits(store, args)
         times = local_times(store)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
@@ -13,7 +13,9 @@ from nightfold_cli.estimates import value_text
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
 from nightfold_cli.naming import ambiguous_labels, name_in, name_of, named_scan
+from nightfold_cli.notetext import first_words, notes_of_fits
 from nightfold_cli.opening import local_times, opened
+from nightfold_cli.printable import wrap
 from nightfold_cli.render import Screen
 from nightfold_cli.settings import setting
 
@@ -25,6 +27,7 @@ if TYPE_CHECKING:
 HELP = "list the fits that were kept"
 EXAMPLES = ("nightfold fits", "nightfold fits loss-coarse", "nightfold fits --json")
 _ON_SCREEN = 20
+_NOTE_WIDTH = 24
 _EMPTY = "no fits yet; 'nightfold fit KEY MODEL -o OBSERVABLE' makes one"
 
 
@@ -43,15 +46,16 @@ def run(args: Namespace) -> int:
         kept = sorted(store.fits(scan.id if scan else None), key=lambda fit: (fit.at, fit.id))
         kept = _named(store, kept, scan)
         times = local_times(store)
-    last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(kept))
-    listed = kept[-last:] if last else []
+        last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(kept))
+        listed = kept[-last:] if last else []
+        notes = notes_of_fits(store, [fit.id for fit in listed])
     if screen.json:
-        screen.answer({"fits": [_entry(fit) for fit in listed]})
+        screen.answer({"fits": [{**_entry(fit), "notes": notes.get(fit.id, [])} for fit in listed]})
         return 0
     if not screen.terminal:
-        _tabulate(screen, listed, times)
+        _tabulate(screen, listed, times, notes)
         return 0
-    _draw(screen, listed, times)
+    _draw(screen, listed, times, notes)
     if any(fit.stale for fit in listed):
         screen.note("stale: the shots of the scan have changed since; fit it again")
     if len(kept) > len(listed):
@@ -76,10 +80,11 @@ def _named(store: Store, kept: Sequence[KeptFit], scan: Scan | None) -> list[Kep
     return [replace(fit, scan_key=names.get(fit.id, fit.scan_key)) for fit in kept]
 
 
-def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:
+def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]]) -> None:
     """Draw a few lines a fit."""
     moments = [times.local(fit.at) for fit in fits]
     columns = [
+        Column("fit", right=True),
         Column("scan", wraps=True),
         Column("model", wraps=True),
         Column("estimates"),
@@ -89,9 +94,10 @@ def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:
     ]
     rows: list[Row] = [
         [
+            str(fit.id),
             Cell.of((fit.scan_key, fit.observable, *_slice(fit))),
             Cell.of((fit.model, f"along {fit.along}")),
-            Cell.of(_estimates(fit)),
+            Cell.of((*_estimates(fit), *_noted(notes.get(fit.id)))),
             Cell.of(_trust(fit)),
             when,
             str(fit.shots),
@@ -101,11 +107,14 @@ def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:
     screen.table(columns, rows, empty=_EMPTY, spaced=True)
 
 
-def _tabulate(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> None:
+def _tabulate(
+    screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]]
+) -> None:
     """Write a line an estimate, for programs."""
     heads = (
         *("fit", "kept", "scan", "model", "background", "observable", "along", "slice"),
         *("estimate", "value", "stderr", "unit", "low95", "high95", "trusted", "stale", "shots"),
+        "notes",
     )
     rows: list[Row] = [
         [
@@ -121,6 +130,7 @@ def _tabulate(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes) -> Non
             setting(fit.trusted),
             setting(fit.stale),
             str(fit.shots),
+            "; ".join(notes.get(fit.id, [])),
         ]
         for fit in fits
         for row in estimates.plain_rows(fit.estimates)
@@ -134,6 +144,11 @@ def _estimates(fit: KeptFit) -> list[str]:
         f"{name} {value_text(estimate, fixed=estimate.fixed)} {estimate.unit}".rstrip()
         for name, estimate in fit.estimates.items()
     ]
+
+
+def _noted(texts: list[str] | None) -> list[str]:
+    """Return the first words of the notes on a fit, on as many lines as a narrow column needs."""
+    return wrap(f"note: {first_words(texts)}", _NOTE_WIDTH) if texts else []
 
 
 def _trust(fit: KeptFit) -> list[str]:

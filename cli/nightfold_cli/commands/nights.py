@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
+from collections.abc import Mapping
 from typing import Any
 
 from nightfold_cli.arguments import positive
 from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column
 from nightfold_cli.localtimes import offset_if_it_changes
+from nightfold_cli.notetext import first_words, texts_by_subject
 from nightfold_cli.opening import local_times, opened, records
 from nightfold_cli.render import Screen
 
@@ -28,16 +30,17 @@ def run(args: Namespace) -> int:
     """List the nights, the oldest first."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
-        check_machine(store, args.machine)
+        args.machine = check_machine(store, args.machine, screen)
         nights = records(store.nights())
         times = local_times(store)
+        noted = texts_by_subject(store)
     if args.machine:
         nights = [night for night in nights if night["machine"] == args.machine]
     last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(nights))
     earlier = len(nights) - last
     nights = nights[-last:] if last else []
     if screen.json:
-        screen.answer({"nights": [_entry(night) for night in nights]})
+        screen.answer({"nights": [_entry(night, _notes(noted, night)) for night in nights]})
         return 0
     columns = [
         Column("night"),
@@ -49,6 +52,7 @@ def run(args: Namespace) -> int:
         Column("references", right=True, spare=3),
         Column("scans", right=True),
         Column("sequences", wraps=True),
+        *([] if screen.terminal else [Column("notes")]),
     ]
     rows = []
     for night in nights:
@@ -60,7 +64,8 @@ def run(args: Namespace) -> int:
                 Cell(f"{first:%H:%M}{offset_if_it_changes(first)}", first.isoformat(timespec="seconds")),
                 Cell(f"{last:%H:%M}{offset_if_it_changes(last)}", last.isoformat(timespec="seconds")),
                 *(str(night[key]) for key in ("shots", "set_aside", "references", "scans")),
-                night["sequences"],
+                _sequences(night, _notes(noted, night)),
+                *([] if screen.terminal else ["; ".join(_notes(noted, night))]),
             ]
         )
     screen.table(columns, rows, empty="no shots yet; 'nightfold take FILE…' takes some in")
@@ -71,6 +76,18 @@ def run(args: Namespace) -> int:
     return 0
 
 
-def _entry(night: dict[str, Any]) -> dict[str, Any]:
+def _notes(noted: Mapping[str, list[str]], night: dict[str, Any]) -> list[str]:
+    """Return what was noted about a night."""
+    return noted.get(f"night {night['machine']} {night['night']}", [])
+
+
+def _sequences(night: dict[str, Any], notes: list[str]) -> str | Cell:
+    """Return the sequences of a night, on a screen with the first words of its notes below."""
+    named = str(night["sequences"])
+    return Cell.of((named, f"note: {first_words(notes)}"), named) if notes else named
+
+
+def _entry(night: dict[str, Any], notes: list[str]) -> dict[str, Any]:
     """Return one night for JSON."""
-    return {**night, "sequences": [name for name in night["sequences"].split(", ") if name]}
+    sequences = [name for name in night["sequences"].split(", ") if name]
+    return {**night, "sequences": sequences, "notes": notes}

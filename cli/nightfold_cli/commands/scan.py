@@ -14,6 +14,7 @@ from nightfold_cli.known import check_observable
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.naming import name_in, named_scan
+from nightfold_cli.notetext import note_fields, texts_by_subject
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import Point, Reading, points_of
@@ -58,11 +59,12 @@ def run(args: Namespace) -> int:
         points = points_of(scan.table(set_aside=args.set_aside), axes, observables)
         units = {name: unit or "" for name, unit in _units(scan, observables).items()}
         times = local_times(store)
+        notes = texts_by_subject(store)
     if screen.json:
-        screen.answer({"scan": entry(scan, name), "points": [_entry(scan, point) for point in points]})
+        screen.answer({"scan": entry(scan, name, notes), "points": [_entry(scan, point) for point in points]})
         return 0
     if screen.terminal:
-        _header(screen, scan, name, times)
+        _header(screen, scan, name, times, notes.get(f"scan {scan.id}", []))
     if not screen.terminal or args.points or len(points) <= _MOST_POINTS:
         _tabulate(screen, scan, points, observables, units)
     else:
@@ -84,7 +86,7 @@ def _units(scan: Scan, observables: Sequence[str]) -> dict[str, str]:
     return {name: scan.units.get(name, "") for name in observables}
 
 
-def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes) -> None:
+def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes, notes: Sequence[str]) -> None:
     """Say what the scan is."""
     origin = {"label": "by label", "found": "found by itself", "declared": "declared"}.get(
         scan.origin, scan.origin
@@ -98,6 +100,7 @@ def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes) -> None:
             *(("axis", f"{axis_line(axis)}, {counted(axis.points, 'point')}") for axis in scan.axes),
             ("shots", f"{scan.shots}, {repeats_text(scan)} a point{aside}"),
             ("taken", f"{first:%Y-%m-%d %H:%M:%S} to {until}"),
+            *note_fields(notes, screen),
         ]
     )
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
 from collections.abc import Mapping, Sequence
-from datetime import date, time
+from datetime import date
 from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
@@ -13,6 +13,7 @@ from nightfold_cli.known import check_machine, check_sequence
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, offset_if_it_changes
 from nightfold_cli.naming import ambiguous_labels, name_of
+from nightfold_cli.notetext import texts_by_subject
 from nightfold_cli.opening import local_times, moment, opened
 from nightfold_cli.render import Screen
 from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status, title
@@ -49,8 +50,8 @@ def run(args: Namespace) -> int:
     """List the scans, the newest last."""
     screen = Screen.here(args.json)
     with opened(args, screen) as store:
+        args.machine = check_machine(store, args.machine, screen)
         since, until = moment(args.since, store, args.machine), moment(args.until, store, args.machine)
-        check_machine(store, args.machine)
         every = store.scans()
         check_sequence(args.sequence, [scan.sequence for scan in every])
         ambiguous = ambiguous_labels(every)
@@ -68,7 +69,8 @@ def run(args: Namespace) -> int:
         times = local_times(store)
         empty = _NONE if every else _NONE_YET
         if screen.json:
-            screen.answer({"scans": [entry(scan, names[scan.id]) for scan in listed]})
+            notes = texts_by_subject(store)
+            screen.answer({"scans": [entry(scan, names[scan.id], notes) for scan in listed]})
         elif screen.terminal:
             _draw(screen, listed, names, _nights(store, listed), empty)
             if listed:
@@ -119,11 +121,12 @@ def _draw(
 
 def _nights(store: Store, scans: Sequence[Scan]) -> list[date]:
     """Return the night each scan began in."""
-    from nightfold.timestamps import night_of, to_us
-
-    noon = time(12)
-    bounds = {machine: card.night_boundary for machine, card in store.cards().items()}
-    return [night_of(to_us(scan.first), scan.zone, bounds.get(scan.machine, noon)) for scan in scans]
+    found: dict[int, date] = {}
+    for machine in {scan.machine for scan in scans}:
+        own = [scan for scan in scans if scan.machine == machine]
+        nights = store.night_of([scan.first for scan in own], machine)
+        found |= {scan.id: night for scan, night in zip(own, nights, strict=True)}
+    return [found[scan.id] for scan in scans]
 
 
 def trend_of(scan: Scan, *, unicode: bool) -> str:

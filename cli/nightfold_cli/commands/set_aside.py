@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-import getpass
 from argparse import ArgumentParser, Namespace
 
+from nightfold_cli.arguments import add_by, by_whom
 from nightfold_cli.failures import UsageError
 from nightfold_cli.opening import opened
 from nightfold_cli.render import Screen
@@ -22,7 +22,7 @@ def add_arguments(parser: ArgumentParser) -> None:
     what = parser.add_mutually_exclusive_group(required=True)
     what.add_argument("--reason", metavar="TEXT", help="why the shots are left out")
     what.add_argument("--put-back", action="store_true", help="use the shots again")
-    parser.add_argument("--by", metavar="NAME", help="who says so (default: the user logged in)")
+    add_by(parser)
 
 
 def run(args: Namespace) -> int:
@@ -32,7 +32,7 @@ def run(args: Namespace) -> int:
         raise UsageError("--reason: found nothing, wanted why the shots are left out")
     with opened(args, screen) as store:
         uids = [store.shot(shot).uid for shot in args.shots]
-        by = args.by or _user()
+        by = by_whom(args)
         changed = store.put_back(uids, by=by) if args.put_back else store.set_aside(uids, args.reason, by=by)
     done = "put back" if args.put_back else "set aside"
     if screen.json:
@@ -42,11 +42,3 @@ def run(args: Namespace) -> int:
     already = f"; {unchanged} were so already" if unchanged else ""
     screen.text(f"{changed} {'shot' if changed == 1 else 'shots'} {done}{already}")
     return 0
-
-
-def _user() -> str | None:
-    """Return the name of who is logged in, None where it cannot be told."""
-    try:
-        return getpass.getuser()
-    except (OSError, KeyError):
-        return None

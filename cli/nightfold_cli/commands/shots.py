@@ -10,9 +10,11 @@ from typing import TYPE_CHECKING, Any
 from nightfold_cli.arguments import positive
 from nightfold_cli.concise import concise
 from nightfold_cli.failures import UsageError
+from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
 from nightfold_cli.naming import named_scan, shared_names
+from nightfold_cli.notetext import note_fields
 from nightfold_cli.opening import local_times, moment, opened, records
 from nightfold_cli.render import Screen
 from nightfold_cli.settings import ENOUGH, aligned, setting
@@ -60,9 +62,11 @@ def run(args: Namespace) -> int:
     if args.uid and _filters(args):
         raise UsageError(f"a shot is shown in full; {_filters(args)[0]} is for lists")
     with opened(args, screen) as store:
+        args.machine = check_machine(store, args.machine, screen)
         times = local_times(store)
         if args.uid:
-            _show(screen, store.shot(args.uid), times)
+            shot = store.shot(args.uid)
+            _show(screen, shot, times, records(store.notes(shot=shot.uid)))
         else:
             _list(screen, store, args, times)
     return 0
@@ -200,7 +204,7 @@ def _reading_cell(value: Any, stderr: Any) -> Cell:
     return Cell(setting(value, digits=ENOUGH), setting(value))
 
 
-def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
+def _show(screen: Screen, shot: ShotView, times: LocalTimes, notes: list[dict[str, Any]]) -> None:
     """Show all that is known of one shot."""
     if screen.json:
         screen.answer({"shot": _entry(shot)})
@@ -215,7 +219,7 @@ def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
             ("scan", shot.scan or "none"),
             ("reference", "yes" if shot.reference else ""),
             ("set aside", shot.set_aside or "no"),
-            *(("note", note) for note in shot.notes),
+            *note_fields([_signed(note, times) for note in notes], screen),
             ("taken from", f"{shot.source}:{shot.line}" if shot.source else ""),
             *((f"frame {camera}", f"{role}: {path}") for camera, role, path in shot.frames),
         )
@@ -236,6 +240,13 @@ def _show(screen: Screen, shot: ShotView, times: LocalTimes) -> None:
         ],
         empty="no parameters",
     )
+
+
+def _signed(note: dict[str, Any], times: LocalTimes) -> str:
+    """Return the text of a note, with who wrote it and when if that is not the record itself."""
+    if not note["by"]:
+        return str(note["text"])
+    return f"{note['text']} ({note['by']}, {times.local(note['at'], note['machine']):%Y-%m-%d %H:%M})"
 
 
 def _reading(reading: ShotReading) -> str | Cell:

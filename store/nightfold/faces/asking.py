@@ -2,22 +2,23 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from datetime import datetime
+from collections.abc import Iterable, Sequence
+from datetime import date, datetime
 from typing import TYPE_CHECKING, Any
 
 from sqlalchemy import select
 
 from nightfold import tables
 from nightfold.faces.face import Face
-from nightfold.ledger import edits, names, nightly, selecting
+from nightfold.ledger import edits, names, nightly, notes, selecting
 from nightfold.ledger.shot import ShotView, view_shot
-from nightfold.timestamps import utc_times
+from nightfold.timestamps import to_us, utc_times
 
 if TYPE_CHECKING:
     import pandas as pd
 
     from nightfold.card import MachineCard
+    from nightfold.ledger.sequences import SequenceView
 
 
 class Asking(Face):
@@ -32,6 +33,16 @@ class Asking(Face):
         """Return the names of the machines, sorted."""
         with self._session.reading() as connection:
             return sorted(connection.execute(select(tables.machine.c.name)).scalars())
+
+    def machine(self, name: str) -> str:
+        """Return the name under which the store has a machine: its own, or that of the one it was merged into.
+
+        Raises
+        ------
+        NotFound
+        """
+        with self._session.reading() as connection:
+            return str(selecting.find_machine(connection, name).name)
 
     def zone(self, machine: str) -> str:
         """Return the time zone in which a machine's times are shown."""
@@ -103,6 +114,74 @@ class Asking(Face):
         with self._session.reading() as connection:
             return nightly.night_table(connection)
 
+    def night_of(self, moments: Sequence[datetime], machine: str | None = None) -> list[date]:
+        """Return the night that each moment belongs to, as `nights` names it: by the date of its evening.
+
+        Parameters
+        ----------
+        moments : sequence of datetime
+            Aware.
+        machine : str, optional
+            Needed where there are several.
+
+        Raises
+        ------
+        NotFound, ChoiceNeeded
+        """
+        with self._session.reading() as connection:
+            row = selecting.the_machine(connection, machine)
+            return nightly.nights_at(connection, row, [to_us(moment) for moment in moments])
+
+    def notes(
+        self,
+        words: str | Iterable[str] | None = None,
+        *,
+        shot: str | None = None,
+        scan: int | str | None = None,
+        fit: int | None = None,
+        night: date | str | None = None,
+        machine: str | None = None,
+        since: datetime | str | None = None,
+        until: datetime | str | None = None,
+    ) -> pd.DataFrame:
+        """Return notes, a row each, the newest last.
+
+        Parameters
+        ----------
+        words : str or iterable of str, optional
+            All must occur in the text; capitals and accents do not matter.
+        shot, scan, fit, night
+            Only those on this subject (one of them). Notes on fits that a fit has replaced count as its own.
+        machine : str, optional
+            Only what is about this machine.
+        since, until : datetime or str, optional
+            Written from then on (included), before then. The note of a record counts as written when its shot started.
+
+        Returns
+        -------
+        DataFrame
+            ``at`` (UTC), ``by``, ``kind`` (shot, scan, fit or night), ``about`` (uid of the shot, key of the scan, id of
+            the fit, date of the night), ``machine``, ``text``, ``subject`` (kind and id, or machine and date).
+
+        Raises
+        ------
+        NotFound, ChoiceNeeded
+            If the subject, or the machine, is not there or must be named.
+        ValueError
+            If there are several subjects.
+        """
+        from nightfold.scans.listing import find_scan
+
+        scan_id = None if scan is None else find_scan(self._session, scan).id
+        with self._session.reading() as connection:
+            subject = notes.find_subject(
+                connection, shot=shot, scan_id=scan_id, fit=fit, night=night, machine=machine
+            )
+            found = notes.find_notes(
+                connection, words, subject=subject, machine=machine, since=since, until=until
+            )
+        return notes.note_table(found)
+
     def parameters(self, machine: str | None = None) -> pd.DataFrame:
         """Return the parameters known: machine, name, kind, unit."""
         return self._named(tables.parameter, machine)
@@ -123,6 +202,33 @@ class Asking(Face):
             rows = connection.execute(query.order_by(tables.machine.c.name, table.c.name)).mappings().all()
         columns = ["machine", "name", *(["kind"] if "kind" in table.c else []), "unit"]
         return pd.DataFrame([dict(row) for row in rows], columns=columns)
+
+    def sequences(self, machine: str | None = None) -> pd.DataFrame:
+        """Return a row a sequence: machine, sequence, versions, shots (counts), first, last (UTC).
+
+        Raises
+        ------
+        NotFound
+            If the machine is not in the store.
+        """
+        from nightfold.ledger.sequences import list_sequences
+
+        with self._session.reading() as connection:
+            return list_sequences(connection, machine)
+
+    def sequence(self, name: str, *, machine: str | None = None) -> SequenceView:
+        """Return a sequence: its versions by structure, their steps in time, and what differs between shots.
+
+        Raises
+        ------
+        NotFound
+            If the machine, or a sequence of that name, is not in the store.
+        ChoiceNeeded
+            If several machines have a sequence of that name.
+        """
+        from nightfold.ledger.sequences import view_sequence
+
+        return view_sequence(self._session, name, machine)
 
     def edits(
         self,

@@ -2,14 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from datetime import date
+from typing import Any
 
+from sqlalchemy import select
+
+from nightfold import tables
 from nightfold.faces.face import Face
-from nightfold.ledger import setting_aside
+from nightfold.ledger import correcting, notes, setting_aside
+from nightfold.timestamps import now_us
 
 
 class Mending(Face):
-    """Putting right: shots set aside and put back."""
+    """Putting right: shots set aside and put back, settings corrected."""
 
     def set_aside(self, uids: Sequence[str], reason: str, *, by: str | None = None) -> int:
         """Leave shots out of results, with a reason; return how many were not so already.
@@ -34,3 +40,97 @@ class Mending(Face):
         """
         with self._session.writing() as connection:
             return setting_aside.put_shots_back(connection, uids, by)
+
+    def correct(
+        self,
+        uids: Sequence[str],
+        settings: Mapping[str, Any],
+        reason: str,
+        *,
+        by: str | None = None,
+        scan: int | str | None = None,
+    ) -> int:
+        """Correct settings of shots by appended corrections; return how many shots were changed.
+
+        Parameters
+        ----------
+        uids : sequence of str
+            The shots, by uid or the beginning of one.
+        settings : mapping of parameter to value
+            What was really set, as in a record: ``{"coil_current": {"value": 61.3, "unit": "A"}}``.
+        reason : str
+            Why; it stands in the shot's history.
+        by : str, optional
+            Who says so.
+        scan : int or str, optional
+            All shots of this scan too, those set aside included.
+
+        Raises
+        ------
+        NotFound
+            If a shot, a scan or a parameter is not in the store.
+        RecordError
+            If a value cannot be taken for its parameter, a shot has no such setting, or nothing would change.
+        ValueError
+            If the reason is empty, or no setting or no shot is given.
+
+        Notes
+        -----
+        All is done, or nothing. Shots that have the value already are left as they are. Scans follow, and fits that
+        used the shots are stale. The record as it was first taken stays known. Correcting back undoes a correction.
+        """
+        from nightfold.scans.following import follow_corrections
+        from nightfold.scans.listing import find_scan
+
+        scan_id = None if scan is None else find_scan(self._session, scan).id
+        named = (uids,) if isinstance(uids, str) else tuple(uids)
+        if not named and scan_id is None:
+            raise ValueError("correct: found no shot, wanted uids or a scan")
+        with self._session.writing() as connection:
+            shots = list(setting_aside.find_shots(connection, named).values())
+            if scan_id is not None:
+                shots += connection.execute(select(tables.shot).where(tables.shot.c.scan_id == scan_id)).all()
+            changed = correcting.correct_shots(connection, shots, settings, reason, by)
+            follow_corrections(connection, changed)
+        return len(changed)
+
+    def add_note(
+        self,
+        text: str,
+        *,
+        shot: str | None = None,
+        scan: int | str | None = None,
+        fit: int | None = None,
+        night: date | str | None = None,
+        machine: str | None = None,
+        by: str | None = None,
+    ) -> notes.Note:
+        """Write a note on a shot, a scan, a fit or a night, and return it.
+
+        Parameters
+        ----------
+        text : str
+            May have several lines.
+        shot, scan, fit, night
+            What it is about, exactly one: uid or its beginning, key of a scan, id of a fit, date of the evening.
+        machine : str, optional
+            Whose night, where there are several machines.
+        by : str, optional
+
+        Raises
+        ------
+        NotFound, ChoiceNeeded
+            If that is not there, or the machine must be named.
+        ValueError
+            If the text is empty, or there is not exactly one subject.
+        """
+        from nightfold.scans.listing import find_scan
+
+        scan_id = None if scan is None else find_scan(self._session, scan).id
+        with self._session.writing() as connection:
+            subject = notes.find_subject(
+                connection, shot=shot, scan_id=scan_id, fit=fit, night=night, machine=machine
+            )
+            if subject is None:
+                raise ValueError("note: found no subject, wanted one of shot, scan, fit, night")
+            return notes.add_note(connection, subject, text, by, now_us())

@@ -11,7 +11,10 @@ from sqlalchemy import Connection, Row, and_, delete, insert, select, update
 from nightfold import tables
 from nightfold.errors import RecordError
 from nightfold.ledger.checking import CheckedShot, readings_content
+from nightfold.ledger.correcting import digests_before
 from nightfold.ledger.names import MachineNames, insert_row
+from nightfold.ledger.notes import shot_subject
+from nightfold.ledger.pins import label_of
 from nightfold.records import Derivation, shorten
 from nightfold.settings import ReadValue, Value, digest_content
 from nightfold.timestamps import from_us
@@ -91,6 +94,8 @@ def _remember(connection: Connection, shot_id: int, digest: bytes, at_us: int) -
 def check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) -> None:
     """Refuse a record whose settings, time, sequence or scan are not those of the shot stored under its uid.
 
+    The settings may also be those that the shot had before they were corrected.
+
     Raises
     ------
     RecordError
@@ -106,12 +111,13 @@ def check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) 
             from_us(shot.started_us).isoformat(),
             f"{from_us(stored.started_us).isoformat()}, {taken}",
         )
-    if bytes(stored.values_digest) != shot.values_digest:
+    if bytes(
+        stored.values_digest
+    ) != shot.values_digest and shot.values_digest not in digests_before(connection, stored.id):
         raise _differing_setting(connection, stored, shot, taken)
     if bool(stored.reference) != shot.reference:
         raise RecordError("reference", str(shot.reference), taken)
-    scan = tables.scan
-    label = connection.execute(select(scan.c.label).where(scan.c.id == stored.scan_id)).scalar()
+    label = label_of(connection, stored.id, stored.scan_id)
     wished = None if shot.reference else shot.wish.label
     if label != wished:
         raise RecordError("scan", _label(wished), f"{_label(label)}, {taken}")
@@ -232,7 +238,7 @@ def set_failed(connection: Connection, shot_id: int, reason: str, at_us: int) ->
 def _add_notes_and_frames(connection: Connection, shot_id: int, shot: CheckedShot, at_us: int) -> bool:
     changed = False
     note, frame = tables.note, tables.frame
-    subject = note_subject(shot_id)
+    subject = shot_subject(shot_id)
     if shot.note:
         same = and_(note.c.subject == subject, note.c.text == shot.note)
         if not connection.execute(select(note.c.id).where(same)).first():
@@ -244,8 +250,3 @@ def _add_notes_and_frames(connection: Connection, shot_id: int, shot: CheckedSho
             connection.execute(insert(frame).values(shot_id=shot_id, **item.model_dump()))
             changed = True
     return changed
-
-
-def note_subject(shot_id: int) -> str:
-    """Return how a note names its shot."""
-    return f"shot {shot_id}"

@@ -9,8 +9,9 @@ from typing import Any
 from sqlalchemy import Connection, select
 
 from nightfold import tables
-from nightfold.ledger.amending import find_derivation, note_subject
+from nightfold.ledger.amending import find_derivation
 from nightfold.ledger.checking import CheckedShot
+from nightfold.ledger.notes import shot_subject
 from nightfold.ledger.rows import chunks, insert_many, next_id
 from nightfold.timestamps import now_us
 
@@ -49,7 +50,9 @@ def insert_shots(connection: Connection, shots: Sequence[CheckedShot], sets: dic
     insert_many(connection, tables.frame, frames)
     at_us = now_us()
     notes = [
-        {"subject": note_subject(shot.id), "text": shot.note, "at_us": at_us} for shot in shots if shot.note
+        {"subject": shot_subject(shot.id), "text": shot.note, "at_us": shot.started_us}
+        for shot in shots
+        if shot.note
     ]
     failed = [
         {"shot_id": shot.id, "reason": shot.failed, "rule": "failed", "at_us": at_us}

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from datetime import date
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
 from nightfold.ledger.names import newest_cards, stored_card
@@ -18,6 +20,7 @@ if TYPE_CHECKING:
 
 PAUSE_US = 3600 * 1_000_000
 LONGEST_OVERTIME_US = 6 * PAUSE_US
+_BEFORE_US, _AFTER_US = 36 * PAUSE_US, 12 * PAUSE_US  # what can have a say in which night a moment belongs to
 COLUMNS = ("night", "machine", "first", "last", "shots", "set_aside", "references", "scans", "sequences")
 
 
@@ -47,14 +50,8 @@ def night_table(connection: Connection) -> pd.DataFrame:
         )
         if frame.empty:
             continue
-        card = stored_card(cards[machine.id]) if machine.id in cards else None
         started = frame["us"].to_numpy(dtype=np.int64)
-        nights = (
-            nights_of(started, machine.zone, card.night_boundary)
-            if card
-            else nights_of(started, machine.zone)
-        )
-        frame["night"] = carry_on(started, nights)
+        frame["night"] = carry_on(started, _by_the_clock(started, machine.zone, cards.get(machine.id)))
         for night, group in frame.groupby("night", sort=True):
             rows.append(_summary(night, machine.name, machine.zone, group))
     table = pd.DataFrame(rows, columns=list(COLUMNS))
@@ -80,6 +77,42 @@ def carry_on(started_us: NDArray[np.int64], nights: NDArray[np.object_]) -> NDAr
         if len(crossings) == 1 and started_us[run[-1]] - started_us[crossings[0]] <= LONGEST_OVERTIME_US:
             kept[run] = nights[run[0]]
     return kept
+
+
+def nights_at(connection: Connection, machine: Row[Any], moments_us: Sequence[int]) -> list[date]:
+    """Return the night of each moment as `night_table` has it: work that runs on past the boundary stays with its own.
+
+    Parameters
+    ----------
+    machine : Row
+        Of the table of machines.
+    moments_us : sequence of int
+        In any order.
+    """
+    if not moments_us:
+        return []
+    shot, sequence = tables.shot, tables.sequence
+    query = (
+        select(shot.c.started_us)
+        .join(sequence, sequence.c.id == shot.c.sequence_id)
+        .where(
+            sequence.c.machine_id == machine.id,
+            shot.c.started_us.between(min(moments_us) - _BEFORE_US, max(moments_us) + _AFTER_US),
+        )
+    )
+    wanted = np.array(moments_us, dtype=np.int64)
+    taken = np.array(list(connection.execute(query).scalars()), dtype=np.int64)
+    every = np.unique(np.concatenate([taken, wanted]))
+    card = newest_cards(connection).get(machine.id)
+    nights = carry_on(every, _by_the_clock(every, machine.zone, card))
+    return [nights[place] for place in np.searchsorted(every, wanted)]
+
+
+def _by_the_clock(started_us: NDArray[np.int64], zone: str, card: str | None) -> NDArray[np.object_]:
+    """Return the night of each moment by the boundary alone."""
+    if card is None:
+        return nights_of(started_us, zone)
+    return nights_of(started_us, zone, stored_card(card).night_boundary)
 
 
 def _summary(night: Any, machine: str, zone: str, group: pd.DataFrame) -> dict[str, Any]:

@@ -73,7 +73,7 @@ def moment_us(value: datetime | str, zone: str) -> int:
 
 
 def find_machine(connection: Connection, name: str) -> Row[Any]:
-    """Return the row of a machine.
+    """Return the row of a machine, by its name or by one that was merged into it.
 
     Raises
     ------
@@ -81,8 +81,30 @@ def find_machine(connection: Connection, name: str) -> Row[Any]:
     """
     rows = {row.name: row for row in connection.execute(select(tables.machine))}
     if name not in rows:
+        alias = tables.machine_alias
+        meant = connection.execute(select(alias.c.machine_id).where(alias.c.name == name)).scalar()
+        for row in rows.values():
+            if row.id == meant:
+                return row
         raise NotFound(f"machine {name!r}: not in this store; {near_miss(name, rows)}")
     return rows[name]
+
+
+def the_machine(connection: Connection, name: str | None) -> Row[Any]:
+    """Return the row of a machine, or without a name of the only one there is.
+
+    Raises
+    ------
+    NotFound, ChoiceNeeded
+    """
+    if name is not None:
+        return find_machine(connection, name)
+    rows = list(connection.execute(select(tables.machine).order_by(tables.machine.c.name)))
+    if not rows:
+        raise NotFound("machine: none is in this store yet; take shots or use a machine card first")
+    if len(rows) > 1:
+        raise ChoiceNeeded(f"machine: there are {', '.join(row.name for row in rows)}; name one")
+    return rows[0]
 
 
 def near_miss(name: str, known: Iterable[str]) -> str:

@@ -8,8 +8,9 @@ from datetime import datetime
 from sqlalchemy import Connection, select
 
 from nightfold import tables
-from nightfold.ledger.amending import note_subject, stored_settings
+from nightfold.ledger.amending import stored_settings
 from nightfold.ledger.columns import read_value
+from nightfold.ledger.notes import shot_subject
 from nightfold.ledger.selecting import scan_key
 from nightfold.ledger.setting_aside import find_shots
 from nightfold.settings import plain_value
@@ -74,7 +75,8 @@ def view_shot(connection: Connection, uid: str) -> ShotView:
     reason = connection.execute(
         select(aside.c.reason).where(aside.c.shot_id == shot.id, aside.c.lifted_us.is_(None))
     ).scalar()
-    notes = connection.execute(select(note.c.text).where(note.c.subject == note_subject(shot.id))).scalars()
+    noted = select(note.c.text).where(note.c.subject == shot_subject(shot.id)).order_by(note.c.at_us, note.c.id)
+    notes = connection.execute(noted).scalars()
     frames = connection.execute(
         select(frame.c.camera, frame.c.role, frame.c.path).where(frame.c.shot_id == shot.id)
     )
