@@ -36,6 +36,7 @@ PURE = [
     "scans/stretches.py",
     "scans/segments.py",
     "scans/axes.py",
+    "scans/relative.py",
 ]
 MODULES = sorted(ROOT.rglob("*.py"))
 

@@ -50,6 +50,8 @@ class Scanning(Face):
         weights: str = "auto",
         robust: bool = True,
         keep: bool = True,
+        relative_to: str | None = None,
+        reference_within: str | float = "30 min",
     ) -> FitResult | FitTable:
         """Fit a model to an observable of a scan, and keep the result with its provenance.
 
@@ -64,6 +66,8 @@ class Scanning(Face):
             As in `fit_curve`.
         keep : bool
             Keep the fit in the store.
+        relative_to, reference_within
+            As in `Scan.table`: fit the observable relative to reference shots.
 
         Returns
         -------
@@ -75,7 +79,7 @@ class Scanning(Face):
         ChoiceNeeded
             If the scan has several axes and none is named.
         NotFound
-            If the scan, model, observable or axis is not there.
+            If the scan, model, observable or axis is not there, or the reference shots are not (`NoReference`).
         FitError
             If it cannot be done as asked.
         """
@@ -85,7 +89,16 @@ class Scanning(Face):
 
         chosen = self.scan(scan.id if isinstance(scan, Scan) else scan)
         request = FitRequest(
-            model, observable, along, background, dict(fixed or {}), dict(start or {}), weights, robust
+            model,
+            observable,
+            along,
+            background,
+            dict(fixed or {}),
+            dict(start or {}),
+            weights,
+            robust,
+            relative_to,
+            reference_within,
         )
         return fit_scan(self._session, chosen, request, keep=keep)
 

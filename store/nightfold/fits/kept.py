@@ -18,9 +18,11 @@ from nightfold.errors import FitError, NotFound
 from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult, FitWarning
 from nightfold.fits.scanfit import FitRequest, SliceFit, cut_scan, digest_data, fit_slices
+from nightfold.fits.source import PLAIN, Source
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import scan_key
+from nightfold.ledger.setting_aside import find_shots
 from nightfold.scans.listing import find_scan
 from nightfold.scans.scan import Scan
 from nightfold.session import Session
@@ -67,6 +69,7 @@ class KeptFit:
     id : int
     at : datetime
         When it was done (UTC).
+    scan_id : int
     scan_key, model, background, observable, along : str
     slice : dict
         Values of the other axes.
@@ -87,6 +90,7 @@ class KeptFit:
 
     id: int
     at: datetime
+    scan_id: int
     scan_key: str
     model: str
     background: str
@@ -116,33 +120,32 @@ def fit_scan(session: Session, scan: Scan, request: FitRequest, *, keep: bool) -
     if keep:
         with session.writing() as connection:
             for part in parts:
-                _keep(connection, scan, request, part)
+                keep_fit(connection, scan, request, part)
     return outcome
 
 
-def _keep(connection: Connection, scan: Scan, request: FitRequest, part: SliceFit) -> None:
+def keep_fit(connection: Connection, scan: Scan, request: FitRequest, part: SliceFit) -> None:
+    """Keep one fit of a scan, unless the same fit of the same data is there; it replaces the one before."""
     result, fit = part.result, tables.fit
     observable_id = _observable_id(connection, scan, request.observable)
     same = {
         "scan_id": scan.id,
         "observable_id": observable_id,
         "along": part.along,
-        "slice": _slice_text(part.where),
+        "slice": slice_text(part.where),
         "model": result.model,
         "background": result.background,
     }
     own = {"function": request.fingerprint} if request.fingerprint else {}
     rest = {
-        "settings": json.dumps({**result.settings, **own}, default=float),
+        "settings": json.dumps({**result.settings, **request.source.settings, **own}, default=float),
         "data_digest": part.digest(request.observable),
         "program": __version__,
     }
-    earlier = connection.execute(
-        select(fit)
-        .where(*(fit.c[name] == value for name, value in same.items()))
-        .order_by(fit.c.id.desc())
-        .limit(1)
-    ).first()
+    alike = connection.execute(
+        select(fit).where(*(fit.c[name] == value for name, value in same.items())).order_by(fit.c.id.desc())
+    )
+    earlier = next((row for row in alike if _is_relative(row) == (request.relative_to is not None)), None)
     if earlier is not None and all(earlier._mapping[name] == value for name, value in rest.items()):
         return  # the same fit of the same data is there already
     covariance = {"names": list(result.free_names), "rows": result.covariance_matrix.tolist()}
@@ -167,7 +170,7 @@ def _keep(connection: Connection, scan: Scan, request: FitRequest, part: SliceFi
         connection.execute(insert(tables.fit_warning), warnings)
 
 
-def _slice_text(where: Mapping[str, Any]) -> str:
+def slice_text(where: Mapping[str, Any]) -> str:
     return json.dumps(where, ensure_ascii=False)
 
 
@@ -225,8 +228,21 @@ def _observable_id(connection: Connection, scan: Scan, observable: str) -> int:
     return int(connection.execute(query).scalar_one())
 
 
-def list_fits(session: Session, scan: Scan | None) -> list[KeptFit]:
-    """Return the fits kept, oldest first, of one scan or of all; those replaced by a newer one are left out."""
+def list_fits(session: Session, scan: Scan | None, shots: Sequence[str] | None = None) -> list[KeptFit]:
+    """Return the fits kept, oldest first; those replaced by a newer one are left out.
+
+    Parameters
+    ----------
+    scan : Scan, optional
+        Only fits of this scan.
+    shots : sequence of str, optional
+        Only fits that used one of these shots, or whose scan has one of them now.
+
+    Raises
+    ------
+    NotFound
+        If a shot is not in the store.
+    """
     fit, observable = tables.fit, tables.observable
     replaced = select(fit.c.replaces).where(fit.c.replaces.isnot(None))
     query = (
@@ -240,6 +256,9 @@ def list_fits(session: Session, scan: Scan | None) -> list[KeptFit]:
         query = query.where(fit.c.scan_id == scan.id)
     with session.reading() as connection:
         rows = list(connection.execute(query))
+        if shots is not None:
+            used, scans = _concerned(connection, shots)
+            rows = [row for row in rows if row.id in used or row.scan_id in scans]
         ids = [row.id for row in rows]
         estimates, warnings = _read_estimates(connection, ids), _read_warnings(connection, ids)
         counts = _count_roles(connection, ids)
@@ -248,6 +267,15 @@ def list_fits(session: Session, scan: Scan | None) -> list[KeptFit]:
         _make_kept(row, estimates[row.id], warnings[row.id], counts[row.id], digests.get(_data_of(row)))
         for row in rows
     ]
+
+
+def _concerned(connection: Connection, uids: Sequence[str]) -> tuple[set[int], set[int]]:
+    """Return the fits that used one of the shots, and the scans that have one."""
+    found = find_shots(connection, uids).values()
+    table, used = tables.fit_shot, set[int]()
+    for part in chunks([shot.id for shot in found]):
+        used.update(connection.execute(select(table.c.fit_id).where(table.c.shot_id.in_(part))).scalars())
+    return used, {shot.scan_id for shot in found if shot.scan_id is not None}
 
 
 def _read_estimates(connection: Connection, ids: Sequence[int]) -> dict[int, dict[str, KeptEstimate]]:
@@ -295,32 +323,45 @@ def _number(value: float | None) -> float:
     return float("nan") if value is None else value
 
 
-def _data_of(row: Row[Any]) -> tuple[int, str, str, str]:
-    """Return what says which data a fit rests on: scan, axis, observable and slice."""
-    return row.scan_id, row.along, row.observable, row.slice
+_Data = tuple[int, Source, str, str, str]
 
 
-def _current_digests(
-    session: Session, rows: Sequence[Row[Any]], scan: Scan | None
-) -> dict[tuple[int, str, str, str], bytes]:
-    """Return the digests that the data of fits have today; none where the scan no longer has such a slice."""
-    wanted: dict[int, dict[str, set[tuple[str, str]]]] = defaultdict(lambda: defaultdict(set))
+def _data_of(row: Row[Any]) -> _Data:
+    """Return what says which data a fit rests on: scan, source, axis, observable and slice."""
+    return row.scan_id, _source_of(row), row.along, row.observable, row.slice
+
+
+def _source_of(row: Row[Any]) -> Source:
+    settings = json.loads(row.settings)
+    if settings.get("relative_to") is None:
+        return PLAIN
+    return Source(row.observable, settings["relative_to"], settings["reference_within"])
+
+
+def _is_relative(row: Row[Any]) -> bool:
+    return json.loads(row.settings).get("relative_to") is not None
+
+
+def _current_digests(session: Session, rows: Sequence[Row[Any]], scan: Scan | None) -> dict[_Data, bytes]:
+    """Return the digests that the data of fits have today; none where the scan no longer has such data."""
+    wanted: dict[tuple[int, Source], dict[str, set[tuple[str, str]]]] = defaultdict(lambda: defaultdict(set))
     for row in rows:
-        wanted[row.scan_id][row.along].add((row.observable, row.slice))
-    digests: dict[tuple[int, str, str, str], bytes] = {}
-    for scan_id, axes in wanted.items():
+        wanted[row.scan_id, _source_of(row)][row.along].add((row.observable, row.slice))
+    digests: dict[_Data, bytes] = {}
+    for (scan_id, source), axes in wanted.items():
         try:
             found = scan or find_scan(session, scan_id)
+            everything = source.read(found)
         except NotFound:
-            continue  # it has no shots any more: its fits are stale
-        everything = found.table(set_aside=True)
+            continue  # no shots any more, or no reference shots: its fits are stale
         for along, data in axes.items():
             table, slices = cut_scan(found, everything, along)
-            places = {_slice_text(part.where): part.rows for part in slices}
+            places = {slice_text(part.where): part.rows for part in slices}
             for observable, where in data:
                 with suppress(KeyError):  # slice, axis or observable is gone: the fit is stale
                     rows_now = table.iloc[places[where]]
-                    digests[scan_id, along, observable, where] = digest_data(rows_now, along, observable)
+                    digest = digest_data(rows_now, along, observable)
+                    digests[scan_id, source, along, observable, where] = digest
     return digests
 
 
@@ -334,6 +375,7 @@ def _make_kept(
     return KeptFit(
         id=row.id,
         at=from_us(row.at_us),
+        scan_id=row.scan_id,
         scan_key=scan_key(row.scan_id, row.label, row.round) or "",
         model=row.model,
         background=row.background,

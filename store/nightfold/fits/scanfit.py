@@ -14,8 +14,10 @@ from nightfold.errors import ChoiceNeeded, FitError, NotFound
 from nightfold.fits.curve import fit_curve
 from nightfold.fits.many import FitTable, fit_many
 from nightfold.fits.result import FitResult
+from nightfold.fits.source import PLAIN, Source
 from nightfold.ledger.selecting import column_name, near_miss
 from nightfold.scans.columns import Column, encode, is_missing
+from nightfold.scans.references import WITHIN, read_within
 from nightfold.settings import digest_content
 
 if TYPE_CHECKING:
@@ -37,6 +39,15 @@ class FitRequest:
     start: dict[str, float] = field(default_factory=dict)
     weights: str = "auto"
     robust: bool = True
+    relative_to: str | None = None
+    reference_within: str | float = WITHIN
+
+    @property
+    def source(self) -> Source:
+        """Where the data come from."""
+        if self.relative_to is None:
+            return PLAIN
+        return Source(self.observable, self.relative_to, read_within(self.reference_within))
 
     @property
     def options(self) -> dict[str, Any]:
@@ -99,8 +110,10 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
     """
     along = choose_along(scan, request.along)
     observable = choose_observable(scan, request.observable)
-    table, slices = cut_scan(scan, scan.table(set_aside=True), along)
-    units: dict[str, Any] = {"unit_x": scan.units.get(along, ""), "unit_y": scan.units.get(observable, "")}
+    everything = request.source.read(scan)
+    table, slices = cut_scan(scan, everything, along)
+    known = everything.attrs["units"]
+    units: dict[str, Any] = {"unit_x": known.get(along, ""), "unit_y": known.get(observable, "")}
     x = _numbers(scan, table, along)
     if len(scan.axes) < 2:
         result = fit_curve(

@@ -1,0 +1,135 @@
+"""Fits of readings relative to reference shots: kept beside plain ones, stale when a reference shot changes."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from datetime import UTC, datetime, timedelta
+from typing import Any
+
+import numpy as np
+import pytest
+
+from nightfold import FitResult, Store, fit_curve, open_store
+from nightfold.errors import NoReference
+from nightfold.fits.scanfit import FitRequest, fit_slices
+
+START = datetime(2026, 10, 5, 19, tzinfo=UTC)
+
+
+def records(center: float = 61.3) -> list[dict[str, Any]]:
+    """Return a resonance taken upwards while the machine loses half of its atoms, a reference shot every 6 shots."""
+    rng = np.random.default_rng(3)
+    made: list[dict[str, Any]] = []
+    for place in range(72):
+        machine = 1e5 * (1 - 0.5 * place / 72)
+        reference = place % 6 == 0
+        current = 60.0 if reference else 59 + 4 * place / 71
+        share = 1.0 if reference else 1 - 0.5 / (1 + (2 * (current - center) / 0.9) ** 2)
+        value = share * machine * (1 + 0.01 * rng.normal())
+        own = {"reference": True} if reference else {"scan": "loss", "swept": ["coil_current"]}
+        made.append(
+            {
+                "uid": f"shot-{place}",
+                "machine": "heron",
+                "started": (START + timedelta(seconds=20 * place)).isoformat(),
+                "sequence": "hold",
+                "parameters": {"coil_current": {"value": current, "unit": "A"}},
+                "observables": {"atom_number": {"value": value, "stderr": 0.01 * value, "unit": "atoms"}},
+                **own,
+            }
+        )
+    return made
+
+
+@pytest.fixture
+def here(anywhere: str) -> Iterator[Store]:
+    with open_store(anywhere) as opened:
+        assert not opened.take(records()).refused
+        yield opened
+
+
+def fit(store: Store, **options: Any) -> FitResult:
+    result = store.fit("loss", "lorentzian", observable="atom_number", **options)
+    assert isinstance(result, FitResult)
+    return result
+
+
+def test_it_is_the_fit_of_the_relative_table_and_finds_the_truth(here: Store) -> None:
+    result = fit(here, relative_to="reference", keep=False)
+    table = here.scan("loss").table(relative_to="reference")
+    alone = fit_curve(
+        table["coil_current"],
+        table["atom_number"],
+        "lorentzian",
+        stderr=table["atom_number_stderr"],
+        unit_x="A",
+    )
+    assert result.estimates["center"].value == alone.estimates["center"].value
+    assert result.estimates["amplitude"].unit == ""
+    low, high = result.estimates["center"].interval(0.95)
+    assert low < 61.3 < high
+    assert result.estimates["offset"].value == pytest.approx(1, abs=0.03)
+    plain = fit(here, keep=False)
+    assert plain.residual_stderr / 1e5 > 2 * result.residual_stderr  # the drift is in the plain one
+
+
+def test_it_is_kept_beside_the_plain_one(here: Store) -> None:
+    fit(here)
+    fit(here, relative_to="reference")
+    fit(here, relative_to="reference")
+    plain, relative = here.fits("loss")
+    assert "relative_to" not in plain.settings
+    assert relative.settings["relative_to"] == "reference"
+    assert relative.settings["reference_within"] == 1800.0
+    assert relative.estimates["offset"].unit == ""
+    fit(here, relative_to="reference", reference_within="20 min")
+    again = here.fits("loss")[1]
+    assert again.replaces == relative.id
+    assert again.settings["reference_within"] == 1200.0
+
+
+def test_it_can_be_asked_for_again_from_its_settings(here: Store) -> None:
+    result = fit(here, relative_to="reference", reference_within="25 min")
+    settings = here.fits("loss")[0].settings
+    request = FitRequest(
+        "lorentzian",
+        "atom_number",
+        relative_to=settings["relative_to"],
+        reference_within=settings["reference_within"],
+    )
+    again, _ = fit_slices(here.scan("loss"), request)
+    assert isinstance(again, FitResult)
+    assert again.estimates["center"].value == result.estimates["center"].value
+
+
+def test_a_reference_shot_that_changes_makes_it_stale_and_not_the_plain_one(here: Store) -> None:
+    fit(here)
+    fit(here, relative_to="reference")
+    assert [kept.stale for kept in here.fits("loss")] == [False, False]
+    assert [kept.stale for kept in here.fits()] == [False, False]
+    here.take(
+        [{"format": 1, "uid": "shot-30", "observables": {"atom_number": {"value": 9e4, "stderr": 900.0}}}]
+    )
+    assert [kept.stale for kept in here.fits("loss")] == [False, True]
+    assert [kept.stale for kept in here.fits()] == [False, True]
+    fit(here, relative_to="reference")
+    assert [kept.stale for kept in here.fits("loss")] == [False, False]
+    here.set_aside(["shot-30"], "not in the trap")
+    assert [kept.stale for kept in here.fits("loss")] == [False, True]
+
+
+def test_it_is_stale_when_the_reference_shots_are_gone(here: Store) -> None:
+    fit(here, relative_to="reference")
+    here.set_aside([f"shot-{place}" for place in range(0, 72, 6)], "laser off")
+    assert [kept.stale for kept in here.fits("loss")] == [True]
+    with pytest.raises(
+        NoReference, match="scan loss#1: atom_number relative to reference shots: found no reference"
+    ):
+        fit(here, relative_to="reference")
+
+
+def test_reference_shots_far_later_do_not_make_it_stale(here: Store) -> None:
+    fit(here, relative_to="reference")
+    late = records()[0] | {"uid": "late", "started": (START + timedelta(hours=20)).isoformat()}
+    assert here.take([late]).new == 1
+    assert [kept.stale for kept in here.fits("loss")] == [False]
