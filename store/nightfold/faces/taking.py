@@ -86,12 +86,79 @@ class Taking(Face):
         records = read_file(where, columns=columns, card=card)
         return self._writer.take(records, SourceLog(where), progress)
 
+    def take_sensors(
+        self, records: Iterable[Mapping[str, Any]], *, progress: Callable[[int], None] | None = None
+    ) -> Intake:
+        """Take readings of sensors, which belong to no shot; return how many were new and known, and what was refused.
 
-def _own(records: Iterable[Mapping[str, Any]]) -> Iterator[Any]:
+        Parameters
+        ----------
+        records : iterable of mappings
+            ``{"machine": …, "at": …, "readings": {name: number or {"value", "unit"}}}`` (docs/sensors.md).
+        progress : callable, optional
+            Called now and then with the number of records taken.
+
+        Notes
+        -----
+        ``new`` and ``known`` count readings, ``refused`` lists records. As with `take`, each batch is one transaction,
+        a record that we were made to wait for is stored at once, and everything can be handed over again.
+        """
+        from nightfold.sensors.taking import take_readings
+
+        stream = (
+            Incoming(record, "records", number, number)
+            for number, record in enumerate(_own(records, "take_sensors"), 1)
+        )
+        return take_readings(self._session, stream, progress=progress)
+
+    def take_sensor_file(
+        self,
+        path: Where,
+        *,
+        machine: str | None = None,
+        at: str = "at",
+        delimiter: str | None = None,
+        progress: Callable[[int], None] | None = None,
+    ) -> Intake:
+        """Take a file of sensor readings, JSON lines or a table, as `take_sensors` does.
+
+        Parameters
+        ----------
+        path : path or str
+        machine : str, optional
+            Of what does not name its machine; without it the one with a card, if there is one alone.
+        at, delimiter : str, optional
+            Of a table: the column with the time, and what parts the columns.
+        progress : callable, optional
+            Called with the number of bytes read.
+
+        Raises
+        ------
+        NotFound, RecordError, ChoiceNeeded
+            If there is no such file, or the head of a table cannot be understood.
+        """
+        from nightfold.intake.files import is_table, read_json, usual_delimiter
+        from nightfold.sensors.table import read_readings_table
+        from nightfold.sensors.taking import take_readings
+
+        where = Path(path)
+        if is_table(where):
+            records = read_readings_table(where, at=at, delimiter=delimiter or usual_delimiter(where))
+        else:
+            records = read_json(where)
+        if machine is None:
+            with self._session.reading() as connection:
+                cards = names.cards_in_force(connection)
+            machine = next(iter(cards)) if len(cards) == 1 else None
+        log = SourceLog(where)
+        return take_readings(self._session, records, machine=machine, log=log, progress=progress)
+
+
+def _own(records: Iterable[Mapping[str, Any]], verb: str = "take") -> Iterator[Any]:
     """Yield the records; those of a generator as copies, for it may go on to change and reuse what it gave."""
     if isinstance(records, (Mapping, str, bytes)):  # it would be taken apart key by key
         raise TypeError(
-            f"take: found one {type(records).__name__}, wanted an iterable of records such as [record]"
+            f"{verb}: found one {type(records).__name__}, wanted an iterable of records such as [record]"
         )
     if isinstance(records, (list, tuple)):
         yield from records
