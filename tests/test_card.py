@@ -226,10 +226,12 @@ def test_the_example_in_the_docs_is_a_card_and_its_tables_name_every_key() -> No
         ("a parameter", "[parameters.x]"),
         ("an observable", "[observables.x]"),
         ("a sensor", "[sensors.x]"),
+        ("a derived quantity", "[derived.x]"),
     ):
         section = page.split(f"## Keys of {title}")[1].split("\n## ")[0]
         documented = [line.split("`")[1] for line in section.splitlines() if line.startswith("| `")]
         with pytest.raises(CardError) as problem:
             parse_card(f'machine = "a"\n{table}\nunheard = 1\n')
         known = str(problem.value).split("wanted one of ")[1].split(", ")
-        assert documented == [key for key in known if key not in ("parameters", "observables", "sensors")]
+        groups = ("parameters", "observables", "sensors", "derived")
+        assert documented == [key for key in known if key not in groups]

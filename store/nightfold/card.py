@@ -9,9 +9,13 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import time
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from nightfold.cardkeys import TIME_ZONE, Kind, Table
 from nightfold.errors import CardError
+
+if TYPE_CHECKING:
+    from nightfold.formulas.definitions import Derived
 
 DAY_S = 86400.0
 
@@ -47,6 +51,21 @@ class NamedQuantity:
 
 
 @dataclass(frozen=True, slots=True)
+class DerivedQuantity(NamedQuantity):
+    """What the card says about a quantity that is computed of others.
+
+    Attributes
+    ----------
+    expression : str
+        Of parameters, observables and other derived quantities.
+    unit : str or None
+        None for the one that the expression has.
+    """
+
+    expression: str = ""
+
+
+@dataclass(frozen=True, slots=True)
 class MachineCard:
     """A machine as its card describes it.
 
@@ -64,6 +83,8 @@ class MachineCard:
     naive_times : bool
         Whether times without an offset are read as local times of `zone`.
     parameters, observables, sensors : mapping of str to NamedQuantity
+    derived : mapping of str to DerivedQuantity
+        Quantities computed of those, as the card states them; `settle_derived` makes formulas of them.
     main_observable : str or None
         The observable shown when none is named.
     toml : str
@@ -79,6 +100,7 @@ class MachineCard:
     parameters: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
     observables: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
     sensors: Mapping[str, NamedQuantity] = field(default_factory=dict, hash=False)
+    derived: Mapping[str, DerivedQuantity] = field(default_factory=dict, hash=False)
     main_observable: str | None = None
     toml: str = ""
 
@@ -90,6 +112,11 @@ class MachineCard:
     def observable(self, name: str) -> NamedQuantity | None:
         """Return the entry of an observable; ``atom_number[up]`` shares that of ``atom_number``."""
         return self.observables.get(name) or self.observables.get(without_cloud(name))
+
+    def description(self, name: str) -> str:
+        """Return what the card says for people about a parameter, an observable or a derived quantity."""
+        entry = self.parameters.get(name) or self.derived.get(name) or self.observable(name)
+        return entry.description if entry else ""
 
 
 def without_cloud(name: str) -> str:
@@ -131,8 +158,10 @@ def read_card(path: str | Path) -> MachineCard:
     return parse_card(text, source=str(path))
 
 
-def parse_card(text: str, *, source: str = "card") -> MachineCard:
+def parse_card(text: str, *, source: str = "card", checked: bool = False) -> MachineCard:
     """Return the card written in a TOML text; `source` names it in messages.
+
+    A card that was `checked` before, one in the store, is spared the check of its expressions.
 
     Raises
     ------
@@ -146,7 +175,7 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
     table = Table(source, text, content)
     table.check_keys(
         *("machine", "species", "zone", "night_boundary", "rejoin_within", "naive_times", "main_observable"),
-        *("parameters", "observables", "sensors"),
+        *("parameters", "observables", "derived", "sensors"),
     )
     machine = table.name("machine")
     if machine is None:
@@ -155,9 +184,14 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
     observables = {name: _observable(name, entry) for name, entry in table.entries("observables")}
     for name in parameters.keys() & observables.keys():
         raise table.error(("observables", name), "a name that is also a parameter", "one or the other")
+    derived = {name: _derived(name, entry) for name, entry in table.entries("derived")}
+    for name in derived.keys() & (parameters.keys() | observables.keys()):
+        kind = "a parameter" if name in parameters else "an observable"
+        raise table.error(("derived", name), f"a name that is also {kind}", "one or the other")
     sensors = {name: _observable(name, entry) for name, entry in table.entries("sensors")}
-    for name in sensors.keys() & {*parameters, *observables}:
-        other = "a parameter" if name in parameters else "an observable"
+    for name in sensors.keys() & {*parameters, *observables, *derived}:
+        other = {**dict.fromkeys(derived, "derived"), **dict.fromkeys(observables, "an observable")}.get(name)
+        other = other or "a parameter"
         raise table.error(("sensors", name), f"a name that is also {other}", "one or the other")
     card = MachineCard(
         machine=machine,
@@ -169,15 +203,57 @@ def parse_card(text: str, *, source: str = "card") -> MachineCard:
         parameters=parameters,
         observables=observables,
         sensors=sensors,
+        derived=derived,
         main_observable=table.name("main_observable"),
         toml=text,
     )
+    settled = {} if checked or not derived else _check_derived(card, table)
     main = card.main_observable
-    if main is not None and card.observable(main) is None:
-        raise table.error(
-            "main_observable", repr(main), "an observable of this card" + table.near(main, observables)
-        )
+    if main is not None and card.observable(main) is None and main not in derived:
+        wanted = "an observable of this card" + table.near(main, [*observables, *derived])
+        raise table.error("main_observable", repr(main), wanted)
+    if main in settled and settled[main].role == "parameter":
+        raise table.error("main_observable", f"{main}, which no observable goes into", "an observable")
     return card
+
+
+def settle_derived(card: MachineCard) -> dict[str, Derived]:
+    """Return the derived quantities of a card with their formulas, each behind those that it is made of.
+
+    Raises
+    ------
+    DefinitionError
+        If an expression cannot be used.
+    """
+    from nightfold.formulas.definitions import Definition, Recorded, settle_definitions
+
+    clouds = {name: Recorded("observable", entry.unit) for name, entry in card.observables.items()}
+    recorded = {
+        name: Recorded("parameter", entry.unit, entry.kind) for name, entry in card.parameters.items()
+    }
+    definitions = {name: Definition(entry.expression, entry.unit) for name, entry in card.derived.items()}
+    return settle_definitions(definitions, recorded | clouds, clouds)
+
+
+def _check_derived(card: MachineCard, table: Table) -> dict[str, Derived]:
+    from nightfold.formulas.definitions import DefinitionError
+
+    try:
+        return settle_derived(card)
+    except DefinitionError as problem:
+        place = ("derived", problem.name, "expression")
+        raise table.error(place, problem.found, problem.wanted) from None
+
+
+def _derived(name: str, entry: Table) -> DerivedQuantity:
+    """Return what an entry of ``[derived]`` says."""
+    entry.check_keys("expression", "unit", "range", "description")
+    expression = entry.text("expression")
+    if expression is None:
+        raise entry.error("expression", "nothing", 'one in quotes, such as "2*aom_frequency - 160 MHz"')
+    low, high = entry.limits("range") or (None, None)
+    description = entry.text("description") or ""
+    return DerivedQuantity(name, entry.unit("unit"), low, high, description, "number", expression)
 
 
 def _parameter(name: str, entry: Table) -> NamedQuantity:
@@ -232,6 +308,10 @@ zone = {zone}
 # unit = "atoms"
 # range = [0, 1e6]
 # description = "atoms in the trap, from the absorption image"
+
+# [derived.field]                # computed of the others whenever it is asked for
+# expression = "0.5413 G/A * coil_current + 0.21 G"
+# unit = "G"
 
 # [sensors.room_temperature]
 # unit = "degC"

@@ -6,6 +6,7 @@ rollback (SQLite gives the same ids out again). Nothing here is written before a
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import lru_cache
 from typing import TYPE_CHECKING, Any
@@ -13,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 from sqlalchemy import Connection, Table, func, insert, select, update
 
 from nightfold import tables
-from nightfold.card import MachineCard, parse_card
+from nightfold.card import MachineCard, parse_card, without_cloud
 from nightfold.errors import CardError, RecordError, UnitError
 from nightfold.records import shorten
 from nightfold.settings import ReadValue, Value
@@ -46,6 +47,7 @@ class MachineNames:
     sensors: dict[str, Known] = field(default_factory=dict)
     sequences: dict[str, int] = field(default_factory=dict)
     versions: dict[tuple[int, bytes], int] = field(default_factory=dict)
+    cloud_units: dict[str, str] = field(default_factory=dict)
     generation: int = 0
 
     @property
@@ -78,9 +80,11 @@ class MachineNames:
         return _convert_value(value, stated, known.unit, field), known
 
     def settle_reading(
-        self, name: str, read: ReadValue, unit: str | None, field: str
+        self, name: str, read: ReadValue, unit: str | None, field: str, plan: Mapping[str, Known]
     ) -> tuple[ReadValue, Known]:
         """Return the reading in the unit stored, and what would then be known of its observable.
+
+        All clouds of an observable have one unit; `plan` holds what the same record has said so far.
 
         Raises
         ------
@@ -93,6 +97,8 @@ class MachineNames:
                 wanted = f"another name: {name!r} is a parameter of {self.name}"
                 raise RecordError(field, "an observable", wanted)
             known = self._fresh_observable(name)
+        if known.unit is None and (shared := self._unit_of_clouds(name, plan)) is not None:
+            known = Known(known.kind, shared, shared, known.id)
         known = self._adopt(known, unit, field)
         stated = known.bare if unit is None else unit
         if stated in (None, known.unit) or known.unit is None:
@@ -137,6 +143,12 @@ class MachineNames:
         entry = self.card.observable(name) if self.card else None
         unit = entry.unit if entry else None
         return Known("reading", unit, unit)
+
+    def _unit_of_clouds(self, name: str, plan: Mapping[str, Known]) -> str | None:
+        """Return the unit that other clouds of an observable have, or it has as a whole."""
+        base = without_cloud(name)
+        own = (known.unit for other, known in plan.items() if without_cloud(other) == base)
+        return next((unit for unit in own if unit is not None), self.cloud_units.get(base))
 
     def _adopt(self, known: Known, unit: str | None, field: str) -> Known:
         """Take the first unit stated; refuse one that cannot be converted into it."""
@@ -232,6 +244,19 @@ class Names:
                 connection.execute(update(table).where(table.c.id == before.id).values(unit=known.unit))
                 home[name] = Known(known.kind, known.unit, known.bare, before.id)
                 machine.generation += 1
+            if reading and known.unit is not None:
+                self._share_unit(connection, machine, without_cloud(name), known.unit)
+
+    def _share_unit(self, connection: Connection, machine: MachineNames, base: str, unit: str) -> None:
+        """Give the unit of one cloud to those of the same observable that have none yet."""
+        if base in machine.cloud_units:
+            return
+        machine.cloud_units[base] = unit
+        for name, known in machine.observables.items():
+            if known.unit is None and without_cloud(name) == base:
+                own = tables.observable.c.id == known.id
+                connection.execute(update(tables.observable).where(own).values(unit=unit))
+                machine.observables[name] = Known(known.kind, unit, unit, known.id)
 
 
 def read_names(connection: Connection) -> dict[str, MachineNames]:
@@ -249,6 +274,8 @@ def read_names(connection: Connection) -> dict[str, MachineNames]:
         entry = _card_entry(machines[row.machine_id], "observables", row.name)
         known = Known("reading", row.unit, entry if entry is not None else row.unit, row.id)
         machines[row.machine_id].observables[row.name] = known
+        if row.unit is not None:
+            machines[row.machine_id].cloud_units.setdefault(without_cloud(row.name), row.unit)
     for row in connection.execute(select(tables.sensor)):
         entry = _card_entry(machines[row.machine_id], "sensors", row.name)
         known = Known("reading", row.unit, entry if entry is not None else row.unit, row.id)
@@ -275,7 +302,7 @@ def _card_entry(machine: MachineNames, kind: str, name: str) -> str | None:
 @lru_cache(maxsize=32)
 def stored_card(toml: str) -> MachineCard:
     """Return a card from its text in the store; the same text is read once."""
-    return parse_card(toml, source="the card in the store")
+    return parse_card(toml, source="the card in the store", checked=True)
 
 
 def newest_cards(connection: Connection) -> dict[int, str]:

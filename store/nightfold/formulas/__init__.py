@@ -1,0 +1,1 @@
+"""Expressions of a machine card: read, checked for their units, evaluated with uncertainties."""
