@@ -8,7 +8,7 @@ parameters (a counter, a thermometer), not a person's doing.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
@@ -82,6 +82,17 @@ def find_edits(
     return sorted(edits, key=_order)
 
 
+def changes_by_hand(
+    connection: Connection, sequence_id: int, parameter_ids: Collection[int]
+) -> list[tuple[int, int]]:
+    """Return parameter id and time of every change by hand of these parameters within one sequence."""
+    table = tables.parameter
+    query = select(table).where(table.c.id.in_(parameter_ids))
+    known = {row.id: _Parameter(row.name, row.kind, row.unit or "") for row in connection.execute(query)}
+    changes = _by_hand(_walk(connection, sequence_id, known, tuple(known)))
+    return [(change.parameter_id, change.at_us) for change in changes]
+
+
 def _order(edit: Edit) -> tuple[int, str, str, str]:
     return edit.at_us, edit.machine, edit.parameter, edit.sequence
 
@@ -127,20 +138,28 @@ def _runs(changes: Sequence[_Change]) -> Iterator[list[_Change]]:
     yield run
 
 
-def _walk(connection: Connection, sequence_id: int, known: Mapping[int, _Parameter]) -> Iterator[_Change]:
-    """Yield every change of a resting value of the stream, in time order."""
+def _walk(
+    connection: Connection,
+    sequence_id: int,
+    known: Mapping[int, _Parameter],
+    wanted: Collection[int] | None = None,
+) -> Iterator[_Change]:
+    """Yield every change of a resting value of the stream, in time order: of all parameters, or of those wanted."""
     shot = tables.shot
     contents: dict[int, dict[int, Stored]] = {}
     resting: dict[int, Stored] = {}
     looked_at = None
-    moved = _unswept_rows(connection, sequence_id)
+    moved = _unswept_rows(connection, sequence_id, wanted)
     query = select(shot.c.id, shot.c.started_us, shot.c.set_id).where(shot.c.sequence_id == sequence_id)
     rows = connection.execute(query.order_by(shot.c.started_us, shot.c.id)).all()
     sets = sorted({row.set_id for row in rows})
     axes = _axes_by_set(connection, sequence_id)
     for part in chunks(sets):
         rest = tables.set_value
-        for row in connection.execute(select(rest).where(rest.c.set_id.in_(part))):
+        of_sets = select(rest).where(rest.c.set_id.in_(part))
+        if wanted is not None:
+            of_sets = of_sets.where(rest.c.parameter_id.in_(wanted))
+        for row in connection.execute(of_sets):
             contents.setdefault(row.set_id, {})[row.parameter_id] = (row.num, row.exact)
     for place, row in enumerate(rows):
         values = moved.get(row.id, {})
@@ -165,7 +184,9 @@ def _token(parameter: _Parameter, value: Stored) -> str:
     return token_of(parameter.kind, *value)
 
 
-def _unswept_rows(connection: Connection, sequence_id: int) -> dict[int, dict[int, Stored]]:
+def _unswept_rows(
+    connection: Connection, sequence_id: int, wanted: Collection[int] | None
+) -> dict[int, dict[int, Stored]]:
     shot, value, axis = tables.shot, tables.shot_value, tables.scan_axis
     is_axis = and_(axis.c.scan_id == shot.c.scan_id, axis.c.parameter_id == value.c.parameter_id)
     query = (
@@ -174,6 +195,8 @@ def _unswept_rows(connection: Connection, sequence_id: int) -> dict[int, dict[in
         .outerjoin(axis, is_axis)
         .where(shot.c.sequence_id == sequence_id, ~value.c.swept, axis.c.scan_id.is_(None))
     )
+    if wanted is not None:
+        query = query.where(value.c.parameter_id.in_(wanted))
     found: dict[int, dict[int, Stored]] = {}
     for row in connection.execute(query):
         found.setdefault(row.shot_id, {})[row.parameter_id] = (row.num, row.exact)
