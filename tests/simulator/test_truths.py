@@ -15,7 +15,7 @@ from scipy.optimize import curve_fit
 
 from nightfold.simulator.evening import Night, run_nights
 from nightfold.simulator.schedule import EDITS
-from nightfold.simulator.truth import Truth
+from nightfold.simulator.truth import Mishap, Truth
 from nightfold.simulator.writing import SEED
 
 Array = NDArray[np.float64]
@@ -45,7 +45,10 @@ def oscillation(
 
 MODELS: dict[str, tuple[Callable[..., Array], Callable[[Truth, Array], list[float]]]] = {
     "lorentzian": (lorentzian, lambda truth, y: [_center(truth), _width(truth), *_heights(truth, y)]),
-    "gaussian": (gaussian, lambda truth, y: [truth.value, 1.0, float(y.max()), 0.0]),
+    "gaussian": (
+        gaussian,
+        lambda truth, y: [truth.value, 0.06 if truth.unit == "MHz" else 1.0, float(y.max()), 0.0],
+    ),
     "exponential": (exponential, lambda truth, y: [truth.value * 1.3, float(y.max())]),
     "three-body": (three_body, lambda truth, y: [truth.value * 1.3, float(y.max())]),
     "damped-oscillation": (oscillation, lambda truth, y: [truth.value, 100.0, 30.0, -1.0, float(y.mean())]),
@@ -76,32 +79,60 @@ def in_card_units(stated: Any) -> float:
     return float(stated["value"]) * (1e3 if stated["unit"] == "s" else 1)
 
 
-def points(nights: tuple[Night, ...], truth: Truth) -> tuple[Array, Array]:
-    """Return x and y of the good shots of the scan that a truth is about."""
-    label = truth.scan.split("#")[0] if "#" in truth.scan else None
+def points(nights: tuple[Night, ...], truth: Truth, mishap: Mishap | None = None) -> tuple[Array, Array]:
+    """Return x and y of the good shots of the scan that a truth is about, put right where there was a mishap."""
+    scans = mishap.scans if mishap else (truth.scan,)
+    labels = {scan.split("#")[0] if "#" in scan else None for scan in scans}
+    factor = mishap.factor if mishap else 1
     axis = truth.along or truth.swept[0]
+    line = reference_line(nights, truth) if truth.relative_to else np.ones(1)
     found = []
     for taken in (shot for night in nights for shot in night.shots):
         record = taken.record
-        if taken.outlier or "failed" in record or record.get("reference") or record.get("scan") != label:
+        if taken.outlier or "failed" in record or record.get("reference") or record.get("scan") not in labels:
             continue
         settings = record["parameters"]
         same_slice = all(in_card_units(settings[name]) == value for name, value in truth.where.items())
         started = datetime.fromisoformat(record["started"])
-        if record["sequence"] == truth.sequence and truth.first <= started <= truth.last and same_slice:
-            found.append((in_card_units(settings[axis]), record["observables"][truth.observable]["value"]))
+        sequence = record["sequence"]
+        name = sequence["name"] if isinstance(sequence, dict) else sequence
+        if name == truth.sequence and truth.first <= started <= truth.last and same_slice:
+            seen = record["observables"] | (taken.again["observables"] if taken.again else {})
+            expected = float(np.polyval(line, (started - truth.first).total_seconds()))
+            found.append((in_card_units(settings[axis]) / factor, seen[truth.observable]["value"] / expected))
     x, y = np.array(found, dtype=float).T
     return x, y
 
 
-def pull(nights: tuple[Night, ...], truth: Truth) -> float:
+def reference_line(nights: tuple[Night, ...], truth: Truth) -> NDArray[np.float64]:
+    """Return the straight line through the reference shots of a scan, against seconds from its first shot."""
+    good = [
+        ((datetime.fromisoformat(shot.record["started"]) - truth.first).total_seconds(), shot.record)
+        for night in nights
+        for shot in night.shots
+        if shot.record.get("reference") and "failed" not in shot.record and not shot.outlier
+    ]
+    span = (truth.last - truth.first).total_seconds()
+    near = [
+        (after, record["observables"][truth.observable]["value"])
+        for after, record in good
+        if -60 < after < span + 60
+    ]
+    after_s, values = np.array(near, dtype=float).T
+    line: NDArray[np.float64] = np.polyfit(after_s, values, 1)
+    return line
+
+
+def pull(nights: tuple[Night, ...], truth: Truth, mishap: Mishap | None = None) -> float:
     """Return how many standard uncertainties the fitted value is off, weighted as the machine scatters."""
-    x, y = points(nights, truth)
+    x, y = points(nights, truth, mishap)
     function, start = MODELS[truth.model]
     values = np.array(start(truth, y))
     for _ in range(3):
         curve = function(x, *values)
-        scatter = np.hypot(0.0435 * curve, 450) if truth.observable == "atom_number" else np.full_like(x, 1.7)
+        number = truth.observable.startswith("atom_number")
+        floor = 450 if truth.relative_to is None else 0.004
+        scatter = np.hypot(0.0435 * curve, floor) if number else np.full_like(x, 1.7)
         values, covariance = curve_fit(function, x, y, p0=values, sigma=scatter)
     place = function.__code__.co_varnames.index(truth.parameter) - 1
     return float((values[place] - truth.value) / np.sqrt(covariance[place, place]))
@@ -114,6 +145,35 @@ def test_truths_come_back(seed: int) -> None:
     assert len(pulls) == 14
     assert max(abs(value) for value in pulls) < 5
     assert float(np.sqrt(np.mean(np.square(pulls)))) < 1.5
+
+
+@pytest.mark.parametrize("seed", [SEED, 1, 2, 3])
+def test_truths_come_back_once_mishaps_are_put_right(seed: int) -> None:
+    nights = campaign(seed)
+    pulls = {
+        (mishap.kind, truth.parameter): pull(nights, truth, mishap)
+        for night in nights
+        for mishap in night.mishaps
+        for truth in mishap.truths
+    }
+    assert len(pulls) == 9
+    assert max(abs(value) for value in pulls.values()) < 4, pulls
+    assert float(np.sqrt(np.mean(np.square(list(pulls.values()))))) < 1.6
+
+
+def test_mishaps_matter() -> None:
+    nights = campaign(SEED)
+    wrong = {mishap.kind: mishap for night in nights for mishap in night.mishaps}
+    assert wrong["misrecorded"].factor == pytest.approx(100 / 120)
+    dense = [
+        shot
+        for night in nights
+        for shot in night.shots
+        if shot.again and not shot.outlier and shot.record["parameters"]["hold_time"] == 0
+    ]
+    first = np.mean([shot.record["observables"]["atom_number"]["value"] for shot in dense])
+    later = np.mean([shot.again["observables"]["atom_number"]["value"] for shot in dense if shot.again])
+    assert later / first == pytest.approx(1.53, abs=0.06)
 
 
 def test_truths_are_told_apart_and_lie_inside_their_scans() -> None:

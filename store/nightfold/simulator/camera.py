@@ -8,7 +8,8 @@ from typing import Any
 
 import numpy as np
 
-from nightfold.simulator.physics import Noise, expect_signal, read_cloud
+from nightfold.simulator import clouds
+from nightfold.simulator.physics import ATOMS, Noise, expect_signal, read_cloud
 from nightfold.simulator.truth import Value
 
 FAILURE, FAILURE_GOES_ON, OUTLIER = 0.008, 0.45, 0.004
@@ -54,16 +55,23 @@ class Camera:
         chance, kind, depth = self._rng.uniform(size=3).tolist()
         if chance < (FAILURE_GOES_ON if self._reason else FAILURE):
             self._reason = self._reason or REASONS[int(kind * len(REASONS))]
-            return Look(self._read_nothing(self._reason), self._reason)
+            return Look(self._read_nothing(sequence, self._reason), self._reason)
         self._reason = None
         outlier = kind < OUTLIER
-        signal = expect_signal(sequence, settings).scaled(factor * (0.35 + 0.4 * depth if outlier else 1))
+        factor *= 0.35 + 0.4 * depth if outlier else 1
+        if sequence == clouds.SEQUENCE:
+            transfer = clouds.expect_transfer(float(settings["rf_frequency"]))
+            seen = clouds.read_clouds(ATOMS[sequence] * factor, transfer, self._noise, self._rng)
+            return Look(seen, outlier=outlier)
+        signal = expect_signal(sequence, settings).scaled(factor)
         observables = read_cloud(signal, float(settings["time_of_flight"]), self._noise, self._rng)
         if outlier:
             observables["width_x"] = None
         return Look(observables, outlier=outlier)
 
-    def _read_nothing(self, reason: str) -> dict[str, Any]:
+    def _read_nothing(self, sequence: str, reason: str) -> dict[str, Any]:
+        if sequence == clouds.SEQUENCE:
+            return dict.fromkeys(clouds.OBSERVABLES)
         nothing: dict[str, Any] = dict.fromkeys(OBSERVABLES)
         if reason.startswith("no picture"):
             return nothing

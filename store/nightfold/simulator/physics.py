@@ -51,6 +51,7 @@ ATOMS = {
     "long-hold": 149_000,
     "dense-hold": 171_000,
     "evaporate-and-look": 156_000,
+    "rf-transfer": 149_000,
 }
 """Atoms of a shot with every factor at one."""
 TEMPERATURE_NK = {"hold-in-trap": 412, "kick-and-hold": 455, "long-hold": 396, "dense-hold": 530}

@@ -59,6 +59,9 @@ STATED: dict[str, tuple[float, str]] = {
 }
 """Settings that the control program writes with their unit."""
 
+UNITS = {name: unit for name, (_, unit) in STATED.items()} | {"rf_frequency": "MHz"}
+"""Their units, and those of settings that only one sequence has."""
+
 BARE: dict[str, Value] = {
     # slow beam and the trap it loads
     "mot2d_coil_x": 3.1,
@@ -149,4 +152,4 @@ NAMED_EVAPORATION: dict[str, Value] = {
     "evaporation_cross_end_power": 1.15,
     "evaporation_shape": "exponential",
 }
-"""The evaporation as flat settings, in the sequences that are known by name only."""
+"""The evaporation as flat settings; sequences written in full say them in their steps."""

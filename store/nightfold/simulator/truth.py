@@ -41,6 +41,8 @@ class Truth:
         For a scan of several axes the slice that is meant; empty otherwise.
     first, last : datetime
         Times of the first and the last shot of the scan, with offset.
+    relative_to : str or None
+        ``reference`` where the observable is meant relative to the reference shots around.
     """
 
     what: str
@@ -57,6 +59,54 @@ class Truth:
     first: datetime
     last: datetime
     where: Mapping[str, float] = field(default_factory=dict)
+    relative_to: str | None = None
+
+
+@dataclass(frozen=True)
+class Mishap:
+    """Something that went otherwise than planned, and what is true once it has been put right.
+
+    Attributes
+    ----------
+    kind : str
+        ``resumed``, ``clouds``, ``reanalysed``, ``misrecorded``, ``mislabelled``, ``drifting``, ``misnamed`` or
+        ``adaptive``.
+    scans : tuple of str
+        Keys of the scans as the records have them.
+    sequence : str
+    shots : int
+        Of the scan once it has been put right, references not counted.
+    first, last : datetime
+        Times of its first and last shot, with offset.
+    truths : tuple of Truth
+        What fits should find once it has been put right.
+    parameter : str or None
+        What was recorded wrongly.
+    factor : float
+        Recorded over true.
+    machine : str or None
+        The other name under which shots were recorded.
+    """
+
+    kind: str
+    scans: tuple[str, ...]
+    sequence: str
+    shots: int
+    first: datetime
+    last: datetime
+    truths: tuple[Truth, ...]
+    parameter: str | None = None
+    factor: float = 1.0
+    machine: str | None = None
+
+
+@dataclass(frozen=True)
+class TrueVersion:
+    """A step put into a sequence for good; `at` is the first shot with it."""
+
+    at: datetime
+    sequence: str
+    step: str
 
 
 @dataclass(frozen=True)
@@ -100,7 +150,20 @@ class TrueEdit:
 
 @dataclass(frozen=True)
 class Campaign:
-    """A campaign on disk: the files, one a night, the machine card, and the truth."""
+    """A campaign on disk, and the truth.
+
+    Attributes
+    ----------
+    files : tuple of Path
+        The shots, one file a night.
+    card : Path
+        The machine card.
+    truths, changes, edits, mishaps, versions : tuple
+        What is true. `truths` need nothing to be put right; those that do stand with their mishap.
+    shots : int
+    reanalyses : tuple of Path
+        Files of later analyses, to be taken after the shots.
+    """
 
     files: tuple[Path, ...]
     card: Path
@@ -108,3 +171,6 @@ class Campaign:
     changes: tuple[TrueChange, ...]
     edits: tuple[TrueEdit, ...]
     shots: int
+    mishaps: tuple[Mishap, ...] = ()
+    versions: tuple[TrueVersion, ...] = ()
+    reanalyses: tuple[Path, ...] = ()

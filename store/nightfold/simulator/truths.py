@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
+from math import exp
 
-from nightfold.simulator import physics
+from nightfold.simulator import clouds, physics
 from nightfold.simulator.schedule import Block
 from nightfold.simulator.truth import Truth
 
@@ -13,6 +14,10 @@ REJOIN_WITHIN = timedelta(hours=24)
 """As in the card: a label used again later than this opens a new round."""
 MAP_SLICE = {"hold_time": 240.0}
 """The slice of the two-axis scan that is stated: the longest hold, where the dip is deepest."""
+
+
+NOMINAL_HOLD_MS, NOMINAL_CURRENT_A = 120.0, 48.0
+"""Of the reference shots."""
 
 
 @dataclass(frozen=True)
@@ -25,6 +30,13 @@ class Told:
     parameter: str
     value: float
     unit: str
+    relative_to: str | None = None
+
+
+def _depth() -> float:
+    """Return how deep the dip is after 120 ms, relative to shots at the nominal current far away."""
+    depth = physics.LOW.depth * (1 - exp(-NOMINAL_HOLD_MS / physics.LOSS_TIME_MS))
+    return -depth / (1 - depth * physics.lorentzian(NOMINAL_CURRENT_A, physics.LOW.center, physics.LOW.fwhm))
 
 
 TOLD = {
@@ -56,6 +68,10 @@ TOLD = {
     ),
     "mirror": Told(
         "trap mirror, best setting", "gaussian", "atom_number", "center", physics.MIRROR_CENTER_V, "V"
+    ),
+    "up": Told("transfer, centre", "gaussian", "atom_number[up]", "center", clouds.RF_CENTER_MHZ, "MHz"),
+    "depth": Told(
+        "loss resonance, depth", "lorentzian", "atom_number", "amplitude", _depth(), "", "reference"
     ),
 }
 
@@ -103,6 +119,7 @@ def state_truths(block: Block, scan: str, first: datetime, last: datetime) -> li
                 first=first,
                 last=last,
                 where=MAP_SLICE if sliced else {},
+                relative_to=told.relative_to,
             )
         )
     return truths

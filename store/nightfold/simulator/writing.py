@@ -4,16 +4,19 @@ from __future__ import annotations
 
 import json
 import shutil
-from collections.abc import Callable, Iterator
+from collections import deque
+from collections.abc import Callable, Iterable, Iterator
 from pathlib import Path
 from typing import Any
 
 from nightfold.simulator.evening import Night, run_nights
 from nightfold.simulator.machine import CARD
 from nightfold.simulator.schedule import NIGHTS
-from nightfold.simulator.truth import Campaign, TrueChange, TrueEdit, Truth
+from nightfold.simulator.truth import Campaign
 
 SEED = 39
+LATE_SHOTS = 14
+"""After so many further shots, about three minutes, stands what the analysis found late."""
 
 
 def write_campaign(
@@ -45,22 +48,26 @@ def write_campaign(
         If `nights` is less than one.
     """
     folder.mkdir(parents=True, exist_ok=True)
+    done: list[Night] = []
     files: list[Path] = []
-    truths: list[Truth] = []
-    changes: list[TrueChange] = []
-    edits: list[TrueEdit] = []
-    shots = 0
     for night in run_nights(seed, nights, declare_swept):
-        files.append(_write_night(folder, night))
-        truths += night.truths
-        changes += night.changes
-        edits += night.edits
-        shots += len(night.shots)
+        files.append(_write(folder / f"{night.night.isoformat()}.jsonl", lines_of(night)))
+        done.append(night)
         if progress is not None:
             progress(len(files))
     card = folder / CARD.name
     shutil.copyfile(CARD, card)
-    return Campaign(tuple(files), card, tuple(truths), tuple(changes), tuple(edits), shots)
+    return Campaign(
+        files=tuple(files),
+        card=card,
+        truths=tuple(truth for night in done for truth in night.truths),
+        changes=tuple(change for night in done for change in night.changes),
+        edits=tuple(edit for night in done for edit in night.edits),
+        shots=sum(len(night.shots) for night in done),
+        mishaps=tuple(mishap for night in done for mishap in night.mishaps),
+        versions=tuple(version for night in done for version in night.versions),
+        reanalyses=tuple(_write_reanalyses(folder, done)),
+    )
 
 
 def shot_records(
@@ -68,13 +75,30 @@ def shot_records(
 ) -> Iterator[dict[str, Any]]:
     """Yield the records of a campaign in the order of taking, without files; see `write_campaign`."""
     for night in run_nights(seed, nights, declare_swept):
-        for taken in night.shots:
-            yield taken.record
+        yield from lines_of(night)
 
 
-def _write_night(folder: Path, night: Night) -> Path:
-    path = folder / f"{night.night.isoformat()}.jsonl"
+def lines_of(night: Night) -> Iterator[dict[str, Any]]:
+    """Yield the records of a night as they are written: what the analysis finds late comes shots later."""
+    waiting: deque[tuple[int, dict[str, Any]]] = deque()
+    for number, taken in enumerate(night.shots):
+        while waiting and waiting[0][0] <= number:
+            yield waiting.popleft()[1]
+        yield taken.record
+        if taken.late is not None:
+            waiting.append((number + LATE_SHOTS, taken.late))
+    yield from (late for _, late in waiting)
+
+
+def _write_reanalyses(folder: Path, nights: Iterable[Night]) -> Iterator[Path]:
+    for night in nights:
+        again = [taken.again for taken in night.shots if taken.again is not None]
+        if again:
+            yield _write(folder / f"reanalysis-{night.night.isoformat()}.jsonl", again)
+
+
+def _write(path: Path, records: Iterable[dict[str, Any]]) -> Path:
     with path.open("w", encoding="utf-8", newline="\n") as file:
-        for taken in night.shots:
-            file.write(json.dumps(taken.record, ensure_ascii=False, separators=(",", ":")) + "\n")
+        for record in records:
+            file.write(json.dumps(record, ensure_ascii=False, separators=(",", ":")) + "\n")
     return path
