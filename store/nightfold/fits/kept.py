@@ -171,6 +171,7 @@ def keep_fit(connection: Connection, scan: Scan, request: FitRequest, part: Slic
 
 
 def slice_text(where: Mapping[str, Any]) -> str:
+    """Return how a slice is kept: the values of the other axes as JSON."""
     return json.dumps(where, ensure_ascii=False)
 
 
