@@ -13,6 +13,7 @@ from nightfold.errors import RecordError
 from nightfold.ledger.amending import amend_readings, amend_shot, check_identity
 from nightfold.ledger.batches import batches, collector_paused
 from nightfold.ledger.checking import CheckedShot, check_shot, derivation_of, readings_of, sequence_name
+from nightfold.ledger.correcting import find_corrected
 from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
 from nightfold.ledger.outcome import Incoming, Intake, Refused
@@ -174,6 +175,8 @@ class Writer:
     def _settle_all(self, batch: _Batch) -> None:
         """Write what has been checked: new shots, and amendments of stored ones."""
         self._look_up(batch, [_uid(shot) for _, shot in batch.checked])
+        nameless = [shot for _, shot in batch.checked if isinstance(shot, CheckedShot) and not shot.named]
+        batch.stored |= find_corrected(batch.connection, [s for s in nameless if s.uid not in batch.stored])
         for item, shot in batch.checked:
             try:
                 self._settle(batch, item, shot)
