@@ -8,17 +8,19 @@ from typing import Any
 from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
+from nightfold.ledger.pins import kept_scans
 from nightfold.ledger.rows import chunks
-from nightfold.scans.keeping import settle_axes
+from nightfold.scans.keeping import leading_axes, settle_axes
 from nightfold.scans.refolding import FARTHEST_US, fold_span
 from nightfold.scans.rounds import swept_of
 
 
 def follow_corrections(connection: Connection, shots: Sequence[Row[Any]]) -> None:
-    """Settle the axes of labelled scans of corrected shots again, and fold the unlabelled stream around the others."""
+    """Settle the axes of the scans of corrected shots again, and fold the stream again around those without a label."""
     scan = tables.scan
     labelled: set[int] = set()
-    for part in chunks(sorted({shot.scan_id for shot in shots if shot.scan_id is not None})):
+    scan_ids = sorted({shot.scan_id for shot in shots if shot.scan_id is not None})
+    for part in chunks(scan_ids):
         query = select(scan.c.id).where(scan.c.id.in_(part), scan.c.label.isnot(None))
         labelled.update(connection.execute(query).scalars())
     for scan_id in sorted(labelled):
@@ -31,6 +33,11 @@ def follow_corrections(connection: Connection, shots: Sequence[Row[Any]]) -> Non
         for near in _near_each_other(own):
             times = [shot.started_us for shot in near]
             fold_span(connection, sequence_id, min(times), max(times), fresh={shot.id for shot in near})
+    for scan_id in sorted(
+        kept_scans(connection).intersection(scan_ids) - labelled
+    ):  # folding leaves them alone
+        axes = [*leading_axes(connection, scan_id), *swept_of(connection, scan_id)]
+        settle_axes(connection, scan_id, list(dict.fromkeys(axes)))
 
 
 def _near_each_other(shots: Iterable[Row[Any]]) -> list[list[Row[Any]]]:

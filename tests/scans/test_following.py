@@ -1,0 +1,99 @@
+"""Scans follow when settings of their shots are corrected."""
+
+from __future__ import annotations
+
+from datetime import UTC, datetime, timedelta
+from typing import Any
+
+import pytest
+
+from nightfold.opening import open_store
+from nightfold.store import Store
+
+START = datetime(2026, 10, 5, 18, tzinfo=UTC)
+
+
+def shot(number: int, point: float, **changes: Any) -> dict[str, Any]:
+    more = changes.pop("parameters", {})
+    return {
+        "uid": f"shot{number:03d}", "machine": "heron", "sequence": "hold",
+        "started": (START + timedelta(seconds=20 * number)).isoformat(),
+        "parameters": {"coil": {"value": point, "unit": "A"}, "hold": 0.1, **more},
+        "observables": {"n": 1000.0 + number}, **changes,
+    }  # fmt: skip
+
+
+def points(store: Store, key: int | str) -> list[float]:
+    return sorted(set(store.scan(key).table().coil))
+
+
+def axes(store: Store, key: int | str) -> list[str]:
+    return [axis.parameter for axis in store.scan(key).axes]
+
+
+def test_a_labelled_scan_has_its_points_and_axes_settled_again(anywhere: str) -> None:
+    with open_store(anywhere) as store:
+        store.take(
+            shot(n, 60 + n % 5, scan="loss", parameters={"synth": 2.0 * (60 + n % 5), "hold": 0.1 + n % 5})
+            for n in range(20)
+        )
+        assert set(store.scan("loss").followers) | set(axes(store, "loss")) == {"coil", "synth", "hold"}
+        store.correct([], {"hold": 0.1}, "a column too far", scan="loss")
+        assert set(store.scan("loss").followers) | set(axes(store, "loss")) == {"coil", "synth"}
+        store.correct(["shot007"], {"coil": 62.5}, "misread")
+        assert points(store, "loss") == [60, 61, 62, 62.5, 63, 64]
+
+
+def test_what_no_longer_follows_the_one_declared_axis_is_forgotten(store: Store) -> None:
+    store.take(
+        shot(n, 60 + n % 5, scan="loss", swept=["coil"], parameters={"hold": 0.1 + n % 5}) for n in range(20)
+    )
+    assert store.scan("loss").followers == {"hold": "coil"}
+    store.correct([], {"hold": 0.1}, "a column too far", scan="loss")
+    assert store.scan("loss").followers == {}
+
+
+@pytest.mark.parametrize("swept", [["coil"], []])
+def test_an_unlabelled_stream_is_folded_again(anywhere: str, swept: list[str]) -> None:
+    """A point that was mistyped tears a found scan, or is one too many; corrected, it is as if it had been right."""
+    right = [shot(n, 60.0 + 0.5 * (n % 9), swept=swept) for n in range(27)]
+    rest = [shot(n, 70.0) for n in range(200, 205)]
+    wrong = [dict(row) for row in right]
+    for number in (4, 13, 14):
+        wrong[number] = shot(number, 612.0, swept=swept, parameters={"hold": 7.0})
+    with open_store(anywhere) as store:
+        store.take([*wrong, *rest])
+        mistaken = [(scan.shots, points(store, scan.id)) for scan in store.scans()]
+        for number in (4, 13, 14):
+            point = right[number]["parameters"]["coil"]
+            store.correct([f"shot{number:03d}"], {"coil": point, "hold": 0.1}, "decimal point")
+        (found,) = store.scans()
+        assert (found.shots, axes(store, found.id)) == (27, ["coil"])
+        assert points(store, found.id) == [60 + 0.5 * n for n in range(9)]
+        assert mistaken != [(27, points(store, found.id))]
+
+
+def test_a_correction_can_undo_a_found_scan(store: Store) -> None:
+    store.take([shot(n, 60.0 + 0.5 * (n % 9)) for n in range(27)])
+    assert len(store.scans()) == 1
+    store.correct([f"shot{n:03d}" for n in range(27)], {"coil": 60}, "the supply was stuck")
+    assert store.scans() == []
+    assert set(store.shots().scan) == {None}
+
+
+def test_shots_far_apart_are_folded_each_where_it_is(store: Store) -> None:
+    far = [shot(n + 500_000, 60.0 + 0.5 * (n % 9)) for n in range(18)]
+    store.take([*(shot(n, 60.0 + 0.5 * (n % 9)) for n in range(18)), *far])
+    assert store.correct(["shot003", "shot500003"], {"coil": 61.75}, "read off the supply") == 2
+    one, other = store.scans()
+    assert points(store, one.id) == points(store, other.id)
+    assert 61.75 in points(store, one.id)
+
+
+def test_a_stream_goes_on_after_a_correction(store: Store) -> None:
+    rows = [shot(n, 60.0 + 0.5 * (n % 9), swept=["coil"]) for n in range(27)]
+    store.take(rows[:13])
+    store.correct(["shot005"], {"coil": 60.25}, "read off the supply")
+    store.take(rows)
+    (found,) = store.scans()
+    assert (found.shots, 60.25 in points(store, found.id)) == (27, True)
