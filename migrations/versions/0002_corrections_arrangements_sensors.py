@@ -1,4 +1,4 @@
-"""Corrections of settings, scans joined and split by hand, machine names that mean another, sensors.
+"""Corrections of settings, sweeps of derived parameters, scans joined and split by hand, machine names that mean another, sensors.
 
 Why: shots as laboratories really take them.
 What happens to old rows: nothing; only tables are added.
@@ -27,6 +27,17 @@ def upgrade() -> None:
         sa.Column("at_us", sa.BigInteger(), nullable=False),
         sa.ForeignKeyConstraint(["machine_id"], ["machine.id"], name=op.f("fk_machine_alias_machine_id")),
         sa.PrimaryKeyConstraint("name", name=op.f("pk_machine_alias")),
+    )
+    op.create_table(
+        "swept_derived",
+        sa.Column("shot_id", BIG_ID, nullable=False),
+        sa.Column("parameter_id", sa.Integer(), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["parameter_id"], ["parameter.id"], name=op.f("fk_swept_derived_parameter_id")
+        ),
+        sa.ForeignKeyConstraint(["shot_id"], ["shot.id"], name=op.f("fk_swept_derived_shot_id")),
+        sa.PrimaryKeyConstraint("shot_id", "parameter_id", name=op.f("pk_swept_derived")),
+        sqlite_with_rowid=False,
     )
     op.create_table(
         "correction",

@@ -232,6 +232,14 @@ shot_value = Table(
     sqlite_with_rowid=False,
 )
 
+swept_derived = Table(
+    "swept_derived",
+    metadata,
+    _to("shot_id", "shot", primary_key=True),
+    _to("parameter_id", "parameter", primary_key=True),
+    sqlite_with_rowid=False,
+)
+
 correction = Table(
     "correction",
     metadata,

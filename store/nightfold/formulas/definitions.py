@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal
 
 from nightfold.errors import FormulaError, UnitError
@@ -47,7 +47,7 @@ class Derived:
 
     name: str
     role: Role
-    formulas: dict[str, Formula]
+    formulas: dict[str, Formula] = field(hash=False)
     parameters: tuple[str, ...]
     observables: tuple[str, ...]
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from sqlalchemy import ColumnElement, Connection, Row, Select, select
 
@@ -13,17 +13,30 @@ from nightfold import tables
 from nightfold.ledger.rows import chunks
 from nightfold.settings import plain_value
 
+if TYPE_CHECKING:
+    from nightfold.formulas.definitions import Derived
+
 _PART = 10_000
 
 
 @dataclass(frozen=True, slots=True)
 class Named:
-    """A parameter or observable by name: its ids (one a machine), kind and unit."""
+    """A parameter or observable by name: its ids (one a machine), kind and unit; of a derived one, what it is made of."""
 
     name: str
     ids: tuple[int, ...]
     kind: str
     unit: str
+    made_of: MadeOf | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class MadeOf:
+    """What a derived quantity is computed of: its formulas, and the recorded settings and readings that go in."""
+
+    derived: Derived
+    settings: tuple[Named, ...]
+    readings: tuple[Named, ...]
 
 
 def setting_columns(
@@ -41,6 +54,46 @@ def setting_columns(
     where : condition, optional
         What chose the shots; without it they are asked for by their ids.
     """
+    recorded = _recorded_settings(connection, rows, _with_inputs(wanted, "settings"), where)
+    return {
+        item.name: recorded[item.name] if item.made_of is None else _derive(item.made_of, recorded, {})[0]
+        for item in wanted
+    }
+
+
+def _with_inputs(wanted: Sequence[Named], part: str) -> list[Named]:
+    """Return the recorded ones among the names, and what the derived ones are made of, each name once."""
+    found = {item.name: item for item in wanted if item.made_of is None}
+    for item in wanted:
+        if item.made_of is not None:
+            found |= {each.name: each for each in getattr(item.made_of, part)}
+    return list(found.values())
+
+
+def _derive(made_of: MadeOf, settings: dict[str, Any], readings: dict[str, tuple[Any, Any]]) -> tuple[Any, Any]:
+    """Return values and standard uncertainties of a derived quantity."""
+    from nightfold.formulas.evaluation import evaluate
+
+    derived = made_of.derived
+    exact = {each.name: _floats(settings[each.name]) for each in made_of.settings}
+    uncertain = {each.name: readings[each.name] for each in made_of.readings}
+    return evaluate(derived.formulas, [derived.name], exact, uncertain)[derived.name]
+
+
+def _floats(column: Any) -> Any:
+    import numpy as np
+
+    if column.dtype != object:
+        return column
+    return np.array([math.nan if value is None else value for value in column], dtype=np.float64)
+
+
+def _recorded_settings(
+    connection: Connection,
+    rows: Sequence[Row[Any]],
+    wanted: Sequence[Named],
+    where: ColumnElement[bool] | None,
+) -> dict[str, Any]:
     if not wanted:
         return {}
     kinds = {number: item.kind for item in wanted for number in item.ids}
@@ -90,6 +143,22 @@ def reading_columns(
     rows, where
         As in `setting_columns`.
     """
+    made = [item.made_of for item in wanted if item.made_of is not None]
+    inputs = {each.name: each for made_of in made for each in made_of.settings}
+    settings = _recorded_settings(connection, rows, list(inputs.values()), where)
+    recorded = _recorded_readings(connection, rows, _with_inputs(wanted, "readings"), where)
+    return {
+        item.name: recorded[item.name] if item.made_of is None else _derive(item.made_of, settings, recorded)
+        for item in wanted
+    }
+
+
+def _recorded_readings(
+    connection: Connection,
+    rows: Sequence[Row[Any]],
+    wanted: Sequence[Named],
+    where: ColumnElement[bool] | None,
+) -> dict[str, tuple[Any, Any]]:
     import numpy as np
 
     if not wanted:

@@ -13,6 +13,7 @@ from sqlalchemy import ColumnElement, Connection, Row, Select, Table, and_, exis
 from nightfold import tables
 from nightfold.errors import ChoiceNeeded, NotFound
 from nightfold.ledger.columns import Named, reading_columns, setting_columns
+from nightfold.ledger.deriving import Makings
 from nightfold.timestamps import parse_moment, to_us, utc_times
 
 if TYPE_CHECKING:
@@ -167,8 +168,9 @@ def find_named(
     NotFound
         If the machine has none of that name.
     ChoiceNeeded
-        If several machines have it in different units or kinds.
+        If several machines have it in different units or kinds, or do not derive it alike.
     """
+    makings = Makings(connection)
     query = select(table, tables.machine.c.name.label("machine")).join(
         tables.machine, tables.machine.c.id == table.c.machine_id
     )
@@ -186,14 +188,25 @@ def find_named(
                 f"{table.name} {name!r}: differs in kind or unit between {machines}; name the machine"
             )
         kind, unit = kinds.pop()
-        found.append(Named(name, tuple(row.id for row in own), kind, unit))
+        made_of = makings.of(name, [row.machine_id for row in own])
+        found.append(Named(name, tuple(row.id for row in own), kind, unit, made_of))
     return found
 
 
 def named_by_id(connection: Connection, table: Table, ids: Iterable[int]) -> list[Named]:
     """Return parameters or observables of one machine by id, in order."""
     rows = {row.id: row for row in connection.execute(select(table).where(table.c.id.in_(list(ids))))}
-    return [Named(rows[n].name, (n,), getattr(rows[n], "kind", "number"), rows[n].unit or "") for n in ids]
+    makings = Makings(connection)
+    return [
+        Named(
+            rows[n].name,
+            (n,),
+            getattr(rows[n], "kind", "number"),
+            rows[n].unit or "",
+            makings.of(rows[n].name, [rows[n].machine_id]),
+        )
+        for n in ids
+    ]
 
 
 def select_shots(
