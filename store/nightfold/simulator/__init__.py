@@ -3,7 +3,15 @@
 It drives nothing, and its numbers are no real machine's. Truths and noise are set here, whatever fits return.
 """
 
-from nightfold.simulator.truth import Campaign, Mishap, TrueChange, TrueEdit, TrueVersion, Truth
+from nightfold.simulator.truth import (
+    Campaign,
+    Mishap,
+    TrueChange,
+    TrueEdit,
+    TrueVersion,
+    TrueWarming,
+    Truth,
+)
 from nightfold.simulator.writing import shot_records, write_campaign
 
 __all__ = [
@@ -12,6 +20,7 @@ __all__ = [
     "TrueChange",
     "TrueEdit",
     "TrueVersion",
+    "TrueWarming",
     "Truth",
     "shot_records",
     "write_campaign",

@@ -101,6 +101,16 @@ class Mishap:
 
 
 @dataclass(frozen=True)
+class TrueWarming:
+    """A sensor that settles `step` kelvin higher, for good, within hours of `at`, because of an edit of `cause`."""
+
+    at: datetime
+    sensor: str
+    step: float
+    cause: str
+
+
+@dataclass(frozen=True)
 class TrueVersion:
     """A step put into a sequence for good; `at` is the first shot with it."""
 
@@ -158,11 +168,13 @@ class Campaign:
         The shots, one file a night.
     card : Path
         The machine card.
-    truths, changes, edits, mishaps, versions : tuple
+    truths, changes, edits, mishaps, versions, warmings : tuple
         What is true. `truths` need nothing to be put right; those that do stand with their mishap.
     shots : int
     reanalyses : tuple of Path
         Files of later analyses, to be taken after the shots.
+    sensors : Path
+        What the sensors of the room read, once a minute.
     """
 
     files: tuple[Path, ...]
@@ -170,7 +182,9 @@ class Campaign:
     truths: tuple[Truth, ...]
     changes: tuple[TrueChange, ...]
     edits: tuple[TrueEdit, ...]
+    mishaps: tuple[Mishap, ...]
+    versions: tuple[TrueVersion, ...]
+    warmings: tuple[TrueWarming, ...]
     shots: int
-    mishaps: tuple[Mishap, ...] = ()
-    versions: tuple[TrueVersion, ...] = ()
-    reanalyses: tuple[Path, ...] = ()
+    reanalyses: tuple[Path, ...]
+    sensors: Path

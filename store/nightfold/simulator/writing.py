@@ -11,10 +11,12 @@ from typing import Any
 
 from nightfold.simulator.evening import Night, run_nights
 from nightfold.simulator.machine import CARD
+from nightfold.simulator.room import find_warmings, write_readings
 from nightfold.simulator.schedule import NIGHTS
 from nightfold.simulator.truth import Campaign
 
 SEED = 39
+SENSORS, LATER = "sensors.csv", "later"
 LATE_SHOTS = 14
 """After so many further shots, about three minutes, stands what the analysis found late."""
 
@@ -28,6 +30,9 @@ def write_campaign(
     progress: Callable[[int], None] | None = None,
 ) -> Campaign:
     """Return a campaign written into a folder as ``2026-09-28.jsonl`` and so on, with its card and its truth.
+
+    What a later analysis says of a night stands in ``later/reanalysis-2026-10-07.jsonl``, what the sensors read in
+    ``sensors.csv``.
 
     Parameters
     ----------
@@ -63,9 +68,11 @@ def write_campaign(
         truths=tuple(truth for night in done for truth in night.truths),
         changes=tuple(change for night in done for change in night.changes),
         edits=tuple(edit for night in done for edit in night.edits),
-        shots=sum(len(night.shots) for night in done),
         mishaps=tuple(mishap for night in done for mishap in night.mishaps),
         versions=tuple(version for night in done for version in night.versions),
+        warmings=find_warmings(done),
+        shots=sum(len(night.shots) for night in done),
+        sensors=write_readings(folder / SENSORS, done, seed),
         reanalyses=tuple(_write_reanalyses(folder, done)),
     )
 
@@ -94,7 +101,8 @@ def _write_reanalyses(folder: Path, nights: Iterable[Night]) -> Iterator[Path]:
     for night in nights:
         again = [taken.again for taken in night.shots if taken.again is not None]
         if again:
-            yield _write(folder / f"reanalysis-{night.night.isoformat()}.jsonl", again)
+            (folder / LATER).mkdir(exist_ok=True)
+            yield _write(folder / LATER / f"reanalysis-{night.night.isoformat()}.jsonl", again)
 
 
 def _write(path: Path, records: Iterable[dict[str, Any]]) -> Path:
