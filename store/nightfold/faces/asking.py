@@ -10,7 +10,7 @@ from sqlalchemy import select
 
 from nightfold import tables
 from nightfold.faces.face import Face
-from nightfold.ledger import edits, names, nightly, notes, selecting
+from nightfold.ledger import cards, edits, nightly, notes, selecting
 from nightfold.ledger.shot import ShotView, view_shot
 from nightfold.timestamps import to_us, utc_times
 
@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from nightfold.card import MachineCard
+    from nightfold.ledger.history import ShotHistory
     from nightfold.ledger.sequences import SequenceView
 
 
@@ -27,7 +28,7 @@ class Asking(Face):
     def cards(self) -> dict[str, MachineCard]:
         """Return the card in force of each machine that has one."""
         with self._session.reading() as connection:
-            return names.cards_in_force(connection)
+            return cards.cards_in_force(connection)
 
     def machines(self) -> list[str]:
         """Return the names of the machines, sorted."""
@@ -61,6 +62,8 @@ class Asking(Face):
         until: datetime | str | None = None,
         set_aside: bool = False,
         limit: int | None = None,
+        sensors: Sequence[str] = (),
+        align: str = "nearest",
     ) -> pd.DataFrame:
         """Return shots in time order, a row each.
 
@@ -74,6 +77,10 @@ class Asking(Face):
             Include shots set aside.
         limit : int, optional
             Only the newest so many.
+        sensors : sequence of str
+            A column each, of what these sensors showed (docs/sensors.md).
+        align : {'nearest', 'mean'}
+            The reading nearest to the start of each shot, or the mean over the shot.
 
         Returns
         -------
@@ -83,9 +90,9 @@ class Asking(Face):
         Raises
         ------
         NotFound
-            If a machine, sequence, scan, parameter or observable is not in the store.
+            If a machine, sequence, scan, parameter, observable or sensor is not in the store.
         ChoiceNeeded
-            If several machines have a name in different units.
+            If several machines have a name in different units, or a column would have to show two things.
         """
         from nightfold.scans.listing import find_scan
 
@@ -93,7 +100,12 @@ class Asking(Face):
         scan_id = None if scan is None else find_scan(self._session, scan).id
         chosen = selecting.Selection(machine, sequence, scan_id, since, until, set_aside, limit)
         with self._session.reading() as connection:
-            return selecting.read_table(connection, chosen, parameters, observables)
+            table = selecting.read_table(connection, chosen, parameters, observables)
+            if sensors:
+                from nightfold.sensors.alongside import add_sensors
+
+                add_sensors(connection, table, chosen, selecting.listed(sensors), align)
+            return table
 
     def shot(self, uid: str) -> ShotView:
         """Return everything of one shot, by its uid or the beginning of it.
@@ -104,6 +116,23 @@ class Asking(Face):
         """
         with self._session.reading() as connection:
             return view_shot(connection, uid)
+
+    def history(self, uid: str) -> ShotHistory:
+        """Return what happened to a shot since it was taken, by its uid or the beginning of it.
+
+        Readings that were replaced, corrected settings, when it was set aside and put back, notes, scans it was put
+        into by hand, and the fits that looked at it, in time order; and of each observable every reading it had.
+
+        Raises
+        ------
+        NotFound
+        """
+        from nightfold.fits.kept import list_fits
+        from nightfold.ledger.history import read_history
+
+        stale = {fit.id for fit in list_fits(self._session, None, [uid]) if fit.stale}
+        with self._session.reading() as connection:
+            return read_history(connection, uid, stale)
 
     def nights(self) -> pd.DataFrame:
         """Return a row a night and machine.
@@ -160,8 +189,8 @@ class Asking(Face):
         Returns
         -------
         DataFrame
-            ``at`` (UTC), ``by``, ``kind`` (shot, scan, fit or night), ``about`` (uid of the shot, key of the scan, id of
-            the fit, date of the night), ``machine``, ``text``, ``subject`` (kind and id, or machine and date).
+            ``at`` (UTC), ``by``, ``kind`` (shot, scan, fit or night), ``about`` (uid of the shot, key of the scan, id
+            of the fit, date of the night), ``machine``, ``text``, ``subject`` (kind and id, or machine and date).
 
         Raises
         ------

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from datetime import datetime
 
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, Table, select
 
 from nightfold import tables
 from nightfold.ledger.amending import stored_settings
@@ -39,7 +39,10 @@ class ShotReading:
 
 @dataclass(frozen=True, slots=True)
 class ShotView:
-    """One shot in full; times are aware, in UTC."""
+    """One shot in full; times are aware, in UTC.
+
+    `corrected` names the parameters that were corrected, `reread` the observables that had another reading before.
+    """
 
     uid: str
     started: datetime
@@ -55,6 +58,8 @@ class ShotView:
     frames: tuple[tuple[str, str, str], ...]
     source: str | None
     line: int | None
+    corrected: frozenset[str] = frozenset()
+    reread: frozenset[str] = frozenset()
 
 
 def view_shot(connection: Connection, uid: str) -> ShotView:
@@ -75,10 +80,14 @@ def view_shot(connection: Connection, uid: str) -> ShotView:
     reason = connection.execute(
         select(aside.c.reason).where(aside.c.shot_id == shot.id, aside.c.lifted_us.is_(None))
     ).scalar()
-    noted = select(note.c.text).where(note.c.subject == shot_subject(shot.id)).order_by(note.c.at_us, note.c.id)
+    noted = (
+        select(note.c.text).where(note.c.subject == shot_subject(shot.id)).order_by(note.c.at_us, note.c.id)
+    )
     notes = connection.execute(noted).scalars()
     frames = connection.execute(
-        select(frame.c.camera, frame.c.role, frame.c.path).where(frame.c.shot_id == shot.id)
+        select(frame.c.camera, frame.c.role, frame.c.path)
+        .where(frame.c.shot_id == shot.id)
+        .order_by(frame.c.camera, frame.c.role)
     )
     path = connection.execute(select(source.c.path).where(source.c.id == shot.source_id)).scalar()
     return ShotView(
@@ -101,7 +110,15 @@ def view_shot(connection: Connection, uid: str) -> ShotView:
         frames=tuple((row.camera, row.role, row.path) for row in frames),
         source=path,
         line=shot.line,
+        corrected=_names_in(connection, tables.correction, tables.parameter, shot.id),
+        reread=_names_in(connection, tables.past_reading, tables.observable, shot.id),
     )
+
+
+def _names_in(connection: Connection, table: Table, named: Table, shot_id: int) -> frozenset[str]:
+    """Return the names of the parameters, or observables, of which a table tells something of the shot."""
+    query = select(named.c.name).join(table, table.c[f"{named.name}_id"] == named.c.id)
+    return frozenset(connection.execute(query.where(table.c.shot_id == shot_id)).scalars())
 
 
 def _readings(connection: Connection, shot_id: int) -> dict[str, ShotReading]:
