@@ -8,12 +8,12 @@ from dataclasses import dataclass, field
 from sqlalchemy import Connection
 
 from nightfold.ledger.checking import CheckedShot
-from nightfold.ledger.names import newest_cards, stored_card
+from nightfold.ledger.cards import newest_cards, stored_card
 from nightfold.scans import refolding, rounds
 from nightfold.scans.keeping import settle_axes
 from nightfold.scans.rounds import Round
 
-DEFAULT_REJOIN_S = 86400.0
+DEFAULT_REJOIN_US = 86_400_000_000
 
 
 @dataclass(slots=True)
@@ -39,8 +39,7 @@ class ScanFolder:
             current = self._newest.get(key) or rounds.newest_round(connection, *key)
             swept = _swept_ids(shot)
             if current is None or not current.takes(shot.started_us, swept, self.rejoin_us(connection, shot)):
-                number = 1 if current is None else current.round + 1
-                current = rounds.open_round(connection, key[0], key[1], number, shot.started_us, swept)
+                current = rounds.open_round(connection, *key, shot.started_us, swept)
             current.add(shot.started_us, swept, shot.wish.planned_shots, shot.wish.last)
             current.watch_settings(shot.set_digest, shot.moving)
             self._newest[key] = current
@@ -77,9 +76,14 @@ class ScanFolder:
     def rejoin_us(self, connection: Connection, shot: CheckedShot) -> int:
         """Return for how long after its last shot a label still resumes its round."""
         if self._rejoin_us is None:
-            cards = {machine: stored_card(toml) for machine, toml in newest_cards(connection).items()}
-            self._rejoin_us = {machine: int(card.rejoin_within_s * 1e6) for machine, card in cards.items()}
-        return self._rejoin_us.get(shot.machine.id, int(DEFAULT_REJOIN_S * 1e6))
+            self._rejoin_us = rejoin_times(connection)
+        return self._rejoin_us.get(shot.machine.id, DEFAULT_REJOIN_US)
+
+
+def rejoin_times(connection: Connection) -> dict[int, int]:
+    """Return for how long after its last shot a label still resumes its round, by machine, where a card says so."""
+    cards = {machine: stored_card(toml) for machine, toml in newest_cards(connection).items()}
+    return {machine: int(card.rejoin_within_s * 1e6) for machine, card in cards.items()}
 
 
 def _swept_ids(shot: CheckedShot) -> tuple[int, ...]:

@@ -28,6 +28,13 @@ def set_axes(
         connection.execute(insert(table), rows)
 
 
+def leading_axes(connection: Connection, scan_id: int) -> list[int]:
+    """Return the parameters that are the axes of a scan, in order, without those that follow one."""
+    table = tables.scan_axis
+    own = select(table.c.parameter_id).where(table.c.scan_id == scan_id, table.c.follows_id.is_(None))
+    return list(connection.execute(own.order_by(table.c.position)).scalars())
+
+
 def settle_axes(
     connection: Connection, scan_id: int, swept: Collection[int], *, declared: bool = True
 ) -> None:

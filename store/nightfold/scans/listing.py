@@ -10,7 +10,9 @@ from sqlalchemy import Connection, Row, func, select
 
 from nightfold import tables
 from nightfold.errors import ChoiceNeeded, NotFound
+from nightfold.ledger.pins import kept_scans
 from nightfold.ledger.selecting import near_miss, set_aside_now
+from nightfold.scans.arrangements import where_gone
 from nightfold.scans.scan import Scan
 from nightfold.session import Session
 from nightfold.timestamps import from_us, now_us
@@ -36,13 +38,32 @@ def find_scan(session: Session, key: int | str) -> Scan:
         If several sequences use the label.
     """
     with session.reading() as connection:
-        found = _read_scans(connection, session, _find_id(connection, key))
-    if not found:
-        raise NotFound(f"scan {key!r}: it has no shots any more")
+        scan_id = find_id(connection, key)
+        found = _read_scans(connection, session, scan_id)
+        if not found:
+            raise NotFound(f"scan {key!r}: {why_empty(connection, scan_id)}")
     return found[0]
 
 
-def _find_id(connection: Connection, key: int | str) -> int:
+def why_empty(connection: Connection, scan_id: int) -> str:
+    """Return why a scan has no shots."""
+    step = where_gone(connection, scan_id)
+    if step is None:
+        return "it has no shots any more"
+    return (
+        f"its shots were brought into {' and '.join(step.after)} by hand; "
+        f"'nightfold join --undo {step.number}' takes that back"
+    )
+
+
+def find_id(connection: Connection, key: int | str) -> int:
+    """Return the id of the scan that a key names; it may have no shots if they were arranged by hand.
+
+    Raises
+    ------
+    NotFound, ChoiceNeeded
+        As of `find_scan`.
+    """
     scan = tables.scan
     sequence, machine = tables.sequence, tables.machine
     query = (
@@ -60,12 +81,25 @@ def _find_id(connection: Connection, key: int | str) -> int:
         found = _by_text(rows, str(key))
     if not found:
         raise NotFound(f"scan {key!r}: not among the {len(rows)} scans of this store; {_nearest(rows, key)}")
+    last = _last_shots(connection, [row.id for row in found])
+    if len({row.sequence_id for row in found}) > 1:
+        found = [row for row in found if row.id not in last or last[row.id] is not None]
     if len({row.sequence_id for row in found}) > 1:
         choices = ", ".join(f"{row.id} ({row.machine}, {row.sequence})" for row in found)
         raise ChoiceNeeded(
             f"scan {key!r}: several machines or sequences use this label; name it by id: {choices}"
         )
-    return int(max(found, key=lambda row: row.round).id)
+    return int(max(found, key=lambda row: (last.get(row.id) or 0, row.round)).id)
+
+
+def _last_shots(connection: Connection, ids: list[int]) -> dict[int, int | None]:
+    """Return when the last shot of each round started, if people have arranged some; else they are numbered by time."""
+    if len(ids) < 2 or kept_scans(connection).isdisjoint(ids):
+        return {}
+    shot = tables.shot
+    last = select(shot.c.scan_id, func.max(shot.c.started_us).label("last_us")).where(shot.c.scan_id.in_(ids))
+    found = {row.scan_id: row.last_us for row in connection.execute(last.group_by(shot.c.scan_id))}
+    return {scan_id: found.get(scan_id) for scan_id in ids}
 
 
 def _nearest(rows: list[Row[Any]], key: int | str) -> str:

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from bisect import bisect
 from collections import ChainMap
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence, Set
 from dataclasses import replace
 from itertools import pairwise
 from typing import Any
@@ -12,12 +13,14 @@ from sqlalchemy import ColumnElement, Connection, Row, and_, or_, select, update
 
 from nightfold import tables
 from nightfold.ledger.names import insert_row
+from nightfold.ledger.pins import is_pinned, pinned_times
 from nightfold.ledger.rows import chunks
 from nightfold.scans.folding import FoundScan, StreamShot, fold_stream
 from nightfold.scans.keeping import set_axes, settle_axes
 from nightfold.scans.pauses import REACH as PAUSE_REACH
 from nightfold.scans.pauses import find_pauses
 from nightfold.scans.rounds import move_shots, retire
+from nightfold.scans.sweeps import derived_sweeps
 from nightfold.settings import token_of
 
 REACH = 500
@@ -25,8 +28,12 @@ FARTHEST_US = 2 * 86_400_000_000
 FOR_EVER_US = 2**62
 
 
-def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: int) -> None:
+def fold_span(
+    connection: Connection, sequence_id: int, first_us: int, last_us: int, fresh: Collection[int] = ()
+) -> None:
     """Fold a stream's unlabelled shots again, around the times of the shots just written.
+
+    Scans that hold a shot of `fresh`, those whose settings have changed, have their axes looked at again in any case.
 
     The span reaches to the nearest pause on either side, so the outcome does not depend on the order of arrival; where
     the machine never pauses, to the bounds of the scans about 500 shots away.
@@ -39,13 +46,14 @@ def fold_span(connection: Connection, sequence_id: int, first_us: int, last_us: 
     )
     names = {row.id: row.name for row in connection.execute(query)}
     stream = _stream(connection, rows, names)
-    bounds = [0, *_cuts(rows), len(rows)]
+    cuts = {*_cuts(rows), *_cuts_by_hand(connection, sequence_id, rows)}
+    bounds = [0, *sorted(cuts), len(rows)]
     found = [
         scan
         for start, stop in pairwise(bounds)
         for scan in fold_stream(_alone(stream[start:stop]), pause_us=FOR_EVER_US)
     ]
-    _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()})
+    _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()}, set(fresh))
 
 
 def _cuts(rows: Sequence[Row[Any]]) -> list[int]:
@@ -59,6 +67,15 @@ def _cuts(rows: Sequence[Row[Any]]) -> list[int]:
             count = 0
         count = count + 1 if row.planned_shots is not None else 0
     return cuts
+
+
+def _cuts_by_hand(connection: Connection, sequence_id: int, rows: Sequence[Row[Any]]) -> list[int]:
+    """Return where shots would have stood whose scan a person chose: no scan goes on across them."""
+    if not rows:
+        return []
+    started = [row.started_us for row in rows]
+    places = (bisect(started, us) for us in pinned_times(connection, sequence_id, started[0], started[-1]))
+    return sorted({place for place in places if 0 < place < len(rows)})
 
 
 def _alone(shots: Sequence[StreamShot]) -> list[StreamShot]:
@@ -114,7 +131,7 @@ def _unlabelled(
     limit: int | None = REACH,
 ) -> list[Row[Any]]:
     shot, scan = tables.shot, tables.scan
-    own = and_(shot.c.sequence_id == sequence_id, ~shot.c.reference, when)
+    own = and_(shot.c.sequence_id == sequence_id, ~shot.c.reference, when, ~is_pinned(shot.c.id))
     free = or_(shot.c.scan_id.is_(None), scan.c.label.is_(None))
     order = (shot.c.started_us.desc(), shot.c.id.desc()) if newest_first else (shot.c.started_us, shot.c.id)
     query = (
@@ -129,6 +146,9 @@ def _unlabelled(
 def _stream(connection: Connection, rows: Sequence[Row[Any]], names: Mapping[int, str]) -> list[StreamShot]:
     resting = _resting(connection, {row.set_id for row in rows}, names)
     moving, swept = _moving(connection, [row.id for row in rows], names)
+    for shot_id, tokens in derived_sweeps(connection, rows).items():
+        moving.setdefault(shot_id, {}).update(tokens)
+        swept.setdefault(shot_id, set()).update(tokens)
     shots: list[StreamShot] = []
     last_set, last_moved = None, dict[str, str]()
     for row in rows:
@@ -182,6 +202,7 @@ def _keep(
     rows: Sequence[Row[Any]],
     found: Sequence[FoundScan],
     ids: Mapping[str, int],
+    fresh: Set[int],
 ) -> None:
     """Bring the scans found into the store; a scan keeps its id as long as it keeps most of its shots."""
     by_id = {row.id: row for row in rows}
@@ -214,7 +235,7 @@ def _keep(
         moved = [shot_id for shot_id in scan.shot_ids if now[shot_id] != best]
         lost = sum(1 for old in now.values() if old == best) > counts.get(best, 0)
         move_shots(connection, best, moved)
-        if moved or lost:
+        if moved or lost or not fresh.isdisjoint(scan.shot_ids):
             touched[best] = [ids[name] for name in scan.axes], scan.origin == "declared"
         placed.update(scan.shot_ids)
     loose = [shot_id for shot_id, scan_id in now.items() if scan_id is not None and shot_id not in placed]

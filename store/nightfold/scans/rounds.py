@@ -2,15 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterable, Sequence
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
+from itertools import count
+from typing import Any
 
-from sqlalchemy import Connection, delete, func, select, update
+from sqlalchemy import Connection, Row, delete, func, select, update
 
 from nightfold import tables
 from nightfold.ledger.names import insert_row
+from nightfold.ledger.notes import hand_over_notes, has_notes, scan_subject
+from nightfold.ledger.pins import kept_scans, read_pins
 from nightfold.ledger.rows import chunks
 from nightfold.scans.keeping import set_axes, settle_axes
+from nightfold.scans.sweeps import declared_sweeps
 
 ALWAYS_SETTLED = 64
 
@@ -20,19 +25,19 @@ class Round:
     """One round of a label as far as it has come."""
 
     scan_id: int
-    round: int
     swept: frozenset[int]
     last_us: int
     shots: int
     planned: int | None = None
     closed_us: int | None = None
     late: bool = False
+    arranged: bool = False
     settled_at: int = 0
     seen: set[tuple[bytes, frozenset[str]]] = field(default_factory=set)
 
     def takes(self, started_us: int, swept: Sequence[int], rejoin_us: int) -> bool:
         """Return whether a shot of that time and sweep resumes this round."""
-        if started_us < self.last_us:
+        if self.arranged or started_us < self.last_us:  # then all shots of the label are looked at
             self.late = True
             return True
         if self.closed_us is not None or (self.planned is not None and self.shots >= self.planned):
@@ -77,30 +82,52 @@ class _Member:
 
 
 def open_round(
-    connection: Connection, sequence_id: int, label: str, number: int, started_us: int, swept: Sequence[int]
+    connection: Connection, sequence_id: int, label: str, started_us: int, swept: Sequence[int]
 ) -> Round:
     """Enter a new round of a label."""
+    rows, kept = _rounds_of(connection, sequence_id, label), kept_scans(connection)
+    after = max((row.round for row in rows if row.id not in kept), default=0)
+    number = next(_free_numbers(rows, kept, after))
     row = {"sequence_id": sequence_id, "label": label, "round": number, "origin": "label"}
     scan_id = insert_row(connection, tables.scan, row)
     set_axes(connection, scan_id, swept)
-    return Round(scan_id, number, frozenset(swept), started_us, 0)
+    arranged = _lost_shots(connection, sequence_id, rows, kept)
+    return Round(scan_id, frozenset(swept), started_us, 0, arranged=arranged)
+
+
+def _rounds_of(connection: Connection, sequence_id: int, label: str) -> list[Row[Any]]:
+    """Return the scans of a label, also those without shots, by their number."""
+    scan = tables.scan
+    query = select(scan).where(scan.c.sequence_id == sequence_id, scan.c.label == label)
+    return list(connection.execute(query.order_by(scan.c.round)))
 
 
 def newest_round(connection: Connection, sequence_id: int, label: str) -> Round | None:
-    """Return the newest round of a label as it is in the store."""
-    scan, shot = tables.scan, tables.shot
-    row = connection.execute(
-        select(scan)
-        .where(scan.c.sequence_id == sequence_id, scan.c.label == label)
-        .order_by(scan.c.round.desc())
-        .limit(1)
-    ).first()
-    if row is None:
-        return None
-    span = select(func.max(shot.c.started_us), func.count()).where(shot.c.scan_id == row.id)
-    last, count = connection.execute(span).one()
-    swept = _swept_of(connection, row.id)
-    return Round(row.id, row.round, swept, last or 0, count, row.planned_shots, row.closed_us)
+    """Return the round of a label that has the latest shot, as it is in the store."""
+    shot = tables.shot
+    rows = _rounds_of(connection, sequence_id, label)
+    kept = kept_scans(connection)
+    span = select(func.max(shot.c.started_us), func.count())
+    found = None
+    for row in rows if kept else rows[-1:]:  # where nobody arranged anything, rounds are numbered by time
+        last, shots = connection.execute(span.where(shot.c.scan_id == row.id)).one()
+        if last is not None and (found is None or last > found.last_us):
+            found = Round(row.id, swept_of(connection, row.id), last, shots, row.planned_shots, row.closed_us)
+            found.arranged = row.id in kept
+    if found is not None and not found.arranged:
+        found.arranged = _lost_shots(connection, sequence_id, rows, kept)
+    return found
+
+
+def _lost_shots(
+    connection: Connection, sequence_id: int, rows: Sequence[Row[Any]], kept: Collection[int]
+) -> bool:
+    """Whether shots of a label were brought into scans of another one, or of none."""
+    own = {row.id for row in rows}
+    if own.isdisjoint(kept):
+        return False
+    pins = read_pins(connection, sequence_id).values()
+    return any(pin.origin in own and pin.scan not in own for pin in pins)
 
 
 def save_progress(connection: Connection, current: Round) -> None:
@@ -118,39 +145,104 @@ def fold_label(
 ) -> None:
     """Cut all shots of a label into rounds again, by the time they started, whatever the order they came in.
 
+    Shots that a person arranged stay where they are. Those that would be of one round with them go to the scan of the
+    arranged shot before them (or else after them).
+
     Parameters
     ----------
     fresh : collection of int
         Ids of the shots that came now: the rounds they are in have their axes looked at again.
     """
-    scan = tables.scan
-    query = select(scan.c.id).where(scan.c.sequence_id == sequence_id, scan.c.label == label)
-    existing = list(connection.execute(query.order_by(scan.c.round)).scalars())
-    groups = _cut(_members(connection, existing), rejoin_us)
-    free = list(existing)
+    rows = _rounds_of(connection, sequence_id, label)
+    own = {row.id for row in rows}
+    pins = read_pins(connection, sequence_id)
+    kept = kept_scans(connection)
+    away = [shot_id for shot_id, pin in pins.items() if pin.origin in own and pin.scan not in own]
+    members = _members(connection, sorted(own), away)
+    guests = {member.id for member in members if member.id in pins and pins[member.id].origin not in own}
+    rounds = _cut([member for member in members if member.id not in guests], rejoin_us)
+    arranged, groups = _around_pins(rounds, {key: pin.scan for key, pin in pins.items()}, own)
+    for member in members:
+        if member.id in guests:
+            arranged.setdefault(member.scan_id, []).append(member)
+    for group in arranged.values():
+        group.sort(key=_in_time)
+    free = [row.id for row in rows if row.id not in kept]
+    chosen = _choose_scans(connection, sequence_id, label, groups, free)
+    for position, scan_id in enumerate([*chosen, *free]):  # out of each other's way first: rounds are unique
+        _enter(connection, scan_id, round=-1000 - position)
+    for scan_id, number in zip(chosen, _free_numbers(rows, kept, 0), strict=False):
+        _enter(connection, scan_id, round=number)
+    placed = [*zip(chosen, groups, strict=True), *arranged.items()]
+    for scan_id, group in placed:
+        ended = group[-1].started_us if group[-1].last else None
+        _enter(connection, scan_id, planned_shots=_plan_of(group), closed_us=ended)
+        move_shots(connection, scan_id, [member.id for member in group if member.scan_id != scan_id])
+    for gone in free:
+        held = {scan_id: _held(group, gone) for scan_id, group in placed}
+        retire(connection, gone, max(held, key=held.__getitem__, default=None))
+    for scan_id, group in placed:
+        if any(member.scan_id != scan_id or member.id in fresh for member in group):
+            settle_axes(connection, scan_id, frozenset[int]().union(*(member.swept for member in group)))
+
+
+def _choose_scans(
+    connection: Connection,
+    sequence_id: int,
+    label: str,
+    groups: Sequence[Sequence[_Member]],
+    free: list[int],
+) -> list[int]:
+    """Return a scan for each round, taken out of the free ones: each keeps the id most of its shots had."""
     chosen: list[int] = []
-    for group in groups:  # each round keeps the id most of its shots had
+    for group in groups:
         wanted = max(free, key=lambda scan_id: _held(group, scan_id), default=None)
         if wanted is None or not _held(group, wanted):
             row = {"sequence_id": sequence_id, "label": label, "round": -1 - len(chosen), "origin": "label"}
-            wanted = insert_row(connection, scan, row)
+            wanted = insert_row(connection, tables.scan, row)
         else:
             free.remove(wanted)
         chosen.append(wanted)
-    for position, scan_id in enumerate([*chosen, *free]):  # out of each other's way first: rounds are unique
-        connection.execute(update(scan).where(scan.c.id == scan_id).values(round=-1000 - position))
-    for number, (scan_id, group) in enumerate(zip(chosen, groups, strict=True), 1):
-        ends = [member.started_us for member in group if member.last]
-        values = {"round": number, "planned_shots": _plan_of(group), "closed_us": max(ends, default=None)}
-        connection.execute(update(scan).where(scan.c.id == scan_id).values(**values))
-        moved = [member.id for member in group if member.scan_id != scan_id]
-        move_shots(connection, scan_id, moved)
-    for scan_id in free:
-        heir = max(range(len(groups)), key=lambda place: _held(groups[place], scan_id))
-        retire(connection, scan_id, chosen[heir])
-    for scan_id, group in zip(chosen, groups, strict=True):
-        if any(member.scan_id != scan_id or member.id in fresh for member in group):
-            settle_axes(connection, scan_id, next((m.swept for m in group if m.swept), frozenset()))
+    return chosen
+
+
+def _around_pins(
+    rounds: Sequence[Sequence[_Member]], pinned: Mapping[int, int], own: set[int]
+) -> tuple[dict[int, list[_Member]], list[list[_Member]]]:
+    """Return the shots of each arranged scan of a label, and the rounds that nobody arranged.
+
+    Parameters
+    ----------
+    rounds : sequence of sequence
+        What the rounds were if nobody had arranged anything.
+    pinned : mapping
+        The scan of each shot that was arranged.
+    own : set of int
+        The scans of the label.
+    """
+    arranged: dict[int, list[_Member]] = {}
+    loose: list[list[_Member]] = []
+    for group in rounds:
+        stay = [member for member in group if pinned.get(member.id, member.scan_id) in own]
+        here = next((pinned[member.id] for member in stay if member.id in pinned), None)
+        if here is None:
+            loose += [stay] if stay else []
+            continue
+        for member in stay:
+            here = pinned.get(member.id, here)
+            arranged.setdefault(here, []).append(member)
+    return arranged, loose
+
+
+def _free_numbers(rows: Sequence[Row[Any]], kept: Collection[int], after: int) -> Iterator[int]:
+    """Return the numbers after one that no arranged round of a label holds."""
+    held = {row.round for row in rows if row.id in kept}
+    return (number for number in count(after + 1) if number not in held)
+
+
+def _enter(connection: Connection, scan_id: int, **values: int | None) -> None:
+    scan = tables.scan
+    connection.execute(update(scan).where(scan.c.id == scan_id).values(**values))
 
 
 def _held(group: Sequence[_Member], scan_id: int) -> int:
@@ -186,15 +278,16 @@ def _cut(members: Sequence[_Member], rejoin_us: int) -> list[list[_Member]]:
     return groups
 
 
-def _members(connection: Connection, scan_ids: Sequence[int]) -> list[_Member]:
-    """Return the shots of scans, in time order."""
-    shot, value = tables.shot, tables.shot_value
-    swept: dict[int, set[int]] = {}
+def _members(connection: Connection, scan_ids: Sequence[int], others: Sequence[int]) -> list[_Member]:
+    """Return the shots of scans, and others by id, in time order."""
+    shot = tables.shot
     members: list[_Member] = []
-    declared = select(value.c.shot_id, value.c.parameter_id).join(shot, shot.c.id == value.c.shot_id)
-    for part in chunks(scan_ids):
-        for row in connection.execute(declared.where(shot.c.scan_id.in_(part), value.c.swept)):
-            swept.setdefault(row.shot_id, set()).add(row.parameter_id)
+    wanted = [
+        *(shot.c.scan_id.in_(part) for part in chunks(scan_ids)),
+        *(shot.c.id.in_(part) for part in chunks(others)),
+    ]
+    for own in wanted:
+        swept = declared_sweeps(connection, own)
         members += [
             _Member(
                 row.id,
@@ -204,18 +297,18 @@ def _members(connection: Connection, scan_ids: Sequence[int]) -> list[_Member]:
                 row.planned_shots,
                 bool(row.last),
             )
-            for row in connection.execute(select(shot).where(shot.c.scan_id.in_(part)))
+            for row in connection.execute(select(shot).where(own))
         ]
-    return sorted(members, key=lambda member: (member.started_us, member.id))
+    return sorted(members, key=_in_time)
 
 
-def _swept_of(connection: Connection, scan_id: int) -> frozenset[int]:
+def _in_time(member: _Member) -> tuple[int, int]:
+    return member.started_us, member.id
+
+
+def swept_of(connection: Connection, scan_id: int) -> frozenset[int]:
     """Return the parameters that the records of a scan declared swept."""
-    shot, value = tables.shot, tables.shot_value
-    rows = select(value.c.parameter_id).join(shot, shot.c.id == value.c.shot_id)
-    return frozenset(
-        connection.execute(rows.where(shot.c.scan_id == scan_id, value.c.swept).distinct()).scalars()
-    )
+    return frozenset().union(*declared_sweeps(connection, tables.shot.c.scan_id == scan_id).values())
 
 
 def move_shots(connection: Connection, scan_id: int | None, shot_ids: Sequence[int]) -> None:
@@ -225,16 +318,19 @@ def move_shots(connection: Connection, scan_id: int | None, shot_ids: Sequence[i
 
 
 def retire(connection: Connection, scan_id: int, heir: int | None) -> None:
-    """Remove a scan if it has lost all its shots; its kept fits go to the scan that has them now."""
+    """Remove a scan if it has lost all its shots; its kept fits and notes go to the scan that has them now."""
     fit, shot = tables.fit, tables.shot
     if connection.execute(select(shot.c.id).where(shot.c.scan_id == scan_id).limit(1)).first() is not None:
+        return
+    if scan_id in kept_scans(connection):
         return
     has_fits = (
         connection.execute(select(fit.c.id).where(fit.c.scan_id == scan_id).limit(1)).first() is not None
     )
-    if has_fits and heir is None:
+    if heir is None and (has_fits or has_notes(connection, scan_subject(scan_id))):
         return
-    if has_fits:
+    if heir is not None:
         connection.execute(update(fit).where(fit.c.scan_id == scan_id).values(scan_id=heir))
+        hand_over_notes(connection, scan_id, heir)
     set_axes(connection, scan_id, ())
     connection.execute(delete(tables.scan).where(tables.scan.c.id == scan_id))
