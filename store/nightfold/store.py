@@ -10,6 +10,7 @@ from nightfold.faces.asking import Asking
 from nightfold.faces.face import Where
 from nightfold.faces.mending import Mending
 from nightfold.faces.scanning import Scanning
+from nightfold.faces.sensing import Sensing
 from nightfold.faces.taking import Taking
 from nightfold.ledger.writing import Writer
 from nightfold.scans.assigning import ScanFolder
@@ -17,7 +18,7 @@ from nightfold.scans.assigning import ScanFolder
 __all__ = ["Store", "Where"]
 
 
-class Store(Taking, Asking, Scanning, Mending):
+class Store(Taking, Asking, Scanning, Mending, Sensing):
     """An open store; a context manager that gives its connections back at the end.
 
     Made by `open_store`. Every method is one transaction, or, where records are taken, one a batch. The methods stand

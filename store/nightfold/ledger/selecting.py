@@ -54,6 +54,11 @@ def column_name(name: str) -> str:
     return f"{name}_" if name in _OWN_COLUMNS else name
 
 
+def listed(names: Sequence[str]) -> tuple[str, ...]:
+    """Return names in their order, each once; one name alone is a list of one."""
+    return (names,) if isinstance(names, str) else tuple(dict.fromkeys(names))
+
+
 def moment_us(value: datetime | str, zone: str) -> int:
     """Return a time as microseconds since 1970; without an offset it is read in `zone`, a date is its first moment.
 

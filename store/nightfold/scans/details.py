@@ -61,7 +61,7 @@ def read_details(connection: Connection, scan_id: int, machine_id: int) -> ScanD
     leading = [item for item, row in zip(settings, own, strict=True) if row.follows_id is None]
     rows, where = select_shots(connection, Selection(scan_id=scan_id, set_aside=True))
     columns = setting_columns(connection, rows, leading, where)
-    card = _card_of(connection, machine_id)
+    card = card_of(connection, machine_id)
     observables, main = _observables(connection, scan_id, card)
     found = [*settings, *observables]
     entries = {item.name: _entry(card, item.name) for item in found} if card is not None else {}
@@ -77,7 +77,8 @@ def read_details(connection: Connection, scan_id: int, machine_id: int) -> ScanD
     )
 
 
-def _card_of(connection: Connection, machine_id: int) -> MachineCard | None:
+def card_of(connection: Connection, machine_id: int) -> MachineCard | None:
+    """Return the card in force of a machine, None where it has none."""
     text = newest_cards(connection).get(machine_id)
     return stored_card(text) if text is not None else None
 

@@ -29,6 +29,8 @@ def build_dataset(
     co_moving: Mapping[str, str],
     observables: Sequence[str],
     units: Mapping[str, str],
+    mixed: Mapping[str, Sequence[str]] = _NOTHING,
+    sensors: Sequence[str] = (),
     descriptions: Mapping[str, str] = _NOTHING,
     attrs: Mapping[str, Any] = _NOTHING,
     tolerance: float | Mapping[str, float] | None = None,
@@ -49,6 +51,10 @@ def build_dataset(
         its cloud ``""``).
     units : mapping of str to str
         Units of parameters and observables; empty ones are left out.
+    mixed : mapping of str to sequence of str
+        Parameter -> the axes that it is a function of.
+    sensors : sequence of str
+        Further columns of numbers, as they stand.
     descriptions : mapping of str to str
         Long names; default the name itself.
     attrs : mapping
@@ -68,7 +74,7 @@ def build_dataset(
 
     Notes
     -----
-    A co-moving parameter is a coordinate along its axis; should it take several values at one point after all, it
+    A co-moving parameter is a coordinate along its axis, a mixed one along its axes; should it take several values at one point after all, it
     is spread over all dimensions. A parameter that is called like one of the dimensions above gets a
     ``_`` behind its name. Attributes follow CF-1.11 (``units``, ``long_name``, ``ancillary_variables``).
     """
@@ -80,9 +86,15 @@ def build_dataset(
     coords = {free_name(axis): _axis(rows, layout, axis, names) for axis in axes}
     for follower, leader in co_moving.items():
         coords[free_name(follower)] = _follower(rows, layout, follower, leader, names)
+    for name, leaders in mixed.items():
+        coords[free_name(name)] = _mixed(rows, layout, name, leaders, names)
     variables = _bookkeeping(rows, layout)
     taken = (*OWN_DIMENSIONS, *variables, *coords)
     variables |= _observables(rows, layout, observables, names, taken)
+    for sensor in sensors:
+        name = free_name(sensor, (*taken, *variables))
+        values = layout.spread(rows[sensor].to_numpy(np.float64, na_value=np.nan), np.nan)
+        variables[name] = xr.Variable(layout.dims, values, names.describe(sensor))
     return xr.Dataset(variables, coords, attrs={"Conventions": "CF-1.11"} | _plain_attrs(attrs))
 
 
@@ -138,6 +150,22 @@ def _follower(rows: pd.DataFrame, layout: Layout, name: str, leader: str, names:
     return xr.Variable(layout.dims, layout.spread(values, hole), attrs)
 
 
+def _mixed(
+    rows: pd.DataFrame, layout: Layout, name: str, leaders: Sequence[str], names: _Names
+) -> xr.Variable:
+    """Return a parameter as a coordinate along several axes, if it has one value at each of their points."""
+    attrs = names.describe(name) | {"co_moving_with": " ".join(free_name(leader) for leader in leaders)}
+    values = rows[name].to_numpy(np.float64, na_value=np.nan)
+    if layout.points:
+        axes = [layout.points[leader] for leader in leaders]
+        along = np.full([axis.points for axis in axes], np.nan)
+        places = tuple(axis.codes for axis in axes)
+        along[places] = values
+        if np.array_equal(along[places], values, equal_nan=True):
+            return xr.Variable(tuple(free_name(leader) for leader in leaders), along, attrs)
+    return xr.Variable(layout.dims, layout.spread(values, np.nan), attrs)
+
+
 def _bookkeeping(rows: pd.DataFrame, layout: Layout) -> dict[str, xr.Variable]:
     started = pd.to_datetime(rows["started"], utc=True).dt.tz_localize(None).to_numpy("datetime64[us]")
     uids = rows["uid"].to_numpy(object).astype(np.str_)
@@ -159,11 +187,17 @@ def _bookkeeping(rows: pd.DataFrame, layout: Layout) -> dict[str, xr.Variable]:
     return variables
 
 
-def _by_cloud(observables: Sequence[str]) -> dict[str, dict[str | None, str]]:
-    """Return variable -> cloud (None for none) -> observable."""
+def _by_cloud(observables: Sequence[str], units: Mapping[str, str]) -> dict[str, dict[str | None, str]]:
+    """Return variable -> cloud (None for none) -> observable; clouds in another unit than the first stay apart."""
     variables: dict[str, dict[str | None, str]] = {}
+    known: dict[str, str] = {}
     for observable in observables:
         name, cloud = split_cloud(observable)
+        unit = units.get(observable) or known.get(name, "")
+        if known.setdefault(name, unit) in ("", unit):
+            known[name] = unit
+        else:
+            name, cloud = observable, None
         variables.setdefault(name, {})[cloud] = observable
     return variables
 
@@ -194,7 +228,7 @@ def _observables(
     rows: pd.DataFrame, layout: Layout, observables: Sequence[str], names: _Names, taken: Sequence[str]
 ) -> dict[str, xr.Variable]:
     """Return the observables and their standard uncertainties, and the coordinate of the clouds if there are any."""
-    by_cloud = _by_cloud(observables)
+    by_cloud = _by_cloud(observables, names.units)
     clouds = _cloud_names(by_cloud)
     variables: dict[str, xr.Variable] = {}
     for name, columns in by_cloud.items():

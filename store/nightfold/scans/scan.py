@@ -9,9 +9,9 @@ from functools import cached_property
 from typing import TYPE_CHECKING
 
 from nightfold.errors import NotFound
-from nightfold.ledger.selecting import column_name, near_miss, scan_key
+from nightfold.ledger.selecting import Selection, column_name, listed, near_miss, scan_key
 from nightfold.scans.axes import Axis
-from nightfold.scans.details import ScanDetails, read_details, read_shots
+from nightfold.scans.details import ScanDetails, card_of, read_details, read_shots
 from nightfold.scans.references import (
     WITHIN,
     Comparison,
@@ -20,6 +20,7 @@ from nightfold.scans.references import (
     read_within,
     relate,
 )
+from nightfold.sensors.alongside import add_sensors
 from nightfold.session import Session
 
 if TYPE_CHECKING:
@@ -81,6 +82,11 @@ class Scan:
         return self._details.followers
 
     @property
+    def mixed(self) -> dict[str, tuple[str, ...]]:
+        """Derived parameters that depend on several axes, and on which."""
+        return self._details.mixed
+
+    @property
     def observables(self) -> tuple[str, ...]:
         """Names of what was read, the machine card's main observable first."""
         return tuple(item.name for item in self._details.observables)
@@ -106,6 +112,8 @@ class Scan:
         observables: Sequence[str] | None = None,
         relative_to: str | None = None,
         reference_within: str | float = WITHIN,
+        sensors: Sequence[str] = (),
+        align: str = "nearest",
     ) -> pd.DataFrame:
         """Return a frame with a row a shot, in time order.
 
@@ -123,24 +131,35 @@ class Scan:
             `nightfold.scans.relative` do; that stands beside it as ``<observable>_reference``.
         reference_within : str or float
             How far a reference shot may be from a shot: a text with a unit, or seconds.
+        sensors : sequence of str
+            A further column each, of what these sensors showed (docs/sensors.md).
+        align : {'nearest', 'mean'}
+            The reading nearest to the start of each shot, or the mean over the shot.
 
         Raises
         ------
         NotFound
-            If no shot of the scan has an observable asked for.
+            If no shot of the scan has an observable asked for, or there is no such sensor.
         NoReference
             If reference shots are too far, lack the observable, or read what cannot be divided by.
         """
         details = self._chosen(observables)
         with self._session.reading() as connection:
             table = read_shots(connection, self.id, details, set_aside)
-            if relative_to is None:
-                return table
-            check_relative(relative_to)
-            wanted = Comparison(
-                self.key, self._machine_id, self.sequence, details.observables, read_within(reference_within)
-            )
-            return relate(connection, table, wanted)
+            if relative_to is not None:
+                check_relative(relative_to)
+                wanted = Comparison(
+                    self.key,
+                    self._machine_id,
+                    self.sequence,
+                    details.observables,
+                    read_within(reference_within),
+                )
+                table = relate(connection, table, wanted)
+            if sensors:
+                chosen = Selection(machine=self.machine, scan_id=self.id, set_aside=set_aside)
+                add_sensors(connection, table, chosen, listed(sensors), align)
+            return table
 
     def _chosen(self, names: Sequence[str] | None) -> ScanDetails:
         """Return the details with these observables only."""
@@ -153,6 +172,19 @@ class Scan:
                 raise NotFound(f"scan {self.key}: no observable {name!r}; {near_miss(name, known)}")
         return replace(self._details, observables=tuple(known[name] for name in wanted))
 
+    def _described(self, sensors: Sequence[str]) -> dict[str, str]:
+        """Return what the machine card says of sensors, by their column."""
+        if not sensors:
+            return {}
+        with self._session.reading() as connection:
+            card = card_of(connection, self._machine_id)
+        entries = {name: card.sensors.get(name) for name in listed(sensors)} if card is not None else {}
+        return {
+            column_name(name): entry.description
+            for name, entry in entries.items()
+            if entry and entry.description
+        }
+
     def dataset(
         self,
         set_aside: bool = False,
@@ -161,6 +193,8 @@ class Scan:
         observables: Sequence[str] | None = None,
         relative_to: str | None = None,
         reference_within: str | float = WITHIN,
+        sensors: Sequence[str] = (),
+        align: str = "nearest",
     ) -> xr.Dataset:
         """Return the scan on its axes.
 
@@ -171,7 +205,7 @@ class Scan:
         tolerance : float, optional
             Values of an axis closer together than this are one point, in the unit of the axis; default 1e-6 of its
             span.
-        observables, relative_to, reference_within
+        observables, relative_to, reference_within, sensors, align
             As in `table`.
 
         Returns
@@ -184,17 +218,24 @@ class Scan:
         from nightfold.scans.grid import build_dataset
 
         table = self.table(
-            set_aside, observables=observables, relative_to=relative_to, reference_within=reference_within
+            set_aside,
+            observables=observables,
+            relative_to=relative_to,
+            reference_within=reference_within,
+            sensors=sensors,
+            align=align,
         )
         read = [item.name for item in self._chosen(observables).observables]
-        descriptions = self._details.descriptions
+        descriptions = self._details.descriptions | self._described(sensors)
         if relative_to is not None:
             read, descriptions = describe_levels(table.attrs["levels"], descriptions)
         dataset: xr.Dataset = build_dataset(
             table,
             [column_name(axis.parameter) for axis in self.axes],
             co_moving={column_name(name): column_name(axis) for name, axis in self.followers.items()},
+            mixed={column_name(name): [column_name(axis) for axis in own] for name, own in self.mixed.items()},
             observables=[column_name(name) for name in read],
+            sensors=[column_name(name) for name in listed(sensors)],
             units={column_name(name): unit for name, unit in table.attrs["units"].items()},
             descriptions=descriptions,
             attrs={

@@ -85,37 +85,33 @@ def readings_of(record: Mapping[str, Any]) -> list[Stated]:
         raise RecordError("readings", found, 'an object such as {"room_temperature": 21.3}')
     found_ones: dict[str, Stated] = {}
     for key, raw in readings.items():
-        if raw is None:
+        value, unit = raw, None
+        if type(raw) is dict or (type(raw) is not float and isinstance(raw, Mapping)):
+            value, unit = _parts(raw, key)
+        if value is None:
             continue
         name = _name(key, "readings")
-        field = f"readings.{name}"
         if name in found_ones:
-            raise RecordError(field, "the same name twice", "each sensor once")
-        unit = None
-        if isinstance(raw, Mapping):
-            value, unit = _parts(raw, field)
-            if value is None:
-                continue
-        else:
-            value = raw
-        found_ones[name] = Stated(name, _number(value, field), unit)
+            raise RecordError(f"readings.{name}", "the same name twice", "each sensor once")
+        found_ones[name] = Stated(name, _number(value, name), unit)
     return list(found_ones.values())
 
 
-def _parts(raw: Mapping[str, Any], field: str) -> tuple[Any, str | None]:
+def _parts(raw: Mapping[str, Any], name: Any) -> tuple[Any, str | None]:
     """Return value and unit of a reading stated with its unit."""
     if "value" not in raw or not raw.keys() <= _READING:
-        raise RecordError(field, shorten(dict(raw)), _WANTED)
+        raise RecordError(f"readings.{name}", shorten(dict(raw)), _WANTED)
     unit = raw.get("unit")
     if unit is not None and not isinstance(unit, str):
-        raise RecordError(f"{field}.unit", shorten(unit), "a unit in quotes")
+        raise RecordError(f"readings.{name}.unit", shorten(unit), "a unit in quotes")
     return raw["value"], unit
 
 
-def _number(value: Any, field: str) -> float:
+def _number(value: Any, name: str) -> float:
     """Return a reading as a float, which must hold it exactly; -0.0 is 0.0."""
     if type(value) is float:
         return value + 0.0
+    field = f"readings.{name}"
     if isinstance(value, bool) or not isinstance(value, numbers.Real):
         raise RecordError(field, shorten(value), _WANTED)
     try:
