@@ -106,3 +106,5 @@ def upgrade() -> None:
         sa.ForeignKeyConstraint(["sensor_id"], ["sensor.id"], name=op.f("fk_sensor_hour_sensor_id")),
         sa.PrimaryKeyConstraint("sensor_id", "hour", name=op.f("pk_sensor_hour")),
     )
+    with op.batch_alter_table("card") as card:
+        card.drop_constraint(op.f("uq_card_machine_id_digest"), type_="unique")

@@ -84,7 +84,6 @@ card = Table(
     Column("digest", Text, nullable=False),
     Column("toml", Text, nullable=False),
     Column("at_us", BigInteger, nullable=False),
-    UniqueConstraint("machine_id", "digest"),
 )
 
 parameter = Table(

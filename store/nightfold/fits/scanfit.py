@@ -173,6 +173,9 @@ def choose_along(scan: Scan, along: str | None) -> str:
                 f"scan {scan.key}: it has {len(axes)} axes, {', '.join(axes)}; name the one to fit along"
             )
         return axes[0]
+    if along in scan.mixed:
+        several = ", ".join(scan.mixed[along])
+        raise FitError(f"scan {scan.key}: {along} depends on several axes ({several}); fit along one of them")
     if along not in axes and along not in scan.followers:
         raise NotFound(f"scan {scan.key}: no axis {along!r}; {near_miss(along, [*axes, *scan.followers])}")
     return along

@@ -131,7 +131,7 @@ def readings_of(
         if name in plan:
             raise RecordError(path, "an observable", f"another name: {name!r} is a parameter of this record")
         value, unit = reading_value(raw, path)
-        readings[name], known = machine.settle_reading(name, value, unit, path)
+        readings[name], known = machine.settle_reading(name, value, unit, path, plan)
         if known.id is None or known is not machine.observables.get(name):
             plan[name] = known
     return readings
@@ -176,7 +176,7 @@ def check_shot(
     settled = memory.settle(settings, machine)
     plan = settled.plan
     readings = readings_of(record.observables, machine, plan)
-    swept = _swept(record, settled, memory)
+    swept = _swept(record, settled, machine, memory)
     memory.remember(settled)
     name = sequence_name(record)
     values_digest = digest_of_sum(memory.total)
@@ -184,9 +184,9 @@ def check_shot(
     resting_sum = memory.total - sum(entry.hash for entry in moving.values())
     set_digest = digest_of_sum(resting_sum + hash_setting(machine.name, "machine"))
     derivation = derivation_of(record.derivation)
-    uid = record.uid or digest_text(machine.name, str(started_us), name, values_digest.hex()).hex()
+    uid = record.uid or digest_text(record.machine, str(started_us), name, values_digest.hex()).hex()
     content = digest_content((
-        machine.name, name, started_us, values_digest.hex(), structure and structure[0], record.scan, sorted(swept),
+        record.machine, name, started_us, values_digest.hex(), structure and structure[0], record.scan, sorted(swept),
         record.planned_shots, record.last, record.reference, record.failed, record.note,
         [frame.model_dump() for frame in record.frames], *readings_content(readings, derivation),
     ))  # fmt: skip
@@ -204,9 +204,20 @@ def readings_content(readings: Mapping[str, ReadValue], derivation: Derivation |
     return sorted(readings.items()), derivation.model_dump() if derivation else None
 
 
-def _swept(record: ShotRecord, settled: Settled, memory: StreamMemory) -> tuple[str, ...]:
+def _swept(
+    record: ShotRecord, settled: Settled, machine: MachineNames, memory: StreamMemory
+) -> tuple[str, ...]:
     swept = tuple(dict.fromkeys(record.swept))
     for name in swept:
-        if name not in settled.changed and (name not in memory.entries or name in settled.vanished):
+        if (made_of := machine.settings_behind(name)) is not None:
+            absent = [each for each in made_of if not _is_stated(each, settled, memory)]
+            if absent:
+                wanted = f"{', '.join(absent)} in this record: the card derives {name} of it"
+                raise RecordError("swept", shorten(name), wanted)
+        elif not _is_stated(name, settled, memory):
             raise RecordError("swept", shorten(name), "the name of a parameter of this record")
     return swept
+
+
+def _is_stated(name: str, settled: Settled, memory: StreamMemory) -> bool:
+    return name in settled.changed or (name in memory.entries and name not in settled.vanished)

@@ -21,7 +21,7 @@ _PART = 10_000
 
 @dataclass(frozen=True, slots=True)
 class Named:
-    """A parameter or observable by name: its ids (one a machine), kind and unit; of a derived one, what it is made of."""
+    """A parameter or observable by name: its ids (one a machine), kind and unit; if derived, what it is made of."""
 
     name: str
     ids: tuple[int, ...]
@@ -70,7 +70,9 @@ def _with_inputs(wanted: Sequence[Named], part: str) -> list[Named]:
     return list(found.values())
 
 
-def _derive(made_of: MadeOf, settings: dict[str, Any], readings: dict[str, tuple[Any, Any]]) -> tuple[Any, Any]:
+def _derive(
+    made_of: MadeOf, settings: dict[str, Any], readings: dict[str, tuple[Any, Any]]
+) -> tuple[Any, Any]:
     """Return values and standard uncertainties of a derived quantity."""
     from nightfold.formulas.evaluation import evaluate
 

@@ -260,21 +260,24 @@ def digests_before(connection: Connection, shot_id: int) -> set[bytes]:
 def find_corrected(connection: Connection, shots: Sequence[CheckedShot]) -> dict[str, Row[Any]]:
     """Return the stored shots that records without a uid are of, by the uid that would be made for the record.
 
-    Such a uid is made of the settings: where these were corrected, and the record says them as they are now, only the
-    time, the sequence and the settings tell that it is the same shot.
+    Such a uid is made of the machine's name and the settings: where these were corrected, and the record says them as
+    they are now, or the machine was merged into another, and the record says the other name, only the time, the
+    sequence and the settings tell that it is the same shot.
     """
     shot, table = tables.shot, tables.correction
-    if not shots or connection.execute(select(table.c.id).limit(1)).first() is None:
+    if not shots:
+        return {}
+    renamed = {item.machine.sequences.get(item.sequence) for item in shots if item.machine.merged} - {None}
+    if not renamed and connection.execute(select(table.c.id).limit(1)).first() is None:
         return {}
     wanted = {
         (item.machine.sequences.get(item.sequence), item.started_us, item.values_digest): item.uid
         for item in shots
     }
-    corrected = select(table.c.shot_id)
+    doubtful = shot.c.id.in_(select(table.c.shot_id)) | shot.c.sequence_id.in_(renamed)
     found: dict[str, Row[Any]] = {}
     for part in chunks(sorted({item.started_us for item in shots})):
-        at_these_times = shot.c.started_us.in_(part) & shot.c.id.in_(corrected)
-        for row in connection.execute(select(shot).where(at_these_times)):
+        for row in connection.execute(select(shot).where(shot.c.started_us.in_(part), doubtful)):
             for digest in (bytes(row.values_digest), *digests_before(connection, row.id)):
                 if uid := wanted.get((row.sequence_id, row.started_us, digest)):
                     found[uid] = row

@@ -1,7 +1,7 @@
 """The derived quantities of the cards in force: what they are made of, and the versions of their expressions.
 
-Nothing but the expression is stored. A derived quantity has a row among the parameters or observables, so that scans and
-fits can refer to it, and never a value; each expression that a card in force stated is a row of `derivation`.
+Nothing but the expression is stored. A derived quantity has a row among the parameters or observables, so that scans
+and fits can refer to it, and never a value; each expression that a card in force stated is a row of `derivation`.
 """
 
 from __future__ import annotations
@@ -10,20 +10,20 @@ import json
 from collections.abc import Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
-from functools import lru_cache
 from typing import TYPE_CHECKING, Any
 
-from sqlalchemy import Connection, Table, delete, exists, insert, select, update
+from sqlalchemy import ColumnElement, Connection, Table, delete, exists, insert, select, update
 
 from nightfold import tables
 from nightfold.card import MachineCard, settle_derived
-from nightfold.errors import CardError, ChoiceNeeded
+from nightfold.errors import ChoiceNeeded
+from nightfold.ledger.cards import newest_cards, stored_card, stored_derived
 from nightfold.ledger.columns import MadeOf, Named
-from nightfold.ledger.names import MachineNames, insert_row, newest_cards, stored_card
 from nightfold.timestamps import from_us
 
 if TYPE_CHECKING:
     from nightfold.formulas.definitions import Derived
+    from nightfold.ledger.names import MachineNames
 
 _BY_CARD = "card"
 _TABLES = {"parameter": tables.parameter, "observable": tables.observable}
@@ -41,15 +41,9 @@ class Derivation:
     since: datetime
 
 
-@lru_cache(maxsize=32)
-def _settled(toml: str) -> dict[str, Derived]:
-    card = stored_card(toml)
-    return settle_derived(card) if card.derived else {}
-
-
 def derived_quantities(connection: Connection) -> dict[int, dict[str, Derived]]:
     """Return the derived quantities of the card in force, by machine id and name."""
-    return {machine_id: _settled(toml) for machine_id, toml in newest_cards(connection).items()}
+    return {machine_id: stored_derived(toml) for machine_id, toml in newest_cards(connection).items()}
 
 
 class Makings:
@@ -79,6 +73,10 @@ class Makings:
         )
         return MadeOf(first, settings, readings)
 
+    def quantities(self, machine_id: int) -> Mapping[str, Derived]:
+        """Return the derived quantities of a machine."""
+        return self._derived.get(machine_id, {})
+
     def named(self, role: str, machine_id: int, names: Iterable[str]) -> list[Named]:
         """Return derived quantities of one machine by name."""
         found = []
@@ -99,71 +97,100 @@ def _named(
     )
 
 
-def keep_derived(connection: Connection, machine: MachineNames, card: MachineCard, at_us: int) -> None:
-    """Enter the derived quantities of a card, each with its version, and let go of those it has no longer.
+def swept_inputs(connection: Connection, sequence_id: int) -> dict[int, frozenset[int]]:
+    """Return the parameters behind the derived ones that shots of a sequence declare as swept, by shot."""
+    table, shot, parameter = tables.swept_derived, tables.shot, tables.parameter
+    query = (
+        select(table.c.shot_id, parameter.c.name, parameter.c.machine_id)
+        .join(shot, shot.c.id == table.c.shot_id)
+        .join(parameter, parameter.c.id == table.c.parameter_id)
+        .where(shot.c.sequence_id == sequence_id)
+    )
+    rows = list(connection.execute(query))
+    if not rows:
+        return {}
+    makings = Makings(connection)
+    behind = {
+        name: {number for item in made_of.settings for number in item.ids}
+        for name in {row.name for row in rows}
+        if (made_of := makings.of(name, [rows[0].machine_id])) is not None
+    }
+    found: dict[int, frozenset[int]] = {}
+    for row in rows:
+        found[row.shot_id] = found.get(row.shot_id, frozenset()) | behind.get(row.name, set())
+    return found
 
-    Raises
-    ------
-    CardError
-        If a name is that of something recorded, or a scan is swept along a quantity that is gone.
+
+def release_derived(connection: Connection, machine: MachineNames, card: MachineCard) -> list[str]:
+    """Remove the derived quantities that a card has no longer, and return what speaks against it.
+
+    Those that kept fits refer to keep their row.
     """
-    before = set(machine.card.derived) if machine.card is not None else set()
-    for name in sorted(before - set(card.derived)):
-        _let_go(connection, machine, name)
+    before = machine.card.derived if machine.card is not None else {}
+    wrong = []
+    for name in sorted(before.keys() - card.derived.keys()):
+        if (known := machine.parameters.get(name)) is not None:
+            axis, swept = tables.scan_axis.c.parameter_id, tables.swept_derived.c.parameter_id
+            if any(_occurs(connection, column, known.id) for column in (axis, swept)):
+                wanted = "an entry: the store has scans along it (its expression may change)"
+                wrong.append(f"derived.{name}: found nothing, wanted {wanted}")
+                continue
+            connection.execute(delete(tables.parameter).where(tables.parameter.c.id == known.id))
+            del machine.parameters[name]
+        elif name in machine.observables:
+            number = machine.observables[name].id
+            if not _occurs(connection, tables.fit.c.observable_id, number):
+                connection.execute(delete(tables.observable).where(tables.observable.c.id == number))
+                del machine.observables[name]
+    return wrong
+
+
+def derived_contradictions(connection: Connection, machine: MachineNames, card: MachineCard) -> list[str]:
+    """Return all in which the derived quantities of a card contradict what the store has of a machine."""
+    if not card.derived:
+        return []
     versions = _versions_of(connection, machine.name)
+    before = machine.card.derived if machine.card is not None else {}
+    found = []
+    for name, derived in settle_derived(card).items():
+        taken = next((role for role in _TABLES if name in _home(machine, role)), None)
+        if taken is None or (name in before and taken == derived.role):
+            continue
+        article = "a parameter" if taken == "parameter" else "an observable"
+        if name not in versions or _has_values(connection, taken, _home(machine, taken)[name].id):
+            found.append(
+                f"derived.{name}: found an entry, wanted another name: the store has {article} of that name"
+            )
+        elif taken != derived.role:
+            wanted = f"one that makes it {article} as before, or another name"
+            found.append(f"derived.{name}.expression: found the other kind of quantity, wanted {wanted}")
+    found += [
+        f"derived.{name}: found an entry, wanted another name: the store has a sensor of that name"
+        for name in sorted(card.derived.keys() & machine.sensors.keys())
+    ]
+    return found
+
+
+def keep_derived(connection: Connection, machine: MachineNames, card: MachineCard, at_us: int) -> None:
+    """Enter the derived quantities of a card, each with the version of its expression."""
+    versions = _versions_of(connection, machine.name) if card.derived else {}
     for name, derived in settle_derived(card).items() if card.derived else ():
-        _check_name(connection, machine, derived, was_derived=name in versions, in_force=name in before)
-        home = machine.parameters if derived.role == "parameter" else machine.observables
-        table = _TABLES[derived.role]
-        if name in home:
-            own = table.c.id == home[name].id
-            connection.execute(update(table).where(own).values(unit=derived.unit))
+        table, known = _TABLES[derived.role], _home(machine, derived.role).get(name)
+        if known is not None:
+            connection.execute(update(table).where(table.c.id == known.id).values(unit=derived.unit))
         else:
             row: dict[str, Any] = {"machine_id": machine.id, "name": name, "unit": derived.unit}
-            insert_row(connection, table, row | ({"kind": "number"} if derived.role == "parameter" else {}))
+            kind = {"kind": "number"} if derived.role == "parameter" else {}
+            connection.execute(insert(table).values(**row, **kind))
         _enter_version(connection, machine.name, card, derived, versions.get(name, []), at_us)
 
 
-def _let_go(connection: Connection, machine: MachineNames, name: str) -> None:
-    """Remove the row of a quantity that the card has no longer, unless kept fits refer to it."""
-    place = f"card of {machine.name}: derived.{name}"
-    if (known := machine.parameters.get(name)) is not None:
-        axis, swept = tables.scan_axis, tables.swept_derived
-        in_use = [
-            select(axis.c.scan_id).where(axis.c.parameter_id == known.id),
-            select(swept.c.shot_id).where(swept.c.parameter_id == known.id),
-        ]
-        if any(connection.execute(query.limit(1)).first() for query in in_use):
-            wanted = "an entry: the store has scans along it (its expression may change)"
-            raise CardError(f"{place}: found nothing, wanted {wanted}")
-        connection.execute(delete(tables.parameter).where(tables.parameter.c.id == known.id))
-        del machine.parameters[name]
-    elif (known := machine.observables.get(name)) is not None:
-        fit = tables.fit
-        if not connection.execute(select(fit.c.id).where(fit.c.observable_id == known.id).limit(1)).first():
-            connection.execute(delete(tables.observable).where(tables.observable.c.id == known.id))
-            del machine.observables[name]
+def _home(machine: MachineNames, role: str) -> dict[str, Any]:
+    return machine.parameters if role == "parameter" else machine.observables
 
 
-def _check_name(
-    connection: Connection, machine: MachineNames, derived: Derived, *, was_derived: bool, in_force: bool
-) -> None:
-    """Refuse to derive what has been recorded, or what was derived as the other kind of quantity."""
-    name, place = derived.name, f"card of {machine.name}: derived.{derived.name}"
-    roles = {"parameter": machine.parameters, "observable": machine.observables}
-    taken = next((role for role, home in roles.items() if name in home), None)
-    if name in machine.sensors:
-        raise CardError(f"{place}: found an entry, wanted another name: the store has a sensor of that name")
-    if taken is None or (in_force and taken == derived.role):
-        return
-    article = "a parameter" if taken == "parameter" else "an observable"
-    if not was_derived or _has_values(connection, taken, roles[taken][name].id):
-        raise CardError(
-            f"{place}: found an entry, wanted another name: the store has {article} of that name, as recorded"
-        )
-    if taken != derived.role:
-        wanted = f"one that makes it {article} as before, or another name"
-        raise CardError(f"{place}.expression: found one that makes it the other kind of quantity, wanted {wanted}")
+def _occurs(connection: Connection, column: ColumnElement[Any], number: int | None) -> bool:
+    return bool(connection.execute(select(exists().where(column == number))).scalar())
 
 
 def _has_values(connection: Connection, role: str, number: int | None) -> bool:
@@ -171,9 +198,7 @@ def _has_values(connection: Connection, role: str, number: int | None) -> bool:
         "parameter": (tables.set_value.c.parameter_id, tables.shot_value.c.parameter_id),
         "observable": (tables.reading.c.observable_id, tables.past_reading.c.observable_id),
     }
-    return any(
-        connection.execute(select(exists().where(column == number))).scalar() for column in homes[role]
-    )
+    return any(_occurs(connection, column, number) for column in homes[role])
 
 
 def _enter_version(
@@ -203,7 +228,9 @@ def _versions_of(connection: Connection, machine: str) -> dict[str, list[Derivat
     """Return every version of each derived quantity of a machine, the oldest first."""
     table = tables.derivation
     found: dict[str, list[Derivation]] = {}
-    query = select(table).where(table.c.settings.startswith(f'{{"by": "{_BY_CARD}", "machine": ', autoescape=True))
+    query = select(table).where(
+        table.c.settings.startswith(f'{{"by": "{_BY_CARD}", "machine": ', autoescape=True)
+    )
     for row in connection.execute(query.order_by(table.c.id)):
         said = json.loads(row.settings)
         if said["machine"] == machine:
@@ -229,8 +256,8 @@ def list_derivations(connection: Connection, machine: str) -> list[tuple[Derivat
     numbers = {row.name: row.id for row in connection.execute(select(tables.machine))}
     toml = newest_cards(connection).get(numbers[machine])
     card = stored_card(toml) if toml is not None else None
-    settled: Mapping[str, Derived] = _settled(toml) if toml is not None else {}
-    found = []
+    settled: Mapping[str, Derived] = stored_derived(toml) if toml is not None else {}
+    found: list[tuple[Derivation, str, bool]] = []
     for name, versions in sorted(_versions_of(connection, machine).items()):
         for item in versions:
             own = settled.get(name)

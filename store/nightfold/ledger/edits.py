@@ -16,6 +16,7 @@ from typing import Any
 from sqlalchemy import Connection, and_, select
 
 from nightfold import tables
+from nightfold.ledger.deriving import swept_inputs
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import find_machine, moment_us
 from nightfold.settings import plain_value, token_of
@@ -154,6 +155,8 @@ def _walk(
     rows = connection.execute(query.order_by(shot.c.started_us, shot.c.id)).all()
     sets = sorted({row.set_id for row in rows})
     axes = _axes_by_set(connection, sequence_id)
+    for shot_id, behind in swept_inputs(connection, sequence_id).items():  # a derived parameter was swept
+        axes[shot_id] = axes.get(shot_id, frozenset()) | behind
     for part in chunks(sets):
         rest = tables.set_value
         of_sets = select(rest).where(rest.c.set_id.in_(part))
@@ -164,6 +167,7 @@ def _walk(
     for place, row in enumerate(rows):
         values = moved.get(row.id, {})
         skip = axes.get(row.id, frozenset())
+        values = {key: value for key, value in values.items() if key not in skip}
         if (
             row.set_id,
             skip,

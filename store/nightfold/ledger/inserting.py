@@ -44,6 +44,7 @@ def insert_shots(connection: Connection, shots: Sequence[CheckedShot], sets: dic
     """Write shots that have their ids, with everything that hangs on them."""
     insert_many(connection, tables.shot, [_shot_row(shot, sets) for shot in shots])
     insert_many(connection, tables.shot_value, list(chain.from_iterable(map(_moving_rows, shots))))
+    insert_many(connection, tables.swept_derived, list(chain.from_iterable(map(_swept_rows, shots))))
     readings = [_reading_rows(shot, find_derivation(connection, shot.derivation)) for shot in shots]
     insert_many(connection, tables.reading, list(chain.from_iterable(readings)))
     frames = [(shot.id, item.camera, item.role, item.path, None) for shot in shots for item in shot.frames]
@@ -78,6 +79,13 @@ def _moving_rows(shot: CheckedShot) -> list[tuple[Any, ...]]:
         (shot.id, ids[name].id, entry.value.num, entry.value.exact, name in swept)
         for name, entry in shot.moving.items()
     ]
+
+
+def _swept_rows(shot: CheckedShot) -> list[tuple[Any, ...]]:
+    """Return what the record declared swept and the card derives: there is no moving row to say so."""
+    machine = shot.machine
+    derived = machine.card.derived if machine.card is not None else {}
+    return [(shot.id, machine.parameters[name].id) for name in shot.wish.swept if name in derived]
 
 
 def _reading_rows(shot: CheckedShot, derivation_id: int | None) -> list[tuple[Any, ...]]:

@@ -8,14 +8,14 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from functools import lru_cache
 from typing import TYPE_CHECKING, Any
 
-from sqlalchemy import Connection, Table, func, insert, select, update
+from sqlalchemy import Connection, Table, insert, select, update
 
 from nightfold import tables
-from nightfold.card import MachineCard, parse_card, without_cloud
-from nightfold.errors import CardError, RecordError, UnitError
+from nightfold.card import MachineCard, without_cloud
+from nightfold.errors import RecordError, UnitError
+from nightfold.ledger.cards import newest_cards, stored_card, stored_derived
 from nightfold.records import shorten
 from nightfold.settings import ReadValue, Value
 from nightfold.units import conversion, convertible, parse_unit
@@ -48,6 +48,8 @@ class MachineNames:
     sequences: dict[str, int] = field(default_factory=dict)
     versions: dict[tuple[int, bytes], int] = field(default_factory=dict)
     cloud_units: dict[str, str] = field(default_factory=dict)
+    merged: list[str] = field(default_factory=list)
+    """Other names of it: machines that were merged into it."""
     generation: int = 0
 
     @property
@@ -57,14 +59,23 @@ class MachineNames:
 
         return find_zone(self.zone) if self.card is not None and self.card.naive_times else None
 
+    def settings_behind(self, name: str) -> tuple[str, ...] | None:
+        """Return the parameters of which the card derives another one; None for what it does not derive."""
+        if self.card is None or name not in self.card.derived:
+            return None
+        derived = stored_derived(self.card.toml)[name]
+        return derived.parameters if derived.role == "parameter" else None
+
     def settle(self, name: str, value: Value, unit: str | None, field: str) -> tuple[Value, Known]:
         """Return the setting in the unit stored, and what would then be known of its parameter.
 
         Raises
         ------
         RecordError
-            If kind or unit contradict what is known, or the name is an observable's.
+            If kind or unit contradict what is known, or the name is an observable's or that of a derived quantity.
         """
+        if self.card is not None and name in self.card.derived:
+            raise self._derived_already(name, field)
         known = self.parameters.get(name)
         if known is None:
             if name in self.observables or (self.card is not None and name in self.card.observables):
@@ -89,8 +100,10 @@ class MachineNames:
         Raises
         ------
         RecordError
-            If the unit contradicts what is known, or the name is a parameter's.
+            If the unit contradicts what is known, or the name is a parameter's or that of a derived quantity.
         """
+        if self.card is not None and name in self.card.derived:
+            raise self._derived_already(name, field)
         known = self.observables.get(name)
         if known is None:
             if name in self.parameters or (self.card is not None and name in self.card.parameters):
@@ -110,6 +123,13 @@ class MachineNames:
         except UnitError as problem:
             raise RecordError(field, shorten(unit), str(problem)) from None
         return ReadValue(value, stderr, read.state), known
+
+    def _derived_already(self, name: str, field: str) -> RecordError:
+        """Return the error for a value stated of what the card derives."""
+        assert self.card is not None
+        expression = shorten(self.card.derived[name].expression)
+        wanted = f"none: the card of {self.name} derives {name} by {expression}; leave it out or give it another name"
+        return RecordError(field, "a value", wanted)
 
     def settle_sensor(self, name: str, unit: str | None, field: str) -> Known:
         """Return what is known of a sensor once a reading in this unit (None for a bare number) is taken.
@@ -147,8 +167,10 @@ class MachineNames:
     def _unit_of_clouds(self, name: str, plan: Mapping[str, Known]) -> str | None:
         """Return the unit that other clouds of an observable have, or it has as a whole."""
         base = without_cloud(name)
-        own = (known.unit for other, known in plan.items() if without_cloud(other) == base)
-        return next((unit for unit in own if unit is not None), self.cloud_units.get(base))
+        for other, known in plan.items():
+            if known.kind == "reading" and known.unit is not None and without_cloud(other) == base:
+                return known.unit
+        return self.cloud_units.get(base)
 
     def _adopt(self, known: Known, unit: str | None, field: str) -> Known:
         """Take the first unit stated; refuse one that cannot be converted into it."""
@@ -187,11 +209,13 @@ class Names:
 
     def __init__(self) -> None:
         self.machines: dict[str, MachineNames] = {}
+        self._aliases: dict[str, str] = {}
         self._loaded = False
 
     def forget(self) -> None:
         """Drop everything remembered."""
         self.machines.clear()
+        self._aliases.clear()
         self._loaded = False
 
     def load(self, connection: Connection) -> None:
@@ -199,11 +223,12 @@ class Names:
         if self._loaded:
             return
         self.machines = read_names(connection)
+        self._aliases = read_aliases(connection)
         self._loaded = True
 
     def find(self, name: str) -> MachineNames:
-        """Return a machine's names; those of an unknown machine have no id until they are entered."""
-        return self.machines.get(name) or MachineNames(0, name)
+        """Return a machine's names, by its own name or another one of it; an unknown one has no id until entered."""
+        return self.machines.get(self._aliases.get(name, name)) or MachineNames(0, name)
 
     def enter(self, connection: Connection, machine: MachineNames) -> None:
         """Enter a machine that is not in the store yet."""
@@ -259,6 +284,13 @@ class Names:
                 machine.observables[name] = Known(known.kind, unit, unit, known.id)
 
 
+def read_aliases(connection: Connection) -> dict[str, str]:
+    """Return the names that mean another machine since they were merged into it, and which."""
+    alias, machine = tables.machine_alias, tables.machine
+    query = select(alias.c.name, machine.c.name.label("means")).join(machine)
+    return {row.name: row.means for row in connection.execute(query)}
+
+
 def read_names(connection: Connection) -> dict[str, MachineNames]:
     """Return everything known by name, machine by machine."""
     machines = {
@@ -266,6 +298,8 @@ def read_names(connection: Connection) -> dict[str, MachineNames]:
     }
     for machine_id, toml in newest_cards(connection).items():
         machines[machine_id].card = stored_card(toml)
+    for alias in connection.execute(select(tables.machine_alias)):
+        machines[alias.machine_id].merged.append(alias.name)
     for row in connection.execute(select(tables.parameter)):
         entry = _card_entry(machines[row.machine_id], "parameters", row.name)
         known = Known(row.kind, row.unit, entry if entry is not None else row.unit, row.id)
@@ -297,84 +331,6 @@ def _card_entry(machine: MachineNames, kind: str, name: str) -> str | None:
     card = machine.card
     entry = card.observable(name) if kind == "observables" else getattr(card, kind).get(name)
     return entry.unit if entry else None
-
-
-@lru_cache(maxsize=32)
-def stored_card(toml: str) -> MachineCard:
-    """Return a card from its text in the store; the same text is read once."""
-    return parse_card(toml, source="the card in the store", checked=True)
-
-
-def newest_cards(connection: Connection) -> dict[int, str]:
-    """Return the text of the card in force of each machine, by machine id."""
-    newest = select(tables.card.c.machine_id, func.max(tables.card.c.at_us).label("at_us"))
-    newest = newest.group_by(tables.card.c.machine_id)
-    chosen = newest.subquery()
-    rows = select(tables.card.c.machine_id, tables.card.c.toml).join(
-        chosen,
-        (chosen.c.machine_id == tables.card.c.machine_id) & (chosen.c.at_us == tables.card.c.at_us),
-    )
-    return {row.machine_id: row.toml for row in connection.execute(rows)}
-
-
-def cards_in_force(connection: Connection) -> dict[str, MachineCard]:
-    """Return the card in force of each machine that has one, by the machine's name."""
-    machines = {row.id: row.name for row in connection.execute(select(tables.machine))}
-    return {machines[machine_id]: stored_card(toml) for machine_id, toml in newest_cards(connection).items()}
-
-
-def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: int) -> None:
-    """Make a card the one in force; parameters, observables and sensors without a unit take the card's.
-
-    Raises
-    ------
-    CardError
-        If a unit of the card does not convert into the one stored, or a kind contradicts the one stored.
-    """
-    machine = names.find(card.machine)
-    names.enter(connection, machine)
-    for kind, stored, other in (
-        ("parameters", machine.observables, "an observable"),
-        ("observables", machine.parameters, "a parameter"),
-        ("sensors", machine.parameters, "a parameter"),
-        ("sensors", machine.observables, "an observable"),
-    ):
-        for name in getattr(card, kind).keys() & stored.keys():
-            raise CardError(
-                f"card of {card.machine}: {kind}.{name}: found an entry, wanted none: "
-                f"the store has {other} of that name"
-            )
-    kinds = {"parameters": tables.parameter, "observables": tables.observable, "sensors": tables.sensor}
-    for kind, table in kinds.items():
-        for name, known in getattr(machine, kind).items():
-            entry = card.observable(name) if kind == "observables" else getattr(card, kind).get(name)
-            if entry is None:
-                continue
-            if entry.kind is not None and known.kind not in ("reading", entry.kind):
-                raise CardError(
-                    f"card of {card.machine}: {kind}.{name}.kind: found {entry.kind}, the store has {known.kind}"
-                )
-            if entry.unit is None:
-                continue
-            if known.unit is None:
-                connection.execute(update(table).where(table.c.id == known.id).values(unit=entry.unit))
-            elif entry.unit != known.unit:
-                raise CardError(
-                    f"card of {card.machine}: {kind}.{name}.unit: found {entry.unit!r}, wanted {known.unit!r}, "
-                    "in which the store holds it: the meaning of bare numbers taken before must not change "
-                    "(a record may state any unit that converts)"
-                )
-    connection.execute(update(tables.machine).where(tables.machine.c.id == machine.id).values(zone=card.zone))
-    newest = select(func.max(tables.card.c.at_us)).where(tables.card.c.machine_id == machine.id)
-    at_us = max(at_us, (connection.execute(newest).scalar() or 0) + 1)  # also after the clock was put back
-    digest = card.digest
-    same = (tables.card.c.machine_id == machine.id) & (tables.card.c.digest == digest)
-    if connection.execute(select(tables.card.c.id).where(same)).first():
-        connection.execute(update(tables.card).where(same).values(at_us=at_us))
-    else:
-        row = {"machine_id": machine.id, "digest": digest, "toml": card.toml, "at_us": at_us}
-        connection.execute(insert(tables.card).values(**row))
-    names.forget()
 
 
 def insert_row(connection: Connection, table: Table, row: dict[str, Any]) -> int:

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
-from nightfold.ledger.names import newest_cards, stored_card
+from nightfold.ledger.cards import newest_cards, stored_card
 from nightfold.ledger.selecting import set_aside_now
 from nightfold.timestamps import local_times, nights_of
 

@@ -131,7 +131,7 @@ class Writer:
                 batch.checked.append((item, _Late(record)))
                 return
             machine = self._names.find(record.machine)
-            key = (record.machine, sequence_name(record))
+            key = (machine.name, sequence_name(record))
             memory = self._streams.get(key)
             if memory is None:
                 sequence_id = machine.sequences.get(key[1])

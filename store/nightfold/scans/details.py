@@ -10,10 +10,12 @@ from sqlalchemy import Connection, Table, select
 
 from nightfold import tables
 from nightfold.card import MachineCard
+from nightfold.ledger.cards import newest_cards, stored_card
 from nightfold.ledger.columns import Named, reading_columns, setting_columns
-from nightfold.ledger.names import newest_cards, stored_card
+from nightfold.ledger.deriving import Makings
 from nightfold.ledger.selecting import Selection, column_name, named_by_id, select_shots, set_aside_now
 from nightfold.scans.axes import Axis, describe_axis
+from nightfold.scans.derived import derived_readings, derived_settings
 from nightfold.timestamps import utc_times
 
 if TYPE_CHECKING:
@@ -28,9 +30,11 @@ class ScanDetails:
     ----------
     axes : tuple of Axis
     settings : tuple of Named
-        The axes, then the parameters that follow one.
+        The axes, then the parameters that follow one or are made of several.
     followers : dict
         Follower -> the axis it moves along with.
+    mixed : dict
+        Derived parameter -> the several axes it depends on.
     observables : tuple of Named
         The machine card's main one first, then by name.
     main : str or None
@@ -42,6 +46,7 @@ class ScanDetails:
     axes: tuple[Axis, ...]
     settings: tuple[Named, ...]
     followers: dict[str, str]
+    mixed: dict[str, tuple[str, ...]]
     observables: tuple[Named, ...]
     main: str | None
     descriptions: dict[str, str]
@@ -61,16 +66,21 @@ def read_details(connection: Connection, scan_id: int, machine_id: int) -> ScanD
     leading = [item for item, row in zip(settings, own, strict=True) if row.follows_id is None]
     rows, where = select_shots(connection, Selection(scan_id=scan_id, set_aside=True))
     columns = setting_columns(connection, rows, leading, where)
+    followers = {names[row.parameter_id]: names[row.follows_id] for row in own if row.follows_id is not None}
     card = card_of(connection, machine_id)
-    observables, main = _observables(connection, scan_id, card)
-    found = [*settings, *observables]
-    entries = {item.name: _entry(card, item.name) for item in found} if card is not None else {}
+    makings = Makings(connection)
+    derived = derived_settings(makings, machine_id, [item.name for item in leading], followers)
+    read = named_by_id(connection, tables.observable, _observables_read(connection, scan_id))
+    read += derived_readings(makings, machine_id, [item.name for item in read])
+    main = _main_of(sorted(item.name for item in read), card.main_observable if card else None)
+    observables = tuple(sorted(read, key=lambda item: (item.name != main, item.name)))
+    found = [*settings, *derived.named, *observables]
+    entries = {item.name: card.description(item.name) for item in found} if card is not None else {}
     return ScanDetails(
         axes=tuple(describe_axis(item.name, item.unit, columns[item.name]) for item in leading),
-        settings=tuple(settings),
-        followers={
-            names[row.parameter_id]: names[row.follows_id] for row in own if row.follows_id is not None
-        },
+        settings=(*settings, *derived.named),
+        followers=followers | derived.followers,
+        mixed=derived.mixed,
         observables=observables,
         main=main,
         descriptions={name: text for name, text in entries.items() if text},
@@ -83,24 +93,15 @@ def card_of(connection: Connection, machine_id: int) -> MachineCard | None:
     return stored_card(text) if text is not None else None
 
 
-def _entry(card: MachineCard, name: str) -> str:
-    entry = card.parameters.get(name) or card.observable(name)
-    return entry.description if entry else ""
-
-
-def _observables(
-    connection: Connection, scan_id: int, card: MachineCard | None
-) -> tuple[tuple[Named, ...], str | None]:
+def _observables_read(connection: Connection, scan_id: int) -> list[int]:
     shot, reading = tables.shot, tables.reading
-    ids = connection.execute(
+    query = (
         select(reading.c.observable_id)
         .join(shot, shot.c.id == reading.c.shot_id)
         .where(shot.c.scan_id == scan_id)
         .distinct()
-    ).scalars()
-    found = sorted(named_by_id(connection, tables.observable, list(ids)), key=lambda item: item.name)
-    main = _main_of([item.name for item in found], card.main_observable if card else None)
-    return tuple(sorted(found, key=lambda item: (item.name != main, item.name))), main
+    )
+    return list(connection.execute(query).scalars())
 
 
 def _main_of(names: Sequence[str], wanted: str | None) -> str | None:

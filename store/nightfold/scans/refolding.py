@@ -146,11 +146,12 @@ def _unlabelled(
 def _stream(connection: Connection, rows: Sequence[Row[Any]], names: Mapping[int, str]) -> list[StreamShot]:
     resting = _resting(connection, {row.set_id for row in rows}, names)
     moving, swept = _moving(connection, [row.id for row in rows], names)
-    for shot_id, tokens in derived_sweeps(connection, rows).items():
+    derived = derived_sweeps(connection, rows)
+    for shot_id, tokens in derived.items():
         moving.setdefault(shot_id, {}).update(tokens)
         swept.setdefault(shot_id, set()).update(tokens)
     shots: list[StreamShot] = []
-    last_set, last_moved = None, dict[str, str]()
+    last_set, last_moved, last_derived = None, dict[str, str](), set[str]()
     for row in rows:
         moved = moving.get(row.id, {})
         values = ChainMap(moved, resting[row.set_id])
@@ -160,9 +161,10 @@ def _stream(connection: Connection, rows: Sequence[Row[Any]], names: Mapping[int
             looked_at = {*moved, *last_moved}
             if row.set_id != last_set:
                 looked_at |= {*resting[row.set_id], *resting[last_set or 0]}
+            looked_at -= derived.get(row.id, {}).keys() ^ last_derived
             changed = frozenset(name for name in looked_at if previous.get(name) != values.get(name))
         shots.append(StreamShot(row.id, row.started_us, frozenset(swept.get(row.id, ())), values, changed))
-        last_set, last_moved = row.set_id, moved
+        last_set, last_moved, last_derived = row.set_id, moved, set(derived.get(row.id, ()))
     return shots
 
 
