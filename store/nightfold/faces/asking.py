@@ -10,7 +10,7 @@ from sqlalchemy import select
 
 from nightfold import tables
 from nightfold.faces.face import Face
-from nightfold.ledger import cards, edits, nightly, notes, selecting
+from nightfold.ledger import cards, deriving, edits, nightly, notes, selecting
 from nightfold.ledger.shot import ShotView, view_shot
 from nightfold.timestamps import to_us, utc_times
 
@@ -212,11 +212,11 @@ class Asking(Face):
         return notes.note_table(found)
 
     def parameters(self, machine: str | None = None) -> pd.DataFrame:
-        """Return the parameters known: machine, name, kind, unit."""
+        """Return the parameters known: machine, name, kind, unit, and of derived ones the expression (else empty)."""
         return self._named(tables.parameter, machine)
 
     def observables(self, machine: str | None = None) -> pd.DataFrame:
-        """Return the observables known: machine, name, unit."""
+        """Return the observables known: machine, name, unit, and of derived ones the expression (else empty)."""
         return self._named(tables.observable, machine)
 
     def _named(self, table: Any, machine: str | None) -> pd.DataFrame:
@@ -229,8 +229,49 @@ class Asking(Face):
             if machine is not None:
                 query = query.where(tables.machine.c.id == selecting.find_machine(connection, machine).id)
             rows = connection.execute(query.order_by(tables.machine.c.name, table.c.name)).mappings().all()
-        columns = ["machine", "name", *(["kind"] if "kind" in table.c else []), "unit"]
-        return pd.DataFrame([dict(row) for row in rows], columns=columns)
+            known = {row["machine"] for row in rows}
+            derived = {
+                (item.machine, item.name): item.expression
+                for name in known
+                for item in deriving.list_versions(connection, name)
+                if item.in_force
+            }
+        columns = ["machine", "name", *(["kind"] if "kind" in table.c else []), "unit", "expression"]
+        entries = [{**row, "expression": derived.get((row["machine"], row["name"]), "")} for row in rows]
+        return pd.DataFrame(entries, columns=columns)
+
+    def derived(self, machine: str | None = None, *, versions: bool = False) -> pd.DataFrame:
+        """Return the quantities that the cards in force derive.
+
+        Parameters
+        ----------
+        machine : str, optional
+            Of this machine only.
+        versions : bool
+            Earlier expressions too, also of quantities that the card has no longer.
+
+        Returns
+        -------
+        DataFrame
+            ``machine``, ``name``, ``of`` ("parameter" or "observable"), ``expression``, ``unit``, ``version``,
+            ``since`` (UTC, when a card first stated it), ``in_force``.
+
+        Raises
+        ------
+        NotFound
+            If the machine is not in the store.
+        """
+        import pandas as pd
+
+        with self._session.reading() as connection:
+            names = connection.execute(
+                select(tables.machine.c.name).order_by(tables.machine.c.name)
+            ).scalars()
+            own = list(names) if machine is None else [selecting.find_machine(connection, machine).name]
+            found = [item for name in own for item in deriving.list_versions(connection, name)]
+        columns = ["machine", "name", "of", "expression", "unit", "version", "since", "in_force"]
+        rows = [[getattr(item, column) for column in columns] for item in found if versions or item.in_force]
+        return pd.DataFrame(rows, columns=columns)
 
     def sequences(self, machine: str | None = None) -> pd.DataFrame:
         """Return a row a sequence: machine, sequence, versions, shots (counts), first, last (UTC).

@@ -19,6 +19,7 @@ from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult, FitWarning
 from nightfold.fits.scanfit import FitRequest, SliceFit, cut_scan, digest_data, fit_slices
 from nightfold.fits.source import PLAIN, Source
+from nightfold.ledger.deriving import versions_in_use
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import scan_key
@@ -79,7 +80,8 @@ class KeptFit:
     shots, set_aside : int
         Shots used, and left out.
     settings : dict
-        What it takes to fit again; for a model of one's own a fingerprint of its ``function`` too.
+        What it takes to fit again; for a model of one's own a fingerprint of its ``function`` too, and the version of
+        each of the card's ``derived`` quantities that went in.
     stale : bool
         Whether the scan's data have changed since.
     version : str
@@ -136,7 +138,10 @@ def keep_fit(connection: Connection, scan: Scan, request: FitRequest, part: Slic
         "model": result.model,
         "background": result.background,
     }
-    own = {"function": request.fingerprint} if request.fingerprint else {}
+    own: dict[str, Any] = {"function": request.fingerprint} if request.fingerprint else {}
+    names = [request.observable, part.along, *part.where]
+    if versions := versions_in_use(connection, scan.machine, names):
+        own["derived"] = versions
     rest = {
         "settings": json.dumps({**result.settings, **request.source.settings, **own}, default=float),
         "data_digest": part.digest(request.observable),

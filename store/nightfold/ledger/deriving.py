@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Collection, Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import TYPE_CHECKING, Any
 
@@ -30,8 +30,19 @@ _TABLES = {"parameter": tables.parameter, "observable": tables.observable}
 
 
 @dataclass(frozen=True, slots=True)
-class Derivation:
-    """One version of a derived quantity; `since` is when a card first stated it."""
+class Version:
+    """One expression of a derived quantity.
+
+    Attributes
+    ----------
+    machine, name, version, expression, unit : str
+    since : datetime
+        When a card first stated it.
+    of : {'parameter', 'observable'} or None
+        None where the card has it no longer.
+    in_force : bool
+        Whether it is the one of the card in force.
+    """
 
     machine: str
     name: str
@@ -39,6 +50,8 @@ class Derivation:
     expression: str
     unit: str
     since: datetime
+    of: str | None = None
+    in_force: bool = False
 
 
 def derived_quantities(connection: Connection) -> dict[int, dict[str, Derived]]:
@@ -77,6 +90,11 @@ class Makings:
         """Return the derived quantities of a machine."""
         return self._derived.get(machine_id, {})
 
+    def expressions(self, machine_id: int) -> dict[str, str]:
+        """Return the expressions of a machine's derived quantities."""
+        card = stored_card(newest_cards(self._connection)[machine_id])
+        return {name: entry.expression for name, entry in card.derived.items()}
+
     def named(self, role: str, machine_id: int, names: Iterable[str]) -> list[Named]:
         """Return derived quantities of one machine by name."""
         found = []
@@ -95,6 +113,13 @@ def _named(
     return tuple(
         Named(name, tuple(own.id for own in rows if own.name == name), "number", "") for name in names
     )
+
+
+def declared_names(connection: Connection, shot_id: int) -> set[str]:
+    """Return the derived parameters that a shot declares as swept."""
+    table, parameter = tables.swept_derived, tables.parameter
+    query = select(parameter.c.name).join(table, table.c.parameter_id == parameter.c.id)
+    return set(connection.execute(query.where(table.c.shot_id == shot_id)).scalars())
 
 
 def swept_inputs(connection: Connection, sequence_id: int) -> dict[int, frozenset[int]]:
@@ -206,7 +231,7 @@ def _enter_version(
     machine: str,
     card: MachineCard,
     derived: Derived,
-    earlier: Sequence[Derivation],
+    earlier: Sequence[Version],
     at_us: int,
 ) -> None:
     expression = card.derived[derived.name].expression
@@ -224,10 +249,10 @@ def _enter_version(
     connection.execute(insert(tables.derivation).values(**row))
 
 
-def _versions_of(connection: Connection, machine: str) -> dict[str, list[Derivation]]:
+def _versions_of(connection: Connection, machine: str) -> dict[str, list[Version]]:
     """Return every version of each derived quantity of a machine, the oldest first."""
     table = tables.derivation
-    found: dict[str, list[Derivation]] = {}
+    found: dict[str, list[Version]] = {}
     query = select(table).where(
         table.c.settings.startswith(f'{{"by": "{_BY_CARD}", "machine": ', autoescape=True)
     )
@@ -235,7 +260,7 @@ def _versions_of(connection: Connection, machine: str) -> dict[str, list[Derivat
         said = json.loads(row.settings)
         if said["machine"] == machine:
             since = datetime.fromisoformat(said["since"])
-            item = Derivation(machine, row.name, row.version, said["expression"], said["unit"], since)
+            item = Version(machine, row.name, row.version, said["expression"], said["unit"], since)
             found.setdefault(row.name, []).append(item)
     return found
 
@@ -247,21 +272,22 @@ def versions_in_use(connection: Connection, machine: str, names: Collection[str]
     wanted = {other for name in names if name in settled for other in settled[name].formulas}
     if not wanted:
         return {}
-    known = list_derivations(connection, machine)
-    return {item.name: item.version for item, _, in_force in known if in_force and item.name in wanted}
+    known = list_versions(connection, machine)
+    return {item.name: item.version for item in known if item.in_force and item.name in wanted}
 
 
-def list_derivations(connection: Connection, machine: str) -> list[tuple[Derivation, str, bool]]:
-    """Return each version of every derived quantity of a machine, its role, and whether it is in force."""
-    numbers = {row.name: row.id for row in connection.execute(select(tables.machine))}
-    toml = newest_cards(connection).get(numbers[machine])
-    card = stored_card(toml) if toml is not None else None
-    settled: Mapping[str, Derived] = stored_derived(toml) if toml is not None else {}
-    found: list[tuple[Derivation, str, bool]] = []
+def list_versions(connection: Connection, machine: str) -> list[Version]:
+    """Return every expression that the derived quantities of a machine had, by name, the oldest first."""
+    machine_id = connection.execute(
+        select(tables.machine.c.id).where(tables.machine.c.name == machine)
+    ).scalar()
+    toml = newest_cards(connection).get(machine_id) if machine_id is not None else None
+    stated = stored_card(toml).derived if toml is not None else {}
+    settled = stored_derived(toml) if toml is not None else {}
+    found: list[Version] = []
     for name, versions in sorted(_versions_of(connection, machine).items()):
-        for item in versions:
-            own = settled.get(name)
-            stated = card.derived[name].expression if card is not None and own is not None else None
-            in_force = own is not None and (item.expression, item.unit) == (stated, own.unit)
-            found.append((item, own.role if own is not None else "", in_force))
+        own = settled.get(name)
+        now = (stated[name].expression, own.unit) if own is not None else None
+        of = own.role if own is not None else None
+        found += [replace(item, of=of, in_force=(item.expression, item.unit) == now) for item in versions]
     return found

@@ -16,6 +16,7 @@ from nightfold.ledger.deriving import Makings
 from nightfold.ledger.selecting import Selection, column_name, named_by_id, select_shots, set_aside_now
 from nightfold.scans.axes import Axis, describe_axis
 from nightfold.scans.derived import derived_readings, derived_settings
+from nightfold.scans.order import orders_of
 from nightfold.timestamps import utc_times
 
 if TYPE_CHECKING:
@@ -29,6 +30,8 @@ class ScanDetails:
     Attributes
     ----------
     axes : tuple of Axis
+    order : dict
+        Axis -> 'rising', 'falling' or 'mixed', see `order_of`.
     settings : tuple of Named
         The axes, then the parameters that follow one or are made of several.
     followers : dict
@@ -44,6 +47,7 @@ class ScanDetails:
     """
 
     axes: tuple[Axis, ...]
+    order: dict[str, str]
     settings: tuple[Named, ...]
     followers: dict[str, str]
     mixed: dict[str, tuple[str, ...]]
@@ -78,6 +82,7 @@ def read_details(connection: Connection, scan_id: int, machine_id: int) -> ScanD
     entries = {item.name: card.description(item.name) for item in found} if card is not None else {}
     return ScanDetails(
         axes=tuple(describe_axis(item.name, item.unit, columns[item.name]) for item in leading),
+        order=orders_of({item.name: columns[item.name] for item in leading}),
         settings=(*settings, *derived.named),
         followers=followers | derived.followers,
         mixed=derived.mixed,

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 from nightfold.errors import NotFound
 from nightfold.ledger.selecting import Selection, column_name, listed, near_miss, scan_key
+from nightfold.scans.arrangements import Arrangement, arrangements_of
 from nightfold.scans.axes import Axis
 from nightfold.scans.details import ScanDetails, card_of, read_details, read_shots
 from nightfold.scans.references import (
@@ -75,6 +76,21 @@ class Scan:
     def axes(self) -> tuple[Axis, ...]:
         """What was swept on purpose, in order."""
         return self._details.axes
+
+    @property
+    def order(self) -> dict[str, str]:
+        """Whether the points of each axis were taken in order: 'rising', 'falling' or 'mixed'.
+
+        A drift in time can look like a function of an axis that is not mixed. Axes of text or truth, and of fewer than 3
+        points, are left out.
+        """
+        return self._details.order
+
+    @cached_property
+    def arrangements(self) -> tuple[Arrangement, ...]:
+        """The joins and splits that made the scan what it is, oldest first."""
+        with self._session.reading() as connection:
+            return arrangements_of(connection, self.id)
 
     @property
     def followers(self) -> dict[str, str]:
@@ -216,6 +232,7 @@ class Scan:
             ``started``, ``shot_id``, ``uid`` and ``set_aside``; holes are NaN.
         """
         from nightfold.scans.grid import build_dataset
+        from nightfold.scans.layout import free_name
 
         table = self.table(
             set_aside,
@@ -233,7 +250,9 @@ class Scan:
             table,
             [column_name(axis.parameter) for axis in self.axes],
             co_moving={column_name(name): column_name(axis) for name, axis in self.followers.items()},
-            mixed={column_name(name): [column_name(axis) for axis in own] for name, own in self.mixed.items()},
+            mixed={
+                column_name(name): [column_name(axis) for axis in own] for name, own in self.mixed.items()
+            },
             observables=[column_name(name) for name in read],
             sensors=[column_name(name) for name in listed(sensors)],
             units={column_name(name): unit for name, unit in table.attrs["units"].items()},
@@ -247,4 +266,6 @@ class Scan:
             },
             tolerance=tolerance,
         )
+        for axis, order in self.order.items():
+            dataset[free_name(column_name(axis))].attrs["order_taken"] = order
         return dataset
