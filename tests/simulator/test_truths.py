@@ -47,12 +47,18 @@ MODELS: dict[str, tuple[Callable[..., Array], Callable[[Truth, Array], list[floa
     "lorentzian": (lorentzian, lambda truth, y: [_center(truth), _width(truth), *_heights(truth, y)]),
     "gaussian": (
         gaussian,
-        lambda truth, y: [truth.value, 0.06 if truth.unit == "MHz" else 1.0, float(y.max()), 0.0],
+        lambda truth, y: _gaussian_start(truth, y),
     ),
     "exponential": (exponential, lambda truth, y: [truth.value * 1.3, float(y.max())]),
     "three-body": (three_body, lambda truth, y: [truth.value * 1.3, float(y.max())]),
     "damped-oscillation": (oscillation, lambda truth, y: [truth.value, 100.0, 30.0, -1.0, float(y.mean())]),
 }
+
+
+def _gaussian_start(truth: Truth, y: Array) -> list[float]:
+    if truth.along == "detuning":
+        return [13.4 + truth.value / 1e3, 0.06, float(np.ptp(y)), float(y.min())]
+    return [truth.value, 1.0, float(y.max()), 0.0]
 
 
 def _center(truth: Truth) -> float:
@@ -84,7 +90,7 @@ def points(nights: tuple[Night, ...], truth: Truth, mishap: Mishap | None = None
     scans = mishap.scans if mishap else (truth.scan,)
     labels = {scan.split("#")[0] if "#" in scan else None for scan in scans}
     factor = mishap.factor if mishap else 1
-    axis = truth.along or truth.swept[0]
+    axis = truth.along if truth.along in truth.swept else truth.swept[0]
     line = reference_line(nights, truth) if truth.relative_to else np.ones(1)
     found = []
     for taken in (shot for night in nights for shot in night.shots):
@@ -99,9 +105,17 @@ def points(nights: tuple[Night, ...], truth: Truth, mishap: Mishap | None = None
         if name == truth.sequence and truth.first <= started <= truth.last and same_slice:
             seen = record["observables"] | (taken.again["observables"] if taken.again else {})
             expected = float(np.polyval(line, (started - truth.first).total_seconds()))
-            found.append((in_card_units(settings[axis]) / factor, seen[truth.observable]["value"] / expected))
+            found.append((in_card_units(settings[axis]) / factor, read(seen, truth.observable) / expected))
     x, y = np.array(found, dtype=float).T
     return x, y
+
+
+def read(seen: dict[str, Any], observable: str) -> float:
+    """Return an observable, with what the card computes of the two clouds computed here."""
+    if observable == "polarisation":
+        up, down = seen["atom_number[up]"]["value"], seen["atom_number[down]"]["value"]
+        return float((up - down) / (up + down))
+    return float(seen[observable]["value"])
 
 
 def reference_line(nights: tuple[Night, ...], truth: Truth) -> NDArray[np.float64]:
@@ -130,12 +144,14 @@ def pull(nights: tuple[Night, ...], truth: Truth, mishap: Mishap | None = None) 
     values = np.array(start(truth, y))
     for _ in range(3):
         curve = function(x, *values)
-        number = truth.observable.startswith("atom_number")
-        floor = 450 if truth.relative_to is None else 0.004
-        scatter = np.hypot(0.0435 * curve, floor) if number else np.full_like(x, 1.7)
+        if truth.observable == "atom_number":
+            scatter = np.hypot(0.0435 * curve, 450 if truth.relative_to is None else 0.004)
+        else:
+            scatter = np.full_like(x, 0.005 if truth.observable == "polarisation" else 1.7)
         values, covariance = curve_fit(function, x, y, p0=values, sigma=scatter)
     place = function.__code__.co_varnames.index(truth.parameter) - 1
-    return float((values[place] - truth.value) / np.sqrt(covariance[place, place]))
+    scale, zero = (1e3, 13.4) if truth.along == "detuning" else (1, 0)
+    return float(((values[place] - zero) * scale - truth.value) / np.sqrt(covariance[place, place]) / scale)
 
 
 @pytest.mark.parametrize("seed", [SEED, 1, 2, 3])

@@ -91,7 +91,12 @@ def _monday() -> tuple[Work, ...]:
 
 def _tuesday() -> tuple[Work, ...]:
     transfer = Block(
-        "rf-transfer", {"rf_frequency": grid(13.3, 13.6, 31)}, 2, "rf-transfer", planned=True, told=("up",)
+        "rf-transfer",
+        {"rf_frequency": grid(13.3, 13.6, 31)},
+        2,
+        "rf-transfer",
+        planned=True,
+        told=("polarisation",),
     )
     notes = {17: "door open, somebody walked in", -1: "line sits where it was in spring"}
     return (Work(transfer, "clouds", late=("temperature",), notes=notes),)
@@ -122,7 +127,7 @@ def _thursday() -> tuple[Work, ...]:
         1,
         "loss-drifting",
         shuffled=False,
-        told=("center", "depth"),
+        told=("relative", "depth"),
     )
     return (
         Work(begun, "mislabelled"),

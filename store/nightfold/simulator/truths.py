@@ -30,6 +30,7 @@ class Told:
     parameter: str
     value: float
     unit: str
+    along: str | None = None
     relative_to: str | None = None
 
 
@@ -39,12 +40,23 @@ def _depth() -> float:
     return -depth / (1 - depth * physics.lorentzian(NOMINAL_CURRENT_A, physics.LOW.center, physics.LOW.fwhm))
 
 
+def _detuning_khz() -> float:
+    """Return where the radio-frequency line lies as the card counts its detuning."""
+    return round((clouds.RF_CENTER_MHZ - clouds.DETUNING_FROM_MHZ) * 1e3, 9)
+
+
 TOLD = {
     "center": Told("loss resonance, centre", "lorentzian", "atom_number", "center", physics.LOW.center, "A"),
     "fwhm": Told("loss resonance, width", "lorentzian", "atom_number", "fwhm", physics.LOW.fwhm, "A"),
     "high": Told("higher resonance, centre", "lorentzian", "atom_number", "center", physics.HIGH.center, "A"),
     "slice": Told(
-        "loss map, centre at 240 ms", "lorentzian", "atom_number", "center", physics.LOW.center, "A"
+        "loss map, centre at 240 ms",
+        "lorentzian",
+        "atom_number",
+        "center",
+        physics.LOW.center,
+        "A",
+        along="coil_current",
     ),
     "frequency": Told(
         "sloshing, frequency",
@@ -69,9 +81,26 @@ TOLD = {
     "mirror": Told(
         "trap mirror, best setting", "gaussian", "atom_number", "center", physics.MIRROR_CENTER_V, "V"
     ),
-    "up": Told("transfer, centre", "gaussian", "atom_number[up]", "center", clouds.RF_CENTER_MHZ, "MHz"),
+    "polarisation": Told(
+        "transfer, centre", "gaussian", "polarisation", "center", _detuning_khz(), "kHz", along="detuning"
+    ),
+    "relative": Told(
+        "loss resonance, centre",
+        "lorentzian",
+        "atom_number",
+        "center",
+        physics.LOW.center,
+        "A",
+        relative_to="reference",
+    ),
     "depth": Told(
-        "loss resonance, depth", "lorentzian", "atom_number", "amplitude", _depth(), "", "reference"
+        "loss resonance, depth",
+        "lorentzian",
+        "atom_number",
+        "amplitude",
+        _depth(),
+        "",
+        relative_to="reference",
     ),
 }
 
@@ -110,7 +139,7 @@ def state_truths(block: Block, scan: str, first: datetime, last: datetime) -> li
                 sequence=block.sequence,
                 model=told.model,
                 observable=told.observable,
-                along="coil_current" if sliced else None,
+                along=told.along,
                 parameter=told.parameter,
                 value=told.value,
                 unit=told.unit,
