@@ -17,6 +17,7 @@ from nightfold_cli.notetext import texts_by_subject
 from nightfold_cli.opening import local_times, moment, opened
 from nightfold_cli.render import Screen
 from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status, title
+from nightfold_cli.sparklines import PLAIN_HEIGHTS
 
 if TYPE_CHECKING:
     from nightfold.scans.scan import Scan
@@ -33,7 +34,6 @@ _TREND = 12
 _NARROW = 90
 _NONE = "no scans like that; without options all are listed"
 _NONE_YET = "no scans yet; 'nightfold take FILE…' takes shots in"
-_PLAIN_HEIGHTS = "_.-=+*#%"
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -140,7 +140,7 @@ def trend_of(scan: Scan, *, unicode: bool) -> str:
     if scan.main_observable not in table or longest not in table:
         return ""
     bars = trend(table[longest].tolist(), table[scan.main_observable].tolist(), _TREND)
-    return bars if unicode else bars.translate(str.maketrans(HEIGHTS, _PLAIN_HEIGHTS))
+    return bars if unicode else bars.translate(str.maketrans(HEIGHTS, PLAIN_HEIGHTS))
 
 
 def _axes(scan: Scan, *, narrow: bool) -> list[str]:
