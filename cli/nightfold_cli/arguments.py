@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import re
-from argparse import ArgumentParser, ArgumentTypeError, Namespace, RawDescriptionHelpFormatter
+from argparse import Action, ArgumentParser, ArgumentTypeError, Namespace, RawDescriptionHelpFormatter
 from types import ModuleType
 from typing import TYPE_CHECKING, NoReturn
 
@@ -48,9 +48,11 @@ def command_parser(command: str, module: ModuleType) -> ArgumentParser:
     return parser
 
 
-def add_scan_key(parser: ArgumentParser) -> None:
+def add_scan_key(parser: ArgumentParser) -> Action:
     """Declare the argument that names a scan."""
-    parser.add_argument("key", metavar="KEY", help="id, label (its newest round) or label#round of a scan")
+    return parser.add_argument(
+        "key", metavar="KEY", help="id, label (its newest round) or label#round of a scan"
+    )
 
 
 def add_subject(parser: ArgumentParser) -> _MutuallyExclusiveGroup:

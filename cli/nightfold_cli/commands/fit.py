@@ -20,6 +20,7 @@ from nightfold_cli.opening import opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import points_of
 from nightfold_cli.progress import Progress
+from nightfold_cli.refits import add_again, fit_again
 from nightfold_cli.render import Screen
 from nightfold_cli.runs import Runs, runs_of
 from nightfold_cli.scantext import counted, title
@@ -36,6 +37,7 @@ EXAMPLES = (
     "nightfold fit loss-coarse lorentzian -o atom_number",
     "nightfold fit loss-map lorentzian -o atom_number --along coil_current",
     "nightfold fit decay exponential two-body -o atom_number --fixed amplitude=1.2e5",
+    "nightfold fit --again",
 )
 _HEIGHT = 15
 _DENSE = 600
@@ -52,8 +54,9 @@ class Slice:
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
-    add_scan_key(parser)
-    parser.add_argument("models", metavar="MODEL", nargs="+", help="'nightfold models' lists them")
+    key = add_scan_key(parser)
+    models = parser.add_argument("models", metavar="MODEL", nargs="+", help="'nightfold models' lists them")
+    add_again(parser, key, models)
     parser.add_argument("-o", "--observable", metavar="NAME", help="default: the machine's main one")
     parser.add_argument("--along", metavar="PARAMETER", help="the axis to fit along, where there are several")
     parser.add_argument("--background", choices=("none", "flat", "sloped"), help="default: that of the model")
@@ -68,6 +71,8 @@ def add_arguments(parser: ArgumentParser) -> None:
 def run(args: Namespace) -> int:
     """Fit every model, show them one below the other."""
     screen = Screen.here(args.json)
+    if args.again is not None:
+        return fit_again(args, screen)
     with opened(args, screen) as store:
         scan = named_scan(store, args.key, screen)
         name = name_in(store, scan)

@@ -4,15 +4,15 @@ from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
 from collections.abc import Mapping, Sequence
-from dataclasses import replace
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from nightfold_cli import estimates
 from nightfold_cli.arguments import positive
 from nightfold_cli.estimates import value_text
+from nightfold_cli.keptfits import kept_entry, named_fits, slice_lines
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
-from nightfold_cli.naming import ambiguous_labels, name_in, name_of, named_scan
+from nightfold_cli.naming import named_scan
 from nightfold_cli.notetext import first_words, notes_of_fits
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.printable import wrap
@@ -21,8 +21,6 @@ from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.kept import KeptFit
-    from nightfold.scans.scan import Scan
-    from nightfold.store import Store
 
 HELP = "list the fits that were kept"
 EXAMPLES = ("nightfold fits", "nightfold fits loss-coarse", "nightfold fits --json")
@@ -44,40 +42,25 @@ def run(args: Namespace) -> int:
     with opened(args, screen) as store:
         scan = None if args.key is None else named_scan(store, args.key, screen)
         kept = sorted(store.fits(scan.id if scan else None), key=lambda fit: (fit.at, fit.id))
-        kept = _named(store, kept, scan)
+        kept = named_fits(store, kept)
         times = local_times(store)
         last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(kept))
         listed = kept[-last:] if last else []
         notes = notes_of_fits(store, [fit.id for fit in listed])
     if screen.json:
-        screen.answer({"fits": [{**_entry(fit), "notes": notes.get(fit.id, [])} for fit in listed]})
+        screen.answer({"fits": [{**kept_entry(fit), "notes": notes.get(fit.id, [])} for fit in listed]})
         return 0
     if not screen.terminal:
         _tabulate(screen, listed, times, notes)
         return 0
     _draw(screen, listed, times, notes)
     if any(fit.stale for fit in listed):
-        screen.note("stale: the shots of the scan have changed since; fit it again")
+        screen.note(
+            "stale: the shots of the scan have changed since; 'nightfold fit --again' brings it up to date"
+        )
     if len(kept) > len(listed):
         screen.note(f"{len(kept) - len(listed)} earlier ones not shown; --all shows them")
     return 0
-
-
-def _named(store: Store, kept: Sequence[KeptFit], scan: Scan | None) -> list[KeptFit]:
-    """Return the fits, those of scans that share a label with the id of theirs as its name."""
-    if not kept:
-        return []
-    if scan is not None:
-        return [replace(fit, scan_key=name_in(store, scan)) for fit in kept]
-    scans = store.scans()
-    ambiguous = ambiguous_labels(scans)
-    names = {
-        fit.id: name_of(scan, ambiguous)
-        for scan in scans
-        if scan.label in ambiguous
-        for fit in store.fits(scan.id)
-    }
-    return [replace(fit, scan_key=names.get(fit.id, fit.scan_key)) for fit in kept]
 
 
 def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]]) -> None:
@@ -95,7 +78,7 @@ def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Map
     rows: list[Row] = [
         [
             str(fit.id),
-            Cell.of((fit.scan_key, fit.observable, *_slice(fit))),
+            Cell.of((fit.scan_key, fit.observable, *slice_lines(fit))),
             Cell.of((fit.model, f"along {fit.along}")),
             Cell.of((*_estimates(fit), *_noted(notes.get(fit.id)))),
             Cell.of(_trust(fit)),
@@ -125,7 +108,7 @@ def _tabulate(
             fit.background,
             fit.observable,
             fit.along,
-            ", ".join(_slice(fit)),
+            ", ".join(slice_lines(fit)),
             *row,
             setting(fit.trusted),
             setting(fit.stale),
@@ -155,30 +138,3 @@ def _trust(fit: KeptFit) -> list[str]:
     """Return whether to trust a fit, and why not."""
     codes = [warning.code for warning in fit.warnings if not warning.advisory]
     return (["yes"] if fit.trusted else ["NO", *codes]) + (["stale"] if fit.stale else [])
-
-
-def _slice(fit: KeptFit) -> list[str]:
-    """Return where a slice was taken: ``hold_time 240``."""
-    return [f"{name} {setting(value)}" for name, value in fit.slice.items()]
-
-
-def _entry(fit: KeptFit) -> dict[str, Any]:
-    """Return a fit for JSON."""
-    return {
-        "id": fit.id,
-        "at": fit.at,
-        "scan": fit.scan_key,
-        "model": fit.model,
-        "background": fit.background,
-        "observable": fit.observable,
-        "along": fit.along,
-        "slice": fit.slice or {},
-        "estimates": {name: estimates.entry(estimate) for name, estimate in fit.estimates.items()},
-        "trusted": fit.trusted,
-        "warnings": [estimates.warning_entry(warning) for warning in fit.warnings],
-        "shots": fit.shots,
-        "set_aside": fit.set_aside,
-        "settings": fit.settings,
-        "stale": fit.stale,
-        "version": fit.version,
-    }

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import re
 from argparse import ArgumentParser, Namespace
+from collections.abc import Collection
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.arguments import positive
@@ -227,19 +228,75 @@ def _show(screen: Screen, shot: ShotView, times: LocalTimes, notes: list[dict[st
     )
     screen.part()
     screen.table(
-        [Column("observable"), Column("value", right=True), Column("unit")],
-        [[name, _reading(reading), reading.unit] for name, reading in shot.observables.items()],
+        [Column("observable"), Column("value", right=True), Column("unit"), *_mark(shot.reread)],
+        [
+            [name, _reading(reading), reading.unit, *_marked(name, shot.reread, "read again")]
+            for name, reading in shot.observables.items()
+            if reading.derived is None
+        ],
         empty="no observables yet",
     )
     screen.part()
     screen.table(
-        [Column("parameter"), Column("value", right=True, wraps=True), Column("unit"), Column("swept")],
         [
-            [name, setting(part.value), part.unit, "swept" if part.swept else ""]
+            Column("parameter"),
+            Column("value", right=True, wraps=True),
+            Column("unit"),
+            Column("swept"),
+            *_mark(shot.corrected),
+        ],
+        [
+            [
+                name,
+                setting(part.value),
+                part.unit,
+                "swept" if part.swept else "",
+                *_marked(name, shot.corrected, "corrected"),
+            ]
             for name, part in shot.parameters.items()
+            if part.derived is None
         ],
         empty="no parameters",
     )
+    _show_derived(screen, shot)
+    if shot.reread or shot.corrected:
+        screen.note(f"since it was taken something changed; 'nightfold amend {shot.uid}' tells its history")
+
+
+def _show_derived(screen: Screen, shot: ShotView) -> None:
+    """Show what the card derives of the readings and settings of a shot, if anything."""
+    rows: list[Row] = [
+        [name, _reading(reading), reading.unit, reading.derived, ""]
+        for name, reading in shot.observables.items()
+        if reading.derived is not None
+    ]
+    rows += [
+        [name, setting(part.value, digits=ENOUGH), part.unit, part.derived, "swept" if part.swept else ""]
+        for name, part in shot.parameters.items()
+        if part.derived is not None
+    ]
+    if rows:
+        screen.part()
+        screen.table(
+            [
+                Column("derived"),
+                Column("value", right=True),
+                Column("unit"),
+                Column("expression", wraps=True, least=30),
+                Column("swept"),
+            ],
+            rows,
+        )
+
+
+def _mark(names: Collection[str]) -> list[Column]:
+    """Return the column that marks what changed since the shot was taken, where anything did."""
+    return [Column("since", plain_name="changed")] if names else []
+
+
+def _marked(name: str, names: Collection[str], mark: str) -> list[str]:
+    """Return the cell of that column."""
+    return [mark if name in names else ""] if names else []
 
 
 def _signed(note: dict[str, Any], times: LocalTimes) -> str:
@@ -273,7 +330,13 @@ def _entry(shot: ShotView) -> dict[str, Any]:
         "line": shot.line,
         "frames": [{"camera": camera, "role": role, "path": path} for camera, role, path in shot.frames],
         "parameters": {
-            name: {"value": part.value, "unit": part.unit or None, "swept": part.swept}
+            name: {
+                "value": part.value,
+                "unit": part.unit or None,
+                "swept": part.swept,
+                "derived": part.derived,
+                "corrected": name in shot.corrected,
+            }
             for name, part in shot.parameters.items()
         },
         "observables": {
@@ -282,6 +345,8 @@ def _entry(shot: ShotView) -> dict[str, Any]:
                 "stderr": reading.stderr,
                 "unit": reading.unit or None,
                 "state": reading.state,
+                "derived": reading.derived,
+                "reread": name in shot.reread,
             }
             for name, reading in shot.observables.items()
         },
