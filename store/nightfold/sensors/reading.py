@@ -68,7 +68,7 @@ def list_sensors(connection: Connection, machine: str | None) -> pd.DataFrame:
         {
             "machine": [row.machine for row in rows],
             "name": [row.name for row in rows],
-            "unit": [row.unit for row in rows],
+            "unit": pd.Series([row.unit for row in rows], dtype=object),
             "readings": np.array([row.readings for row in rows], np.int64),
             "first": utc_times(np.array([row.first_us for row in rows], np.int64)),
             "last": utc_times(np.array([row.last_us for row in rows], np.int64)),

@@ -170,7 +170,7 @@ class _Batch:
         column = self._columns.get(key)
         if column is None:
             column = self._columns[key] = _Column(machine, name, known)
-        if column.known is not known or name not in machine.sensors:
+        if machine.sensors.get(name) is not known:
             column.known = machine.sensors[name] = known
         return column
 
