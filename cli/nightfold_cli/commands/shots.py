@@ -286,6 +286,7 @@ def _show_derived(screen: Screen, shot: ShotView) -> None:
                 Column("swept"),
             ],
             rows,
+            empty="",
         )
 
 
