@@ -9,6 +9,7 @@ from collections.abc import Sequence
 from itertools import zip_longest
 from typing import TYPE_CHECKING, Any
 
+from nightfold_cli.concise import concise
 from nightfold_cli.estimates import plain_rows, value_text
 from nightfold_cli.failures import UsageError
 from nightfold_cli.keptfits import kept_entry, named_fits, slice_lines
@@ -139,7 +140,7 @@ def _draw(screen: Screen, pairs: Sequence[_Pair]) -> None:
             Column("estimate", wraps=True),
             Column("before", right=True),
             Column("now", right=True),
-            Column("unit"),
+            Column("unit", spare=1),
             Column("moved by", right=True),
         ]
         screen.table(columns, [row for before, after in done for row in _rows(before, after)][:-1], empty="")
@@ -205,9 +206,13 @@ def _primary(fit: KeptFit) -> list[str]:
 
 
 def _value(fit: KeptFit | None, name: str) -> str:
-    """Return an estimate of a fit, if it has it."""
+    """Return an estimate of a fit with its stderr, if it has it."""
     estimate = _of(fit, name)
-    return "-" if estimate is None else value_text(estimate, fixed=estimate.fixed)
+    if estimate is None:
+        return "-"
+    if estimate.fixed or not math.isfinite(estimate.stderr):
+        return value_text(estimate, fixed=estimate.fixed)
+    return concise(estimate.value, estimate.stderr)
 
 
 def _of(fit: KeptFit | None, name: str) -> KeptEstimate | None:

@@ -8,7 +8,9 @@ from typing import Any
 
 from nightfold_cli.failures import UsageError
 
-_NUMBER = re.compile(r"([+-]?(?:(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?|nan|inf))\s*(.*)", re.IGNORECASE)
+_NUMBER = re.compile(
+    r"([+-]?(?:(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?|nan|inf))(?:\s+(\S.*)|([^\s\d.,].*))?", re.IGNORECASE
+)
 _WHOLE = re.compile(r"[+-]?\d+")
 
 
@@ -32,7 +34,7 @@ def typed_value(name: str, text: str, kind: str | None) -> Any:
             raise UsageError(
                 f"--set {name}: found {text!r}, wanted a number, as in {name}=61.3 or '{name}=61.3 A'"
             )
-        digits, unit = match.groups()
+        digits, unit = match[1], match[2] or match[3]
         number = int(digits) if _WHOLE.fullmatch(digits) else float(digits)
         return {"value": number, "unit": unit} if unit else number
     if kind == "truth":

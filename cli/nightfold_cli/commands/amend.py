@@ -131,11 +131,15 @@ def _correct(screen: Screen, store: Store, args: Namespace, stated: dict[str, st
     for fit in stale:
         where = "".join(f", {line}" for line in slice_lines(fit))
         screen.item(fit.scan_key, f"{fit.model}, {fit.observable} along {fit.along}{where}")
+    keys = list(dict.fromkeys(fit.scan_key for fit in stale))
+    commands = [f"nightfold fit --again {key}".rstrip() for key in (keys if len(keys) <= _FEW else [""])]
     screen.gap()
     screen.note("'fit --again' brings them up to date:")
-    keys = list(dict.fromkeys(fit.scan_key for fit in stale))
-    for key in keys if len(keys) <= _FEW else [""]:
-        screen.command(f"nightfold fit --again {key}".rstrip())
+    for command in commands:
+        if screen.terminal:
+            screen.command(command)
+        else:
+            screen.say(f"go on with: {command}")
 
 
 def _kind(store: Store, name: str, machines: set[str]) -> str | None:
