@@ -1,7 +1,8 @@
-"""Corrections of settings, sweeps of derived parameters, scans joined and split by hand, machine names that mean another, sensors.
+"""Corrections of settings, sweeps of derived parameters, scans arranged by hand, other names of machines, sensors.
 
-Why: shots as laboratories really take them.
-What happens to old rows: nothing; only tables are added.
+Why: shots as laboratories really take them. A card that is used again after another one is a row of its own, so that
+the history of a machine's cards is whole.
+What happens to old rows: nothing; tables are added, and one constraint is dropped.
 """
 
 from __future__ import annotations

@@ -30,6 +30,16 @@ class Asking(Face):
         with self._session.reading() as connection:
             return cards.cards_in_force(connection)
 
+    def cards_used(self, machine: str) -> list[cards.CardUsed]:
+        """Return the cards that a machine had, the oldest first: when each came into force, and what it changed.
+
+        Raises
+        ------
+        NotFound
+        """
+        with self._session.reading() as connection:
+            return cards.cards_used(connection, selecting.find_machine(connection, machine).id)
+
     def machines(self) -> list[str]:
         """Return the names of the machines, sorted."""
         with self._session.reading() as connection:

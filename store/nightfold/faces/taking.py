@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 from nightfold.faces.face import Face, Where
 from nightfold.ledger import names
+from nightfold.ledger.cards import cards_in_force, keep_card
 from nightfold.ledger.outcome import Incoming, Intake
 from nightfold.ledger.sources import SourceLog
 from nightfold.timestamps import now_us
@@ -36,7 +37,7 @@ class Taking(Face):
         known = names.Names()
         with self._session.writing() as connection:
             known.load(connection)
-            names.keep_card(connection, known, card, now_us())
+            keep_card(connection, known, card, now_us())
         return card
 
     def take(
@@ -80,8 +81,9 @@ class Taking(Face):
 
         where = Path(path)
         with self._session.reading() as connection:
-            cards = names.cards_in_force(connection)
-        named = columns.machine if columns else None
+            cards = cards_in_force(connection)
+            aliases = names.read_aliases(connection)
+        named = aliases.get(columns.machine, columns.machine) if columns and columns.machine else None
         card = cards.get(named) if named else next(iter(cards.values())) if len(cards) == 1 else None
         records = read_file(where, columns=columns, card=card)
         return self._writer.take(records, SourceLog(where), progress)
@@ -148,7 +150,7 @@ class Taking(Face):
             records = read_json(where)
         if machine is None:
             with self._session.reading() as connection:
-                cards = names.cards_in_force(connection)
+                cards = cards_in_force(connection)
             machine = next(iter(cards)) if len(cards) == 1 else None
         log = SourceLog(where)
         return take_readings(self._session, records, machine=machine, log=log, progress=progress)

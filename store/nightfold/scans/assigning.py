@@ -7,8 +7,8 @@ from dataclasses import dataclass, field
 
 from sqlalchemy import Connection
 
-from nightfold.ledger.checking import CheckedShot
 from nightfold.ledger.cards import newest_cards, stored_card
+from nightfold.ledger.checking import CheckedShot
 from nightfold.scans import refolding, rounds
 from nightfold.scans.keeping import settle_axes
 from nightfold.scans.rounds import Round
