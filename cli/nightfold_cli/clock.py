@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from decimal import Decimal
 from typing import Literal
 
 from nightfold_cli.concise import plain
@@ -12,17 +13,18 @@ from nightfold_cli.concise import plain
 _UNITS = ((1.0, "s"), (1e-3, "ms"), (1e-6, "µs"), (1e-9, "ns"))
 _JUST_BELOW = 1 - 1e-9
 _LEAST_CELL = 0.5
+_LEAST_DECADE, _MOST_DECADE = 0.5, 5.0
 UNKNOWN = "?"
-Scale = Literal["linear", "logarithm"]
+Scale = Literal["linear", "logarithm", "crowded"]
 
 
 @dataclass(frozen=True, slots=True)
 class Bar:
-    """Where the bar of a step lies, in cells; `known` is False where its duration is not."""
+    """Where the bar of a step lies, in cells; one of no length is only a mark."""
 
     start: int
     length: int
-    known: bool
+    kind: Literal["bar", "mark", "unknown"]
 
 
 def lasting(seconds: float, digits: int = 6) -> str:
@@ -57,7 +59,7 @@ def starts(durations: Sequence[float]) -> tuple[list[str], str]:
     known = [0.0 if math.isnan(duration) else duration for duration in durations]
     clock = [math.fsum(known[:place]) for place in range(len(known))]
     size, unit = unit_of(max(clock, default=0.0))
-    texts = [plain(float(f"{at / size:.12g}")) for at in clock]
+    texts = [f"{Decimal(f'{at / size:.12g}'):f}" for at in clock]
     whole = [text.partition(".") for text in texts]
     before = max((len(head) for head, _, _ in whole), default=0)
     after = max((len(dot + tail) for _, dot, tail in whole), default=0)
@@ -72,7 +74,8 @@ def bars(durations: Sequence[float], width: int) -> tuple[list[Bar], Scale]:
     """Return the bars of steps that follow each other, and their scale.
 
     The scale is linear where the shortest step still fills half a cell. Else a bar's length goes by the logarithm of
-    its duration: ten times as long is one unit more, and the shortest has one.
+    its duration: ten times as long is one unit more, and the shortest has one. Where there are so many steps that a
+    unit would be less than half a cell, the bars do not follow each other but all begin at the left.
 
     Parameters
     ----------
@@ -81,20 +84,39 @@ def bars(durations: Sequence[float], width: int) -> tuple[list[Bar], Scale]:
     width : int
         Cells for all of them together.
     """
-    known = [duration for duration in durations if duration > 0 and math.isfinite(duration)]
-    marks = len(durations) - len(known)
-    room = max(1, width - marks)
-    linear = not known or min(known) * room >= _LEAST_CELL * math.fsum(known)
-    if linear:
-        per_second = room / math.fsum(known) if known else 0.0
-        lengths = [duration * per_second if duration > 0 else 1.0 for duration in durations]
-    else:
-        shortest = min(known)
-        units = [1 + math.log10(duration / shortest) if duration > 0 else 1.0 for duration in durations]
-        lengths = [unit * width / math.fsum(units) for unit in units]
-    ends = [math.fsum(lengths[: place + 1]) for place in range(len(lengths))]
-    placed = []
-    for duration, length, end in zip(durations, lengths, ends, strict=True):
-        start = max(0, min(round(end - length), width - 1))
-        placed.append(Bar(start, max(1, min(round(end), width) - start), not math.isnan(duration)))
-    return placed, "linear" if linear else "logarithm"
+    known = [duration for duration in durations if _has_length(duration)]
+    room = max(1, width - (len(durations) - len(known)))
+    if not known or min(known) * room >= _LEAST_CELL * math.fsum(known):
+        cell = math.fsum(known) / room
+        lengths = [duration / cell if _has_length(duration) else 1.0 for duration in durations]
+        return _one_after_the_other(durations, lengths, width), "linear"
+    units = [1 + math.log10(one / min(known)) if _has_length(one) else 1.0 for one in durations]
+    unit = width / math.fsum(units)
+    if unit >= _LEAST_DECADE:
+        return _one_after_the_other(durations, [unit * one for one in units], width), "logarithm"
+    unit = min(_MOST_DECADE, width / max(units))
+    return [
+        Bar(0, max(1, round(unit * one)) if _has_length(duration) else 1, _kind(duration))
+        for duration, one in zip(durations, units, strict=True)
+    ], "crowded"
+
+
+def _one_after_the_other(durations: Sequence[float], lengths: Sequence[float], width: int) -> list[Bar]:
+    """Return bars each of which begins where the one before ends, and has one cell at least."""
+    placed: list[Bar] = []
+    end = 0.0
+    for duration, length in zip(durations, lengths, strict=True):
+        start = max(0, min(round(end), width - 1))
+        end += length
+        placed.append(Bar(start, max(1, min(round(end), width) - start), _kind(duration)))
+    return placed
+
+
+def _has_length(duration: float) -> bool:
+    return math.isfinite(duration) and duration > 0
+
+
+def _kind(duration: float) -> Literal["bar", "mark", "unknown"]:
+    if _has_length(duration):
+        return "bar"
+    return "mark" if math.isfinite(duration) else "unknown"

@@ -32,6 +32,8 @@ def ramp_text(ramp: tuple[float, ...], *, unicode: bool) -> str:
     """Return a list of numbers in a few words: ``▇▅▃▂▁ 6.4 → 0.16, 41 points``."""
     if not ramp:
         return "no points"
+    if len(ramp) > 1 and len(set(ramp)) == 1:
+        return f"{short(ramp[0])} at {len(ramp)} points"
     (line,) = sparklines([ramp], _RAMP, unicode=unicode)
     count = "1 point" if len(ramp) == 1 else f"{len(ramp)} points"
     ends = short(ramp[0]) if len(ramp) == 1 else f"{short(ramp[0])} {_arrow(unicode)} {short(ramp[-1])}"

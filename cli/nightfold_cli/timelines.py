@@ -134,11 +134,14 @@ def _hidden(hidden: Sequence[StepSetting], since: str) -> str:
 
 def _scale(durations: Sequence[float], width: int) -> str:
     """Return what the length of a bar means."""
-    if bars(durations, width)[1] == "linear":
+    scale = bars(durations, width)[1]
+    if scale == "linear":
         return "bars to scale"
     known = [duration for duration in durations if duration > 0]
-    ends = f"{lasting(min(known))} to {lasting(max(known))}"
-    return f"bars not to scale: their length goes by the logarithm, {ends}"
+    ends = f"their length goes by the logarithm, {lasting(min(known))} to {lasting(max(known))}"
+    if scale == "crowded":
+        return f"too many steps to place the bars in time: {ends}"
+    return f"bars not to scale: {ends}"
 
 
 def _differs(step: TimelineStep) -> bool:
@@ -207,9 +210,9 @@ def _right(text: str, width: int) -> str:
 
 
 def _bar(bar: Bar, unicode: bool) -> str:
-    """Return the bar of a step; a sign of its own where the duration is not known."""
-    sign = UNKNOWN if not bar.known else "█" if unicode else "#"
-    return " " * bar.start + sign * bar.length
+    """Return the bar of a step; a sign of its own where it has no length, or none that is known."""
+    solid, mark = ("█", "│") if unicode else ("#", "|")
+    return " " * bar.start + {"bar": solid, "mark": mark, "unknown": UNKNOWN}[bar.kind] * bar.length
 
 
 def _settings_lines(
