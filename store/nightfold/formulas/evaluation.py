@@ -162,13 +162,14 @@ def _uncertain() -> dict[str, Callable[..., Any]]:
     import numpy as np
     from uncertainties import nominal_value, umath
 
-    plain = {"arctan": "atan", "arctan2": "atan2", "abs": "fabs"}
-    names = ("sqrt", "exp", "log", "log10", "sin", "cos", "tan", "arctan", "arctan2", "abs")
+    plain = {"arctan": "atan", "arctan2": "atan2"}
+    names = ("sqrt", "exp", "log", "log10", "sin", "cos", "tan", "arctan", "arctan2")
     functions: dict[str, Callable[..., Any]] = {
         name: np.frompyfunc(getattr(umath, plain.get(name, name)), 2 if name == "arctan2" else 1, 1)
         for name in names
     }
     functions["power"] = np.frompyfunc(operator.pow, 2, 1)
+    functions["abs"] = np.frompyfunc(lambda a: a if nominal_value(a) >= 0 else -a, 1, 1)
     smaller = np.frompyfunc(lambda a, b: a if nominal_value(a) <= nominal_value(b) else b, 2, 1)
     larger = np.frompyfunc(lambda a, b: a if nominal_value(a) >= nominal_value(b) else b, 2, 1)
     functions["min"] = lambda *items: _reduce(smaller, items)

@@ -87,12 +87,15 @@ class RowReader:
         Taken for rows that do not name their machine.
     first : datetime or None
         When the row 0 was taken, for a file without times.
+    derived : frozenset of str
+        What the card derives, and may be swept without a column.
     """
 
     columns: tuple[Column, ...]
     options: CsvColumns
     machine: str | None
     first: datetime | None
+    derived: frozenset[str] = frozenset()
 
     def record(self, cells: Sequence[str], row: int) -> dict[str, Any]:
         """Return the shot record of one row.
@@ -126,11 +129,11 @@ class RowReader:
                 observables[column.name] = _reading(column, cell)
             elif column.role == "stderr":
                 uncertain.append((column, cell))
-            else:
+            elif column.role != "derived":
                 self._describe(record, column, cell)
         for column, cell in uncertain:
             _add_stderr(observables, column, cell)
-        swept = [name for name in self.options.swept if name in parameters]
+        swept = [name for name in self.options.swept if name in parameters or name in self.derived]
         return (
             record
             | ({"swept": swept} if swept else {})

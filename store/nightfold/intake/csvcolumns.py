@@ -16,7 +16,7 @@ from nightfold.records import clean_name
 from nightfold.units import parse_unit
 
 Role = Literal[
-    "parameter", "observable", "stderr",
+    "parameter", "observable", "stderr", "derived",
     "machine", "sequence", "scan", "started", "uid", "reference", "failed", "note",
 ]  # fmt: skip
 _SPECIAL: tuple[Role, ...] = ("machine", "sequence", "scan", "reference", "failed", "note")
@@ -119,7 +119,7 @@ def read_header(
     roles = _Roles(options, card, names)
     columns = tuple(_column(name, unit, roles, card) for name, unit in headings)
     _check_unassigned([name for name in names if roles.of(name) is None], options, source)
-    _check_stated(names, options, source)
+    _check_stated([*names, *(card.derived if card is not None else ())], options, source)
     _check_whole(columns, options, card, source)
     _check_stderr(columns)
     return columns
@@ -165,6 +165,8 @@ class _Roles:
 
     def of(self, name: str) -> Role | None:
         """Return the role of a column, or None where nothing says it."""
+        if self._is_derived(name):
+            return "derived"
         if name in self._parameters:
             return "parameter"
         if name in self._observables:
@@ -186,6 +188,13 @@ class _Roles:
         """Return the observable whose standard uncertainty a column of that name holds."""
         match = _STDERR.fullmatch(name)
         return match[1] if match and match[1] in self._names else None
+
+    def _is_derived(self, name: str) -> bool:
+        """Whether the card derives a column: it is not taken, so that exported tables can be taken again."""
+        if self._card is None:
+            return False
+        match = _STDERR.fullmatch(name)
+        return name in self._card.derived or (match is not None and match[1] in self._card.derived)
 
     def _by_card(self, name: str) -> Role | None:
         if self._card is None:

@@ -56,6 +56,7 @@ def read_csv(
         options,
         options.machine or (card.machine if card else None),
         options.first_moment(),
+        frozenset(card.derived) if card is not None else frozenset(),
     )
     number = 0
     if not headed:
