@@ -20,6 +20,9 @@ if TYPE_CHECKING:
     from nightfold.store import Store
 
 
+MACHINE = "heron"
+
+
 @dataclass(frozen=True, slots=True)
 class Found:
     """A truth, and what a fit made of it; `estimate` is None where nothing could be fitted."""
@@ -41,6 +44,13 @@ class Found:
         ends = self.interval95
         return None if ends is None else ends[0] <= self.truth.value <= ends[1]
 
+    @property
+    def verdict(self) -> str:
+        """Return whether the interval holds the truth, and whether the fit says not to trust it."""
+        if self.held is None:
+            return self.problem or "-"
+        return ("yes" if self.held else "NO") + ("" if self.trusted else ", not trusted")
+
 
 def fit_truths(store: Store, truths: Sequence[Truth]) -> list[Found]:
     """Fit the scan behind each truth."""
@@ -49,14 +59,37 @@ def fit_truths(store: Store, truths: Sequence[Truth]) -> list[Found]:
     with Progress("fitting scans", len(truths), sys.stderr) as progress:
         for count, truth in enumerate(truths):
             progress(count)
-            found.append(_found(store, truth, _scan_of(scans, truth)))
+            found.append(find_truth(store, truth, _scan_of(scans, truth)))
     return found
+
+
+def find_truth(store: Store, truth: Truth, scan: Scan | None = None, *, keep: bool = True) -> Found:
+    """Fit one scan, and pick the estimate that the truth speaks of; without a scan its own."""
+    from nightfold.errors import NightfoldError
+
+    scan = scan or _scan_of(store.scans(), truth)
+    if scan is None:
+        return Found(truth, None, None, False, "no such scan was found")
+    try:
+        outcome = store.fit(
+            scan,
+            truth.model,
+            observable=truth.observable,
+            along=truth.along,
+            background=truth.background,
+            relative_to=truth.relative_to,
+            keep=keep,
+        )
+    except NightfoldError as error:
+        return Found(truth, scan.key, None, False, str(error))
+    result = _slice(outcome, truth)
+    return Found(truth, scan.key, result.estimates[truth.parameter], result.trusted)
 
 
 def _scan_of(scans: Sequence[Scan], truth: Truth) -> Scan | None:
     """Return the scan a truth speaks of: by its key, or by sequence and time where it has no label."""
     for scan in scans:
-        if scan.key == truth.scan:
+        if scan.key == truth.scan and scan.machine == MACHINE:
             return scan
     within = [
         scan
@@ -67,22 +100,6 @@ def _scan_of(scans: Sequence[Scan], truth: Truth) -> Scan | None:
         and {axis.parameter for axis in scan.axes} >= set(truth.swept[:1])
     ]
     return max(within, key=lambda scan: scan.shots, default=None)
-
-
-def _found(store: Store, truth: Truth, scan: Scan | None) -> Found:
-    """Fit one scan, and pick the estimate that the truth speaks of."""
-    from nightfold.errors import NightfoldError
-
-    if scan is None:
-        return Found(truth, None, None, False, "no such scan was found")
-    try:
-        outcome = store.fit(
-            scan, truth.model, observable=truth.observable, along=truth.along, background=truth.background
-        )
-    except NightfoldError as error:
-        return Found(truth, scan.key, None, False, str(error))
-    result = _slice(outcome, truth)
-    return Found(truth, scan.key, result.estimates[truth.parameter], result.trusted)
 
 
 def _slice(outcome: FitResult | FitTable, truth: Truth) -> FitResult:

@@ -1,0 +1,1 @@
+"""What the demo does and shows, in parts: taking, comparing with the truth, putting right, looking on, showing."""
