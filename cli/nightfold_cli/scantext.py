@@ -34,6 +34,22 @@ def grid(scan: Scan) -> str:
     return "x".join(str(axis.points) for axis in scan.axes) or "1"
 
 
+_MARKS = {"rising": "↑", "falling": "↓"}
+
+
+def order_mark(scan: Scan, axis: Axis) -> str:
+    """Return an arrow if the points of an axis were taken in order, else nothing."""
+    return _MARKS.get(scan.order.get(axis.parameter, ""), "")
+
+
+def order_line(scan: Scan) -> str:
+    """Return what to know about the order in which the points were taken; nothing where it was mixed."""
+    found = [f"{order} {name}" for name, order in scan.order.items() if order != "mixed"]
+    if not found:
+        return ""
+    return f"in order of {' and of '.join(found)}: drift would look like a feature; better shuffle the points"
+
+
 def counted(count: int, what: str) -> str:
     """Return a number of things: ``1 point``, ``31 points``."""
     return f"{count} {what}" if count == 1 else f"{count} {what}s"
@@ -76,6 +92,8 @@ def entry(scan: Scan, name: str, notes: Mapping[str, list[str]]) -> dict[str, An
         "first": scan.first,
         "last": scan.last,
         "complete": scan.complete,
+        "order": scan.order,
+        "arranged": list(scan.arranged),
         "observables": list(scan.observables),
         "main_observable": scan.main_observable,
         "notes": notes.get(f"scan {scan.id}", []),

@@ -16,6 +16,8 @@ _SPELLED = {
     "·": "*",
     "≥": ">=",
     "≤": "<=",
+    "↑": "^",
+    "↓": "v",
 }
 HANDLER = "nightfold-spelled"
 

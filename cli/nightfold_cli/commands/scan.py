@@ -8,18 +8,19 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli.arguments import add_scan_key
+from nightfold_cli.arrangedtext import in_full
 from nightfold_cli.charts import chart_of_points, map_of_points
 from nightfold_cli.concise import Scale, scale_of, short
 from nightfold_cli.known import check_observable
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
-from nightfold_cli.naming import name_in, named_scan
+from nightfold_cli.naming import name_in, named_scan, shared_names
 from nightfold_cli.notetext import note_fields, texts_by_subject
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import Point, Reading, points_of
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import axis_line, counted, entry, repeats_text, status, title
+from nightfold_cli.scantext import axis_line, counted, entry, order_line, repeats_text, status, title
 from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
@@ -59,12 +60,13 @@ def run(args: Namespace) -> int:
         points = points_of(scan.table(set_aside=args.set_aside), axes, observables)
         units = {name: unit or "" for name, unit in _units(scan, observables).items()}
         times = local_times(store)
+        arranged = [in_full(item, shared_names(store), times) for item in scan.arrangements]
         notes = texts_by_subject(store)
     if screen.json:
         screen.answer({"scan": entry(scan, name, notes), "points": [_entry(scan, point) for point in points]})
         return 0
     if screen.terminal:
-        _header(screen, scan, name, times, notes.get(f"scan {scan.id}", []))
+        _header(screen, scan, name, times, arranged, notes.get(f"scan {scan.id}", []))
     if not screen.terminal or args.points or len(points) <= _MOST_POINTS:
         _tabulate(screen, scan, points, observables, units)
     else:
@@ -86,7 +88,9 @@ def _units(scan: Scan, observables: Sequence[str]) -> dict[str, str]:
     return {name: scan.units.get(name, "") for name in observables}
 
 
-def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes, notes: Sequence[str]) -> None:
+def _header(
+    screen: Screen, scan: Scan, name: str, times: LocalTimes, arranged: Sequence[str], notes: Sequence[str]
+) -> None:
     """Say what the scan is."""
     origin = {"label": "by label", "found": "found by itself", "declared": "declared"}.get(
         scan.origin, scan.origin
@@ -100,6 +104,8 @@ def _header(screen: Screen, scan: Scan, name: str, times: LocalTimes, notes: Seq
             *(("axis", f"{axis_line(axis)}, {counted(axis.points, 'point')}") for axis in scan.axes),
             ("shots", f"{scan.shots}, {repeats_text(scan)} a point{aside}"),
             ("taken", f"{first:%Y-%m-%d %H:%M:%S} to {until}"),
+            *([("order", order_line(scan))] if order_line(scan) else []),
+            *(("by hand", text) for text in arranged),
             *note_fields(notes, screen),
         ]
     )

@@ -16,10 +16,11 @@ from nightfold_cli.naming import ambiguous_labels, name_of
 from nightfold_cli.notetext import texts_by_subject
 from nightfold_cli.opening import local_times, moment, opened
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import axis_line, entry, grid, repeats_text, span, status, title
+from nightfold_cli.scantext import axis_line, entry, grid, order_mark, repeats_text, span, status, title
 from nightfold_cli.sparklines import PLAIN_HEIGHTS
 
 if TYPE_CHECKING:
+    from nightfold.scans.axes import Axis
     from nightfold.scans.scan import Scan
     from nightfold.store import Store
 
@@ -75,6 +76,8 @@ def run(args: Namespace) -> int:
             _draw(screen, listed, names, _nights(store, listed), empty)
             if listed:
                 screen.note(times.note(scan.machine for scan in listed))
+            if any(order_mark(scan, axis) for scan in listed for axis in scan.axes):
+                screen.note("↑ ↓ taken in this order: a drift in time would look like a feature")
             if len(found) > len(listed):
                 screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
         else:
@@ -148,8 +151,13 @@ def _axes(scan: Scan, *, narrow: bool) -> list[str]:
     if not scan.axes:
         return ["(nothing moved)"]
     if narrow or len(scan.axes) == 1:
-        return [line for axis in scan.axes for line in (axis.parameter, span(axis))]
-    return [axis_line(axis) for axis in scan.axes]
+        return [line for axis in scan.axes for line in (axis.parameter, _marked(scan, axis, span(axis)))]
+    return [_marked(scan, axis, axis_line(axis)) for axis in scan.axes]
+
+
+def _marked(scan: Scan, axis: Axis, text: str) -> str:
+    """Return what is said of an axis with a mark if its points were taken in order."""
+    return f"{text} {order_mark(scan, axis)}".rstrip()
 
 
 def _stream(scan: Scan) -> str:
@@ -163,7 +171,7 @@ def _tabulate(
     """Write one line a scan, for programs."""
     names = (
         *("id", "scan", "machine", "sequence", "axes", "points", "repeats", "shots", "set_aside"),
-        *("status", "first", "last"),
+        *("status", "first", "last", "order"),
     )
     rows = [
         [
@@ -179,6 +187,7 @@ def _tabulate(
             status(scan),
             times.stamp(scan.first, scan.machine),
             times.stamp(scan.last, scan.machine),
+            "; ".join(f"{axis} {order}" for axis, order in scan.order.items()),
         ]
         for scan in scans
     ]

@@ -84,5 +84,5 @@ def _standing(*columns: ColumnElement[int]) -> Select[Any]:
     """Return a query of rows of arrangements that were not undone."""
     row, whole = tables.arranged, tables.arrangement
     standing = row.join(whole, whole.c.id == row.c.arrangement_id)
-    query: Select[Any] = select(*columns).select_from(standing)
+    query: Select[Any] = select().add_columns(*columns).select_from(standing)
     return query.where(whole.c.undone_us.is_(None))

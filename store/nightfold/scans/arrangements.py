@@ -58,6 +58,17 @@ def arrangements_of(connection: Connection, scan_id: int) -> tuple[Arrangement, 
     return tuple(read_arrangements(connection, whole.c.id.in_(own), whole.c.undone_us.is_(None)))
 
 
+def arranged_numbers(connection: Connection) -> dict[int, tuple[int, ...]]:
+    """Return the numbers of the arrangements that made each scan what it is."""
+    row, whole = tables.arranged, tables.arrangement
+    query = select(row.c.to_scan, row.c.arrangement_id).join(whole, whole.c.id == row.c.arrangement_id)
+    found: dict[int, tuple[int, ...]] = {}
+    standing = query.where(whole.c.undone_us.is_(None)).distinct().order_by(row.c.arrangement_id)
+    for step in connection.execute(standing):
+        found[step.to_scan] = (*found.get(step.to_scan, ()), step.arrangement_id)
+    return found
+
+
 def where_gone(connection: Connection, scan_id: int) -> Arrangement | None:
     """Return the arrangement that took the last shots of a scan, if one did."""
     row, whole = tables.arranged, tables.arrangement

@@ -12,7 +12,7 @@ from nightfold import tables
 from nightfold.errors import ChoiceNeeded, NotFound
 from nightfold.ledger.pins import kept_scans
 from nightfold.ledger.selecting import near_miss, set_aside_now
-from nightfold.scans.arrangements import where_gone
+from nightfold.scans.arrangements import arranged_numbers, where_gone
 from nightfold.scans.scan import Scan
 from nightfold.session import Session
 from nightfold.timestamps import from_us, now_us
@@ -147,10 +147,13 @@ def _read_scans(connection: Connection, session: Session, scan_id: int | None) -
     rows = list(connection.execute(query))
     aside = _set_aside_counts(connection, scan_id)
     newest = {key: _newest_first_us(connection, key) for key in {row.sequence_id for row in rows}}
-    return [_make_scan(row, session, aside.get(row.id, 0), newest) for row in rows]
+    arranged = arranged_numbers(connection)
+    return [_make_scan(row, session, aside.get(row.id, 0), newest, arranged.get(row.id, ())) for row in rows]
 
 
-def _make_scan(row: Row[Any], session: Session, aside: int, newest: Mapping[int, int]) -> Scan:
+def _make_scan(
+    row: Row[Any], session: Session, aside: int, newest: Mapping[int, int], arranged: tuple[int, ...]
+) -> Scan:
     return Scan(
         id=row.id,
         label=row.label,
@@ -164,6 +167,7 @@ def _make_scan(row: Row[Any], session: Session, aside: int, newest: Mapping[int,
         first=from_us(row.first_us),
         last=from_us(row.last_us),
         complete=_is_complete(row, newest[row.sequence_id]),
+        arranged=arranged,
         _session=session,
         _machine_id=row.machine_id,
     )

@@ -45,6 +45,8 @@ class Scan:
     first, last : datetime
     complete : bool
         Whether no more shots are expected.
+    arranged : tuple of int
+        Numbers of the joins and splits that made it what it is.
     """
 
     id: int
@@ -59,6 +61,7 @@ class Scan:
     first: datetime
     last: datetime
     complete: bool
+    arranged: tuple[int, ...]
     _session: Session = field(compare=False)
     _machine_id: int = field(compare=False)
 
@@ -81,14 +84,14 @@ class Scan:
     def order(self) -> dict[str, str]:
         """Whether the points of each axis were taken in order: 'rising', 'falling' or 'mixed'.
 
-        A drift in time can look like a function of an axis that is not mixed. Axes of text or truth, and of fewer than 3
-        points, are left out.
+        A drift in time can look like a function of an axis that is not mixed. Axes of text or truth, and of fewer than
+        3 points, are left out.
         """
         return self._details.order
 
     @cached_property
     def arrangements(self) -> tuple[Arrangement, ...]:
-        """The joins and splits that made the scan what it is, oldest first."""
+        """The joins and splits that made the scan what it is, oldest first, with who, when and why."""
         with self._session.reading() as connection:
             return arrangements_of(connection, self.id)
 
