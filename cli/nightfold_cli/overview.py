@@ -7,7 +7,7 @@ GROUPS = (
         "take shots in",
         (
             ("new", "make a store, and a machine card if asked"),
-            ("take", "take shots from files into the store"),
+            ("take", "take shots, or sensors, from files into the store"),
             ("set-aside", "leave shots out of results, or put them back"),
             ("amend", "tell the history of a shot, or correct its settings"),
             ("join", "make one scan of several, or take that back"),
@@ -23,6 +23,7 @@ GROUPS = (
             ("scan", "show one scan: its points and a chart"),
             ("shots", "list shots, or show one in full"),
             ("edits", "list the settings that people changed"),
+            ("sensors", "list the sensors, or chart one over time"),
             ("derived", "list the quantities that the card derives of others"),
             ("sequence", "show the steps of a sequence in time, or what differs"),
             ("notes", "find notes by words, subject or time"),

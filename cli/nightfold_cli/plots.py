@@ -7,7 +7,7 @@ The functions return lines made of runs of text with a role; what a role looks l
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
 from nightfold_cli.canvas import ASCII, UNICODE, Canvas, Glyphs, Line
@@ -27,6 +27,8 @@ class Points:
         Positions; points that are not finite are left out.
     spread : sequence of float
         Half the length of the bar through each point; 0 or nan for none.
+    low, high : sequence of float
+        Ends of the bars, where they are not as far below as above.
     flagged : sequence of bool
         Points drawn as a cross.
     """
@@ -35,6 +37,16 @@ class Points:
     y: Sequence[float]
     spread: Sequence[float] = ()
     flagged: Sequence[bool] = ()
+    low: Sequence[float] = ()
+    high: Sequence[float] = ()
+
+    def bars(self) -> list[tuple[float, float, float]]:
+        """Return x, lower and upper end of every bar that has some length."""
+        if self.low:
+            bars = list(zip(self.x, self.low, self.high, strict=True))
+        else:
+            bars = [(x, y - half, y + half) for x, y, half in zip(self.x, self.y, self.spread, strict=False)]
+        return [(x, low, high) for x, low, high in bars if _finite(x, low, high) and high > low]
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,6 +100,8 @@ class Chart:
         Size in characters, labels included.
     unicode : bool
         Whether braille and other signs beyond ASCII may be used.
+    ticks : callable
+        Ticks of the x axis between two ends, at most so many.
     """
 
     points: Points
@@ -97,6 +111,7 @@ class Chart:
     height: int = 15
     curve: tuple[Sequence[float], Sequence[float]] | None = None
     unicode: bool = True
+    ticks: Callable[[float, float, int], Ticks] = ticks_between
     glyphs: Glyphs = field(init=False)
 
     def __post_init__(self) -> None:
@@ -111,7 +126,7 @@ class Chart:
         if self.curve is not None:
             _draw_curve(canvas, frame, *self.curve)
         _draw_points(canvas, frame, self.points, self.glyphs)
-        across = ticks_between(frame.low_x, frame.high_x, max(2, canvas.width // 10))
+        across = self.ticks(frame.low_x, frame.high_x, max(2, canvas.width // 10))
         up = ticks_between(frame.low_y, frame.high_y, max(2, canvas.height // 2))
         rows = {
             frame.cell(canvas, frame.low_x, at)[1]: name
@@ -171,9 +186,7 @@ class Chart:
         if not kept:
             return None
         xs, ys = [x for x, _ in kept], [y for _, y in kept]
-        for x, y, spread in zip(self.points.x, self.points.y, self.points.spread, strict=False):
-            if _finite(x, y, spread):
-                ys += [y - spread, y + spread]
+        ys += [end for _, low, high in self.points.bars() for end in (low, high)]
         if self.curve is not None:
             ys += [y for y in self.curve[1] if math.isfinite(y)]
         return Frame(*_widened(min(xs), max(xs)), *_widened(min(ys), max(ys)))
@@ -231,13 +244,10 @@ def _draw_curve(canvas: Canvas, frame: Frame, x: Sequence[float], y: Sequence[fl
 def _draw_points(canvas: Canvas, frame: Frame, points: Points, glyphs: Glyphs) -> None:
     """Draw the bars of all points, then their marks on top."""
     flagged = list(points.flagged) or [False] * len(points.x)
-    spread = list(points.spread) or [0.0] * len(points.x)
-    for x, y, half in zip(points.x, points.y, spread, strict=True):
-        if _finite(x, y, half) and half > 0:
-            column, top = frame.cell(canvas, x, y + half)
-            bottom = frame.cell(canvas, x, y - half)[1]
-            for row in range(top, bottom + 1):
-                canvas.put(column, row, glyphs.bar, "data")
+    for x, low, high in points.bars():
+        column, top = frame.cell(canvas, x, high)
+        for row in range(top, frame.cell(canvas, x, low)[1] + 1):
+            canvas.put(column, row, glyphs.bar, "data")
     for x, y, cross in zip(points.x, points.y, flagged, strict=True):
         if _finite(x, y):
             canvas.put(*frame.cell(canvas, x, y), glyphs.flagged if cross else glyphs.mark, "data")

@@ -29,7 +29,7 @@ def shot(seconds: float, k: int = 0, **more: Any) -> dict[str, Any]:
     } | more  # fmt: skip
 
 
-def reading(seconds: float, machine: str = "heron", **readings: Any) -> dict[str, Any]:
+def reading(seconds: float, machine: str = "heron", /, **readings: Any) -> dict[str, Any]:
     return {"machine": machine, "at": moment(seconds), "readings": readings}
 
 

@@ -28,6 +28,7 @@ HELP = "list shots, or show one in full"
 EXAMPLES = (
     "nightfold shots -p coil_current -o atom_number --since 2026-10-05",
     "nightfold shots --scan loss-coarse -o atom_number --set-aside",
+    "nightfold shots -o atom_number --sensor room_temperature --align mean",
     "nightfold shots 5f3a9c0e",
 )
 _ON_SCREEN = 40
@@ -46,6 +47,14 @@ def add_arguments(parser: ArgumentParser) -> None:
     parser.add_argument(
         "-o", "--observable", metavar="NAME", action="append", default=[], help="with this reading"
     )
+    parser.add_argument(
+        "--sensor", metavar="NAME", action="append", default=[], help="with what this sensor showed"
+    )
+    parser.add_argument(
+        "--align",
+        choices=("nearest", "mean"),
+        help="the reading nearest to the start of the shot (the default), or the mean over the shot",
+    )
     parser.add_argument("--machine", metavar="NAME", help="of this machine only")
     parser.add_argument("--sequence", metavar="NAME", help="of this sequence only")
     parser.add_argument("--scan", metavar="KEY", help="of this scan only")
@@ -60,6 +69,8 @@ def add_arguments(parser: ArgumentParser) -> None:
 def run(args: Namespace) -> int:
     """List shots, the newest last, or show the one that was named."""
     screen = Screen.here(args.json)
+    if args.align and not args.sensor:
+        raise UsageError("--align says how sensors are read; name one with --sensor")
     if args.uid and _filters(args):
         raise UsageError(f"a shot is shown in full; {_filters(args)[0]} is for lists")
     with opened(args, screen) as store:
@@ -75,7 +86,19 @@ def run(args: Namespace) -> int:
 
 def _filters(args: Namespace) -> list[str]:
     """Return the options that were given which narrow a list."""
-    names = ("parameter", "observable", "machine", "sequence", "scan", "since", "until", "limit", "set_aside")
+    names = (
+        "parameter",
+        "observable",
+        "sensor",
+        "align",
+        "machine",
+        "sequence",
+        "scan",
+        "since",
+        "until",
+        "limit",
+        "set_aside",
+    )
     return [f"--{name.replace('_', '-')}" for name in names if getattr(args, name)]
 
 
@@ -95,14 +118,17 @@ def _list(screen: Screen, store: Store, args: Namespace, times: LocalTimes) -> N
         args.parameter,
         [*args.observable, *(f"{name}_stderr" for name in args.observable if screen.terminal)],
         machine=args.machine,
+        sensors=args.sensor,
+        align=args.align or "nearest",
         **chosen,
     )
     rows = _with_machines(store, records(table), args.machine, chosen)
     if screen.json:
         screen.answer({"shots": rows, "units": dict(table.attrs["units"])})
         return
+    wanted = (*args.parameter, *args.observable, *args.sensor)
     cut = not args.limit and screen.terminal and len(rows) > _ON_SCREEN
-    asked = {name: table.attrs["units"].get(name, "") for name in (*args.parameter, *args.observable)}
+    asked = {name: table.attrs["units"].get(name, "") for name in wanted}
     several = args.machine is None and len(store.machines()) > 1
     _draw(
         screen,

@@ -1,4 +1,4 @@
-"""``nightfold take FILE…``: take shots from files into the store."""
+"""``nightfold take FILE…``: take shots, or readings of sensors, from files into the store."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
-from nightfold_cli.failures import REFUSED, explain
+from nightfold_cli.failures import REFUSED, UsageError, explain
 from nightfold_cli.layout import Column
 from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
@@ -22,12 +22,13 @@ if TYPE_CHECKING:
     from nightfold.ledger.outcome import Intake
     from nightfold.store import Store
 
-HELP = "take shots from files into the store"
+HELP = "take shots, or sensors, from files into the store"
 EXAMPLES = (
     "nightfold take shots/*.jsonl",
     "nightfold take monday.jsonl --card heron.toml --new",
     "nightfold take decay.csv --machine heron --sequence hold --swept hold_time \\",
     "      --started-at 2026-10-05T21:14:00+02:00 --cycle 18",
+    "nightfold take --sensors room.jsonl vacuum.csv --machine heron",
 )
 _SHOWN = 20
 _LISTED = 50
@@ -38,12 +39,15 @@ _TABLE_OPTIONS = (
     ("--parameters", "NAME,…", "columns that are settings; 'rest' for all not spoken for"),
     ("--observables", "NAME,…", "columns that were measured; 'rest' for all not spoken for"),
     ("--swept", "NAME,…", "settings varied on purpose"),
-    ("--started", "COLUMN", "column with the time of the shot (default: started)"),
+    ("--started", "COLUMN", "column with the time (default: started; at for sensors)"),
     ("--uid", "COLUMN", "column with the unique name of the shot (default: uid)"),
     ("--started-at", "TIME", "time of the first row, with offset, where no column tells it"),
     ("--columns", "NAME,…", "names of all columns, for a table without a head line"),
     ("--delimiter", "SIGN", "what parts the columns: , ; tab or space (default: found out)"),
 )
+_SHOTS_ONLY = (
+    "sequence", "scan", "parameters", "observables", "swept", "uid", "started_at", "columns", "cycle",
+)  # fmt: skip
 _DELIMITERS = {"tab": "\t", "\\t": "\t", "space": " "}
 
 
@@ -54,6 +58,9 @@ def add_arguments(parser: ArgumentParser) -> None:
     )
     parser.add_argument("--card", metavar="CARD", type=Path, help="use this machine card from now on")
     parser.add_argument("--new", action="store_true", help="make the store if it is not there yet")
+    parser.add_argument(
+        "--sensors", action="store_true", help="the files hold readings of sensors, which belong to no shot"
+    )
     table = parser.add_argument_group(
         "tables (.csv, .tsv, .dat, .txt), whose columns say less than a record does"
     )
@@ -68,6 +75,12 @@ def run(args: Namespace) -> int:
 
     screen = Screen.here(args.json)
     total = _Total()
+    if args.sensors and (
+        wrong := next((name for name in _SHOTS_ONLY if getattr(args, name) is not None), "")
+    ):
+        raise UsageError(
+            f"--{wrong.replace('_', '-')} is for shots; --sensors takes readings that belong to none"
+        )
     if args.card:
         read_card(args.card)
     with opened(args, screen, create=args.new) as store:
@@ -79,12 +92,14 @@ def run(args: Namespace) -> int:
                 total.add_unreadable(outcome)
             else:
                 total.add(name, outcome)
-        hint = zone_hint(store, [name for name, *_ in total.rows])
+        hint = "" if args.sensors else zone_hint(store, [name for name, *_ in total.rows])
     if screen.json:
         screen.answer({**total.counts(), "refused": total.refused})
     else:
         total.show(screen)
-    _list_refused(screen, total)
+        if args.sensors and total.rows:
+            screen.note("new and known are readings, refused are lines")
+    _list_refused(screen, total, readings=args.sensors)
     if hint:
         screen.say(hint)
     return total.code
@@ -149,6 +164,14 @@ def _take(store: Store, name: str, args: Namespace) -> Intake | Unreadable:
         with Progress(
             f"taking {path.name}", path.stat().st_size if path.is_file() else 0, sys.stderr
         ) as progress:
+            if args.sensors:
+                return store.take_sensor_file(
+                    name,
+                    machine=args.machine,
+                    at=args.started or "at",
+                    delimiter=_DELIMITERS.get(args.delimiter, args.delimiter),
+                    progress=reached.then(progress),
+                )
             return store.take_file(name, columns=_columns(args), progress=reached.then(progress))
     except KeyboardInterrupt as stop:
         raise KeyboardInterrupt(_how_far(path, reached.byte)) from stop
@@ -210,7 +233,7 @@ def _columns(args: Namespace) -> CsvColumns:
     return CsvColumns(**{key: value for key, value in named.items() if value is not None})
 
 
-def _list_refused(screen: Screen, total: _Total) -> None:
+def _list_refused(screen: Screen, total: _Total, *, readings: bool) -> None:
     """List what was refused, on stderr; as JSON it is in the answer."""
     if screen.json or not total.refused:
         return
@@ -221,9 +244,9 @@ def _list_refused(screen: Screen, total: _Total) -> None:
     if len(lines) > most:
         screen.say(f"and {len(lines) - most} more reasons; 2> FILE lists them all")
     if any(item["line"] for item in total.refused):
-        kept = sum(total.counts().values())
+        kept = f"{sum(total.counts().values())}{' readings' if readings else ''} kept"
         refused = sum(row[4] for row in total.rows)
-        screen.say(f"{refused} refused, {kept} kept; mend the refused ones and take the file again")
+        screen.say(f"{refused} refused, {kept}; mend the refused ones and take the file again")
 
 
 def _names(text: str | None) -> tuple[str, ...] | Literal["rest"] | None:
