@@ -24,7 +24,7 @@ LITTLE, MANY = 24, 40  # settings at rest that are shown all the same, and movin
 RECENT = timedelta(days=7)
 _GAP = "  "
 _WIDEST_NAME = 24
-_LEAST_BAR = 12
+_LEAST_NAME, _LEAST_BAR = 8, 12
 
 
 @dataclass(frozen=True, slots=True)
@@ -160,7 +160,7 @@ def duration_text(step: TimelineStep) -> str:
 
 def _bar_width(steps: Sequence[TimelineStep], width: int) -> int:
     """Return how many cells there are for the bars on a screen."""
-    return max(_LEAST_BAR, width - len(_indent(steps)) - _name_width(steps) - len(_GAP))
+    return max(1, width - len(_indent(steps)) - _name_width(steps, width) - len(_GAP))
 
 
 def _indent(steps: Sequence[TimelineStep]) -> str:
@@ -171,8 +171,10 @@ def _indent(steps: Sequence[TimelineStep]) -> str:
     return " " * (first + second + 2 + 2 * len(_GAP))
 
 
-def _name_width(steps: Sequence[TimelineStep]) -> int:
-    return min(_WIDEST_NAME, max(cell_width(printable(step.name)) for step in steps))
+def _name_width(steps: Sequence[TimelineStep], width: int) -> int:
+    """Return the room for names: on a narrow screen less, so that there is some for the bars."""
+    longest = max(cell_width(printable(step.name)) for step in steps)
+    return min(_WIDEST_NAME, longest, max(_LEAST_NAME, width - len(_indent(steps)) - len(_GAP) - _LEAST_BAR))
 
 
 def _rows(
@@ -186,7 +188,7 @@ def _rows(
     begun, unit = starts(durations)
     placed, _ = bars(durations, _bar_width(steps, screen.width))
     first = max(len(f"start ({unit})"), *map(len, begun))
-    indent, names = _indent(steps), _name_width(steps)
+    indent, names = _indent(steps), _name_width(steps, screen.width)
     second = len(indent) - first - 2 - 2 * len(_GAP)
     head = f"{f'start ({unit})':<{first}}{_GAP}{'duration':>{second}}  {_GAP}step"
     yield [(head, "data")]

@@ -235,6 +235,8 @@ def test_what_is_not_there(store: Store) -> None:
         NotFound, match="shot 'heron-hold-0000': it ran another sequence, wanted one of 'look'"
     ):
         view.timeline(shot="heron-hold-0000")
+    with pytest.raises(NotFound, match="shot 'heron-look-0000': it ran version 1, wanted 3"):
+        view.timeline(3, shot="heron-look-0000")
     assert store.sequences("egret").sequence.tolist() == ["look"]
 
 

@@ -16,7 +16,7 @@ from nightfold.store import Store
 def seconds(store: Store, **choice: Any) -> list[float]:
     with store._session.reading() as connection:
         rows, _ = select_shots(connection, Selection(**choice))
-        return shot_durations(connection, rows).tolist()
+        return [float(one) for one in shot_durations(connection, rows)]
 
 
 def record(minute: int, *durations: Any, sequence: str = "look", **fields: Any) -> dict[str, Any]:

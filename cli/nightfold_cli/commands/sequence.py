@@ -83,6 +83,8 @@ def _check(args: Namespace) -> None:
     ]
     if args.name is None and given:
         raise UsageError(f"{given[0]} is for one sequence; found no NAME")
+    if args.version is not None and args.shot is not None:
+        raise UsageError("--version and --shot: found both, wanted one")
     if args.against is not None and args.all:
         raise UsageError("--all and --against: all that differs is shown anyway; leave out --all")
 
@@ -156,6 +158,7 @@ def _show(screen: Screen, view: SequenceView, args: Namespace, times: LocalTimes
         _versions(screen, view, shown, times)
         if len(shown) < len(view.versions):
             screen.note(f"{len(view.versions) - len(shown)} earlier versions not shown; --all shows them")
+        screen.note("--against N shows what differs from version N")
     screen.note(times.note([view.machine]))
 
 
@@ -210,8 +213,7 @@ def _versions(
 
 def _compare(screen: Screen, view: SequenceView, args: Namespace, times: LocalTimes) -> None:
     """Show what differs between two shots, and nothing else."""
-    new = args.version if args.shot is None else view.timeline(args.version, shot=args.shot).uid
-    comparison = view.compare(_key(view, args.against, screen), new)
+    comparison = view.compare(_key(view, args.against), args.version if args.shot is None else args.shot)
     if screen.json:
         answer = {"name": view.name, "machine": view.machine, **comparisons.entry(comparison)}
         screen.answer({"comparison": answer})
@@ -239,7 +241,7 @@ def _compare(screen: Screen, view: SequenceView, args: Namespace, times: LocalTi
         )
 
 
-def _key(view: SequenceView, text: str, screen: Screen) -> int | str:
+def _key(view: SequenceView, text: str) -> int | str:
     """Return what ``--against`` names: digits are a version where there is one of that number, else a shot."""
     if not (text.isascii() and text.isdigit()) or not 1 <= int(text) <= len(view.versions):
         if text.isdigit() and len(text) < 4:
