@@ -184,6 +184,7 @@ def parse_card(text: str, *, source: str = "card", checked: bool = False) -> Mac
     observables = {name: _observable(name, entry) for name, entry in table.entries("observables")}
     for name in parameters.keys() & observables.keys():
         raise table.error(("observables", name), "a name that is also a parameter", "one or the other")
+    _check_clouds(table, observables)
     derived = {name: _derived(name, entry) for name, entry in table.entries("derived")}
     for name in derived.keys() & (parameters.keys() | observables.keys()):
         kind = "a parameter" if name in parameters else "an observable"
@@ -267,6 +268,18 @@ def _parameter(name: str, entry: Table) -> NamedQuantity:
     return NamedQuantity(
         name, unit, low, high, entry.text("description") or "", "number" if numeric else kind
     )
+
+
+def _check_clouds(table: Table, observables: Mapping[str, NamedQuantity]) -> None:
+    """Refuse clouds of one observable in different units."""
+    units: dict[str, str] = {}
+    for name, entry in observables.items():
+        if entry.unit is None:
+            continue
+        known = units.setdefault(without_cloud(name), entry.unit)
+        if known != entry.unit:
+            wanted = f"{known!r}: all clouds of {without_cloud(name)} have one unit"
+            raise table.error(("observables", name, "unit"), repr(entry.unit), wanted)
 
 
 def _observable(name: str, entry: Table) -> NamedQuantity:

@@ -240,3 +240,16 @@ def test_order_does_not_matter_and_every_shot_appears_once(
         zip(frame["shot_id"], frame["atom_number"], strict=True)
     )
     assert np.isnan(flat[ids < 0]).all()
+
+
+def test_clouds_in_another_unit_stay_apart() -> None:
+    frame = table({"x": [1.0, 2.0]}, "temperature[up]")
+    frame["temperature[down]"] = [0.4, 0.5]
+    names = ["temperature[up]", "temperature[down]"]
+    apart = build(frame, "x", observables=names, units={names[0]: "nK", names[1]: "uK"})
+    assert apart["temperature"].sel(cloud="up").values.tolist() == [100.0, 101.0]
+    assert apart["temperature[down]"].values.tolist() == [0.4, 0.5]
+    assert apart["temperature[down]"].attrs["units"] == "uK"
+    joined = build(frame, "x", observables=names, units={names[0]: "", names[1]: "nK"})
+    assert joined["temperature"].sel(cloud="down").values.tolist() == [0.4, 0.5]
+    assert joined["temperature"].attrs["units"] == "nK"
