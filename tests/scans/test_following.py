@@ -97,3 +97,23 @@ def test_a_stream_goes_on_after_a_correction(store: Store) -> None:
     store.take(rows)
     (found,) = store.scans()
     assert (found.shots, 60.25 in points(store, found.id)) == (27, True)
+
+
+def test_scans_arranged_by_hand_follow_and_stay(anywhere: str) -> None:
+    with open_store(anywhere) as store:
+        first = [shot(n, 60.0 + 0.5 * (n % 9), swept=["coil"]) for n in range(18)]
+        later = [shot(n + 2000, 60.0 + 0.5 * (n % 9), swept=["coil"]) for n in range(18)]
+        store.take([*first, *later])
+        joined = store.join_scans([scan.id for scan in store.scans()], reason="one night", by="ann")
+        assert store.correct(["shot003", "shot2003"], {"coil": 61.75}, "read off the supply") == 2
+        (found,) = store.scans()
+        assert (found.id, found.shots, axes(store, found.id)) == (joined.id, 36, ["coil"])
+        assert 61.75 in points(store, found.id)
+        rows = [event for event in store.history("shot2003").events if event.kind == "join"]
+        assert [(event.new, event.by, event.why) for event in rows] == [(str(joined.id), "ann", "one night")]
+        assert rows[0].old != rows[0].new
+        number = int(store.arrangements()["number"].iloc[0])
+        store.undo_arrangement(number, by="bob")
+        assert [scan.shots for scan in store.scans()] == [18, 18]
+        undone = store.history("shot2003").events[-1]
+        assert (undone.kind, undone.old, undone.by) == ("join undone", str(joined.id), "bob")

@@ -114,7 +114,7 @@ def check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) 
     if bytes(
         stored.values_digest
     ) != shot.values_digest and shot.values_digest not in digests_before(connection, stored.id):
-        raise _differing_setting(connection, stored, shot, taken)
+        raise _differing_setting(connection, stored, shot, f"{taken}; 'nightfold amend' corrects them")
     if bool(stored.reference) != shot.reference:
         raise RecordError("reference", str(shot.reference), taken)
     label = label_of(connection, stored.id, stored.scan_id)
