@@ -130,7 +130,7 @@ def _thursday() -> tuple[Work, ...]:
         told=("relative", "depth"),
     )
     return (
-        Work(begun, "mislabelled"),
+        Work(begun, "mislabelled", notes={-1: "coffee"}),
         Work(replace(ended, label="loss-chekc"), "mislabelled", wait=(12, 20)),
         Work(drifting, "drifting", drift=-0.2, references_every=10, late=LATE),
     )
@@ -144,8 +144,8 @@ def _friday() -> tuple[Work, ...]:
     homing = Block("hold-in-trap", {"coil_current": _homing()}, 1, "loss-homing", shuffled=False)
     single = Block("hold-in-trap", {"coil_current": (61.37,)}, 1, "single-look")
     return (
-        Work(begun, "misnamed", machine=WRONG_NAME),
-        Work(ended, "misnamed", notes={0: "the control program had forgotten what we are called"}),
+        Work(begun, "misnamed", machine=WRONG_NAME, notes={-1: "these went into the record under Heron"}),
+        Work(ended, "misnamed", notes={0: "control program knows our name again"}),
         Work(replace(homing, told=("center",)), "adaptive"),
         Work(single),
     )
