@@ -214,6 +214,19 @@ def test_a_card_cannot_change_what_bare_numbers_meant(store: Store, tmp_path: Pa
         )
 
 
+def test_a_sensor_has_no_name_that_the_card_derives(store: Store, tmp_path: Path) -> None:
+    card = tmp_path / "heron.toml"
+    card.write_text(
+        'machine = "heron"\n[parameters.aom]\nunit = "MHz"\n[derived.detuning]\nexpression = "2 * aom"\n',
+        encoding="utf-8",
+    )
+    store.use_card(card)
+    (line,) = store.take_sensors([record(0, detuning=1.0)]).refused
+    assert line.reason == (
+        "readings.detuning: found a sensor, wanted another name: 'detuning' is a parameter of heron"
+    )
+
+
 @pytest.mark.parametrize(
     ("wrong", "reason"),
     [
