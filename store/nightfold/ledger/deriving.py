@@ -12,13 +12,13 @@ from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import TYPE_CHECKING, Any
 
-from sqlalchemy import ColumnElement, Connection, Table, delete, exists, insert, select, update
+from sqlalchemy import ColumnElement, Connection, Row, Select, Table, delete, exists, insert, select, update
 
 from nightfold import tables
 from nightfold.card import MachineCard, settle_derived
 from nightfold.errors import ChoiceNeeded
 from nightfold.ledger.cards import newest_cards, stored_card, stored_derived
-from nightfold.ledger.columns import MadeOf, Named
+from nightfold.ledger.columns import MadeOf, Named, setting_columns
 from nightfold.timestamps import from_us
 
 if TYPE_CHECKING:
@@ -123,26 +123,31 @@ def declared_names(connection: Connection, shot_id: int) -> set[str]:
 
 
 def swept_inputs(connection: Connection, sequence_id: int) -> dict[int, frozenset[int]]:
-    """Return the parameters behind the derived ones that shots of a sequence declare as swept, by shot."""
+    """Return the parameters that were swept because shots of a sequence declare a derived one as swept, by shot.
+
+    They are those of which it is made that took several values within the scan.
+    """
     table, shot, parameter = tables.swept_derived, tables.shot, tables.parameter
-    query = (
-        select(table.c.shot_id, parameter.c.name, parameter.c.machine_id)
-        .join(shot, shot.c.id == table.c.shot_id)
+    query: Select[Any] = (
+        select(shot.c.id, shot.c.set_id, shot.c.scan_id, parameter.c.name, parameter.c.machine_id)
+        .join(table, table.c.shot_id == shot.c.id)
         .join(parameter, parameter.c.id == table.c.parameter_id)
         .where(shot.c.sequence_id == sequence_id)
     )
-    rows = list(connection.execute(query))
-    if not rows:
-        return {}
-    makings = Makings(connection)
-    behind = {
-        name: {number for item in made_of.settings for number in item.ids}
-        for name in {row.name for row in rows}
-        if (made_of := makings.of(name, [rows[0].machine_id])) is not None
-    }
+    by_sweep: dict[tuple[int | None, str, int], list[Row[Any]]] = {}
+    for row in connection.execute(query):
+        by_sweep.setdefault((row.scan_id, row.name, row.machine_id), []).append(row)
+    makings = Makings(connection) if by_sweep else None
     found: dict[int, frozenset[int]] = {}
-    for row in rows:
-        found[row.shot_id] = found.get(row.shot_id, frozenset()) | behind.get(row.name, set())
+    for (_, name, machine_id), rows in by_sweep.items():
+        made_of = makings.of(name, [machine_id]) if makings is not None else None
+        inputs = made_of.settings if made_of is not None else ()
+        columns = setting_columns(connection, rows, inputs, None)
+        moved = {
+            number for item in inputs if len(set(columns[item.name].tolist())) > 1 for number in item.ids
+        }
+        for row in rows:
+            found[row.id] = found.get(row.id, frozenset()) | moved
     return found
 
 
