@@ -49,8 +49,7 @@ def settings_of(record: Record) -> Iterator[tuple[str, Any]]:
             seen[step["name"]] += 1
             number = seen[step["name"]]
             place = step["name"] if number == 1 else f"{step['name']}#{number}"
-            if "duration" in step:
-                yield f"{place}.duration", step["duration"]
+            yield f"{place}.duration", step["duration"]
             for name, value in step["settings"].items():
                 yield f"{place}.{name}", value
 

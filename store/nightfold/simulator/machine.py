@@ -145,7 +145,10 @@ class Recorder:
         return {name: item for name, item in record.items() if item is not None}
 
     def _write_sequence(self, changed: Mapping[str, Value]) -> Any:
-        return write_steps(self.spec.name, self.spec.steps, changed) if self.spec.steps else self.spec.name
+        if not self.spec.steps:
+            return self.spec.name
+        hold_ms = float(changed.get("hold_time", self.settings["hold_time"]))
+        return write_steps(self.spec.name, self.spec.steps, changed, hold_ms)
 
     def _write_value(self, name: str, value: Value) -> Any:
         """Return a setting as the control program writes it: bare, or with a unit."""

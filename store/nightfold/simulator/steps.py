@@ -17,7 +17,7 @@ STEP_SETTINGS: dict[str, Value] = {"evaporate#3.end_power": 0.42, "evaporate#3.d
 
 @dataclass(frozen=True)
 class Step:
-    """One step: name, duration in seconds (None where it is not stated), settings."""
+    """One step: name, duration in seconds (None: see `HOLD`), settings."""
 
     name: str
     duration_s: float | None
@@ -118,10 +118,10 @@ _FIELD = Step(
     "field", 0.035, {"settle_time": (60, "ms"), "ramp": ([0, 0.02, 0.1, 0.26, 0.5, 0.74, 0.9, 0.98, 1], None)}
 )
 _LOOK = (
-    Step("release", None),
+    Step("release", 0.012),
     Step(
         "image",
-        None,
+        1.62,
         {
             "repump_pulse": (12, "us"),
             "bias": (0.86, "G"),
@@ -132,8 +132,10 @@ _LOOK = (
     ),
 )
 
-HOLD_IN_TRAP = (*_COOL, *_EVAPORATE, _FIELD, Step("hold", None, {"gradient_current": (2.15, "A")}), *_LOOK)
-"""The steps of ``hold-in-trap``; the durations of its last three are the settings that scans sweep."""
+HOLD = "hold"
+"""The step that lasts as long as hold_time says, wherever it stands without a duration of its own."""
+HOLD_IN_TRAP = (*_COOL, *_EVAPORATE, _FIELD, Step(HOLD, None, {"gradient_current": (2.15, "A")}), *_LOOK)
+"""The steps of ``hold-in-trap``."""
 
 RF_TRANSFER = (
     *_COOL,
@@ -167,21 +169,22 @@ INSIDE_STEPS = frozenset(
 """Settings that the sequences written wholly in steps say there, and no longer among their parameters."""
 
 
-def write_steps(name: str, steps: tuple[Step, ...], changed: Mapping[str, Value]) -> dict[str, Any]:
+def write_steps(
+    name: str, steps: tuple[Step, ...], changed: Mapping[str, Value], hold_ms: float
+) -> dict[str, Any]:
     """Return a sequence in full, with those settings and durations of steps that are not nominal."""
     seen: dict[str, int] = {}
     written = []
     for step in steps:
         seen[step.name] = seen.get(step.name, 0) + 1
         place = step.name if seen[step.name] == 1 else f"{step.name}#{seen[step.name]}"
-        item: dict[str, Any] = {"name": step.name}
-        if step.duration_s is not None:
-            item["duration"] = {"value": changed.get(f"{place}.duration", step.duration_s), "unit": "s"}
-        item["settings"] = {
+        usual_s = round(hold_ms * 1e-3, 6) if step.duration_s is None else step.duration_s
+        duration = {"value": changed.get(f"{place}.duration", usual_s), "unit": "s"}
+        settings = {
             key: _with_unit(changed.get(f"{place}.{key}", value), unit)
             for key, (value, unit) in step.settings.items()
         }
-        written.append(item)
+        written.append({"name": step.name, "duration": duration, "settings": settings})
     return {"name": name, "steps": written}
 
 
