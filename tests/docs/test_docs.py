@@ -121,7 +121,7 @@ def test_the_tutorial_runs(in_folder: Path) -> None:
     run_python(DOCS / "tutorial.md")
 
 
-@pytest.mark.parametrize("page", ["python.md", "fits.md"])
+@pytest.mark.parametrize("page", ["python.md", "fits.md", "sensors.md"])
 def test_python_examples_run(page: str, four_nights: Path, in_folder: Path) -> None:
     shutil.copytree(four_nights, in_folder, dirs_exist_ok=True)
     run_python(DOCS / page)
