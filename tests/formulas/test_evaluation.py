@@ -125,6 +125,16 @@ def test_settings_alone_have_no_uncertainty() -> None:
     assert np.isnan(stderr).all()
 
 
+def test_a_difference_leaves_no_dust() -> None:
+    aom = [74.95 + k / 100 for k in range(2000)]
+    value, _ = run(settle("2*p - 160"), p=(aom, []))
+    assert [repr(each) for each in value.tolist()] == [repr(float(f"{2 * each - 160:.10f}")) for each in aom]
+    value, _ = run(settle("p - 1"), p=([1e300, 384230406.3730017, 1 + 1e-13, 0.0, 1e-30], []))
+    assert value.tolist() == pytest.approx([1e300, 384230405.3730017, 1e-13, -1.0, -1.0], rel=1e-2)
+    value, _ = run(settle("p + p"), p=([1e-30, 1e-300, 3e-324, 1e307, 8.5e307], []))
+    assert value.tolist() == [2e-30, 2e-300, 1e-323, 2e307, 1.7e308]
+
+
 def test_ten_thousand_shots_take_a_moment() -> None:
     n, random = 10_000, np.random.default_rng(1)
     derived = settle("(x - y) / (x + y)")

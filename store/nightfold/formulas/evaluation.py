@@ -150,9 +150,22 @@ def _numeric() -> dict[str, Callable[..., Any]]:
 
     names = ("sqrt", "exp", "log", "log10", "sin", "cos", "tan", "arctan", "arctan2", "abs", "power")
     functions: dict[str, Callable[..., Any]] = {name: getattr(np, name) for name in names}
+    functions["plus"] = lambda a, b: _without_dust(a + b, a, b)
+    functions["minus"] = lambda a, b: _without_dust(a - b, a, b)
     functions["min"] = lambda *items: _reduce(np.minimum, items)
     functions["max"] = lambda *items: _reduce(np.maximum, items)
     return functions
+
+
+def _without_dust(result: Any, *terms: Any) -> Any:
+    """Return a sum rounded to 15 digits of its largest term: 2*74.95 - 160 is -10.1, not -10.099999999999994."""
+    import numpy as np
+
+    largest = np.max([np.broadcast_to(np.abs(term), np.shape(result)) for term in terms], axis=0)
+    digits = 14 - np.floor(np.log10(largest))
+    scale = 10.0 ** np.clip(digits, 0, 22)
+    rounded = np.round(result * scale) / scale
+    return np.where((digits >= 0) & (digits <= 22), rounded, result)
 
 
 def _uncertain() -> dict[str, Callable[..., Any]]:
@@ -168,7 +181,7 @@ def _uncertain() -> dict[str, Callable[..., Any]]:
         name: np.frompyfunc(getattr(umath, plain.get(name, name)), 2 if name == "arctan2" else 1, 1)
         for name in names
     }
-    functions["power"] = np.frompyfunc(operator.pow, 2, 1)
+    functions |= {"plus": operator.add, "minus": operator.sub, "power": np.frompyfunc(operator.pow, 2, 1)}
     functions["abs"] = np.frompyfunc(lambda a: a if nominal_value(a) >= 0 else -a, 1, 1)
     smaller = np.frompyfunc(lambda a, b: a if nominal_value(a) <= nominal_value(b) else b, 2, 1)
     larger = np.frompyfunc(lambda a, b: a if nominal_value(a) >= nominal_value(b) else b, 2, 1)

@@ -2,7 +2,7 @@
 
 The unit of every part is found with pint when the expression is settled. What is computed afterwards are plain numbers,
 with the factors between units written into the expression: ``2*aom_frequency - 160 kHz`` of MHz becomes
-``2.0*x0 - 160.0*0.001``.
+``minus((2.0 * x0), (160.0 * 0.001))``.
 """
 
 from __future__ import annotations
@@ -19,6 +19,7 @@ DEEPEST = 60
 LARGEST_POWER = 30
 _ARGUMENTS = {"arctan2": (2, 2), "min": (2, 20), "max": (2, 20)}
 _OPERATORS = {ast.Add: "+", ast.Sub: "-", ast.Mult: "*", ast.Div: "/", ast.Pow: "**"}
+_SUMS = {"+": "plus", "-": "minus"}
 _ANGLE = "rad"
 
 
@@ -53,7 +54,8 @@ class Formula:
     names : tuple of str
         Inputs: ``x0`` is the first.
     python : str
-        A plain expression of ``x0``, ``x1`` …, numbers, ``+ - * /`` and the functions of the language.
+        A plain expression of ``x0``, ``x1`` …, numbers, ``* /``, `plus`, `minus`, `power` and the functions of the
+        language.
     unit : str
         Of the result.
     """
@@ -238,7 +240,7 @@ class _Units:
         sign = _OPERATORS[type(node.op)]
         text = f"{left.text} {sign} {right.text}"
         if sign in "+-":
-            python = f"({left.python} {sign} {_same(left, right, sign)})"
+            python = f"{_SUMS[sign]}({left.python}, {_same(left, right, sign)})"
             return _Part(python, left.unit, text, _constant(sign, left, right))
         if sign == "**":
             return self._power(left, right)
