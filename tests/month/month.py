@@ -55,6 +55,8 @@ expression = "(atom_number[up] - atom_number[down]) / (atom_number[up] + atom_nu
 {more}
 """
 
+AT_REST = {"coil_current": 60.0, "hold_time": 100.0, "aom_frequency": 81.5, "axis": "x", "repump": True}
+
 
 @dataclass
 class TrueShot:
@@ -84,6 +86,7 @@ class Month:
     nights: dict[str, int] = field(default_factory=dict)
     refused: int = 0
     room: dict[datetime, float] = field(default_factory=dict)
+    base: dict[str, Any] = field(default_factory=lambda: dict(AT_REST))
     rng: random.Random = field(default_factory=lambda: random.Random(39))
 
     # ------------------------------------------------------------------ making shots
@@ -91,14 +94,7 @@ class Month:
     def shot(self, when: datetime, sequence: str, night: str, **parameters: Any) -> TrueShot:
         """Add a shot to the truth."""
         uid = f"egret-{len(self.shots):04d}"
-        settings = {
-            "coil_current": 60.0,
-            "hold_time": 100.0,
-            "aom_frequency": 81.5,
-            "axis": "x",
-            "repump": True,
-        }
-        shot = TrueShot(uid, when.astimezone(UTC), sequence, settings | parameters)
+        shot = TrueShot(uid, when.astimezone(UTC), sequence, self.base | parameters)
         self.shots[uid] = shot
         self.nights[night] = self.nights.get(night, 0) + 1
         return shot
@@ -335,7 +331,8 @@ def other_name(month: Month, store: Store) -> None:
 
 
 def references(month: Month, store: Store) -> None:
-    """20 October: reference shots in between; one scan of a single shot."""
+    """20 October: an edit; reference shots in between; one scan of a single shot."""
+    month.base["aom_frequency"] = 81.7
     values = shuffled(month, grid(60.4, 62.2, 20))
     start = at(20, "21:00")
     shots = month.sweep(start, "2026-10-20", "with-references", "with-references#1", values)
@@ -365,7 +362,7 @@ def summer_time_ends(month: Month, store: Store) -> None:
             own = shot.parameters
             local = shot.started.astimezone(VIENNA).replace(tzinfo=None).isoformat()
             number, stderr, _ = shot.readings["atom_number"][0]
-            table.writerow([local, shot.uid, "loss", "autumn", repr(own["coil_current"] * 1000), "0.1", "81.5", "x",
+            table.writerow([local, shot.uid, "loss", "autumn", repr(own["coil_current"] * 1000), "0.1", "81.7", "x",
                             "true", repr(number), repr(stderr)])  # fmt: skip
     from nightfold.intake.csvfile import CsvColumns
 

@@ -31,7 +31,7 @@ def test_the_store_is_the_truth(played: Played) -> None:
     compare_derived(store, month)
     compare_sensors(store, month)
     compare_fits(store, month)
-    compare_edits(store)
+    compare_edits(store, month)
     compare_relative(store, month)
 
 
@@ -146,10 +146,14 @@ def compare_fits(store: Store, month: Month) -> None:
     assert low < 61.3 < high
 
 
-def compare_edits(store: Store) -> None:
-    """Nobody turned a knob this month: sweeps, corrections, units and names are no edits."""
+def compare_edits(store: Store, month: Month) -> None:
+    """One knob was turned; sweeps, corrections, units and names are no edits."""
+    first = min(true.started for true in month.shots.values() if true.parameters["aom_frequency"] == 81.7)
     found = store.edits()
-    assert found[["parameter", "old", "new"]].values.tolist() in ([], [["probe_power", None, 1.25]])
+    assert found[["parameter", "old", "new", "sequence"]].values.tolist() == [
+        ["aom_frequency", 81.5, 81.7, "loss"]
+    ]
+    assert found["at"][0].to_pydatetime() == first
 
 
 def compare_relative(store: Store, month: Month) -> None:
