@@ -6,7 +6,7 @@ import os
 import re
 from argparse import Action, ArgumentParser, ArgumentTypeError, Namespace, RawDescriptionHelpFormatter
 from types import ModuleType
-from typing import TYPE_CHECKING, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn
 
 if TYPE_CHECKING:
     from argparse import _MutuallyExclusiveGroup
@@ -79,6 +79,35 @@ def by_whom(args: Namespace) -> str | None:
         return named or getpass.getuser()
     except (OSError, KeyError):
         return None
+
+
+def add_relative(parser: ArgumentParser) -> None:
+    """Declare the options that relate readings to reference shots."""
+    parser.add_argument(
+        "--relative-to",
+        choices=("reference",),
+        help="divide readings by those of the reference shots around them",
+    )
+    parser.add_argument(
+        "--reference-within",
+        metavar="TIME",
+        default="30 min",
+        type=_span,
+        help="how far a reference shot may be from a shot: '2 h', or seconds (default: 30 min)",
+    )
+
+
+def relation(args: Namespace) -> dict[str, Any]:
+    """Return those options as `Scan.table` and `Store.fit` take them."""
+    return {"relative_to": args.relative_to, "reference_within": args.reference_within}
+
+
+def _span(text: str) -> str | float:
+    """Return seconds if it is a number, else the text."""
+    try:
+        return float(text)
+    except ValueError:
+        return text
 
 
 def named_number(text: str) -> tuple[str, float]:

@@ -31,10 +31,14 @@ class Glyphs:
     corner: str
     zero: str
     shades: str
+    marks: str
+    bars: str
 
 
-UNICODE = Glyphs("●", "×", "│", "│", "┤", "─", "┬", "└", "┈", " ░▒▓█")
-ASCII = Glyphs("o", "x", "|", "|", "+", "-", "+", "+", "-", " .:+#")
+UNICODE = Glyphs("●", "×", "│", "│", "┤", "─", "┬", "└", "┈", " ░▒▓█", "●○▲△", "│╎│╎")
+ASCII = Glyphs("o", "x", "|", "|", "+", "-", "+", "+", "-", " .:+#", "o*#@", "|:|:")
+MOST_SERIES = len(UNICODE.marks)
+"""Series of points that a chart can tell apart by their marks."""
 
 
 class Canvas:

@@ -26,25 +26,27 @@ def chart_of_points(
     height: int,
     unicode: bool,
     curve: tuple[Sequence[float], Sequence[float]] | None = None,
+    observables: Sequence[str] = (),
 ) -> Chart:
     """Return a chart of means with bars of one stderr, and a curve if there is one.
 
-    The names of `y` and of the reading that is drawn are the same.
+    Drawn are the readings that `observables` names, at most four; without them, the one that `y` names.
     """
-    readings = [point.readings[y.name] for point in points]
-    data = Points(
-        [float(point.at[0]) for point in points],
-        [reading.mean for reading in readings],
-        [reading.stderr for reading in readings],
-    )
+    across = [float(point.at[0]) for point in points]
+    series = []
+    for name in observables or (y.name,):
+        readings = [point.readings[name] for point in points]
+        means, bars = [reading.mean for reading in readings], [reading.stderr for reading in readings]
+        series.append(Points(across, means, bars, name=name))
     return Chart(
-        data,
+        series[0],
         x,
         y,
         width=min(width, _WIDEST) - 1,
         height=height,
         curve=curve,
         unicode=unicode,
+        others=series[1:],
     )
 
 

@@ -11,7 +11,7 @@ from nightfold_cli.naming import ambiguous_labels, name_in, name_of
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
-    from nightfold.fits.kept import KeptFit
+    from nightfold.fits.keptfit import KeptFit
     from nightfold.store import Store
 
 
@@ -37,6 +37,11 @@ def slice_lines(fit: KeptFit) -> list[str]:
     return [f"{name} {setting(value)}" for name, value in fit.slice.items()]
 
 
+def relative_lines(fit: KeptFit) -> list[str]:
+    """Return what the readings were divided by, if by anything."""
+    return [f"relative to {fit.settings['relative_to']}"] if "relative_to" in fit.settings else []
+
+
 def kept_entry(fit: KeptFit) -> dict[str, Any]:
     """Return a fit for JSON."""
     return {
@@ -47,6 +52,7 @@ def kept_entry(fit: KeptFit) -> dict[str, Any]:
         "background": fit.background,
         "observable": fit.observable,
         "along": fit.along,
+        "relative_to": fit.settings.get("relative_to"),
         "slice": fit.slice or {},
         "estimates": {name: estimates.entry(estimate) for name, estimate in fit.estimates.items()},
         "trusted": fit.trusted,

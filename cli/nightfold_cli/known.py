@@ -6,6 +6,7 @@ from collections.abc import Iterable
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from nightfold.scans.scan import Scan
     from nightfold.store import Store
     from nightfold_cli.render import Screen
 
@@ -59,6 +60,25 @@ def check_observable(name: str | None, known: Iterable[str], where: str) -> None
     """
     if name is not None:
         _check("observable", name, known, where)
+
+
+def drawn_together(scan: Scan, asked: str | None) -> list[str]:
+    """Return the observables to draw in one chart: the one asked for, or all clouds of one.
+
+    Raises
+    ------
+    NotFound
+    """
+    from nightfold.card import without_cloud
+
+    main = scan.main_observable
+    if asked in scan.observables or (asked is None and main is None):
+        return [] if asked is None else [asked]
+    base = asked if asked is not None else without_cloud(main or "")
+    clouds = [name for name in scan.observables if without_cloud(name) == base]
+    if not clouds:
+        check_observable(asked, scan.observables, f"in scan {scan.key}")
+    return clouds
 
 
 def _check(what: str, name: str, known: Iterable[str], where: str) -> None:

@@ -1,6 +1,7 @@
 """Charts in the terminal: points with their scatter, a fitted curve, residuals, a small trend.
 
-Shapes carry the meaning (``●`` data, ``×`` flagged, fine dots the curve), so nothing is lost without colour.
+Shapes carry the meaning (``●`` data, ``○`` a second series, ``×`` flagged, fine dots the curve), so nothing is lost
+without colour.
 The functions return lines made of runs of text with a role; what a role looks like is for `render` to say.
 """
 
@@ -10,7 +11,7 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
-from nightfold_cli.canvas import ASCII, UNICODE, Canvas, Glyphs, Line
+from nightfold_cli.canvas import ASCII, UNICODE, Canvas, Glyphs, Line, Role
 from nightfold_cli.ticks import Ticks, ticks_between
 
 _LABELS = 9
@@ -31,6 +32,8 @@ class Points:
         Ends of the bars, where they are not as far below as above.
     flagged : sequence of bool
         Points drawn as a cross.
+    name : str
+        What they are, where a chart has several series.
     """
 
     x: Sequence[float]
@@ -39,6 +42,7 @@ class Points:
     flagged: Sequence[bool] = ()
     low: Sequence[float] = ()
     high: Sequence[float] = ()
+    name: str = ""
 
     def bars(self) -> list[tuple[float, float, float]]:
         """Return x, lower and upper end of every bar that has some length."""
@@ -100,6 +104,8 @@ class Chart:
         Size in characters, labels included.
     unicode : bool
         Whether braille and other signs beyond ASCII may be used.
+    others : sequence of Points
+        Further series on the same axes, at most three, told apart by their marks.
     ticks : callable
         Ticks of the x axis between two ends, at most so many.
     """
@@ -111,6 +117,7 @@ class Chart:
     height: int = 15
     curve: tuple[Sequence[float], Sequence[float]] | None = None
     unicode: bool = True
+    others: Sequence[Points] = ()
     ticks: Callable[[float, float, int], Ticks] = ticks_between
     glyphs: Glyphs = field(init=False)
 
@@ -125,7 +132,7 @@ class Chart:
         canvas = self._canvas(self.height - 3)
         if self.curve is not None:
             _draw_curve(canvas, frame, *self.curve)
-        _draw_points(canvas, frame, self.points, self.glyphs)
+        _draw_points(canvas, frame, self._series, self.glyphs)
         across = self.ticks(frame.low_x, frame.high_x, max(2, canvas.width // 10))
         up = ticks_between(frame.low_y, frame.high_y, max(2, canvas.height // 2))
         rows = {
@@ -163,7 +170,7 @@ class Chart:
         for column in range(canvas.width):
             canvas.put(column, middle, self.glyphs.zero, "axis")
         scaled = Points(self.points.x, [value / scatter for value in values], flagged=self.points.flagged)
-        _draw_points(canvas, strip, scaled, self.glyphs)
+        _draw_points(canvas, strip, (scaled,), self.glyphs)
         names = {0: f"+{reach:.1f}", middle: "0", height - 1: f"-{reach:.1f}"}
         return [
             [(title, "label")],
@@ -174,6 +181,13 @@ class Chart:
     def legend(self) -> str:
         """Return what the marks mean."""
         marks = [f"{self.glyphs.mark} mean", f"{self.glyphs.bar} one stderr either way"]
+        if self.others:
+            names = zip(self.glyphs.marks, self._series, strict=False)
+            bars = " and ".join(dict.fromkeys(self.glyphs.bars[: len(self._series)]))
+            marks = [
+                *(f"{mark} {one.name}" for mark, one in names),
+                f"{bars} one stderr either way of the mean",
+            ]
         if any(self.points.flagged):
             marks.append(f"{self.glyphs.flagged} outlier, not used")
         if self.curve is not None:
@@ -182,14 +196,20 @@ class Chart:
 
     def frame(self) -> Frame | None:
         """Return the rectangle that holds all points and the curve, None where nothing is finite."""
-        kept = [(x, y) for x, y in zip(self.points.x, self.points.y, strict=True) if _finite(x, y)]
+        every = [pair for one in self._series for pair in zip(one.x, one.y, strict=True)]
+        kept = [(x, y) for x, y in every if _finite(x, y)]
         if not kept:
             return None
         xs, ys = [x for x, _ in kept], [y for _, y in kept]
-        ys += [end for _, low, high in self.points.bars() for end in (low, high)]
+        ys += [end for one in self._series for _, low, high in one.bars() for end in (low, high)]
         if self.curve is not None:
             ys += [y for y in self.curve[1] if math.isfinite(y)]
         return Frame(*_widened(min(xs), max(xs)), *_widened(min(ys), max(ys)))
+
+    @property
+    def _series(self) -> tuple[Points, ...]:
+        """Return all series of points."""
+        return (self.points, *self.others)
 
     def _canvas(self, height: int) -> Canvas:
         """Return an empty canvas beside the labels of the y axis."""
@@ -241,16 +261,19 @@ def _draw_curve(canvas: Canvas, frame: Frame, x: Sequence[float], y: Sequence[fl
         last = (across, down)
 
 
-def _draw_points(canvas: Canvas, frame: Frame, points: Points, glyphs: Glyphs) -> None:
-    """Draw the bars of all points, then their marks on top."""
-    flagged = list(points.flagged) or [False] * len(points.x)
-    for x, low, high in points.bars():
-        column, top = frame.cell(canvas, x, high)
-        for row in range(top, frame.cell(canvas, x, low)[1] + 1):
-            canvas.put(column, row, glyphs.bar, "data")
-    for x, y, cross in zip(points.x, points.y, flagged, strict=True):
-        if _finite(x, y):
-            canvas.put(*frame.cell(canvas, x, y), glyphs.flagged if cross else glyphs.mark, "data")
+def _draw_points(canvas: Canvas, frame: Frame, series: Sequence[Points], glyphs: Glyphs) -> None:
+    """Draw the bars of all points, then their marks on top; every other series in a lighter tone."""
+    tones: tuple[Role, ...] = ("data", "plain", "data", "plain")
+    for bar, tone, points in zip(glyphs.bars, tones, series, strict=False):
+        for x, low, high in points.bars():
+            column, top = frame.cell(canvas, x, high)
+            for row in range(top, frame.cell(canvas, x, low)[1] + 1):
+                canvas.put(column, row, bar, tone)
+    for mark, tone, points in zip(glyphs.marks, tones, series, strict=False):
+        flagged = list(points.flagged) or [False] * len(points.x)
+        for x, y, cross in zip(points.x, points.y, flagged, strict=True):
+            if _finite(x, y):
+                canvas.put(*frame.cell(canvas, x, y), glyphs.flagged if cross else mark, tone)
 
 
 def _margin(label: str, glyphs: Glyphs) -> Line:

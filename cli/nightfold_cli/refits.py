@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 from nightfold_cli.concise import concise
 from nightfold_cli.estimates import plain_rows, value_text
 from nightfold_cli.failures import UsageError
-from nightfold_cli.keptfits import kept_entry, named_fits, slice_lines
+from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines
 from nightfold_cli.layout import Column, Row
 from nightfold_cli.naming import named_scan
 from nightfold_cli.opening import opened
@@ -23,7 +23,7 @@ from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.again import Refit
-    from nightfold.fits.kept import KeptEstimate, KeptFit
+    from nightfold.fits.keptfit import KeptEstimate, KeptFit
     from nightfold.store import Store
 
 _BACKGROUND = ("offset", "slope")
@@ -159,7 +159,7 @@ def _draw(screen: Screen, pairs: Sequence[_Pair]) -> None:
 
 def _rows(before: KeptFit | None, after: KeptFit) -> list[Row]:
     """Return a line an estimate, beside them what was fitted, and an empty line below."""
-    heads = [after.scan_key, after.model, after.observable, *slice_lines(after)]
+    heads = [after.scan_key, after.model, after.observable, *relative_lines(after), *slice_lines(after)]
     rows: list[Row] = []
     for head, name in zip_longest(heads, _primary(after), fillvalue=""):
         if not name:
@@ -174,7 +174,7 @@ def _rows(before: KeptFit | None, after: KeptFit) -> list[Row]:
 
 def _title(fit: KeptFit) -> str:
     """Return what was fitted, in a line."""
-    where = "".join(f", {line}" for line in slice_lines(fit))
+    where = "".join(f", {line}" for line in (*relative_lines(fit), *slice_lines(fit)))
     return f"{fit.scan_key}, {fit.model} of {fit.observable}{where}"
 
 

@@ -30,7 +30,9 @@ def axis_line(axis: Axis) -> str:
 
 
 def grid(scan: Scan) -> str:
-    """Return the number of points: ``41``, ``11x9``."""
+    """Return the number of points: ``41``, ``11x9``; that of the shots where they are scattered."""
+    if scan.scattered:
+        return str(scan.shots)
     return "x".join(str(axis.points) for axis in scan.axes) or "1"
 
 
@@ -58,7 +60,7 @@ def counted(count: int, what: str) -> str:
 def repeats(scan: Scan) -> float:
     """Return shots for each point of the grid."""
     points: int = math.prod(axis.points for axis in scan.axes) or 1
-    return float(scan.shots / points)
+    return 1.0 if scan.scattered else float(scan.shots / points)
 
 
 def repeats_text(scan: Scan) -> str:
@@ -69,6 +71,15 @@ def repeats_text(scan: Scan) -> str:
 def status(scan: Scan) -> str:
     """Return how far the scan has come."""
     return "complete" if scan.complete else "open"
+
+
+def relative_line(related: Mapping[str, Any]) -> str:
+    """Return what readings were divided by: ``to 12 reference shots of hold, every shot within 4.5 min of one``."""
+    from nightfold.scans.references import span_text
+
+    shots, distance = related["reference_shots"], span_text(related["reference_distance_s"], up=True)
+    of = f" of {related['reference_sequence']}" if shots else ""
+    return f"to {counted(shots, 'reference shot')}{of}, every shot within {distance} of one"
 
 
 def title(scan: Scan, name: str) -> str:
@@ -92,6 +103,7 @@ def entry(scan: Scan, name: str, notes: Mapping[str, list[str]]) -> dict[str, An
         "first": scan.first,
         "last": scan.last,
         "complete": scan.complete,
+        "scattered": scan.scattered,
         "order": scan.order,
         "arranged": list(scan.arranged),
         "observables": list(scan.observables),

@@ -5,10 +5,11 @@ from __future__ import annotations
 import os
 import re
 from argparse import ArgumentParser, Namespace
+from collections.abc import Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.arguments import add_scan_key
+from nightfold_cli.arguments import add_relative, add_scan_key, relation
 from nightfold_cli.failures import UsageError
 from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import opened
@@ -22,7 +23,11 @@ if TYPE_CHECKING:
 
 _ERRNO = re.compile(r"errno = (\d+)")
 HELP = "write a scan to a netCDF or CSV file"
-EXAMPLES = ("nightfold export loss-coarse loss.nc", "nightfold export 41 decay.csv --set-aside")
+EXAMPLES = (
+    "nightfold export loss-coarse loss.nc",
+    "nightfold export 41 decay.csv --set-aside",
+    "nightfold export loss-coarse loss.nc -o atom_number --relative-to reference",
+)
 _KINDS = {".nc": "netCDF", ".csv": "CSV"}
 
 
@@ -34,6 +39,10 @@ def add_arguments(parser: ArgumentParser) -> None:
     )
     parser.add_argument("--force", action="store_true", help="write over a file that is there")
     parser.add_argument("--set-aside", action="store_true", help="with the shots that are set aside")
+    parser.add_argument(
+        "-o", "--observable", metavar="NAME", action="append", help="only this one; may be repeated"
+    )
+    add_relative(parser)
 
 
 def run(args: Namespace) -> int:
@@ -51,7 +60,7 @@ def run(args: Namespace) -> int:
         raise NotFound(f"{path}: there is no folder {str(path.parent)!r}; make it, or name another one")
     with opened(args, screen) as store:
         scan = named_scan(store, args.key, screen)
-        _write(scan, path, kind, args.set_aside)
+        _write(scan, path, kind, {"observables": args.observable, **relation(args)}, args.set_aside)
         key, shots = name_in(store, scan), scan.shots + (scan.set_aside if args.set_aside else 0)
     if screen.json:
         screen.answer({"scan": key, "file": str(path), "format": kind, "shots": shots})
@@ -60,7 +69,7 @@ def run(args: Namespace) -> int:
     return 0
 
 
-def _write(scan: Scan, path: Path, kind: str, set_aside: bool) -> None:
+def _write(scan: Scan, path: Path, kind: str, choice: Mapping[str, Any], set_aside: bool) -> None:
     """Write beside the file, then move into its place.
 
     Raises
@@ -73,15 +82,34 @@ def _write(scan: Scan, path: Path, kind: str, set_aside: bool) -> None:
         if kind == "netCDF":
             from nightfold.scans.netcdf import write_netcdf
 
-            write_netcdf(scan.dataset(set_aside=set_aside), part)
+            write_netcdf(scan.dataset(set_aside=set_aside, **choice), part)
         else:
-            _with_units(scan.table(set_aside=set_aside)).to_csv(part, index=False)
+            _with_units(_renamed(scan.table(set_aside=set_aside, **choice))).to_csv(part, index=False)
         part.replace(path)
     except OSError as error:
         number = error.errno or int((_ERRNO.search(str(error)) or [0, 0])[1])
         raise OSError(number, os.strerror(number) if number else "it cannot be written", str(path)) from error
     finally:
         part.unlink(missing_ok=True)
+
+
+def _renamed(table: pd.DataFrame) -> pd.DataFrame:
+    """Return a table whose ratios are called ``atom_number_relative``, so that none is taken for a reading."""
+    parts = {name: _parts(name) for name in table.attrs.get("levels", {})}
+    heads = {name: f"{base}_relative{cloud}" for name, (base, cloud) in parts.items()}
+    heads |= {f"{name}_stderr": f"{head}_stderr" for name, head in heads.items()}
+    units = {heads.get(name, name): unit for name, unit in table.attrs["units"].items()}
+    renamed = table.rename(columns=heads)
+    renamed.attrs = {**table.attrs, "units": units}
+    return renamed
+
+
+def _parts(name: str) -> tuple[str, str]:
+    """Return an observable and its cloud with brackets, if it has one."""
+    from nightfold.card import without_cloud
+
+    base = without_cloud(name)
+    return base, name.removeprefix(base)
 
 
 def _with_units(table: pd.DataFrame) -> pd.DataFrame:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import shlex
 import sys
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
@@ -10,10 +11,11 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from nightfold_cli import estimates
-from nightfold_cli.arguments import add_scan_key, named_number
+from nightfold_cli.arguments import add_relative, add_scan_key, named_number, relation
 from nightfold_cli.charts import chart_of_points
 from nightfold_cli.concise import rounded
 from nightfold_cli.failures import UsageError
+from nightfold_cli.known import drawn_together
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import opened
@@ -37,6 +39,7 @@ EXAMPLES = (
     "nightfold fit loss-coarse lorentzian -o atom_number",
     "nightfold fit loss-map lorentzian -o atom_number --along coil_current",
     "nightfold fit decay exponential two-body -o atom_number --fixed amplitude=1.2e5",
+    "nightfold fit loss-coarse lorentzian -o atom_number --relative-to reference",
     "nightfold fit --again",
 )
 _HEIGHT = 15
@@ -65,6 +68,7 @@ def add_arguments(parser: ArgumentParser) -> None:
         parser.add_argument(
             name, metavar="NAME=VALUE", type=named_number, action="append", default=[], help=help_line
         )
+    add_relative(parser)
     parser.add_argument("--no-keep", action="store_true", help="do not keep the fit in the store")
 
 
@@ -84,7 +88,7 @@ def run(args: Namespace) -> int:
             along = args.along or scan.axes[0].parameter
             aside = count_left_out(scan, along)
             entries = [
-                _entry(name, observable, part, along, _of_slice(aside, part.where))
+                _entry(name, observable, part, along, _of_slice(aside, part.where), args.relative_to)
                 for _, parts in fits
                 for part in parts
             ]
@@ -103,10 +107,15 @@ def run(args: Namespace) -> int:
 
 def _observable(scan: Scan, asked: str | None) -> str:
     """Return the observable to fit."""
-    chosen = asked or scan.main_observable
-    if chosen is None:
+    found = drawn_together(scan, asked)
+    if not found:
         raise UsageError(f"scan {scan.key}: it has no observable yet, so there is nothing to fit")
-    return chosen
+    if len(found) > 1:
+        named = " or ".join(f"-o {shlex.quote(name)}" for name in found)
+        raise UsageError(
+            f"scan {scan.key}: {asked or 'its main observable'} has several clouds; name one: {named}"
+        )
+    return found[0]
 
 
 def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace) -> list[Slice]:
@@ -123,6 +132,7 @@ def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace)
             weights="equal" if args.plain else "auto",
             robust=not args.plain,
             keep=not args.no_keep,
+            **relation(args),
         )
     return parts_of(outcome)
 
@@ -154,11 +164,12 @@ def _tabulate(screen: Screen, fits: Sequence[tuple[str, list[Slice]]]) -> None:
 
 
 def _title(
-    scan: Scan, name: str, model: str, observable: str, along: str, background: str
+    scan: Scan, name: str, model: str, observable: str, along: str, background: str, args: Namespace
 ) -> tuple[str, str]:
     """Return what was fitted to what."""
     under = "no background" if background == "none" else f"{background} background"
-    return f"{title(scan, name)}  {model}", f"{observable} along {along}, {under}"
+    related = " relative to reference shots" if args.relative_to else ""
+    return f"{title(scan, name)}  {model}", f"{observable}{related} along {along}, {under}"
 
 
 def _show(
@@ -166,8 +177,8 @@ def _show(
 ) -> None:
     """Show one fit: chart and residuals first, so that the numbers end up where the eye is."""
     along = args.along or scan.axes[0].parameter
-    screen.heading(*_title(scan, name, model, observable, along, result.background))
-    runs = _draw(screen, scan, along, observable, result)
+    screen.heading(*_title(scan, name, model, observable, along, result.background, args))
+    runs = _draw(screen, scan, along, observable, result, args)
     screen.heading("estimates", _counts(scan, result))
     screen.table(
         estimates.ON_SCREEN, estimates.rows(result.estimates, dict(args.fixed)), empty="no estimates"
@@ -175,9 +186,12 @@ def _show(
     _verdict(screen, result, runs)
 
 
-def _draw(screen: Screen, scan: Scan, along: str, observable: str, result: FitResult) -> Runs | None:
+def _draw(
+    screen: Screen, scan: Scan, along: str, observable: str, result: FitResult, args: Namespace
+) -> Runs | None:
     """Draw data, curve and residuals; return the runs of signs of these."""
-    points = points_of(scan.table(), [along], [observable])
+    table = scan.table(observables=[observable], **relation(args))
+    points = points_of(table, [along], [observable])
     if len(points) < 2 or not all(isinstance(point.at[0], int | float) for point in points):
         return None
     low, high = float(points[0].at[0]), float(points[-1].at[0])
@@ -185,7 +199,7 @@ def _draw(screen: Screen, scan: Scan, along: str, observable: str, result: FitRe
     step = (high - low + 2 * margin) / _DENSE
     dense = [low - margin + step * index for index in range(_DENSE + 1)]
     curve = (dense, [float(value) for value in result.predict(dense)])
-    x, y = (Label(name, scan.units.get(name) or "") for name in (along, observable))
+    x, y = (Label(name, table.attrs["units"].get(name) or "") for name in (along, observable))
     chart = chart_of_points(points, x, y, screen.width, _HEIGHT, screen.unicode, curve)
     screen.chart(chart.lines())
     fitted = [float(value) for value in result.predict([float(point.at[0]) for point in points])]
@@ -248,7 +262,7 @@ def _show_slices(
 ) -> None:
     """Show a line a slice."""
     background = parts[0].result.background if parts else "none"
-    screen.heading(*_title(scan, name, model, observable, args.along, background))
+    screen.heading(*_title(scan, name, model, observable, args.along, background, args))
     others = [axis for axis in scan.axes if parts and axis.parameter in parts[0].where]
     names = list(parts[0].result.estimates) if parts else []
     units = {name: parts[0].result.estimates[name].unit for name in names}
@@ -300,7 +314,9 @@ def _of_slice(counts: Sequence[tuple[dict[str, Any], int]], where: dict[str, Any
     return next((count for values, count in counts if values == where), 0)
 
 
-def _entry(scan: str, observable: str, part: Slice, along: str, aside: int) -> dict[str, Any]:
+def _entry(
+    scan: str, observable: str, part: Slice, along: str, aside: int, relative_to: str | None
+) -> dict[str, Any]:
     """Return one fit for JSON."""
     result = part.result
     return {
@@ -309,6 +325,7 @@ def _entry(scan: str, observable: str, part: Slice, along: str, aside: int) -> d
         "background": result.background,
         "observable": observable,
         "along": along,
+        "relative_to": relative_to,
         "slice": part.where,
         "estimates": {name: estimates.entry(estimate) for name, estimate in result.estimates.items()},
         "trusted": result.trusted,

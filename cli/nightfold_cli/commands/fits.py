@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 from nightfold_cli import estimates
 from nightfold_cli.arguments import positive
 from nightfold_cli.estimates import value_text
-from nightfold_cli.keptfits import kept_entry, named_fits, slice_lines
+from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
 from nightfold_cli.naming import named_scan
@@ -20,7 +20,7 @@ from nightfold_cli.render import Screen
 from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
-    from nightfold.fits.kept import KeptFit
+    from nightfold.fits.keptfit import KeptFit
 
 HELP = "list the fits that were kept"
 EXAMPLES = ("nightfold fits", "nightfold fits loss-coarse", "nightfold fits --json")
@@ -78,7 +78,7 @@ def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Map
     rows: list[Row] = [
         [
             str(fit.id),
-            Cell.of((fit.scan_key, fit.observable, *slice_lines(fit))),
+            Cell.of((fit.scan_key, fit.observable, *relative_lines(fit), *slice_lines(fit))),
             Cell.of((fit.model, f"along {fit.along}")),
             Cell.of((*_estimates(fit), *_noted(notes.get(fit.id)))),
             Cell.of(_trust(fit)),
@@ -97,7 +97,7 @@ def _tabulate(
     heads = (
         *("fit", "kept", "scan", "model", "background", "observable", "along", "slice"),
         *("estimate", "value", "stderr", "unit", "low95", "high95", "trusted", "stale", "shots"),
-        "notes",
+        *("notes", "relative_to"),
     )
     rows: list[Row] = [
         [
@@ -114,6 +114,7 @@ def _tabulate(
             setting(fit.stale),
             str(fit.shots),
             "; ".join(notes.get(fit.id, [])),
+            fit.settings.get("relative_to", ""),
         ]
         for fit in fits
         for row in estimates.plain_rows(fit.estimates)

@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import math
+import shlex
 from argparse import ArgumentParser, Namespace
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.arguments import add_scan_key
+from nightfold_cli.arguments import add_relative, add_scan_key, relation
 from nightfold_cli.arrangedtext import in_full
+from nightfold_cli.canvas import MOST_SERIES
 from nightfold_cli.charts import chart_of_points, map_of_points
 from nightfold_cli.concise import Scale, scale_of, short
-from nightfold_cli.known import check_observable
+from nightfold_cli.known import drawn_together
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes
 from nightfold_cli.naming import name_in, named_scan, shared_names
@@ -20,7 +22,16 @@ from nightfold_cli.opening import local_times, opened
 from nightfold_cli.plots import Label
 from nightfold_cli.points import Point, Reading, points_of
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import axis_line, counted, entry, order_line, repeats_text, status, title
+from nightfold_cli.scantext import (
+    axis_line,
+    counted,
+    entry,
+    order_line,
+    relative_line,
+    repeats_text,
+    status,
+    title,
+)
 from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
@@ -30,9 +41,11 @@ HELP = "show one scan: its points and a chart"
 EXAMPLES = (
     "nightfold scan loss-coarse",
     "nightfold scan loss-coarse#2 -o temperature",
+    "nightfold scan loss-coarse --relative-to reference",
     "nightfold scan 41 --json",
 )
 _MOST_POINTS = 40
+_RELATIVE = "relative to reference"
 _HEIGHT = 16
 _FINE = 1e-3  # of the largest mean, where no scatter says how fine to write a column
 
@@ -47,6 +60,7 @@ def add_arguments(parser: ArgumentParser) -> None:
     parser.add_argument(
         "--points", action="store_true", help=f"list the points even if more than {_MOST_POINTS}"
     )
+    add_relative(parser)
 
 
 def run(args: Namespace) -> int:
@@ -55,41 +69,43 @@ def run(args: Namespace) -> int:
     with opened(args, screen) as store:
         scan = named_scan(store, args.key, screen)
         name = name_in(store, scan)
-        observables = _observables(scan, args.observable)
+        drawn = drawn_together(scan, args.observable)
+        observables = drawn if args.relative_to else _all_observables(scan, drawn)
         axes = [axis.parameter for axis in scan.axes]
-        points = points_of(scan.table(set_aside=args.set_aside), axes, observables)
-        units = {name: unit or "" for name, unit in _units(scan, observables).items()}
+        table = scan.table(set_aside=args.set_aside, observables=observables, **relation(args))
+        points = points_of(table, axes, observables)
+        units, related = table.attrs["units"], table.attrs.get("relative")
         times = local_times(store)
         arranged = [in_full(item, shared_names(store), times) for item in scan.arrangements]
         notes = texts_by_subject(store)
     if screen.json:
-        screen.answer({"scan": entry(scan, name, notes), "points": [_entry(scan, point) for point in points]})
+        listed = [_entry(scan, point) for point in points]
+        screen.answer({"scan": entry(scan, name, notes), "relative": related, "points": listed})
         return 0
     if screen.terminal:
-        _header(screen, scan, name, times, arranged, notes.get(f"scan {scan.id}", []))
+        _header(screen, scan, name, times, arranged, notes.get(f"scan {scan.id}", []), related)
     if not screen.terminal or args.points or len(points) <= _MOST_POINTS:
         _tabulate(screen, scan, points, observables, units)
     else:
         screen.note(f"{counted(len(points), 'point')}; --points lists them")
-    if observables:
-        _draw(screen, scan, name, points, observables[0], units[observables[0]])
+    if drawn:
+        _draw(screen, scan, name, points, drawn, _RELATIVE if related else units[drawn[0]])
     return 0
 
 
-def _observables(scan: Scan, asked: str | None) -> list[str]:
-    """Return the observables to show, the one to draw first."""
-    check_observable(asked, scan.observables, f"in scan {scan.key}")
-    first = asked or scan.main_observable
-    return sorted(scan.observables, key=lambda name: (name != first, scan.observables.index(name)))
-
-
-def _units(scan: Scan, observables: Sequence[str]) -> dict[str, str]:
-    """Return the units of observables."""
-    return {name: scan.units.get(name, "") for name in observables}
+def _all_observables(scan: Scan, first: Sequence[str]) -> list[str]:
+    """Return the observables to show, those to draw first."""
+    return [*first, *(name for name in scan.observables if name not in first)]
 
 
 def _header(
-    screen: Screen, scan: Scan, name: str, times: LocalTimes, arranged: Sequence[str], notes: Sequence[str]
+    screen: Screen,
+    scan: Scan,
+    name: str,
+    times: LocalTimes,
+    arranged: Sequence[str],
+    notes: Sequence[str],
+    related: Mapping[str, Any] | None,
 ) -> None:
     """Say what the scan is."""
     origin = {"label": "by label", "found": "found by itself", "declared": "declared"}.get(
@@ -98,13 +114,16 @@ def _header(
     screen.heading(title(scan, name), f"{scan.sequence} on {scan.machine}, {origin}, {status(scan)}")
     aside = f", and {scan.set_aside} set aside" if scan.set_aside else ""
     first, last = times.local(scan.first, scan.machine), times.local(scan.last, scan.machine)
-    until = f"{last:%H:%M:%S %Z}" if first.date() == last.date() else f"{last:%Y-%m-%d %H:%M:%S %Z}"
+    until = f" to {last:%H:%M:%S %Z}" if first.date() == last.date() else f" to {last:%Y-%m-%d %H:%M:%S %Z}"
+    until = until if last > first else f" {last:%Z}"
+    where = "at scattered points" if scan.scattered else f"{repeats_text(scan)} a point"
     screen.fields(
         [
             *(("axis", f"{axis_line(axis)}, {counted(axis.points, 'point')}") for axis in scan.axes),
-            ("shots", f"{scan.shots}, {repeats_text(scan)} a point{aside}"),
-            ("taken", f"{first:%Y-%m-%d %H:%M:%S} to {until}"),
+            ("shots", f"{scan.shots}, {where}{aside}"),
+            ("taken", f"{first:%Y-%m-%d %H:%M:%S}{until}"),
             *([("order", order_line(scan))] if order_line(scan) else []),
+            *([("relative", relative_line(related))] if related else []),
             *(("by hand", text) for text in arranged),
             *note_fields(notes, screen),
         ]
@@ -191,25 +210,44 @@ def _cells(reading: Reading, scale: Scale | None, kinds: Sequence[str]) -> list[
     ]
 
 
-def _draw(screen: Screen, scan: Scan, name: str, points: Sequence[Point], observable: str, unit: str) -> None:
-    """Draw the observable over one axis, or as a map over two."""
+def _draw(
+    screen: Screen, scan: Scan, name: str, points: Sequence[Point], observables: Sequence[str], unit: str
+) -> None:
+    """Draw observables over one axis, or each as a map over two; they are clouds if there are several."""
     if not screen.terminal:
         return
-    if sum(math.isfinite(point.readings[observable].mean) for point in points) < 2:
+    known = {each: sum(math.isfinite(point.readings[each].mean) for point in points) for each in observables}
+    if max(known.values()) < 2:
         screen.note("a chart needs two points")
         return
+    drawn = [each for each in observables if known[each]][:MOST_SERIES]
+    related = " --relative-to reference" if unit == _RELATIVE else ""
+    fit = f"next: nightfold fit {name} MODEL -o {shlex.quote(drawn[0])}{related}"
     numeric = [axis for axis in scan.axes if axis.low is not None]
     if len(scan.axes) == 1 and numeric:
         screen.gap()
         x = Label(numeric[0].parameter, numeric[0].unit)
-        chart = chart_of_points(points, x, Label(observable, unit), screen.width, _HEIGHT, screen.unicode)
+        y = Label(_title(drawn), unit)
+        chart = chart_of_points(points, x, y, screen.width, _HEIGHT, screen.unicode, observables=drawn)
         screen.chart(chart.lines())
         screen.note(chart.legend)
-        screen.note(f"next: nightfold fit {name} MODEL -o {observable}")
+        if len(drawn) < len(observables):
+            screen.note("not drawn: " + ", ".join(each for each in observables if each not in drawn))
+        screen.note(fit)
+    elif scan.scattered:
+        screen.note(f"scattered points make no map; next: nightfold export {name} FILE")
     elif len(scan.axes) == 2:
-        screen.heading(observable, unit)
-        screen.chart(map_of_points(points, scan.axes, observable, unicode=screen.unicode))
-        screen.note(f"next: nightfold fit {name} MODEL -o {observable} --along {scan.axes[0].parameter}")
+        for each in drawn:
+            screen.heading(each, unit)
+            screen.chart(map_of_points(points, scan.axes, each, unicode=screen.unicode))
+        screen.note(f"{fit} --along {scan.axes[0].parameter}")
+
+
+def _title(drawn: Sequence[str]) -> str:
+    """Return what is drawn: an observable, or the one that several are clouds of."""
+    from nightfold.card import without_cloud
+
+    return drawn[0] if len(drawn) == 1 else without_cloud(drawn[0])
 
 
 def _named(name: str, unit: str) -> str:

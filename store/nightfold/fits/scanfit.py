@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from nightfold.card import without_cloud
 from nightfold.errors import ChoiceNeeded, FitError, NotFound
 from nightfold.fits.curve import fit_curve
 from nightfold.fits.many import FitTable, fit_many
@@ -188,8 +189,15 @@ def choose_observable(scan: Scan, observable: str) -> str:
     ------
     NotFound
         If no shot of the scan has it.
+    ChoiceNeeded
+        If the scan has several clouds of it.
     """
     if observable not in scan.observables:
+        clouds = [name for name in scan.observables if without_cloud(name) == observable]
+        if clouds:
+            raise ChoiceNeeded(
+                f"scan {scan.key}: {observable} was read of clouds: name one, {' or '.join(clouds)}"
+            )
         raise NotFound(
             f"scan {scan.key}: no observable {observable!r}; {near_miss(observable, scan.observables)}"
         )

@@ -136,10 +136,10 @@ def relate(connection: Connection, table: pd.DataFrame, comparison: Comparison) 
     """
     import pandas as pd
 
-    at_us = table["started"].astype("datetime64[us, UTC]").astype("int64").to_numpy()
+    at_us = table["started"].dt.tz_localize(None).to_numpy("datetime64[us]").astype(np.int64)
     moments = _Moments(int(at_us.min()) if len(at_us) else 0, at_us)
     near = _read(connection, comparison, moments)
-    columns = {str(name): table[name] for name in table.columns}
+    columns: dict[str, Any] = {str(name): table[name] for name in table.columns}
     units, levels = dict(table.attrs["units"]), {}
     used: list[_References] = []
     worst = 0.0

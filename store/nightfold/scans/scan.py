@@ -6,9 +6,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from datetime import datetime
 from functools import cached_property
+from math import prod
 from typing import TYPE_CHECKING
 
+from nightfold.card import without_cloud
 from nightfold.errors import NotFound
+from nightfold.ledger.columns import Named
 from nightfold.ledger.selecting import Selection, column_name, listed, near_miss, scan_key
 from nightfold.scans.arrangements import Arrangement, arrangements_of
 from nightfold.scans.axes import Axis
@@ -81,6 +84,14 @@ class Scan:
         return self._details.axes
 
     @property
+    def scattered(self) -> bool:
+        """Whether the points fill so little of a grid of several axes that a dataset has the one dimension ``shot``."""
+        from nightfold.scans.layout import SPARSE
+
+        points = [axis.points for axis in self.axes]
+        return len(points) > 1 and prod(points) > SPARSE * max(self.shots, 1)
+
+    @property
     def order(self) -> dict[str, str]:
         """Whether the points of each axis were taken in order: 'rising', 'falling' or 'mixed'.
 
@@ -144,7 +155,7 @@ class Scan:
         set_aside : bool
             Include the shots set aside.
         observables : sequence of str, optional
-            Only these.
+            Only these; the name without a cloud stands for all clouds, where there are only those.
         relative_to : {'reference'}, optional
             Divide each observable by what the reference shots say at that moment, as `level_at` and `ratio_of` of
             `nightfold.scans.relative` do; that stands beside it as ``<observable>_reference``.
@@ -186,10 +197,13 @@ class Scan:
             return self._details
         known = {item.name: item for item in self._details.observables}
         wanted = [names] if isinstance(names, str) else list(dict.fromkeys(names))
+        found: dict[str, Named] = {}
         for name in wanted:
-            if name not in known:
+            clouds = [name] if name in known else [each for each in known if without_cloud(each) == name]
+            if not clouds:
                 raise NotFound(f"scan {self.key}: no observable {name!r}; {near_miss(name, known)}")
-        return replace(self._details, observables=tuple(known[name] for name in wanted))
+            found |= {each: known[each] for each in clouds}
+        return replace(self._details, observables=tuple(found.values()))
 
     def _described(self, sensors: Sequence[str]) -> dict[str, str]:
         """Return what the machine card says of sensors, by their column."""
