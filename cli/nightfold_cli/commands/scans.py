@@ -111,7 +111,7 @@ def _draw(
             [
                 Cell.of((title(scan, names[scan.id]), _stream(scan) if several else scan.sequence)),
                 Cell.of(_axes(scan, narrow=screen.width < _NARROW)),
-                Cell.of((grid(scan), f"x {repeats_text(scan)}")),
+                Cell.of((grid(scan), "scattered" if scan.scattered else f"x {repeats_text(scan)}")),
                 Cell.of((str(scan.shots), aside)),
                 Cell.of(
                     (f"{began:%H:%M}{offset_if_it_changes(began)}", "" if scan.complete else status(scan))

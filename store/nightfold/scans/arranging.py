@@ -131,11 +131,6 @@ def undo_arrangement(connection: Connection, number: int, by: str | None) -> Arr
     return read_arrangements(connection, whole.c.id == number)[0]
 
 
-def settle_arranged(connection: Connection, scan_id: int) -> None:
-    """Look at the axes of an arranged scan without a label again, after settings of its shots were corrected."""
-    _settle_found(connection, scan_id, leading_axes(connection, scan_id))
-
-
 def _scan_row(connection: Connection, scan_id: int) -> Row[Any]:
     """Return a scan with the names of its sequence and machine."""
     scan, sequence, machine = tables.scan, tables.sequence, tables.machine

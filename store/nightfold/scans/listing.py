@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import operator
-from collections.abc import Mapping
+from itertools import pairwise
+from statistics import median_low
 from typing import Any
 
 from sqlalchemy import Connection, Row, func, select
@@ -19,6 +20,7 @@ from nightfold.timestamps import from_us, now_us
 
 IDLE_CYCLES = 5
 _FIRST_CYCLE_US = 60_000_000
+_CYCLES_LOOKED_AT = 20
 
 
 def list_scans(session: Session) -> list[Scan]:
@@ -148,11 +150,15 @@ def _read_scans(connection: Connection, session: Session, scan_id: int | None) -
     aside = _set_aside_counts(connection, scan_id)
     newest = {key: _newest_first_us(connection, key) for key in {row.sequence_id for row in rows}}
     arranged = arranged_numbers(connection)
-    return [_make_scan(row, session, aside.get(row.id, 0), newest, arranged.get(row.id, ())) for row in rows]
+    complete = {row.id: _is_complete(connection, row, newest[row.sequence_id]) for row in rows}
+    return [
+        _make_scan(row, session, aside.get(row.id, 0), complete[row.id], arranged.get(row.id, ()))
+        for row in rows
+    ]
 
 
 def _make_scan(
-    row: Row[Any], session: Session, aside: int, newest: Mapping[int, int], arranged: tuple[int, ...]
+    row: Row[Any], session: Session, aside: int, complete: bool, arranged: tuple[int, ...]
 ) -> Scan:
     return Scan(
         id=row.id,
@@ -166,21 +172,28 @@ def _make_scan(
         set_aside=aside,
         first=from_us(row.first_us),
         last=from_us(row.last_us),
-        complete=_is_complete(row, newest[row.sequence_id]),
+        complete=complete,
         arranged=arranged,
         _session=session,
         _machine_id=row.machine_id,
     )
 
 
-def _is_complete(row: Row[Any], newest_first_us: int) -> bool:
+def _is_complete(connection: Connection, row: Row[Any], newest_first_us: int) -> bool:
     """Planned shots reached, said to be the last, overtaken by a later scan of its sequence, or idle for 5 cycles."""
     if row.closed_us is not None or (row.planned_shots is not None and row.taken >= row.planned_shots):
         return True
     if newest_first_us > row.last_us:
         return True
-    cycle = (row.last_us - row.first_us) / (row.taken - 1) if row.taken > 1 else _FIRST_CYCLE_US
-    return bool(now_us() - row.last_us > IDLE_CYCLES * cycle)
+    return bool(now_us() - row.last_us > IDLE_CYCLES * _cycle_us(connection, row.id))
+
+
+def _cycle_us(connection: Connection, scan_id: int) -> int:
+    """Return the usual interval of the last shots of a scan: a night without shots does not make it longer."""
+    started = tables.shot.c.started_us
+    newest = select(started).where(tables.shot.c.scan_id == scan_id).order_by(started.desc())
+    times: list[int] = list(connection.execute(newest.limit(_CYCLES_LOOKED_AT + 1)).scalars())
+    return median_low([later - earlier for later, earlier in pairwise(times)] or [_FIRST_CYCLE_US])
 
 
 def _newest_first_us(connection: Connection, sequence_id: int) -> int:
