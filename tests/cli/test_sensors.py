@@ -144,11 +144,11 @@ def test_bins_in_a_pipe_and_as_json(run: Callable[..., Any], folder: Path) -> No
     assert line.startswith("2026-10-05T21:00:00+02:00\t")
     answer = json.loads(run("sensors", "room", "--json").out)
     assert {key: answer[key] for key in ("sensor", "machine", "unit", "range", "width_s")} == {
-        "sensor": "room", "machine": "heron", "unit": "degC", "range": [20.0, 22.0], "width_s": 72.0,
+        "sensor": "room", "machine": "heron", "unit": "degC", "range": [20.0, 22.0], "width_s": 120.0,
     }  # fmt: skip
     first = answer["bins"][0]
-    assert first.pop("mean") == pytest.approx(sum(round(20 + k / 720, 3) for k in range(15)) / 15, abs=1e-9)
-    assert first == {"at": "2026-10-05T18:00:00+00:00", "readings": 15, "low": 20.0, "high": 20.019}
+    assert first.pop("mean") == pytest.approx(sum(round(20 + k / 720, 3) for k in range(24)) / 24, abs=1e-9)
+    assert first == {"at": "2026-10-05T18:00:00+00:00", "readings": 24, "low": 20.0, "high": 20.032}
     assert run("sensors", "rom").code == 3
     assert run("sensors", "--since", "2026-10-05").code == 2
 

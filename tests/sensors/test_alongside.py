@@ -167,11 +167,19 @@ def test_spans_and_bins(anywhere: str) -> None:
         part = store.sensor("room", moment(1000), moment(8000))
         inside = (seconds >= 1000) & (seconds < 8000)
         np.testing.assert_array_equal(part["value"], values[inside])
-        for bins, since, until in ((60, None, None), (10, None, None), (7, moment(1000), moment(8000))):
+        spans = [
+            (60, None, None),
+            (10, None, None),
+            (7, moment(1000), moment(8000)),
+            (1, None, None),
+            (5000, None, None),
+        ]
+        for bins, since, until in spans:
             binned = store.sensor_bins("room", since, until, bins=bins)
             own = part if since else frame
             width = binned.attrs["width_s"]
-            assert len(binned) <= bins
+            assert bins // 3 < len(binned) <= bins
+            assert (binned["at"] - pd.Timestamp(0, tz="UTC")).dt.total_seconds().mod(width).eq(0).all()
             place = ((own["at"] - binned["at"][0]).dt.total_seconds() // width).astype(int)
             groups = own["value"].groupby(place)
             assert binned["readings"].tolist() == groups.size().tolist()

@@ -71,8 +71,8 @@ class Sensing(Face):
     ) -> pd.DataFrame:
         """Return a span of a sensor in at most so many bins: at (UTC, begin), readings, low, mean, high.
 
-        Years take a second: bins of an hour and more are whole hours, read without unpacking them. Bins without
-        readings are left out; low, mean and high are of the finite readings. ``attrs["width_s"]`` is the width.
+        Their width, ``attrs["width_s"]``, is a round one; bins of an hour and more are whole hours, read without
+        unpacking them. Bins without readings are left out; low, mean and high are of the finite readings.
 
         Raises
         ------

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import count
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -68,7 +70,7 @@ def bins_frame(bins: Bins) -> pd.DataFrame:
 def read_bins(
     connection: Connection, sensor_id: int, since_us: int | None, until_us: int | None, most: int
 ) -> Bins:
-    """Return a span of a sensor in at most so many bins of equal width.
+    """Return a span of a sensor in at most so many bins of one round width, which begin at multiples of it in UTC.
 
     Bins of an hour and more are made of whole hours, which are not unpacked for it: where the span begins or ends
     within an hour, that hour counts whole.
@@ -79,27 +81,30 @@ def read_bins(
         return Bins(nothing, HOUR_US, nothing, none, none, none)
     start = first if since_us is None else max(first, since_us)
     stop = last + 1 if until_us is None else min(last + 1, until_us)
-    if stop - start <= most * HOUR_US:
-        width = max(1, -(-(stop - start) // most))
-        if width > SECOND_US:
-            width = -(-width // SECOND_US) * SECOND_US
-        return _binned(_single(connection, sensor_id, start, stop), start, width)
-    begin = start // HOUR_US
-    hours = -(-((stop - 1) // HOUR_US + 1 - begin) // most)
-    return _binned(_heads(connection, sensor_id, start, stop), begin * HOUR_US, hours * HOUR_US)
+    width = next(width for width in _widths() if (stop - 1) // width - start // width < most)
+    read = _single if width < HOUR_US else _heads
+    return _binned(read(connection, sensor_id, start, stop), width)
 
 
-def _binned(parts: _Parts, start_us: int, width_us: int) -> Bins:
+def _widths() -> Iterator[int]:
+    """Yield round widths in microseconds, rising: from 1 us to a second, then parts of an hour, of a day, days."""
+    yield from (factor * 10**power for power in range(6) for factor in (1, 2, 5))
+    yield from (SECOND_US * s for s in (1, 2, 5, 10, 15, 20, 30, 60, 120, 300, 600, 900, 1200, 1800))
+    yield from (HOUR_US * hours for hours in (1, 2, 3, 4, 6, 8, 12))
+    yield from (24 * HOUR_US * days for days in count(1))
+
+
+def _binned(parts: _Parts, width_us: int) -> Bins:
     """Return what the parts come to bin by bin."""
-    places = (parts.at_us - start_us) // width_us
-    firsts = np.flatnonzero(np.diff(places, prepend=-1))
+    places = parts.at_us // width_us
+    firsts = np.flatnonzero(np.append(True, places[1:] != places[:-1])) if len(places) else places
     if not len(firsts):
         return Bins(parts.at_us, width_us, parts.counts, parts.low, parts.total, parts.high)
     finite = np.add.reduceat(parts.finite, firsts)
     with np.errstate(invalid="ignore", over="ignore"):
         mean = np.where(finite > 0, np.add.reduceat(parts.total, firsts) / np.maximum(finite, 1), np.nan)
     return Bins(
-        places[firsts] * width_us + start_us,
+        places[firsts] * width_us,
         width_us,
         np.add.reduceat(parts.counts, firsts),
         np.fmin.reduceat(parts.low, firsts),
