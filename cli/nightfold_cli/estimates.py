@@ -11,7 +11,7 @@ from nightfold_cli.layout import Column, Row
 
 if TYPE_CHECKING:
     from nightfold.fits.estimate import Estimate
-    from nightfold.fits.kept import KeptEstimate
+    from nightfold.fits.keptfit import KeptEstimate
     from nightfold.fits.result import FitWarning
 
     AnyEstimate = Estimate | KeptEstimate

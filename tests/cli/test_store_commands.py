@@ -272,7 +272,11 @@ def test_one_shot(heron: Path, run: Run) -> None:
     shot = decoded(answer)["shot"]
     assert shot["uid"] == "heron-20260928-0000"
     assert shot["parameters"]["coil_current"]["unit"] == "A"
-    assert set(shot["observables"]["atom_number"]) == {"value", "stderr", "unit", "state"}
+    assert set(shot["observables"]["atom_number"]) == {
+        *("value", "stderr", "unit", "state", "derived", "reread"),
+    }
+    assert not shot["observables"]["atom_number"]["reread"]
+    assert not shot["parameters"]["coil_current"]["corrected"]
     assert shot["line"] == 1
 
 

@@ -17,7 +17,7 @@ from nightfold_cli.scantext import counted
 from nightfold_cli.typed import typed_value
 
 if TYPE_CHECKING:
-    from nightfold.fits.kept import KeptFit
+    from nightfold.fits.keptfit import KeptFit
     from nightfold.store import Store
 
 HELP = "tell the history of a shot, or correct its settings"

@@ -12,7 +12,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from nightfold.fits.again import Refit
-    from nightfold.fits.kept import KeptFit
+    from nightfold.fits.keptfit import KeptFit
     from nightfold.fits.many import FitTable
     from nightfold.fits.result import FitResult
     from nightfold.scans.arrangements import Arrangement

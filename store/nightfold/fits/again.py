@@ -7,7 +7,8 @@ from dataclasses import dataclass
 from typing import Any
 
 from nightfold.errors import NightfoldError
-from nightfold.fits.kept import KeptFit, keep_fit, list_fits, slice_text
+from nightfold.fits.kept import keep_fit, list_fits, slice_text
+from nightfold.fits.keptfit import KeptFit
 from nightfold.fits.scanfit import FitRequest, fit_slices
 from nightfold.scans.listing import find_scan
 from nightfold.scans.scan import Scan
