@@ -110,6 +110,7 @@ def test_a_correction_says_what_is_stale_and_fit_again_mends_it(
     with open_store(where) as store:
         (after,) = store.fits()
         assert store.shot(UID).parameters["coil_current"].value == 60.8
+    assert all(len(line) <= 80 for line in screen[1:])
     row = next(line.split() for line in screen if line.startswith("loss-coarse#1"))
     old, new = before.estimates["center"], after.estimates["center"]
     assert row[1] == "center"
