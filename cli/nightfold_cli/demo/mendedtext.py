@@ -56,7 +56,7 @@ def show_seen(screen: Screen, store: Store, seen: Seen) -> None:
     """Show what the store tells beside fits; only people need it."""
     if not screen.terminal:
         return
-    fields = [("sensors", f"{seen.readings} readings of {seen.sensors}")]
+    fields = [("sensors", f"{seen.readings} readings of {seen.sensors} sensors")]
     fields += [(item.truth.sensor, _warming(item)) for item in seen.warmings]
     fields += [(item.truth.sequence, _version(store, item)) for item in seen.versions]
     if seen.amended:
