@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 from nightfold_cli.arguments import add_by, by_whom
 from nightfold_cli.failures import UsageError
 from nightfold_cli.historytext import history_entry, show_history
-from nightfold_cli.keptfits import named_fits, slice_lines
+from nightfold_cli.keptfits import named_fits, relative_lines, slice_lines
 from nightfold_cli.naming import named_scan
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.render import Screen
@@ -129,7 +129,7 @@ def _correct(screen: Screen, store: Store, args: Namespace, stated: dict[str, st
         return
     screen.heading(f"{counted(len(stale), 'kept fit')} stale now")
     for fit in stale:
-        where = "".join(f", {line}" for line in slice_lines(fit))
+        where = "".join(f", {line}" for line in (*relative_lines(fit), *slice_lines(fit)))
         screen.item(fit.scan_key, f"{fit.model}, {fit.observable} along {fit.along}{where}")
     keys = list(dict.fromkeys(fit.scan_key for fit in stale))
     commands = [f"nightfold fit --again {key}".rstrip() for key in (keys if len(keys) <= _FEW else [""])]
