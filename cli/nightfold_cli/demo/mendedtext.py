@@ -17,10 +17,10 @@ if TYPE_CHECKING:
     from nightfold.store import Store
 
 _COLUMNS = (
-    Column("what happened", wraps=True, least=22),
-    Column("what was done", wraps=True, least=22),
+    Column("what happened", wraps=True, least=16),
+    Column("what was done", wraps=True, least=16),
     Column("true", right=True, plain_name="truth"),
-    Column("without", right=True),
+    Column("without", right=True, spare=2),
     Column("found", right=True, plain_name="value"),
     Column("unit"),
     Column("holds it", plain_name="held"),
