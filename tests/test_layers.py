@@ -23,6 +23,7 @@ LAYERS: list[set[str]] = [
     {"schema"},
     {"ledger"},
     {"intake", "scans", "fits", "simulator", "sensors"},
+    {"merging"},
     {"faces"},
     {"store"},
     {"opening"},

@@ -41,6 +41,8 @@ GROUPS = (
         "keep",
         (
             ("export", "write a scan to a netCDF or CSV file"),
+            ("card", "show a machine's card, or those it had before"),
+            ("merge-machines", "make a machine taken under a wrong name the right one"),
             ("upgrade", "bring a store of an older nightfold up to date"),
             ("demo", "play six weeks of an invented machine"),
         ),
@@ -84,5 +86,5 @@ def overview() -> str:
     """Return the text of ``nightfold --help``."""
     parts = [_USAGE]
     for title, commands in GROUPS:
-        parts.append(f"{title}:\n" + "".join(f"  {name:<13}  {line}\n" for name, line in commands))
+        parts.append(f"{title}:\n" + "".join(f"  {name:<14}  {line}\n" for name, line in commands))
     return "\n".join([*parts, _OPTIONS])

@@ -116,6 +116,14 @@ class Screen:
         if self.terminal:
             self._styled("  " + printable(text), "")
 
+    def verbatim(self, text: str) -> None:
+        """Write a text as it stands, to be copied or kept in a file; a terminal gets no control characters."""
+        if self.terminal:
+            for line in text.splitlines():
+                self._styled(printable(line), "")
+        elif self.mode == "piped":
+            self.out.write(text if text.endswith("\n") else text + "\n")
+
     def item(self, head: str, text: str) -> None:
         """Write one item of a list: a head, then a sentence below or beside it."""
         if self.terminal:

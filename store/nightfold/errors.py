@@ -7,6 +7,7 @@
     ├── CardError          (ValueError)         a machine card cannot be used
     ├── UnitError          (ValueError)         a unit is unknown or does not convert
     ├── FormulaError       (ValueError)         an expression of the card cannot be used
+    ├── MergeError         (ValueError)         two machines cannot be merged as they are
     ├── FitError           (ValueError)         a fit was asked for that cannot be done
     ├── ChoiceNeeded       (ValueError)         the request fits several things; name one
     ├── NotFound           (LookupError)        no such scan, shot, machine, parameter, model
@@ -49,6 +50,20 @@ class RecordError(NightfoldError, ValueError):
 
 class CardError(NightfoldError, ValueError):
     """A machine card that cannot be used; the message names file, key, value found and value wanted."""
+
+
+class MergeError(NightfoldError, ValueError):
+    """Two machines that cannot be merged as they are; nothing was changed.
+
+    Attributes
+    ----------
+    reasons : tuple of str
+        All that speaks against it.
+    """
+
+    def __init__(self, old: str, into: str, reasons: list[str]) -> None:
+        self.reasons = tuple(reasons)
+        super().__init__("\n".join(f"{old} into {into}: {reason}" for reason in self.reasons))
 
 
 class UnitError(NightfoldError, ValueError):

@@ -63,7 +63,7 @@ def upgrade_tables(place: Place) -> UpgradeReport:
             return UpgradeReport(before, before, None)
         if before > REVISION:
             raise StoreError(f"store {place}: revision {before} is newer than this nightfold ({REVISION})")
-        copy = _copy(place, before, session) if place.path else None
+        copy = _copy(session) if place.path else None
         with session.writing(empty=True) as connection:
             _migrate(connection)
             _check_references(connection, place)
@@ -72,14 +72,28 @@ def upgrade_tables(place: Place) -> UpgradeReport:
         session.close()
 
 
-def _copy(place: Place, before: str, session: Session) -> Path:
-    assert place.path is not None
+def _copy(session: Session) -> Path:
     if session.read_only:
-        raise StoreReadOnly(f"store {place}: cannot be written, so it cannot be upgraded")
-    copy = place.path.with_name(f"{place.path.name}.before-{REVISION}")
+        raise StoreReadOnly(f"store {session.place}: cannot be written, so it cannot be upgraded")
+    return copy_beside(session, REVISION)
+
+
+def copy_beside(session: Session, what: str) -> Path:
+    """Copy the file of a store beside itself, as ``NAME.before-WHAT``, and return where.
+
+    Within a writing transaction the copy is the file as it was before.
+
+    Raises
+    ------
+    StoreError
+        If there is such a copy already.
+    """
+    path = session.place.path
+    assert path is not None
+    copy = path.with_name(f"{path.name}.before-{what}")
     if copy.exists():
-        raise StoreError(f"store {place}: {copy} exists already; move it away first")
-    with closing(sqlite3.connect(place.path)) as old, closing(sqlite3.connect(copy)) as new:
+        raise StoreError(f"store {session.place}: {copy} exists already; move it away first")
+    with closing(sqlite3.connect(path)) as old, closing(sqlite3.connect(copy)) as new:
         old.backup(new)
     return copy
 

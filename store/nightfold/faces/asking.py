@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from nightfold.card import MachineCard
+    from nightfold.ledger.cards import CardUsed
     from nightfold.ledger.history import ShotHistory
     from nightfold.ledger.sequences import SequenceView
 
@@ -30,7 +31,7 @@ class Asking(Face):
         with self._session.reading() as connection:
             return cards.cards_in_force(connection)
 
-    def cards_used(self, machine: str) -> list[cards.CardUsed]:
+    def cards_used(self, machine: str) -> list[CardUsed]:
         """Return the cards that a machine had, the oldest first: when each came into force, and what it changed.
 
         Raises
@@ -45,15 +46,20 @@ class Asking(Face):
         with self._session.reading() as connection:
             return sorted(connection.execute(select(tables.machine.c.name)).scalars())
 
-    def machine(self, name: str) -> str:
+    def machine(self, name: str | None = None) -> str:
         """Return the name under which the store has a machine: its own, or that of the one it was merged into.
+
+        Parameters
+        ----------
+        name : str, optional
+            Without it the only machine there is.
 
         Raises
         ------
-        NotFound
+        NotFound, ChoiceNeeded
         """
         with self._session.reading() as connection:
-            return str(selecting.find_machine(connection, name).name)
+            return str(selecting.the_machine(connection, name).name)
 
     def zone(self, machine: str) -> str:
         """Return the time zone in which a machine's times are shown."""

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from datetime import date
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from sqlalchemy import select
 
@@ -12,6 +12,9 @@ from nightfold import tables
 from nightfold.faces.face import Face
 from nightfold.ledger import correcting, notes, setting_aside
 from nightfold.timestamps import now_us
+
+if TYPE_CHECKING:
+    from nightfold.merging.machines import MergeReport
 
 
 class Mending(Face):
@@ -93,6 +96,53 @@ class Mending(Face):
             changed = correcting.correct_shots(connection, shots, settings, reason, by)
             follow_corrections(connection, changed)
         return len(changed)
+
+    def merge_machines(
+        self,
+        old: str,
+        into: str,
+        *,
+        reason: str,
+        by: str | None = None,
+        progress: Callable[[int], None] | None = None,
+        dry_run: bool = False,
+    ) -> MergeReport:
+        """Make everything of one machine another's, and let its name mean that machine from now on.
+
+        For a machine that was taken under a wrong name: shots, scans, notes, sensors of both are then of one, scans are
+        folded again as if the shots had come late, and files taken before are known when they are taken again. A file
+        is copied beside itself first, as ``NAME.before-merge``. It cannot be undone but by that copy.
+
+        Parameters
+        ----------
+        old, into : str
+            The name that goes, and the machine that stays: its card is in force.
+        reason : str
+            Why; needed.
+        by : str, optional
+        progress : callable, optional
+            Called now and then with the number of shots folded again.
+        dry_run : bool
+            Do it all, report it, and undo it.
+
+        Raises
+        ------
+        NotFound
+            If a machine is not in the store.
+        MergeError
+            If a name has another unit or kind at the other machine, or anything else speaks against it; all of it is
+            said, and nothing is changed.
+        ValueError
+            If there is no reason.
+        StoreError
+            If there is such a copy already.
+        """
+        from nightfold.merging.machines import merge_machines
+
+        self._writer.forget()
+        return merge_machines(
+            self._session, old, into, reason=reason, by=by, progress=progress, dry_run=dry_run
+        )
 
     def add_note(
         self,

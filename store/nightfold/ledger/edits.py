@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Connection, and_, select
+from sqlalchemy import Connection, Row, and_, select
 
 from nightfold import tables
 from nightfold.ledger.deriving import swept_inputs
@@ -69,12 +69,9 @@ def find_edits(
     NotFound
         If the machine is not in the store.
     """
-    if machine is not None:
-        find_machine(connection, machine)
+    machines: list[Row[Any]] = list(connection.execute(select(tables.machine)))
     edits: list[Edit] = []
-    for row in connection.execute(select(tables.machine)).all():
-        if machine is not None and row.name != machine:
-            continue
+    for row in machines if machine is None else [find_machine(connection, machine)]:
         low = moment_us(since, row.zone) if since is not None else None
         high = moment_us(until, row.zone) if until is not None else None
         for edit in _edits_of(connection, row.id, row.name):

@@ -179,7 +179,9 @@ def find_named(
     query = select(table, tables.machine.c.name.label("machine")).join(
         tables.machine, tables.machine.c.id == table.c.machine_id
     )
-    rows = [row for row in connection.execute(query) if machine is None or row.machine == machine]
+    if machine is not None:
+        query = query.where(tables.machine.c.id == find_machine(connection, machine).id)
+    rows = list(connection.execute(query))
     found = []
     for name in names:
         own = [row for row in rows if row.name == name]
