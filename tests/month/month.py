@@ -367,7 +367,7 @@ def summer_time_ends(month: Month, store: Store) -> None:
     from nightfold.intake.csvfile import CsvColumns
 
     intake = store.take_file(
-        path, columns=CsvColumns(machine="egret", parameters=["axis", "repump"], swept=["coil_current"])
+        path, columns=CsvColumns(machine="egret", parameters=("axis", "repump"), swept=("coil_current",))
     )
     ambiguous = [shot for shot in shots if shot.started.astimezone(VIENNA).hour == 2]
     assert (intake.new, len(intake.refused)) == (len(shots) - len(ambiguous), len(ambiguous)) == (6, 12)

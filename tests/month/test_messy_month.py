@@ -124,9 +124,10 @@ def compare_sensors(store: Store, month: Month) -> None:
         [month.room[when] for when in sorted(month.room)], abs=1e-11
     )
     beside = store.shots(scan="autumn", sensors=["room"])
-    for row in beside.itertuples(index=False):
-        nearest = min(month.room, key=lambda when: abs(when - row.started))
-        assert row.room == pytest.approx(month.room[nearest], abs=1e-11)
+    for uid, room in zip(beside.uid, beside.room, strict=True):
+        started = month.shots[uid].started
+        nearest = min(month.room, key=lambda when: abs(when - started))
+        assert room == pytest.approx(month.room[nearest], abs=1e-11)
 
 
 def compare_fits(store: Store, month: Month) -> None:
@@ -163,9 +164,7 @@ def compare_relative(store: Store, month: Month) -> None:
     )
     table = store.scan("with-references").table(relative_to="reference")
     times, levels = zip(*references, strict=True)
-    for row in table.itertuples(index=False):
-        true = month.shots[row.uid]
+    for uid, ratio in zip(table.uid, table.atom_number, strict=True):
+        true = month.shots[uid]
         level = np.interp(true.started.timestamp(), times, levels)
-        assert row.atom_number == pytest.approx(true.readings["atom_number"][0][0] / level, rel=1e-12), (
-            row.uid
-        )
+        assert ratio == pytest.approx(true.readings["atom_number"][0][0] / level, rel=1e-12), uid
