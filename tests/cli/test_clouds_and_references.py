@@ -132,7 +132,7 @@ def test_a_relative_fit_is_shown_as_such(where: Path, run: Run, on_screen: Show)
     assert "atom_number[up] relative to reference shots along rf_frequency" in on_screen(
         "--store", where, *arguments
     )
-    assert "relative to reference" in on_screen("--store", where, "fits")
+    assert "relative to reference" in on_screen("--store", where, "fits", width=120)
 
 
 def test_exports(where: Path, at_home: Path, run: Run) -> None:

@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 from nightfold import FitResult, Store, fit_curve, open_store
-from nightfold.errors import NoReference
+from nightfold.errors import ChoiceNeeded, NoReference
 from nightfold.fits.scanfit import FitRequest, fit_slices
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
@@ -116,6 +116,33 @@ def test_a_reference_shot_that_changes_makes_it_stale_and_not_the_plain_one(here
     assert [kept.stale for kept in here.fits("loss")] == [False, False]
     here.set_aside(["shot-30"], "not in the trap")
     assert [kept.stale for kept in here.fits("loss")] == [False, True]
+
+
+def test_again_brings_it_up_to_date_as_it_was(here: Store) -> None:
+    fit(here)
+    fit(here, relative_to="reference", reference_within="25 min")
+    here.take(
+        [{"format": 1, "uid": "shot-30", "observables": {"atom_number": {"value": 7e4, "stderr": 700.0}}}]
+    )
+    (done,) = here.refit("loss")
+    assert done.before is not None
+    assert done.after is not None
+    assert done.after.settings == done.before.settings
+    assert done.after.settings["reference_within"] == 1500.0
+    now = fit(here, relative_to="reference", reference_within="25 min", keep=False)
+    assert done.after.estimates["center"].value == now.estimates["center"].value
+    assert [kept.stale for kept in here.fits("loss")] == [False, False]
+
+
+def test_a_fit_of_an_observable_with_clouds_wants_one_of_them(here: Store) -> None:
+    for record in records():
+        clouds = {f"width[{name}]": 10.0 for name in ("up", "down")}
+        here.take([{"format": 1, "uid": record["uid"], "observables": clouds}])
+    with pytest.raises(
+        ChoiceNeeded, match=r"width was read of clouds: name one, width\[down\] or width\[up\]"
+    ):
+        here.fit("loss", "lorentzian", observable="width")
+    assert list(here.scan("loss").dataset(observables=["width"])["cloud"].values) == ["down", "up"]
 
 
 def test_it_is_stale_when_the_reference_shots_are_gone(here: Store) -> None:
