@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import csv
+import json
 from collections.abc import Iterator
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -13,6 +15,7 @@ import xarray as xr
 from nightfold import Store, open_store
 from nightfold.card import parse_card
 from nightfold.errors import CardError
+from nightfold.intake.csvcolumns import CsvColumns
 from nightfold.scans.netcdf import read_netcdf, write_netcdf
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
@@ -148,3 +151,33 @@ def test_one_camera_and_role_twice_is_refused_and_nothing_of_it_is_left(here: St
     assert "side" in outcome.refused[0].reason
     assert "atoms" in outcome.refused[0].reason
     assert here.shots()["uid"].tolist() == ["shot-1"]
+
+
+@pytest.mark.parametrize("unit", ["", " [atoms]"])
+@pytest.mark.parametrize("cloud", ODD)
+def test_odd_names_of_clouds_in_the_heads_of_a_table(
+    cloud: str, unit: str, store: Store, tmp_path: Path
+) -> None:
+    name = f"atom_number[{cloud}]"
+    path = tmp_path / "table.csv"
+    heads = ["uid", "started", "pulse [us]", f"{name}{unit}", f"{name}_stderr{unit}"]
+    with path.open("w", encoding="utf-8", newline="") as file:
+        csv.writer(file).writerows([heads, ["a", "2026-10-05T19:00:00Z", 10, 120.5, 3]])
+    columns = CsvColumns(machine="heron", sequence="split", swept=("pulse",), observables="rest")
+    outcome = store.take_file(path, columns=columns)
+    assert not outcome.refused, outcome.refused
+    reading = store.shot("a").observables[name]
+    assert (reading.value, reading.stderr, reading.unit) == (120.5, 3, "atoms" if unit else "")
+
+
+@pytest.mark.parametrize("cloud", ODD)
+def test_odd_names_of_clouds_in_json_lines(cloud: str, store: Store, tmp_path: Path) -> None:
+    name = f"atom_number[{cloud}]"
+    path = tmp_path / "shots.jsonl"
+    path.write_text(
+        json.dumps(shot(0, {name: 5, f"{name}_stderr": 1}), ensure_ascii=False) + "\n", encoding="utf-8"
+    )
+    assert not store.take_file(path).refused
+    reading = store.shot("shot-0").observables[name]
+    assert (reading.value, reading.stderr) == (5, 1)
+    assert list(json.loads(json.dumps(list(store.shot("shot-0").observables)))) == [name]
