@@ -8,7 +8,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
-from nightfold_cli.demo.truths import Found, find_truth
+from nightfold_cli.demo.truths import MACHINE, Found, find_truth
 from nightfold_cli.progress import Progress
 
 if TYPE_CHECKING:
@@ -61,8 +61,6 @@ def mend_all(store: Store, campaign: Campaign) -> list[Mended]:
     with Progress("putting right", len(campaign.mishaps), sys.stderr) as progress:
         for count, mishap in enumerate(campaign.mishaps):
             progress(count)
-            if mishap.kind not in _WAYS:
-                continue
             without = tuple(_without(store, mishap, truth) for truth in mishap.truths)
             done = _WAYS[mishap.kind](store, mishap, campaign)
             found = tuple(find_truth(store, truth) for truth in mishap.truths)
@@ -126,6 +124,11 @@ def _drifting(store: Store, mishap: Mishap, campaign: Campaign) -> str:
     return "relative to the reference shots"
 
 
+def _misnamed(store: Store, mishap: Mishap, campaign: Campaign) -> str:
+    store.merge_machines(str(mishap.machine), MACHINE, reason="the control program was set up anew", by=BY)
+    return f"{mishap.machine} merged into {MACHINE}: {_count(store, mishap)} shots in one scan"
+
+
 _WAYS: Mapping[str, Callable[[Store, Mishap, Campaign], str]] = {
     "resumed": _resumed,
     "adaptive": _adaptive,
@@ -134,6 +137,7 @@ _WAYS: Mapping[str, Callable[[Store, Mishap, Campaign], str]] = {
     "misrecorded": _misrecorded,
     "mislabelled": _mislabelled,
     "drifting": _drifting,
+    "misnamed": _misnamed,
 }
 
 
