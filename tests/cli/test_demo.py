@@ -2,16 +2,24 @@
 
 from __future__ import annotations
 
+import io
 import json
+import re
 from datetime import datetime
 from pathlib import Path
 from typing import Any
 
 import pytest
 
+from nightfold.fits.estimate import Estimate
 from nightfold.opening import open_store
-from nightfold_cli.demo.mending import HAPPENED
+from nightfold.simulator import Mishap
+from nightfold.simulator.evening import run_nights
+from nightfold_cli.demo.mendedtext import show_mended
+from nightfold_cli.demo.mending import HAPPENED, Mended
+from nightfold_cli.demo.truths import Found
 from nightfold_cli.main import main
+from nightfold_cli.render import Screen
 
 Document = dict[str, Any]
 
@@ -29,6 +37,13 @@ def document(folder: Path) -> Document:
         assert main(["demo", str(folder), "--nights", "10", "--json"]) == 0
     answer: Document = json.loads(folder.parent.joinpath("out").read_text(encoding="utf-8"))
     return answer
+
+
+def mishap_of(kind: str) -> Mishap:
+    """Return a mishap as the simulator states it."""
+    return next(
+        mishap for night in run_nights(39, 8, None) for mishap in night.mishaps if mishap.kind == kind
+    )
 
 
 def mishap(document: Document, kind: str) -> Document:
@@ -80,3 +95,25 @@ def test_the_week_after_next_is_not_told_of(document: Document) -> None:
     assert document["sensors"] == []
     assert document["readings"] > 3 * 11 * 1440
     assert all(abs(truth["value"] - truth["truth"]) < 4 * truth["stderr"] for truth in document["truths"])
+
+
+@pytest.mark.parametrize("width", [80, 120])
+def test_the_table_of_mishaps_fits_the_screen(width: int) -> None:
+    (truth,) = mishap_of("reanalysed").truths
+    wrong = Found(truth, "dense-again#1", Estimate(0.00235, 0.000086, "1/ms"), True)
+    right = Found(truth, "dense-again#1", Estimate(0.00421, 0.00017, "1/ms"), True)
+    nothing = Found(truth, None, None, False, "no such scan was found")
+    out = io.StringIO()
+    screen = Screen(out, io.StringIO(), "terminal", width)
+    show_mended(
+        screen,
+        [
+            Mended(mishap_of("reanalysed"), "48 shots amended, 1 fit done again", (wrong,), (right,)),
+            Mended(mishap_of("resumed"), "nothing", (None,), (nothing,)),
+        ],
+    )
+    lines = re.sub(r"\x1b\[[0-9;]*m", "", out.getvalue()).splitlines()
+    assert max(map(len, lines)) <= width
+    assert any("0.00415" in line and "0.00421(17)" in line and " yes" in line for line in lines)
+    assert any("0.002350(86)" in line for line in lines) == (width == 120)
+    assert "no such scan" in " ".join(" ".join(lines).split())
