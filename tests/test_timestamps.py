@@ -16,7 +16,6 @@ from nightfold.timestamps import (
     find_zone,
     from_us,
     local_times,
-    night_of,
     nights_of,
     parse_moment,
     to_us,
@@ -163,13 +162,17 @@ def test_unknown_zones() -> None:
         ("2026-10-05T05:59:00", "Europe/Vienna", time(8), date(2026, 10, 4)),
         ("2026-10-05T06:00:00", "Europe/Vienna", time(8), date(2026, 10, 5)),
         ("2026-10-05T00:00:00", "UTC", time(0), date(2026, 10, 5)),
+        ("2026-10-25T00:29:59", "Europe/Vienna", time(2, 30), date(2026, 10, 24)),
+        ("2026-10-25T00:30:00", "Europe/Vienna", time(2, 30), date(2026, 10, 25)),  # 02:30 for the first time
+        ("2026-10-25T01:15:00", "Europe/Vienna", time(2, 30), date(2026, 10, 25)),  # 02:15 once more
+        ("2026-03-29T00:59:59", "Europe/Vienna", time(2, 30), date(2026, 3, 28)),
+        ("2026-03-29T01:00:00", "Europe/Vienna", time(2, 30), date(2026, 3, 29)),  # 03:00, there is no 02:30
         ("2026-10-05T16:29:59", "America/New_York", time(12, 30), date(2026, 10, 4)),
         ("2026-10-05T16:30:00", "America/New_York", time(12, 30), date(2026, 10, 5)),
     ],
 )
 def test_the_night_of_a_moment(utc: str, zone: str, boundary: time, night: date) -> None:
     us = parse_moment(f"{utc}Z")
-    assert night_of(us, zone, boundary) == night
     assert list(nights_of(np.array([us]), zone, boundary)) == [night]
 
 

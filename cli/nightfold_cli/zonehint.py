@@ -17,7 +17,7 @@ _LINES = (".jsonl", ".ndjson", ".json")
 
 def zone_hint(store: Store, files: Sequence[str]) -> str | None:
     """Return a sentence where records have one offset, not that of UTC, and their machine has no card."""
-    cards = store.cards()
+    cards = {*store.cards(), *store.aliases()}
     found: dict[str, set[timedelta | None]] = {}
     for name in files:
         if Path(name).suffix.lower() in _LINES:

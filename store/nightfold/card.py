@@ -15,6 +15,8 @@ from nightfold.cardkeys import TIME_ZONE, Kind, Table
 from nightfold.errors import CardError
 
 if TYPE_CHECKING:
+    from zoneinfo import ZoneInfo
+
     from nightfold.formulas.definitions import Derived
 
 DAY_S = 86400.0
@@ -103,6 +105,13 @@ class MachineCard:
     derived: Mapping[str, DerivedQuantity] = field(default_factory=dict, hash=False)
     main_observable: str | None = None
     toml: str = ""
+
+    @property
+    def naive_zone(self) -> ZoneInfo | None:
+        """The zone in which times without an offset are read; None where they are refused."""
+        from nightfold.timestamps import find_zone
+
+        return find_zone(self.zone) if self.naive_times else None
 
     @property
     def digest(self) -> str:

@@ -115,17 +115,19 @@ def nights_of(started_us: NDArray[np.int64], zone: str, boundary: time = time(12
     -------
     (n,) object array of datetime.date
     """
-    import pandas as pd
+    import numpy as np
 
-    local = local_times(started_us, zone).tz_localize(None)
-    shift = pd.Timedelta(hours=boundary.hour, minutes=boundary.minute, seconds=boundary.second)
-    return (local - shift).date
+    local = local_times(started_us, zone).tz_localize(None).to_numpy().astype("datetime64[us]")
+    shift = np.timedelta64(boundary.hour * 3600 + boundary.minute * 60 + boundary.second, "s")
+    dates, place = np.unique((local - shift).astype("datetime64[D]"), return_inverse=True)
+    # a boundary in the hour that the clocks show twice counts when it comes first: nights follow each other
+    ends = np.array([_end_of(night, zone, boundary) for night in dates.tolist()], dtype=np.int64)
+    nights: NDArray[np.object_] = (dates[place] + (started_us >= ends[place])).astype(object)
+    return nights
 
 
-def night_of(us: int, zone: str, boundary: time = time(12)) -> date:
-    """Return the date of the night one moment belongs to."""
-    local = from_us(us).astimezone(find_zone(zone)).replace(tzinfo=None)
-    return (local - timedelta(hours=boundary.hour, minutes=boundary.minute, seconds=boundary.second)).date()
+def _end_of(night: date, zone: str, boundary: time) -> int:
+    return to_us(datetime.combine(night + timedelta(days=1), boundary, find_zone(zone)))
 
 
 def local_times(started_us: NDArray[np.int64], zone: str) -> pd.DatetimeIndex:

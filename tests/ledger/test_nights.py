@@ -118,3 +118,91 @@ def test_a_new_card_moves_the_nights_there_are(store: Store, tmp_path: Path) -> 
     assert nights(store) == [(date(2026, 10, 4), 1)]
     use_card(store, tmp_path)
     assert nights(store) == [(date(2026, 10, 5), 1)]
+
+
+def every(
+    minutes: int, first: str, last: str, zone: str = "Europe/Vienna", **fields: Any
+) -> list[dict[str, Any]]:
+    """Return shots in regular steps of real time between two local times, both included."""
+    begin, end = (
+        datetime.fromisoformat(time).replace(tzinfo=ZoneInfo(zone)).timestamp() for time in (first, last)
+    )
+    return [
+        {"machine": "heron", "sequence": "s", "parameters": {"a": at},
+         "started": datetime.fromtimestamp(at, ZoneInfo("UTC")).isoformat(), **fields}
+        for at in range(int(begin), int(end) + 1, 60 * minutes)
+    ]  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("boundary", "first", "last", "night"),
+    [
+        ("12:00", "2026-10-06 11:00", "2026-10-06 13:30", date(2026, 10, 5)),
+        ("08:00", "2026-10-06 07:00", "2026-10-06 10:30", date(2026, 10, 5)),
+        ("08:00", "2026-10-06 08:00", "2026-10-06 13:30", date(2026, 10, 6)),  # noon is no boundary then
+        ("00:00", "2026-10-06 22:00", "2026-10-07 02:00", date(2026, 10, 6)),
+        ("12:00", "2026-10-25 10:00", "2026-10-25 13:30", date(2026, 10, 24)),  # clocks went back that night
+        ("02:30", "2026-10-25 01:00", "2026-10-25 05:00", date(2026, 10, 24)),  # the boundary comes twice
+        ("02:30", "2026-03-29 01:00", "2026-03-29 05:00", date(2026, 3, 28)),  # the boundary is left out
+    ],
+)
+def test_a_session_across_the_boundary_is_of_one_night(
+    store: Store, tmp_path: Path, boundary: str, first: str, last: str, night: date
+) -> None:
+    use_card(store, tmp_path, f'night_boundary = "{boundary}"')
+    session = every(10, first, last, scan="x", swept=["a"])
+    store.take(session)
+    assert nights(store) == [(night, len(session))]
+    assert store.nights()["scans"].tolist() == [1]
+    moments = [datetime.fromisoformat(shot["started"]) for shot in session]
+    assert set(store.night_of(moments)) == {night}
+
+
+@pytest.mark.parametrize(("minutes", "sessions"), [(59, 1), (61, 2)])
+def test_a_pause_of_an_hour_at_the_boundary_parts(
+    store: Store, tmp_path: Path, minutes: int, sessions: int
+) -> None:
+    use_card(store, tmp_path)
+    store.take(every(minutes, "2026-10-06 09:30", "2026-10-06 14:00"))
+    assert len(nights(store)) == sessions
+
+
+def test_the_night_of_any_moment_is_that_of_the_table(store: Store, tmp_path: Path) -> None:
+    """Also of moments between shots, and of some moments alone: what was not asked for has its say."""
+    use_card(store, tmp_path)
+    store.take(every(20, "2026-10-05 18:00", "2026-10-06 14:00"))  # runs on past noon
+    store.take(every(20, "2026-10-06 19:00", "2026-10-07 11:00"))
+    store.take(every(20, "2026-10-07 13:00", "2026-10-07 15:00"))  # after a pause
+    frame = store.nights()
+    table = dict(zip(frame.night, frame.shots, strict=True))
+    every_shot = [at.to_pydatetime() for at in store.shots()["started"]]
+    alone = [store.night_of([at])[0] for at in every_shot]
+    assert {night: alone.count(night) for night in table} == table
+    assert store.night_of(every_shot[::-1]) == alone[::-1]
+
+    def local(text: str) -> datetime:
+        return datetime.fromisoformat(text).replace(tzinfo=ZoneInfo("Europe/Vienna"))
+
+    assert store.night_of([local("2026-10-06 13:50"), local("2026-10-06 18:00")]) == [
+        date(2026, 10, 5),
+        date(2026, 10, 6),
+    ]
+    assert store.night_of([local("2026-10-06 14:30")]) == [
+        date(2026, 10, 5)
+    ]  # less than an hour after the last shot
+    assert store.night_of([local("2026-10-07 12:30"), local("2030-01-01 01:00")]) == [
+        date(2026, 10, 7),
+        date(2029, 12, 31),
+    ]
+    assert store.night_of([]) == []
+
+
+def test_a_machine_that_never_pauses_has_the_nights_of_the_table(store: Store, tmp_path: Path) -> None:
+    use_card(store, tmp_path)
+    store.take(every(30, "2026-10-05 09:00", "2026-10-09 15:00"))
+    frame = store.nights()
+    shots = [at.to_pydatetime() for at in store.shots()["started"]]
+    alone = [store.night_of([at])[0] for at in shots]
+    assert {night: alone.count(night) for night in frame.night} == dict(
+        zip(frame.night, frame.shots, strict=True)
+    )

@@ -405,7 +405,59 @@ def test_fits_stay_and_are_stale_where_scans_grew(anywhere: str) -> None:
         ]
 
 
-def test_corrections_and_arrangements_hold(anywhere: str) -> None:
+def test_what_was_joined_by_hand_stays_joined(anywhere: str) -> None:
+    with open_store(anywhere) as store:
+        for first, name, label in ((0, WRONG, "x"), (10, WRONG, "y"), (20, RIGHT, "x"), (30, RIGHT, "y")):
+            store.take([simple(first + k, name, scan=label, swept=["a"]) for k in range(6)])
+        ids = [scan.id for scan in store.scans() if scan.machine == WRONG]
+        store.join_scans(ids, reason="a typing error")
+        store.merge_machines(WRONG, RIGHT, reason="x")
+        joined = next(scan for scan in store.scans() if scan.id == ids[0])
+        assert set(joined.table()["a"]) >= {0, 5, 10, 15}
+        assert sum(scan.shots for scan in store.scans()) == 24
+        (number,) = (
+            store.arrangements()["id"] if "id" in store.arrangements() else store.arrangements()["number"]
+        )
+        store.undo_arrangement(int(number))
+        assert sorted((scan.key, scan.shots) for scan in store.scans()) == [("x#1", 12), ("y#1", 12)]
+
+
+def test_derived_quantities_are_those_of_the_machine(anywhere: str, tmp_path: Path) -> None:
+    def card(machine: str, expression: str, extra: str = "") -> Path:
+        path = tmp_path / f"{machine}.toml"
+        path.write_text(
+            f'machine = "{machine}"\n[parameters.f]\nunit = "MHz"\n{extra}'
+            f'[derived.detuning]\nexpression = "{expression}"\n'
+        )
+        return path
+
+    def shots(machine: str, first: int) -> list[Record]:
+        return [
+            simple(first + k, machine, scan="x", swept=["detuning"], parameters={"f": 80.0 + first + k})
+            for k in range(6)
+        ]
+
+    with open_store(anywhere) as store:
+        store.use_card(card(WRONG, "3*f"))
+        store.use_card(card(RIGHT, "2*f - 160 MHz"))
+        store.take([*shots(WRONG, 0), *shots(RIGHT, 6)])
+        store.merge_machines(WRONG, RIGHT, reason="x")
+        assert store.shots(["detuning"])["detuning"].tolist() == [2.0 * k for k in range(12)]
+        (scan,) = store.scans()
+        assert (scan.key, scan.axes[0].points) == ("x#1", 12)
+        assert store.parameters()["name"].tolist() == ["detuning", "f"]
+        store.use_card(card("egret", "f", '[parameters.x]\nunit = "A"\n'))
+        store.take([simple(0, "egret", parameters={"detuning2": 5})])
+        (tmp_path / "heron.toml").write_text(
+            'machine = "heron"\n[parameters.f]\nunit = "MHz"\n[derived.detuning]\nexpression = "2*f - 160 MHz"\n'
+            '[derived.detuning2]\nexpression = "f"\n'
+        )
+        store.use_card(tmp_path / "heron.toml")
+        with pytest.raises(MergeError, match="detuning2"):
+            store.merge_machines("egret", RIGHT, reason="x")
+
+
+def test_corrections_hold(anywhere: str) -> None:
     records = [simple(k, WRONG if k < 6 else RIGHT, scan="x", swept=["a"]) for k in range(12)]
     with open_store(anywhere) as store:
         store.take(records)

@@ -11,6 +11,7 @@ from sqlalchemy import select
 from nightfold import tables
 from nightfold.faces.face import Face
 from nightfold.ledger import cards, deriving, edits, nightly, notes, selecting
+from nightfold.ledger.names import read_aliases
 from nightfold.ledger.shot import ShotView, view_shot
 from nightfold.timestamps import to_us, utc_times
 
@@ -60,6 +61,11 @@ class Asking(Face):
         """
         with self._session.reading() as connection:
             return str(selecting.the_machine(connection, name).name)
+
+    def aliases(self) -> dict[str, str]:
+        """Return the other names of machines, and which machine each means since they were merged."""
+        with self._session.reading() as connection:
+            return read_aliases(connection)
 
     def zone(self, machine: str) -> str:
         """Return the time zone in which a machine's times are shown."""

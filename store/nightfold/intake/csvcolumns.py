@@ -6,14 +6,18 @@ import math
 import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from datetime import UTC, datetime
+from datetime import datetime
 from shlex import quote
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 from nightfold.card import MachineCard, without_cloud
 from nightfold.errors import ChoiceNeeded, RecordError, UnitError
 from nightfold.records import clean_name
+from nightfold.timestamps import from_us, parse_moment
 from nightfold.units import parse_unit
+
+if TYPE_CHECKING:
+    from zoneinfo import ZoneInfo
 
 Role = Literal[
     "parameter", "observable", "stderr", "derived",
@@ -44,7 +48,8 @@ class CsvColumns:
     names : tuple of str
         Column names, for a file without a header line.
     started_at : str, datetime or None
-        For a file without times: when the first row was taken, with an offset from UTC.
+        For a file without times: when the first row was taken, with an offset from UTC unless the card has
+        `naive_times`.
     cycle_s : float
         For a file without times: seconds from one row to the next.
     """
@@ -62,8 +67,13 @@ class CsvColumns:
     started_at: str | datetime | None = None
     cycle_s: float = 10.0
 
-    def first_moment(self) -> datetime | None:
+    def first_moment(self, zone: ZoneInfo | None = None) -> datetime | None:
         """Return `started_at` in UTC.
+
+        Parameters
+        ----------
+        zone : ZoneInfo, optional
+            Where a time without an offset belongs; without it such a time is refused.
 
         Raises
         ------
@@ -81,9 +91,12 @@ class CsvColumns:
                 moment = datetime.fromisoformat(moment.strip())
             except ValueError as error:
                 raise RecordError("started_at", repr(self.started_at), wanted) from error
-        if moment.tzinfo is None:
+        if moment.tzinfo is None and zone is None:
             raise RecordError("started_at", f"{moment.isoformat()}, without an offset", wanted)
-        return moment.astimezone(UTC)
+        try:
+            return from_us(parse_moment(moment, zone))
+        except ValueError as problem:
+            raise RecordError("started_at", moment.isoformat(), str(problem)) from None
 
 
 @dataclass(frozen=True, slots=True)

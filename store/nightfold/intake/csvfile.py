@@ -55,7 +55,7 @@ def read_csv(
         read_header(cells, options, card, source),
         options,
         options.machine or (card.machine if card else None),
-        options.first_moment(),
+        options.first_moment(card.naive_zone if card else None),
         frozenset(card.derived) if card is not None else frozenset(),
     )
     number = 0

@@ -55,9 +55,7 @@ class MachineNames:
     @property
     def naive_zone(self) -> ZoneInfo | None:
         """The zone in which times without an offset are read; None where the card does not opt in."""
-        from nightfold.timestamps import find_zone
-
-        return find_zone(self.zone) if self.card is not None and self.card.naive_times else None
+        return self.card.naive_zone if self.card is not None else None
 
     def settings_behind(self, name: str) -> tuple[str, ...] | None:
         """Return the parameters of which the card derives another one; None for what it does not derive."""
