@@ -18,6 +18,7 @@ from nightfold import Store, open_store
 from nightfold.errors import FitError
 from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult
+from nightfold.fits.scanfit import digest_data
 from nightfold.intake.csvfile import CsvColumns
 from nightfold.scans.scan import Scan
 
@@ -272,6 +273,19 @@ def test_a_fit_of_a_quantity_that_is_gone_is_stale(ready: Store, card: Path) -> 
 def test_a_derived_observable_is_there_where_all_its_readings_are(ready: Store) -> None:
     ready.take(sweep(0, scan="one", swept=["detuning"], observables={"atom_number[up]": 1e4}))
     assert ready.scan("one").observables == ("atom_number[up]",)
+
+
+def test_the_last_digits_of_a_derived_value_make_no_fit_stale(ready: Store) -> None:
+    ready.take(sweep(0, scan="line", swept=["detuning"]))
+    table = ready.scan("line").table()
+    assert {"detuning", "polarisation"} <= set(table.attrs["derived"])
+    wanted = digest_data(table, "detuning", "polarisation")
+    for column in ("detuning", "polarisation", "polarisation_stderr"):
+        changed = table.copy()
+        changed[column] *= 1 + 1e-15
+        assert digest_data(changed, "detuning", "polarisation") == wanted
+        changed[column] *= 1 + 1e-8
+        assert digest_data(changed, "detuning", "polarisation") != wanted
 
 
 def test_set_aside_shots_and_repeats(ready: Store) -> None:

@@ -95,10 +95,21 @@ class SliceFit:
 
 
 def digest_data(table: pd.DataFrame, along: str, observable: str) -> bytes:
-    """Return a digest of the shots behind a fit: uids, points, values and their stderr."""
+    """Return a digest of the shots behind a fit: uids, points, values and their stderr.
+
+    Derived values count with 10 digits: the last ones of an exp or a sin are not the same on every computer.
+    """
     along, observable = column_name(along), column_name(observable)
     columns = ["uid", along, observable, f"{observable}_stderr"]
-    return digest_content([table[column].tolist() for column in columns])
+    derived = {name for own in table.attrs.get("derived", ()) for name in (own, f"{own}_stderr")}
+    return digest_content(
+        [
+            [float(f"{value:.10g}") for value in table[column]]
+            if column in derived
+            else table[column].tolist()
+            for column in columns
+        ]
+    )
 
 
 def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, list[SliceFit]]:

@@ -142,4 +142,6 @@ def read_shots(connection: Connection, scan_id: int, details: ScanDetails, set_a
         columns[f"{column_name(name)}_stderr"] = stderr
     frame = pd.DataFrame(columns)
     frame.attrs["units"] = details.units
+    made = [item.name for item in (*details.settings, *details.observables) if item.made_of is not None]
+    frame.attrs["derived"] = [column_name(name) for name in made]
     return frame

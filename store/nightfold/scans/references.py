@@ -161,6 +161,7 @@ def relate(connection: Connection, table: pd.DataFrame, comparison: Comparison) 
         levels[item.name] = name
     frame = pd.DataFrame(columns)
     frame.attrs = {
+        **table.attrs,
         "units": units,
         "levels": levels,
         "relative": {
