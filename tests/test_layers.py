@@ -33,6 +33,7 @@ RANK = {name: rank for rank, layer in enumerate(LAYERS) for name in layer}
 PURE = [
     "fits/engine",
     "fits/models",
+    "formulas",
     "scans/folding.py",
     "scans/stretches.py",
     "scans/segments.py",

@@ -15,7 +15,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from nightfold import Store, open_store
-from nightfold.errors import FitError
+from nightfold.errors import CardError, FitError
 from nightfold.fits.many import FitTable
 from nightfold.fits.result import FitResult
 from nightfold.fits.scanfit import digest_data
@@ -123,6 +123,19 @@ def test_from_the_record_to_the_fit(anywhere: str, card: Path) -> None:
         kept = store.fits("line")[0]
         assert kept.settings["derived"] == {"detuning": "1", "polarisation": "1"}
         assert not kept.stale
+        store.take([*sweep(1000, scan="by-detuning", swept=["detuning"]), *sweep(2000, swept=["detuning"])])
+        assert [axes(scan) for scan in store.scans()] == [["aom_frequency"], ["detuning"], ["detuning"]]
+        assert store.edits().empty
+        card.write_text(CARD.replace("160 MHz", "161 MHz"), encoding="utf-8")
+        store.use_card(card)
+        assert [fit.stale for fit in store.fits()] == [True]
+        assert store.derived(versions=True).query("name == 'detuning'")["version"].tolist() == ["1", "2"]
+        card.write_text(CARD.replace("detuning", "offset"), encoding="utf-8")
+        with pytest.raises(CardError, match="derived.detuning: found nothing"):
+            store.use_card(card)
+        card.write_text(CARD.replace("share[up]", "part[up]"), encoding="utf-8")
+        store.use_card(card)
+        assert "share[up]" not in store.observables()["name"].tolist()
 
 
 @pytest.mark.parametrize("label", ["line", None])
