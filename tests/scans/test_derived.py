@@ -131,7 +131,7 @@ def test_from_the_record_to_the_fit(anywhere: str, card: Path) -> None:
         assert [fit.stale for fit in store.fits()] == [True]
         assert store.derived(versions=True).query("name == 'detuning'")["version"].tolist() == ["1", "2"]
         card.write_text(CARD.replace("detuning", "offset"), encoding="utf-8")
-        with pytest.raises(CardError, match="derived.detuning: found nothing"):
+        with pytest.raises(CardError, match=r"derived.detuning: found nothing"):
             store.use_card(card)
         card.write_text(CARD.replace("share[up]", "part[up]"), encoding="utf-8")
         store.use_card(card)
