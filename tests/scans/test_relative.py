@@ -49,7 +49,7 @@ def test_what_is_farther_than_the_limit_does_not_count() -> None:
 
 
 def test_the_larger_of_stated_and_seen() -> None:
-    times, values = np.arange(7) * 60.0, at(10, 12, 10, 12, 10, 12, 10)
+    times, values = at(*range(0, 420, 60)), at(10, 12, 10, 12, 10, 12, 10)
     seen = 1.4826 * 2 / sqrt(1.5)  # every reading is 2 off the line through its neighbours
     assert scatter_of(times, values, 1800) == pytest.approx(seen)
     stated = at(0.1, 5, 0.1, nan, 0.1, 0.1, 0.1)
@@ -59,7 +59,7 @@ def test_the_larger_of_stated_and_seen() -> None:
 
 
 def test_scatter_needs_five_reference_shots_that_are_near_each_other() -> None:
-    times, values = np.arange(5) * 60.0, at(10, 12, 10, 12, 10)
+    times, values = at(*range(0, 300, 60)), at(10, 12, 10, 12, 10)
     assert scatter_of(times, values, 60) > 0
     assert isnan(scatter_of(times, values, 59))
     assert isnan(scatter_of(times[:4], values[:4], 60))
