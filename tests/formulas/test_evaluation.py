@@ -62,7 +62,7 @@ def test_what_cancels_has_no_uncertainty() -> None:
 
 
 def _spread(low: UFloat, high: UFloat) -> UFloat:
-    return low + 3 * (high if high.n > 2 else ufloat(2, 0))
+    return low + 3 * (high if high.n > 2 else 2.0)
 
 
 REFERENCES = {

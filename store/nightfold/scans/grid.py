@@ -74,9 +74,9 @@ def build_dataset(
 
     Notes
     -----
-    A co-moving parameter is a coordinate along its axis, a mixed one along its axes; should it take several values at one point after all, it
-    is spread over all dimensions. A parameter that is called like one of the dimensions above gets a
-    ``_`` behind its name. Attributes follow CF-1.11 (``units``, ``long_name``, ``ancillary_variables``).
+    A co-moving parameter is a coordinate along its axis, a mixed one along its axes; should it take several values
+    at one point after all, it is spread over all dimensions. A parameter that is called like one of the dimensions
+    above gets a ``_`` behind its name. Attributes follow CF-1.11 (``units``, ``long_name``, ``ancillary_variables``).
     """
     rows = table
     if not (table["started"].is_monotonic_increasing and table["started"].is_unique):
