@@ -159,3 +159,17 @@ def test_no_card(run: Run, at_home: Path) -> None:
         assert "none is in this store yet" in run("card").err
         store.take([record(1, "heron")])
     assert "heron has no card; 'nightfold take --card FILE" in run("card").err
+
+
+@pytest.mark.parametrize(
+    ("name", "said"),
+    [("Heron", True), ("heron2", True), ("hern", True), ("heron", False), ("egret", False), ("h", False)],
+)
+def test_a_name_like_another_is_pointed_at(run: Run, at_home: Path, name: str, said: bool) -> None:
+    with create_store("nightfold.sqlite") as store:
+        store.take([record(1, "heron")])
+    Path("a.jsonl").write_text(json.dumps(record(2, name)) + "\n")
+    answer = run("take", "a.jsonl")
+    assert answer.code == 0
+    assert (f"'nightfold merge-machines {name} heron --because TEXT'" in answer.err) == said
+    assert "merge-machines" not in run("take", "a.jsonl").err  # said once, when it came

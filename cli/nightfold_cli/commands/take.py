@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from nightfold_cli.failures import REFUSED, UsageError, explain
 from nightfold_cli.layout import Column
+from nightfold_cli.namehint import name_hint
 from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
 from nightfold_cli.refusals import summarise
@@ -86,6 +87,7 @@ def run(args: Namespace) -> int:
     with opened(args, screen, create=args.new) as store:
         if args.card:
             store.use_card(args.card)
+        machines = store.machines()
         for name in args.files:
             outcome = _take(store, name, args)
             if isinstance(outcome, Unreadable):
@@ -93,6 +95,7 @@ def run(args: Namespace) -> int:
             else:
                 total.add(name, outcome)
         hint = "" if args.sensors else zone_hint(store, [name for name, *_ in total.rows])
+        hint = name_hint(machines, store.machines()) or hint
     if screen.json:
         screen.answer({**total.counts(), "refused": total.refused})
     else:
