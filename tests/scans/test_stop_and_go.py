@@ -158,3 +158,14 @@ def test_a_found_scan_taken_up_after_a_pause_is_another_until_they_are_joined(op
     assert [scan.shots for scan in opened.scans()] == [7, 6]
     whole = opened.join_scans([1, 2])
     assert dict(whole.dataset().sizes) == {"coil_current": 13}
+
+
+def test_a_round_that_only_loses_shots_has_its_axes_looked_at_again(opened: Store) -> None:
+    once = [{"coil_current": x, "synth": 2 * x} for x in GRID.tolist()]
+    again = [{"coil_current": x, "synth": 3 * x} for x in GRID.tolist()]
+    opened.take(shots(0, once, label="loss", swept=["coil_current"]))
+    opened.take(shots(600, again, label="loss", swept=["coil_current"]))
+    assert opened.scan("loss").followers == {}
+    opened.take(shots(300, [{"hold_time": 20.0}], label="loss", swept=["hold_time"]))
+    assert sizes(opened) == [("loss#1", 13), ("loss#2", 1), ("loss#3", 13)]
+    assert [opened.scan(key).followers for key in ("loss#1", "loss#3")] == [{"synth": "coil_current"}] * 2

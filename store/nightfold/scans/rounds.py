@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import count
@@ -181,8 +182,10 @@ def fold_label(
     for gone in free:
         held = {scan_id: _held(group, gone) for scan_id, group in placed}
         retire(connection, gone, max(held, key=held.__getitem__, default=None))
+    before = Counter(member.scan_id for member in members)
     for scan_id, group in placed:
-        if any(member.scan_id != scan_id or member.id in fresh for member in group):
+        lost = before[scan_id] > _held(group, scan_id)
+        if lost or any(member.scan_id != scan_id or member.id in fresh for member in group):
             settle_axes(connection, scan_id, frozenset[int]().union(*(member.swept for member in group)))
 
 
