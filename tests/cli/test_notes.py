@@ -48,7 +48,8 @@ def test_tonight_is_the_night_that_runs_on(at_home: Path, run: Run) -> None:
     with create_store(path) as store:
         store.use_card(at_home / "m.toml")
         store.take(
-            {"machine": "m", "sequence": "s", "started": (now - timedelta(minutes=10 * k)).isoformat(), "parameters": {"a": 1}}
+            {"machine": "m", "sequence": "s", "parameters": {"a": 1},
+             "started": (now - timedelta(minutes=10 * k)).isoformat()}
             for k in range(12)
         )  # fmt: skip
     run("note", "still going")
@@ -170,6 +171,6 @@ def test_hostile_notes_are_shown_as_they_are(where: Path, run: Run, on_screen: S
     for command in ("notes", "nights", "scan loss-coarse", "shots heron-20260928-0003"):
         text = on_screen(*command.split(), "--store", where, width=width)
         assert "\\x1b[2J" in text, command
-        assert "\x1b" not in text and "\x07" not in text and "\u202e" not in text
+        assert not {"\x1b", "\x07", "\u202e"} & set(text)
         assert max(map(len, text.split("\n")[1:])) <= width
     assert "[bold]not[/bold]" in on_screen("notes", "--store", where, width=120).replace("\n", "")
