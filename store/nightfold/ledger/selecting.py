@@ -20,6 +20,9 @@ if TYPE_CHECKING:
     import pandas as pd
 
 _STDERR = "_stderr"
+DOUBLE = "double"
+"""The rule by which a shot is set aside that is there a second time, taken under another name of its machine."""
+
 _COLUMNS = ("uid", "started", "sequence", "scan")
 _OWN_COLUMNS = {"uid", "shot_id", "started", "sequence", "scan", "set_aside"}
 
@@ -124,6 +127,12 @@ def set_aside_now(shot_id: ColumnElement[int]) -> ColumnElement[bool]:
     """Return the condition that a shot is set aside at present."""
     table = tables.set_aside
     return exists().where(table.c.shot_id == shot_id, table.c.lifted_us.is_(None))
+
+
+def is_double(shot_id: ColumnElement[int]) -> ColumnElement[bool]:
+    """Return the condition that a shot is set aside because it is there a second time, by the rule `DOUBLE`."""
+    table = tables.set_aside
+    return exists().where(table.c.shot_id == shot_id, table.c.rule == DOUBLE, table.c.lifted_us.is_(None))
 
 
 def conditions(connection: Connection, selection: Selection) -> ColumnElement[bool]:

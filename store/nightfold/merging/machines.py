@@ -16,10 +16,11 @@ from sqlalchemy import Connection, and_, delete, func, insert, select, update
 from nightfold import tables
 from nightfold.card import without_cloud
 from nightfold.errors import MergeError
+from nightfold.ledger.correcting import digests_before
 from nightfold.ledger.deriving import release_derived
 from nightfold.ledger.names import MachineNames, Names
 from nightfold.ledger.rows import chunks
-from nightfold.ledger.selecting import find_machine
+from nightfold.ledger.selecting import DOUBLE, find_machine
 from nightfold.ledger.setting_aside import clean_reason
 from nightfold.merging.objections import KINDS, find_objections
 from nightfold.merging.rows import own_sets, point_to, rename_sets
@@ -46,7 +47,7 @@ class MergeReport:
     names, shared_names : int
         Its parameters, observables and sensors, and how many of them the other machine had too.
     doubles : int
-        Shots that were there under both names; those of the old one are set aside.
+        Shots that were there under both names; one of each two is set aside.
     scans : int
         Scans that its shots are in now.
     copy : Path or None
@@ -203,20 +204,36 @@ def _count_scans(connection: Connection, shot_ids: Iterable[int]) -> int:
 def _set_doubles_aside(
     connection: Connection, old: MachineNames, into: MachineNames, by: str | None, at_us: int
 ) -> int:
-    """Set shots of the old machine aside that the other one has too: same time, sequence and settings."""
-    ours, theirs, aside = tables.shot.alias("ours"), tables.shot.alias("theirs"), tables.set_aside
-    rows = []
+    """Set one of two shots aside that are the same: of one time, sequence and settings, as taken or as corrected.
+
+    It is the one of the old machine, unless only that one was corrected.
+    """
+    ours, theirs = tables.shot.alias("ours"), tables.shot.alias("theirs")
+    aside: dict[int, str] = {}
     for name in sorted(old.sequences.keys() & into.sequences.keys()):
-        same = and_(
-            theirs.c.started_us == ours.c.started_us, theirs.c.values_digest == ours.c.values_digest,
-            theirs.c.sequence_id == into.sequences[name],
-        )  # fmt: skip
-        query = select(ours.c.id, theirs.c.uid).join(theirs, same)
-        for row in connection.execute(query.where(ours.c.sequence_id == old.sequences[name])):
-            why = f"the same shot as {row.uid}, taken under both names of {into.name}"
-            rows.append({"shot_id": row.id, "reason": why, "by": by, "rule": "double", "at_us": at_us})
+        together = and_(
+            theirs.c.started_us == ours.c.started_us, theirs.c.sequence_id == into.sequences[name]
+        )
+        query = select(
+            ours.c.id, ours.c.uid, ours.c.values_digest,
+            theirs.c.id.label("other"), theirs.c.uid.label("other_uid"), theirs.c.values_digest.label("other_digest"),
+        ).join(theirs, together)  # fmt: skip
+        for row in connection.execute(query.where(ours.c.sequence_id == old.sequences[name])).all():
+            digests, other_digests = {bytes(row.values_digest)}, {bytes(row.other_digest)}
+            if digests != other_digests:
+                digests |= digests_before(connection, row.id)
+                other_digests |= digests_before(connection, row.other)
+            if len(digests) > 1 and len(other_digests) == 1 and other_digests <= digests:
+                aside[row.other] = row.uid
+            elif not digests.isdisjoint(other_digests):
+                aside[row.id] = row.other_uid
+    why = "the same shot as {}, taken under both names of " + into.name
+    rows = [
+        {"shot_id": key, "reason": why.format(uid), "by": by, "rule": DOUBLE, "at_us": at_us}
+        for key, uid in aside.items()
+    ]
     if rows:
-        connection.execute(insert(aside), rows)
+        connection.execute(insert(tables.set_aside), rows)
     return len(rows)
 
 

@@ -15,6 +15,7 @@ from nightfold import tables
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.pins import is_pinned, pinned_times
 from nightfold.ledger.rows import chunks
+from nightfold.ledger.selecting import is_double
 from nightfold.scans.folding import FoundScan, StreamShot, fold_stream
 from nightfold.scans.keeping import set_axes, settle_axes
 from nightfold.scans.pauses import REACH as PAUSE_REACH
@@ -54,6 +55,7 @@ def fold_span(
         for scan in fold_stream(_alone(stream[start:stop]), pause_us=FOR_EVER_US)
     ]
     _keep(connection, sequence_id, rows, found, {name: number for number, name in names.items()}, set(fresh))
+    _bring_doubles(connection, sequence_id, rows)
 
 
 def _cuts(rows: Sequence[Row[Any]]) -> list[int]:
@@ -131,16 +133,42 @@ def _unlabelled(
     limit: int | None = REACH,
 ) -> list[Row[Any]]:
     shot, scan = tables.shot, tables.scan
-    own = and_(shot.c.sequence_id == sequence_id, ~shot.c.reference, when, ~is_pinned(shot.c.id))
-    free = or_(shot.c.scan_id.is_(None), scan.c.label.is_(None))
+    own = and_(_loose(sequence_id), when, ~is_double(shot.c.id))
     order = (shot.c.started_us.desc(), shot.c.id.desc()) if newest_first else (shot.c.started_us, shot.c.id)
     query = (
         select(shot.c.id, shot.c.started_us, shot.c.scan_id, shot.c.set_id, shot.c.planned_shots, shot.c.last)
         .outerjoin(scan, scan.c.id == shot.c.scan_id)
-        .where(own, free)
+        .where(own)
         .order_by(*order)
     )
     return list(connection.execute(query.limit(limit) if limit else query))
+
+
+def _loose(sequence_id: int) -> ColumnElement[bool]:
+    """Return the condition that folding has a say in the scan of a shot; wants the scan joined."""
+    shot, scan = tables.shot, tables.scan
+    free = or_(shot.c.scan_id.is_(None), scan.c.label.is_(None))
+    return and_(shot.c.sequence_id == sequence_id, ~shot.c.reference, ~is_pinned(shot.c.id), free)
+
+
+def _bring_doubles(connection: Connection, sequence_id: int, rows: Sequence[Row[Any]]) -> None:
+    """Bring shots that are there a second time into the scan of the other one; they count for nothing in folding."""
+    if not rows:
+        return
+    shot, scan = tables.shot, tables.scan
+    when = shot.c.started_us.between(rows[0].started_us, rows[-1].started_us)
+    query = select(shot.c.id, shot.c.started_us, shot.c.scan_id).outerjoin(scan, scan.c.id == shot.c.scan_id)
+    doubles = connection.execute(query.where(_loose(sequence_id), when, is_double(shot.c.id))).all()
+    if not doubles:
+        return
+    there = connection.execute(query.where(_loose(sequence_id), when, ~is_double(shot.c.id)))
+    scan_at = {row.started_us: row.scan_id for row in there}
+    for row in doubles:
+        target = scan_at.get(row.started_us, row.scan_id)
+        if target != row.scan_id:
+            move_shots(connection, target, [row.id])
+            if row.scan_id is not None:
+                retire(connection, row.scan_id, target)
 
 
 def _stream(connection: Connection, rows: Sequence[Row[Any]], names: Mapping[int, str]) -> list[StreamShot]:

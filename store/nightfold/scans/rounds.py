@@ -8,13 +8,14 @@ from dataclasses import dataclass, field
 from itertools import count
 from typing import Any
 
-from sqlalchemy import Connection, Row, delete, func, select, update
+from sqlalchemy import Connection, Row, case, delete, func, select, update
 
 from nightfold import tables
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.notes import hand_over_notes, has_notes, scan_subject
 from nightfold.ledger.pins import kept_scans, read_pins
 from nightfold.ledger.rows import chunks
+from nightfold.ledger.selecting import is_double
 from nightfold.scans.keeping import set_axes, settle_axes
 from nightfold.scans.sweeps import declared_sweeps
 
@@ -80,6 +81,7 @@ class _Member:
     scan_id: int
     planned: int | None
     last: bool
+    double: bool
 
 
 def open_round(
@@ -108,7 +110,7 @@ def newest_round(connection: Connection, sequence_id: int, label: str) -> Round 
     shot = tables.shot
     rows = _rounds_of(connection, sequence_id, label)
     kept = kept_scans(connection)
-    span = select(func.max(shot.c.started_us), func.count())
+    span = select(func.max(shot.c.started_us), func.count(case((~is_double(shot.c.id), 1))))
     found = None
     for row in rows if kept else rows[-1:]:  # where nobody arranged anything, rounds are numbered by time
         last, shots = connection.execute(span.where(shot.c.scan_id == row.id)).one()
@@ -176,7 +178,8 @@ def fold_label(
         _enter(connection, scan_id, round=number)
     placed = [*zip(chosen, groups, strict=True), *arranged.items()]
     for scan_id, group in placed:
-        ended = group[-1].started_us if group[-1].last else None
+        newest = next((member for member in reversed(group) if not member.double), group[-1])
+        ended = newest.started_us if newest.last else None
         _enter(connection, scan_id, planned_shots=_plan_of(group), closed_us=ended)
         move_shots(connection, scan_id, [member.id for member in group if member.scan_id != scan_id])
     for gone in free:
@@ -259,6 +262,18 @@ def _plan_of(group: Sequence[_Member]) -> int | None:
 
 
 def _cut(members: Sequence[_Member], rejoin_us: int) -> list[list[_Member]]:
+    """Return the rounds of shots in time order; a double counts for nothing and goes with the shot before it."""
+    groups = _cut_single([member for member in members if not member.double], rejoin_us)
+    for double in (member for member in members if member.double):
+        later = sum(group[0].started_us > double.started_us for group in groups)
+        groups = groups or [[]]
+        groups[max(len(groups) - later - 1, 0)].append(double)
+    for group in groups:
+        group.sort(key=_in_time)
+    return groups
+
+
+def _cut_single(members: Sequence[_Member], rejoin_us: int) -> list[list[_Member]]:
     groups: list[list[_Member]] = []
     swept: frozenset[int] = frozenset()
     planned: int | None = None
@@ -299,8 +314,9 @@ def _members(connection: Connection, scan_ids: Sequence[int], others: Sequence[i
                 row.scan_id,
                 row.planned_shots,
                 bool(row.last),
+                bool(row.double),
             )
-            for row in connection.execute(select(shot).where(own))
+            for row in connection.execute(select(shot, is_double(shot.c.id).label("double")).where(own))
         ]
     return sorted(members, key=_in_time)
 
