@@ -164,3 +164,39 @@ def test_fits_by_shot(store: Store) -> None:
     assert [fit.scan_key for fit in store.fits(shots=["late-002"])] == ["late#1"]
     assert [fit.scan_key for fit in store.fits(shots=["late-002", "loss-000"])] == ["loss#1", "late#1"]
     assert store.fits("loss", shots=["late-002"]) == []
+
+
+def test_fits_of_scans_that_became_one_are_one(anywhere: str) -> None:
+    """A late shot between two rounds makes one of them: the fit of it takes the place of both, once and for all."""
+    values = [60 + k / 4 for k in range(9)]
+
+    def shots(hours: float, currents: list[float]) -> list[Any]:
+        return [
+            {
+                "machine": "heron",
+                "sequence": "hold",
+                "scan": "loss",
+                "swept": ["coil_current"],
+                "started": (START + timedelta(hours=hours, seconds=15 * k)).isoformat(),
+                "parameters": {"coil_current": current},
+                "observables": {"atom_number": 100 - 50 / (1 + (current - 61) ** 2)},
+            }
+            for k, current in enumerate(currents)
+        ]
+
+    with open_store(anywhere) as store:
+        store.take([*shots(0, values), *shots(30, values)])
+        for scan in store.scans():
+            store.fit(scan.id, "lorentzian", observable="atom_number")
+            store.add_note(f"on {scan.key}", fit=store.fits(scan.id)[0].id)
+        store.take(shots(15, [61.1]))
+        assert len(store.scans()) == 1
+        before = store.fits()
+        assert [fit.stale for fit in before] == [True, True]
+        done = store.refit()
+        assert {one.before.id for one in done if one.before} == {fit.id for fit in before}
+        (fit,) = store.fits()
+        assert not fit.stale
+        assert {one.after.id for one in done if one.after} == {fit.id}
+        assert store.refit() == []
+        assert sorted(store.notes(fit=fit.id)["text"]) == ["on loss#1", "on loss#2"]

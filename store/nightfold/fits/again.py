@@ -79,7 +79,7 @@ def _again(session: Session, stale: Sequence[KeptFit], kept: Sequence[KeptFit]) 
     except NightfoldError as problem:
         return [Refit(fit, None, str(problem.args[0])) for fit in stale]
     now = {slice_text(part.where): part for part in parts}
-    wanted = {slice_text(fit.slice): fit for fit in stale}
+    wanted = [slice_text(fit.slice) for fit in stale]
     fitted = {slice_text(fit.slice) for fit in kept if _same_fit(fit, first)}
     there = [where for where in now if where in wanted]
     fresh = [where for where in now if there and where not in fitted]
@@ -90,7 +90,7 @@ def _again(session: Session, stale: Sequence[KeptFit], kept: Sequence[KeptFit]) 
     return [
         *(
             Refit(fit, after[where]) if where in there else Refit(fit, None, _no_slice(scan, fit, now))
-            for where, fit in wanted.items()
+            for fit, where in zip(stale, wanted, strict=True)
         ),
         *(Refit(None, after[where]) for where in fresh),
     ]

@@ -6,10 +6,11 @@ import json
 from collections import defaultdict
 from collections.abc import Mapping, Sequence
 from contextlib import suppress
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
-from sqlalchemy import Connection, Row, func, insert, select
+from sqlalchemy import Connection, Row, func, insert, select, update
 
 from nightfold import tables
 from nightfold.errors import NotFound
@@ -67,10 +68,13 @@ def keep_fit(connection: Connection, scan: Scan, request: FitRequest, part: Slic
         "data_digest": part.digest(request.observable),
         "program": __version__,
     }
-    alike = connection.execute(
-        select(fit).where(*(fit.c[name] == value for name, value in same.items())).order_by(fit.c.id.desc())
-    )
-    earlier = next((row for row in alike if _is_relative(row) == (request.relative_to is not None)), None)
+    query = select(fit).where(*(fit.c[name] == value for name, value in same.items()))
+    relative = request.relative_to is not None
+    alike = [
+        row for row in connection.execute(query.order_by(fit.c.id.desc())) if _is_relative(row) == relative
+    ]
+    _make_one_line(connection, alike)
+    earlier = alike[0] if alike else None
     if earlier is not None and all(earlier._mapping[name] == value for name, value in rest.items()):
         return  # the same fit of the same data is there already
     covariance = {"names": list(result.free_names), "rows": result.covariance_matrix.tolist()}
@@ -93,6 +97,21 @@ def keep_fit(connection: Connection, scan: Scan, request: FitRequest, part: Slic
     ]
     if warnings:
         connection.execute(insert(tables.fit_warning), warnings)
+
+
+def _make_one_line(connection: Connection, alike: Sequence[Row[Any]]) -> None:
+    """Let the newest of several lines of fits, each of which replaced the one before, go on from the others.
+
+    There are several where scans became one, each with its fits.
+    """
+    replaces = {row.id: row.replaces for row in alike}
+    newest = [number for number in replaces if number not in replaces.values()]
+    for number, older in pairwise(newest):
+        first = number
+        while replaces[first] is not None:
+            first = replaces[first]
+        replaces[first] = older
+        connection.execute(update(tables.fit).where(tables.fit.c.id == first).values(replaces=older))
 
 
 def slice_text(where: Mapping[str, Any]) -> str:
