@@ -122,8 +122,9 @@ def _said(event: ShotEvent) -> str:
         return _use(event.new)
     if event.kind == "record":
         return _RECORD
-    if event.old is not None:
-        return f"from scan {event.old} to {event.new}"
+    if event.kind.startswith(("join", "split")):
+        places = (f"from scan {event.old}" if event.old else "", f"to scan {event.new}" if event.new else "")
+        return " ".join(filter(None, places))
     return event.what
 
 

@@ -108,3 +108,18 @@ def test_the_shot_itself_tells_what_changed(anywhere: str) -> None:
         view, other = store.shot("shot000"), store.shot("shot001")
     assert (set(view.corrected), set(view.reread)) == ({"axis"}, {"n"})
     assert not other.corrected | other.reread
+
+
+def test_a_scan_that_is_gone_is_not_taken_for_another(anywhere: str) -> None:
+    """The id of a scan that an undone split had made is given to the next scan."""
+    with open_store(anywhere) as store:
+        store.take([shot(n) for n in range(12)])
+        store.split_scan("loss", at=5)
+        assert [(event.old, event.new) for event in store.history("shot008").events[1:]] == [
+            ("loss#1", "loss#2")
+        ]
+        store.undo_arrangement(1)
+        store.take([shot(n, scan="other") for n in range(12, 18)])
+        (split, undone) = store.history("shot008").events[1:]
+    assert (split.kind, split.old, split.new) == ("split", "loss#1", None)
+    assert (undone.kind, undone.old, undone.new) == ("split undone", None, "loss#1")

@@ -89,7 +89,7 @@ class ShotEvent:
         The observable, parameter, fit or place it is about; the text of a note.
     old, new : Any
         Before and after: a `HeldReading` each, the values of a setting, or the keys of scans; None where there is
-        nothing to compare. `new` of a fit is a `FitUse`.
+        nothing to compare, or a scan is gone. `new` of a fit is a `FitUse`.
     unit : str
     by, why : str or None
         Who did it, and the reason given.
@@ -166,7 +166,7 @@ def read_history(connection: Connection, uid: str, stale: Collection[int]) -> Sh
         *_replacements(readings),
         *_corrections(connection, shot.id),
         *_asides(connection, shot.id),
-        *_arrangements(connection, shot.id),
+        *_arrangements(connection, shot),
         *_notes(connection, shot.id),
     ]
     dated += _other_records(connection, shot.id, {event.at for event in dated})
@@ -239,22 +239,23 @@ def _asides(connection: Connection, shot_id: int) -> Iterator[ShotEvent]:
             yield ShotEvent(from_us(row.lifted_us), "put back", "", by=row.lifted_by)
 
 
-def _arrangements(connection: Connection, shot_id: int) -> Iterator[ShotEvent]:
+def _arrangements(connection: Connection, shot: Row[Any]) -> Iterator[ShotEvent]:
+    """Yield joins and splits; of one that was undone a scan that may be gone is not named: another may have its id."""
     row, whole, scan = tables.arranged, tables.arrangement, tables.scan
     query = (
         select(row.c.from_scan, row.c.to_scan, whole)
         .join(whole, whole.c.id == row.c.arrangement_id)
-        .where(row.c.shot_id == shot_id)
+        .where(row.c.shot_id == shot.id)
         .order_by(whole.c.id)
     )
     for item in connection.execute(query).all():
-        there = select(scan.c.id, scan.c.label, scan.c.round).where(
-            scan.c.id.in_((item.from_scan, item.to_scan))
-        )
+        standing = item.undone_us is None
+        held = (item.from_scan, item.to_scan) if standing else (shot.scan_id,)
+        there = select(scan.c.id, scan.c.label, scan.c.round).where(scan.c.id.in_(held))
         keys = {found.id: scan_key(*found) for found in connection.execute(there)}
-        old, new = (keys.get(number) or str(number) for number in (item.from_scan, item.to_scan))
+        old, new = keys.get(item.from_scan), keys.get(item.to_scan)
         yield ShotEvent(from_us(item.at_us), item.kind, "scan", old, new, by=item.by, why=item.reason)
-        if item.undone_us is not None:
+        if not standing:
             at = from_us(item.undone_us)
             yield ShotEvent(at, f"{item.kind} undone", "scan", new, old, by=item.undone_by)
 
