@@ -7,7 +7,7 @@ and fits can refer to it, and never a value; each expression that a card in forc
 from __future__ import annotations
 
 import json
-from collections.abc import Collection, Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import TYPE_CHECKING, Any
@@ -256,18 +256,24 @@ def _enter_version(
 
 def _versions_of(connection: Connection, machine: str) -> dict[str, list[Version]]:
     """Return every version of each derived quantity of a machine, the oldest first."""
-    table = tables.derivation
     found: dict[str, list[Version]] = {}
+    for row, said in version_rows(connection, machine):
+        since = datetime.fromisoformat(said["since"])
+        item = Version(machine, row.name, row.version, said["expression"], said["unit"], since)
+        found.setdefault(row.name, []).append(item)
+    return found
+
+
+def version_rows(connection: Connection, machine: str) -> Iterator[tuple[Row[Any], dict[str, str]]]:
+    """Yield the rows of the expressions that the cards of a machine stated, and what each says, the oldest first."""
+    table = tables.derivation
     query = select(table).where(
         table.c.settings.startswith(f'{{"by": "{_BY_CARD}", "machine": ', autoescape=True)
     )
     for row in connection.execute(query.order_by(table.c.id)):
         said = json.loads(row.settings)
         if said["machine"] == machine:
-            since = datetime.fromisoformat(said["since"])
-            item = Version(machine, row.name, row.version, said["expression"], said["unit"], since)
-            found.setdefault(row.name, []).append(item)
-    return found
+            yield row, said
 
 
 def versions_in_use(connection: Connection, machine: str, names: Collection[str]) -> dict[str, str]:

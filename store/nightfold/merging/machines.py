@@ -25,6 +25,7 @@ from nightfold.ledger.setting_aside import clean_reason
 from nightfold.merging.objections import KINDS, find_objections
 from nightfold.merging.rows import own_sets, point_to, rename_sets
 from nightfold.merging.streams import Progress, fold_again, join_sequences, own_shots
+from nightfold.merging.versions import join_versions
 from nightfold.schema import copy_beside
 from nightfold.sensors.keeping import Series, contradicted, keep_readings, load_hours
 from nightfold.session import Session
@@ -152,6 +153,7 @@ def _merge(
         point_to(connection, table, {ours[name].id: theirs[name].id for name in shared[kind]})
         connection.execute(update(table).where(table.c.machine_id == old.id).values(machine_id=into.id))
     rename_sets(connection, sets, old.name, into.name)
+    join_versions(connection, old, into)
     sequences = join_sequences(connection, old, into)
     _rename_notes(connection, old.name, into.name)
     _make_alias(connection, old, into, reason, by, at_us)
