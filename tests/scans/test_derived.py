@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import random
+import shutil
 from collections.abc import Sequence
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -319,3 +320,37 @@ def test_an_exported_table_is_taken_again(ready: Store, tmp_path: Path) -> None:
     assert (again.new, again.refused) == (17, [])
     assert axes(ready.scan("again")) == ["detuning"]
     assert ready.scan("again").table()["polarisation"].tolist() == table["polarisation"].tolist()
+
+
+@pytest.mark.parametrize("label", [None, "line"])
+def test_scans_follow_a_change_of_the_card_as_if_it_had_been_there_before(
+    anywhere: str, empty_store: Path, tmp_path: Path, label: str | None
+) -> None:
+    """The axis stands still by the new expression, and what moved no longer goes along with it."""
+    path, said = tmp_path / "heron.toml", {"swept": ["detuning"]} | ({"scan": label} if label else {})
+    records = [shot(15 * k, aom, **said) for k, aom in enumerate(AOM)]
+    records += [shot(3600 + 15 * k, 80, shift=k / 2, hold=4 + k % 2, **said) for k in range(8)]
+
+    def seen(store: Store) -> list[Any]:
+        return [
+            (scan.key, scan.shots, axes(scan), [axis.points for axis in scan.axes], scan.followers)
+            for scan in store.scans()
+        ]
+
+    def use(store: Store, expression: str) -> None:
+        path.write_text(CARD.replace("2*aom_frequency + shift - 160 MHz", expression), encoding="utf-8")
+        store.use_card(path)
+
+    with open_store(anywhere) as store:
+        use(store, "2*aom_frequency - 160 MHz")
+        store.take(records)
+        first = seen(store)
+        use(store, "shift + 3 MHz")
+        other = tmp_path / "other.sqlite"
+        shutil.copy(empty_store, other)
+        with open_store(other) as fresh:
+            use(fresh, "shift + 3 MHz")
+            fresh.take(records)
+            assert sorted(map(repr, seen(store))) == sorted(map(repr, seen(fresh)))
+        use(store, "2*aom_frequency - 160 MHz")
+        assert sorted(map(repr, seen(store))) == sorted(map(repr, first))

@@ -31,13 +31,19 @@ class Taking(Face):
             If the card cannot be read, or contradicts what is stored.
         """
         from nightfold.card import read_card
+        from nightfold.ledger.deriving import derived_quantities
+        from nightfold.scans.following import follow_card
 
         card = read_card(Path(path))
         self._writer.forget()
         known = names.Names()
         with self._session.writing() as connection:
             known.load(connection)
+            machine_id = known.find(card.machine).id
+            before = derived_quantities(connection).get(machine_id, {})
             keep_card(connection, known, card, now_us())
+            if before:
+                follow_card(connection, machine_id, before)
         return card
 
     def take(

@@ -1,18 +1,22 @@
-"""Bringing scans up to date when settings of their shots were corrected."""
+"""Bringing scans up to date when settings of their shots were corrected, or are derived otherwise."""
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
-from typing import Any
+from collections.abc import Iterable, Mapping, Sequence
+from typing import TYPE_CHECKING, Any
 
 from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
+from nightfold.ledger.deriving import derived_quantities
 from nightfold.ledger.pins import kept_scans
 from nightfold.ledger.rows import chunks
 from nightfold.scans.keeping import leading_axes, settle_axes
 from nightfold.scans.refolding import FARTHEST_US, fold_span
 from nightfold.scans.rounds import swept_of
+
+if TYPE_CHECKING:
+    from nightfold.formulas.definitions import Derived
 
 
 def follow_corrections(connection: Connection, shots: Sequence[Row[Any]]) -> None:
@@ -38,6 +42,27 @@ def follow_corrections(connection: Connection, shots: Sequence[Row[Any]]) -> Non
     ):  # folding leaves them alone
         axes = [*leading_axes(connection, scan_id), *swept_of(connection, scan_id)]
         settle_axes(connection, scan_id, list(dict.fromkeys(axes)))
+
+
+def follow_card(connection: Connection, machine_id: int, before: Mapping[str, Derived]) -> None:
+    """Look again at shots that declare a derived parameter as swept which the card in force derives otherwise.
+
+    Parameters
+    ----------
+    before : mapping
+        The machine's derived quantities by the card before.
+    """
+    now = derived_quantities(connection).get(machine_id, {})
+    changed = [name for name, derived in before.items() if now.get(name) != derived]
+    if not changed:
+        return
+    shot, declared, parameter = tables.shot, tables.swept_derived, tables.parameter
+    own = (
+        select(declared.c.shot_id)
+        .join(parameter, parameter.c.id == declared.c.parameter_id)
+        .where(parameter.c.machine_id == machine_id, parameter.c.name.in_(changed))
+    )
+    follow_corrections(connection, connection.execute(select(shot).where(shot.c.id.in_(own))).all())
 
 
 def _near_each_other(shots: Iterable[Row[Any]]) -> list[list[Row[Any]]]:
