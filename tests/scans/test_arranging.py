@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
 from datetime import UTC, datetime, timedelta
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -395,3 +396,15 @@ def test_order_of_arrival_cannot_change_what_is_found_around_arranged_scans(
         with open_store(folder / "c.sqlite", create=True) as never:
             take(never, [*_FREE, *_FREE_LATE])
             assert layout(mixed) == layout(never)
+
+
+def test_a_place_outside_is_answered_in_the_time_of_the_machine(store: Store, tmp_path: Path) -> None:
+    card = tmp_path / "heron.toml"
+    card.write_text('machine = "heron"\nzone = "America/New_York"\n')
+    store.use_card(card)
+    take(store, loss(0))
+    with pytest.raises(
+        ChoiceNeeded, match="wanted a place between 2026-10-05T15:00:00-04:00 and 2026-10-05T15:03"
+    ):
+        store.split_scan("loss", at="2026-10-05T21:01")
+    assert [scan.shots for scan in store.split_scan("loss", at="2026-10-05T15:01")] == [4, 9]

@@ -327,7 +327,8 @@ def test_scans_follow_a_change_of_the_card_as_if_it_had_been_there_before(
     anywhere: str, empty_store: Path, tmp_path: Path, label: str | None
 ) -> None:
     """The axis stands still by the new expression, and what moved no longer goes along with it."""
-    path, said = tmp_path / "heron.toml", {"swept": ["detuning"]} | ({"scan": label} if label else {})
+    path = tmp_path / "heron.toml"
+    said: dict[str, Any] = {"swept": ["detuning"]} | ({"scan": label} if label else {})
     records = [shot(15 * k, aom, **said) for k, aom in enumerate(AOM)]
     records += [shot(3600 + 15 * k, 80, shift=k / 2, hold=4 + k % 2, **said) for k in range(8)]
 

@@ -180,11 +180,22 @@ def test_an_observable_that_no_reference_shot_has_can_be_left_out(store: Store) 
 def test_readings_through_zero(store: Store, odd: float) -> None:
     take(store, [*worked(), shot(10, None, atom_number=number(odd, 1))])
     with pytest.raises(
-        NoReference, match=rf"reference shot reference-10 reads {odd:g} where others read 100: .*aside"
+        NoReference, match=rf"reference shot reference-10 reads {odd:g} where others read 120: .*aside"
     ):
         store.scan("loss").table(relative_to="reference")
     store.set_aside(["reference-10"], "no atoms")
     store.scan("loss").table(relative_to="reference")
+
+
+def test_the_others_are_those_of_the_other_sign(store: Store) -> None:
+    records = [
+        shot(0, None, atom_number=number(100, 1)),
+        shot(10, None, atom_number=number(-5, 1)),
+        shot(5, 61.0, atom_number=number(50, 1)),
+    ]
+    take(store, records)
+    with pytest.raises(NoReference, match=r"reference shot reference-10 reads -5 where others read 100: "):
+        store.scan("loss").table(relative_to="reference")
 
 
 def test_what_may_be_zero_is_no_divisor(store: Store) -> None:

@@ -20,7 +20,7 @@ from nightfold.scans.keeping import leading_axes, set_axes, settle_axes
 from nightfold.scans.listing import find_id, why_empty
 from nightfold.scans.refolding import fold_span
 from nightfold.scans.rounds import fold_label, move_shots, retire, swept_of
-from nightfold.timestamps import from_us, now_us
+from nightfold.timestamps import find_zone, from_us, now_us
 
 FEWEST_LETTERS = 4
 """So many letters of a uid name a shot, if no other of the scan begins so."""
@@ -69,9 +69,13 @@ def split_scan(
     shots = _shots_of(connection, row)
     place = _place_of(shots, at, row)
     if not 0 < place < len(shots):
+        ends = [
+            from_us(shot.started_us).astimezone(find_zone(row.zone)).isoformat()
+            for shot in (shots[0], shots[-1])
+        ]
         raise ChoiceNeeded(
             f"split {_key(row)} at {at}: all its {len(shots)} shots would be on one side, wanted a place between "
-            f"{from_us(shots[0].started_us).isoformat()} and {from_us(shots[-1].started_us).isoformat()}"
+            f"{ends[0]} and {ends[1]}"
         )
     axes = leading_axes(connection, row.id)
     number = 1

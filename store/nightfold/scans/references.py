@@ -277,11 +277,13 @@ def _check_level(
     if not len(found.uids):
         return
     signs = np.sign(found.values)
-    odd = np.flatnonzero(signs != (1.0 if (signs > 0).sum() * 2 >= len(signs) else -1.0))
+    alike = signs == (1.0 if (signs > 0).sum() * 2 >= len(signs) else -1.0)
+    odd = np.flatnonzero(~alike)
     if len(odd):
+        others = found.values[alike] if alike.any() else found.values
         raise NoReference(
             f"{start}: reference shot {found.uids[odd[0]]} reads {found.values[odd[0]]:.4g} where others read "
-            f"{np.median(found.values):.4g}: a ratio needs readings of one sign, never zero; set the shot aside "
+            f"{np.median(others):.4g}: a ratio needs readings of one sign, never zero; set the shot aside "
             "if it failed, else leave the observable out"
         )
     with np.errstate(invalid="ignore"):
