@@ -117,3 +117,35 @@ def test_scans_arranged_by_hand_follow_and_stay(anywhere: str) -> None:
         assert [scan.shots for scan in store.scans()] == [18, 18]
         undone = store.history("shot2003").events[-1]
         assert (undone.kind, undone.old, undone.by) == ("join undone", str(joined.id), "bob")
+
+
+def test_a_found_scan_that_dissolved_comes_back(anywhere: str) -> None:
+    """Corrected to one value its shots are no scan; corrected back they are the scan that its fit and note are of."""
+    right = {f"shot{n:03d}": 58 + 0.5 * n for n in range(13)}
+    with open_store(anywhere) as store:
+        store.take(shot(n, point) for n, point in enumerate(right.values()))
+        store.take(shot(n, 60.0) for n in range(300, 305))
+        store.add_note("the lock was shaky", scan=1)
+        store.fit(1, "gaussian", observable="n")
+        store.correct(list(right), {"coil": 60}, "the wrong column")
+        assert (store.scans(), store.fits()[0].stale) == ([], True)
+        store.take(shot(n, 60 + 0.5 * (n % 9)) for n in range(600, 609))
+        other = store.scans()[0].id
+        for uid, point in right.items():
+            if point != 60:
+                store.correct([uid], {"coil": point}, "it was right")
+        assert {scan.id: scan.shots for scan in store.scans()} == {1: 13, other: 9}
+        assert (points(store, 1), axes(store, 1)) == (list(right.values()), ["coil"])
+        assert [(fit.scan_id, fit.stale) for fit in store.fits()] == [(1, False)]
+        assert store.notes(scan=1)["text"].tolist() == ["the lock was shaky"]
+
+
+def test_a_scan_of_mostly_other_shots_is_not_the_one_that_dissolved(store: Store) -> None:
+    store.take(shot(n, 60 + 0.5 * n) for n in range(8))
+    store.fit(1, "gaussian", observable="n")
+    store.correct([f"shot{n:03d}" for n in range(8)], {"coil": 60}, "the supply was stuck")
+    store.take(shot(n, 60 + 0.5 * n) for n in range(8, 20))
+    for n in range(1, 8):
+        store.correct([f"shot{n:03d}"], {"coil": 60 + 0.5 * n}, "it was not")
+    assert [scan.shots for scan in store.scans()] == [20]
+    assert store.scans()[0].id != 1

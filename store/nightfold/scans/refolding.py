@@ -3,17 +3,17 @@
 from __future__ import annotations
 
 from bisect import bisect
-from collections import ChainMap
+from collections import ChainMap, Counter
 from collections.abc import Collection, Mapping, Sequence, Set
 from dataclasses import replace
 from itertools import pairwise
 from typing import Any
 
-from sqlalchemy import ColumnElement, Connection, Row, and_, or_, select, update
+from sqlalchemy import ColumnElement, Connection, Row, and_, exists, or_, select, update
 
 from nightfold import tables
 from nightfold.ledger.names import insert_row
-from nightfold.ledger.pins import is_pinned, pinned_times
+from nightfold.ledger.pins import is_pinned, kept_scans, pinned_times
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import is_double
 from nightfold.scans.folding import FoundScan, StreamShot, fold_stream
@@ -249,10 +249,11 @@ def _keep(
                 counts[old] = counts.get(old, 0) + 1
         best = max((old for old in counts if old in free), key=lambda old: counts[old], default=None)
         if best is None:
+            best = _find_dissolved(connection, sequence_id, scan.shot_ids, set(now.values()))
+        if best is None:
             row = {"sequence_id": sequence_id, "label": None, "round": 1, "origin": scan.origin}
             best = insert_row(connection, tables.scan, row)
-        else:
-            free.discard(best)
+        free.discard(best)
         members = [by_id[shot_id] for shot_id in scan.shot_ids]
         planned = [row.planned_shots for row in members if row.planned_shots is not None]
         said = {
@@ -275,3 +276,24 @@ def _keep(
         settle_axes(connection, scan_id, axes, declared=declared)
     for scan_id in free:
         retire(connection, scan_id, heirs.get(scan_id))
+
+
+def _find_dissolved(
+    connection: Connection, sequence_id: int, shot_ids: Sequence[int], taken: Set[int | None]
+) -> int | None:
+    """Return a scan that dissolved, left without shots, whose kept fits looked at most of these shots."""
+    fit, use, scan, shot = tables.fit, tables.fit_shot, tables.scan, tables.shot
+    empty = ~exists().where(shot.c.scan_id == scan.c.id)
+    query = (
+        select(scan.c.id, use.c.shot_id)
+        .join(fit, fit.c.scan_id == scan.c.id)
+        .join(use, use.c.fit_id == fit.c.id)
+        .where(scan.c.sequence_id == sequence_id, scan.c.label.is_(None), empty)
+        .distinct()
+    )
+    counts: Counter[int] = Counter()
+    for part in chunks(list(shot_ids)):
+        counts.update(row.id for row in connection.execute(query.where(use.c.shot_id.in_(part))))
+    held = [scan_id for scan_id in sorted(counts.keys() - taken) if 2 * counts[scan_id] > len(shot_ids)]
+    kept = kept_scans(connection) if held else set()
+    return max((scan_id for scan_id in held if scan_id not in kept), key=counts.__getitem__, default=None)
