@@ -12,6 +12,7 @@ from nightfold import tables
 from nightfold.errors import RecordError
 from nightfold.ledger.checking import CheckedShot, readings_content
 from nightfold.ledger.correcting import digests_before
+from nightfold.ledger.doubles import find_counterpart
 from nightfold.ledger.names import MachineNames, insert_row
 from nightfold.ledger.notes import shot_subject
 from nightfold.ledger.pins import label_of
@@ -23,6 +24,8 @@ from nightfold.timestamps import from_us
 def amend_shot(connection: Connection, stored: Row[Any], shot: CheckedShot, at_us: int) -> bool:
     """Compare a whole record with the shot stored under its uid; return whether anything was changed.
 
+    What it brings to a shot that is there a second time, it brings to the one that counts as well.
+
     Raises
     ------
     RecordError
@@ -33,6 +36,22 @@ def amend_shot(connection: Connection, stored: Row[Any], shot: CheckedShot, at_u
     ):
         return False
     check_identity(connection, stored, shot)
+    changed = False
+    for row in _addressed(connection, stored, shot.content_digest):
+        changed = _bring(connection, row, shot, at_us) or changed
+    return changed
+
+
+def _addressed(connection: Connection, stored: Row[Any], digest: bytes) -> list[Row[Any]]:
+    """Return the shots that something new is for: the stored one, and the one that counts if this one is a double."""
+    counting = find_counterpart(connection, stored) if stored.double else None
+    if counting is None or bytes(counting.content_digest) == digest or _seen(connection, counting.id, digest):
+        return [stored]
+    return [stored, counting]
+
+
+def _bring(connection: Connection, stored: Row[Any], shot: CheckedShot, at_us: int) -> bool:
+    """Bring what a whole record says to a shot that it is of; return whether anything was changed."""
     read = shot.readings
     if shot.derivation is None:  # a null in a whole record says "not read yet", not "take the value back"
         read = {name: value for name, value in read.items() if value.state != "null"}
@@ -55,12 +74,17 @@ def amend_readings(
     derivation: Derivation | None,
     at_us: int,
 ) -> bool:
-    """Bring later observables to a stored shot; return whether anything was changed."""
+    """Bring later observables to a stored shot, and to the one that counts in its place if it is a double.
+
+    Return whether anything was changed.
+    """
     digest = digest_content(("amendment", *readings_content(readings, derivation)))
     if _seen(connection, stored.id, digest):
         return False
-    changed = _amend(connection, stored.id, machine, readings, derivation, at_us)
-    _remember(connection, stored.id, digest, at_us)
+    changed = False
+    for row in _addressed(connection, stored, digest):
+        changed = _amend(connection, row.id, machine, readings, derivation, at_us) or changed
+        _remember(connection, row.id, digest, at_us)
     return changed
 
 
@@ -74,6 +98,8 @@ def _end_scan(connection: Connection, stored: Row[Any], shot: CheckedShot) -> bo
     """Note that a shot was the last of its scan after all; False if that is known or not said."""
     if not shot.wish.last or stored.last:
         return False
+    if label_of(connection, stored.id, stored.scan_id) != _wished_label(shot):
+        return False  # the one that counts is of another scan than the record of the double says
     table = tables.shot
     connection.execute(update(table).where(table.c.id == stored.id).values(last=True))
     scan = tables.scan
@@ -111,16 +137,21 @@ def check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) 
             from_us(shot.started_us).isoformat(),
             f"{from_us(stored.started_us).isoformat()}, {taken}",
         )
-    if bytes(
-        stored.values_digest
-    ) != shot.values_digest and shot.values_digest not in digests_before(connection, stored.id):
+    if bytes(stored.values_digest) != shot.values_digest and shot.values_digest not in digests_before(
+        connection, stored.id
+    ):
         raise _differing_setting(connection, stored, shot, f"{taken}; 'nightfold amend' corrects them")
     if bool(stored.reference) != shot.reference:
         raise RecordError("reference", str(shot.reference), taken)
     label = label_of(connection, stored.id, stored.scan_id)
-    wished = None if shot.reference else shot.wish.label
+    wished = _wished_label(shot)
     if label != wished:
         raise RecordError("scan", _label(wished), f"{_label(label)}, {taken}")
+
+
+def _wished_label(shot: CheckedShot) -> str | None:
+    """Return the label that a record says its scan has."""
+    return None if shot.reference else shot.wish.label
 
 
 def _label(label: str | None) -> str:

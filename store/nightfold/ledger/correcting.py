@@ -18,7 +18,7 @@ from nightfold.errors import NotFound, RecordError
 from nightfold.ledger.checking import CheckedShot
 from nightfold.ledger.names import MachineNames, Names
 from nightfold.ledger.rows import chunks, insert_many, next_id
-from nightfold.ledger.selecting import near_miss
+from nightfold.ledger.selecting import is_double, near_miss
 from nightfold.ledger.setting_aside import clean_reason
 from nightfold.records import clean_name, shorten
 from nightfold.settings import Value, digest_of_sum, hash_setting, setting_value
@@ -275,9 +275,10 @@ def find_corrected(connection: Connection, shots: Sequence[CheckedShot]) -> dict
         for item in shots
     }
     doubtful = shot.c.id.in_(select(table.c.shot_id)) | shot.c.sequence_id.in_(renamed)
+    query = select(shot, is_double(shot.c.id).label("double")).where(doubtful)
     found: dict[str, Row[Any]] = {}
     for part in chunks(sorted({item.started_us for item in shots})):
-        for row in connection.execute(select(shot).where(shot.c.started_us.in_(part), doubtful)):
+        for row in connection.execute(query.where(shot.c.started_us.in_(part))):
             for digest in (bytes(row.values_digest), *digests_before(connection, row.id)):
                 if uid := wanted.get((row.sequence_id, row.started_us, digest)):
                     found[uid] = row

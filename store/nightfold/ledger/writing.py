@@ -18,6 +18,7 @@ from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
 from nightfold.ledger.outcome import Incoming, Intake, Refused
 from nightfold.ledger.rows import chunks, next_id
+from nightfold.ledger.selecting import is_double
 from nightfold.ledger.sources import SourceLog
 from nightfold.ledger.streams import StreamMemory, recall
 from nightfold.records import Amendment, parse_record
@@ -187,8 +188,9 @@ class Writer:
 
     def _look_up(self, batch: _Batch, uids: Sequence[str]) -> None:
         table = tables.shot
+        query = select(table, is_double(table.c.id).label("double"))
         for part in chunks(uids):
-            for row in batch.connection.execute(select(table).where(table.c.uid.in_(part))):
+            for row in batch.connection.execute(query.where(table.c.uid.in_(part))):
                 batch.stored[row.uid] = row
 
     def _settle(self, batch: _Batch, item: Incoming, shot: CheckedShot | _Late) -> None:
