@@ -10,8 +10,11 @@ import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
 from nightfold.fits.engine.frame import Frame, Origin
+from nightfold.fits.engine.links import to_coordinate
 
-Link = Literal["linear", "log", "reciprocal"]
+Link = Literal["linear", "log", "reciprocal", "root", "inverse-root", "not-negative", "share", "asymmetry"]
+"""How a value follows from its coordinate q, always monotonic: q; exp(q); 1/q; the root of q, zero below zero;
+1/sqrt(q); q, zero below zero; q kept in 0 … 1; tanh(q/2), with q the logarithm of a ratio."""
 Kind = Literal["resonance", "time"]
 Background = Literal["none", "flat", "sloped"]
 UNITY = "1"
@@ -33,8 +36,8 @@ class Theta:
 
     The reported value is ``link^-1(q)`` with ``q = offset + slope * theta``; q is where intervals are
     symmetric. ``power`` tells how q depends on the scale of x, ``sign`` the sign of a logarithm,
-    ``shifted`` whether the origin of x counts, ``floor`` whether its lower bound is a value in its own
-    right (no damping) and not a failure.
+    ``shifted`` whether the origin of x counts, ``floor`` and ``ceiling`` whether its lower and upper bound are
+    values in their own right (no damping) and not failures.
     """
 
     name: str
@@ -44,6 +47,7 @@ class Theta:
     power: int = 0
     shifted: bool = False
     floor: bool = False
+    ceiling: bool = False
 
     def line(self, frame: Frame) -> tuple[Floats, Floats]:
         """Return offset and slope of q as a function of theta, one a data set."""
@@ -55,14 +59,12 @@ class Theta:
     def from_value(self, value: float, frame: Frame) -> Floats:
         """Return theta for a reported value, one a data set."""
         offset, slope = self.line(frame)
-        with np.errstate(divide="ignore"):
-            q = {"linear": value, "log": np.log(value), "reciprocal": np.divide(1.0, value)}[self.link]
-        return np.asarray((q - offset) / slope)
+        return np.asarray((to_coordinate(np.array(value), self.link) - offset) / slope)
 
     @property
     def positive(self) -> bool:
         """Whether the reported parameter must be greater than zero."""
-        return self.link != "linear" or self.role == "frequency"
+        return self.link in ("log", "reciprocal", "inverse-root") or self.role == "frequency"
 
 
 def position(name: str) -> Theta:
@@ -123,6 +125,8 @@ class LineShape(ABC):
     origin: Origin
     searchable: bool = True
     """Whether a global start grid exists (built-in shapes); otherwise `grid` holds given starts."""
+    numeric: bool = False
+    """Whether the shape is known by its values only: `gradient` then says how it changes with theta."""
 
     @staticmethod
     @abstractmethod
@@ -149,12 +153,17 @@ class LineShape(ABC):
         """Return the linear columns alone, (M, L, n)."""
         return self.basis(u, theta)[0]
 
+    def gradient(self, u: Floats, theta: Floats, c: Floats) -> Floats:
+        """Return the derivatives of the line at one theta (P,) with coefficients c, (P, n) at u (n,)."""
+        derivatives = self.basis(u[None], theta[None])[1][0]
+        return np.asarray(np.einsum("l,pln->pn", c[: derivatives.shape[1]], derivatives))
+
     @abstractmethod
     def grid(self, window: Window) -> Floats:
         """Return the start grid, (G, P), every place a minimum could hide from its neighbours."""
 
     def more_starts(self, window: Window) -> Floats:
-        """Return further starts, (K, P), to try when none of the grid leads to a minimum."""
+        """Return further places, (K, P), to look at where there is no grid but a given start."""
         del window
         return np.zeros((0, len(self.theta)))
 
