@@ -6,8 +6,8 @@ import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
+from nightfold.concise import short
 from nightfold_cli.canvas import Line
-from nightfold_cli.concise import short
 from nightfold_cli.plots import Chart, Label, Points, shading
 from nightfold_cli.settings import setting
 

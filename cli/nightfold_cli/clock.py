@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from decimal import Decimal
 from typing import Literal
 
-from nightfold_cli.concise import plain
+from nightfold.concise import plain
 
 _UNITS = ((1.0, "s"), (1e-3, "ms"), (1e-6, "µs"), (1e-9, "ns"))
 _JUST_BELOW = 1 - 1e-9

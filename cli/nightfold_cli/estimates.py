@@ -6,7 +6,7 @@ import math
 from collections.abc import Collection, Mapping
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import NOT_DETERMINED, asymmetric, interval, plain
+from nightfold.concise import NOT_DETERMINED, asymmetric, interval, plain
 from nightfold_cli.layout import Column, Row
 
 if TYPE_CHECKING:

@@ -9,7 +9,7 @@ from collections.abc import Sequence
 from itertools import zip_longest
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import concise
+from nightfold.concise import concise
 from nightfold_cli.estimates import plain_rows, value_text
 from nightfold_cli.failures import UsageError
 from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines

@@ -6,7 +6,7 @@ import math
 from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import short
+from nightfold.concise import short
 
 if TYPE_CHECKING:
     from nightfold.scans.axes import Axis

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Any
 
-from nightfold_cli.concise import plain
+from nightfold.concise import plain
 from nightfold_cli.layout import Cell
 
 ENOUGH, FULL = 6, 12  # significant digits of a number without stderr on a screen, and of one in a pipe

@@ -7,7 +7,7 @@ from collections.abc import Callable
 from datetime import datetime
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import short
+from nightfold.concise import short
 from nightfold_cli.scantext import counted
 from nightfold_cli.settings import ENOUGH, setting
 from nightfold_cli.sparklines import sparklines

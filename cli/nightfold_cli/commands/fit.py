@@ -10,10 +10,10 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+from nightfold.concise import rounded
 from nightfold_cli import estimates
 from nightfold_cli.arguments import add_relative, add_scan_key, named_number, relation
 from nightfold_cli.charts import chart_of_points
-from nightfold_cli.concise import rounded
 from nightfold_cli.failures import UsageError
 from nightfold_cli.known import drawn_together
 from nightfold_cli.layout import Cell, Column, Row

@@ -8,11 +8,11 @@ from argparse import ArgumentParser, Namespace
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
+from nightfold.concise import Scale, scale_of, short
 from nightfold_cli.arguments import add_relative, add_scan_key, relation
 from nightfold_cli.arrangedtext import in_full
 from nightfold_cli.canvas import MOST_SERIES
 from nightfold_cli.charts import chart_of_points, map_of_points
-from nightfold_cli.concise import Scale, scale_of, short
 from nightfold_cli.known import drawn_together
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes

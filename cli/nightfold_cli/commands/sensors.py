@@ -6,7 +6,7 @@ import math
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import short
+from nightfold.concise import short
 from nightfold_cli.dateticks import date_ticks
 from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column

@@ -8,8 +8,8 @@ from argparse import ArgumentParser, Namespace
 from collections.abc import Collection
 from typing import TYPE_CHECKING, Any
 
+from nightfold.concise import concise
 from nightfold_cli.arguments import positive
-from nightfold_cli.concise import concise
 from nightfold_cli.failures import UsageError
 from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column, Row

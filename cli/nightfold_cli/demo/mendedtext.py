@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
-from nightfold_cli.concise import concise, plain
+from nightfold.concise import concise, plain
 from nightfold_cli.demo.mending import HAPPENED, Mended
 from nightfold_cli.demo.truths import MACHINE, Found
 from nightfold_cli.demo.watching import Seen, SeenVersion, SeenWarming

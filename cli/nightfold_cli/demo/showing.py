@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.concise import concise, interval, plain
+from nightfold.concise import concise, interval, plain
 from nightfold_cli.demo.mendedtext import show_mended, show_seen
 from nightfold_cli.demo.mending import TO_TRY
 from nightfold_cli.demo.outcome import Outcome, same

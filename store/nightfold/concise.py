@@ -91,10 +91,36 @@ def concise(value: float, stderr: float) -> str:
     scale = scale_of(value, stderr)
     if scale is None:
         return plain(value)
-    bracket = scale.digits(stderr)
-    if "." in bracket and float(bracket) < 1:
-        bracket = bracket.replace(".", "").lstrip("0")
-    return f"{scale.digits(value)}({bracket}){scale.suffix}"
+    return f"{scale.digits(value)}({_bracket(scale, stderr)}){scale.suffix}"
+
+
+def in_parts(value: float, stderr: float, other: float) -> str:
+    """Return ``33.612(14)(7)``: a value with two uncertainties of different kinds, to the same decimal place.
+
+    Parameters
+    ----------
+    value, stderr, other : float
+        A number, its statistical standard uncertainty, and that of another kind; the larger has two digits.
+
+    Examples
+    --------
+    >>> in_parts(61.3617, 0.0201, 0.0068)
+    '61.362(20)(7)'
+    >>> in_parts(121034.0, 3120.0, 410.0)
+    '1.210(31)(4)e5'
+    """
+    scale = scale_of(value, max(stderr, other)) if math.isfinite(stderr) and math.isfinite(other) else None
+    if scale is None:
+        return plain(value)
+    return f"{scale.digits(value)}({_bracket(scale, stderr)})({_bracket(scale, other)}){scale.suffix}"
+
+
+def _bracket(scale: Scale, stderr: float) -> str:
+    """Return an uncertainty as it stands in brackets: in units of the last digit of the value."""
+    digits = scale.digits(stderr)
+    if "." in digits and float(digits) < 1:
+        digits = digits.replace(".", "").lstrip("0")
+    return digits or "0"
 
 
 def asymmetric(value: float, stderr: float, low: float, high: float) -> str:

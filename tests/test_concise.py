@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from nightfold_cli.concise import asymmetric, concise, interval, parse_concise, plain, short
+from nightfold.concise import asymmetric, concise, in_parts, interval, parse_concise, plain, short
 
 VALUES = st.floats(min_value=-1e30, max_value=1e30, allow_nan=False)
 STDERRS = st.floats(min_value=1e-30, max_value=1e30)
@@ -130,3 +130,11 @@ def test_plain(number: float, text: str) -> None:
 )
 def test_short(number: float, text: str) -> None:
     assert short(number) == text
+
+
+def test_two_uncertainties_share_the_place_of_the_larger() -> None:
+    assert in_parts(61.3617, 0.0201, 0.0068) == "61.362(20)(7)"
+    assert in_parts(61.3617, 0.0031, 0.41) == "61.36(0)(41)"
+    assert in_parts(121034.0, 3120.0, 410.0) == "1.210(31)(4)e5"
+    assert in_parts(5.0, 2.3, 1.1) == "5.0(2.3)(1.1)"
+    assert in_parts(61.3617, float("inf"), 0.1) == "61.3617"
