@@ -14,6 +14,9 @@ HOMES = MappingProxyType(
     {
         "lorentzian": "lorentzian.Lorentzian",
         "gaussian": "gaussian.Gaussian",
+        "voigt": "voigt.Voigt",
+        "rabi-line": "rabi_line.RabiLine",
+        "asymmetric-lorentzian": "asymmetric_lorentzian.AsymmetricLorentzian",
         "exponential": "exponential.Exponential",
         "two-body": "two_body.TwoBody",
         "three-body": "three_body.ThreeBody",

@@ -2,66 +2,24 @@
 
 from __future__ import annotations
 
-import numpy as np
-
-from nightfold.fits.engine.arrays import Bools, Floats
-from nightfold.fits.engine.frame import Origin
-from nightfold.fits.models.shape import (
-    Background,
-    Kind,
-    LineShape,
-    Parameter,
-    Theta,
-    Window,
-    peak_bounds,
-    peak_grid,
-    peak_near,
-    position,
-    width,
-)
+from nightfold.fits.engine.arrays import Floats
+from nightfold.fits.models.resonance import Resonance
 
 
-class Lorentzian(LineShape):
+class Lorentzian(Resonance):
     """``A / (1 + (2 (x - c) / w)^2)``."""
 
     name: str = "lorentzian"
     formula: str = "amplitude / (1 + (2 (x - center) / fwhm)^2)"
     source: str = "H. A. Lorentz (1906); Demtröder, Laser Spectroscopy 1 (2014), section 3.1"
-    kind: Kind = "resonance"
-    default_background: Background = "flat"
-    parameters: tuple[Parameter, ...] = (
-        Parameter("center", "position of the line", "x"),
-        Parameter("fwhm", "full width at half maximum", "x"),
-        Parameter("amplitude", "height above the background; negative for a dip", "y"),
-    )
-    theta: tuple[Theta, ...] = (position("center"), width("fwhm"))
-    linear: tuple[str | None, ...] = ("amplitude",)
-    origin: Origin = "middle"
 
     @staticmethod
     def function(x: Floats, center: float, fwhm: float, amplitude: float) -> Floats:  # type: ignore[override]
         """Return the line without background."""
         return amplitude / (1.0 + (2.0 * (x - center) / fwhm) ** 2)
 
-    def basis(self, u: Floats, theta: Floats) -> tuple[Floats, Floats]:
-        """Return ``L = 1 / (1 + d^2)``, with derivatives ``4 d L^2 / w`` and (ln w) ``2 d^2 L^2``."""
-        scale = 2.0 * np.exp(-theta[:, 1:])
-        d = (u - theta[:, :1]) * scale
-        line = 1.0 / (1.0 + d * d)
-        common = 2.0 * d * line * line
-        derivatives = np.empty((len(theta), 2, 1, u.shape[1]))
-        np.multiply(common, scale, out=derivatives[:, 0, 0])
-        np.multiply(common, d, out=derivatives[:, 1, 0])
-        return line[:, None], derivatives
-
-    def grid(self, window: Window) -> Floats:
-        """Return centers and widths."""
-        return peak_grid(window)
-
-    def bounds(self, window: Window) -> tuple[Floats, Floats]:
-        """Return bounds of center and ln width."""
-        return peak_bounds(window)
-
-    def near(self, one: Floats, other: Floats) -> Bools:
-        """Return whether two starts lead to the same minimum."""
-        return peak_near(one, other)
+    def profile(self, d: Floats, more: Floats) -> tuple[Floats, ...]:
+        """Return ``L = 1 / (1 + 4 d^2)`` and ``-8 d L^2``."""
+        del more
+        line = 1.0 / (1.0 + 4.0 * d * d)
+        return line, -8.0 * d * line * line

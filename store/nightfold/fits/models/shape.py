@@ -31,6 +31,13 @@ class Parameter:
 
 
 @dataclass(frozen=True)
+class Derived(Parameter):
+    """A number that follows from the reported parameters of a fit; `link` as in `Theta`."""
+
+    link: Link = "linear"
+
+
+@dataclass(frozen=True)
 class Theta:
     """One nonlinear coordinate of the fit and the reported parameter it carries.
 
@@ -123,6 +130,7 @@ class LineShape(ABC):
     theta: tuple[Theta, ...]
     linear: tuple[str | None, ...]
     origin: Origin
+    derived: tuple[Derived, ...] = ()
     searchable: bool = True
     """Whether a global start grid exists (built-in shapes); otherwise `grid` holds given starts."""
     numeric: bool = False
@@ -154,9 +162,8 @@ class LineShape(ABC):
         return self.basis(u, theta)[0]
 
     def gradient(self, u: Floats, theta: Floats, c: Floats) -> Floats:
-        """Return the derivatives of the line at one theta (P,) with coefficients c, (P, n) at u (n,)."""
-        derivatives = self.basis(u[None], theta[None])[1][0]
-        return np.asarray(np.einsum("l,pln->pn", c[: derivatives.shape[1]], derivatives))
+        """Return the derivatives of a numeric shape at one theta (P,) and coefficients c, (P, n) at u (n,)."""
+        raise NotImplementedError
 
     @abstractmethod
     def grid(self, window: Window) -> Floats:
@@ -214,41 +221,26 @@ class LineShape(ABC):
                 dq[:, row, size + j] = frame.ys
         return q, dq
 
+    def derive(self, q: Floats) -> tuple[Floats, Floats]:
+        """Return the coordinates of the derived numbers and their derivatives.
+
+        Parameters
+        ----------
+        q : (M, R) float array
+            Coordinates of the reported parameters, as `report` returns them.
+
+        Returns
+        -------
+        values : (M, D) float array
+            In the order of ``derived``.
+        dq : (M, D, R) float array
+        """
+        return np.zeros((len(q), 0)), np.zeros((len(q), 0, q.shape[1]))
+
     def links(self) -> tuple[Link, ...]:
         """Return how each reported parameter follows from its q."""
         by_name = {coordinate.name: coordinate.link for coordinate in self.theta}
         return tuple(by_name.get(parameter.name, "linear") for parameter in self.parameters)
-
-
-def peak_grid(window: Window) -> Floats:
-    """Return a start grid over (center, ln width): nine widths, centers a third of the width apart.
-
-    The narrowest is one spacing wide; a line narrower than that has no two points on it.
-    """
-    narrow = min(window.spacing, max(window.finest, window.span / 1500))
-    widths = np.geomspace(narrow, 1.2 * window.span, 9)
-    parts = []
-    for w in widths:
-        margin = min(w / 2, window.span / 4)
-        count = min(int(np.ceil((window.span + 2 * margin) / (w / 3))) + 1, 3000)
-        centers = np.linspace(window.low - margin, window.high + margin, count)
-        parts.append(np.column_stack([centers, np.full(count, np.log(w))]))
-    return np.vstack(parts)
-
-
-def peak_bounds(window: Window) -> tuple[Floats, Floats]:
-    """Return bounds of (center, ln width): one window to either side, a quarter spacing to 20 windows."""
-    low = np.array([window.low - window.span, np.log(window.finest / 4)])
-    high = np.array([window.high + window.span, np.log(20 * window.span)])
-    return low, high
-
-
-def peak_near(one: Floats, other: Floats) -> Bools:
-    """Return whether two (center, ln width) lead to the same minimum: half a width apart, a factor e wide."""
-    reach = 0.5 * np.exp(np.maximum(one[..., 1], other[..., 1]))
-    return np.asarray(
-        (np.abs(one[..., 0] - other[..., 0]) <= reach) & (np.abs(one[..., 1] - other[..., 1]) <= 1.0)
-    )
 
 
 def rate_grid(window: Window, count: int = 24) -> Floats:
