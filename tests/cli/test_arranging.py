@@ -127,3 +127,15 @@ def test_the_order_of_taking_in_a_pipe(rounds: Path, run: Run) -> None:
     place = head.index("order")
     assert (first[place], second[place]) == ("coil_current rising", "coil_current mixed")
     assert answered(run, "--store", rounds, "scan", "loss#1")["scan"]["order"] == {"coil_current": "rising"}
+
+
+def test_the_history_says_that_it_stayed(rounds: Path, run: Run, on_screen: Callable[..., str]) -> None:
+    assert run("--store", rounds, "split", "loss#1", "--after", "4").code == 0
+
+    def told(uid: str) -> str:
+        return " ".join(on_screen("--store", rounds, "amend", uid).split())
+
+    assert "split stayed in scan loss#1" in told("5-3-shot")
+    assert "split from scan loss#1 to scan loss#3" in told("5-4-shot")
+    assert run("--store", rounds, "split", "--undo", "1").code == 0
+    assert "split undone stayed in scan loss#1" in told("5-3-shot")
