@@ -244,6 +244,17 @@ def test_a_mistyped_label_is_joined_and_its_records_are_known_again(anywhere: st
         assert sizes(store) == [("loss#1", 13), ("los#1", 16)]
 
 
+def test_a_late_shot_of_a_label_that_was_joined_into_another_opens_a_round(anywhere: str) -> None:
+    wrong = loss(300, label="los")
+    with open_store(anywhere) as store:
+        take(store, [*loss(0), *wrong[:6], *wrong[7:]])
+        store.join_scans(["loss", "los"])
+        store.take(wrong[6:7])
+        assert sizes(store) == [("loss#1", 25), ("los#2", 1)]
+        store.undo_arrangement(1)
+        assert sizes(store) == [("loss#1", 13), ("los#1", 13)]
+
+
 def test_the_label_goes_on_with_an_arranged_round(rounds: Store) -> None:
     rounds.split_scan("loss#3", at=7)
     take(rounds, loss(4 * DAY + HOUR, label="loss"), batch=4)
