@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import math
+import re
 from functools import cache
 from pathlib import Path
 from typing import Any
@@ -15,6 +17,7 @@ from hypothesis import strategies as st
 from nightfold.errors import RecordError
 from nightfold.records import (
     Amendment,
+    Derivation,
     ShotRecord,
     clean_name,
     clean_text,
@@ -61,8 +64,13 @@ GOOD: list[dict[str, Any]] = [
     {**WHOLE, "failed": "no atoms", "derivation": "sum"},
     {"format": 1, "uid": "a", "observables": {"n": 1}, "derivation": "fit"},
     {"uid": "a", "observables": {}},
+    {"uid": "a", "note": "odd"},
+    {"uid": "a", "frames": [{"camera": "side", "role": "atoms", "path": "x.tif"}], "derivation": "sum"},
+    {**WHOLE, "derivation": {"name": "sum", "version": 2.1}},
 ]
+
 BAD: list[Any] = [
+    {"uid": "a", "derivation": "sum"},
     5, [], "x", None, {}, {"uid": "a"}, without("machine"), without("started"), without("sequence"),
     *({**WHOLE, name: value} for name, value in [
         ("format", 2), ("format", "1"), ("uid", 5), ("uid", ""), ("machine", None), ("machine", ""), ("started", 5),
@@ -84,9 +92,7 @@ BAD: list[Any] = [
 def test_good_records(record: dict[str, Any], store: Store) -> None:
     validator().validate(json.loads(json.dumps(record)))
     parsed = parse_record(record)
-    assert isinstance(
-        parsed, Amendment if record.keys() <= {"format", "uid", "observables", "derivation"} else ShotRecord
-    )
+    assert isinstance(parsed, ShotRecord if "machine" in record else Amendment)
     if isinstance(parsed, ShotRecord):
         assert store.take([record]).refused == []
 
@@ -154,3 +160,37 @@ def test_an_error_carries_what_it_says() -> None:
         "a number of at least 1",
     )
     assert str(caught.value) == "planned_shots: found 0, wanted a number of at least 1"
+
+
+SHOT = {"machine": "heron", "started": "2026-10-05T21:14:03Z", "sequence": "s"}
+
+
+@pytest.mark.parametrize(
+    ("changes", "wanted"),
+    [
+        (
+            {"sequence": {"name": "s", "steps": [{"name": "a", "colour": 1}]}},
+            "one of name, duration, settings",
+        ),
+        ({"sequence": {"name": "s", "steps": [{"name": "a", "setings": {}}]}}, "is 'settings' meant?"),
+        ({"sequence": {"name": "s", "steps": [{"duration": 1}]}}, "this field; a step needs name"),
+        ({"sequence": {"name": "s", "steps": [], "colour": 1}}, "one of name, steps"),
+        ({"frames": [{"camera": "side"}]}, "this field; a frame needs camera, role and path"),
+        ({"derivation": {"name": "fit", "colour": 1}}, "one of name, version, settings"),
+        ({"colour": 1}, "one of format, uid"),
+        ({"readings": {"room": 20}}, "taken with take --sensors"),
+    ],
+)
+def test_a_part_is_told_its_own_fields(changes: dict[str, Any], wanted: str) -> None:
+    with pytest.raises(RecordError, match=re.escape(wanted)):
+        parse_record({**SHOT, **changes})
+
+
+def test_a_version_that_is_a_number_is_taken_as_its_text() -> None:
+    for stated, text in ((2, "2"), (2.1, "2.1"), ("2", "2")):
+        derivation = parse_record({**SHOT, "derivation": {"name": "fit", "version": stated}}).derivation
+        assert isinstance(derivation, Derivation)
+        assert derivation.version == text
+    for wrong in (True, math.nan, [2]):
+        with pytest.raises(RecordError, match=r"derivation\.version: .*wanted text"):
+            parse_record({**SHOT, "derivation": {"name": "fit", "version": wrong}})

@@ -7,9 +7,10 @@ were stated; `nightfold.settings` brings them into canonical form. `record_schem
 from __future__ import annotations
 
 import json
+import math
 import re
 import unicodedata
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from datetime import datetime
 from typing import Annotated, Any, Literal
 
@@ -132,12 +133,21 @@ def _plain_object(value: Any) -> Any:
     return value
 
 
+def _version(value: Any) -> str:
+    if type(value) in (int, float) and math.isfinite(value):
+        return str(value)
+    return clean_text(value)
+
+
+_VERSION_SCHEMA = {"anyOf": [{"type": "string"}, {"type": "number"}]}
+
+
 class Derivation(BaseModel):
     """How the observables of a record were obtained."""
 
     model_config = ConfigDict(extra="forbid")
     name: Name
-    version: Text = ""
+    version: Annotated[str, BeforeValidator(_version), WithJsonSchema(_VERSION_SCHEMA)] = ""
     settings: Annotated[dict[str, Any], BeforeValidator(_plain_object)] = {}
 
 
@@ -211,21 +221,28 @@ class ShotRecord(BaseModel):
     derivation: Name | Derivation | None = None
 
 
-class Amendment(BaseModel):
-    """Observables that come later than their shot, or replace earlier ones."""
+_BROUGHT = ("observables", "frames", "note")
 
-    model_config = ConfigDict(extra="forbid")
+
+class Amendment(BaseModel):
+    """Observables that come later than their shot or replace earlier ones, and frames and a note that are added."""
+
+    model_config = ConfigDict(
+        extra="forbid", json_schema_extra={"anyOf": [{"required": [name]} for name in _BROUGHT]}
+    )
     format: Annotated[Literal[1], BeforeValidator(_no_truth)] = 1
     uid: Name
-    observables: _Readings
+    observables: _Readings = {}
+    frames: Annotated[list[Frame], AfterValidator(_each_once)] = []
+    note: Text = ""
     derivation: Name | Derivation | None = None
 
 
-_AMENDMENT_KEYS = {"format", "uid", "observables", "derivation"}
+_AMENDMENT_KEYS = {"format", "uid", "derivation", *_BROUGHT}
 
 
 def parse_record(record: Any) -> ShotRecord | Amendment:
-    """Return the checked record; an object of only uid, observables and derivation is an amendment.
+    """Return the checked record; a uid with nothing but observables, frames, note and derivation is an amendment.
 
     Raises
     ------
@@ -235,6 +252,11 @@ def parse_record(record: Any) -> ShotRecord | Amendment:
     if not isinstance(record, Mapping):
         raise RecordError("", shorten(record), "one JSON object a line")
     model = Amendment if "uid" in record and record.keys() <= _AMENDMENT_KEYS else ShotRecord
+    if model is Amendment and record.keys().isdisjoint(_BROUGHT):
+        wanted = (
+            "this field, frames or a note for a shot in the store; a shot needs machine, started and sequence"
+        )
+        raise RecordError("observables", "nothing", wanted)
     try:
         return model.model_validate(dict(record))
     except ValidationError as problem:
@@ -302,13 +324,41 @@ def _explain(problem: ValidationError, record: Mapping[str, Any], model: type[Ba
         part for part in first["loc"] if part not in skipped and not str(part).startswith("function-before[")
     ]
     field = ".".join(str(part) for part in path)
+    if isinstance(record.get("readings"), Mapping):
+        wanted = "observables; readings of sensors, which belong to no shot, are taken with take --sensors"
+        return RecordError("readings", shorten(dict(record["readings"])), wanted)
+    part = _part(path, model)
     if first["type"] == "missing":
-        return RecordError(field, "nothing", "this field; a shot needs machine, started and sequence")
+        needed = [name for name, item in part.model_fields.items() if item.is_required()]
+        listed = " and ".join(", ".join(needed).rsplit(", ", 1))
+        return RecordError(field, "nothing", f"this field; {_CALLED.get(part, 'a shot')} needs {listed}")
     if first["type"] == "extra_forbidden":
         import difflib
 
-        near = difflib.get_close_matches(str(path[-1]), list(model.model_fields), 1)
-        hint = f"no such field; is {near[0]!r} meant?" if near else "one of " + ", ".join(model.model_fields)
+        near = difflib.get_close_matches(str(path[-1]), list(part.model_fields), 1)
+        hint = f"no such field; is {near[0]!r} meant?" if near else "one of " + ", ".join(part.model_fields)
         return RecordError(field, shorten(first["input"]), hint)
     wanted = _WANTED.get(first["type"], first["msg"].removeprefix("Value error, "))
     return RecordError(field, shorten(first["input"]), wanted)
+
+
+_CALLED: dict[type[BaseModel], str] = {
+    SequenceSteps: "a sequence with steps",
+    Step: "a step",
+    Frame: "a frame",
+    Derivation: "a derivation",
+}
+
+
+def _part(path: Sequence[Any], model: type[BaseModel]) -> type[BaseModel]:
+    """Return the model of the part of a record that holds a field."""
+    match path:
+        case ["sequence", "steps", _, _]:
+            return Step
+        case ["sequence", _]:
+            return SequenceSteps
+        case ["frames", _, _]:
+            return Frame
+        case ["derivation", _]:
+            return Derivation
+    return model

@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 _MICROSECOND = timedelta(microseconds=1)
+_WITH_OFFSET = "an ISO 8601 time with an offset, such as 2026-10-05T21:14:03+02:00"
 _FIRST, _LAST = datetime(1900, 1, 1, tzinfo=UTC), datetime(2200, 1, 1, tzinfo=UTC)
 
 
@@ -73,7 +74,9 @@ def parse_moment(text: str | datetime, zone: ZoneInfo | None = None) -> int:
     moment = text if isinstance(text, datetime) else _read(text)
     if moment.tzinfo is None:
         if zone is None:
-            raise ValueError("an ISO 8601 time with an offset, such as 2026-10-05T21:14:03+02:00")
+            raise ValueError(
+                f"{_WITH_OFFSET}; or naive_times = true in the machine card, if it is a time of its zone"
+            )
         moment = _place(moment, zone)
     if not _FIRST <= moment < _LAST:
         raise ValueError("a time between the years 1900 and 2200")
@@ -81,13 +84,12 @@ def parse_moment(text: str | datetime, zone: ZoneInfo | None = None) -> int:
 
 
 def _read(text: str) -> datetime:
-    wanted = "an ISO 8601 time with an offset, such as 2026-10-05T21:14:03+02:00"
     if not isinstance(text, str) or len(text) < 11 or text[10] not in "Tt ":
-        raise ValueError(wanted)
+        raise ValueError(_WITH_OFFSET)
     try:
         return datetime.fromisoformat(text.strip())
     except ValueError as problem:
-        raise ValueError(wanted) from problem
+        raise ValueError(_WITH_OFFSET) from problem
 
 
 def _place(moment: datetime, zone: ZoneInfo) -> datetime:

@@ -172,3 +172,40 @@ def test_the_cards_used(anywhere: str, use: UseCard) -> None:
         assert store.cards()["heron"].rejoin_within_s == 86400
         with pytest.raises(NotFound, match="machine 'egret'"):
             store.cards_used("egret")
+
+
+NAIVE = 'naive_times = true\nzone = "{}"\n'
+
+
+def test_the_zone_of_times_without_an_offset_stays(two: tuple[Store, Store], use: UseCard) -> None:
+    writer, other = two
+    use(other, NAIVE.format("Europe/Vienna"))
+    use(other, NAIVE.format("Europe/London"))  # nothing was taken by the first
+    local = [shot(0, started="2026-10-05T21:00:00")]
+    assert writer.take(local).new == 1
+    with pytest.raises(CardError, match=r"zone: found 'Europe/Vienna'.*wanted 'Europe/London'.*naive_times"):
+        use(other, NAIVE.format("Europe/Vienna"))
+    use(other, 'zone = "Europe/Vienna"\n')  # shows times in it, and reads none
+    (refused,) = writer.take(local).refused
+    assert "naive_times = true in the machine card" in refused.reason
+    with pytest.raises(CardError, match="wanted 'Europe/London'"):
+        use(other, NAIVE.format("Europe/Vienna"))
+    use(other, NAIVE.format("Europe/London"))
+    assert writer.take(local).known == 1
+
+
+def test_the_zone_of_naive_times_of_sensors_stays(two: tuple[Store, Store], use: UseCard) -> None:
+    writer, other = two
+    use(other, NAIVE.format("Europe/Vienna"))
+    reading = {"machine": "heron", "at": "2026-10-05T21:00:00", "readings": {"room": 20.0}}
+    assert writer.take_sensors([reading]).new == 1
+    with pytest.raises(CardError, match="zone: found 'Europe/London'"):
+        use(other, NAIVE.format("Europe/London"))
+
+
+def test_a_zone_may_change_where_no_naive_time_was_read(two: tuple[Store, Store], use: UseCard) -> None:
+    writer, other = two
+    use(other, 'zone = "Europe/Vienna"\n')
+    writer.take([shot(0)])
+    use(other, 'zone = "Europe/London"\n')
+    use(other, NAIVE.format("Europe/Paris"))

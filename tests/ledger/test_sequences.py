@@ -246,3 +246,33 @@ def test_what_is_not_there(store: Store) -> None:
 )  # fmt: skip
 def test_a_list_of_numbers_is_known_by_its_form(value: Any, numbers: Any) -> None:
     assert ramp_of(value) == numbers
+
+
+@pytest.mark.parametrize(
+    ("duration", "found"),
+    [
+        (of(1, "A"), "'A'"), (-1, "-1.0"), (of(-1, "ms"), "-1.0"), (math.nan, "nan"), (math.inf, "inf"),
+        (of(math.inf, "s"), "inf"), ("long", "'long'"), (True, "True"), ([1, 2], "'[1,2]'"), (of(1, "1"), "'1'"),
+    ],
+)  # fmt: skip
+def test_a_duration_is_a_finite_time(anywhere: str, duration: Any, found: str) -> None:
+    good = shot(1, step("load", 1), step("look", of(5, "ms")))
+    with open_store(anywhere) as store:
+        outcome = store.take([shot(0, step("load", 1), step("look", duration)), good])
+        (refused,) = outcome.refused
+        assert refused.reason.startswith("sequence.steps.1.duration")
+        assert f"found {found}, wanted a" in refused.reason
+        assert outcome.new == 1
+        assert store.sequence("look").timeline().steps[1].duration_s == pytest.approx(0.005)
+
+
+def test_a_duration_among_the_settings_of_a_step(store: Store) -> None:
+    (refused,) = store.take([shot(0, {"name": "load", "settings": {"duration": of(1, "A")}})]).refused
+    assert refused.reason.startswith(
+        "sequence.steps.0.settings.duration.unit: found 'A', wanted a unit of time"
+    )
+
+
+@pytest.mark.parametrize("duration", [None, of(3, "ms"), 0, 0.0, -0.0, 7, {"value": 2, "unit": "min"}])
+def test_durations_that_are_taken(store: Store, duration: Any) -> None:
+    assert store.take([shot(0, step("load", duration))]).new == 1

@@ -92,7 +92,11 @@ class CsvColumns:
             except ValueError as error:
                 raise RecordError("started_at", repr(self.started_at), wanted) from error
         if moment.tzinfo is None and zone is None:
-            raise RecordError("started_at", f"{moment.isoformat()}, without an offset", wanted)
+            raise RecordError(
+                "started_at",
+                f"{moment.isoformat()}, without an offset",
+                f"{wanted}; or naive_times = true in the card",
+            )
         try:
             return from_us(parse_moment(moment, zone))
         except ValueError as problem:

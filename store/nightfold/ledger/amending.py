@@ -3,20 +3,20 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from sqlalchemy import Connection, Row, and_, delete, insert, select, update
 
 from nightfold import tables
 from nightfold.errors import RecordError
-from nightfold.ledger.checking import CheckedShot, readings_content
+from nightfold.ledger.checking import CheckedShot, derivation_of, readings_content
 from nightfold.ledger.correcting import digests_before
 from nightfold.ledger.doubles import find_counterpart
 from nightfold.ledger.names import MachineNames, insert_row
 from nightfold.ledger.notes import shot_subject
 from nightfold.ledger.pins import label_of
-from nightfold.records import Derivation, shorten
+from nightfold.records import Amendment, Derivation, Frame, shorten
 from nightfold.settings import ReadValue, Value, digest_content
 from nightfold.timestamps import from_us
 
@@ -52,11 +52,7 @@ def _addressed(connection: Connection, stored: Row[Any], digest: bytes) -> list[
 
 def _bring(connection: Connection, stored: Row[Any], shot: CheckedShot, at_us: int) -> bool:
     """Bring what a whole record says to a shot that it is of; return whether anything was changed."""
-    read = shot.readings
-    if shot.derivation is None:  # a null in a whole record says "not read yet", not "take the value back"
-        read = {name: value for name, value in read.items() if value.state != "null"}
-        unread = shot.readings.keys() - read.keys() - _read_names(connection, stored.id)
-        read |= {name: shot.readings[name] for name in unread}
+    read = _that_hold(connection, stored.id, shot.readings, shot.derivation)
     changed = _amend(connection, stored.id, shot.machine, read, shot.derivation, at_us)
     changed = _end_scan(connection, stored, shot) or changed
     if shot.failed is not None and set_failed(connection, stored.id, shot.failed, at_us):
@@ -71,21 +67,41 @@ def amend_readings(
     stored: Row[Any],
     machine: MachineNames,
     readings: Mapping[str, ReadValue],
-    derivation: Derivation | None,
+    amendment: Amendment,
     at_us: int,
 ) -> bool:
-    """Bring later observables to a stored shot, and to the one that counts in its place if it is a double.
+    """Bring what comes by uid alone to a stored shot, and to the one that counts in its place if it is a double.
 
-    Return whether anything was changed.
+    Return whether anything was changed. `readings` are the observables of the amendment in the units stored.
     """
-    digest = digest_content(("amendment", *readings_content(readings, derivation)))
+    derivation = derivation_of(amendment.derivation)
+    digest = digest_content(("amendment", *readings_content(readings, derivation), *_also_brought(amendment)))
     if _seen(connection, stored.id, digest):
         return False
     changed = False
     for row in _addressed(connection, stored, digest):
-        changed = _amend(connection, row.id, machine, readings, derivation, at_us) or changed
+        read = _that_hold(connection, row.id, readings, derivation)
+        changed = _amend(connection, row.id, machine, read, derivation, at_us) or changed
+        changed = _add_notes_and_frames(connection, row.id, amendment, at_us) or changed
         _remember(connection, row.id, digest, at_us)
     return changed
+
+
+def _also_brought(amendment: Amendment) -> tuple[Any, ...]:
+    """Return note and frames as plain values; nothing where there are none, as before they could be brought."""
+    if not amendment.note and not amendment.frames:
+        return ()
+    return amendment.note, [frame.model_dump() for frame in amendment.frames]
+
+
+def _that_hold(
+    connection: Connection, shot_id: int, readings: Mapping[str, ReadValue], derivation: Derivation | None
+) -> Mapping[str, ReadValue]:
+    """Return the readings without nulls that only say "not read": those of no analysis, where there is a reading."""
+    if derivation is not None or all(read.state != "null" for read in readings.values()):
+        return readings
+    there = _read_names(connection, shot_id)
+    return {name: read for name, read in readings.items() if read.state != "null" or name not in there}
 
 
 def _read_names(connection: Connection, shot_id: int) -> set[str]:
@@ -147,6 +163,28 @@ def check_identity(connection: Connection, stored: Row[Any], shot: CheckedShot) 
     wished = _wished_label(shot)
     if label != wished:
         raise RecordError("scan", _label(wished), f"{_label(label)}, {taken}")
+    check_frames(connection, stored.id, shot.frames)
+
+
+def check_frames(connection: Connection, shot_id: int, frames: Sequence[Frame]) -> None:
+    """Refuse a frame whose camera and role the shot has with another path.
+
+    Raises
+    ------
+    RecordError
+    """
+    if not frames:
+        return
+    table = tables.frame
+    rows = connection.execute(select(table).where(table.c.shot_id == shot_id))
+    stored = {(row.camera, row.role): row.path for row in rows}
+    for place, frame in enumerate(frames):
+        path = stored.get((frame.camera, frame.role), frame.path)
+        if path != frame.path:
+            wanted = (
+                f"{shorten(path)}, as stored for this camera and role; another picture needs another role"
+            )
+            raise RecordError(f"frames.{place}.path", shorten(frame.path), wanted)
 
 
 def _wished_label(shot: CheckedShot) -> str | None:
@@ -266,7 +304,9 @@ def set_failed(connection: Connection, shot_id: int, reason: str, at_us: int) ->
     return True
 
 
-def _add_notes_and_frames(connection: Connection, shot_id: int, shot: CheckedShot, at_us: int) -> bool:
+def _add_notes_and_frames(
+    connection: Connection, shot_id: int, shot: CheckedShot | Amendment, at_us: int
+) -> bool:
     changed = False
     note, frame = tables.note, tables.frame
     subject = shot_subject(shot_id)

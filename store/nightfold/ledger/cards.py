@@ -124,6 +124,7 @@ def keep_card(connection: Connection, names: Names, card: MachineCard, at_us: in
 
     wrong = release_derived(connection, machine, card)
     wrong += [*contradictions(machine, card), *derived_contradictions(connection, machine, card)]
+    wrong += _moved_times(connection, machine, card)
     if wrong:
         raise CardError("\n".join(f"card of {card.machine}: {reason}" for reason in wrong))
     names.enter(connection, machine)
@@ -173,6 +174,35 @@ def contradictions(machine: MachineNames, card: MachineCard) -> list[str]:
                     "(a record may state any unit that converts)"
                 )
     return found
+
+
+def _moved_times(connection: Connection, machine: MachineNames, card: MachineCard) -> list[str]:
+    """Return the reason against a card that reads times without an offset in another zone than one before it did."""
+    if not card.naive_times or not _has_times(connection, machine.id):
+        return []
+    given = tables.card
+    texts = connection.execute(
+        select(given.c.toml)
+        .where(given.c.machine_id == machine.id)
+        .order_by(given.c.at_us.desc(), given.c.id.desc())
+    ).scalars()
+    before = (stored_card(toml) for toml in texts)
+    naive = (old for old in before if old.naive_times and old.machine == machine.name)
+    zone = next((old.zone for old in naive), card.zone)
+    if zone == card.zone:
+        return []
+    return [
+        f"zone: found {card.zone!r} with naive_times = true, wanted {zone!r}, in which times without an offset were "
+        "read before: taken again they would be other shots (without naive_times the zone may be another one; "
+        "times then need an offset)"
+    ]
+
+
+def _has_times(connection: Connection, machine_id: int) -> bool:
+    """Return whether a machine has shots, or readings of sensors."""
+    shot = select(tables.shot.c.id).join(tables.sequence).where(tables.sequence.c.machine_id == machine_id)
+    sensor = select(tables.sensor.c.id).where(tables.sensor.c.machine_id == machine_id)
+    return any(connection.execute(query.limit(1)).first() is not None for query in (shot, sensor))
 
 
 def _unit(card: MachineCard, kind: str, name: str) -> str | None:

@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
 
-from nightfold.errors import RecordError
+from nightfold.errors import RecordError, UnitError
 from nightfold.ledger.names import Known, MachineNames
 from nightfold.ledger.streams import Entry, Settled, StreamMemory
+from nightfold.ledger.structure import DURATION
 from nightfold.records import Derivation, Frame, SequenceSteps, ShotRecord, clean_name, shorten
 from nightfold.settings import (
     ReadValue,
@@ -18,8 +20,10 @@ from nightfold.settings import (
     digest_text,
     hash_setting,
     reading_value,
+    setting_value,
 )
 from nightfold.timestamps import parse_moment
+from nightfold.units import conversion, parse_unit
 
 _STDERR = "_stderr"
 
@@ -89,18 +93,21 @@ def settings_of(record: ShotRecord) -> tuple[Mapping[Any, Any], tuple[str, bytes
     Raises
     ------
     RecordError
-        If a step's setting has the name of a stated parameter.
+        If a step's setting has the name of a stated parameter, or its duration is no time.
     """
     if not isinstance(record.sequence, SequenceSteps):
         return record.parameters, None
     settings = dict(record.parameters)
     structure = []
     seen: dict[str, int] = {}
-    for step in record.sequence.steps:
+    for place, step in enumerate(record.sequence.steps):
         seen[step.name] = seen.get(step.name, 0) + 1
         name = step.name if seen[step.name] == 1 else f"{step.name}#{seen[step.name]}"
-        stated = {} if step.duration is None else {"duration": step.duration}
+        stated = {} if step.duration is None else {DURATION: step.duration}
         stated |= step.settings
+        if DURATION in stated:
+            home = "settings." if DURATION in step.settings else ""
+            _check_duration(stated[DURATION], f"sequence.steps.{place}.{home}{DURATION}")
         structure.append([name, list(stated)])
         for key, raw in stated.items():
             full = f"{name}.{key}"
@@ -111,6 +118,29 @@ def settings_of(record: ShotRecord) -> tuple[Mapping[Any, Any], tuple[str, bytes
             settings[full] = raw
     text = json.dumps(structure, ensure_ascii=False, separators=(",", ":"))
     return settings, (text, digest_text(text))
+
+
+def _check_duration(raw: Any, field: str) -> None:
+    """Refuse a duration that is no finite time of at least 0; null is one that is not known.
+
+    Raises
+    ------
+    RecordError
+    """
+    if type(raw) is float and 0 <= raw < math.inf:
+        return
+    stated = setting_value(raw, field)
+    if stated is None:
+        return
+    value, unit = stated
+    if value.kind != "number" or value.num is None or value.num < 0:
+        raise RecordError(field, shorten(value.plain), "a time of at least 0, finite")
+    if unit is None:
+        return
+    try:
+        conversion(parse_unit(unit), "s")
+    except UnitError as problem:
+        raise RecordError(f"{field}.unit", shorten(unit), f"a unit of time ({problem})") from None
 
 
 def readings_of(

@@ -10,9 +10,9 @@ from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
 from nightfold.errors import RecordError
-from nightfold.ledger.amending import amend_readings, amend_shot, check_identity
+from nightfold.ledger.amending import amend_readings, amend_shot, check_frames, check_identity
 from nightfold.ledger.batches import batches, collector_paused
-from nightfold.ledger.checking import CheckedShot, check_shot, derivation_of, readings_of, sequence_name
+from nightfold.ledger.checking import CheckedShot, check_shot, readings_of, sequence_name
 from nightfold.ledger.correcting import find_corrected
 from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
@@ -220,11 +220,11 @@ class Writer:
             for machine in self._names.machines.values()
             if stored.sequence_id in machine.sequences.values()
         )
+        check_frames(batch.connection, stored.id, amendment.frames)
         plan: dict[str, Any] = {}
         readings = readings_of(amendment.observables, machine, plan)
         self._names.keep(batch.connection, machine, plan)
-        derivation = derivation_of(amendment.derivation)
-        changed = amend_readings(batch.connection, stored, machine, readings, derivation, now_us())
+        changed = amend_readings(batch.connection, stored, machine, readings, amendment, now_us())
         self._count(batch, changed)
 
     @staticmethod
