@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -17,6 +17,9 @@ from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
 from nightfold.fits.request import as_points, check_stderr, make_request
 from nightfold.fits.result import FitResult
+
+if TYPE_CHECKING:
+    import xarray as xr
 
 
 def fit_many(
@@ -105,12 +108,18 @@ class FitTable:
         The arrays behind the properties.
     slices : tuple of dict
         Of fits along one axis of a scan: the values of the other axes, one dict a row. Empty otherwise.
+    slice_units : mapping of str to str
+        Units of the other axes.
+    about : mapping of str to str
+        What was fitted: ``scan``, ``machine``, ``observable`` and ``along``, of fits of a scan.
     """
 
     x: Floats
     Y: Floats
     outcome: Outcome
     slices: tuple[dict[str, Any], ...] = ()
+    slice_units: Mapping[str, str] = field(default_factory=dict)
+    about: Mapping[str, str] = field(default_factory=dict)
 
     def __len__(self) -> int:
         return len(self.Y)
@@ -205,6 +214,21 @@ class FitTable:
             used,
             self.outcome.covariance[row],
         )
+
+    def to_dataset(self) -> xr.Dataset:
+        """Return the estimates as a labelled array.
+
+        Returns
+        -------
+        Dataset
+            Dimensions are the axes not fitted along; the one dimension ``slice``, the axes being coordinates on it, if
+            the slices fill less than a quarter of the grid; ``fit`` for fits of no scan. Variables: each estimate
+            with ``_stderr``, ``_low68``, ``_high68``, ``_low95``, ``_high95`` (68 means 68.27 %); ``trusted``,
+            ``warnings`` (codes), ``points`` and ``residual_stderr``. Where there is no slice: NaN, False, ``""``, 0.
+        """
+        from nightfold.scans.slicedata import estimates_dataset
+
+        return estimates_dataset(self)
 
     def _judge(self, row: int) -> tuple[FitWarning, ...]:
         out, layout = self.outcome, self.outcome.request.layout

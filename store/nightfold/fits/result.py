@@ -117,6 +117,20 @@ class FitResult:
             {n: e.value for n, e in self.estimates.items()},
         )
 
+    def band(self, x: ArrayLike, level: float = 0.6827) -> tuple[Floats, Floats]:
+        """Return the ends of the band in which the curve lies at each x with that probability, of the shape of x.
+
+        From the joint covariance, to first order; nan where the data do not tell.
+
+        Raises
+        ------
+        FitError
+            When the level is not between 0 and 1.
+        """
+        from nightfold.fits.band import curve_band
+
+        return curve_band(self, np.asarray(x, dtype=np.float64), level)
+
     def to_lmfit(self) -> tuple[Any, Any]:
         """Return an `lmfit.Model` of this curve and `lmfit.Parameters` at these estimates.
 

@@ -150,7 +150,12 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
         **request.options,
         **units,
     )
-    fits = replace(fits, slices=tuple(part.where for part in slices))
+    fits = replace(
+        fits,
+        slices=tuple(part.where for part in slices),
+        slice_units={axis.parameter: known.get(axis.parameter, "") for axis in scan.axes},
+        about={"scan": scan.key, "machine": scan.machine, "observable": observable, "along": along},
+    )
     parts = [
         SliceFit(
             part.where,
