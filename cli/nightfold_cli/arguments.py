@@ -5,12 +5,16 @@ from __future__ import annotations
 import os
 import re
 from argparse import Action, ArgumentParser, ArgumentTypeError, Namespace, RawDescriptionHelpFormatter
+from collections.abc import Sequence
 from types import ModuleType
-from typing import TYPE_CHECKING, Any, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn, TypeVar
 
 if TYPE_CHECKING:
     from argparse import _MutuallyExclusiveGroup
 
+    from nightfold_cli.render import Screen
+
+Item = TypeVar("Item")
 DEFAULT_STORE = "nightfold.sqlite"
 
 
@@ -79,6 +83,25 @@ def by_whom(args: Namespace) -> str | None:
         return named or getpass.getuser()
     except (OSError, KeyError):
         return None
+
+
+def add_last(parser: ArgumentParser, on_screen: int) -> None:
+    """Declare the options that say how many of a list are shown; without them, on a terminal, the last `on_screen`."""
+    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {on_screen})")
+    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
+    parser.set_defaults(on_screen=on_screen)
+
+
+def the_last(args: Namespace, screen: Screen, found: list[Item]) -> list[Item]:
+    """Return as many of a list, from its end, as those options say."""
+    last = args.last or (args.on_screen if screen.terminal and not args.all else len(found))
+    return found[-last:] if last else found
+
+
+def say_earlier(screen: Screen, found: Sequence[Any], listed: Sequence[Any]) -> None:
+    """Say how many of a list were not shown, if any."""
+    if len(found) > len(listed):
+        screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
 
 
 def add_relative(parser: ArgumentParser) -> None:

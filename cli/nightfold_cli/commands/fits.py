@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
 from nightfold_cli import estimates
-from nightfold_cli.arguments import positive
+from nightfold_cli.arguments import add_last, say_earlier, the_last
 from nightfold_cli.estimates import value_text
 from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines
 from nightfold_cli.layout import Cell, Column, Row
@@ -32,8 +32,7 @@ _EMPTY = "no fits yet; 'nightfold fit KEY MODEL -o OBSERVABLE' makes one"
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("key", metavar="KEY", nargs="?", help="of this scan only")
-    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
-    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
+    add_last(parser, _ON_SCREEN)
 
 
 def run(args: Namespace) -> int:
@@ -44,8 +43,7 @@ def run(args: Namespace) -> int:
         kept = sorted(store.fits(scan.id if scan else None), key=lambda fit: (fit.at, fit.id))
         kept = named_fits(store, kept)
         times = local_times(store)
-        last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(kept))
-        listed = kept[-last:] if last else []
+        listed = the_last(args, screen, kept)
         notes = notes_of_fits(store, [fit.id for fit in listed])
     if screen.json:
         screen.answer({"fits": [{**kept_entry(fit), "notes": notes.get(fit.id, [])} for fit in listed]})
@@ -58,8 +56,7 @@ def run(args: Namespace) -> int:
         screen.note(
             "stale: the shots of the scan have changed since; 'nightfold fit --again' brings it up to date"
         )
-    if len(kept) > len(listed):
-        screen.note(f"{len(kept) - len(listed)} earlier ones not shown; --all shows them")
+    say_earlier(screen, kept, listed)
     return 0
 
 

@@ -6,7 +6,7 @@ from argparse import ArgumentParser, Namespace
 from collections.abc import Mapping
 from typing import Any
 
-from nightfold_cli.arguments import positive
+from nightfold_cli.arguments import add_last, say_earlier, the_last
 from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column
 from nightfold_cli.localtimes import offset_if_it_changes
@@ -22,8 +22,7 @@ _ON_SCREEN = 40
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
     parser.add_argument("--machine", metavar="NAME", help="of this machine only")
-    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
-    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
+    add_last(parser, _ON_SCREEN)
 
 
 def run(args: Namespace) -> int:
@@ -36,11 +35,9 @@ def run(args: Namespace) -> int:
         noted = texts_by_subject(store)
     if args.machine:
         nights = [night for night in nights if night["machine"] == args.machine]
-    last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(nights))
-    earlier = len(nights) - last
-    nights = nights[-last:] if last else []
+    listed = the_last(args, screen, nights)
     if screen.json:
-        screen.answer({"nights": [_entry(night, _notes(noted, night)) for night in nights]})
+        screen.answer({"nights": [_entry(night, _notes(noted, night)) for night in listed]})
         return 0
     columns = [
         Column("night"),
@@ -55,7 +52,7 @@ def run(args: Namespace) -> int:
         *([] if screen.terminal else [Column("notes")]),
     ]
     rows = []
-    for night in nights:
+    for night in listed:
         first, last = (times.local(night[key], night["machine"]) for key in ("first", "last"))
         rows.append(
             [
@@ -70,9 +67,8 @@ def run(args: Namespace) -> int:
         )
     screen.table(columns, rows, empty="no shots yet; 'nightfold take FILE…' takes some in")
     if rows:
-        screen.note(times.note(night["machine"] for night in nights))
-    if earlier > 0:
-        screen.note(f"{earlier} earlier ones not shown; --all shows them")
+        screen.note(times.note(night["machine"] for night in listed))
+    say_earlier(screen, nights, listed)
     return 0
 
 

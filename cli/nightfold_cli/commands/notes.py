@@ -5,7 +5,7 @@ from __future__ import annotations
 from argparse import ArgumentParser, Namespace
 from typing import TYPE_CHECKING, Any
 
-from nightfold_cli.arguments import add_subject, positive
+from nightfold_cli.arguments import add_last, add_subject, say_earlier, the_last
 from nightfold_cli.known import check_machine
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
@@ -35,8 +35,7 @@ def add_arguments(parser: ArgumentParser) -> None:
     parser.add_argument("--machine", metavar="NAME", help="about this machine only")
     parser.add_argument("--since", metavar="TIME", help="from this day or time on (local to the machine)")
     parser.add_argument("--until", metavar="TIME", help="before this day or time")
-    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
-    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
+    add_last(parser, _ON_SCREEN)
 
 
 def run(args: Namespace) -> int:
@@ -60,14 +59,12 @@ def run(args: Namespace) -> int:
         _name_scans(store, found)
         times = local_times(store)
         empty = _NONE if found or not store.notes().empty else _NONE_YET
-    last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(found))
-    listed = found[-last:] if last else []
+    listed = the_last(args, screen, found)
     if screen.json:
         screen.answer({"notes": [entry(note) for note in listed]})
         return 0
     _draw(screen, listed, times, empty)
-    if len(found) > len(listed):
-        screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
+    say_earlier(screen, found, listed)
     return 0
 
 

@@ -8,7 +8,7 @@ from datetime import date
 from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
-from nightfold_cli.arguments import positive
+from nightfold_cli.arguments import add_last, say_earlier, the_last
 from nightfold_cli.known import check_machine, check_sequence
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, offset_if_it_changes
@@ -43,8 +43,7 @@ def add_arguments(parser: ArgumentParser) -> None:
     parser.add_argument("--sequence", metavar="NAME", help="of this sequence only")
     parser.add_argument("--since", metavar="TIME", help="that ended at this day or time, or later")
     parser.add_argument("--until", metavar="TIME", help="that began before this day or time")
-    parser.add_argument("--last", metavar="N", type=positive, help=f"the last N (on a terminal {_ON_SCREEN})")
-    parser.add_argument("--all", action="store_true", help="all of them, on a terminal too")
+    add_last(parser, _ON_SCREEN)
 
 
 def run(args: Namespace) -> int:
@@ -64,8 +63,7 @@ def run(args: Namespace) -> int:
             and (since is None or scan.last >= since)
             and (until is None or scan.first < until)
         ]
-        last = args.last or (_ON_SCREEN if screen.terminal and not args.all else len(found))
-        listed = found[-last:] if last else []
+        listed = the_last(args, screen, found)
         names = {scan.id: name_of(scan, ambiguous) for scan in listed}
         times = local_times(store)
         empty = _NONE if every else _NONE_YET
@@ -78,8 +76,7 @@ def run(args: Namespace) -> int:
                 screen.note(times.note(scan.machine for scan in listed))
             if any(order_mark(scan, axis) for scan in listed for axis in scan.axes):
                 screen.note("↑ ↓ taken in this order: a drift in time would look like a feature")
-            if len(found) > len(listed):
-                screen.note(f"{len(found) - len(listed)} earlier ones not shown; --all shows them")
+            say_earlier(screen, found, listed)
         else:
             _tabulate(screen, listed, names, times, empty)
     return 0
