@@ -16,17 +16,11 @@ from numpy.typing import NDArray
 from nightfold.fits.curve import fit_curve
 from nightfold.fits.model import Model
 
-from .strd import read
+from .strd import NAMES, digits, problem, read
 
 lmfit: Any = pytest.importorskip("lmfit")
 PEAK = Path(__file__).parents[1] / "reference" / "lmfit_test_peak" / "test_peak.dat"
 Array = NDArray[np.float64]
-
-FUNCTIONS: dict[str, Any] = {
-    "Misra1a": lambda x, b1, b2: b1 * (1 - np.exp(-b2 * x)),
-    "BoxBOD": lambda x, b1, b2: b1 * (1 - np.exp(-b2 * x)),
-    "Eckerle4": lambda x, b1, b2, b3: b1 / b2 * np.exp(-0.5 * ((x - b3) / b2) ** 2),
-}
 
 
 @pytest.mark.parametrize("weights", ["equal", "auto"])
@@ -49,18 +43,32 @@ def test_eckerle4_by_the_built_in_gaussian(weights: str) -> None:
 
 
 @pytest.mark.parametrize("start", [0, 1], ids=["start 1", "start 2"])
-@pytest.mark.parametrize("kind", ["lmfit", "function"])
-@pytest.mark.parametrize("name", FUNCTIONS)
-def test_models_of_ones_own_reach_the_certified_values(name: str, kind: str, start: int) -> None:
-    certified = read(name)
-    function = FUNCTIONS[name]
-    model = lmfit.Model(function) if kind == "lmfit" else Model(function)
-    result = fit_curve(certified.x, certified.y, model, start=certified.starts[start], weights="equal")
-    mirrored = name == "Eckerle4" and result.estimates["b1"].value < 0
-    for parameter, value in certified.value.items():
-        sign = -1 if mirrored and parameter != "b3" else 1
-        assert sign * result.estimates[parameter].value == pytest.approx(value, rel=1e-6)
-        assert result.estimates[parameter].stderr == pytest.approx(certified.stderr[parameter], rel=1e-4)
+@pytest.mark.parametrize("name", NAMES)
+def test_models_of_ones_own_reach_the_certified_values(name: str, start: int) -> None:
+    certified, function = problem(name)
+    found = fit_curve(
+        certified.x,
+        certified.y,
+        Model(function),
+        start=certified.starts[start],
+        weights="equal",
+        robust=False,
+    )
+    assert digits({n: e.value for n, e in found.estimates.items()}, certified.value) >= 6
+    assert "not-converged" not in [warning.code for warning in found.warnings]
+    if name != "Lanczos1":  # its residuals are rounding, 1e-13 of y: no double can certify their size
+        assert digits({n: e.stderr for n, e in found.estimates.items()}, certified.stderr) >= 4
+
+
+@pytest.mark.parametrize("name", ["Misra1a", "BoxBOD", "Eckerle4", "MGH09", "Roszman1"])
+def test_lmfit_models_reach_them_as_well(name: str) -> None:
+    certified, function = problem(name)
+    model = lmfit.Model(function)
+    found = fit_curve(
+        certified.x, certified.y, model, start=certified.starts[0], weights="equal", robust=False
+    )
+    assert digits({n: e.value for n, e in found.estimates.items()}, certified.value) >= 6
+    assert digits({n: e.stderr for n, e in found.estimates.items()}, certified.stderr) >= 4
 
 
 @pytest.mark.parametrize(

@@ -130,10 +130,9 @@ def _solve_batch(request: Request, groups: list[Group], outcome: Outcome) -> Non
     layout = request.layout
     data = stack([group.data for group in groups])
     rows = np.concatenate([group.rows for group in groups])
-    solution = _best(request, data, *_gather_starts(groups, more=False))
-    if not (layout.shape.searchable or solution.converged.all()):
-        others = _best(request, data, *_gather_starts(groups, more=True))
-        solution = solution.replace(others.converged & (others.sse < solution.sse), others)
+    solution = _best(request, data, *_gather([group.starts() for group in groups], groups))
+    if layout.shape.numeric and layout.free_theta.any():
+        solution = _follow_rivals(request, data, groups, solution)
     given = np.concatenate([g.weight_one for g in groups]) ** 2 if request.absolute else None
     reported = report(layout, data, solution.theta, given)
     for name in ("value", "stderr", "spread", "covariance", "dof", "variance"):
@@ -156,12 +155,23 @@ def _best(request: Request, data: DataSets, origin: Ints, theta: Floats) -> Solu
     return solution.take(order[first])
 
 
-def _gather_starts(groups: list[Group], more: bool) -> tuple[Ints, Floats]:
+def _follow_rivals(request: Request, data: DataSets, groups: list[Group], found: Solution) -> Solution:
+    """Return the lower minima that other scales of a given start lead to, where there are such."""
+    ends = np.cumsum([len(group.rows) for group in groups])[:-1]
+    parts = zip(groups, np.split(found.sse, ends), np.split(found.converged, ends), strict=True)
+    origin, theta = _gather([group.rivals(sse, converged) for group, sse, converged in parts], groups)
+    if not len(origin):
+        return found
+    sets, which = np.unique(origin, return_inverse=True)
+    other = _best(request, data.take(sets), which, theta)
+    lower = other.converged & (other.sse < found.sse[sets])
+    every = np.arange(len(found.sse))
+    every[sets[lower]] = len(every) + np.flatnonzero(lower)
+    return found.join(other).take(every)
+
+
+def _gather(starts: list[tuple[Ints, Floats]], groups: list[Group]) -> tuple[Ints, Floats]:
     """Return data set (within the batch) and theta of every start of every group."""
-    sets, starts, first = [], [], 0
-    for group in groups:
-        which, theta = group.starts(more)
-        sets.append(which + first)
-        starts.append(theta)
-        first += len(group.rows)
-    return np.concatenate(sets), np.concatenate(starts)
+    first = np.cumsum([0] + [len(group.rows) for group in groups])
+    sets = [which + base for (which, _), base in zip(starts, first, strict=False)]
+    return np.concatenate(sets), np.concatenate([theta for _, theta in starts])

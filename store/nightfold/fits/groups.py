@@ -20,6 +20,9 @@ from nightfold.fits.request import Request
 BATCH_POINTS = 32_000
 """Data sets are solved in batches of about this many points: larger ones leave the cache."""
 
+RIVALS = 3
+"""Further starts of a model of one's own that are followed at most."""
+
 
 @dataclass(frozen=True)
 class Group:
@@ -61,16 +64,11 @@ class Group:
         """The grid that starts are taken from."""
         return self.grid(self.request.layout.background, start=True)
 
-    def starts(self, more: bool = False) -> tuple[Ints, Floats]:
-        """Return data set (within the group) and theta of each start to follow.
-
-        With `more`, those a model of one's own is tried from when its given start leads nowhere.
-        """
+    def starts(self) -> tuple[Ints, Floats]:
+        """Return data set (within the group) and theta of each start to follow."""
         layout, request = self.request.layout, self.request
         if not layout.shape.searchable:
-            given = layout.fixed_theta(request.fixed, self.data.frame.take(np.arange(1)))[0]
-            theta = layout.shape.more_starts(self.window) if more else layout.shape.grid(self.window)
-            theta = np.where(np.isfinite(given), given, theta)
+            theta = self._held(layout.shape.grid(self.window))
             return np.repeat(np.arange(len(self.rows)), len(theta)), np.tile(theta, (len(self.rows), 1))
         if not layout.shape.theta:
             return np.arange(len(self.rows)), np.zeros((len(self.rows), 0))
@@ -94,6 +92,30 @@ class Group:
         reference = np.einsum("bd,bd->b", z, z) - (z @ level) ** 2
         sets, points = choose_starts(layout, theta, sse, reference)
         return sets, theta[points]
+
+    def rivals(self, sse: Floats, converged: Bools) -> tuple[Ints, Floats]:
+        """Return data set and theta of further starts of a model of one's own that must be followed.
+
+        Those at other scales of the given start where the curve is nearer to the points than at the minimum
+        found, (B,) `sse`, which is then not the lowest; the best of all where none was found.
+        """
+        layout, sets, starts = self.request.layout, [], []
+        theta = self._held(layout.shape.more_starts(self.window))
+        points = np.arange(self.data.z.shape[1])
+        whole = Reduction(self.data.u[0], self.roots, points, self.roots)
+        for b, z in enumerate(self.data.z):
+            shift = float(self.data.shift[b % len(self.data.shift), 0])
+            there = general_sse(layout, whole, theta, z, self.data.coefficients[b], shift)
+            limit = sse[b] * (1 - 1e-6) if converged[b] else np.inf
+            order = np.argsort(there)[:RIVALS]
+            chosen = order[there[order] < limit]
+            sets.append(np.full(len(chosen), b))
+            starts.append(theta[chosen])
+        return np.concatenate(sets), np.concatenate(starts)
+
+    def _held(self, theta: Floats) -> Floats:
+        given = self.request.layout.fixed_theta(self.request.fixed, self.data.frame.take(np.arange(1)))[0]
+        return np.where(np.isfinite(given), given, theta)
 
     def feature_p(self, variance: Floats) -> Floats:
         """Return the p value of "nothing but background" of each data set, residual variances given."""

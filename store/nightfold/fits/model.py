@@ -80,6 +80,10 @@ def _parameter_names(function: Callable[..., Any], name: str) -> tuple[str, ...]
     return names
 
 
+OTHER_SCALES = (1e-3, 0.01, 0.1, 0.3, 3.0, 10.0, 100.0, 1e3)
+"""A start given may be off by so much, the sign apart: a unit mistaken, an exponent."""
+
+
 class NumericShape(LineShape):
     """A function known only by its values, in the form the engine fits: numeric derivatives, given start.
 
@@ -93,6 +97,7 @@ class NumericShape(LineShape):
     source: str = "given by the user"
     origin: Origin = "none"
     searchable: bool = False
+    numeric: bool = True
 
     def __init__(
         self,
@@ -106,11 +111,10 @@ class NumericShape(LineShape):
     ) -> None:
         self.name = name
         self.parameters = tuple(Parameter(n, "parameter of the function") for n in names)
-        nonlinear = [n for n in names if n not in linear]
-        self.theta = tuple(Theta(n, "free") for n in nonlinear)
-        self.linear = (*linear, UNITY)
+        self._nonlinear = [n for n in names if n not in linear]
+        self.theta = tuple(Theta(n, "free") for n in self._nonlinear)
+        self._linear, self.linear = linear, (*linear, UNITY)
         self._evaluate, self._start, self._bounds, self._x = evaluate, start, bounds, x
-        self._steps: dict[str, float] = {}
 
     def function(self, x: Floats, *args: float) -> Floats:  # type: ignore[override]
         """Return the values at x."""
@@ -119,23 +123,35 @@ class NumericShape(LineShape):
 
     def basis(self, u: Floats, theta: Floats) -> tuple[Floats, Floats]:
         """Return columns and their numeric derivatives, one row of theta after the other."""
-        both = [self._row(u[min(m, len(u) - 1)], row) for m, row in enumerate(theta)]
-        return np.stack([columns for columns, _ in both]), np.stack([slopes for _, slopes in both])
+        units = np.eye(len(self.linear))[:, : len(self.linear) - 1]
+        slopes = []
+        for m, row in enumerate(theta):
+            at = [self.gradient(u[min(m, len(u) - 1)], row, unit) for unit in units]
+            slopes.append(np.stack([*(one - at[-1] for one in at[:-1]), at[-1]], axis=1))
+        return self.columns(u, theta), np.stack(slopes)
 
-    def _row(self, x: Floats, theta: Floats) -> tuple[Floats, Floats]:
-        def stacked(at: Floats) -> Floats:
-            return self._columns(x, at).ravel()
+    def columns(self, u: Floats, theta: Floats) -> Floats:
+        """Return the columns alone, one row of theta after the other."""
+        with np.errstate(all="ignore"):
+            return np.stack([self._columns(u[min(m, len(u) - 1)], row) for m, row in enumerate(theta)])
+
+    def gradient(self, u: Floats, theta: Floats, c: Floats) -> Floats:
+        """Return the numeric derivatives of the function with its linear parameters at c, (P, n)."""
+        held = dict(zip(self._linear, c.tolist(), strict=False))
+
+        def value(at: Floats) -> Floats:
+            return self._evaluate(u, {**held, **dict(zip(self._nonlinear, at, strict=True))})
 
         with np.errstate(all="ignore"):
-            columns = self._columns(x, theta)
-            slopes = np.zeros((len(theta), *columns.shape))
-            for j, coordinate in enumerate(self.theta):
-                low, high = self._bounds.get(coordinate.name, (-np.inf, np.inf))
-                guess = self._steps.get(coordinate.name, 1e-4 * (abs(theta[j]) or 1.0))
-                step = suitable_step(stacked, theta, j, guess, low, high)
-                self._steps[coordinate.name] = step
-                slopes[j] = derivative(stacked, theta, j, step).reshape(columns.shape)
-        return columns, slopes
+            return self._slopes(value, theta).reshape(len(theta), len(u))
+
+    def _slopes(self, function: Callable[[Floats], Floats], theta: Floats) -> Floats:
+        slopes = []
+        for j, name in enumerate(self._nonlinear):
+            low, high = self._bounds.get(name, (-np.inf, np.inf))
+            step = suitable_step(function, theta, j, 1e-4 * (abs(theta[j]) or 1.0), low, high)
+            slopes.append(derivative(function, theta, j, step))
+        return np.array(slopes)
 
     def _columns(self, x: Floats, theta: Floats) -> Floats:
         values = {c.name: t for c, t in zip(self.theta, theta, strict=True)}
@@ -151,16 +167,14 @@ class NumericShape(LineShape):
         return np.array([self._start[c.name] for c in self.theta]).reshape(1, len(self.theta))
 
     def more_starts(self, window: Window) -> Floats:
-        """Return others around the start given, for when that leads nowhere."""
+        """Return other scales of the start given: of one coordinate at a time, and of all together."""
         first = self.grid(window)[0]
-        starts = []
-        for factor in (0.3, 3.0):
-            for j in range(len(first)):
-                if first[j] != 0:
-                    moved = first.copy()
-                    moved[j] *= factor
-                    starts.append(moved)
-        return np.array(starts).reshape(len(starts), len(first))
+        size = len(first)
+        if not size:
+            return np.zeros((0, 0))
+        moved = np.vstack([np.eye(size, dtype=bool), np.ones((1, size), dtype=bool)])
+        scaled = np.where(moved, first * np.array(OTHER_SCALES)[:, None, None], first).reshape(-1, size)
+        return np.asarray(np.clip(np.unique(scaled, axis=0), *self.bounds(window)))
 
     def bounds(self, window: Window) -> tuple[Floats, Floats]:
         """Return the bounds given."""

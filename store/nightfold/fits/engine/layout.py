@@ -103,6 +103,14 @@ class Layout:
             slopes[:, 0] -= c[:, -1:]
         return slopes
 
+    def gradients(self, u: Floats, theta: Floats, c: Floats) -> Floats:
+        """Return the derivative of a numeric shape for each nonlinear coordinate, (M, P, n).
+
+        Like `slopes`, with fewer calls and steps that suit the coefficients.
+        """
+        rows = [self.shape.gradient(u[min(m, len(u) - 1)], theta[m], c[m]) for m in range(len(theta))]
+        return np.stack(rows)
+
     def _with_background(self, columns: Floats, u: Floats, theta: Floats, shift: Floats) -> Floats:
         if self.background == "none":
             return columns

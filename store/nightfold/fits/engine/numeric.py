@@ -76,13 +76,13 @@ def _is_affine(function: Function, at: Floats, j: int, chosen: list[int]) -> boo
         origin, slope = values[0.0], values[1.0] - values[0.0]
         if not np.isfinite(list(values.values())).all() or not np.any(slope != 0.0):
             return False
+        large, level_size = float(np.max(np.abs(slope))), float(np.max(np.abs(origin)))
         for c, found in values.items():
-            rounding = (1e-12 + 4e-15 * abs(c)) * np.abs(origin)
-            if (np.abs(found - origin - c * slope) > 1e-9 * np.abs(c * slope) + rounding).any():
+            tolerance = 1e-9 * abs(c) * large + (1e-12 + 4e-15 * abs(c)) * level_size
+            if np.max(np.abs(found - origin - c * slope)) > tolerance:
                 return False
         slopes.append(slope)
-        tolerance = 1e-9 * np.abs(slopes[0]) + 1e-12 * np.abs(origin)
-        if (np.abs(slope - slopes[0]) > tolerance).any():
+        if np.max(np.abs(slope - slopes[0])) > 1e-9 * large + 1e-12 * level_size:
             return False
         if not chosen:
             return True

@@ -71,15 +71,12 @@ class Solution:
     converged: Bools
     bound: Bools
 
-    def replace(self, rows: Bools, other: Solution) -> Solution:
-        """Return this solution with some rows of another."""
-        wide = rows[:, None]
-        return Solution(
-            np.where(wide, other.theta, self.theta),
-            np.where(rows, other.sse, self.sse),
-            np.where(rows, other.converged, self.converged),
-            np.where(wide, other.bound, self.bound),
+    def join(self, other: Solution) -> Solution:
+        """Return the rows of both."""
+        pairs = (
+            (getattr(self, name), getattr(other, name)) for name in ("theta", "sse", "converged", "bound")
         )
+        return Solution(*(np.concatenate(pair) for pair in pairs))
 
     def take(self, rows: Ints) -> Solution:
         """Return some rows."""
@@ -88,7 +85,11 @@ class Solution:
 
 def expand(layout: Layout, data: DataSets, theta: Floats, refine: bool = False) -> Expansion:
     """Return the model about theta, one row a data set; with `refine`, c to the last digits."""
-    columns, derivatives = layout.basis(data.u, theta, data.shift)
+    numeric = layout.shape.numeric
+    if numeric:
+        columns = layout.columns(data.u, theta, data.shift)
+    else:
+        columns, derivatives = layout.basis(data.u, theta, data.shift)
     roots = data.root_weights
     if roots is not None:
         columns = columns * roots[:, None]
@@ -106,7 +107,7 @@ def expand(layout: Layout, data: DataSets, theta: Floats, refine: bool = False) 
     if not layout.all_columns_free:
         c = data.coefficients.copy()
         c[:, layout.free_columns] = part
-    slopes = layout.slopes(derivatives, c)
+    slopes = layout.gradients(data.u, theta, c) if numeric else layout.slopes(derivatives, c)
     if not layout.all_theta_free:
         slopes = slopes[:, layout.free_theta]
     if roots is not None:
@@ -136,6 +137,10 @@ def solve(layout: Layout, data: DataSets, theta: Floats) -> Solution:
     theta : (M, P) float array
         Starts; fixed coordinates hold their fixed values.
     """
+    if layout.shape.numeric:
+        from nightfold.fits.engine.single import solve_each
+
+        return Solution(*solve_each(layout, data, theta))
     here = linearise(layout, data, theta)
     bound = np.zeros(theta.shape, dtype=bool)
     if not layout.free_theta.any():
