@@ -229,9 +229,10 @@ def _truths(
         from tests.calibration.hopeless import spoiled
 
         values = spoiled(rng, spec, kind, u, values)
-        values = {name: column[:rows] for name, column in values.items()}
-        return values, _sigma(rng, spec, total(spec, background, u, values), values, noise)
     sigma = _sigma(rng, spec, total(spec, background, u, values), values, noise)
+    if kind in HOPELESS:
+        chosen = _untold(spec, background, u, values, sigma, rows) if kind == "short" else np.arange(rows)
+        return {name: column[chosen] for name, column in values.items()}, sigma[chosen]
     heavy = burden(spec, background, u, values, sigma)
     good = np.flatnonzero(heavy <= 1.0)[:rows]
     if len(good) < rows:
@@ -240,6 +241,17 @@ def _truths(
         sigma[spare] /= 1.25 * heavy[spare, None]
         good = np.sort(np.concatenate([good, spare]))
     return {name: column[good] for name, column in values.items()}, sigma[good]
+
+
+def _untold(
+    spec: Spec, background: str, u: Array, values: Values, sigma: Array, rows: int
+) -> NDArray[np.intp]:
+    """Return rows whose rates or times nobody could tell to a factor of two; oscillations are all short."""
+    if spec.family == "wave":
+        return np.arange(rows)
+    least = bounds(spec, background, u, values, sigma)
+    spread = np.max([least[name] for name in spec.limits], axis=0)
+    return np.concatenate([np.flatnonzero(spread >= np.log(2)), np.argsort(-spread)])[:rows]
 
 
 def _without_background(spec: Spec, values: Values) -> Values:
@@ -300,13 +312,14 @@ def _scatter(
 
 
 def _wandering(rng: np.random.Generator, size: int, n: int) -> Array:
-    """Return walks that forget over a fifth to a half of the scan, variance 1, (size, n)."""
+    """Return walks that forget over a fifth to a half of the scan, mean 0 and variance 1, (size, n)."""
     keep = np.exp(-1.0 / (n * rng.uniform(0.2, 0.5, size)))
     walk = np.empty((size, n))
     walk[:, 0] = rng.normal(size=size)
     for turn in range(1, n):
         walk[:, turn] = keep * walk[:, turn - 1] + np.sqrt(1 - keep**2) * rng.normal(size=size)
-    return walk
+    walk -= walk.mean(axis=1, keepdims=True)
+    return np.asarray(walk / walk.std(axis=1, keepdims=True))
 
 
 def _bad_shots(
@@ -371,7 +384,7 @@ def _dressed(
         truth,
         least,
         bare.links,
-        None if stated is None else np.asarray(ys * stated[:, order], dtype=float),
+        None if stated is None else np.asarray(ys * stated[:, order], dtype=np.float64),
         BEGAN + CADENCE * np.arange(bare.n),
         bad[:, order],
         {"absolute_stderr": True} if bare.kind in ("stderr-right", "stderr-scale") else {},
