@@ -22,7 +22,15 @@ THETA = {
     "exponential": [0.9],
     "two-body": [0.9],
     "three-body": [0.9],
+    "one-two-body": [0.9, 0.6],
+    "one-three-body": [0.9, 0.6],
     "damped-oscillation": [2.3, 1.4, 0.7],
+    "cosine": [2.3, 0.7],
+    "ramsey": [2.3, 1.4, 0.7],
+    "rabi-flop": [2.3, 1.4],
+    "expansion": [0.6],
+    "landau-zener": [-0.9],
+    "saturation": [-0.9],
 }
 SHAPES: list[LineShape] = [*list_models(), PhasedOscillation(), ExponentialFromZero()]
 

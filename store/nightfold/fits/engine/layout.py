@@ -150,22 +150,19 @@ class Layout:
 
     def fixed_theta(self, values: dict[str, float], frame: Frame) -> Floats:
         """Return (B, P): theta of the fixed or given parameters, nan elsewhere."""
-        theta = np.full((len(frame.xs), len(self.shape.theta)), np.nan)
-        for j, coordinate in enumerate(self.shape.theta):
-            if coordinate.name in values:
-                theta[:, j] = coordinate.from_value(values[coordinate.name], frame)
-        return theta
+        return self.shape.place(values, frame)
 
     def fixed_coefficients(self, values: dict[str, float], frame: Frame) -> Floats:
         """Return (B, L): coefficients of the fixed columns, zero elsewhere."""
         c = np.zeros((len(frame.xs), len(self.column_names)))
+        units = {parameter.name: parameter.unit for parameter in self.parameters}
         for j, name in enumerate(self.column_names):
             if name == UNITY:
                 c[:, j] = 1.0 / frame.ys
             if name is None or name not in values:
                 continue
             value = values[name]
-            if name == "slope" and j >= len(self.shape.linear):
+            if units[name] == "y/x":
                 c[:, j] = value * frame.xs / frame.ys
             elif name == "offset" and j >= len(self.shape.linear):
                 c[:, j] = (value - frame.y0) / frame.ys

@@ -20,7 +20,15 @@ HOMES = MappingProxyType(
         "exponential": "exponential.Exponential",
         "two-body": "two_body.TwoBody",
         "three-body": "three_body.ThreeBody",
+        "one-two-body": "one_two_body.OneTwoBody",
+        "one-three-body": "one_three_body.OneThreeBody",
         "damped-oscillation": "damped_oscillation.DampedOscillation",
+        "cosine": "cosine.Cosine",
+        "ramsey": "ramsey.Ramsey",
+        "rabi-flop": "rabi_flop.RabiFlop",
+        "expansion": "expansion.Expansion",
+        "landau-zener": "landau_zener.LandauZener",
+        "saturation": "saturation.Saturation",
     }
 )
 MODEL_NAMES: tuple[str, ...] = tuple(HOMES)

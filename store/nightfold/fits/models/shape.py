@@ -118,7 +118,8 @@ class LineShape(ABC):
     """A line shape: formula, source, columns, derivatives, start grid, units.
 
     ``theta`` are its nonlinear coordinates, ``linear`` the reported names of its linear columns (None
-    where a column is no reported parameter by itself).
+    where a column is no reported parameter by itself). A coordinate that belongs to several reported parameters
+    bears the name of one of them; `place` and `report` then translate.
     """
 
     name: str
@@ -186,6 +187,19 @@ class LineShape(ABC):
         """Return the form of this shape in which every fixed parameter is a coordinate of its own."""
         del fixed
         return self
+
+    @property
+    def positive(self) -> frozenset[str]:
+        """Names of the parameters that must be greater than zero."""
+        return frozenset(theta.name for theta in self.theta if theta.positive)
+
+    def place(self, values: dict[str, float], frame: Frame) -> Floats:
+        """Return theta, (B, P), where reported values tell it, nan elsewhere; one row a data set of the frame."""
+        theta = np.full((len(frame.xs), len(self.theta)), np.nan)
+        for j, coordinate in enumerate(self.theta):
+            if coordinate.name in values:
+                theta[:, j] = coordinate.from_value(values[coordinate.name], frame)
+        return theta
 
     def report(self, theta: Floats, c: Floats, frame: Frame) -> tuple[Floats, Floats]:
         """Return the coordinates q of the reported parameters and their derivatives.
