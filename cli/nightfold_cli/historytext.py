@@ -54,7 +54,7 @@ def _draw(screen: Screen, history: ShotHistory, times: LocalTimes) -> None:
 
 def _tabulate(screen: Screen, history: ShotHistory, times: LocalTimes) -> None:
     """Write both tables for programs."""
-    heads = ("uid", "at", "kind", "what", "old", "new", "unit", "by", "why")
+    heads = ("uid", "at", "kind", "what", "old", "new", "unit", "by", "why", "number")
     rows: list[Row] = [
         [
             history.uid,
@@ -66,6 +66,7 @@ def _tabulate(screen: Screen, history: ShotHistory, times: LocalTimes) -> None:
             event.unit,
             event.by or "",
             event.why or "",
+            str(event.number or ""),
         ]
         for event in history.events
     ]
@@ -117,7 +118,7 @@ def _said(event: ShotEvent) -> str:
         return f"{event.what} {change}{made}"
     if event.kind == "corrected":
         change = " -> ".join(setting(value, event.unit or None) for value in (event.old, event.new))
-        return f"{event.what} {change}"
+        return f"{event.what} {change} (correction {event.number})"
     if event.kind == "fit":
         return _use(event.new)
     if event.kind == "record":
@@ -185,6 +186,7 @@ def history_entry(history: ShotHistory) -> dict[str, Any]:
                 "unit": event.unit or None,
                 "by": event.by,
                 "why": event.why,
+                "number": event.number,
             }
             for event in history.events
         ],

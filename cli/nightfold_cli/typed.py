@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import json
 import re
+from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
 from nightfold_cli.failures import UsageError
@@ -12,6 +14,60 @@ _NUMBER = re.compile(
     r"([+-]?(?:(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?|nan|inf))(?:\s+(\S.*)|([^\s\d.,].*))?", re.IGNORECASE
 )
 _WHOLE = re.compile(r"[+-]?\d+")
+
+
+@dataclass(frozen=True, slots=True)
+class Typed:
+    """A setting as it was typed: ``=``, or by how much it moves (``*=``, ``+=``)."""
+
+    name: str
+    sign: str
+    text: str
+
+    def value(self, kind: str | None) -> Any:
+        """Return what `Store.correct` takes; `kind` is that of the parameter in the store.
+
+        Raises
+        ------
+        UsageError
+            If a number or a truth is wanted and something else was typed.
+        """
+        if self.sign == "=":
+            return typed_value(self.name, self.text, kind)
+        stated = typed_value(self.name, self.text, "number")
+        if self.sign == "+=":
+            return (
+                {"plus": stated["value"], "unit": stated["unit"]}
+                if isinstance(stated, dict)
+                else {"plus": stated}
+            )
+        if isinstance(stated, dict):
+            raise UsageError(
+                f"--set {self.name}: found {self.text!r}, wanted a factor without unit, as in '{self.name}*=1.2'"
+            )
+        return {"times": stated}
+
+
+def typed_setting(given: Sequence[str]) -> list[Typed]:
+    """Return what was typed, each name once.
+
+    Raises
+    ------
+    UsageError
+    """
+    stated: dict[str, Typed] = {}
+    for text in given:
+        name, equals, value = text.partition("=")
+        sign = "="
+        if name.endswith(("*", "+")):
+            name, sign = name[:-1], f"{name[-1]}="
+        name = name.strip()
+        if not equals or not name or not value.strip():
+            raise UsageError(f"--set: found {text!r}, wanted NAME=VALUE, as in 'coil_current=61.3 A'")
+        if name in stated:
+            raise UsageError(f"--set {name}: found it twice, wanted one value")
+        stated[name] = Typed(name, sign, value)
+    return list(stated.values())
 
 
 def typed_value(name: str, text: str, kind: str | None) -> Any:

@@ -9,6 +9,7 @@
     ├── FormulaError       (ValueError)         an expression of the card cannot be used
     ├── MergeError         (ValueError)         two machines cannot be merged as they are
     ├── FitError           (ValueError)         a fit was asked for that cannot be done
+    ├── RequestError       (ValueError)         a request says too little, or what does not go together
     ├── ChoiceNeeded       (ValueError)         the request fits several things; name one
     ├── NotFound           (LookupError)        no such scan, shot, machine, parameter, model
     │   └── NoReference                         no reference shots near enough, or fit to be divided by
@@ -90,6 +91,10 @@ class FitError(NightfoldError, ValueError):
 
 class ChoiceNeeded(NightfoldError, ValueError):
     """The request fits several things; the message lists them."""
+
+
+class RequestError(NightfoldError, ValueError):
+    """A request that says too little, or what does not go together."""
 
 
 class NotFound(NightfoldError, LookupError):

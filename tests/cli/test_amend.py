@@ -87,7 +87,16 @@ def test_a_history_for_programs(where: Path, run: Run) -> None:
     assert both.out.count("\nheron-20260928-0008\t") > 3
     events = both.out.split("\n\n")[0].split("\n")
     assert events[0].split("\t")[:3] == ["uid", "at", "kind"]
-    assert events[3].split("\t")[2:] == ["corrected", "coil_current", "64.2", "60.9", "A", "ann", "read off"]
+    assert events[3].split("\t")[2:] == [
+        "corrected",
+        "coil_current",
+        "64.2",
+        "60.9",
+        "A",
+        "ann",
+        "read off",
+        "1",
+    ]
 
 
 def test_a_correction_says_what_is_stale_and_fit_again_mends_it(
@@ -100,10 +109,15 @@ def test_a_correction_says_what_is_stale_and_fit_again_mends_it(
         "id": 1, "scan": "loss-coarse#1", "model": "lorentzian", "observable": "atom_number", "along": "coil_current",
         "slice": {},
     }  # fmt: skip
-    assert answer == {"schema": 1, "corrected": 1, "shots": [UID], "stale": [stale]}
+    number, change = answer.pop("number"), {"uid": UID, "parameter": "coil_current", "unit": "A"}
+    assert answer == {
+        "schema": 1, "corrected": 1, "dry_run": False, "shots": [UID], "stale": [stale],
+        "changes": [change | {"old": 64.2, "new": 60.9}],
+    }  # fmt: skip
     said = run(
         "--store", where, "amend", UID, "--set", "coil_current=60.8", "--because", "no, that", "--by", "ann"
     )
+    assert f"correction {number + 1}; 'amend --undo {number + 1}' takes it back" in said.err
     assert said.out == "1 shot corrected\nloss-coarse#1\tlorentzian, atom_number along coil_current\n"
     assert "go on with: nightfold fit --again loss-coarse#1" in said.err
     screen = on_screen("--store", where, "fit", "--again", "loss-coarse#1").split("\n")
@@ -121,6 +135,35 @@ def test_a_correction_says_what_is_stale_and_fit_again_mends_it(
     assert "no kept fit is stale: nothing to do again" in on_screen("--store", where, "fit", "--again")
 
 
+def test_a_scan_is_corrected_by_a_factor_tried_first_and_undone(
+    where: Path, run: Run, on_screen: Show
+) -> None:
+    def amend(*more: str) -> Any:
+        return run("--store", where, "amend", *more)
+
+    scan = ("--scan", "loss-coarse#1", "--because", "range")
+    slip = amend(*scan, "--set", "coil_current=61")
+    assert slip.code == 5
+    assert "coil_current is an axis of it" in slip.err
+    done = decoded(amend(*scan, "--set", "coil_current *= 1.2", "--json"))
+    first = next(change for change in done["changes"] if change["uid"] == UID)
+    assert (first["old"], first["new"]) == (64.2, 77.04)
+    undone = decoded(amend("--undo", str(done["number"]), "--json"))
+    assert undone["corrected"] == done["corrected"]
+    assert undone["stale"] == []
+    again = amend("--undo", str(done["number"]))
+    assert (again.code, again.out) == (5, "")
+    assert "nothing to undo" in again.err
+    by_unit = amend(*scan, "--set", "coil_current*=2 A")
+    assert (by_unit.code, "wanted a factor without unit" in by_unit.err) == (2, True)
+    shifted = decoded(amend(*scan, "--set", "coil_current+=100 mA", "--dry-run", "--json"))
+    assert (shifted["number"], shifted["dry_run"], shifted["changes"][0]["unit"]) == (None, True, "A")
+    tried = on_screen("--store", where, "amend", *scan, "--set", "coil_current*=1.2", "--dry-run")
+    assert "would be corrected" in tried
+    assert all(len(line) <= 80 for line in tried.split("\n")[1:])
+    assert f"(correction {done['number']})" in " ".join(on_screen("--store", where, "amend", UID).split())
+
+
 def test_fit_again_in_json_has_the_form_of_a_fit(where: Path, run: Run) -> None:
     correct(run, where)
     answer = decoded(run("--store", where, "fit", "loss-coarse", "--again", "--json"))
@@ -134,7 +177,16 @@ def test_fit_again_in_json_has_the_form_of_a_fit(where: Path, run: Run) -> None:
     assert fit["before"]["id"] == 1
     assert fit["before"]["stale"]
     run(
-        "--store", where, "amend", "--scan", "loss-coarse#1", "--set", "coil_current=61", "--because", "stuck"
+        "--store",
+        where,
+        "amend",
+        "--scan",
+        "loss-coarse#1",
+        "--set",
+        "coil_current=61",
+        "--because",
+        "stuck",
+        "--even-if-swept",
     )
     answer = decoded(run("--store", where, "fit", "--again", "--json"))
     assert answer["fits"] == []

@@ -128,7 +128,9 @@ def test_a_scan_that_has_other_axes_now_is_left(store: Store) -> None:
     for row in made:
         del row["swept"]
     store.take(made)
-    store.correct([], {"hold_time": {"value": 100, "unit": "ms"}}, "it never changed", scan="map")
+    store.correct(
+        [], {"hold_time": {"value": 100, "unit": "ms"}}, "it never changed", scan="map", even_if_swept=True
+    )
     assert [axis.parameter for axis in store.scan("map").axes] == ["coil_current"]
     store.fit("map", "lorentzian", observable="atom_number")
     for row, hold in enumerate(holds[1:], 1):

@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 from sqlalchemy import func, select
 
 from nightfold import tables
-from nightfold.errors import NotFound, RecordError
+from nightfold.errors import NotFound, RecordError, RequestError
 from nightfold.opening import open_store
 from nightfold.settings import digest_of_sum, hash_setting, token_of
 from nightfold.store import Store
@@ -81,7 +81,6 @@ def check_digests(store: Store) -> None:
         ("repump", "false", False),
         ("seed", HUGE + 1, HUGE + 1),
         ("dead", 4.0, 4.0),
-        ("hold", math.inf, math.inf),
         ("ramp", [3, 4], "[3,4]"),
     ],
 )
@@ -95,8 +94,7 @@ def test_a_setting_of_any_kind_there_and_back(anywhere: str, name: str, new: Any
         assert repr(after[:4] + after[5:]) == repr(before[:4] + before[5:])
         assert store.shot("shot004").parameters["coil_current"].swept
         check_digests(store)
-        old = before[4][name]
-        assert store.correct(["shot004"], {name: [1, 2.5] if name == "ramp" else old}, "it was right") == 1
+        assert store.undo_correction(1) == 1
         assert repr(values(store, "shot004")) == repr(before[4])
         check_digests(store)
         with store._session.reading() as connection:
@@ -104,18 +102,146 @@ def test_a_setting_of_any_kind_there_and_back(anywhere: str, name: str, new: Any
             digest = connection.execute(
                 select(tables.shot.c.values_digest).where(tables.shot.c.uid == "shot004")
             ).scalar_one()
-    assert [(row.reason, row.by) for row in rows] == [("read off the supply", "ann"), ("it was right", None)]
+    assert [(row.reason, row.by) for row in rows] == [
+        ("read off the supply", "ann"),
+        ("undoes correction 1", None),
+    ]
     assert (rows[0].old_num, rows[0].old_exact) == (rows[1].new_num, rows[1].new_exact)
     assert bytes(rows[0].old_digest) == bytes(digest)
 
 
-def test_nan_is_the_same_as_nan(anywhere: str) -> None:
+@pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf, {"value": math.nan, "unit": "s"}])
+def test_what_was_really_set_is_finite(store: Store, value: Any) -> None:
+    store.take([shot(0)])
+    with pytest.raises(RecordError, match=r"parameters.hold: found -?(nan|inf), wanted a finite number"):
+        store.correct(["shot000"], {"hold": value}, "why")
+
+
+def swept(store: Store) -> None:
+    store.take([shot(n, scan="loss", swept=["coil_current"]) for n in range(10)])
+
+
+def test_an_axis_is_not_made_one_value_by_a_slip(anywhere: str) -> None:
     with open_store(anywhere) as store:
-        store.take([shot(0)])
-        with pytest.raises(RecordError, match="it has this one already"):
-            store.correct(["shot000"], {"dead": math.nan}, "why")
-        assert store.correct(["shot000"], {"dead": 1}, "why") == 1
-        assert store.correct(["shot000"], {"dead": math.nan}, "why") == 1
+        swept(store)
+        before = store.shots(["coil_current"]).coil_current.tolist()
+        with pytest.raises(
+            RequestError, match=r"scan loss#1: coil_current is an axis of it, with 10 values; one va"
+        ):
+            store.correct([], {"coil_current": 60.5}, "slip", scan="loss")
+        assert store.shots(["coil_current"]).coil_current.tolist() == before
+        done = store.correct([], {"coil_current": 60.5}, "slip", scan="loss", even_if_swept=True)
+        assert (done, len(done.changes)) == (9, 9)  # one had it so
+        assert done.number is not None
+        back = store.undo_correction(done.number, by="bob")
+        assert (back, back.changes[0].new, back.changes[0].uid) == (9, 60.0, "shot000")
+        assert store.shots(["coil_current"]).coil_current.tolist() == before
+        assert store.scan("loss").axes[0].points == 10
+        events = [event for event in store.history("shot000").events if event.kind == "corrected"]
+        assert [(event.number, event.by) for event in events] == [(done.number, None), (back.number, "bob")]
+        check_digests(store)
+        assert back.number is not None
+        assert store.undo_correction(back.number) == 9  # as it was before it was undone
+        assert set(store.shots(["coil_current"]).coil_current) == {60.5}
+
+
+def test_what_cannot_be_undone(anywhere: str) -> None:
+    with open_store(anywhere) as store:
+        swept(store)
+        with pytest.raises(
+            NotFound, match="correction 4: there is none of that number; nothing was corrected"
+        ):
+            store.undo_correction(4)
+        first = store.correct(["shot001", "shot002"], {"hold": 0.2, "axis": "y"}, "why").number
+        second = store.correct(["shot002"], {"hold": 0.3}, "why").number
+        assert first is not None
+        assert second is not None
+        with pytest.raises(NotFound, match=f"there is none of that number; the newest are {second}, {first}"):
+            store.undo_correction(first + 1)
+        again = f"correction {first}: hold of shot shot002 was corrected again since, by correction {second}; undo tha"
+        with pytest.raises(RequestError, match=again):
+            store.undo_correction(first)
+        assert set(store.shots(["hold"]).hold) == {0.12, 0.2, 0.3}
+        assert store.undo_correction(second) == 1
+        assert store.undo_correction(first) == 2
+        assert (set(store.shots(["hold"]).hold), set(store.shots(["axis"]).axis)) == ({0.12}, {"x"})
+        with pytest.raises(RequestError, match=f"correction {first}: each shot has again what it had before"):
+            store.undo_correction(first)
+
+
+@pytest.mark.parametrize(
+    ("shift", "expected"),
+    [
+        ({"times": 1.2}, [round(60 * 1.2 + 0.12 * n, 10) for n in range(10)]),
+        ({"plus": 0.1}, [round(60.1 + n / 10, 10) for n in range(10)]),
+        ({"plus": -100, "unit": "mA"}, [round(59.9 + n / 10, 10) for n in range(10)]),
+    ],
+)
+def test_each_shot_by_a_factor_or_an_offset(
+    anywhere: str, shift: dict[str, Any], expected: list[float]
+) -> None:
+    with open_store(anywhere) as store:
+        swept(store)
+        tried = store.correct([], {"coil_current": shift}, "other range", scan="loss", dry_run=True)
+        assert (tried, tried.number) == (10, None)
+        assert [change.new for change in tried.changes] == expected
+        assert store.shots(["coil_current"]).coil_current.tolist() == [60 + n / 10 for n in range(10)]
+        done = store.correct([], {"coil_current": shift}, "other range", scan="loss")
+        assert done.changes == tried.changes
+        assert store.shots(["coil_current"]).coil_current.tolist() == expected
+        check_digests(store)
+
+
+@pytest.mark.parametrize(
+    ("name", "shift", "message"),
+    [
+        (
+            "axis",
+            {"times": 2},
+            "parameters.axis: found [*]= 2 for text, wanted another value: only numbers have",
+        ),
+        ("hold", {"times": 0}, "parameters.hold: found 0, wanted a factor, finite and not 0"),
+        ("hold", {"plus": math.nan}, "parameters.hold: found nan, wanted a finite number"),
+        ("hold", {"plus": 1, "unit": "A"}, "parameters.hold.unit: found 'A', wanted a unit that conv"),
+        ("hold", {"times": 1, "unit": "s"}, "wanted either times, or plus with or without unit"),
+        ("hold", {"times": 1}, "parameters.hold: found [*]= 1, wanted another value"),
+        ("hold", {"times": 1e308}, None),
+        (
+            "coil_current",
+            {"times": 1e308},
+            "parameters.coil_current: found 60.* wanted a result that a number can h",
+        ),
+    ],
+)
+def test_shifts_that_cannot_be(store: Store, name: str, shift: dict[str, Any], message: str | None) -> None:
+    swept(store)
+    if message is None:
+        assert store.correct([], {name: shift}, "why", scan="loss", dry_run=True) == 10
+        return
+    with pytest.raises(RecordError, match=message):
+        store.correct([], {name: shift}, "why", scan="loss")
+
+
+def test_a_beginning_that_is_too_short_is_told_so(store: Store) -> None:
+    store.take([shot(0)])
+    with pytest.raises(
+        NotFound, match="shot 'sho': no such uid in this store; as the beginning of one it is too short"
+    ):
+        store.correct(["sho"], {"hold": 1}, "why")
+
+
+def test_errors_of_requests_are_ours(store: Store) -> None:
+    store.take([shot(0)])
+    with pytest.raises(RequestError, match="found no shot"):
+        store.correct([], {"hold": 1}, "why")
+    with pytest.raises(RequestError, match="found no setting"):
+        store.correct(["shot000"], {}, "why")
+    with pytest.raises(RequestError, match="found no reason"):
+        store.correct(["shot000"], {"hold": 1}, "")
+    with pytest.raises(RequestError, match="note: found no subject"):
+        store.add_note("x")
+    with pytest.raises(RequestError, match="wanted one of"):
+        store.add_note("x", shot="shot000", night="2026-10-05")
 
 
 def test_the_sets_of_many_shots_are_shared(anywhere: str) -> None:
@@ -194,7 +320,11 @@ def test_shots_stored_later_are_as_they_were_handed_over(anywhere: str) -> None:
         ({"hold": {"value": None}}, RecordError, r"parameters.hold: found null, wanted a value"),
         ({"hold": 0.12}, RecordError, r"shot shot001: parameters.hold: found 0.12 s, wanted another value"),
         ({"holt": 1}, NotFound, r"parameter 'holt': heron has none of that name; it has hold"),
-        ({"n": 1}, NotFound, r"parameter 'n': heron has none of that name"),
+        (
+            {"n": 1},
+            NotFound,
+            r"parameter 'n': it is an observable of heron; a reading is changed by another record",
+        ),
         ({"hold": "long"}, RecordError, r"hold: found 'long' \(text\), wanted a number"),
         ({"hold": True}, RecordError, r"hold: found True \(truth\), wanted a number"),
         ({"hold": {"value": 1, "unit": "A"}}, RecordError, r"hold.unit: found 'A', wanted a unit that conv"),
@@ -266,7 +396,7 @@ def test_the_edits_follow(anywhere: str) -> None:
 names = st.sampled_from(["coil_current", "hold", "axis", "repump", "seed", "dead"])
 pools: dict[str, list[Any]] = {
     "coil_current": [60.0, 61.5, 62.25], "hold": [0.12, 0.5, 1e-9], "axis": ["x", "y", "é"], "repump": [True, False],
-    "seed": [HUGE, HUGE + 1, 3], "dead": [math.nan, -math.inf, 0.0],
+    "seed": [HUGE, HUGE + 1, 3], "dead": [1.5, -2.0, 0.0],
 }  # fmt: skip
 
 

@@ -38,7 +38,7 @@ def test_a_labelled_scan_has_its_points_and_axes_settled_again(anywhere: str) ->
             for n in range(20)
         )
         assert set(store.scan("loss").followers) | set(axes(store, "loss")) == {"coil", "synth", "hold"}
-        store.correct([], {"hold": 0.1}, "a column too far", scan="loss")
+        store.correct([], {"hold": 0.1}, "a column too far", scan="loss", even_if_swept=True)
         assert set(store.scan("loss").followers) | set(axes(store, "loss")) == {"coil", "synth"}
         store.correct(["shot007"], {"coil": 62.5}, "misread")
         assert points(store, "loss") == [60, 61, 62, 62.5, 63, 64]
@@ -49,7 +49,7 @@ def test_what_no_longer_follows_the_one_declared_axis_is_forgotten(store: Store)
         shot(n, 60 + n % 5, scan="loss", swept=["coil"], parameters={"hold": 0.1 + n % 5}) for n in range(20)
     )
     assert store.scan("loss").followers == {"hold": "coil"}
-    store.correct([], {"hold": 0.1}, "a column too far", scan="loss")
+    store.correct([], {"hold": 0.1}, "a column too far", scan="loss", even_if_swept=True)
     assert store.scan("loss").followers == {}
 
 
@@ -116,7 +116,7 @@ def test_scans_arranged_by_hand_follow_and_stay(anywhere: str) -> None:
         store.undo_arrangement(number, by="bob")
         assert [scan.shots for scan in store.scans()] == [18, 18]
         undone = store.history("shot2003").events[-1]
-        assert (undone.kind, undone.old, undone.by) == ("join undone", str(joined.id), "bob")
+        assert (undone.kind, undone.old, undone.by) == ("join undone", None, "bob")
 
 
 def test_a_found_scan_that_dissolved_comes_back(anywhere: str) -> None:

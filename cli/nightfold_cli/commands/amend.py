@@ -3,21 +3,18 @@
 from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
-from collections.abc import Sequence
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from nightfold_cli.arguments import add_by, by_whom
+from nightfold_cli.correctiontext import show_correction
 from nightfold_cli.failures import UsageError
 from nightfold_cli.historytext import history_entry, show_history
-from nightfold_cli.keptfits import named_fits, relative_lines, slice_lines
 from nightfold_cli.naming import named_scan
 from nightfold_cli.opening import local_times, opened
 from nightfold_cli.render import Screen
-from nightfold_cli.scantext import counted
-from nightfold_cli.typed import typed_value
+from nightfold_cli.typed import Typed, typed_setting
 
 if TYPE_CHECKING:
-    from nightfold.fits.keptfit import KeptFit
     from nightfold.store import Store
 
 HELP = "tell the history of a shot, or correct its settings"
@@ -25,8 +22,9 @@ EXAMPLES = (
     "nightfold amend 5f3a9c0e",
     'nightfold amend 5f3a9c0e --set "coil_current=61.3 A" --because "read off the supply"',
     'nightfold amend --scan loss-coarse --set imaging_axis=y --because "cable swapped"',
+    'nightfold amend --scan loss-coarse --set "coil_current*=1.2" --because "120 A range" --dry-run',
+    "nightfold amend --undo 7",
 )
-_FEW = 3
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -39,18 +37,29 @@ def add_arguments(parser: ArgumentParser) -> None:
         dest="settings",
         action="append",
         default=[],
-        help="what was really set; a number may have a unit, as in 'coil_current=61.3 A'",
+        help="what was really set, as in 'coil_current=61.3 A'; NAME*=1.2 and 'NAME+=0.1 A' move each shot's own",
     )
     parser.add_argument("--because", metavar="TEXT", help="why; needed with --set")
+    parser.add_argument(
+        "--even-if-swept",
+        action="store_true",
+        help="with --scan: one value for all its shots, though the parameter moves in it",
+    )
+    parser.add_argument("--undo", metavar="N", type=int, help="undo the correction of this number")
+    parser.add_argument("--dry-run", action="store_true", help="show what would change, change nothing")
     add_by(parser)
 
 
 def run(args: Namespace) -> int:
     """Show histories, or correct settings."""
     screen = Screen.here(args.json)
-    stated = _stated(args.settings)
+    stated = typed_setting(args.settings)
     _check(args, stated)
     with opened(args, screen) as store:
+        if args.undo is not None:
+            done = store.undo_correction(args.undo, by=by_whom(args), dry_run=args.dry_run)
+            show_correction(screen, store, done, [change.uid for change in done.changes], dry=args.dry_run)
+            return 0
         if stated:
             _correct(screen, store, args, stated)
             return 0
@@ -66,80 +75,59 @@ def run(args: Namespace) -> int:
     return 0
 
 
-def _stated(given: Sequence[str]) -> dict[str, str]:
-    """Return names and values that were typed.
-
-    Raises
-    ------
-    UsageError
-    """
-    stated: dict[str, str] = {}
-    for text in given:
-        name, equals, value = text.partition("=")
-        name = name.strip()
-        if not equals or not name or not value.strip():
-            raise UsageError(f"--set: found {text!r}, wanted NAME=VALUE, as in 'coil_current=61.3 A'")
-        if name in stated:
-            raise UsageError(f"--set {name}: found it twice, wanted one value")
-        stated[name] = value
-    return stated
-
-
-def _check(args: Namespace, stated: dict[str, str]) -> None:
+def _check(args: Namespace, stated: list[Typed]) -> None:
     """Refuse what does not belong together.
 
     Raises
     ------
     UsageError
     """
+    if args.undo is not None and (stated or args.uids or args.scan is not None or args.because is not None):
+        raise UsageError(
+            "--undo: it takes the number of a correction, and no UID, --scan, --set or --because"
+        )
     if args.scan is not None and args.uids:
         raise UsageError("amend: found UID and --scan, wanted one of them")
+    if args.even_if_swept and not (stated and args.scan is not None):
+        raise UsageError("--even-if-swept: it belongs to --scan KEY --set NAME=VALUE")
     if stated:
         if args.scan is None and not args.uids:
             raise UsageError("amend: found no shot, wanted UID or --scan KEY")
         if args.because is None or not args.because.strip():
             raise UsageError("--set: found no reason, wanted --because TEXT: it stands in the shot's history")
         return
-    if args.because is not None:
-        raise UsageError("--because: found nothing to change, wanted --set NAME=VALUE")
+    if args.undo is not None:
+        return
+    if args.because is not None or args.dry_run:
+        option = "--dry-run" if args.because is None else "--because"
+        raise UsageError(f"{option}: found nothing to change, wanted --set NAME=VALUE")
     if args.scan is not None:
         raise UsageError("--scan: a history is of one shot; name it, or say what to correct with --set")
     if not args.uids:
         raise UsageError("amend: found no shot, wanted UID; 'nightfold shots' lists them")
 
 
-def _correct(screen: Screen, store: Store, args: Namespace, stated: dict[str, str]) -> None:
+def _correct(screen: Screen, store: Store, args: Namespace, stated: list[Typed]) -> None:
     """Correct settings, and say which fits are stale now."""
+    scan_id = None
     if args.scan is not None:
         scan = named_scan(store, args.scan, screen)
+        scan_id = scan.id
         uids, machines = store.shots(scan=scan.id, set_aside=True)["uid"].tolist(), {scan.machine}
     else:
         shots = [store.shot(uid) for uid in args.uids]
         uids, machines = list(dict.fromkeys(shot.uid for shot in shots)), {shot.machine for shot in shots}
-    settings = {name: typed_value(name, text, _kind(store, name, machines)) for name, text in stated.items()}
-    changed = store.correct(uids, settings, args.because, by=by_whom(args))
-    stale = named_fits(store, [fit for fit in store.fits(shots=uids) if fit.stale])
-    if screen.json:
-        screen.answer({"corrected": changed, "shots": uids, "stale": [_entry(fit) for fit in stale]})
-        return
-    unchanged = len(uids) - changed
-    already = f"; {unchanged} had it so already" if unchanged else ""
-    screen.text(f"{counted(changed, 'shot')} corrected{already}")
-    if not stale:
-        return
-    screen.heading(f"{counted(len(stale), 'kept fit')} stale now")
-    for fit in stale:
-        where = "".join(f", {line}" for line in (*relative_lines(fit), *slice_lines(fit)))
-        screen.item(fit.scan_key, f"{fit.model}, {fit.observable} along {fit.along}{where}")
-    keys = list(dict.fromkeys(fit.scan_key for fit in stale))
-    commands = [f"nightfold fit --again {key}".rstrip() for key in (keys if len(keys) <= _FEW else [""])]
-    screen.gap()
-    screen.note("'fit --again' brings them up to date:")
-    for command in commands:
-        if screen.terminal:
-            screen.command(command)
-        else:
-            screen.say(f"go on with: {command}")
+    settings = {typed.name: typed.value(_kind(store, typed.name, machines)) for typed in stated}
+    done = store.correct(
+        uids if scan_id is None else [],
+        settings,
+        args.because,
+        by=by_whom(args),
+        scan=scan_id,
+        even_if_swept=args.even_if_swept,
+        dry_run=args.dry_run,
+    )
+    show_correction(screen, store, done, uids, dry=args.dry_run)
 
 
 def _kind(store: Store, name: str, machines: set[str]) -> str | None:
@@ -157,15 +145,3 @@ def _kind(store: Store, name: str, machines: set[str]) -> str | None:
             f"--set {name}: its kind differs between {', '.join(sorted(machines))}; do one at a time"
         )
     return kinds.pop() if kinds else None
-
-
-def _entry(fit: KeptFit) -> dict[str, Any]:
-    """Return a stale fit for JSON."""
-    return {
-        "id": fit.id,
-        "scan": fit.scan_key,
-        "model": fit.model,
-        "observable": fit.observable,
-        "along": fit.along,
-        "slice": fit.slice,
-    }

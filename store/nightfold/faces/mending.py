@@ -6,11 +6,12 @@ from collections.abc import Callable, Mapping, Sequence
 from datetime import date
 from typing import TYPE_CHECKING, Any
 
-from sqlalchemy import select
+from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
+from nightfold.errors import RequestError
 from nightfold.faces.face import Face
-from nightfold.ledger import correcting, notes, setting_aside
+from nightfold.ledger import correcting, notes, setting_aside, undoing
 from nightfold.timestamps import now_us
 
 if TYPE_CHECKING:
@@ -52,7 +53,9 @@ class Mending(Face):
         *,
         by: str | None = None,
         scan: int | str | None = None,
-    ) -> int:
+        even_if_swept: bool = False,
+        dry_run: bool = False,
+    ) -> correcting.Corrected:
         """Correct settings of shots by appended corrections; return how many shots were changed.
 
         Parameters
@@ -60,42 +63,96 @@ class Mending(Face):
         uids : sequence of str
             The shots, by uid or the beginning of one.
         settings : mapping of parameter to value
-            What was really set, as in a record: ``{"coil_current": {"value": 61.3, "unit": "A"}}``.
+            What was really set, as in a record: ``{"coil_current": {"value": 61.3, "unit": "A"}}``. Or by how much
+            each shot is off: ``{"coil_current": {"times": 1.2}}``, ``{"coil_current": {"plus": 0.1, "unit": "A"}}``.
         reason : str
             Why; it stands in the shot's history.
         by : str, optional
             Who says so.
         scan : int or str, optional
             All shots of this scan too, those set aside included.
+        even_if_swept : bool
+            Give a parameter that moves in `scan` one value for all its shots, though its points are lost by that.
+        dry_run : bool
+            Look what would change, and change nothing.
+
+        Returns
+        -------
+        Corrected
+            How many shots were changed, an int; its `number` is what `undo_correction` takes, and `changes` tells of
+            each setting what it was before and after.
 
         Raises
         ------
         NotFound
             If a shot, a scan or a parameter is not in the store.
         RecordError
-            If a value cannot be taken for its parameter, a shot has no such setting, or nothing would change.
-        ValueError
-            If the reason is empty, or no setting or no shot is given.
+            If a value cannot be taken for its parameter or is not finite, a shot has no such setting, or nothing would
+            change.
+        RequestError
+            If the reason is empty, no setting or no shot is given, or a parameter that moves in `scan` would get one
+            value.
 
         Notes
         -----
         All is done, or nothing. Shots that have the value already are left as they are. Scans follow, and fits that
-        used the shots are stale. The record as it was first taken stays known. Correcting back undoes a correction.
+        used the shots are stale. The record as it was first taken stays known. `undo_correction` undoes a correction.
         """
-        from nightfold.scans.following import follow_corrections
+        from nightfold.scans.following import check_unswept
         from nightfold.scans.listing import find_scan
 
-        scan_id = None if scan is None else find_scan(self._session, scan).id
+        whole = None if scan is None else find_scan(self._session, scan)
+        if whole is not None and not even_if_swept:
+            check_unswept(whole, settings)
         named = (uids,) if isinstance(uids, str) else tuple(uids)
-        if not named and scan_id is None:
-            raise ValueError("correct: found no shot, wanted uids or a scan")
-        with self._session.writing() as connection:
+        if not named and whole is None:
+            raise RequestError("correct: found no shot, wanted uids or a scan")
+
+        def work(connection: Connection) -> tuple[correcting.Corrected, list[Row[Any]]]:
             shots = list(setting_aside.find_shots(connection, named).values())
-            if scan_id is not None:
-                shots += connection.execute(select(tables.shot).where(tables.shot.c.scan_id == scan_id)).all()
-            changed = correcting.correct_shots(connection, shots, settings, reason, by)
-            follow_corrections(connection, changed)
-        return len(changed)
+            if whole is not None:
+                own = select(tables.shot).where(tables.shot.c.scan_id == whole.id)
+                shots += connection.execute(own.order_by(tables.shot.c.started_us, tables.shot.c.id)).all()
+            return correcting.correct_shots(connection, shots, settings, reason, by)
+
+        return self._corrected(work, dry_run)
+
+    def undo_correction(
+        self, number: int, *, by: str | None = None, dry_run: bool = False
+    ) -> correcting.Corrected:
+        """Undo a correction by appended corrections, back to what each of its shots had; return how many were changed.
+
+        Parameters
+        ----------
+        number : int
+            That `correct` returned, and that `history` tells.
+        by : str, optional
+        dry_run : bool
+            Look what would change, and change nothing.
+
+        Raises
+        ------
+        NotFound
+            If there is no such correction.
+        RequestError
+            If it is undone already, or one of its settings was corrected again since: undo that first.
+        """
+        return self._corrected(lambda connection: undoing.undo_correction(connection, number, by), dry_run)
+
+    def _corrected(
+        self, work: Callable[[Connection], tuple[correcting.Corrected, list[Row[Any]]]], dry_run: bool
+    ) -> correcting.Corrected:
+        """Correct in one transaction, or try it, and have the scans follow."""
+        from nightfold.scans.following import follow_corrections
+
+        with self._session.writing() as connection:
+            done, changed = work(connection)
+            if dry_run:
+                connection.rollback()
+                done.number = None
+            else:
+                follow_corrections(connection, changed)
+        return done
 
     def merge_machines(
         self,
@@ -171,7 +228,7 @@ class Mending(Face):
         ------
         NotFound, ChoiceNeeded
             If that is not there, or the machine must be named.
-        ValueError
+        RequestError
             If the text is empty, or there is not exactly one subject.
         """
         from nightfold.scans.listing import find_scan
@@ -182,5 +239,5 @@ class Mending(Face):
                 connection, shot=shot, scan_id=scan_id, fit=fit, night=night, machine=machine
             )
             if subject is None:
-                raise ValueError("note: found no subject, wanted one of shot, scan, fit, night")
+                raise RequestError("note: found no subject, wanted one of shot, scan, fit, night")
             return notes.add_note(connection, subject, text, by, now_us())

@@ -11,15 +11,16 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from sqlalchemy import Connection, Row, bindparam, insert, literal, select, update
+from sqlalchemy import Connection, Row, bindparam, func, insert, literal, select, update
 
 from nightfold import tables
-from nightfold.errors import NotFound, RecordError
+from nightfold.errors import NotFound, RecordError, RequestError
 from nightfold.ledger.checking import CheckedShot
 from nightfold.ledger.names import MachineNames, Names
 from nightfold.ledger.rows import chunks, insert_many, next_id
 from nightfold.ledger.selecting import is_double, near_miss
 from nightfold.ledger.setting_aside import clean_reason
+from nightfold.ledger.shifting import Shift, read_shift, settle_shift
 from nightfold.records import clean_name, shorten
 from nightfold.settings import Value, digest_of_sum, hash_setting, setting_value
 from nightfold.timestamps import now_us
@@ -31,12 +32,12 @@ class _Wanted:
 
     parameter_id: int
     name: str
-    value: Value
+    value: Value | Shift
     unit: str
 
 
 @dataclass(frozen=True, slots=True)
-class _Change:
+class Change:
     """One setting of one shot, before and after."""
 
     parameter_id: int
@@ -44,11 +45,59 @@ class _Change:
     old: Value
     new: Value
     moving: bool
+    unit: str
 
     @property
     def shift(self) -> int:
         """By how much the sum of the shot's setting hashes changes."""
         return hash_setting(self.name, self.new.token) - hash_setting(self.name, self.old.token)
+
+
+@dataclass(frozen=True, slots=True)
+class SettingChange:
+    """What a correction made of one setting of one shot.
+
+    Attributes
+    ----------
+    uid, parameter : str
+    old, new : float, int, str or bool
+    unit : str
+    """
+
+    uid: str
+    parameter: str
+    old: float | int | str | bool
+    new: float | int | str | bool
+    unit: str
+
+
+class Corrected(int):
+    """How many shots a correction changed, a whole number that knows more.
+
+    Attributes
+    ----------
+    number : int or None
+        Of the correction, to undo it by; None if it was only tried.
+    changes : tuple of SettingChange
+        In the order of the shots.
+    """
+
+    number: int | None = None
+    changes: tuple[SettingChange, ...] = ()
+
+    @classmethod
+    def of(
+        cls, shots: Sequence[Row[Any]], changes: Mapping[int, Sequence[Change]], number: int | None
+    ) -> Corrected:
+        """Return what was done to these shots."""
+        done = cls(len(shots))
+        done.number = number
+        done.changes = tuple(
+            SettingChange(shot.uid, change.name, change.old.plain, change.new.plain, change.unit)
+            for shot in shots
+            for change in changes[shot.id]
+        )
+        return done
 
 
 def correct_shots(
@@ -57,14 +106,14 @@ def correct_shots(
     stated: Mapping[Any, Any],
     reason: str,
     by: str | None,
-) -> list[Row[Any]]:
-    """Correct settings of shots and return the shots that were changed, as they were before.
+) -> tuple[Corrected, list[Row[Any]]]:
+    """Correct settings of shots; return what was done, and the shots that were changed, as they were before.
 
     Parameters
     ----------
     shots : sequence of rows of the shot table
     stated : mapping of parameter to value
-        As in a record: a number, text, truth, or an object with value and unit.
+        As in a record: a number, text, truth, or an object with value and unit; or a shift, as `read_shift` takes it.
     reason : str
         Why; needed.
     by : str, optional
@@ -76,16 +125,16 @@ def correct_shots(
         If a machine has no such parameter.
     RecordError
         If a value cannot be taken for its parameter, a shot has no such setting, or nothing would change.
-    ValueError
-        If no reason or no setting is given.
+    RequestError
+        If no setting or no reason is given.
     """
     reason = clean_reason("correct", reason)
     if not stated:
-        raise ValueError("correct: found no setting, wanted at least one, as in {'coil_current': 61.3}")
+        raise RequestError("correct: found no setting, wanted at least one, as in {'coil_current': 61.3}")
     shots = list({shot.id: shot for shot in shots}.values())
     wanted = _wanted_by_sequence(connection, shots, stated)
-    held = _held_values(connection, shots, {item.parameter_id for own in wanted.values() for item in own})
-    changes: dict[int, list[_Change]] = {}
+    held = held_values(connection, shots, {item.parameter_id for own in wanted.values() for item in own})
+    changes: dict[int, list[Change]] = {}
     for shot in shots:
         own = [
             _compare(shot, item, held.get((shot.id, item.parameter_id))) for item in wanted[shot.sequence_id]
@@ -96,12 +145,12 @@ def correct_shots(
         item = wanted[shots[0].sequence_id][0]
         raise RecordError(
             f"shot {shots[0].uid}: parameters.{item.name}",
-            _said(item.value, item.unit),
+            _said(item),
             "another value: it has this one already",
         )
     changed_shots = [shot for shot in shots if shot.id in changes]
-    _write(connection, changed_shots, changes, {"reason": reason, "by": by, "at_us": now_us()})
-    return changed_shots
+    number = write_changes(connection, changed_shots, changes, reason, by)
+    return Corrected.of(changed_shots, changes, number), changed_shots
 
 
 def _wanted_by_sequence(
@@ -135,20 +184,31 @@ def _settle(
         name = clean_name(key)
     except ValueError as problem:
         raise RecordError(f"shot {uid}: parameters", f"the name {shorten(key)}", str(problem)) from None
+    if name in machine.observables:
+        raise NotFound(
+            f"parameter {name!r}: it is an observable of {machine.name}; a reading is changed by another record of the "
+            f"shot, as in {{'uid': '{uid}', 'observables': {{'{name}': …}}, 'derivation': …}}"
+        )
     if name not in machine.parameters:
         known = near_miss(name, machine.parameters)
         raise NotFound(f"parameter {name!r}: {machine.name} has none of that name; {known}")
     field = f"shot {uid}: parameters.{name}"
-    settled = setting_value(raw, field)
-    if settled is None:
-        raise RecordError(field, "null", "a value: what was set can be corrected, not taken away")
-    value, known_now = machine.settle(name, *settled, field)
+    value: Value | Shift
+    if shift := read_shift(raw, field):
+        value, known_now = settle_shift(machine, name, *shift, field)
+    else:
+        settled = setting_value(raw, field)
+        if settled is None:
+            raise RecordError(field, "null", "a value: what was set can be corrected, not taken away")
+        value, known_now = machine.settle(name, *settled, field)
+        if value.kind == "number" and value.exact in ("nan", "inf", "-inf"):
+            raise RecordError(field, value.exact, "a finite number: what was really set")
     if known_now is not machine.parameters[name]:
         names.keep(connection, machine, {name: known_now})
     return _Wanted(machine.parameters[name].id or 0, name, value, known_now.unit or "")
 
 
-def _held_values(
+def held_values(
     connection: Connection, shots: Sequence[Row[Any]], parameter_ids: set[int]
 ) -> dict[tuple[int, int], tuple[Value, bool]]:
     """Return the settings that shots have, by shot and parameter, and whether they move (or rest in a set)."""
@@ -174,28 +234,35 @@ def _held_values(
     return found
 
 
-def _compare(shot: Row[Any], item: _Wanted, held: tuple[Value, bool] | None) -> _Change:
+def _compare(shot: Row[Any], item: _Wanted, held: tuple[Value, bool] | None) -> Change:
+    field = f"shot {shot.uid}: parameters.{item.name}"
     if held is None:
         raise RecordError(
-            f"shot {shot.uid}: parameters.{item.name}",
-            f"{_said(item.value, item.unit)} for a setting that it does not have",
+            field,
+            f"{_said(item)} for a setting that it does not have",
             "one that it has: a correction changes a setting, it adds none",
         )
     old, moving = held
-    return _Change(item.parameter_id, item.name, old, item.value, moving)
+    new = item.value.of(old, field) if isinstance(item.value, Shift) else item.value
+    return Change(item.parameter_id, item.name, old, new, moving, item.unit)
 
 
-def _said(value: Value, unit: str) -> str:
-    return f"{shorten(value.plain)} {unit}".rstrip()
+def _said(item: _Wanted) -> str:
+    if isinstance(item.value, Shift):
+        return f"{item.value} {item.unit if item.value.sign == '+=' else ''}".rstrip()
+    shown = shorten(item.value.plain)
+    return f"{shown} {item.unit}".rstrip()
 
 
-def _write(
+def write_changes(
     connection: Connection,
     shots: Sequence[Row[Any]],
-    changes: Mapping[int, Sequence[_Change]],
-    why: Mapping[str, Any],
-) -> None:
-    """Enter corrections, and what the shots point to from now on."""
+    changes: Mapping[int, Sequence[Change]],
+    reason: str,
+    by: str | None,
+) -> int | None:
+    """Enter corrections, and what the shots point to from now on; return the number of the correction."""
+    why = {"reason": reason, "by": by, "at_us": _own_moment(connection)}
     corrections, pointers, fresh, moved = [], [], [], []
     sets: dict[tuple[int, frozenset[int]], int] = {}
     for shot in shots:
@@ -221,7 +288,7 @@ def _write(
             sets[key] = _set_without(connection, shot.set_id, rested) if rested else shot.set_id
         pointers.append({"of_shot": shot.id, "set_id": sets[key], "values_digest": digest_of_sum(total)})
     if not shots:
-        return
+        return None
     shot_table, value = tables.shot, tables.shot_value
     connection.execute(insert(tables.correction), corrections)
     connection.execute(update(shot_table).where(shot_table.c.id == bindparam("of_shot")), pointers)
@@ -229,9 +296,20 @@ def _write(
     if moved:
         same = (value.c.shot_id == bindparam("of_shot")) & (value.c.parameter_id == bindparam("of_parameter"))
         connection.execute(update(value).where(same), moved)
+    table = tables.correction
+    first = select(func.min(table.c.id)).where(table.c.at_us == why["at_us"])
+    return int(connection.execute(first).scalar_one())
 
 
-def _set_without(connection: Connection, set_id: int, leaving: Sequence[_Change]) -> int:
+def _own_moment(connection: Connection) -> int:
+    """Return the time now, or one soon after it that no correction has: those of one time are one correction."""
+    at_us, table = now_us(), tables.correction
+    while connection.execute(select(table.c.id).where(table.c.at_us == at_us).limit(1)).first() is not None:
+        at_us += 1
+    return at_us
+
+
+def _set_without(connection: Connection, set_id: int, leaving: Sequence[Change]) -> int:
     """Return the id of the set that has all of another but some settings, found by its digest or made."""
     whole, content = tables.value_set, tables.set_value
     old = connection.execute(select(whole).where(whole.c.id == set_id)).one()

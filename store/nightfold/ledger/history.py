@@ -15,6 +15,7 @@ from nightfold.ledger.columns import read_value
 from nightfold.ledger.notes import shot_subject
 from nightfold.ledger.selecting import scan_key
 from nightfold.ledger.setting_aside import find_shots
+from nightfold.ledger.undoing import correction_numbers
 from nightfold.settings import plain_value
 from nightfold.timestamps import from_us
 
@@ -93,6 +94,8 @@ class ShotEvent:
     unit : str
     by, why : str or None
         Who did it, and the reason given.
+    number : int or None
+        Of a correction, to undo it by.
     """
 
     at: datetime
@@ -103,6 +106,7 @@ class ShotEvent:
     unit: str = ""
     by: str | None = None
     why: str | None = None
+    number: int | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -222,12 +226,13 @@ def _corrections(connection: Connection, shot_id: int) -> Iterator[ShotEvent]:
         .where(table.c.shot_id == shot_id)
         .order_by(table.c.id)
     )
-    for row in connection.execute(query):
+    rows = connection.execute(query).all()
+    numbers = correction_numbers(connection, [row.at_us for row in rows])
+    for row in rows:
         old = plain_value(row.kind, row.old_num, row.old_exact)
         new = plain_value(row.kind, row.new_num, row.new_exact)
-        yield ShotEvent(
-            from_us(row.at_us), "corrected", row.name, old, new, row.unit or "", row.by, row.reason
-        )
+        at, number = from_us(row.at_us), numbers[row.at_us]
+        yield ShotEvent(at, "corrected", row.name, old, new, row.unit or "", row.by, row.reason, number)
 
 
 def _asides(connection: Connection, shot_id: int) -> Iterator[ShotEvent]:

@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 from sqlalchemy import ColumnElement, Connection, Row, select, update
 
 from nightfold import tables
-from nightfold.errors import NotFound
+from nightfold.errors import NotFound, RequestError
 from nightfold.ledger.names import insert_row
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import find_machine, moment_us, scan_key, the_machine
@@ -101,7 +101,7 @@ def find_subject(
     given = {"shot": shot, "scan": scan_id, "fit": fit, "night": night}
     named = [name for name, value in given.items() if value is not None]
     if len(named) > 1:
-        raise ValueError(f"note: found {' and '.join(named)}, wanted one of {', '.join(given)}")
+        raise RequestError(f"note: found {' and '.join(named)}, wanted one of {', '.join(given)}")
     if shot is not None:
         return shot_subject(next(iter(find_shots(connection, [shot]).values())).id)
     if scan_id is not None:
@@ -142,9 +142,9 @@ def add_note(connection: Connection, subject: str, text: str, by: str | None, at
     try:
         clean = clean_text(text).replace("\r\n", "\n").replace("\r", "\n").strip()
     except ValueError as problem:
-        raise ValueError(f"note: wanted {problem}") from None
+        raise RequestError(f"note: wanted {problem}") from None
     if not clean:
-        raise ValueError("note: found no text, wanted what is to be noted")
+        raise RequestError("note: found no text, wanted what is to be noted")
     row = {"subject": subject, "text": clean, "by": by, "at_us": at_us}
     note_id = insert_row(connection, tables.note, row)
     return _read(connection, tables.note.c.id == note_id)[0]

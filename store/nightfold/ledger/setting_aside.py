@@ -8,11 +8,14 @@ from typing import Any
 from sqlalchemy import Connection, Row, func, insert, select, update
 
 from nightfold import tables
-from nightfold.errors import NotFound
+from nightfold.errors import NotFound, RequestError
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import set_aside_now
 from nightfold.records import clean_text
 from nightfold.timestamps import now_us
+
+_SHORTEST = 4
+"""Letters of the beginning of a uid."""
 
 
 def find_shots(connection: Connection, uids: Sequence[str]) -> dict[str, Row[Any]]:
@@ -37,7 +40,7 @@ def find_shots(connection: Connection, uids: Sequence[str]) -> dict[str, Row[Any
 def _by_beginning(connection: Connection, uid: str) -> Row[Any]:
     shot = tables.shot
     rows = []
-    if len(uid) >= 4:
+    if len(uid) >= _SHORTEST:
         # a range can use the index, and SQLite's LIKE takes small and large letters as one
         near = shot.c.uid.between(uid, uid + "\U0010ffff")
         begins = near & (func.substr(shot.c.uid, 1, len(uid)) == uid)
@@ -45,6 +48,8 @@ def _by_beginning(connection: Connection, uid: str) -> Row[Any]:
     if len(rows) == 1:
         return rows[0]
     reason = f"several shots begin so, such as {rows[0].uid}" if rows else "no such uid in this store"
+    if not rows and len(uid) < _SHORTEST:
+        reason += f"; as the beginning of one it is too short, that needs at least {_SHORTEST} letters"
     raise NotFound(f"shot {uid!r}: {reason}")
 
 
@@ -53,7 +58,7 @@ def clean_reason(what: str, reason: str) -> str:
 
     Raises
     ------
-    ValueError
+    RequestError
         If there is none.
     """
     try:
@@ -61,7 +66,7 @@ def clean_reason(what: str, reason: str) -> str:
     except ValueError:
         reason = ""
     if not reason:
-        raise ValueError(
+        raise RequestError(
             f"{what}: found no reason, wanted a few words that say why, without control characters"
         )
     return reason

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 from sqlalchemy import Connection, Row, select
 
 from nightfold import tables
+from nightfold.errors import RequestError
 from nightfold.ledger.deriving import derived_quantities
 from nightfold.ledger.pins import kept_scans
 from nightfold.ledger.rows import chunks
@@ -17,6 +18,30 @@ from nightfold.scans.rounds import swept_of
 
 if TYPE_CHECKING:
     from nightfold.formulas.definitions import Derived
+    from nightfold.scans.scan import Scan
+
+
+def check_unswept(scan: Scan, stated: Mapping[Any, Any]) -> None:
+    """Refuse to give a parameter that moves in a scan one value for all its shots.
+
+    Raises
+    ------
+    RequestError
+    """
+    points = {axis.parameter: axis.points for axis in scan.axes}
+    for name, value in stated.items():
+        if isinstance(value, Mapping) and value.keys() & {"times", "plus"}:
+            continue
+        if points.get(name, 0) > 1:
+            moves = f"is an axis of it, with {points[name]} values"
+        elif name in scan.followers:
+            moves = f"moves along with its axis {scan.followers[name]}"
+        else:
+            continue
+        raise RequestError(
+            f"scan {scan.key}: {name} {moves}; one value for all its shots would lose them. "
+            f"Name the shots that had it, correct by a factor or an offset, or say even-if-swept"
+        )
 
 
 def follow_corrections(connection: Connection, shots: Sequence[Row[Any]]) -> None:
