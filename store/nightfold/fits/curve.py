@@ -90,7 +90,7 @@ def fit_curve(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    table = fit_table(points, values[None], model, errors, options)
+    table = fit_table(points, values[None], model, errors, options, True)
     if not np.isfinite(table.outcome.low[0]):
         raise FitError(f"scan: {table.outcome.shortage(0)}")
     return table.result(0)

@@ -8,7 +8,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from nightfold.errors import FitError
-from nightfold.fits.engine.uncertainty import interval
+from nightfold.fits.engine.links import steepness
+from nightfold.fits.engine.mixture import Mixture
+from nightfold.fits.engine.uncertainty import interval, mixed_interval
 
 if TYPE_CHECKING:
     from nightfold.fits.engine.arrays import Floats
@@ -25,12 +27,14 @@ class Estimate:
     stderr : float
         Standard uncertainty of the value; 0 for a fixed parameter, infinite where the data tell nothing.
     unit : str
-    link : {"linear", "log", "reciprocal"}
-        The coordinate in which intervals are symmetric: the value, its logarithm, or its reciprocal.
+    link : Link
+        The coordinate in which intervals are symmetric, or averaged: the value, its logarithm, its reciprocal, ….
     spread : float
         Standard uncertainty in that coordinate; taken from stderr when left out.
     dof : float
         Degrees of freedom of the interval's Student t; infinite for a normal one.
+    mixture : Mixture, optional
+        What is known of the coordinate where several variance laws were averaged; the interval is then the mixture's.
 
     Examples
     --------
@@ -44,6 +48,7 @@ class Estimate:
     link: Link = field(default="linear", repr=False)
     spread: float | None = field(default=None, repr=False)
     dof: float = field(default=float("inf"), repr=False)
+    mixture: Mixture | None = field(default=None, repr=False)
 
     def interval(self, level: float) -> tuple[float, float]:
         """Return the limits of the central interval with that probability inside.
@@ -53,15 +58,17 @@ class Estimate:
         FitError
             When the level is not between 0 and 1.
         """
+        check_level(level)
+        if self.mixture is not None:
+            ends = mixed_interval(np.array([self.value]), self.mixture, self.link, level)
+            return float(ends[0][0]), float(ends[1][0])
         spread = self._own_spread() if self.spread is None else self.spread
-        low, high = interval(
-            np.array(self.value), np.array(spread), np.array(self.dof), self.link, check_level(level)
-        )
+        low, high = interval(np.array(self.value), np.array(spread), np.array(self.dof), self.link, level)
         return float(low), float(high)
 
     def _own_spread(self) -> float:
-        steepness = {"linear": 1.0, "log": abs(self.value), "reciprocal": self.value**2}[self.link]
-        return self.stderr / steepness if steepness else self.stderr
+        slope = abs(float(steepness(np.array(self.value), self.link)))
+        return self.stderr / slope if slope else self.stderr
 
 
 @dataclass(frozen=True)
@@ -74,6 +81,7 @@ class EstimateColumn:
     link: Link = field(repr=False)
     spread: Floats = field(repr=False)
     dof: Floats = field(repr=False)
+    mixture: Mixture | None = field(default=None, repr=False)
 
     def interval(self, level: float) -> tuple[Floats, Floats]:
         """Return the limits of the central intervals with that probability inside, (B,) each.
@@ -83,7 +91,10 @@ class EstimateColumn:
         FitError
             When the level is not between 0 and 1.
         """
-        return interval(self.value, self.spread, self.dof, self.link, check_level(level))
+        check_level(level)
+        if self.mixture is not None:
+            return mixed_interval(self.value, self.mixture, self.link, level)
+        return interval(self.value, self.spread, self.dof, self.link, level)
 
     def __getitem__(self, row: int) -> Estimate:
         """Return the estimate of one data set."""
@@ -94,6 +105,7 @@ class EstimateColumn:
             self.link,
             float(self.spread[row]),
             float(self.dof[row]),
+            None if self.mixture is None else self.mixture.take(slice(row, row + 1)),
         )
 
 

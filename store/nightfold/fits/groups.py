@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -28,7 +28,8 @@ RIVALS = 3
 class Group:
     """Data sets with the same points left in and the same weights, ready to be fitted.
 
-    ``rows`` are their places among all data sets; ``u``, ``roots`` (n,) and ``Z`` (b, n) are sorted by x.
+    ``rows`` are their places among all data sets; ``place`` (b, n) are the places of the sorted points among those
+    handed in; ``stated`` (b, n) are the standard uncertainties stated, in the frame.
     """
 
     request: Request
@@ -36,6 +37,8 @@ class Group:
     data: DataSets
     window: Window
     weight_one: Floats
+    place: Ints
+    stated: Floats | None
 
     @cached_property
     def reduction(self) -> Reduction:
@@ -64,15 +67,18 @@ class Group:
         """The grid that starts are taken from."""
         return self.grid(self.request.layout.background, start=True)
 
-    def starts(self) -> tuple[Ints, Floats]:
-        """Return data set (within the group) and theta of each start to follow."""
+    def starts(self, clip: bool = False) -> tuple[Ints, Floats]:
+        """Return data set (within the group) and theta of each start to follow.
+
+        With `clip` as if points far from all others were nearer.
+        """
         layout, request = self.request.layout, self.request
         if not layout.shape.searchable:
             theta = self._held(layout.shape.grid(self.window))
             return np.repeat(np.arange(len(self.rows)), len(theta)), np.tile(theta, (len(self.rows), 1))
         if not layout.shape.theta:
             return np.arange(len(self.rows)), np.zeros((len(self.rows), 0))
-        z = self.reduction.whiten(self.data.z)
+        z = self.reduction.whiten(clip_far(self.data.z / self.roots) * self.roots if clip else self.data.z)
         if layout.all_columns_free:
             grid = self.start_grid
             theta = grid.theta
@@ -92,6 +98,34 @@ class Group:
         reference = np.einsum("bd,bd->b", z, z) - (z @ level) ** 2
         sets, points = choose_starts(layout, theta, sse, reference)
         return sets, theta[points]
+
+    def far_starts(self, found: Ints, known: Floats) -> tuple[Ints, Floats]:
+        """Return further starts where far points could hide the right one: none near those found, (M,) and theta."""
+        v = self.data.z / self.roots
+        far = (clip_far(v) != v).any(axis=1)
+        if not far.any() or not self.request.layout.shape.theta:
+            return found[:0], known[:0]
+        sets, theta = self.starts(clip=True)
+        near = self.request.layout.shape.near(theta[:, None], known[None]) & (sets[:, None] == found)
+        fresh = far[sets] & ~near.any(axis=1)
+        return sets[fresh], theta[fresh]
+
+    def part(self, row: int, left: Bools) -> Group:
+        """Return one of the data sets with some of its points, (n,) bool, alone."""
+        data = self.data.take(np.array([row]))
+        roots = None if data.root_weights is None else data.root_weights[:, left]
+        data = replace(data, u=data.u[:, left], root_weights=roots, z=data.z[:, left])
+        stated = None if self.stated is None else self.stated[row : row + 1, left]
+        one = slice(row, row + 1)
+        return Group(
+            self.request,
+            self.rows[one],
+            data,
+            self.window,
+            self.weight_one[one],
+            self.place[one, left],
+            stated,
+        )
 
     def rivals(self, sse: Floats, converged: Bools) -> tuple[Ints, Floats]:
         """Return data set and theta of further starts of a model of one's own that must be followed.
@@ -152,8 +186,18 @@ def patterns(x: Floats, Y: Floats, stderr: Floats | None) -> Iterator[tuple[Ints
             yield part, kept, None if stderr is None else keys[part[0]][kept]
 
 
-def make_group(request: Request, rows: Ints, x: Floats, Y: Floats, errors: Floats | None) -> Group:
-    """Return data sets that share their points x, sorted and in their frames, with their start grid's window."""
+def make_group(
+    request: Request, rows: Ints, x: Floats, Y: Floats, errors: Floats | None, stated: Floats | None = None
+) -> Group:
+    """Return data sets that share their points x, sorted and in their frames, with their start grid's window.
+
+    Parameters
+    ----------
+    errors : (n,) float array or None
+        Standard uncertainties that are used as weights.
+    stated : (b, n) float array or None
+        Standard uncertainties that may be used, row by row.
+    """
     layout, shape = request.layout, request.layout.shape
     order = np.argsort(x, kind="stable") if errors is None else np.lexsort((errors, x))
     x, Y = x[order], Y[:, order]
@@ -166,7 +210,12 @@ def make_group(request: Request, rows: Ints, x: Floats, Y: Floats, errors: Float
         tied = tied & (np.diff(errors) == 0)
     if tied.any():
         block = np.concatenate([[0], np.cumsum(~tied)])
-        Y = np.take_along_axis(Y, np.lexsort((Y, np.broadcast_to(block, Y.shape)), axis=-1), axis=1)
+        keys = (Y, np.broadcast_to(block, Y.shape))
+        tie = np.lexsort(keys if stated is None else (stated[:, order], *keys), axis=-1)
+        Y = np.take_along_axis(Y, tie, axis=1)
+        place = order[tie]
+    else:
+        place = np.broadcast_to(order, Y.shape)
     base = None
     if layout.background == "none" or "offset" in layout.fixed:
         base = np.full(len(rows), request.fixed.get("offset", 0.0))
@@ -189,7 +238,18 @@ def make_group(request: Request, rows: Ints, x: Floats, Y: Floats, errors: Float
         np.full(len(rows), len(x)),
     )
     scale = np.full(len(rows), np.nan if weight_one is None else weight_one) / frame.ys
-    return Group(request, rows, data, window, scale)
+    if errors is not None:
+        stated = np.broadcast_to(errors, Y.shape) / frame.ys[:, None]
+    elif stated is not None:
+        stated = np.take_along_axis(stated, place, axis=1) / frame.ys[:, None]
+    return Group(request, rows, data, window, scale, place, stated)
+
+
+def clip_far(v: Floats) -> Floats:
+    """Return values (b, n) with those beyond three times their median distance from the median brought to there."""
+    middle = np.median(v, axis=1, keepdims=True)
+    reach = 3 * 1.4826 * np.median(np.abs(v - middle), axis=1, keepdims=True)
+    return np.asarray(np.clip(v, middle - reach, middle + reach))
 
 
 def _window(u: Floats, background: Background) -> Window:

@@ -48,15 +48,16 @@ def fit_many(
     model, absolute_stderr, background, fixed, start, weights, robust, unit_x, unit_y
         As in `fit_curve`.
     full : bool
-        Work out the warnings at once; otherwise the permutation test behind ``no-feature`` waits until
-        `FitTable.warnings` or `FitTable.trusted` is first read. The numbers are the same.
+        The full recipe of `fit_curve`: outliers are looked for and variance laws averaged, as `robust` and
+        `weights` say. Otherwise least squares with equal (or given) weights and Student t intervals, at a small part of
+        the time.
     stderr : float, (n,) or (B, n) float array, optional
         Standard uncertainties of y.
 
     Returns
     -------
     FitTable
-        The same numbers as `fit_curve` gives for each row. A row with too few points has nan estimates and
+        With `full` the same numbers as `fit_curve` gives for each row. A row with too few points has nan estimates and
         a ``too-few-points`` warning.
 
     Raises
@@ -80,19 +81,16 @@ def fit_many(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    table = fit_table(points, values, model, errors, options)
-    if full:
-        _ = table.warnings
-    return table
+    return fit_table(points, values, model, errors, options, full)
 
 
 def fit_table(
-    x: Floats, Y: Floats, model: object, stderr: Floats | None, options: dict[str, Any]
+    x: Floats, Y: Floats, model: object, stderr: Floats | None, options: dict[str, Any], full: bool
 ) -> FitTable:
     """Return the fits of checked arrays; options as in `make_request`."""
     first = Y[0] if len(Y) else np.zeros_like(x)
     request = make_request(model, x, first, has_stderr=stderr is not None, **options)
-    return FitTable(x, Y, fit_sets(request, x, Y, stderr))
+    return FitTable(x, Y, fit_sets(request, x, Y, stderr, full))
 
 
 @dataclass(frozen=True, repr=False)
@@ -177,6 +175,7 @@ class FitTable:
         """The model's parameters, then the background's, by name."""
         out, request = self.outcome, self.outcome.request
         links = request.layout.shape.links()
+        several = out.mixture is not None and out.mixture.weight.shape[1] > 1
         return {
             parameter.name: EstimateColumn(
                 out.value[:, row],
@@ -185,6 +184,7 @@ class FitTable:
                 links[row] if row < len(links) else "linear",
                 out.spread[:, row],
                 out.dof,
+                out.mixture.column(row, out.dof) if several and out.mixture is not None else None,
             )
             for row, parameter in enumerate(request.layout.parameters)
         }
@@ -203,16 +203,20 @@ class FitTable:
     def result(self, row: int) -> FitResult:
         """Return one fit by itself."""
         used = np.flatnonzero(self.outcome.used(self.x, self.Y[row], row))
+        outliers = np.flatnonzero(self.outcome.outlier[row])
         return FitResult(
             self.outcome.request,
             {name: column[row] for name, column in self.estimates.items()},
             self.warnings[row],
-            (),
+            tuple(outliers.tolist()),
             float(self.residual_stderr[row]),
             self.x[used],
             self.Y[row][used],
             used,
             self.outcome.covariance[row],
+            self.outcome.deviation[row][used],
+            self.x[outliers],
+            self.Y[row][outliers],
         )
 
     def to_dataset(self) -> xr.Dataset:
@@ -254,5 +258,7 @@ class FitTable:
                 layout.shape.searchable,
                 bool(out.constant[row]),
                 out.request.unit_x,
+                tuple(self.x[out.outlier[row]].tolist()),
+                dict(zip(names, out.unlike[row].tolist(), strict=True)),
             )
         )

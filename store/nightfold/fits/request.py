@@ -43,6 +43,11 @@ class Request:
         return self.layout.shape.name
 
     @property
+    def elaborate(self) -> bool:
+        """Whether more than least squares is asked for: outliers are looked for, or variance laws averaged."""
+        return self.robust or (self.weights == "auto" and not self.weighted)
+
+    @property
     def settings(self) -> dict[str, Any]:
         """What a kept fit must remember to be done again."""
         return {

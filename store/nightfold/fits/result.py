@@ -31,7 +31,7 @@ class FitResult:
         The model's parameters, then the background's; fixed ones are there with stderr 0.
     warnings : tuple of FitWarning
     outliers : tuple of int
-        Indices into the points handed in that the robust step left out (none yet: there is no such step).
+        Indices into the points handed in that the robust step left out.
     n : int
         Number of points used.
     dof : int
@@ -45,6 +45,11 @@ class FitResult:
         Their indices among the points handed in.
     covariance_matrix : (F, F) float array
         Of the free parameters, named in `free_names`.
+    deviation : (n,) float array
+        Standard deviation of each point about the curve, unit of y, by the variance laws as they are weighted;
+        nan where none was learnt.
+    outlier_x, outlier_y : (m,) float arrays
+        The outliers.
     settings : dict
         ``weights``, ``absolute_stderr``, ``robust``, ``fixed``, ``start``: what it takes to fit again.
     """
@@ -58,6 +63,9 @@ class FitResult:
     y: Floats
     used: Ints
     covariance_matrix: Floats
+    deviation: Floats
+    outlier_x: Floats
+    outlier_y: Floats
 
     @property
     def model(self) -> str:

@@ -308,9 +308,13 @@ def _plain(value: Any) -> Any:
 
 
 def _within(result: FitResult, rows: Sequence[int] | NDArray[np.intp]) -> FitResult:
-    """Return the result with `used` counted within the slice."""
+    """Return the result with `used` and `outliers` counted within the slice."""
     place: Mapping[int, int] = {int(row): number for number, row in enumerate(rows)}
-    return replace(result, used=np.array([place[int(row)] for row in result.used], dtype=np.intp))
+    return replace(
+        result,
+        used=np.array([place[int(row)] for row in result.used], dtype=np.intp),
+        outliers=tuple(place[row] for row in result.outliers),
+    )
 
 
 def _numbers(scan: Scan, table: pd.DataFrame, along: str) -> NDArray[np.float64]:

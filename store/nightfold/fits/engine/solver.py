@@ -126,7 +126,13 @@ def linearise(layout: Layout, data: DataSets, theta: Floats) -> Point:
     return Point(theta, sse, gram(across, across), pull)
 
 
-def solve(layout: Layout, data: DataSets, theta: Floats) -> Solution:
+def solve(
+    layout: Layout,
+    data: DataSets,
+    theta: Floats,
+    tolerance: float = STEP_TOLERANCE,
+    most: int = MAX_STEPS,
+) -> Solution:
     """Return the minimum that each start leads to.
 
     Parameters
@@ -136,8 +142,12 @@ def solve(layout: Layout, data: DataSets, theta: Floats) -> Solution:
         M data sets, one for each start.
     theta : (M, P) float array
         Starts; fixed coordinates hold their fixed values.
+    tolerance : float
+        A step is the last one when the fall it promises is this share of the sum of squares.
+    most : int
+        Largest number of steps.
     """
-    if layout.shape.numeric:
+    if layout.shape.numeric and most == MAX_STEPS:
         from nightfold.fits.engine.single import solve_each
 
         return Solution(*solve_each(layout, data, theta))
@@ -149,16 +159,16 @@ def solve(layout: Layout, data: DataSets, theta: Floats) -> Solution:
     exact = EXACT * np.einsum("mn,mn->m", data.z, data.z)
     fitted = np.flatnonzero(layout.free_theta)
     active, sets, damping = np.arange(len(theta)), data, np.full(len(theta), 1e-3)
-    for count in range(MAX_STEPS):
+    for count in range(most):
         step, promise, held = propose(layout, sets, here, damping)
         promise *= 1.0 + damping
         trial = linearise(layout, sets, here.theta + step)
         better = trial.sse <= here.sse
         here = trial if better.all() else here.replace(better, trial)
         stuck = ~better & ((promise <= 1e-11 * here.sse) | (damping > 1e12))
-        done = (promise <= STEP_TOLERANCE * here.sse) | (here.sse <= exact[active]) | stuck
+        done = (promise <= tolerance * here.sse) | (here.sse <= exact[active]) | stuck
         damping = np.where(better, np.maximum(damping * 0.1, 1e-12), damping * 8.0)
-        if done.any() or count == MAX_STEPS - 1:
+        if done.any() or count == most - 1:
             best[active], sse[active] = here.theta, here.sse
             converged[active] = done & (damping <= 1e12) & np.isfinite(here.sse)
             bound[active[:, None], fitted] = held

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from math import exp, inf, isfinite
 
 from nightfold.fits.engine.feature import LEVEL
@@ -12,6 +12,10 @@ MOST_SPREAD = {"rate": 0.4, "width": 0.5}
 FREQUENCY_SPREAD = 0.25
 """Largest standard uncertainty of a frequency, times the window."""
 LEAST_PERIODS = 0.8
+MOST_UNLIKE = 2.0
+"""Stderr that the estimate with equal weights may lie from the one by the learnt weights."""
+ADVISORY = frozenset({"outliers"})
+"""Codes of warnings that leave a fit trusted."""
 
 
 @dataclass(frozen=True)
@@ -40,6 +44,8 @@ class Facts:
     ``value``, ``stderr`` and ``spread`` are by reported name, ``roles`` tell which free name is a position,
     width, rate or frequency, ``bound`` lists names that ended at the edge of what is searched; ``feature_p``
     is that of the permutation test when a start grid was ``searched``, else that of an F test.
+    ``outliers`` are the x of the points left out; ``unlike`` tells by name how far equal weights lead from the
+    estimate, in units of their own stderr.
     """
 
     model: str
@@ -57,6 +63,8 @@ class Facts:
     searched: bool
     constant: bool
     unit_x: str
+    outliers: tuple[float, ...] = ()
+    unlike: dict[str, float] = field(default_factory=dict)
 
 
 def judge(facts: Facts) -> tuple[FitWarning, ...]:
@@ -70,7 +78,10 @@ def judge(facts: Facts) -> tuple[FitWarning, ...]:
     for warning in found:
         if warning is not None:
             messages.setdefault(warning.code, []).append(warning.message)
-    return tuple(FitWarning(code, "; also, ".join(dict.fromkeys(texts))) for code, texts in messages.items())
+    return tuple(
+        FitWarning(code, "; also, ".join(dict.fromkeys(texts)), code in ADVISORY)
+        for code, texts in messages.items()
+    )
 
 
 def _others(facts: Facts) -> list[FitWarning | None]:
@@ -81,6 +92,8 @@ def _others(facts: Facts) -> list[FitWarning | None]:
         *(_at_bound(facts, name) for name in facts.bound),
         _spare(facts),
         _known(facts),
+        _weights_disagree(facts),
+        _outliers(facts),
     ]
 
 
@@ -254,6 +267,31 @@ def _other_way(facts: Facts, name: str) -> str | None:
         return "the data do not level off; scan longer, or fit without a background"
     rising = "rise instead of fall" if facts.value.get("amplitude", 1.0) > 0 else "fall instead of rise"
     return f"the data {rising}; fit another model or with a background"
+
+
+def _weights_disagree(facts: Facts) -> FitWarning | None:
+    far = {name: distance for name, distance in facts.unlike.items() if distance > MOST_UNLIKE}
+    if not far:
+        return None
+    name = max(far, key=lambda one: far[one])
+    return FitWarning(
+        "weights-disagree",
+        f"with equal weights the {name} comes out {far[name]:.2g} of its stderr away: the curve does not fit where it"
+        " is small as it does where it is large; fit with a background or another model, or with weights='equal'",
+    )
+
+
+def _outliers(facts: Facts) -> FitWarning | None:
+    if not facts.outliers:
+        return None
+    several = len(facts.outliers) > 1
+    where = ", ".join(f"{x:.6g}" for x in facts.outliers)
+    return FitWarning(
+        "outliers",
+        f"{len(facts.outliers)} shot{'s' if several else ''} left out as outlier{'s' if several else ''}, at"
+        f" {where} {facts.unit_x}".rstrip()
+        + "; look at what was recorded there",
+    )
 
 
 def _spare(facts: Facts) -> FitWarning | None:

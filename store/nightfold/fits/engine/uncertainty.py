@@ -11,6 +11,8 @@ from nightfold.fits.engine.arrays import Floats
 from nightfold.fits.engine.batched import combine, diagonal, gram, inverse
 from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.layout import Layout
+from nightfold.fits.engine.links import falls, steepness, to_coordinate, to_value
+from nightfold.fits.engine.mixture import Mixture, t_quantile
 from nightfold.fits.engine.solver import expand
 
 if TYPE_CHECKING:
@@ -73,12 +75,12 @@ def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) 
         jacobian = dq[:, :, free]
         cov_q = combine(jacobian, combine(basic, jacobian.transpose(0, 2, 1)))
         spread = np.sqrt(diagonal(cov_q))
-    value, steepness = from_coordinates(q, layout.shape.links())
+    value, slopes = from_coordinates(q, layout.shape.links())
     fixed = np.array([name in layout.fixed for name in layout.names])
     spread = np.where(fixed, 0.0, np.where(np.isfinite(spread), spread, np.inf))
     with np.errstate(invalid="ignore", over="ignore"):
-        stderr = np.where(fixed, 0.0, spread * np.abs(steepness))
-        outer = steepness[:, :, None] * steepness[:, None]
+        stderr = np.where(fixed, 0.0, spread * np.abs(slopes))
+        outer = slopes[:, :, None] * slopes[:, None]
         covariance = (cov_q * outer)[:, ~fixed][:, :, ~fixed]
     stderr = np.where(np.isnan(stderr), np.inf, stderr)
     dof = spare if given is None else np.full(len(q), np.inf)
@@ -87,16 +89,12 @@ def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) 
 
 def from_coordinates(q: Floats, links: tuple[Link, ...]) -> tuple[Floats, Floats]:
     """Return reported values and their derivatives for q; columns beyond `links` are linear."""
-    value, steepness = q.copy(), np.ones_like(q)
+    value, slopes = q.copy(), np.ones_like(q)
     for row, link in enumerate(links):
-        if link == "log":
-            with np.errstate(over="ignore"):
-                value[:, row] = steepness[:, row] = np.exp(q[:, row])
-        elif link == "reciprocal":
-            with np.errstate(divide="ignore"):
-                value[:, row] = 1.0 / q[:, row]
-                steepness[:, row] = -(value[:, row] ** 2)
-    return value, steepness
+        if link != "linear":
+            value[:, row] = to_value(q[:, row], link)
+            slopes[:, row] = steepness(value[:, row], link)
+    return value, slopes
 
 
 def interval(value: Floats, spread: Floats, dof: Floats, link: Link, level: float) -> tuple[Floats, Floats]:
@@ -106,28 +104,28 @@ def interval(value: Floats, spread: Floats, dof: Floats, link: Link, level: floa
     ----------
     value, spread, dof : (…) float arrays
         Reported value, standard uncertainty of its coordinate, degrees of freedom (infinite: normal).
-    link : {"linear", "log", "reciprocal"}
-        The coordinate: the value itself, its logarithm, or its reciprocal (which is not negative).
+    link : Link
+        How the value follows from its coordinate.
     level : float
         Probability inside, between 0 and 1.
     """
     reach = t_quantile(0.5 + level / 2, dof)
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
         half = np.where(spread == 0, 0.0, reach * spread)
-        if link == "log":
-            low, high = value * np.exp(-half), value * np.exp(half)
-        elif link == "reciprocal":
-            low, high = 1.0 / (1.0 / value + half), 1.0 / np.maximum(1.0 / value - half, 0.0)
-        else:
-            low, high = value - half, value + half
+        q = to_coordinate(value, link)
+        low, high = between(q - half, q + half, link)
     known = half == 0
     return np.where(known, value, low), np.where(known, value, high)
 
 
-def t_quantile(probability: float, dof: Floats) -> Floats:
-    """Return quantiles of Student's t, infinite without degrees of freedom."""
-    from scipy.special import ndtri, stdtrit
+def mixed_interval(value: Floats, mixture: Mixture, link: Link, level: float) -> tuple[Floats, Floats]:
+    """Return the limits of a central interval of a mixture."""
+    low, high = between(mixture.quantile(0.5 - level / 2), mixture.quantile(0.5 + level / 2), link)
+    known = (mixture.spread == 0).all(axis=1)
+    return np.where(known, value, low), np.where(known, value, high)
 
-    finite = np.where(np.isfinite(dof) & (dof > 0), dof, 1.0)
-    quantile = np.where(np.isfinite(dof), stdtrit(finite, probability), ndtri(probability))
-    return np.asarray(np.where(dof > 0, quantile, np.inf), dtype=np.float64)
+
+def between(low: Floats, high: Floats, link: Link) -> tuple[Floats, Floats]:
+    """Return the least and the largest value of coordinates from low to high."""
+    ends = to_value(low, link), to_value(high, link)
+    return ends[::-1] if falls(link) else ends
