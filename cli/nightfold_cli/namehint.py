@@ -1,8 +1,20 @@
-"""A hint for a machine that came up under a name like that of another one."""
+"""A hint for a machine that came up: under a name like that of another one, or with readings of sensors alone."""
 
 from __future__ import annotations
 
 from collections.abc import Collection
+
+
+def sensors_hint(before: Collection[str], after: Collection[str]) -> str | None:
+    """Return a sentence where readings of sensors made a machine beside those that were there before."""
+    fresh = sorted(set(after) - set(before))
+    if not fresh or not before:
+        return None
+    others = ", ".join(sorted(before)[:4])
+    return (
+        f"{fresh[0]} is a new machine, with sensors alone; if its sensors belong to one that was there ({others}), "
+        f"name it where the readings are written, and 'nightfold merge-machines {fresh[0]} MACHINE --because TEXT'"
+    )
 
 
 def name_hint(before: Collection[str], after: Collection[str]) -> str | None:

@@ -76,6 +76,11 @@ class Frame:
     low_y: float
     high_y: float
 
+    @property
+    def drawable(self) -> bool:
+        """Whether a float holds how far the ends are apart."""
+        return _finite(self.high_x - self.low_x, self.high_y - self.low_y)
+
     def dot(self, canvas: Canvas, x: float, y: float) -> tuple[int, int]:
         """Return the dot of a position."""
         across = (x - self.low_x) / (self.high_x - self.low_x) * (canvas.dots_across - 1)
@@ -108,6 +113,8 @@ class Chart:
         Further series on the same axes, at most three, told apart by their marks.
     ticks : callable
         Ticks of the x axis between two ends, at most so many.
+    around : float, optional
+        How much of the x axis is shown on either side where all points lie at one place.
     """
 
     points: Points
@@ -119,16 +126,19 @@ class Chart:
     unicode: bool = True
     others: Sequence[Points] = ()
     ticks: Callable[[float, float, int], Ticks] = ticks_between
+    around: float | None = None
     glyphs: Glyphs = field(init=False)
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "glyphs", UNICODE if self.unicode else ASCII)
 
     def lines(self) -> list[Line]:
-        """Return the chart, top line first; a single line where there is nothing to draw."""
+        """Return the chart, top line first; a single line where there is nothing that can be drawn."""
         frame = self.frame()
         if frame is None:
             return [[("(nothing finite to draw)", "label")]]
+        if not frame.drawable:
+            return [[("(numbers too far apart to draw)", "label")]]
         canvas = self._canvas(self.height - 3)
         if self.curve is not None:
             _draw_curve(canvas, frame, *self.curve)
@@ -160,9 +170,9 @@ class Chart:
         """
         frame = self.frame()
         finite = [value for value in values if math.isfinite(value)]
-        if frame is None or not finite:
+        if frame is None or not finite or not frame.drawable:
             return []
-        scatter = math.sqrt(math.fsum(value * value for value in finite) / len(finite)) or 1.0
+        scatter = math.hypot(*finite) / math.sqrt(len(finite)) or 1.0
         reach = max(3.0, *(abs(value) / scatter for value in finite))
         strip = Frame(frame.low_x, frame.high_x, -reach, reach)
         canvas = self._canvas(height)
@@ -204,7 +214,7 @@ class Chart:
         ys += [end for one in self._series for _, low, high in one.bars() for end in (low, high)]
         if self.curve is not None:
             ys += [y for y in self.curve[1] if math.isfinite(y)]
-        return Frame(*_widened(min(xs), max(xs)), *_widened(min(ys), max(ys)))
+        return Frame(*_widened(min(xs), max(xs), self.around), *_widened(min(ys), max(ys)))
 
     @property
     def _series(self) -> tuple[Points, ...]:
@@ -237,12 +247,12 @@ def shading(rows: Sequence[Sequence[float]], *, unicode: bool = True) -> list[st
     finite = [value for row in rows for value in row if math.isfinite(value)]
     if not finite:
         return []
-    low, span = min(finite), (max(finite) - min(finite)) or 1.0
+    low, span = min(finite), max(finite) / 2 - min(finite) / 2 or 1.0
 
     def cell(value: float) -> str:
         if not math.isfinite(value):
             return "??"
-        return shades[min(len(shades) - 1, int((value - low) / span * len(shades)))] * 2
+        return shades[min(len(shades) - 1, int((value / 2 - low / 2) / span * len(shades)))] * 2
 
     return ["".join(cell(value) for value in row) for row in rows]
 
@@ -284,10 +294,10 @@ def _margin(label: str, glyphs: Glyphs) -> Line:
     ]
 
 
-def _widened(low: float, high: float) -> tuple[float, float]:
-    """Return ends a little beyond the given ones, always apart."""
+def _widened(low: float, high: float, around: float | None = None) -> tuple[float, float]:
+    """Return ends a little beyond the given ones, always apart: equal ones by `around`, or a share of them."""
     span = high - low
-    margin = span * _PADDING if span > 0 else abs(low) * 0.05 or 1.0
+    margin = span * _PADDING if span > 0 else around or abs(low) * 0.05 or 1.0
     return low - margin, high + margin
 
 

@@ -93,11 +93,20 @@ def _reading(values: Sequence[float], stderrs: Sequence[float], rows: Sequence[i
     count = len(kept)
     if not count:
         return Reading(0, math.nan, math.nan, math.nan)
-    mean = math.fsum(values[row] for row in kept) / count
     if count == 1:
-        return Reading(1, mean, math.nan, stderrs[kept[0]])
-    scatter = math.sqrt(math.fsum((values[row] - mean) ** 2 for row in kept) / (count - 1))
+        return Reading(1, values[kept[0]], math.nan, stderrs[kept[0]])
+    mean, scatter = mean_and_scatter([values[row] for row in kept])
     return Reading(count, mean, scatter, scatter / math.sqrt(count))
+
+
+def mean_and_scatter(values: Sequence[float]) -> tuple[float, float]:
+    """Return mean and standard deviation (n - 1) of finite numbers, however large; infinite where no float holds it."""
+    count = len(values)
+    size = 2.0 ** max(0, math.frexp(max(map(abs, values)))[1] - 400)  # exact, and 1 for all but huge numbers
+    small = [value / size for value in values]
+    mean = math.fsum(small) / count
+    scatter = math.sqrt(math.fsum((value - mean) ** 2 for value in small) / (count - 1))
+    return mean * size, scatter * size
 
 
 def _numbers(table: pd.DataFrame, name: str) -> list[float]:

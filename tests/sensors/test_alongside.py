@@ -190,6 +190,16 @@ def test_spans_and_bins(anywhere: str) -> None:
         assert store.sensor_bins("room", moment(9000), moment(8000)).empty
 
 
+def test_bins_of_odd_numbers_and_spans(store: Store) -> None:
+    for at in ("1969-12-31T23:00:00Z", "1970-01-01T01:00:00Z"):
+        store.take_sensors([{"machine": "heron", "at": at, "readings": {"room": 20.0}}])
+    for bins in (0, -1):
+        with pytest.raises(ValueError, match=f"bins: found {bins}, wanted at least 1"):
+            store.sensor_bins("room", bins=bins)
+    assert store.sensor_bins("room", bins=1)["readings"].tolist() == [1, 1]  # bins begin in 1970
+    assert store.sensor_bins("room", "1970-01-01", bins=1)["readings"].tolist() == [1]
+
+
 def test_no_sensors_yet(store: Store) -> None:
     assert store.sensors().empty
     with pytest.raises(NotFound, match="sensor 'room': not in this store; it has none yet"):

@@ -84,13 +84,23 @@ def _write(scan: Scan, path: Path, kind: str, choice: Mapping[str, Any], set_asi
 
             write_netcdf(scan.dataset(set_aside=set_aside, **choice), part)
         else:
-            _with_units(_renamed(scan.table(set_aside=set_aside, **choice))).to_csv(part, index=False)
+            table = _renamed(scan.table(set_aside=set_aside, **choice))
+            _with_units(_with_scan(table, scan)).to_csv(part, index=False)
         part.replace(path)
     except OSError as error:
         number = error.errno or int((_ERRNO.search(str(error)) or [0, 0])[1])
         raise OSError(number, os.strerror(number) if number else "it cannot be written", str(path)) from error
     finally:
         part.unlink(missing_ok=True)
+
+
+def _with_scan(table: pd.DataFrame, scan: Scan) -> pd.DataFrame:
+    """Return the table with machine, sequence and label of the scan in every row, so that `take` reads it back."""
+    said = {"machine": scan.machine, "sequence": scan.sequence, "scan": scan.label}
+    columns = {name: value for name, value in said.items() if value is not None and name not in table}
+    joined = table.assign(**columns)[[*table.columns[:1], *columns, *table.columns[1:]]]
+    joined.attrs = table.attrs
+    return joined
 
 
 def _renamed(table: pd.DataFrame) -> pd.DataFrame:

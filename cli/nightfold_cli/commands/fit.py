@@ -214,7 +214,7 @@ def _draw(
 def _summary(residuals: Sequence[float], unit: str, runs: Runs | None) -> str:
     """Return how large residuals are, and how often they change sign."""
     finite = [value for value in residuals if math.isfinite(value)]
-    rms = math.sqrt(math.fsum(value * value for value in finite) / len(finite)) if finite else math.nan
+    rms = math.hypot(*finite) / math.sqrt(len(finite)) if finite else math.nan
     said = f"rms {rounded(rms)} {unit}".rstrip()
     if runs is None:
         return said

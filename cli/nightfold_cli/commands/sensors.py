@@ -30,6 +30,7 @@ _WIDEST = 120
 _HEIGHT = 18
 _LABELS = 11  # what the chart's y axis takes of the width
 _BINS = 100
+_AROUND_S = 1800.0  # shown before and after a single bin
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -192,6 +193,7 @@ def _chart(
         height=_HEIGHT,
         unicode=screen.unicode,
         ticks=date_ticks(zone),
+        around=max(bin_s, _AROUND_S),
     )
     return chart.lines()
 
@@ -205,9 +207,8 @@ def _figures(
     figures = [("readings", str(count))]
     if known:
         lowest, highest = min(known, key=lambda row: row["low"]), max(known, key=lambda row: row["high"])
-        mean = math.fsum(row["mean"] * row["readings"] for row in known) / sum(
-            row["readings"] for row in known
-        )
+        total = sum(row["readings"] for row in known)
+        mean = math.fsum(row["mean"] * (row["readings"] / total) for row in known)
         for name, row, key in (("lowest", lowest, "low"), ("highest", highest, "high")):
             at = times.full(row["at"], machine)
             figures.append((name, f"{setting(row[key], unit, ENOUGH)}, in the bin from {at}"))

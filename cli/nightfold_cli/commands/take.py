@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from nightfold_cli.failures import REFUSED, UsageError, explain
 from nightfold_cli.layout import Column
-from nightfold_cli.namehint import name_hint
+from nightfold_cli.namehint import name_hint, sensors_hint
 from nightfold_cli.opening import opened
 from nightfold_cli.progress import Progress
 from nightfold_cli.refusals import summarise
@@ -94,8 +94,11 @@ def run(args: Namespace) -> int:
                 total.add_unreadable(outcome)
             else:
                 total.add(name, outcome)
-        hint = "" if args.sensors else zone_hint(store, [name for name, *_ in total.rows])
-        hint = name_hint(machines, store.machines()) or hint
+        hint = name_hint(machines, store.machines())
+        if not hint and args.sensors:
+            hint = sensors_hint(machines, store.machines())
+        elif not hint:
+            hint = zone_hint(store, [name for name, *_ in total.rows])
     if screen.json:
         screen.answer({**total.counts(), "refused": total.refused})
     else:

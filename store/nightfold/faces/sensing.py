@@ -78,6 +78,8 @@ class Sensing(Face):
         ------
         NotFound, ChoiceNeeded
             As `sensor`.
+        ValueError
+            If `bins` is less than 1.
         """
         from nightfold.sensors.bins import bins_frame, read_bins
         from nightfold.sensors.reading import find_sensor, span_us

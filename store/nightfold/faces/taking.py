@@ -89,9 +89,11 @@ class Taking(Face):
         with self._session.reading() as connection:
             cards = cards_in_force(connection)
             aliases = names.read_aliases(connection)
+            machines = names.read_names(connection)
         named = aliases.get(columns.machine, columns.machine) if columns and columns.machine else None
         card = cards.get(named) if named else next(iter(cards.values())) if len(cards) == 1 else None
-        records = read_file(where, columns=columns, card=card)
+        own = machines.get(named) if named else next(iter(machines.values())) if len(machines) == 1 else None
+        records = read_file(where, columns=columns, card=card, known=own.roles if own else None)
         return self._writer.take(records, SourceLog(where), progress)
 
     def take_sensors(

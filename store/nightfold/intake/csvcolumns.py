@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import datetime
 from shlex import quote
@@ -24,6 +24,7 @@ Role = Literal[
     "machine", "sequence", "scan", "started", "uid", "reference", "failed", "note",
 ]  # fmt: skip
 _SPECIAL: tuple[Role, ...] = ("machine", "sequence", "scan", "reference", "failed", "note")
+_EXPORT_ONLY = frozenset(("shot_id", "set_aside"))
 _WITH_UNIT = re.compile(r"(.*\S)\s+\[([^\[\]]*)\]|\[([^\[\]]*)\]")
 _STDERR = re.compile(r"(.*\S)(?:_|\s+)stderr")
 
@@ -117,9 +118,13 @@ class Column:
 
 
 def read_header(
-    cells: Sequence[str], options: CsvColumns, card: MachineCard | None, source: str
+    cells: Sequence[str],
+    options: CsvColumns,
+    card: MachineCard | None,
+    source: str,
+    known: Mapping[str, Role] | None = None,
 ) -> tuple[Column, ...]:
-    """Return the columns behind a header line.
+    """Return the columns behind a header line; `known` are those of the store, for what the card does not name.
 
     Raises
     ------
@@ -133,8 +138,9 @@ def read_header(
     for name in names:
         if names.count(name) > 1:
             raise RecordError(name, "two columns of this name", "each name once")
-    roles = _Roles(options, card, names)
+    roles = _Roles(options, card, names, known or {})
     columns = tuple(_column(name, unit, roles, card) for name, unit in headings)
+    _check_sensors(columns, options, source)
     _check_unassigned([name for name in names if roles.of(name) is None], options, source)
     _check_stated([*names, *(card.derived if card is not None else ())], options, source)
     _check_whole(columns, options, card, source)
@@ -165,11 +171,22 @@ def split_heading(cell: str, place: int) -> tuple[str, str | None]:
         raise RecordError(name, f"unit {unit!r}", "a unit that is known, such as [A], [ms], [nK]") from error
 
 
+def is_exported(names: Collection[str]) -> bool:
+    """Return whether a table is an export of a scan: its rows hold only what varied in it, of shots with a uid."""
+    return _EXPORT_ONLY.issubset(names) and "uid" in names
+
+
 class _Roles:
     """Finds the role of a column by its name: options first, then the reserved names, then the card."""
 
-    def __init__(self, options: CsvColumns, card: MachineCard | None, names: Sequence[str]) -> None:
-        self._names, self._card = frozenset(names), card
+    def __init__(
+        self,
+        options: CsvColumns,
+        card: MachineCard | None,
+        names: Sequence[str],
+        stored: Mapping[str, Role],
+    ) -> None:
+        self._names, self._card, self._stored = frozenset(names), card, stored
         self._parameters = {*_listed(options.parameters), *_listed(options.swept)}
         self._observables = set(_listed(options.observables))
         self._started = split_name(options.started)[0]
@@ -195,8 +212,10 @@ class _Roles:
         for role in _SPECIAL:
             if name == role:
                 return role
-        if known := self._by_card(name):
+        if known := self._by_card(name) or self._stored.get(name):
             return known
+        if is_exported(self._names) and self._is_export_only(name):
+            return "derived"
         if _STDERR.fullmatch(name):
             return "stderr" if self.belongs_to(name) else None
         return self._rest
@@ -205,6 +224,12 @@ class _Roles:
         """Return the observable whose standard uncertainty a column of that name holds."""
         match = _STDERR.fullmatch(name)
         return match[1] if match and match[1] in self._names else None
+
+    def _is_export_only(self, name: str) -> bool:
+        """Whether an export writes a column for people, which is not taken."""
+        match = _STDERR.fullmatch(name)
+        base = without_cloud(match[1] if match else name)
+        return name in _EXPORT_ONLY or base.endswith("_relative")
 
     def _is_derived(self, name: str) -> bool:
         """Whether the card derives a column: it is not taken, so that exported tables can be taken again."""
@@ -233,6 +258,16 @@ def _column(name: str, unit: str | None, roles: _Roles, card: MachineCard | None
 def _listed(names: Iterable[str] | str) -> list[str]:
     """Return the names stated in an option, without units; none for ``"rest"``."""
     return [] if isinstance(names, str) else [split_name(name)[0] for name in names]
+
+
+def _check_sensors(columns: tuple[Column, ...], options: CsvColumns, source: str) -> None:
+    """Refuse what looks like readings of sensors: no times of shots, but a column ``at``."""
+    no_times = options.started_at is None and all(column.role != "started" for column in columns)
+    if no_times and any(column.name == "at" for column in columns):
+        raise ChoiceNeeded(
+            f"{source}: a column 'at' and none {options.started!r}: if these are readings of sensors, take them with "
+            "--sensors (take_sensor_file); if they are shots, say --started at"
+        )
 
 
 def _check_unassigned(unknown: list[str], options: CsvColumns, source: str) -> None:

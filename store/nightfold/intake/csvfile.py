@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from pathlib import Path
 
 from nightfold.card import MachineCard
 from nightfold.errors import RecordError
 from nightfold.intake.csvcells import RowReader
-from nightfold.intake.csvcolumns import CsvColumns, read_header
+from nightfold.intake.csvcolumns import CsvColumns, Role, is_exported, read_header
 from nightfold.intake.csvrows import Row, Rows, header_cells
 from nightfold.ledger.outcome import Incoming
 
@@ -16,7 +16,11 @@ __all__ = ["CsvColumns", "read_csv"]
 
 
 def read_csv(
-    path: str | Path, *, card: MachineCard | None = None, columns: CsvColumns | None = None
+    path: str | Path,
+    *,
+    card: MachineCard | None = None,
+    columns: CsvColumns | None = None,
+    known: Mapping[str, Role] | None = None,
 ) -> Iterator[Incoming]:
     """Yield the rows of a CSV file as shot records.
 
@@ -31,6 +35,8 @@ def read_csv(
         Says which columns are parameters and which observables, and names the machine.
     columns : CsvColumns, optional
         Says what the card does not.
+    known : mapping of str to str, optional
+        What the store knows by name: ``"parameter"`` or ``"observable"``.
 
     Raises
     ------
@@ -51,8 +57,10 @@ def read_csv(
     if first is None:
         return
     cells, headed = header_cells(first, rows, options.names, source)
+    heading = read_header(cells, options, card, source, known)
+    partial = is_exported({column.name for column in heading})
     reader = RowReader(
-        read_header(cells, options, card, source),
+        heading,
         options,
         options.machine or (card.machine if card else None),
         options.first_moment(card.naive_zone if card else None),
@@ -60,19 +68,20 @@ def read_csv(
     )
     number = 0
     if not headed:
-        yield _incoming(first, reader, source, number)
+        yield _incoming(first, reader, source, number, partial)
         number += 1
     for row in rows:
-        yield _incoming(row, reader, source, number)
+        yield _incoming(row, reader, source, number, partial)
         number += 1
 
 
-def _incoming(row: Row, reader: RowReader, source: str, number: int) -> Incoming:
+def _incoming(row: Row, reader: RowReader, source: str, number: int, partial: bool) -> Incoming:
     """Return what a row holds."""
     problem = row.problem
     if problem is None:
         try:
-            return Incoming(reader.record(row.cells, number), source, row.line, row.byte)
+            record = reader.record(row.cells, number)
+            return Incoming(record, source, row.line, row.byte, partial=partial)
         except RecordError as error:
             problem = error
     return Incoming(None, source, row.line, row.byte, problem)

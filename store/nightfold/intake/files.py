@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import replace
 from pathlib import Path
 
 from nightfold.card import MachineCard
 from nightfold.errors import NotFound, RecordError
-from nightfold.intake.csvfile import CsvColumns, read_csv
+from nightfold.intake.csvcolumns import CsvColumns, Role
+from nightfold.intake.csvfile import read_csv
 from nightfold.intake.jsondocument import is_document, read_json_document
 from nightfold.intake.jsonlines import read_json_lines
 from nightfold.ledger.outcome import Incoming
@@ -19,7 +20,11 @@ CSV = (".csv", ".tsv", ".dat", ".txt")
 
 
 def read_file(
-    path: str | Path, *, columns: CsvColumns | None = None, card: MachineCard | None = None
+    path: str | Path,
+    *,
+    columns: CsvColumns | None = None,
+    card: MachineCard | None = None,
+    known: Mapping[str, Role] | None = None,
 ) -> Iterator[Incoming]:
     """Return an iterator over the records of a file, chosen by its suffix.
 
@@ -34,6 +39,8 @@ def read_file(
         How to read a table.
     card : MachineCard, optional
         The card of the machine, for tables.
+    known : mapping of str to str, optional
+        What the store knows by name, for tables: ``"parameter"`` or ``"observable"``.
 
     Raises
     ------
@@ -46,7 +53,7 @@ def read_file(
         return read_json(path)
     if columns is None or columns.delimiter is None:
         columns = replace(columns or CsvColumns(), delimiter=usual_delimiter(path))
-    return read_csv(path, card=card, columns=columns)
+    return read_csv(path, card=card, columns=columns, known=known)
 
 
 def is_table(path: str | Path) -> bool:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from sqlalchemy import Connection, Table, insert, select, update
 
@@ -56,6 +56,14 @@ class MachineNames:
     def naive_zone(self) -> ZoneInfo | None:
         """The zone in which times without an offset are read; None where the card does not opt in."""
         return self.card.naive_zone if self.card is not None else None
+
+    @property
+    def roles(self) -> dict[str, Literal["parameter", "observable"]]:
+        """What each name is, for the columns of a table."""
+        return {
+            **dict.fromkeys(self.parameters, "parameter"),
+            **dict.fromkeys(self.observables, "observable"),
+        }
 
     def settings_behind(self, name: str) -> tuple[str, ...] | None:
         """Return the parameters of which the card derives another one; None for what it does not derive."""

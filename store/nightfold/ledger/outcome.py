@@ -25,6 +25,8 @@ class Incoming:
         Offset of the line's first byte in the file.
     problem : RecordError, optional
         Why `record` is None.
+    partial : bool
+        Whether the record holds only some settings of a shot, as a row of an exported table does.
     """
 
     record: Mapping[str, Any] | None
@@ -32,6 +34,7 @@ class Incoming:
     line: int
     byte: int
     problem: RecordError | None = None
+    partial: bool = False
 
 
 @dataclass(frozen=True, slots=True)

@@ -14,6 +14,7 @@ from nightfold.ledger.amending import amend_readings, amend_shot, check_frames, 
 from nightfold.ledger.batches import batches, collector_paused
 from nightfold.ledger.checking import CheckedShot, check_shot, readings_of, sequence_name
 from nightfold.ledger.correcting import find_corrected
+from nightfold.ledger.exported import amendment_of
 from nightfold.ledger.inserting import insert_sets, insert_shots
 from nightfold.ledger.names import Names
 from nightfold.ledger.outcome import Incoming, Intake, Refused
@@ -21,7 +22,7 @@ from nightfold.ledger.rows import chunks, next_id
 from nightfold.ledger.selecting import is_double
 from nightfold.ledger.sources import SourceLog
 from nightfold.ledger.streams import StreamMemory, recall
-from nightfold.records import Amendment, parse_record
+from nightfold.records import Amendment, ShotRecord, parse_record
 from nightfold.session import Session, turn_of
 from nightfold.timestamps import now_us
 
@@ -131,6 +132,9 @@ class Writer:
             if isinstance(record, Amendment):
                 batch.checked.append((item, _Late(record)))
                 return
+            if item.partial and (late := self._of_exported(batch, record)) is not None:
+                batch.checked.append((item, late))
+                return
             machine = self._names.find(record.machine)
             key = (machine.name, sequence_name(record))
             memory = self._streams.get(key)
@@ -159,6 +163,22 @@ class Writer:
             batch.checked.append((item, shot))
         except RecordError as problem:
             batch.refused.append((item, problem))
+
+    def _of_exported(self, batch: _Batch, record: ShotRecord) -> _Late | None:
+        """Return what a row of an exported table brings to its shot; None if that is not in the store.
+
+        Raises
+        ------
+        RecordError
+        """
+        if record.uid is None:
+            return None
+        self._look_up(batch, [record.uid])
+        stored = batch.stored.get(record.uid)
+        if stored is None:
+            return None
+        machine = self._names.find(record.machine)
+        return _Late(amendment_of(batch.connection, stored, machine, record))
 
     def _check_twin(self, batch: _Batch, shot: CheckedShot) -> None:
         """Refuse a shot that differs from the one of its uid before any name that it brings is entered.

@@ -5,6 +5,7 @@ Pure functions of arrays.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -83,7 +84,7 @@ def merge_jitter(values: Floats, tolerance: float | None = None) -> tuple[Floats
     order = known[np.argsort(values[known], kind="stable")]
     ordered = values[order]
     limit = default_tolerance(ordered) if tolerance is None else tolerance
-    with np.errstate(invalid="ignore"):
+    with np.errstate(invalid="ignore", over="ignore"):
         first = np.concatenate(([True], (ordered[1:] - ordered[:-1] > limit)))
     index[order] = np.cumsum(first) - 1
     starts = np.flatnonzero(first)
@@ -94,7 +95,11 @@ def merge_jitter(values: Floats, tolerance: float | None = None) -> tuple[Floats
 def default_tolerance(values: Floats) -> float:
     """Return 1e-6 of the span of the finite values, 0 where there are none."""
     finite = values[np.isfinite(values)]
-    return JITTER * float(finite.max() - finite.min()) if len(finite) else 0.0
+    if not len(finite):
+        return 0.0
+    low, high = float(finite.min()), float(finite.max())
+    span = JITTER * (high - low)
+    return span if math.isfinite(span) else JITTER * high - JITTER * low
 
 
 def encode(values: Sequence[Any] | NDArray[Any], tolerance: float | None = None) -> Column:

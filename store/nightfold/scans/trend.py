@@ -38,8 +38,8 @@ def trend(x: Sequence[Any] | NDArray[Any], y: Sequence[float] | NDArray[Any], wi
         return ""
     place = column.codes[use] * bins // column.points
     counts = np.bincount(place, minlength=bins)
-    sums = np.bincount(place, weights=numbers[use], minlength=bins)
-    means = np.divide(sums, counts, out=np.full(bins, np.nan), where=counts > 0)
+    shares = numbers[use] / counts[place]  # a sum first could exceed the largest float
+    means = np.where(counts > 0, np.bincount(place, weights=shares, minlength=bins), np.nan)
     return "".join(_block(mean, means[counts > 0]) for mean in means)
 
 

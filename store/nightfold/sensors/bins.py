@@ -74,13 +74,21 @@ def read_bins(
 
     Bins of an hour and more are made of whole hours, which are not unpacked for it: where the span begins or ends
     within an hour, that hour counts whole.
+
+    Raises
+    ------
+    ValueError
+        If no bin is allowed.
     """
+    if most < 1:
+        raise ValueError(f"bins: found {most}, wanted at least 1")
     first, last = _ends(connection, sensor_id, since_us, until_us)
     if first is None or last is None:
         none, nothing = np.empty(0), np.empty(0, np.int64)
         return Bins(nothing, HOUR_US, nothing, none, none, none)
     start = first if since_us is None else max(first, since_us)
     stop = last + 1 if until_us is None else min(last + 1, until_us)
+    most = max(most, 2) if start < 0 < stop else most  # bins begin in 1970: one cannot reach over it
     width = next(width for width in _widths() if (stop - 1) // width - start // width < most)
     read = _single if width < HOUR_US else _heads
     return _binned(read(connection, sensor_id, start, stop), width)
