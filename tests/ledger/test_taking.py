@@ -379,7 +379,9 @@ def test_null_in_a_whole_record_does_not_take_a_value_back(store: Store) -> None
     assert outcome.amended == 1
     assert store.shot("a").observables["t"].value == 5.0
     assert store.shot("a").observables["w"].state == "null"
-    store.take([{"uid": "a", "observables": {"t": None}}])  # by uid alone it is meant
+    store.take([{"uid": "a", "observables": {"t": None}}])
+    assert store.shot("a").observables["t"].value == 5.0
+    store.take([{"uid": "a", "observables": {"t": None}, "derivation": "fit"}])  # an analysis found no value
     assert store.shot("a").observables["t"].state == "null"
 
 
