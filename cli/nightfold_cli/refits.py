@@ -9,7 +9,7 @@ from collections.abc import Sequence
 from itertools import zip_longest
 from typing import TYPE_CHECKING, Any
 
-from nightfold.concise import concise
+from nightfold.concise import NOT_DETERMINED
 from nightfold_cli.estimates import plain_rows, value_text
 from nightfold_cli.failures import UsageError
 from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines
@@ -50,6 +50,8 @@ class _Again(Action):
 
 def add_again(parser: ArgumentParser, key: Action, models: Action) -> None:
     """Declare the option."""
+    indent = " " * len("usage: ")
+    parser.usage = f"{parser.prog} KEY MODEL [MODEL ...] [option ...]\n{indent}{parser.prog} --again [KEY]"
     parser.add_argument(
         "--again",
         action=_Again,
@@ -210,9 +212,7 @@ def _value(fit: KeptFit | None, name: str) -> str:
     estimate = _of(fit, name)
     if estimate is None:
         return "-"
-    if estimate.fixed or not math.isfinite(estimate.stderr):
-        return value_text(estimate, fixed=estimate.fixed)
-    return concise(estimate.value, estimate.stderr)
+    return value_text(estimate, fixed=estimate.fixed)
 
 
 def _of(fit: KeptFit | None, name: str) -> KeptEstimate | None:
@@ -222,6 +222,8 @@ def _of(fit: KeptFit | None, name: str) -> KeptEstimate | None:
 def _moved(before: KeptFit | None, after: KeptFit, name: str) -> str:
     """Return by how much an estimate moved, in units of the stderr it had."""
     old, new = _of(before, name), after.estimates[name]
+    if old is not None and NOT_DETERMINED in (_value(before, name), _value(after, name)):
+        return ""
     if old is None or not (
         old.stderr > 0 and math.isfinite(old.stderr) and math.isfinite(new.value - old.value)
     ):

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 from nightfold.concise import short
@@ -44,11 +45,22 @@ def order_mark(scan: Scan, axis: Axis) -> str:
     return _MARKS.get(scan.order.get(axis.parameter, ""), "")
 
 
-def order_line(scan: Scan) -> str:
-    """Return what to know about the order in which the points were taken; nothing where it was mixed."""
+def order_line(scan: Scan, values: Sequence[float] = ()) -> str:
+    """Return what to know about the order in which the points were taken; nothing where it was mixed.
+
+    Parameters
+    ----------
+    values : sequence of float
+        Of the only axis, one a shot in time order; empty where there are several.
+    """
     found = [f"{order} {name}" for name, order in scan.order.items() if order != "mixed"]
     if not found:
         return ""
+    back = -1 if "rising" in scan.order.values() else 1
+    steps = [back * (later - one) for one, later in pairwise(values)]
+    passes = 1 + sum(step > max(map(abs, steps)) / 2 for step in steps)
+    if passes > 1:
+        return f"{found[0]}, {passes} times over: drift from one pass to the next shows as scatter"
     return f"in order of {' and of '.join(found)}: drift would look like a feature; better shuffle the points"
 
 

@@ -174,3 +174,11 @@ def test_hostile_notes_are_shown_as_they_are(where: Path, run: Run, on_screen: S
         assert not {"\x1b", "\x07", "\u202e"} & set(text)
         assert max(map(len, text.split("\n")[1:])) <= width
     assert "[bold]not[/bold]" in on_screen("notes", "--store", where, width=120).replace("\n", "")
+
+
+def test_what_is_no_text_is_refused(heron: Path, run: Run, monkeypatch: pytest.MonkeyPatch) -> None:
+    answer = run("--store", heron / "heron.sqlite", "note", "caf\udce9")
+    assert (answer.code, "found bytes that are not UTF-8" in answer.err) == (2, True)
+    monkeypatch.setattr("sys.stdin", io.TextIOWrapper(io.BytesIO(b"\xff\xfe bad"), encoding="utf-8"))
+    answer = run("--store", heron / "heron.sqlite", "note", "-")
+    assert (answer.code, "found bytes that are not UTF-8" in answer.err) == (2, True)

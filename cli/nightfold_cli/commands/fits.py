@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from argparse import ArgumentParser, Namespace
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING
 
@@ -21,6 +22,8 @@ from nightfold_cli.settings import setting
 
 if TYPE_CHECKING:
     from nightfold.fits.keptfit import KeptFit
+    from nightfold.scans.scan import Scan
+    from nightfold.store import Store
 
 HELP = "list the fits that were kept"
 EXAMPLES = ("nightfold fits", "nightfold fits loss-coarse", "nightfold fits --json")
@@ -42,6 +45,7 @@ def run(args: Namespace) -> int:
         scan = None if args.key is None else named_scan(store, args.key, screen)
         kept = sorted(store.fits(scan.id if scan else None), key=lambda fit: (fit.at, fit.id))
         kept = named_fits(store, kept)
+        empty = _EMPTY if kept or scan is None else _none_of(store, scan)
         times = local_times(store)
         listed = the_last(args, screen, kept)
         notes = notes_of_fits(store, [fit.id for fit in listed])
@@ -49,9 +53,9 @@ def run(args: Namespace) -> int:
         screen.answer({"fits": [{**kept_entry(fit), "notes": notes.get(fit.id, [])} for fit in listed]})
         return 0
     if not screen.terminal:
-        _tabulate(screen, listed, times, notes)
+        _tabulate(screen, listed, times, notes, empty)
         return 0
-    _draw(screen, listed, times, notes)
+    _draw(screen, listed, times, notes, empty)
     if any(fit.stale for fit in listed):
         screen.note(
             "stale: the shots of the scan have changed since; 'nightfold fit --again' brings it up to date"
@@ -60,7 +64,21 @@ def run(args: Namespace) -> int:
     return 0
 
 
-def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]]) -> None:
+def _none_of(store: Store, scan: Scan) -> str:
+    """Return that a scan has no fits, and which other rounds of its label have some."""
+    rounds = Counter(
+        fit.scan_id
+        for fit in store.fits()
+        if scan.label is not None and fit.scan_key.startswith(f"{scan.label}#")
+    )
+    own = [other for other in store.scans() if other.label == scan.label and rounds[other.id]]
+    others = [f"{other.key} has {rounds[other.id]}" for other in own if other.sequence == scan.sequence]
+    return f"none of {scan.key}; {', '.join(others)}" if others else _EMPTY
+
+
+def _draw(
+    screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]], empty: str
+) -> None:
     """Draw a few lines a fit."""
     moments = [times.local(fit.at) for fit in fits]
     columns = [
@@ -84,11 +102,11 @@ def _draw(screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Map
         ]
         for fit, when in zip(fits, compact(moments), strict=True)
     ]
-    screen.table(columns, rows, empty=_EMPTY, spaced=True)
+    screen.table(columns, rows, empty=empty, spaced=True)
 
 
 def _tabulate(
-    screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]]
+    screen: Screen, fits: Sequence[KeptFit], times: LocalTimes, notes: Mapping[int, list[str]], empty: str
 ) -> None:
     """Write a line an estimate, for programs."""
     heads = (
@@ -116,7 +134,7 @@ def _tabulate(
         for fit in fits
         for row in estimates.plain_rows(fit.estimates)
     ]
-    screen.table([Column(head) for head in heads], rows, empty=_EMPTY)
+    screen.table([Column(head) for head in heads], rows, empty=empty)
 
 
 def _estimates(fit: KeptFit) -> list[str]:

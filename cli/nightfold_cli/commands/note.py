@@ -29,6 +29,7 @@ EXAMPLES = (
 
 def add_arguments(parser: ArgumentParser) -> None:
     """Declare the arguments."""
+    parser.usage = f"{parser.prog} TEXT [TEXT ...] [option ...]"
     parser.add_argument("text", metavar="TEXT", nargs="+", help="what to write down; - reads it from stdin")
     what = add_subject(parser)
     what.add_argument("--last", choices=("shot", "scan", "fit"), help="on the newest of these")
@@ -39,7 +40,7 @@ def add_arguments(parser: ArgumentParser) -> None:
 def run(args: Namespace) -> int:
     """Write the note, by default on tonight."""
     screen = Screen.here(args.json)
-    text = sys.stdin.read() if args.text == ["-"] else " ".join(args.text)
+    text = _typed(args.text)
     if not text.strip():
         raise UsageError("note: found no text, wanted what to write down")
     if "\0" in text:
@@ -53,6 +54,24 @@ def run(args: Namespace) -> int:
         return 0
     screen.text(f"noted on {about(note)}, {times.full(note.at, note.machine)}")
     return 0
+
+
+def _typed(words: list[str]) -> str:
+    """Return what is to be noted.
+
+    Raises
+    ------
+    UsageError
+        If it is not UTF-8.
+    """
+    try:
+        text = sys.stdin.read() if words == ["-"] else " ".join(words)
+        text.encode()  # signs of an argument that are no UTF-8 stand in it as halves of surrogate pairs
+    except UnicodeError:
+        raise UsageError(
+            "note: found bytes that are not UTF-8, wanted text; convert it first, or type it anew"
+        ) from None
+    return text
 
 
 def _subject(store: Store, args: Namespace, screen: Screen) -> dict[str, Any]:

@@ -35,6 +35,8 @@ from nightfold_cli.scantext import (
 from nightfold_cli.settings import aligned
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from nightfold.scans.scan import Scan
 
 HELP = "show one scan: its points and a chart"
@@ -83,7 +85,7 @@ def run(args: Namespace) -> int:
         screen.answer({"scan": entry(scan, name, notes), "relative": related, "points": listed})
         return 0
     if screen.terminal:
-        _header(screen, scan, name, times, arranged, notes.get(f"scan {scan.id}", []), related)
+        _header(screen, scan, name, times, arranged, notes.get(f"scan {scan.id}", []), related, table)
     if not screen.terminal or args.points or len(points) <= _MOST_POINTS:
         _tabulate(screen, scan, points, observables, units)
     else:
@@ -106,8 +108,11 @@ def _header(
     arranged: Sequence[str],
     notes: Sequence[str],
     related: Mapping[str, Any] | None,
+    table: pd.DataFrame,
 ) -> None:
     """Say what the scan is."""
+    order = order_line(scan, _only_axis(scan, table))
+    placeless = _placeless(scan, table)
     origin = {"label": "by label", "found": "found by itself", "declared": "declared"}.get(
         scan.origin, scan.origin
     )
@@ -122,12 +127,34 @@ def _header(
             *(("axis", f"{axis_line(axis)}, {counted(axis.points, 'point')}") for axis in scan.axes),
             ("shots", f"{scan.shots}, {where}{aside}"),
             ("taken", f"{first:%Y-%m-%d %H:%M:%S}{until}"),
-            *([("order", order_line(scan))] if order_line(scan) else []),
+            *([("order", order)] if order else []),
+            *([("no place", placeless)] if placeless else []),
             *([("relative", relative_line(related))] if related else []),
             *(("by hand", text) for text in arranged),
             *note_fields(notes, screen),
         ]
     )
+
+
+def _only_axis(scan: Scan, table: pd.DataFrame) -> list[float]:
+    """Return the values of the one axis that a scan has, a shot each; nothing where there are several, or words."""
+    if len(scan.axes) != 1 or scan.axes[0].low is None:
+        return []
+    values = table[scan.axes[0].parameter]
+    return [float(value) for value in values if value is not None and math.isfinite(value)]
+
+
+def _placeless(scan: Scan, table: pd.DataFrame) -> str:
+    """Return how many shots have no place on an axis: no value there, or one that is not finite."""
+    found = []
+    for axis in scan.axes:
+        values = table[axis.parameter].tolist()
+        lost = sum(
+            value is None or (isinstance(value, float) and not math.isfinite(value)) for value in values
+        )
+        if lost:
+            found.append(f"{counted(lost, 'shot')} without a finite {axis.parameter}")
+    return ", ".join(found)
 
 
 def _tabulate(

@@ -318,7 +318,7 @@ def _show_derived(screen: Screen, shot: ShotView) -> None:
 
 def _mark(names: Collection[str]) -> list[Column]:
     """Return the column that marks what changed since the shot was taken, where anything did."""
-    return [Column("since", plain_name="changed")] if names else []
+    return [Column("changed")] if names else []
 
 
 def _marked(name: str, names: Collection[str], mark: str) -> list[str]:

@@ -115,7 +115,7 @@ def undo_arrangement(connection: Connection, number: int, by: str | None) -> Arr
     later = _later(connection, number)
     if later:
         raise ChoiceNeeded(
-            f"arrangement {number}: arrangement {', '.join(map(str, later))} moved the same shots later; "
+            f"arrangement {number}: {'arrangements' if len(later) > 1 else 'arrangement'} {', '.join(map(str, later))} moved the same shots later; "
             f"undo {later[-1]} first"
         )
     row, shot, whole = tables.arranged, tables.shot, tables.arrangement
