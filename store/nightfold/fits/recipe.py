@@ -171,7 +171,7 @@ def _rightful(layout: Layout, points: Points, members: Members) -> Bools:
     theta = members.theta[np.arange(len(members.theta)), members.weight.argmax(axis=1)]
     floors = np.array([one.floor for one in layout.shape.theta], dtype=bool)
     ceilings = np.array([one.ceiling for one in layout.shape.theta], dtype=bool)
-    return (floors & (theta <= points.data.low)) | (ceilings & (theta >= points.data.high))
+    return np.asarray((floors & (theta <= points.data.low)) | (ceilings & (theta >= points.data.high)))
 
 
 def _unlike(points: Points, members: Members, q: Floats, fixed: Bools) -> Floats:

@@ -116,7 +116,7 @@ def candidates(layout: Layout, points: Points, z: Floats) -> Bools:
     out = (size > CANDIDATE) & (rank < most[:, None])
     rows = np.flatnonzero(out.any(axis=1))
     for row in rows:
-        u = points.data.u[min(row, len(points.data.u) - 1)]
+        u = points.data.u[min(int(row), len(points.data.u) - 1)]
         used = points.used[row]
         _, where = np.unique(u[used], return_inverse=True)
         shots = np.bincount(where)
@@ -126,7 +126,7 @@ def candidates(layout: Layout, points: Points, z: Floats) -> Bools:
         left = len(shots) - np.count_nonzero((lost == shots) & ~whole)
         if left < max(layout.free_count, 2):
             out[row] = False
-    return out
+    return np.asarray(out)
 
 
 def confirm(layout: Layout, points: Points, members: Members, out: Bools) -> Bools:
