@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
-from tests.calibration.shapes import Array, Spec, Values, height, names_of, total
+from tests.calibration.shapes import Array, Spec, Values, height, names_of, rates_of, total
 
 STEP = 1e-5
 LEAST_FEATURE = 9.0
@@ -47,16 +47,21 @@ def _moved(spec: Spec, name: str, values: Values) -> tuple[Values, Values, Array
 def burden(spec: Spec, background: str, x: Array, values: Values, sigma: Array) -> Array:
     """Return how far a scan is from telling its numbers, (C,): up to 1 it is identifiable."""
     least = bounds(spec, background, x, values, sigma)
-    parts = [
-        least[name] / (limit * (values["fwhm"] if name == "center" else 1.0))
-        for name, limit in spec.limits.items()
-    ]
+    parts = [least[name] / (limit * measure(spec, name, values)) for name, limit in spec.limits.items()]
     parts += [
         least[name] / (0.3 * height(spec, values)) for name in ("amplitude", "contrast") if name in least
     ]
     parts.append(LEAST_FEATURE / np.maximum(standing_out(spec, background, x, values, sigma), 1e-300))
     shown = sees_line(x, values) if spec.family == "line" else sees_wave(spec, x, values)
     return np.where(shown, np.max(parts, axis=0), np.inf)
+
+
+def measure(spec: Spec, name: str, values: Values) -> Array | float:
+    """Return what the uncertainty of a name is counted in."""
+    if name == "center":
+        return values["fwhm"]
+    rates = rates_of(spec.units)
+    return sum((values[rate] for rate in rates), np.zeros(1)) if name in rates and len(rates) > 1 else 1.0
 
 
 def standing_out(spec: Spec, background: str, x: Array, values: Values, sigma: Array) -> Array:

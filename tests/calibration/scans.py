@@ -30,8 +30,8 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from tests.calibration.knowing import bounds, burden
-from tests.calibration.shapes import SPECS, Array, Spec, Values, height, names_of, total
+from tests.calibration.knowing import bounds, burden, measure
+from tests.calibration.shapes import SPECS, Array, Spec, Values, height, names_of, rates_of, total
 
 DEVELOPMENT, REPORTED = 0, 10_000
 SIZES = (16, 30, 60)
@@ -163,6 +163,8 @@ def _background(rng: np.random.Generator, spec: Spec, kind: str) -> str:
     """Return the default background mostly, another now and then."""
     other = {"none": ("flat", "flat"), "flat": ("sloped", "none" if spec.family == "line" else "sloped")}
     common = 0.65 if spec.default == "none" else 0.8
+    if len(rates_of(spec.units)) > 1:
+        common = 0.9
     return spec.default if rng.random() < common or kind in HOPELESS else str(rng.choice(other[spec.default]))
 
 
@@ -250,7 +252,7 @@ def _untold(
     if spec.family == "wave":
         return np.arange(rows)
     least = bounds(spec, background, u, values, sigma)
-    spread = np.max([least[name] for name in spec.limits], axis=0)
+    spread = np.max([least[name] / measure(spec, name, values) for name in spec.limits], axis=0)
     return np.concatenate([np.flatnonzero(spread >= np.log(2)), np.argsort(-spread)])[:rows]
 
 

@@ -15,8 +15,9 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from tests.calibration.knowing import measure
 from tests.calibration.scans import Batch
-from tests.calibration.shapes import Array
+from tests.calibration.shapes import SPECS, Array, rates_of
 
 from nightfold import fit_many
 from nightfold.errors import NightfoldError
@@ -38,8 +39,8 @@ TOLERANCE = {
     "asymmetry": 0.5,
     "phase": 1.0,
 }
-"""In the coordinate of the name. A centre's is half a width, a frequency's 1/2 window, a damping's 1 window, an
-amplitude's or offset's half the feature, a slope's half the feature over the window."""
+"""In the coordinate of the name. A centre's is half a width, that of one of two rates half their sum, a frequency's
+1/2 window, a damping's 1 window, an amplitude's or offset's half the feature, a slope's that over the window."""
 
 
 @dataclass
@@ -144,10 +145,10 @@ def _coordinate(link: str, value: Array) -> Array:
 def _tolerance(batch: Batch, name: str) -> Array | float:
     """Return how far off a number may be, in its coordinate."""
     window = float(np.ptp(batch.x))
+    if name in ("center", *rates_of(batch.truth)) and batch.links[name] == "linear":
+        return np.asarray(0.5 * measure(SPECS[batch.model], name, batch.truth))
     if name in TOLERANCE:
         return float(TOLERANCE[name])
-    if name == "center":
-        return np.asarray(0.5 * batch.truth["fwhm"])
     if name in ("frequency", "decay_time"):
         return (0.5 if name == "frequency" else 1.0) / window
     tall = batch.truth.get("amplitude", batch.truth.get("contrast", np.ptp(batch.Y, axis=1)))

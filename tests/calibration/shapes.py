@@ -6,7 +6,7 @@ turns into that of a scan with another origin and scale.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -25,8 +25,8 @@ class Spec:
     """A curve: its function of x (n,) and values (C, 1), and how its numbers count.
 
     ``units``: position, x, 1/x, y, rad or "" by name. ``links``: the coordinate in which a number is compared.
-    ``limits``: the largest standard uncertainty, in that coordinate, at which a scan still *tells* the number
-    (a position's in units of the width; frequency's in 1/window); amplitudes are added by `all_limits`.
+    ``limits``: the largest standard uncertainty, in that coordinate, at which a scan still *tells* the number: a
+    position's in widths, a frequency's in 1/window, that of one of two rates in their sum (either may be zero).
     """
 
     name: str
@@ -252,10 +252,16 @@ def _decay(
     default: str = "none",
     **units: str,
 ) -> Spec:
-    return Spec(name, curve, draw, units, dict.fromkeys(limits, "log"), limits, default)
+    links = dict.fromkeys(limits, "linear" if len(rates_of(units)) > 1 else "log")
+    return Spec(name, curve, draw, units, links, limits, default)
 
 
-RATE = 0.16
+def rates_of(names: Iterable[str]) -> list[str]:
+    """Return which names are rates of a loss."""
+    return [name for name in names if name.endswith("body_rate")]
+
+
+RATE, SHARED = 0.16, 0.16
 SPECS = {
     spec.name: spec
     for spec in (
@@ -287,7 +293,7 @@ SPECS = {
             "one-two-body",
             _one_two_body,
             _draw_mixed("two_body_rate", 0.5, 20.0),
-            {"one_body_rate": 0.35, "two_body_rate": 0.35},
+            {"one_body_rate": SHARED, "two_body_rate": SHARED},
             amplitude="y",
             one_body_rate="1/x",
             two_body_rate="1/x",
@@ -296,7 +302,7 @@ SPECS = {
             "one-three-body",
             _one_three_body,
             _draw_mixed("three_body_rate", 0.5, 40.0),
-            {"one_body_rate": 0.35, "three_body_rate": 0.35},
+            {"one_body_rate": SHARED, "three_body_rate": SHARED},
             amplitude="y",
             one_body_rate="1/x",
             three_body_rate="1/x",
