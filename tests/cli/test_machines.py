@@ -48,7 +48,7 @@ def test_merged(both: Path, run: Run) -> None:
     assert answer.code == 0
     assert answer.out.splitlines() == [
         "3 shots of Heron are heron's, in 1 scan.",
-        "Sequences: 1, of both 1. Parameters, observables and sensors: 1, of both 1.",
+        "Sequences: 1, 1 of them at both. Parameters, observables and sensors: 1, 1 of them at both.",
         "The store as it was: nightfold.sqlite.before-merge",
     ]
     with open_store(both) as store:

@@ -123,3 +123,14 @@ def test_a_scan_that_is_gone_is_not_taken_for_another(anywhere: str) -> None:
         (split, undone) = store.history("shot008").events[1:]
     assert (split.kind, split.old, split.new) == ("split", "loss#1", None)
     assert (undone.kind, undone.old, undone.new) == ("split undone", None, "loss#1")
+
+
+def test_a_join_in_which_the_shot_stayed_is_not_told(anywhere: str) -> None:
+    with open_store(anywhere) as store:
+        store.take([shot(n, scan="loss" if n < 6 else "los") for n in range(12)])
+        store.join_scans(["loss", "los"], reason="one label")
+        stayed, moved = (store.history(uid).events for uid in ("shot002", "shot008"))
+        assert [event.kind for event in stayed] == ["taken"]
+        assert [event.kind for event in moved] == ["taken", "join"]
+        store.undo_arrangement(int(store.arrangements()["number"].iloc[0]))
+        assert [event.kind for event in store.history("shot002").events] == ["taken"]

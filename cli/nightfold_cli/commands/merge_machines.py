@@ -75,8 +75,8 @@ def _tell(screen: Screen, report: MergeReport) -> None:
         f"{counted(report.shots, 'shot')} of {report.old} {now} {report.into}'s, in {counted(report.scans, 'scan')}."
     )
     screen.text(
-        f"Sequences: {report.sequences}, of both {report.shared_sequences}. "
-        f"Parameters, observables and sensors: {report.names}, of both {report.shared_names}."
+        f"Sequences: {report.sequences}, {report.shared_sequences} of them at both. "
+        f"Parameters, observables and sensors: {report.names}, {report.shared_names} of them at both."
     )
     if report.doubles:
         screen.text(

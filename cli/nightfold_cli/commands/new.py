@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from nightfold_cli.failures import UsageError
 from nightfold_cli.render import Screen
+from nightfold_cli.scantext import counted
 
 if TYPE_CHECKING:
     from nightfold.card import MachineCard
@@ -72,9 +73,10 @@ def _advise(screen: Screen, path: Path | None, card: MachineCard | None, *, writ
             f"A card to fill in: {path}. When it says what you want, 'nightfold take --card {path} …'."
         )
     elif card:
-        screen.text(
-            f"Machine {card.machine}: {len(card.parameters)} parameters, {len(card.observables)} observables."
-        )
+        counts = [counted(len(card.parameters), "parameter"), counted(len(card.observables), "observable")]
+        if card.derived:
+            counts.append(f"{len(card.derived)} derived")
+        screen.text(f"Machine {card.machine}: {', '.join(counts)}.")
     screen.note("Next: nightfold take FILE…")
 
 

@@ -250,7 +250,7 @@ def _arrangements(connection: Connection, shot: Row[Any]) -> Iterator[ShotEvent]
     query = (
         select(row.c.from_scan, row.c.to_scan, whole)
         .join(whole, whole.c.id == row.c.arrangement_id)
-        .where(row.c.shot_id == shot.id)
+        .where(row.c.shot_id == shot.id, row.c.from_scan != row.c.to_scan)
         .order_by(whole.c.id)
     )
     for item in connection.execute(query).all():
