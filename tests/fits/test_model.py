@@ -18,6 +18,7 @@ lmfit_models: Any = pytest.importorskip("lmfit").models
 
 Array = NDArray[np.float64]
 DECAY = EXAMPLES["exponential"]
+PLAIN: dict[str, Any] = {"weights": "equal", "robust": False}
 
 
 def decay(x: Array, height: float, tau: float) -> Array:
@@ -28,14 +29,27 @@ def decay(x: Array, height: float, tau: float) -> Array:
 def test_plain_function_gives_what_the_built_in_model_gives(linear: tuple[str, ...] | None) -> None:
     y = DECAY.noisy(1, 0.05)
     start = {"tau": 5.0} if linear != () else {"tau": 5.0, "height": 1.0}
-    mine = fit_curve(TIME, y, Model(decay, linear=linear, start=start), unit_x="ms")
-    built_in = fit_curve(TIME, y, "exponential")
+    mine = fit_curve(TIME, y, Model(decay, linear=linear, start=start), unit_x="ms", **PLAIN)
+    built_in = fit_curve(TIME, y, "exponential", **PLAIN)
     assert mine.model == "decay"
     for name, twin in (("height", "amplitude"), ("tau", "lifetime")):
         assert mine.estimates[name].value == pytest.approx(built_in.estimates[twin].value, rel=1e-7)
         assert mine.estimates[name].stderr == pytest.approx(built_in.estimates[twin].stderr, rel=1e-6)
     assert mine.predict(TIME) == pytest.approx(built_in.predict(TIME))
     assert list(mine.covariance.index) == ["height", "tau"]
+
+
+def test_the_full_recipe_does_with_a_plain_function_what_it_does_with_the_built_in_model() -> None:
+    y = DECAY.curve() * (1 + 0.05 * np.random.default_rng(3).normal(size=len(TIME)))
+    y[9] += 1.0
+    mine = fit_curve(TIME, y, Model(decay, start={"tau": 5.0}))
+    built_in = fit_curve(TIME, y, "exponential")
+    assert mine.outliers == built_in.outliers == (9,)
+    for name, twin in (("height", "amplitude"), ("tau", "lifetime")):
+        one, other = mine.estimates[name], built_in.estimates[twin]
+        assert one.value == pytest.approx(other.value, abs=0.02 * other.stderr)
+        assert one.stderr == pytest.approx(other.stderr, rel=0.02)
+        assert one.interval(0.6827) == pytest.approx(other.interval(0.6827), abs=0.1 * other.stderr)
 
 
 def test_start_may_be_worked_out_from_the_data_or_given_late() -> None:
@@ -49,12 +63,18 @@ def test_start_may_be_worked_out_from_the_data_or_given_late() -> None:
 def test_fixed_and_background() -> None:
     y = DECAY.noisy(1, 0.02) + 0.7
     result = fit_curve(
-        TIME, y, Model(decay, start={"tau": 8.0}), background="flat", fixed={"height": 2.0}, unit_y="atoms"
+        TIME,
+        y,
+        Model(decay, start={"tau": 8.0}),
+        background="flat",
+        fixed={"height": 2.0},
+        unit_y="atoms",
+        **PLAIN,
     )
     assert result.estimates["height"].stderr == 0.0
     assert result.estimates["offset"].value == pytest.approx(0.7, abs=0.05)
     assert result.estimates["offset"].unit == "atoms"
-    twin = fit_curve(TIME, y, "exponential", background="flat", fixed={"amplitude": 2.0})
+    twin = fit_curve(TIME, y, "exponential", background="flat", fixed={"amplitude": 2.0}, **PLAIN)
     assert result.estimates["tau"].stderr == pytest.approx(twin.estimates["lifetime"].stderr, rel=1e-5)
 
 
@@ -69,8 +89,8 @@ def test_line_at_a_huge_offset_with_numeric_derivatives() -> None:
     def line(x: Array, c: float, w: float, a: float, o: float) -> Array:
         return np.asarray(o + a / (1 + (2 * (x - c) / w) ** 2))
 
-    mine = fit_curve(x, y, Model(line, start={"c": 384.23e12, "w": 5e6}))
-    built_in = fit_curve(x, y, "lorentzian")
+    mine = fit_curve(x, y, Model(line, start={"c": 384.23e12, "w": 5e6}), **PLAIN)
+    built_in = fit_curve(x, y, "lorentzian", **PLAIN)
     assert mine.estimates["c"].value == pytest.approx(built_in.estimates["center"].value, abs=10.0)
     assert mine.estimates["c"].stderr == pytest.approx(built_in.estimates["center"].stderr, rel=1e-5)
 
@@ -117,7 +137,7 @@ def test_lmfit_model_with_its_own_guess() -> None:
     y = example.noisy(5, 0.03) - 1.1
     model = lmfit_models.LorentzianModel()
     theirs = model.fit(-y, model.guess(-y, x=example.x), x=example.x)
-    mine = fit_curve(example.x, -y, model)
+    mine = fit_curve(example.x, -y, model, **PLAIN)
     assert set(mine.estimates) == {"amplitude", "center", "sigma"}
     for name, estimate in mine.estimates.items():
         assert estimate.value == pytest.approx(theirs.params[name].value, rel=1e-4)
@@ -129,8 +149,8 @@ def test_composite_lmfit_model_with_prefix() -> None:
     y = example.noisy(5, 0.03)
     model = lmfit_models.GaussianModel(prefix="line_") + lmfit_models.LinearModel(prefix="back_")
     start = {"line_center": 32.0, "line_sigma": 0.7}
-    mine = fit_curve(example.x, y, model, start=start)
-    built_in = fit_curve(example.x, y, "gaussian", background="sloped")
+    mine = fit_curve(example.x, y, model, start=start, **PLAIN)
+    built_in = fit_curve(example.x, y, "gaussian", background="sloped", **PLAIN)
     assert mine.estimates["line_center"].value == pytest.approx(built_in.estimates["center"].value, rel=1e-7)
     assert mine.estimates["back_slope"].stderr == pytest.approx(built_in.estimates["slope"].stderr, rel=1e-4)
 

@@ -81,10 +81,11 @@ class Outcome:
         for group in self.groups:
             lost = self.outlier[group.rows].any(axis=1)
             if not lost.all():
-                p[group.rows] = group.feature_p(self.variance[group.rows])
+                p[group.rows] = group.feature_p(self.value[group.rows])
             for row in np.flatnonzero(lost):
-                left = ~self.outlier[group.rows[row]][group.place[row]]
-                p[group.rows[row]] = group.part(int(row), left).feature_p(self.variance[group.rows[row]])[0]
+                place = group.rows[row]
+                left = ~self.outlier[place][group.place[row]]
+                p[place] = group.part(int(row), left).feature_p(self.value[place][None])[0]
         return p
 
 

@@ -8,6 +8,7 @@ from functools import cached_property
 
 import numpy as np
 
+from nightfold.fits.curve_function import evaluate
 from nightfold.fits.engine.arrays import Bools, Floats, Ints
 from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.feature import constant_p, permutation_p
@@ -151,13 +152,15 @@ class Group:
         given = self.request.layout.fixed_theta(self.request.fixed, self.data.frame.take(np.arange(1)))[0]
         return np.where(np.isfinite(given), given, theta)
 
-    def feature_p(self, variance: Floats) -> Floats:
-        """Return the p value of "nothing but background" of each data set, residual variances given."""
+    def feature_p(self, value: Floats) -> Floats:
+        """Return the p value of "nothing but background" of each data set, reported values (b, R) given."""
         layout = self.request.layout
         if not layout.shape.searchable:
-            spare = self.data.u.shape[1] - layout.free_count
-            sse = variance / self.data.frame.ys**2 * spare
-            return constant_p(self.data.z, self.roots, sse, layout.free_count)
+            curves = [
+                evaluate(layout, self.data.u[0], dict(zip(layout.names, v, strict=True))) for v in value
+            ]
+            left = self.data.z - np.array(curves) * self.roots
+            return constant_p(self.data.z, self.roots, (left**2).sum(axis=1), layout.free_count)
         null = "sloped" if layout.background == "sloped" else "flat"
         same = layout.background == null and layout.all_columns_free and not self.request.start
         grid = self.start_grid if same else self.grid(null, start=False)
