@@ -160,12 +160,14 @@ def make_batch(model: str, n: int, kind: str, seed: int, rows: int = ROWS) -> Ba
 
 
 def _background(rng: np.random.Generator, spec: Spec, kind: str) -> str:
-    """Return the default background mostly, another now and then."""
+    """Return the default background mostly, another now and then; a slope under a Landau-Zener curve is ambiguous."""
     other = {"none": ("flat", "flat"), "flat": ("sloped", "none" if spec.family == "line" else "sloped")}
     common = 0.65 if spec.default == "none" else 0.8
     if len(rates_of(spec.units)) > 1:
         common = 0.9
-    return spec.default if rng.random() < common or kind in HOPELESS else str(rng.choice(other[spec.default]))
+    if rng.random() < common or kind in HOPELESS or spec.name == "landau-zener":
+        return spec.default
+    return str(rng.choice(other[spec.default]))
 
 
 # --- where the points are ----------------------------------------------------------------------------------
