@@ -18,7 +18,7 @@ THETA = {
     "gaussian": [0.07, -1.1],
     "voigt": [0.07, -1.1, 0.4],
     "rabi-line": [0.07, -1.1],
-    "asymmetric-lorentzian": [0.07, -1.1, 0.6],
+    "asymmetric-lorentzian": [0.07, -1.1, -0.6],
     "exponential": [0.9],
     "two-body": [0.9],
     "three-body": [0.9],

@@ -160,14 +160,15 @@ def solve(
     fitted = np.flatnonzero(layout.free_theta)
     active, sets, damping = np.arange(len(theta)), data, np.full(len(theta), 1e-3)
     for count in range(most):
-        step, promise, held = propose(layout, sets, here, damping)
-        promise *= 1.0 + damping
+        step, pulled, held = propose(layout, sets, here, damping)
+        promise = pulled * (1.0 + damping)
         trial = linearise(layout, sets, here.theta + step)
         better = trial.sse <= here.sse
+        kept = (here.sse - trial.sse) / np.maximum(pulled, 1e-300)
         here = trial if better.all() else here.replace(better, trial)
         stuck = ~better & ((promise <= 1e-11 * here.sse) | (damping > 1e12))
         done = (promise <= tolerance * here.sse) | (here.sse <= exact[active]) | stuck
-        damping = np.where(better, np.maximum(damping * 0.1, 1e-12), damping * 8.0)
+        damping = next_damping(damping, better, kept)
         if done.any() or count == most - 1:
             best[active], sse[active] = here.theta, here.sse
             converged[active] = done & (damping <= 1e12) & np.isfinite(here.sse)
@@ -179,8 +180,23 @@ def solve(
     return Solution(best, sse, converged, bound)
 
 
+def next_damping(damping: Floats, better: Bools, kept: Floats) -> Floats:
+    """Return the damping after a step that kept this share of its promise.
+
+    A step of the right length keeps all of it, one that is r times too long ``2 - r``. Steps that go too far come
+    from residuals large enough to bend the sum of squares; without more damping they go to and fro for long.
+    """
+    easier = np.where((kept > 1.3) | (damping < 0.01), 0.1, 0.5)
+    factor = np.where(kept < 0.7, 4.0, easier)
+    return np.where(
+        better,
+        np.maximum(damping * factor, np.where(kept < 0.7, 0.1, 1e-12)),
+        np.maximum(damping * 8.0, 1e-3),
+    )
+
+
 def propose(layout: Layout, data: DataSets, here: Point, damping: Floats) -> tuple[Floats, Floats, Bools]:
-    """Return the damped step in theta, the fall it promises, and which free theta are held at a bound."""
+    """Return the damped step in theta, its product with the pull, and which free theta are held at a bound."""
     theta, low, high = here.theta, data.low, data.high
     if not layout.all_theta_free:
         theta, low, high = (array[:, layout.free_theta] for array in (theta, low, high))

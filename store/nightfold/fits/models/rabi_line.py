@@ -6,7 +6,7 @@ import numpy as np
 
 from nightfold.fits.engine.arrays import Floats
 from nightfold.fits.models.resonance import PEAK, QUALITY, Resonance
-from nightfold.fits.models.shape import Derived, Parameter
+from nightfold.fits.models.shape import Derived, Parameter, Window
 
 WIDTH = 2.0 * 0.7986853552847
 """The full width at half maximum in units of the Rabi frequency."""
@@ -52,6 +52,10 @@ class RabiLine(Resonance):
         sine, cosine = np.sin(HALF_PI * r), np.cos(HALF_PI * r)
         line = sine * sine / square
         return line, WIDTH * u * (np.pi * sine * cosine / r - 2.0 * line) / square
+
+    def narrowest(self, window: Window) -> float:
+        """Return the narrowest width of the grid: far side lobes, taken coarsely, would look like any line."""
+        return max(super().narrowest(window), window.spacing / 3)
 
     def derive(self, q: Floats) -> tuple[Floats, Floats]:
         """Return logarithms of quality factor, Rabi frequency and length of the pulse, and their derivatives."""

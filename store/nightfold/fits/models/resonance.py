@@ -71,13 +71,13 @@ class Resonance(LineShape):
         """Return the further coordinates that the grid tries, (K, P - 2)."""
         return np.zeros((1, 0))
 
-    def grid(self, window: Window) -> Floats:
-        """Return centers and widths: nine widths, centers a third of the width apart.
+    def narrowest(self, window: Window) -> float:
+        """Return the narrowest width of the grid: one spacing; a narrower line has no two points on it."""
+        return min(window.spacing, max(window.finest, window.span / 1500))
 
-        The narrowest is one spacing wide; a line narrower than that has no two points on it.
-        """
-        narrow = min(window.spacing, max(window.finest, window.span / 1500))
-        widths = np.geomspace(narrow, 1.2 * window.span, 9)
+    def grid(self, window: Window) -> Floats:
+        """Return centers and widths: nine widths, centers a third of the width apart."""
+        widths = np.geomspace(self.narrowest(window), 1.2 * window.span, 9)
         parts = []
         for w in widths:
             margin = min(w / 2, window.span / 4)
