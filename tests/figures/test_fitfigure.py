@@ -73,8 +73,11 @@ def test_outliers_have_a_shape_of_their_own(resonance: FitResult) -> None:
     y[10], y[40] = 1.6e5, 9e9
     outliers = (10, 40)
     used = np.delete(np.arange(len(x)), outliers)
-    fit = replace(resonance, x=x[used], y=y[used], used=used, outliers=outliers)
-    figure = fit_figure(fit, x=x, y=y, aside=([60.5], [1.1e5]))
+    rows = list(outliers)
+    fit = replace(
+        resonance, x=x[used], y=y[used], used=used, outliers=outliers, outlier_x=x[rows], outlier_y=y[rows]
+    )
+    figure = fit_figure(fit, aside=([60.5], [1.1e5]))
     crosses = line(figure, "outliers")
     assert points(crosses) == [(x[10], 1.6e5)]
     assert crosses.get_marker() == "x"
@@ -142,11 +145,7 @@ def test_single_shots_have_the_bars_given() -> None:
     assert "mean" not in said
 
 
-def test_data_of_another_fit_are_refused(resonance: FitResult) -> None:
-    with pytest.raises(FitError, match="63 or more"):
-        fit_figure(resonance, x=[1.0], y=[2.0])
-    with pytest.raises(FitError, match="belong together"):
-        fit_figure(resonance, x=[1.0])
+def test_stderr_of_other_data_are_refused(resonance: FitResult) -> None:
     with pytest.raises(FitError, match="2 stderr"):
         fit_figure(resonance, stderr=[1.0, 2.0])
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import replace
+from typing import Any
 
 import matplotlib as mpl
 import numpy as np
@@ -45,7 +46,7 @@ def test_two_axes_make_a_map(slices: Table) -> None:
     figure = slices_figure(table, estimate="fwhm")
     axes = figure.axes[0]
     shown, doubted = axes.collections
-    values = np.ma.filled(np.ma.asarray(shown.get_array()), np.nan)
+    values: Any = np.ma.filled(np.ma.asarray(shown.get_array()), np.nan)
     fitted = table.estimates["fwhm"].value.reshape(3, 4)
     fitted[1, 1] = np.nan
     assert values == pytest.approx(fitted, nan_ok=True)

@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from nightfold.fits.again import Refit
+    from nightfold.fits.comparison import Comparison
     from nightfold.fits.keptfit import KeptFit
     from nightfold.fits.many import FitTable
     from nightfold.fits.result import FitResult
@@ -186,6 +187,44 @@ class Scanning(Face):
             reference_within,
         )
         return fit_scan(self._session, chosen, request, keep=keep)
+
+    def compare(
+        self,
+        scan: Scan | int | str,
+        models: Sequence[Any],
+        *,
+        observable: str,
+        estimate: str | None = None,
+        **options: Any,
+    ) -> Comparison | list[Comparison]:
+        """Fit several models to a scan and return them side by side: weights by AICc, what each says, the average.
+
+        Parameters
+        ----------
+        scan, observable
+            As in `fit`.
+        models : sequence of str, Model or lmfit.Model
+            Two or more.
+        estimate : str, optional
+            What to compare; by default the position, rate or time that the first model is about.
+        **options
+            All others of `fit`.
+
+        Returns
+        -------
+        Comparison
+            Or a list of them, one a slice, where the scan has several axes; formulas are given in `compare_fits` of
+            `nightfold.fits.comparison`.
+
+        Raises
+        ------
+        ChoiceNeeded, NotFound, FitError
+            As in `fit`; also if a model does not have the estimate, or there is one model only.
+        """
+        from nightfold.fits.comparison import compare_outcomes
+
+        outcomes = [self.fit(scan, model, observable=observable, **options) for model in models]
+        return compare_outcomes(outcomes, estimate)
 
     def fits(self, scan: int | str | None = None, *, shots: Sequence[str] | None = None) -> list[KeptFit]:
         """Return the fits kept, oldest first; replaced ones are left out.

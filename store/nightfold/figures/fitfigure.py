@@ -63,8 +63,6 @@ def fit_figure(
     detail: str = "",
     x_name: str = "x",
     y_name: str = "y",
-    x: ArrayLike | None = None,
-    y: ArrayLike | None = None,
     stderr: ArrayLike | None = None,
     aside: tuple[ArrayLike, ArrayLike] | None = None,
 ) -> Figure:
@@ -77,9 +75,9 @@ def fit_figure(
         Above the figure; the second in plain type. By default the model and its background.
     x_name, y_name : str
         Names of the axes; the units are those of the fit.
-    x, y, stderr : (n,) float arrays, optional
-        As handed in to the fit; without x and y, outliers that the result does not hold are not drawn. A bar is the
-        stderr of a mean from the scatter of its shots, of a single shot the stderr given here.
+    stderr : (n,) float array, optional
+        Of the points handed in to the fit, those not used too: the bar of a single shot. The bar of a mean is its
+        standard uncertainty from the scatter of its shots.
     aside : tuple of two arrays, optional
         x and y of shots that are set aside; drawn faint.
 
@@ -91,9 +89,9 @@ def fit_figure(
     Raises
     ------
     FitError
-        When x, y or stderr are not those handed in to the fit.
+        When there is not a stderr for each point handed in to the fit.
     """
-    shots = gather(result, x, y, stderr, aside)
+    shots = gather(result, stderr, aside)
     with style():
         column = _estimates(result)
         keys = 5.5 * LINE

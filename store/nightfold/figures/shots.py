@@ -44,47 +44,25 @@ class Shots:
         return len(self.means) < len(self.single)
 
 
-def gather(
-    result: FitResult,
-    x: ArrayLike | None,
-    y: ArrayLike | None,
-    stderr: ArrayLike | None,
-    aside: tuple[ArrayLike, ArrayLike] | None,
-) -> Shots:
+def gather(result: FitResult, stderr: ArrayLike | None, aside: tuple[ArrayLike, ArrayLike] | None) -> Shots:
     """Return the shots of a fit; see `fit_figure` for the arguments.
 
     Raises
     ------
     FitError
-        When x, y or stderr are not those handed in to the fit.
+        When there is not a stderr for each point handed in to the fit.
     """
-    used, outliers = np.asarray(result.used), np.asarray(result.outliers, dtype=np.intp)
-    if (x is None) != (y is None):
-        raise FitError("figure: x and y belong together; give both or none")
-    if x is None or y is None:
-        held = np.isin(used, outliers)
-        used_x, used_y, out = result.x[~held], result.y[~held], (result.x[held], result.y[held])
-    else:
-        all_x, all_y = _numbers("x", x), _numbers("y", y)
-        last = max([-1, *used.tolist(), *outliers.tolist()])
-        if all_x.shape != all_y.shape or last >= len(all_x):
-            raise FitError(
-                f"figure: found {len(all_x)} x and {len(all_y)} y, wanted those of the fit, {last + 1} or more"
-            )
-        kept = used[~np.isin(used, outliers)]
-        used_x, used_y, out = all_x[kept], all_y[kept], (all_x[outliers], all_y[outliers])
-    bars = np.full(len(used_x), np.nan)
+    bars = np.full(result.n, np.nan)
     if stderr is not None:
-        given = _numbers("stderr", stderr)
-        rows = used[~np.isin(used, outliers)]
-        if len(rows) and len(given) <= rows.max():
+        given, used = _numbers("stderr", stderr), np.asarray(result.used)
+        if given.ndim != 1 or (len(used) and len(given) <= used.max()):
             raise FitError(
-                f"figure: found {len(given)} stderr, wanted one for each point handed in to the fit"
+                f"figure: found {given.size} stderr, wanted one for each point handed in to the fit"
             )
-        bars = given[rows]
-    single = Marks(used_x, used_y, bars)
+        bars = given[used]
+    single = Marks(result.x, result.y, bars)
     left = (np.empty(0), np.empty(0)) if aside is None else (_numbers("x", aside[0]), _numbers("y", aside[1]))
-    return Shots(single, _means(single), _bare(*out), _bare(*left))
+    return Shots(single, _means(single), _bare(result.outlier_x, result.outlier_y), _bare(*left))
 
 
 def _numbers(what: str, values: ArrayLike) -> Floats:
