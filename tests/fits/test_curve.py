@@ -41,6 +41,8 @@ def oscillation(x: Array, a: float, f: float, t: float, p: float, o: float) -> A
     return np.asarray(a * np.exp(-x / t) * np.cos(2 * np.pi * f * x + p) + o)
 
 
+PLAIN: dict[str, Any] = {"weights": "equal", "robust": False}
+"""Ordinary least squares."""
 INDEPENDENT: dict[str, Any] = {
     "lorentzian": lorentzian,
     "gaussian": gaussian,
@@ -57,9 +59,10 @@ def test_agrees_with_scipy_on_values_and_covariance(model: str, weighted: str | 
     example = EXAMPLES[model]
     y = example.noisy(7, 0.05)
     stderr = np.random.default_rng(3).uniform(0.03, 0.09, len(y))
-    options: dict[str, Any] = {}
+    options = PLAIN
     if weighted:
-        options = {"stderr": stderr, "weights": "given", "absolute_stderr": weighted == "absolute"}
+        how = {"stderr": stderr, "weights": "given", "absolute_stderr": weighted == "absolute"}
+        options = {**PLAIN, **how}
     result = fit_curve(example.x, y, model, background=example.background, **options)
     values, covariance = curve_fit(
         INDEPENDENT[model],
@@ -162,7 +165,7 @@ def test_fixed_parameters_agree_with_scipy(model: str, names: tuple[str, ...]) -
     example = EXAMPLES[model]
     y = example.noisy(11, 0.04)
     fixed = {name: example.truth[name] * 1.01 for name in names}
-    result = fit_curve(example.x, y, model, background=example.background, fixed=fixed)
+    result = fit_curve(example.x, y, model, background=example.background, fixed=fixed, **PLAIN)
     free = [name for name in example.truth if name not in fixed]
 
     def curve(x: Array, *values: float) -> Array:
@@ -184,7 +187,7 @@ def test_fixed_parameters_agree_with_scipy(model: str, names: tuple[str, ...]) -
 def test_everything_fixed_leaves_the_scatter() -> None:
     example = EXAMPLES["exponential"]
     y = example.noisy(5, 0.1)
-    result = fit_curve(example.x, y, "exponential", fixed=example.truth)
+    result = fit_curve(example.x, y, "exponential", fixed=example.truth, **PLAIN)
     assert result.covariance.shape == (0, 0)
     assert result.residual_stderr == pytest.approx(np.sqrt(np.mean((y - example.curve()) ** 2)))
 
@@ -225,11 +228,11 @@ def test_the_same_data_give_the_same_numbers() -> None:
     assert one.warnings == two.warnings
 
 
-def test_given_stderr_is_used_only_when_asked() -> None:
+def test_given_stderr_is_insisted_on_only_when_asked() -> None:
     example = EXAMPLES["lorentzian"]
     y, stderr = example.noisy(3, 0.05), np.linspace(0.01, 0.2, len(example.x))
     equal = fit_curve(example.x, y, "lorentzian", weights="equal")
-    assert fit_curve(example.x, y, "lorentzian", stderr=stderr).estimates == equal.estimates
+    assert fit_curve(example.x, y, "lorentzian", stderr=stderr, weights="equal").estimates == equal.estimates
     given = fit_curve(example.x, y, "lorentzian", stderr=stderr, weights="given")
     scaled = fit_curve(example.x, y, "lorentzian", stderr=stderr * 7, weights="given")
     assert given.estimates["center"].value != equal.estimates["center"].value
@@ -296,7 +299,7 @@ def test_result_tells_what_was_done() -> None:
 def test_goes_on_in_lmfit() -> None:
     for example in EXAMPLES.values():
         y = example.noisy(2, 0.05)
-        result = fit_curve(example.x, y, example.model, background=example.background)
+        result = fit_curve(example.x, y, example.model, background=example.background, **PLAIN)
         model, parameters = result.to_lmfit()
         assert model.eval(parameters, x=example.x) == pytest.approx(result.predict(example.x))
         again = model.fit(y, parameters, x=example.x)

@@ -62,7 +62,9 @@ def test_a_scan_fit_is_the_curve_fit_of_its_table(store: Store) -> None:
     result = store.fit("loss", "lorentzian", observable="atom_number")
     assert isinstance(result, FitResult)
     table = store.scan("loss").table()
-    alone = fit_curve(table.coil_current, table.atom_number, "lorentzian", unit_x="A")
+    alone = fit_curve(
+        table.coil_current, table.atom_number, "lorentzian", unit_x="A", stderr=table.atom_number_stderr
+    )
     for name, estimate in result.estimates.items():
         assert (estimate.value, estimate.stderr) == (
             alone.estimates[name].value,

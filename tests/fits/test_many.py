@@ -32,7 +32,7 @@ def assert_same_as_single(table: FitTable, example: Example, Y: np.ndarray, **op
 @pytest.mark.parametrize("example", EXAMPLES.values(), ids=lambda e: e.model)
 def test_batched_equals_single(example: Example) -> None:
     Y = example.noisy(21, 0.08, (24,))
-    table = fit_many(example.x, Y, example.model, background=example.background)
+    table = fit_many(example.x, Y, example.model, background=example.background, full=True)
     assert len(table) == 24
     assert_same_as_single(table, example, Y)
 
@@ -43,7 +43,7 @@ def test_batched_equals_single_with_holes_and_fixed(model: str) -> None:
     Y = example.noisy(22, 0.05, (20,))
     Y[np.random.default_rng(5).random(Y.shape) < 0.1] = np.nan
     fixed = {"offset": 1.0}
-    table = fit_many(example.x, Y, model, background=example.background, fixed=fixed)
+    table = fit_many(example.x, Y, model, background=example.background, fixed=fixed, full=True)
     assert_same_as_single(table, example, Y, fixed=fixed)
 
 
@@ -51,7 +51,7 @@ def test_batched_equals_single_with_stderr_row_by_row() -> None:
     example = EXAMPLES["gaussian"]
     Y = example.noisy(23, 0.05, (18,))
     stderr = np.random.default_rng(6).uniform(0.02, 0.1, Y.shape)
-    table = fit_many(example.x, Y, "gaussian", stderr=stderr, weights="given", background="sloped")
+    table = fit_many(example.x, Y, "gaussian", stderr=stderr, weights="given", background="sloped", full=True)
     for row in range(len(Y)):
         single = fit_curve(
             example.x, Y[row], "gaussian", stderr=stderr[row], weights="given", background="sloped"

@@ -9,7 +9,7 @@ import numpy as np
 from nightfold.fits.curve_function import evaluate
 from nightfold.fits.engine.arrays import Floats
 from nightfold.fits.engine.links import falls, to_coordinate, to_value
-from nightfold.fits.engine.uncertainty import t_quantile
+from nightfold.fits.engine.mixture import t_quantile
 from nightfold.fits.estimate import Estimate, check_level
 
 if TYPE_CHECKING:

@@ -65,7 +65,8 @@ class Mixture:
         """
         reach = t_quantile(probability, self.dof)
         some = self.weight > 0
-        parts = self.q + np.where(self.spread == 0, 0.0, reach[:, None] * self.spread)
+        with np.errstate(invalid="ignore"):
+            parts = self.q + np.where(self.spread == 0, 0.0, reach[:, None] * self.spread)
         low = np.where(some, parts, np.inf).min(axis=1)
         high = np.where(some, parts, -np.inf).max(axis=1)
         out = np.where(low == high, low, np.nan)
