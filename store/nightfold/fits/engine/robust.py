@@ -23,6 +23,8 @@ from nightfold.fits.engine.variance import RHO, Laws, shapes
 NU = 4.0
 ROUNDS = 6
 STEPS = 2
+STILL = 0.02
+"""A fit has come to rest when the curve moves by less than this many standard deviations anywhere."""
 CANDIDATE = 3.0
 MOST_SHARE = 0.15
 ALPHA = 0.003
@@ -60,14 +62,21 @@ def follow(layout: Layout, points: Points, theta: Floats, laws: Laws) -> Robust:
     laws : Laws
         Variance laws to choose from.
     """
-    weights = np.where(points.used, 1.0, 0.0)
-    residual = _residual(layout, points, theta, weights)
+    theta = theta.copy()
+    residual = _residual(layout, points, theta, np.where(points.used, 1.0, 0.0))
+    rows, some = np.arange(len(theta)), points
     for _ in range(ROUNDS):
-        curve = points.v - residual + points.origin
-        z, variance, _ = _standardise(points, laws, curve, residual)
-        weights = np.where(points.used, (NU + 1.0) / (NU + z * z) / variance, 0.0)
-        theta = solve(layout, points.weighted(weights), theta, 1e-6, STEPS).theta
-        residual = _residual(layout, points, theta, weights)
+        left = residual[rows]
+        z, variance, _ = _standardise(some, laws, some.v - left + some.origin, left)
+        weights = np.where(some.used, (NU + 1.0) / (NU + z * z) / variance, 0.0)
+        theta[rows] = solve(layout, some.weighted(weights), theta[rows], 1e-6, STEPS).theta
+        residual[rows] = found = _residual(layout, some, theta[rows], weights)
+        size = np.abs(np.where(some.used, found - left, 0.0)) * np.abs(z) / np.maximum(np.abs(left), 1e-300)
+        moving = np.flatnonzero(~(size.max(axis=1) < STILL))
+        if not len(moving):
+            break
+        if len(moving) < len(rows):
+            rows, some = rows[moving], some.take(moving)
     curve = points.v - residual + points.origin
     z, _, likelihood = _standardise(points, laws, curve, residual)
     return Robust(theta, curve, z, likelihood)
@@ -75,9 +84,9 @@ def follow(layout: Layout, points: Points, theta: Floats, laws: Laws) -> Robust:
 
 def _residual(layout: Layout, points: Points, theta: Floats, weights: Floats) -> Floats:
     """Return residuals of every point, unweighted, with the coefficients that fit best with those weights."""
-    about = expand(layout, points.weighted(weights), theta)
-    columns = layout.columns(points.data.u, theta, points.data.shift)
-    return np.asarray(points.v - combine(about.c, columns))
+    data = points.weighted(weights)
+    about = expand(layout, data, theta)
+    return np.where(weights > 0, about.residual / np.where(weights > 0, data.root_weights, 1.0), 0.0)
 
 
 def _standardise(

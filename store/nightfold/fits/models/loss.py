@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from math import factorial
 from typing import Final
 
 import numpy as np
@@ -33,6 +34,8 @@ TIMES: Final = (
 FRACTIONS = (np.e, 2.0)
 SMALL = 0.3
 """Below this the series of a derivative is more exact than its closed form."""
+SERIES = [(-1.0) ** j * j / factorial(j + 1) for j in range(12, 0, -1)]
+"""Coefficients of the derivative of (1 - exp(-t)) / t, the highest power first."""
 SMALLER = 1e-4
 
 
@@ -243,15 +246,10 @@ def partial_loss(g: Floats, u: Floats, n: int) -> tuple[Floats, Floats]:
     """
     reach = n * u
     t = g * reach
+    fall = np.expm1(-t)
+    safe = np.where(t == 0, 1.0, t)
+    h = np.where(t == 0, 1.0, -fall / safe)
+    slope = ((1.0 + fall) * (1.0 + t) - 1.0) / safe**2
     small = np.abs(t) < SMALL
-    safe = np.where(small, 1.0, t)
-    near = np.where(small, t, 0.0)
-    fall = np.expm1(-safe)
-    series, term = np.zeros_like(near), np.full_like(near, -0.5)
-    for j in range(12):
-        series += (j + 1) * term
-        term = -term * near / (j + 3)
-    tiny = np.abs(t) < 1e-300
-    h = np.where(tiny, 1.0, -np.expm1(-t) / np.where(tiny, 1.0, t))
-    slope = np.where(small, series, ((1.0 + fall) * (1.0 + safe) - 1.0) / safe**2)
+    slope[small] = np.polyval(SERIES, t[small])
     return reach * h, reach * reach * slope
