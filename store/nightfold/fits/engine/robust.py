@@ -83,10 +83,10 @@ def follow(layout: Layout, points: Points, theta: Floats, laws: Laws) -> Robust:
 
 
 def _residual(layout: Layout, points: Points, theta: Floats, weights: Floats) -> Floats:
-    """Return residuals of every point, unweighted, with the coefficients that fit best with those weights."""
-    data = points.weighted(weights)
-    about = expand(layout, data, theta)
-    return np.where(weights > 0, about.residual / np.where(weights > 0, data.root_weights, 1.0), 0.0)
+    """Return the residuals of points that count, unweighted, with the coefficients that fit best with weights."""
+    about = expand(layout, points.weighted(weights), theta)
+    roots = np.sqrt(np.where(weights > 0, weights, np.inf))
+    return np.asarray(about.residual / roots)
 
 
 def _standardise(
