@@ -128,7 +128,7 @@ def compose_unit(pattern: str, unit_x: str, unit_y: str) -> str:
     Parameters
     ----------
     pattern : str
-        ``x``, ``y``, ``1/x``, ``y/x`` or a unit of its own (``rad``, empty for none).
+        ``x``, ``y``, ``1/x``, ``y/x``, ``(y/x)^2`` or a unit of its own (``rad``, empty for none).
 
     Examples
     --------
@@ -137,6 +137,9 @@ def compose_unit(pattern: str, unit_x: str, unit_y: str) -> str:
     """
     if pattern in ("x", "y"):
         return unit_x if pattern == "x" else unit_y
+    if pattern == "(y/x)^2":
+        velocity = compose_unit("y/x", unit_x, unit_y)
+        return f"({velocity})^2" if velocity else ""
     if pattern not in ("1/x", "y/x"):
         return pattern
     top = unit_y if pattern == "y/x" else ""

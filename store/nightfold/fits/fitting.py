@@ -31,9 +31,9 @@ class Outcome:
     points used, ``distinct`` the distinct x among them, ``bound`` (B, P) which coordinates ended at a bound.
 
     Of the points handed in, (B, n), ``outlier`` tells which the robust step left out, ``deviation`` is the standard
-    deviation of a point about the curve, nan for those not used. Where several variance laws were averaged
-    ``mixture`` has what is known under each of them, and ``unlike`` (B, R) how far the estimate with equal weights
-    lies from the average, in units of its own stderr.
+    deviation of a point about the curve, nan for those not used. ``mixture`` has what is known under each variance law,
+    and ``unlike`` (B, R) how far the estimate with equal weights lies from the average, in units of its own stderr.
+    ``theta`` (B, P) are the coordinates of the fit in the frame, by the law that counts most.
     """
 
     request: Request
@@ -54,7 +54,8 @@ class Outcome:
     outlier: Bools
     deviation: Floats
     unlike: Floats
-    mixture: Averaged | None = None
+    theta: Floats
+    mixture: Averaged
     errors: Floats | None = None
 
     def used(self, x: Floats, y: Floats, row: int) -> Bools:
@@ -74,6 +75,11 @@ class Outcome:
         wanted = f"{layout.shape.name} has {free} free parameter{'' if free == 1 else 's'}"
         return f"{found}, but {wanted}; fix one or add shots"
 
+    @property
+    def _parameters(self) -> Floats:
+        """Values without the derived numbers."""
+        return self.value[:, : len(self.request.layout.names)]
+
     @cached_property
     def feature_p(self) -> Floats:
         """The p value of "nothing but background" of each data set, worked out when first asked for."""
@@ -81,11 +87,11 @@ class Outcome:
         for group in self.groups:
             lost = self.outlier[group.rows].any(axis=1)
             if not lost.all():
-                p[group.rows] = group.feature_p(self.value[group.rows])
+                p[group.rows] = group.feature_p(self._parameters[group.rows])
             for row in np.flatnonzero(lost):
                 place = group.rows[row]
                 left = ~self.outlier[place][group.place[row]]
-                p[place] = group.part(int(row), left).feature_p(self.value[place][None])[0]
+                p[place] = group.part(int(row), left).feature_p(self._parameters[place][None])[0]
         return p
 
 
@@ -106,10 +112,8 @@ def fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, full
 
 
 def _fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, full: bool) -> Outcome:
-    outcome = _empty_outcome(request, Y.shape)
-    if full:
-        laws = choose_laws(request, stderr is not None)
-        outcome = replace(outcome, mixture=Averaged.blank(len(Y), len(laws), len(request.layout.names)))
+    laws = len(choose_laws(request, stderr is not None)) if full else 1
+    outcome = _empty_outcome(request, Y.shape, laws)
     solve_batch = _solve_fully if full else _solve_batch
     groups: list[Group] = []
     waiting: list[Group] = []
@@ -136,8 +140,8 @@ def _fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, ful
     return replace(outcome, groups=tuple(groups), errors=stderr if request.weighted else None)
 
 
-def _empty_outcome(request: Request, shape: tuple[int, ...]) -> Outcome:
-    names, free, size = len(request.layout.names), len(request.layout.free_names), shape[0]
+def _empty_outcome(request: Request, shape: tuple[int, ...], laws: int) -> Outcome:
+    names, free, size = len(request.layout.all_names), len(request.layout.free_names), shape[0]
     blank = np.full((size, names), np.nan)
     return Outcome(
         request,
@@ -158,6 +162,8 @@ def _empty_outcome(request: Request, shape: tuple[int, ...]) -> Outcome:
         np.zeros(shape, dtype=bool),
         np.full(shape, np.nan),
         np.zeros((size, names)),
+        np.full((size, len(request.layout.shape.theta)), np.nan),
+        Averaged.blank(size, laws, names),
     )
 
 
@@ -172,10 +178,10 @@ def _solve_batch(request: Request, groups: list[Group], outcome: Outcome) -> Non
     reported = report(layout, data, solution.theta, given)
     for name in ("value", "stderr", "spread", "covariance", "dof", "variance"):
         getattr(outcome, name)[rows] = getattr(reported, name)
-    outcome.converged[rows] = solution.converged
-    floors = np.array([theta.floor for theta in layout.shape.theta], dtype=bool)
-    at_floor = floors & (solution.theta <= data.low)
-    outcome.bound[rows] = solution.bound & ~at_floor
+    outcome.mixture.q[rows, 0], outcome.mixture.spread[rows, 0] = reported.q, reported.spread
+    outcome.mixture.weight[rows] = 1.0
+    outcome.converged[rows], outcome.theta[rows] = solution.converged, solution.theta
+    outcome.bound[rows] = solution.bound & ~layout.rightful(solution.theta, data.low, data.high)
 
 
 def _solve_fully(request: Request, groups: list[Group], outcome: Outcome) -> None:
@@ -207,6 +213,7 @@ def _solve_fully(request: Request, groups: list[Group], outcome: Outcome) -> Non
         "converged",
         "bound",
         "unlike",
+        "theta",
     ):
         getattr(outcome, name)[rows] = getattr(found, name)
     for name in ("q", "spread", "weight"):

@@ -12,6 +12,7 @@ from numpy.typing import ArrayLike
 
 from nightfold.errors import FitError
 from nightfold.fits.engine.arrays import Bools, Floats, Ints
+from nightfold.fits.engine.links import bends
 from nightfold.fits.engine.trust import Facts, FitWarning, judge
 from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
@@ -20,6 +21,8 @@ from nightfold.fits.result import FitResult
 
 if TYPE_CHECKING:
     import xarray as xr
+
+    from nightfold.fits.models.shape import Parameter
 
 
 def fit_many(
@@ -173,21 +176,28 @@ class FitTable:
     @cached_property
     def estimates(self) -> dict[str, EstimateColumn]:
         """The model's parameters, then the background's, by name."""
+        return {p.name: self._column(row, p) for row, p in enumerate(self.outcome.request.layout.parameters)}
+
+    @cached_property
+    def derived(self) -> dict[str, EstimateColumn]:
+        """Numbers that follow from the parameters, by name; which there are depends on the model."""
+        layout = self.outcome.request.layout
+        first = len(layout.names)
+        return {p.name: self._column(first + row, p) for row, p in enumerate(layout.shape.derived)}
+
+    def _column(self, row: int, parameter: Parameter) -> EstimateColumn:
         out, request = self.outcome, self.outcome.request
-        links = request.layout.shape.links()
-        several = out.mixture is not None and out.mixture.weight.shape[1] > 1
-        return {
-            parameter.name: EstimateColumn(
-                out.value[:, row],
-                out.stderr[:, row],
-                compose_unit(parameter.unit, request.unit_x, request.unit_y),
-                links[row] if row < len(links) else "linear",
-                out.spread[:, row],
-                out.dof,
-                out.mixture.column(row, out.dof) if several and out.mixture is not None else None,
-            )
-            for row, parameter in enumerate(request.layout.parameters)
-        }
+        link = request.layout.links[row]
+        several = out.mixture.weight.shape[1] > 1 or bends(link)
+        return EstimateColumn(
+            out.value[:, row],
+            out.stderr[:, row],
+            compose_unit(parameter.unit, request.unit_x, request.unit_y),
+            link,
+            out.spread[:, row],
+            out.dof,
+            out.mixture.column(row, out.dof) if several else None,
+        )
 
     @cached_property
     def warnings(self) -> list[tuple[FitWarning, ...]]:
@@ -207,6 +217,7 @@ class FitTable:
         return FitResult(
             self.outcome.request,
             {name: column[row] for name, column in self.estimates.items()},
+            {name: column[row] for name, column in self.derived.items()},
             self.warnings[row],
             tuple(outliers.tolist()),
             float(self.residual_stderr[row]),
@@ -239,14 +250,15 @@ class FitTable:
         if not np.isfinite(out.low[row]):
             return (FitWarning("too-few-points", out.shortage(row)),)
         names = layout.names
+        known = slice(len(names))
         roles = {theta.name: theta.role for theta in layout.shape.theta if theta.name not in layout.fixed}
         bound = tuple(t.name for t, held in zip(layout.shape.theta, out.bound[row], strict=True) if held)
         return judge(
             Facts(
                 layout.shape.name,
-                dict(zip(names, out.value[row].tolist(), strict=True)),
-                dict(zip(names, out.stderr[row].tolist(), strict=True)),
-                dict(zip(names, out.spread[row].tolist(), strict=True)),
+                dict(zip(names, out.value[row, known].tolist(), strict=True)),
+                dict(zip(names, out.stderr[row, known].tolist(), strict=True)),
+                dict(zip(names, out.spread[row, known].tolist(), strict=True)),
                 dict(roles),
                 bound,
                 float(out.low[row]),
@@ -259,6 +271,6 @@ class FitTable:
                 bool(out.constant[row]),
                 out.request.unit_x,
                 tuple(self.x[out.outlier[row]].tolist()),
-                dict(zip(names, out.unlike[row].tolist(), strict=True)),
+                dict(zip(names, out.unlike[row, known].tolist(), strict=True)),
             )
         )

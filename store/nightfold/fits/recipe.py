@@ -39,6 +39,7 @@ class Refined:
     mixture: Averaged
     outlier: Bools
     deviation: Floats
+    theta: Floats
 
 
 def choose_laws(request: Request, stated: bool) -> Laws:
@@ -128,17 +129,18 @@ def _summarise(request: Request, points: Points, members: Members, out: Bools, c
             turn = 2 * np.pi * np.ceil((q[:, row] - np.pi) / (2 * np.pi))
             q[:, row] -= turn
             members.q[:, :, row] -= turn[:, None]
-    fixed = np.array([name in layout.fixed for name in layout.names])
+    fixed, free_rows = layout.fixed_rows, layout.free_rows
     variance = diagonal(covariance)
     spread = np.where(np.isfinite(variance), np.sqrt(np.maximum(variance, 0.0)), np.inf)
     spread = np.where(fixed, 0.0, spread)
-    value, slopes = from_coordinates(q, layout.shape.links())
+    value, slopes = from_coordinates(q, spread, layout.links)
     stderr = np.where(fixed, 0.0, spread * np.abs(slopes))
-    covariance = (covariance * slopes[:, :, None] * slopes[:, None])[:, ~fixed][:, :, ~fixed]
+    covariance = (covariance * slopes[:, :, None] * slopes[:, None])[:, free_rows][:, :, free_rows]
     count = np.count_nonzero(points.used, axis=1)
     dof = np.full(len(q), np.inf) if request.absolute else (count - layout.free_count).astype(np.float64)
     scale = np.einsum("bk,bk->b", weight, members.scale)
     bound = np.einsum("bk,bkp->bp", weight, members.bound) > 0.5
+    theta = members.theta[np.arange(len(weight)), weight.argmax(axis=1)]
     deviation = np.where(points.used, np.sqrt(members.point_variance) * frame.ys[:, None], np.nan)
     return Refined(
         value,
@@ -148,11 +150,12 @@ def _summarise(request: Request, points: Points, members: Members, out: Bools, c
         dof,
         scale * frame.ys**2,
         converged & (np.einsum("bk,bk->b", weight, members.converged) > 0.9),
-        bound & ~_rightful(layout, points, members),
+        bound & ~layout.rightful(theta, points.data.low, points.data.high),
         _unlike(points, members, q, fixed),
         Averaged(members.q, members.spread, weight),
         out,
         deviation,
+        theta,
     )
 
 
@@ -164,14 +167,6 @@ def _moments(members: Members) -> tuple[Floats, Floats]:
     own = np.where(some[..., None], members.covariance, 0.0)
     between = np.einsum("bk,bkr,bks->brs", members.weight, centered, centered)
     return q, np.einsum("bk,bkrs->brs", members.weight, own) + between
-
-
-def _rightful(layout: Layout, points: Points, members: Members) -> Bools:
-    """Return which coordinates are at a bound that is a value in its own right, by the law that counts most."""
-    theta = members.theta[np.arange(len(members.theta)), members.weight.argmax(axis=1)]
-    floors = np.array([one.floor for one in layout.shape.theta], dtype=bool)
-    ceilings = np.array([one.ceiling for one in layout.shape.theta], dtype=bool)
-    return np.asarray((floors & (theta <= points.data.low)) | (ceilings & (theta >= points.data.high)))
 
 
 def _unlike(points: Points, members: Members, q: Floats, fixed: Bools) -> Floats:

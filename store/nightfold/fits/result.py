@@ -29,6 +29,8 @@ class FitResult:
     model, background : str
     estimates : dict of str to Estimate
         The model's parameters, then the background's; fixed ones are there with stderr 0.
+    derived : dict of str to Estimate
+        Numbers that follow from them, with intervals of their own; which there are depends on the model.
     warnings : tuple of FitWarning
     outliers : tuple of int
         Indices into the points handed in that the robust step left out.
@@ -56,6 +58,7 @@ class FitResult:
 
     request: Request
     estimates: dict[str, Estimate]
+    derived: dict[str, Estimate]
     warnings: tuple[FitWarning, ...]
     outliers: tuple[int, ...]
     residual_stderr: float

@@ -67,7 +67,7 @@ def test_reported_derivatives_match_differences(
     theta = np.array([THETA[shape.name][: len(shape.theta)]])
     c = np.array([[0.8, -0.5, 0.4, 0.3][: len(layout.column_names)]])
     q, dq = layout.report(theta, c, frame)
-    assert q.shape == (1, len(layout.names))
+    assert q.shape == (1, len(layout.all_names))
     for j in range(theta.shape[1]):
         assert dq[:, :, j] == pytest.approx(
             central(lambda t: layout.report(t, c, frame)[0], theta, j), rel=1e-6, abs=1e-7

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
+from typing import cast
 
 import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
 from nightfold.fits.engine.frame import Frame
-from nightfold.fits.models.shape import UNITY, Background, LineShape, Parameter
+from nightfold.fits.models.shape import UNITY, Background, LineShape, Link, Parameter
 
 BACKGROUND_PARAMETERS: dict[Background, tuple[Parameter, ...]] = {
     "none": (),
@@ -42,6 +43,28 @@ class Layout:
     def names(self) -> tuple[str, ...]:
         """Reported names."""
         return tuple(parameter.name for parameter in self.parameters)
+
+    @cached_property
+    def all_names(self) -> tuple[str, ...]:
+        """Reported names, then those of the derived numbers: the rows of `report`."""
+        return (*self.names, *(number.name for number in self.shape.derived))
+
+    @cached_property
+    def links(self) -> tuple[Link, ...]:
+        """How each of `all_names` follows from its coordinate."""
+        background = [cast(Link, "linear")] * len(BACKGROUND_PARAMETERS[self.background])
+        return (*self.shape.links(), *background, *(number.link for number in self.shape.derived))
+
+    @cached_property
+    def free_rows(self) -> Bools:
+        """Which of `all_names` are fitted parameters: the rows of the covariance."""
+        count = len(self.names)
+        return np.array([j < count and n not in self.fixed for j, n in enumerate(self.all_names)], dtype=bool)
+
+    @cached_property
+    def fixed_rows(self) -> Bools:
+        """Which of `all_names` are fixed."""
+        return np.array([name in self.fixed for name in self.all_names], dtype=bool)
 
     @cached_property
     def free_names(self) -> tuple[str, ...]:
@@ -128,7 +151,15 @@ class Layout:
         return np.asarray(shift[:, None])
 
     def report(self, theta: Floats, c: Floats, frame: Frame) -> tuple[Floats, Floats]:
-        """Return q of all reported parameters, (M, R), and derivatives for theta and c, (M, R, P + L)."""
+        """Return q of `all_names`, (M, R), and derivatives for theta and c, (M, R, P + L)."""
+        q, dq = self._report_parameters(theta, c, frame)
+        if not self.shape.derived:
+            return q, dq
+        count = len(self.shape.parameters)
+        more, slopes = self.shape.derive(q[:, :count])
+        return np.concatenate([q, more], axis=1), np.concatenate([dq, slopes @ dq[:, :count]], axis=1)
+
+    def _report_parameters(self, theta: Floats, c: Floats, frame: Frame) -> tuple[Floats, Floats]:
         q, dq = self.shape.report(theta, c, frame)
         if self.background == "none":
             return q, dq
@@ -147,6 +178,12 @@ class Layout:
                 q[:, count] += frame.ys * lever * c[:, first + 1]
                 dq[:, count, size + first + 1] = frame.ys * lever
         return q, dq
+
+    def rightful(self, theta: Floats, low: Floats, high: Floats) -> Bools:
+        """Return which coordinates are at a bound that is a value in its own right, (M, P)."""
+        floors = np.array([one.floor for one in self.shape.theta], dtype=bool)
+        ceilings = np.array([one.ceiling for one in self.shape.theta], dtype=bool)
+        return np.asarray((floors & (theta <= low)) | (ceilings & (theta >= high)))
 
     def fixed_theta(self, values: dict[str, float], frame: Frame) -> Floats:
         """Return (B, P): theta of the fixed or given parameters, nan elsewhere."""

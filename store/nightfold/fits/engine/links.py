@@ -65,6 +65,11 @@ def to_coordinate(value: Floats, link: Link) -> Floats:
     return value
 
 
+def bends(link: Link) -> bool:
+    """Return whether coordinates beyond what the value can be share one value, which does not tell them then."""
+    return link in ("root", "share", "not-negative")
+
+
 def falls(link: Link) -> bool:
     """Return whether the value falls as its coordinate rises."""
     return link in ("reciprocal", "inverse-root")

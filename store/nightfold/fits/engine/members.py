@@ -130,9 +130,8 @@ def fit_laws(
     q, dq = layout.report(solution.theta, about.c, data.frame)
     jacobian = dq[:, :, np.concatenate([layout.free_theta, layout.free_columns])]
     covariance = combine(jacobian, combine(basic, jacobian.transpose(0, 2, 1)))
-    fixed = np.array([name in layout.fixed for name in layout.names])
     spread = np.sqrt(diagonal(covariance))
-    spread = np.where(fixed, 0.0, np.where(np.isfinite(spread), spread, np.inf))
+    spread = np.where(layout.fixed_rows, 0.0, np.where(np.isfinite(spread), spread, np.inf))
     q = q.reshape(count, size, -1)
     _unwrap(layout, q, weight)
     return Members(

@@ -25,6 +25,8 @@ class Reported:
 
     Attributes
     ----------
+    q : (M, R) float array
+        Coordinates, of the parameters and of what is derived from them.
     value, stderr : (M, R) float arrays
         In the units of x and y; a fixed parameter has stderr 0.
     spread : (M, R) float array
@@ -37,6 +39,7 @@ class Reported:
         Residual variance in units of y squared (of weight one), nan without degrees of freedom.
     """
 
+    q: Floats
     value: Floats
     stderr: Floats
     spread: Floats
@@ -75,25 +78,31 @@ def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) 
         jacobian = dq[:, :, free]
         cov_q = combine(jacobian, combine(basic, jacobian.transpose(0, 2, 1)))
         spread = np.sqrt(diagonal(cov_q))
-    value, slopes = from_coordinates(q, layout.shape.links())
-    fixed = np.array([name in layout.fixed for name in layout.names])
+    fixed, free_rows = layout.fixed_rows, layout.free_rows
     spread = np.where(fixed, 0.0, np.where(np.isfinite(spread), spread, np.inf))
+    value, slopes = from_coordinates(q, spread, layout.links)
     with np.errstate(invalid="ignore", over="ignore"):
         stderr = np.where(fixed, 0.0, spread * np.abs(slopes))
         outer = slopes[:, :, None] * slopes[:, None]
-        covariance = (cov_q * outer)[:, ~fixed][:, :, ~fixed]
+        covariance = (cov_q * outer)[:, free_rows][:, :, free_rows]
     stderr = np.where(np.isnan(stderr), np.inf, stderr)
     dof = spare if given is None else np.full(len(q), np.inf)
-    return Reported(value, stderr, spread, covariance, dof, variance * data.frame.ys**2)
+    return Reported(q, value, stderr, spread, covariance, dof, variance * data.frame.ys**2)
 
 
-def from_coordinates(q: Floats, links: tuple[Link, ...]) -> tuple[Floats, Floats]:
-    """Return reported values and their derivatives for q; columns beyond `links` are linear."""
+def from_coordinates(q: Floats, spread: Floats, links: tuple[Link, ...]) -> tuple[Floats, Floats]:
+    """Return values and their derivatives for coordinates q of standard uncertainty `spread`, (M, R) all.
+
+    The derivative of a root is held down, so that its uncertainty is no more than the root of that of q.
+    """
     value, slopes = q.copy(), np.ones_like(q)
     for row, link in enumerate(links):
         if link != "linear":
             value[:, row] = to_value(q[:, row], link)
             slopes[:, row] = steepness(value[:, row], link)
+        if link == "root":
+            with np.errstate(divide="ignore"):
+                slopes[:, row] = 0.5 / np.sqrt(np.maximum(q[:, row], spread[:, row] / 4))
     return value, slopes
 
 
