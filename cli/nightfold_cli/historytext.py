@@ -124,8 +124,6 @@ def _said(event: ShotEvent) -> str:
     if event.kind == "record":
         return _RECORD
     if event.kind.startswith(("join", "split")):
-        if event.old and event.old == event.new:
-            return f"stayed in scan {event.new}"
         places = (f"from scan {event.old}" if event.old else "", f"to scan {event.new}" if event.new else "")
         return " ".join(filter(None, places))
     return event.what

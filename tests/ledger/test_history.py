@@ -111,7 +111,7 @@ def test_the_shot_itself_tells_what_changed(anywhere: str) -> None:
 
 
 def test_a_scan_that_is_gone_is_not_taken_for_another(anywhere: str) -> None:
-    """The id of a scan that an undone split had made is given to the next scan."""
+    """The scan that an undone split had made is not there any more when the next one comes."""
     with open_store(anywhere) as store:
         store.take([shot(n) for n in range(12)])
         store.split_scan("loss", at=5)

@@ -113,12 +113,24 @@ def test_undoing_a_join_brings_back_ids_rounds_and_fits(rounds: Store) -> None:
         "join",
         "leo",
         ("loss#1", "loss#3"),
-        (),
+        ("loss#1",),
     )
     assert content(rounds) == before
     assert not any(fit.stale for fit in rounds.fits())
     with pytest.raises(ChoiceNeeded, match="arrangement 1: it was undone before"):
         rounds.undo_arrangement(1)
+
+
+def test_what_was_undone_is_told_as_it_was(rounds: Store) -> None:
+    """Also where the shots have come elsewhere since; a scan that is gone has its id, which no other one gets."""
+    rounds.split_scan("loss#1", at=6)
+    gone = rounds.scan("loss#4").id
+    rounds.undo_arrangement(1)
+    rounds.join_scans(["loss#1", "loss#2"])
+    take(rounds, loss(9 * DAY, label="width"))
+    assert rounds.scan("width").id > gone
+    before, after, shots = (rounds.arrangements()[name].iloc[0] for name in ("before", "after", "shots"))
+    assert (before, after, shots) == (("loss#1",), ("loss#1", str(gone)), 13)
 
 
 def test_a_scan_whose_shots_were_brought_elsewhere_says_so(rounds: Store) -> None:
@@ -216,7 +228,7 @@ def test_only_the_last_arrangement_of_a_shot_can_be_undone(rounds: Store) -> Non
     rounds.join_scans(["loss#3", "loss#4"])
     assert sizes(rounds) == [("loss#1", 20), ("loss#4", 19)]
     with pytest.raises(
-        ChoiceNeeded, match="arrangement 1: arrangement 2, 3 moved the same shots later; undo 3 first"
+        ChoiceNeeded, match="arrangement 1: arrangements 2, 3 moved the same shots later; undo 3 first"
     ):
         rounds.undo_arrangement(1)
     for number in (3, 2, 1):

@@ -32,8 +32,8 @@ class Arrangement:
     undone_by : str or None
     machine, sequence : str
     before, after : tuple of str
-        The scans that had the shots, and those they went to, as ``label#round`` or id. Of one that was undone nothing
-        is left after, and before only what still has the shots.
+        The scans that had the shots, and those they went to, also where that was undone since: as ``label#round``, or
+        the id of one that has no label or is gone.
     shots : int
     """
 
@@ -95,7 +95,7 @@ def read_arrangements(connection: Connection, *which: ColumnElement[bool]) -> li
     found = list(connection.execute(select(whole).where(*which).order_by(whole.c.id)))
     steps = (
         select(
-            row.c.arrangement_id, row.c.from_scan, row.c.to_scan, shot.c.scan_id,
+            row.c.arrangement_id, row.c.from_scan, row.c.to_scan,
             sequence.c.name.label("sequence"), machine.c.name.label("machine"),
             func.count().label("shots"), func.min(shot.c.started_us).label("first_us"),
         )
@@ -103,7 +103,7 @@ def read_arrangements(connection: Connection, *which: ColumnElement[bool]) -> li
         .join(sequence, sequence.c.id == shot.c.sequence_id)
         .join(machine, machine.c.id == sequence.c.machine_id)
         .where(row.c.arrangement_id.in_([item.id for item in found]))
-        .group_by(row.c.arrangement_id, row.c.from_scan, row.c.to_scan, shot.c.scan_id, sequence.c.name, machine.c.name)
+        .group_by(row.c.arrangement_id, row.c.from_scan, row.c.to_scan, sequence.c.name, machine.c.name)
         .order_by(func.min(shot.c.started_us))
     )  # fmt: skip
     moved: dict[int, list[Row[Any]]] = {}
@@ -115,29 +115,25 @@ def read_arrangements(connection: Connection, *which: ColumnElement[bool]) -> li
 
 
 def _make(item: Row[Any], steps: list[Row[Any]], keys: dict[int, str]) -> Arrangement:
-    undone = (
-        item.undone_us is not None
-    )  # then the number of a scan that is gone may have been given to another
-    before = [step.from_scan for step in steps if not undone or step.from_scan == step.scan_id]
-    after = [] if undone else [step.to_scan for step in steps]
     return Arrangement(
         number=item.id,
         kind=item.kind,
         at=from_us(item.at_us),
         by=item.by,
         reason=item.reason,
-        undone=from_us(item.undone_us) if undone else None,
+        undone=None if item.undone_us is None else from_us(item.undone_us),
         undone_by=item.undone_by,
         machine=steps[0].machine,
         sequence=steps[0].sequence,
-        before=tuple(keys[scan_id] for scan_id in dict.fromkeys(before)),
-        after=tuple(keys[scan_id] for scan_id in dict.fromkeys(after)),
+        before=tuple(keys[scan_id] for scan_id in dict.fromkeys(step.from_scan for step in steps)),
+        after=tuple(keys[scan_id] for scan_id in dict.fromkeys(step.to_scan for step in steps)),
         shots=sum(step.shots for step in steps),
     )
 
 
 def _keys(connection: Connection, ids: Collection[int]) -> dict[int, str]:
-    """Return how scans are named, by id."""
+    """Return how scans are named, by id; one that is gone by its id, which no other scan gets."""
     scan = tables.scan
     rows = connection.execute(select(scan).where(scan.c.id.in_(ids)))
-    return {row.id: scan_key(row.id, row.label, row.round) or "" for row in rows}
+    there = {row.id: scan_key(row.id, row.label, row.round) or "" for row in rows}
+    return {scan_id: str(scan_id) for scan_id in ids} | there

@@ -16,7 +16,7 @@ from nightfold.ledger.selecting import moment_us, scan_key
 from nightfold.records import clean_text
 from nightfold.scans.arrangements import Arrangement, read_arrangements
 from nightfold.scans.assigning import DEFAULT_REJOIN_US, rejoin_times
-from nightfold.scans.keeping import leading_axes, set_axes, settle_axes
+from nightfold.scans.keeping import leading_axes, new_scan, set_axes, settle_axes
 from nightfold.scans.listing import find_id, why_empty
 from nightfold.scans.refolding import fold_span
 from nightfold.scans.rounds import fold_label, move_shots, retire, swept_of
@@ -86,7 +86,7 @@ def split_scan(
         )
         number = connection.execute(own).scalar_one() + 1
     new = {"sequence_id": row.sequence_id, "label": row.label, "round": number, "origin": row.origin}
-    second = insert_row(connection, tables.scan, new)
+    second = new_scan(connection, new)
     goes_to = [(shot, row.id if k < place else second) for k, shot in enumerate(shots)]
     _enter(connection, "split", reason, by, goes_to)
     for scan_id in (row.id, second):
@@ -114,9 +114,9 @@ def undo_arrangement(connection: Connection, number: int, by: str | None) -> Arr
         raise ChoiceNeeded(f"arrangement {number}: it was undone before, on {found[0].undone.isoformat()}")
     later = _later(connection, number)
     if later:
+        others = f"arrangement{'s' if len(later) > 1 else ''} {', '.join(map(str, later))}"
         raise ChoiceNeeded(
-            f"arrangement {number}: {'arrangements' if len(later) > 1 else 'arrangement'} {', '.join(map(str, later))} moved the same shots later; "
-            f"undo {later[-1]} first"
+            f"arrangement {number}: {others} moved the same shots later; undo {later[-1]} first"
         )
     row, shot, whole = tables.arranged, tables.shot, tables.arrangement
     query = select(row, shot.c.id, shot.c.started_us, shot.c.sequence_id).join(

@@ -1,16 +1,28 @@
-"""The axes of a scan as they are kept in the store: swept parameters, and those that move along with one."""
+"""A scan as it is kept in the store, with its axes: swept parameters, and those that move along with one."""
 
 from __future__ import annotations
 
 from collections.abc import Collection, Mapping, Sequence
+from typing import Any
 
-from sqlalchemy import Connection, delete, insert, select
+from sqlalchemy import Connection, delete, func, insert, select
 
 from nightfold import tables
 from nightfold.ledger.columns import setting_columns
+from nightfold.ledger.names import insert_row
 from nightfold.ledger.selecting import Selection, named_by_id, select_shots
 from nightfold.scans.axes import choose_axes
 from nightfold.scans.likely import likely_axes
+
+
+def new_scan(connection: Connection, row: dict[str, Any]) -> int:
+    """Enter a scan and return its id, which no scan has had that was arranged by hand, nor one that was undone."""
+    scan, arranged = tables.scan.c, tables.arranged.c
+    highest = (
+        connection.execute(select(func.max(column))).scalar() or 0
+        for column in (scan.id, arranged.from_scan, arranged.to_scan)
+    )
+    return insert_row(connection, tables.scan, {"id": max(highest) + 1, **row})
 
 
 def set_axes(

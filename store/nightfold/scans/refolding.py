@@ -12,12 +12,11 @@ from typing import Any
 from sqlalchemy import ColumnElement, Connection, Row, and_, exists, or_, select, update
 
 from nightfold import tables
-from nightfold.ledger.names import insert_row
 from nightfold.ledger.pins import is_pinned, kept_scans, pinned_times
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import is_double
 from nightfold.scans.folding import FoundScan, StreamShot, fold_stream
-from nightfold.scans.keeping import set_axes, settle_axes
+from nightfold.scans.keeping import new_scan, set_axes, settle_axes
 from nightfold.scans.pauses import REACH as PAUSE_REACH
 from nightfold.scans.pauses import find_pauses
 from nightfold.scans.rounds import move_shots, retire
@@ -252,7 +251,7 @@ def _keep(
             best = _find_dissolved(connection, sequence_id, scan.shot_ids, set(now.values()))
         if best is None:
             row = {"sequence_id": sequence_id, "label": None, "round": 1, "origin": scan.origin}
-            best = insert_row(connection, tables.scan, row)
+            best = new_scan(connection, row)
         free.discard(best)
         members = [by_id[shot_id] for shot_id in scan.shot_ids]
         planned = [row.planned_shots for row in members if row.planned_shots is not None]

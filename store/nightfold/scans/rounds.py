@@ -11,12 +11,11 @@ from typing import Any
 from sqlalchemy import Connection, Row, case, delete, func, select, update
 
 from nightfold import tables
-from nightfold.ledger.names import insert_row
 from nightfold.ledger.notes import hand_over_notes, has_notes, scan_subject
 from nightfold.ledger.pins import kept_scans, read_pins
 from nightfold.ledger.rows import chunks
 from nightfold.ledger.selecting import is_double
-from nightfold.scans.keeping import set_axes, settle_axes
+from nightfold.scans.keeping import new_scan, set_axes, settle_axes
 from nightfold.scans.sweeps import declared_sweeps
 
 ALWAYS_SETTLED = 64
@@ -92,7 +91,7 @@ def open_round(
     after = max((row.round for row in rows if row.id not in kept), default=0)
     number = next(_free_numbers(rows, kept, after))
     row = {"sequence_id": sequence_id, "label": label, "round": number, "origin": "label"}
-    scan_id = insert_row(connection, tables.scan, row)
+    scan_id = new_scan(connection, row)
     set_axes(connection, scan_id, swept)
     arranged = _lost_shots(connection, sequence_id, rows, kept)
     return Round(scan_id, frozenset(swept), started_us, 0, arranged=arranged)
@@ -205,7 +204,7 @@ def _choose_scans(
         wanted = max(free, key=lambda scan_id: _held(group, scan_id), default=None)
         if wanted is None or not _held(group, wanted):
             row = {"sequence_id": sequence_id, "label": label, "round": -1 - len(chosen), "origin": "label"}
-            wanted = insert_row(connection, tables.scan, row)
+            wanted = new_scan(connection, row)
         else:
             free.remove(wanted)
         chosen.append(wanted)
