@@ -72,7 +72,8 @@ class Batch:
 
     ``truth`` and ``least`` (B,) each by reported name: the value, and the least standard uncertainty an
     unbiased estimate could have, in the coordinate ``links`` names. ``sigma``, ``bad`` (B, n): scatter, and
-    which points are outliers. ``options``: what a lab would tell the fit besides (x, Y, model, background).
+    which points are outliers. ``curve`` (B, n): what Y would be without scatter. ``options``: what a lab would
+    tell the fit besides (x, Y, model, background).
     """
 
     model: str
@@ -81,6 +82,7 @@ class Batch:
     seed: int
     x: Array
     Y: Array
+    curve: Array
     sigma: Array
     truth: Values
     least: Values
@@ -154,7 +156,7 @@ def make_batch(model: str, n: int, kind: str, seed: int, rows: int = ROWS) -> Ba
     Y, bad = _scatter(rng, y, sigma, noise, kind, order)
     truth = {n: values[n] for n in (names_of(spec, background) if kind != "misfit" else values)}
     bare = Batch(
-        model, background, kind, seed, u, Y, sigma, truth, least, {n: spec.links_of(n) for n in truth}
+        model, background, kind, seed, u, Y, y, sigma, truth, least, {n: spec.links_of(n) for n in truth}
     )
     return _dressed(rng, spec, bare, bad, order, noise)
 
@@ -250,12 +252,12 @@ def _truths(
 def _untold(
     spec: Spec, background: str, u: Array, values: Values, sigma: Array, rows: int
 ) -> NDArray[np.intp]:
-    """Return rows whose rates or times nobody could tell to a factor of two; oscillations are all short."""
+    """Return rows whose rates or times nobody could tell to a factor of e; oscillations are all short."""
     if spec.family == "wave":
         return np.arange(rows)
     least = bounds(spec, background, u, values, sigma)
     spread = np.max([least[name] / measure(spec, name, values) for name in spec.limits], axis=0)
-    return np.concatenate([np.flatnonzero(spread >= np.log(2)), np.argsort(-spread)])[:rows]
+    return np.concatenate([np.flatnonzero(spread >= 1.0), np.argsort(-spread)])[:rows]
 
 
 def _without_background(spec: Spec, values: Values) -> Values:
@@ -384,6 +386,7 @@ def _dressed(
         bare.seed,
         x0 + xs * bare.x[order],
         ys * bare.Y[:, order],
+        ys * bare.curve[:, order],
         ys * bare.sigma[:, order],
         truth,
         least,

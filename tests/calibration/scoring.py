@@ -25,6 +25,8 @@ from nightfold.errors import NightfoldError
 Bools = NDArray[np.bool_]
 LEVELS = (0.6827, 0.95)
 SURE = 0.9973
+VISIBLE = 5.0
+"""A wrong shape can be seen when even the nearest curve of the model is so many standard deviations off."""
 TOLERANCE = {
     "fwhm": np.log(2),
     "lifetime": np.log(1.5),
@@ -56,6 +58,7 @@ class Score:
     inside: dict[str, NDArray[np.bool_]]
     wrong: Bools
     trusted: Bools
+    visible: Bools
     flagged: NDArray[np.intp]
     planted: int
     found: int
@@ -80,6 +83,7 @@ def score(batch: Batch) -> Score:
         {name: np.zeros((size, 2), dtype=bool) for name in names},
         ~blank,
         blank.copy(),
+        blank.copy(),
         np.zeros(size, dtype=np.intp),
         int(batch.bad.sum()),
         0,
@@ -92,7 +96,25 @@ def score(batch: Batch) -> Score:
     except (NightfoldError, ArithmeticError, LookupError, TypeError, ValueError) as error:
         result.crash = f"{batch.model} n={batch.n} {batch.kind} seed={batch.seed}: {error!r}"
     result.cpu = time.process_time() - began
+    if batch.kind == "misfit":
+        result.visible = _visible(batch)
     return result
+
+
+def _visible(batch: Batch) -> Bools:
+    """Return whether the model's nearest curve is far from the real one, by the scatter."""
+    near = fit_many(
+        batch.x,
+        batch.curve,
+        batch.model,
+        background=batch.background,
+        stderr=batch.sigma,
+        weights="given",
+        robust=False,
+    )
+    curves = np.array([near.result(row).predict(batch.x) for row in range(len(batch))])
+    away = np.sqrt(np.sum(((curves - batch.curve) / batch.sigma) ** 2, axis=1))
+    return np.asarray(~(away < VISIBLE))
 
 
 def _asked(batch: Batch) -> dict[str, Any]:

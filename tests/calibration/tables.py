@@ -23,6 +23,8 @@ class Tally:
     success: int = 0
     trusted: int = 0
     trusted_wrong: int = 0
+    visible: int = 0
+    visible_trusted_wrong: int = 0
     flagged: int = 0
     planted: int = 0
     found: int = 0
@@ -39,6 +41,8 @@ class Tally:
             total.success += int(score.success.sum())
             total.trusted += int(score.trusted.sum())
             total.trusted_wrong += int((score.trusted & score.wrong).sum())
+            total.visible += int(score.visible.sum())
+            total.visible_trusted_wrong += int((score.trusted & score.wrong & score.visible).sum())
             total.flagged += int((score.flagged > 0).sum())
             total.planted += score.planted
             total.found += score.found
@@ -168,7 +172,7 @@ class Report:
 
     def awkward_table(self) -> str:
         """Return what becomes of scans that are not as assumed, and of those with stated uncertainties."""
-        head = ("kind", "success", "68.3 / 95", "trusted", "trusted and wrong", "what is said")
+        head = ("kind", "success", "68.3 / 95", "trusted", "trusted and wrong", "of visible", "what is said")
         kinds = (CLEAN, WITH_OUTLIERS, *dict.fromkeys((*STATED, *AWKWARD)))
         return set_table(head, [self._awkward_row(kind) for kind in kinds if self.tally(kind=kind).scans])
 
@@ -180,6 +184,7 @@ class Report:
             pair(tally.coverage),
             percent(tally.share(tally.trusted)),
             percent(tally.share(tally.trusted_wrong)),
+            percent(tally.share(tally.visible_trusted_wrong, tally.visible)),
             said(tally, 4),
         ]
 
@@ -190,6 +195,8 @@ class Report:
         def cell(model: str, kind: str) -> str:
             tally = self.tally(model=model, kind=kind)
             wrong = percent(tally.share(tally.trusted_wrong))
+            if kind == "misfit":
+                wrong += f" ({percent(tally.share(tally.visible_trusted_wrong, tally.visible))})"
             return f"{percent(tally.share(tally.trusted), 0)}, {wrong}" if tally.scans else NONE
 
         rows = [[model, *(cell(model, kind) for kind in kinds)] for model in self.models]
