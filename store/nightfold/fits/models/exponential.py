@@ -6,8 +6,10 @@ import numpy as np
 
 from nightfold.fits.engine.arrays import Bools, Floats
 from nightfold.fits.engine.frame import Frame, Origin
+from nightfold.fits.models.loss import HALF_LIFE
 from nightfold.fits.models.shape import (
     Background,
+    Derived,
     Kind,
     LineShape,
     Parameter,
@@ -39,6 +41,7 @@ class Exponential(LineShape):
     theta: tuple[Theta, ...] = (lifetime("lifetime"),)
     linear: tuple[str | None, ...] = ("amplitude",)
     origin: Origin = "first"
+    derived: tuple[Derived, ...] = (HALF_LIFE,)
 
     @staticmethod
     def function(x: Floats, amplitude: float, lifetime: float) -> Floats:  # type: ignore[override]
@@ -65,6 +68,12 @@ class Exponential(LineShape):
             dq[:, 0, 1] *= growth
             dq[:, 0, 0] = q[:, 0] * back
         return q, dq
+
+    def derive(self, q: Floats) -> tuple[Floats, Floats]:
+        """Return the logarithm of ``lifetime ln 2`` and its derivative for ln lifetime."""
+        dq = np.zeros((len(q), 1, 2))
+        dq[:, 0, 1] = 1.0
+        return q[:, 1:2] + np.log(np.log(2.0)), dq
 
     def grid(self, window: Window) -> Floats:
         """Return rates."""

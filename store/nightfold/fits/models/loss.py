@@ -249,7 +249,7 @@ def partial_loss(g: Floats, u: Floats, n: int) -> tuple[Floats, Floats]:
     fall = np.expm1(-t)
     safe = np.where(t == 0, 1.0, t)
     h = np.where(t == 0, 1.0, -fall / safe)
-    slope = ((1.0 + fall) * (1.0 + t) - 1.0) / safe**2
+    slope = np.asarray(((1.0 + fall) * (1.0 + t) - 1.0) / safe**2)
     small = np.abs(t) < SMALL
     slope[small] = np.polyval(SERIES, t[small])
     return reach * h, reach * reach * slope
