@@ -162,7 +162,7 @@ class Chart:
         Parameters
         ----------
         values : sequence of float
-            Data minus curve, one for each point.
+            Data minus curve, one for each point but those flagged at the end.
         title : str
             What is written above the strip.
         height : int
@@ -179,7 +179,7 @@ class Chart:
         middle = height // 2
         for column in range(canvas.width):
             canvas.put(column, middle, self.glyphs.zero, "axis")
-        scaled = Points(self.points.x, [value / scatter for value in values], flagged=self.points.flagged)
+        scaled = Points(self.points.x[: len(values)], [value / scatter for value in values])
         _draw_points(canvas, strip, (scaled,), self.glyphs)
         names = {0: f"+{reach:.1f}", middle: "0", height - 1: f"-{reach:.1f}"}
         return [

@@ -107,6 +107,7 @@ def _key(args: Namespace) -> str | None:
     options = {
         "-o": args.observable, "--along": args.along, "--background": args.background, "--plain": args.plain,
         "--fixed": args.fixed, "--start": args.start, "--no-keep": args.no_keep,
+        "--figure": args.figure, "--estimate": args.estimate,
         "--relative-to": getattr(args, "relative_to", None),
     }  # fmt: skip
     given = [name for name, value in options.items() if value]

@@ -125,6 +125,8 @@ def test_the_tutorial_runs(in_folder: Path) -> None:
 def test_python_examples_run(page: str, four_nights: Path, in_folder: Path) -> None:
     shutil.copytree(four_nights, in_folder, dirs_exist_ok=True)
     run_python(DOCS / page)
+    if page == "fits.md":
+        run_commands(DOCS / page)
 
 
 def readme_records() -> Iterator[dict[str, Any]]:

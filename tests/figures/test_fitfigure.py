@@ -41,7 +41,8 @@ def test_shots_means_curve_and_band(resonance: FitResult) -> None:
     assert y[0] == pytest.approx(resonance.y[:3].mean())
     (bar,) = means.lines[2]  # type: ignore[attr-defined]
     (_, low), (_, high) = bar.get_segments()[0]
-    assert (high - low) / 2 == pytest.approx(resonance.y[:3].std(ddof=1) / np.sqrt(3))
+    scatter = np.sqrt(resonance.y.reshape(21, 3).var(axis=1, ddof=1).mean())
+    assert (high - low) / 2 == pytest.approx(scatter / np.sqrt(3))
     curve = line(figure, "curve")
     at, value = np.asarray(curve.get_xdata()), np.asarray(curve.get_ydata())
     assert value == pytest.approx(resonance.predict(at))
@@ -136,13 +137,22 @@ def test_a_huge_offset_is_in_the_name_of_the_axis() -> None:
 def test_single_shots_have_the_bars_given() -> None:
     x = np.linspace(0, 3, 12)
     y = np.exp(-x) + 0.01 * np.cos(9 * x)
-    figure = fit_figure(fit_curve(x, y, "exponential"), stderr=np.full(12, 0.02))
+    fit = fit_curve(x, y, "exponential", weights="equal", robust=False)
+    figure = fit_figure(fit, stderr=np.full(12, 0.02))
     (bar,) = figure.axes[0].containers[0].lines[2]  # type: ignore[attr-defined]
     (_, low), (_, high) = bar.get_segments()[3]
     assert high - low == pytest.approx(0.04)
     said = texts(figure)
     assert "one shot, ± 1 stderr" in said
     assert "mean" not in said
+
+
+def test_bars_are_of_the_scatter_that_the_fit_learnt(resonance: FitResult) -> None:
+    fit = replace(resonance, deviation=0.02 * resonance.y)
+    figure = fit_figure(fit, stderr=np.full(63, 1.0))
+    (bar,) = figure.axes[0].containers[0].lines[2]  # type: ignore[attr-defined]
+    (_, low), (_, high) = bar.get_segments()[20]
+    assert (high - low) / 2 == pytest.approx(np.sqrt(np.mean((0.02 * resonance.y[60:]) ** 2) / 3))
 
 
 def test_stderr_of_other_data_are_refused(resonance: FitResult) -> None:

@@ -7,7 +7,7 @@ import shlex
 import sys
 from argparse import ArgumentParser, Namespace
 from collections.abc import Sequence
-from dataclasses import dataclass
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from nightfold.concise import rounded
@@ -15,8 +15,9 @@ from nightfold_cli import estimates
 from nightfold_cli.arguments import add_relative, add_scan_key, named_number, relation
 from nightfold_cli.charts import chart_of_points
 from nightfold_cli.failures import UsageError
+from nightfold_cli.fitfiles import Drawn, add_figure, write_figures
 from nightfold_cli.known import drawn_together
-from nightfold_cli.layout import Cell, Column, Row
+from nightfold_cli.layout import Column, Row
 from nightfold_cli.naming import name_in, named_scan
 from nightfold_cli.opening import opened
 from nightfold_cli.plots import Label
@@ -26,7 +27,9 @@ from nightfold_cli.refits import add_again, fit_again
 from nightfold_cli.render import Screen
 from nightfold_cli.runs import Runs, runs_of
 from nightfold_cli.scantext import counted, title
-from nightfold_cli.settings import aligned, setting
+from nightfold_cli.settings import setting
+from nightfold_cli.sidebyside import compare, comparison_entry, show_comparison
+from nightfold_cli.slices import Slice, parts_of, show_slices
 
 if TYPE_CHECKING:
     from nightfold.fits.many import FitTable
@@ -40,19 +43,12 @@ EXAMPLES = (
     "nightfold fit loss-map lorentzian -o atom_number --along coil_current",
     "nightfold fit decay exponential two-body -o atom_number --fixed amplitude=1.2e5",
     "nightfold fit loss-coarse lorentzian -o atom_number --relative-to reference",
+    "nightfold fit loss-coarse lorentzian gaussian -o atom_number --figure loss.pdf",
     "nightfold fit --again",
 )
 _HEIGHT = 15
 _DENSE = 600
 _PATTERN = "No warnings, but the residuals follow a pattern: the curve may not be of this shape."
-
-
-@dataclass(frozen=True, slots=True)
-class Slice:
-    """One fit: where in the scan, and what came out."""
-
-    where: dict[str, Any]
-    result: FitResult
 
 
 def add_arguments(parser: ArgumentParser) -> None:
@@ -69,6 +65,7 @@ def add_arguments(parser: ArgumentParser) -> None:
             name, metavar="NAME=VALUE", type=named_number, action="append", default=[], help=help_line
         )
     add_relative(parser)
+    add_figure(parser)
     parser.add_argument("--no-keep", action="store_true", help="do not keep the fit in the store")
 
 
@@ -81,28 +78,54 @@ def run(args: Namespace) -> int:
         scan = named_scan(store, args.key, screen)
         name = name_in(store, scan)
         observable = _observable(scan, args.observable)
-        fits = [(model, _fit(store, scan, model, observable, args)) for model in args.models]
+        along = args.along or (scan.axes[0].parameter if scan.axes else "")
+        outcomes = [(model, _fit(store, scan, model, observable, args)) for model in args.models]
+        fits = [(model, parts_of(outcome)) for model, outcome in outcomes]
+        compared = compare(fits, args.estimate)
+        files = _files(store, scan, title(scan, name), outcomes, observable, along, args)
         if screen.json:
             from nightfold.fits.scanfit import count_left_out
 
-            along = args.along or scan.axes[0].parameter
             aside = count_left_out(scan, along)
             entries = [
                 _entry(name, observable, part, along, _of_slice(aside, part.where), args.relative_to)
                 for _, parts in fits
                 for part in parts
             ]
-            screen.answer({"fits": entries})
+            comparison = [comparison_entry(each) for each in compared]
+            screen.answer(
+                {"fits": entries, "comparison": comparison, "figures": [str(each) for each in files]}
+            )
             return 0
-        if not screen.terminal:
+        if screen.terminal:
+            for model, parts in fits:
+                if len(scan.axes) > 1:
+                    heading = _title(scan, name, model, observable, along, _background(parts), args)
+                    show_slices(screen, scan, heading, parts, dict(args.fixed), args.estimate)
+                else:
+                    _show(screen, scan, name, model, observable, parts[0].result, args)
+            show_comparison(screen, compared)
+        else:
             _tabulate(screen, fits)
-            return 0
-        for model, parts in fits:
-            if len(scan.axes) > 1:
-                _show_slices(screen, scan, name, model, observable, parts, args)
-            else:
-                _show(screen, scan, name, model, observable, parts[0].result, args)
+        for file in files:
+            screen.note(f"figure written to {file}")
     return 0
+
+
+def _files(
+    store: Store,
+    scan: Scan,
+    name: str,
+    outcomes: Sequence[tuple[str, FitResult | FitTable]],
+    observable: str,
+    along: str,
+    args: Namespace,
+) -> list[Path]:
+    """Draw figures, if they are asked for."""
+    if args.figure is None:
+        return []
+    drawn = Drawn(scan, name, observable, along, args.estimate, relation(args))
+    return write_figures(store, args.figure, outcomes, drawn)
 
 
 def _observable(scan: Scan, asked: str | None) -> str:
@@ -118,10 +141,10 @@ def _observable(scan: Scan, asked: str | None) -> str:
     return found[0]
 
 
-def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace) -> list[Slice]:
+def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace) -> FitResult | FitTable:
     """Fit one model."""
     with Progress(f"fitting {model}", 0, sys.stderr):
-        outcome = store.fit(
+        return store.fit(
             scan,
             model,
             observable=observable,
@@ -134,16 +157,6 @@ def _fit(store: Store, scan: Scan, model: str, observable: str, args: Namespace)
             keep=not args.no_keep,
             **relation(args),
         )
-    return parts_of(outcome)
-
-
-def parts_of(outcome: FitResult | FitTable) -> list[Slice]:
-    """Return the fits of an outcome, one a slice."""
-    from nightfold.fits.many import FitTable
-
-    if isinstance(outcome, FitTable):
-        return [Slice(dict(where), outcome.result(row)) for row, where in enumerate(outcome.slices)]
-    return [Slice({}, outcome)]
 
 
 def _tabulate(screen: Screen, fits: Sequence[tuple[str, list[Slice]]]) -> None:
@@ -190,7 +203,8 @@ def _draw(
     screen: Screen, scan: Scan, along: str, observable: str, result: FitResult, args: Namespace
 ) -> Runs | None:
     """Draw data, curve and residuals; return the runs of signs of these."""
-    table = scan.table(observables=[observable], **relation(args))
+    whole = scan.table(observables=[observable], **relation(args))
+    table = whole.drop(index=whole.index[list(result.outliers)])
     points = points_of(table, [along], [observable])
     if len(points) < 2 or not all(isinstance(point.at[0], int | float) for point in points):
         return None
@@ -200,7 +214,8 @@ def _draw(
     dense = [low - margin + step * index for index in range(_DENSE + 1)]
     curve = (dense, [float(value) for value in result.predict(dense)])
     x, y = (Label(name, table.attrs["units"].get(name) or "") for name in (along, observable))
-    chart = chart_of_points(points, x, y, screen.width, _HEIGHT, screen.unicode, curve)
+    outliers = list(zip(result.outlier_x.tolist(), result.outlier_y.tolist(), strict=True))
+    chart = chart_of_points(points, x, y, screen.width, _HEIGHT, screen.unicode, curve, outliers=outliers)
     screen.chart(chart.lines())
     fitted = [float(value) for value in result.predict([float(point.at[0]) for point in points])]
     residuals = [point.readings[observable].mean - value for point, value in zip(points, fitted, strict=True)]
@@ -208,6 +223,8 @@ def _draw(
     runs = runs_of(residuals)
     screen.chart([[(_summary(residuals, y.unit, runs), "label")]])
     screen.note(chart.legend)
+    if beyond := len(points) + len(outliers) - len(chart.points.x):
+        screen.note(f"{counted(beyond, 'outlier')} beyond the chart")
     return runs
 
 
@@ -224,11 +241,19 @@ def _summary(residuals: Sequence[float], unit: str, runs: Runs | None) -> str:
     )
 
 
+def _background(parts: Sequence[Slice]) -> str:
+    """Return the background of the fits of slices."""
+    return parts[0].result.background if parts else "none"
+
+
 def _counts(scan: Scan, result: FitResult) -> str:
     """Return how many shots were used."""
     aside = f", {scan.set_aside} set aside" if scan.set_aside else ""
-    missing = scan.shots - result.n
-    return f"from {counted(result.n, 'shot')}{aside}" + (f", {missing} without a value" if missing else "")
+    missing = scan.shots - result.n - len(result.outliers)
+    left = f", {counted(len(result.outliers), 'outlier')} left out" if result.outliers else ""
+    return f"from {counted(result.n, 'shot')}{left}{aside}" + (
+        f", {missing} without a value" if missing else ""
+    )
 
 
 def _verdict(screen: Screen, result: FitResult, runs: Runs | None) -> None:
@@ -249,64 +274,6 @@ def _verdict(screen: Screen, result: FitResult, runs: Runs | None) -> None:
             screen.text(_PATTERN)
         else:
             screen.text("No warnings; the residuals have a say too.")
-
-
-def _show_slices(
-    screen: Screen,
-    scan: Scan,
-    name: str,
-    model: str,
-    observable: str,
-    parts: Sequence[Slice],
-    args: Namespace,
-) -> None:
-    """Show a line a slice."""
-    background = parts[0].result.background if parts else "none"
-    screen.heading(*_title(scan, name, model, observable, args.along, background, args))
-    others = [axis for axis in scan.axes if parts and axis.parameter in parts[0].where]
-    names = list(parts[0].result.estimates) if parts else []
-    units = {name: parts[0].result.estimates[name].unit for name in names}
-    columns = [
-        *(Column(_named(axis.parameter, axis.unit), right=True) for axis in others),
-        *(Column(_named(name, units[name]), right=True, spare=rank) for rank, name in enumerate(names)),
-        Column("trust", wraps=True),
-    ]
-    fixed = dict(args.fixed)
-    settings = [aligned([part.where[axis.parameter] for part in parts]) for axis in others]
-    rows: list[Row] = [
-        [
-            *(column[place] for column in settings),
-            *(
-                estimates.value_text(estimate, fixed=name in fixed)
-                for name, estimate in part.result.estimates.items()
-            ),
-            _trust(part.result),
-        ]
-        for place, part in enumerate(parts)
-    ]
-    screen.table(columns, rows, empty="no slices")
-    doubted = [part for part in parts if not part.result.trusted]
-    if doubted:
-        screen.heading(f"DO NOT TRUST {len(doubted)} of {len(parts)} slices")
-        seen: dict[str, str] = {}
-        for part in doubted:
-            for warning in part.result.warnings:
-                if not warning.advisory:
-                    seen.setdefault(warning.code, warning.message)
-        for code, message in seen.items():
-            screen.item(code, message)
-
-
-def _trust(result: FitResult) -> Cell:
-    """Return whether to trust a slice."""
-    if result.trusted:
-        return Cell("yes")
-    return Cell("NO, " + ", ".join(warning.code for warning in result.warnings if not warning.advisory))
-
-
-def _named(name: str, unit: str | None) -> str:
-    """Return a column's head: ``center (A)``."""
-    return f"{name} ({unit})" if unit else name
 
 
 def _of_slice(counts: Sequence[tuple[dict[str, Any], int]], where: dict[str, Any]) -> int:

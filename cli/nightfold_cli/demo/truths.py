@@ -7,9 +7,9 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from nightfold_cli.commands.fit import Slice, parts_of
 from nightfold_cli.estimates import LEVEL_95
 from nightfold_cli.progress import Progress
+from nightfold_cli.slices import Slice, parts_of
 
 if TYPE_CHECKING:
     from nightfold.fits.estimate import Estimate

@@ -76,8 +76,8 @@ def fit_figure(
     x_name, y_name : str
         Names of the axes; the units are those of the fit.
     stderr : (n,) float array, optional
-        Of the points handed in to the fit, those not used too: the bar of a single shot. The bar of a mean is its
-        standard uncertainty from the scatter of its shots.
+        Of the points handed in to the fit, those not used too. Bars are of this where nothing better is known: first
+        comes the scatter that the fit learnt, then that of repeated shots, pooled.
     aside : tuple of two arrays, optional
         x and y of shots that are set aside; drawn faint.
 
@@ -167,6 +167,9 @@ def _draw_residuals(axes: Axes, main: Axes, result: FitResult, shots: Shots) -> 
     reach = max([*np.abs(single.y), *(np.abs(means.y) + np.nan_to_num(means.bar))], default=1.0) or 1.0
     axes.set_xlim(*main.get_xlim())
     axes.set_ylim(-1.15 * reach, 1.15 * reach)
+    dense = np.linspace(*main.get_xlim(), _DENSE)
+    low, high = (end - result.predict(dense) for end in result.band(dense, LEVEL_68))
+    axes.fill_between(dense, low, high, color=PALE_BLUE, linewidth=0, zorder=0)
     axes.axhline(0.0, color=BLUE, linewidth=0.9, zorder=1)
     nothing = Marks(np.empty(0), np.empty(0), np.empty(0))
     _draw_marks(axes, shots, single, means, outliers, nothing)
@@ -242,7 +245,7 @@ def _key(page: Page, result: FitResult, axes: Axes, shots: Shots, top: float) ->
         "outliers beyond": "outlier beyond the axis",
         "aside": f"{_ASIDE.name} ({len(shots.aside)})",
         "aside beyond": "set aside, beyond the axis",
-        "curve": result.model if result.trusted else f"{result.model}, not trusted",
+        "curve": "the fit" if result.trusted else "the fit, not trusted",
         "band": "68 % band of the curve",
     }
     shown = {label: artist for label in names if (artist := drawn.get(label)) is not None and _any(artist)}

@@ -52,17 +52,38 @@ def gather(result: FitResult, stderr: ArrayLike | None, aside: tuple[ArrayLike, 
     FitError
         When there is not a stderr for each point handed in to the fit.
     """
-    bars = np.full(result.n, np.nan)
-    if stderr is not None:
-        given, used = _numbers("stderr", stderr), np.asarray(result.used)
-        if given.ndim != 1 or (len(used) and len(given) <= used.max()):
-            raise FitError(
-                f"figure: found {given.size} stderr, wanted one for each point handed in to the fit"
-            )
-        bars = given[used]
-    single = Marks(result.x, result.y, bars)
+    groups = _groups(result.x)
+    single = Marks(result.x, result.y, _deviations(result, groups, stderr))
     left = (np.empty(0), np.empty(0)) if aside is None else (_numbers("x", aside[0]), _numbers("y", aside[1]))
-    return Shots(single, _means(single), _bare(result.outlier_x, result.outlier_y), _bare(*left))
+    outliers = _bare(result.outlier_x, result.outlier_y)
+    return Shots(single, _means(single, groups), outliers, _bare(*left))
+
+
+def _groups(x: Floats) -> list[NDArray[np.intp]]:
+    """Return the shots of each point, in rising order of x."""
+    if not len(x):
+        return []
+    order = np.argsort(x, kind="stable")
+    return np.split(order, np.flatnonzero(np.diff(x[order]) > _SAME * np.ptp(x)) + 1)
+
+
+def _deviations(result: FitResult, groups: list[NDArray[np.intp]], stderr: ArrayLike | None) -> Floats:
+    """Return the standard deviation of each shot; nan where nothing is known of it."""
+    given = np.full(result.n, np.nan)
+    if stderr is not None:
+        handed, used = _numbers("stderr", stderr), np.asarray(result.used)
+        if handed.ndim != 1 or (len(used) and len(handed) <= used.max()):
+            raise FitError(
+                f"figure: found {handed.size} stderr, wanted one for each point handed in to the fit"
+            )
+        given = handed[used]
+    if np.isfinite(result.deviation).all():
+        return result.deviation
+    spare = result.n - len(groups)
+    if not spare:
+        return given
+    squares = sum(float(np.sum((result.y[group] - result.y[group].mean()) ** 2)) for group in groups)
+    return np.full(result.n, np.sqrt(squares / spare))
 
 
 def _numbers(what: str, values: ArrayLike) -> Floats:
@@ -79,16 +100,11 @@ def _bare(x: Floats, y: Floats) -> Marks:
     return Marks(x[known], y[known], np.full(int(known.sum()), np.nan))
 
 
-def _means(single: Marks) -> Marks:
-    """Return the mean at each x, with its standard uncertainty: from the scatter, else that of the one shot."""
-    order = np.argsort(single.x, kind="stable")
-    x = single.x[order]
-    span = float(np.ptp(x)) if len(x) else 0.0
-    places = np.split(order, np.flatnonzero(np.diff(x) > _SAME * span) + 1) if len(x) else []
-    means, bars = [], []
-    for place in places:
-        values = single.y[place]
-        means.append(values.mean())
-        alone = len(place) == 1
-        bars.append(single.bar[place[0]] if alone else values.std(ddof=1) / np.sqrt(len(place)))
-    return Marks(np.array([single.x[place].mean() for place in places]), np.array(means), np.array(bars))
+def _means(single: Marks, groups: list[NDArray[np.intp]]) -> Marks:
+    """Return the mean at each x with its standard uncertainty."""
+    bars = [np.sqrt(np.mean(single.bar[group] ** 2) / len(group)) for group in groups]
+    return Marks(
+        np.array([single.x[group].mean() for group in groups]),
+        np.array([single.y[group].mean() for group in groups]),
+        np.array(bars),
+    )

@@ -250,7 +250,8 @@ def _scales(result: FitResult, rows: Any, stderr: ArrayLike | None) -> Floats:
     if result.settings["absolute_stderr"] or (result.request.weighted and not np.isfinite(learnt).all()):
         if stderr is None:
             raise FitError("comparison: these fits had given weights; pass stderr= again")
-        return np.asarray(stderr, dtype=np.float64)[result.used[rows]]
+        given: Floats = np.asarray(stderr, dtype=np.float64)
+        return np.asarray(given[result.used[rows]])
     return np.asarray(learnt) if np.isfinite(learnt).all() else np.ones(len(rows))
 
 
