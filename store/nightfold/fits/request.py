@@ -156,10 +156,9 @@ def _check_names(what: str, values: dict[str, float], known: list[str], model: s
 
 
 def _check_positive(what: str, values: dict[str, float], shape: LineShape) -> None:
-    for theta in shape.theta:
-        value = values.get(theta.name)
-        if value is not None and theta.positive and not value > 0:
-            raise FitError(f"{what} {theta.name}: found {value:g}, wanted a value greater than zero")
+    for name, value in values.items():
+        if name in shape.positive and not value > 0:
+            raise FitError(f"{what} {name}: found {value:g}, wanted a value greater than zero")
 
 
 def as_points(what: str, values: ArrayLike, dimensions: int) -> Floats:
@@ -181,6 +180,22 @@ def as_points(what: str, values: ArrayLike, dimensions: int) -> Floats:
         at = where[0] if len(where) == 1 else where
         raise FitError(f"{what}: found an infinite value at index {at}, wanted finite ones (nan is left out)")
     return array
+
+
+def check_span(what: str, x: Floats) -> None:
+    """Refuse points so far apart that their distance is beyond all numbers.
+
+    Raises
+    ------
+    FitError
+    """
+    points = x[np.isfinite(x)]
+    with np.errstate(over="ignore"):
+        if len(points) and not np.isfinite(np.ptp(points)):
+            raise FitError(
+                f"{what}: found points from {points.min():.4g} to {points.max():.4g}, wanted a span that a number can "
+                "hold (below 1.8e308); set the shots aside that are wrong"
+            )
 
 
 def check_stderr(stderr: ArrayLike | None, shape: tuple[int, ...]) -> Floats | None:
@@ -207,3 +222,53 @@ def check_stderr(stderr: ArrayLike | None, shape: tuple[int, ...]) -> Floats | N
         at = where[0] if len(where) == 1 else where
         raise FitError(f"stderr: found {array[where]:g} at index {at}, wanted positive numbers")
     return array
+
+
+def check_shared(shared: ArrayLike | None, shape: tuple[int, ...]) -> Floats | None:
+    """Return the changes of points with the errors that they share as an array, or None.
+
+    Raises
+    ------
+    FitError
+        When they do not match the values, or are infinite.
+    """
+    if shared is None:
+        return None
+    try:
+        array = np.asarray(shared, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise FitError("shared: found values that are not numbers, wanted an array of numbers") from None
+    if array.shape[:-1] not in (shape, shape[-1:]) or array.ndim < 2:
+        raise FitError(f"shared: found shape {array.shape}, wanted ({shape[-1]}, m) for m shared errors")
+    if np.isinf(array).any():
+        raise FitError("shared: found an infinite value, wanted finite ones (nan: not known)")
+    return array
+
+
+def check_times(started: ArrayLike | None, count: int) -> Floats | None:
+    """Return times as numbers of which the order counts, nan where one is not known; or None.
+
+    Raises
+    ------
+    FitError
+        When they are no times, or not one for each point.
+    """
+    if started is None:
+        return None
+    array = np.asarray(started)
+    if array.dtype == object:
+        import pandas as pd
+
+        try:
+            array = pd.to_datetime(array, utc=True).to_numpy().astype("datetime64[us]")
+        except (TypeError, ValueError):
+            raise FitError("started: found values that are not times, wanted datetimes or seconds") from None
+    if array.dtype.kind not in "Mfiu":
+        raise FitError(f"started: found values of type {array.dtype}, wanted datetimes or seconds")
+    if array.shape != (count,):
+        raise FitError(f"started: found shape {array.shape}, wanted {(count,)} as for x")
+    known = ~np.isnat(array) if array.dtype.kind == "M" else np.isfinite(array)
+    times = np.full(count, np.nan)
+    if known.any():
+        times[known] = np.unique(array[known], return_inverse=True)[1]
+    return times

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -52,6 +52,9 @@ class FitResult:
         nan where none was learnt.
     outlier_x, outlier_y : (m,) float arrays
         The outliers.
+    shared_stderr : dict of str to float
+        Part of the stderr of each estimate and derived number that is due to errors that points share, such as those
+        of reference shots; nan where these are not all known, empty where none were said to be shared.
     settings : dict
         ``weights``, ``absolute_stderr``, ``robust``, ``fixed``, ``start``: what it takes to fit again.
     """
@@ -69,6 +72,7 @@ class FitResult:
     deviation: Floats
     outlier_x: Floats
     outlier_y: Floats
+    shared_stderr: dict[str, float] = field(default_factory=dict)
 
     @property
     def model(self) -> str:
@@ -125,7 +129,7 @@ class FitResult:
         return evaluate(
             self.request.layout,
             np.asarray(x, dtype=np.float64),
-            {n: e.value for n, e in self.estimates.items()},
+            {n: e.value for n, e in (self.estimates | self.derived).items()},
         )
 
     def band(self, x: ArrayLike, level: float = 0.6827) -> tuple[Floats, Floats]:

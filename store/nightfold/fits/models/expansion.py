@@ -54,6 +54,13 @@ class Expansion(LineShape):
         """Return the size without background."""
         return np.hypot(initial_size, velocity * np.asarray(x))
 
+    def curve(self, x: Floats, values: dict[str, float]) -> Floats:
+        """Return the size; where the square of the velocity is known to be negative, of a cloud that shrinks."""
+        square = values.get("velocity_squared", 0.0)
+        if square >= 0.0:
+            return super().curve(x, values)
+        return np.asarray(np.sqrt(np.maximum(values["initial_size"] ** 2 + square * np.square(x), 0.0)))
+
     @property
     def positive(self) -> frozenset[str]:
         """Names of the parameters that must be greater than zero."""

@@ -130,7 +130,7 @@ class MixedLoss(LineShape):
 
     def bounds(self, window: Window) -> tuple[Floats, Floats]:
         """Return bounds of ln R and the share."""
-        low, high = loss_bounds(window, 2.0 * self.n)
+        low, high = loss_bounds(window, float(self.n))
         return np.append(low, 0.0), np.append(high, 1.0)
 
     def near(self, one: Floats, other: Floats) -> Bools:
@@ -211,7 +211,7 @@ class HeldRates(MixedLoss):
 
     def bounds(self, window: Window) -> tuple[Floats, Floats]:
         """Return bounds of the rates; a fixed one takes none."""
-        low, high = loss_bounds(window, 2.0 * self.n)
+        low, high = loss_bounds(window, float(self.n))
         return np.repeat(low, 2), np.repeat(high, 2)
 
     def near(self, one: Floats, other: Floats) -> Bools:

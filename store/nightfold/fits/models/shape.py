@@ -142,6 +142,10 @@ class LineShape(ABC):
     def function(x: Floats, *args: float) -> Floats:
         """Return the line without background, from x and the reported parameters in their order."""
 
+    def curve(self, x: Floats, values: dict[str, float]) -> Floats:
+        """Return the line without background for values by name, derived ones among them where known."""
+        return self.function(x, *(values[parameter.name] for parameter in self.parameters))
+
     @abstractmethod
     def basis(self, u: Floats, theta: Floats) -> tuple[Floats, Floats]:
         """Return the linear columns and their derivatives.
