@@ -34,6 +34,11 @@ def value_text(estimate: AnyEstimate, *, fixed: bool = False) -> str:
     return asymmetric(estimate.value, estimate.stderr, *estimate.interval(LEVEL_68))
 
 
+def unit_text(estimate: AnyEstimate, *, fixed: bool = False) -> str:
+    """Return the unit to stand behind the value; none behind words."""
+    return estimate.unit if fixed or value_text(estimate) != NOT_DETERMINED else ""
+
+
 def interval_text(estimate: AnyEstimate) -> str:
     """Return the 95 % interval, to the same place as the value."""
     low, high = estimate.interval(LEVEL_95)
@@ -46,7 +51,7 @@ def rows(estimates: Mapping[str, Estimate], fixed: Collection[str]) -> list[Row]
         [
             name,
             value_text(estimate, fixed=name in fixed),
-            estimate.unit,
+            unit_text(estimate, fixed=name in fixed),
             "" if name in fixed else interval_text(estimate),
         ]
         for name, estimate in estimates.items()

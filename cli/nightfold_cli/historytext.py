@@ -14,7 +14,7 @@ from nightfold_cli.settings import ENOUGH, setting
 if TYPE_CHECKING:
     from nightfold.ledger.history import FitUse, HeldReading, ShotEvent, ShotHistory
 
-_RECORD = "another record of it came: readings that were not there before, or nothing new"
+_RECORD = "another record of it came; when a first reading came is not kept"
 
 
 def show_history(screen: Screen, history: ShotHistory, times: LocalTimes) -> None:
@@ -30,7 +30,7 @@ def _draw(screen: Screen, history: ShotHistory, times: LocalTimes) -> None:
     """Draw both tables for a person."""
     moments = [times.local(event.at, history.machine) for event in history.events]
     rows: list[Row] = [
-        [when, event.kind, Cell.of(_lines(event))]
+        [when, event.kind, Cell.of(_lines(event, history))]
         for when, event in zip(compact(moments, seconds=True), history.events, strict=True)
     ]
     screen.table(
@@ -102,18 +102,18 @@ def _tabulate(screen: Screen, history: ShotHistory, times: LocalTimes) -> None:
     screen.table([Column(head) for head in columns], rows, empty="no observables yet")
 
 
-def _lines(event: ShotEvent) -> list[str]:
+def _lines(event: ShotEvent, history: ShotHistory) -> list[str]:
     """Return what happened, and below it who did it and why."""
     why = ": ".join(part for part in (event.by, event.why) if part)
-    return [line for line in (_said(event), why) if line] or [""]
+    return [line for line in (_said(event, history), why) if line] or [""]
 
 
-def _said(event: ShotEvent) -> str:
+def _said(event: ShotEvent, history: ShotHistory) -> str:
     """Return what happened in a line."""
     if event.kind == "taken":
         return f"from {event.what}" if event.what else ""
     if event.kind == "reading":
-        made = f" ({event.new.derivation})" if event.new.derivation else ""
+        made = f" ({_made_by(event.new)})" if event.new.derivation else ""
         change = f"{reading_text(event.old)} -> {reading_text(event.new)} {event.unit}".rstrip()
         return f"{event.what} {change}{made}"
     if event.kind == "corrected":
@@ -122,11 +122,22 @@ def _said(event: ShotEvent) -> str:
     if event.kind == "fit":
         return _use(event.new)
     if event.kind == "record":
-        return _RECORD
+        return _record(event.what, history)
     if event.kind.startswith(("join", "split")):
         places = (f"from scan {event.old}" if event.old else "", f"to scan {event.new}" if event.new else "")
         return " ".join(filter(None, places))
     return event.what
+
+
+def _record(what: str, history: ShotHistory) -> str:
+    """Return that another record came, and the first readings that it may have brought."""
+    if not what:
+        return _RECORD
+    first = [(name, history.readings[name][0]) for name in what.split(", ")]
+    said = (
+        f"{name} {reading_text(held)} {held.unit}".rstrip() + f" ({_made_by(held)})" for name, held in first
+    )
+    return f"{_RECORD}: it may have brought {', '.join(said)}"
 
 
 def _use(fit: FitUse) -> str:

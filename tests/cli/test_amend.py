@@ -135,6 +135,26 @@ def test_a_correction_says_what_is_stale_and_fit_again_mends_it(
     assert "no kept fit is stale: nothing to do again" in on_screen("--store", where, "fit", "--again")
 
 
+def test_a_late_first_reading_is_told_with_what_made_it(
+    at_home: Path, run: Callable[..., Any], on_screen: Callable[..., str]
+) -> None:
+    where = at_home / "late.sqlite"
+    made = {"name": "od-fit", "version": "1"}
+    with open_store(where, create=True) as store:
+        store.take([{
+            "uid": "late-1", "machine": "heron", "sequence": "hold", "started": "2026-10-05T20:00:00+00:00",
+            "parameters": {"hold": 1.0},
+        }])  # fmt: skip
+        store.take(
+            [{"uid": "late-1", "observables": {"n": {"value": 51420, "stderr": 1500}}, "derivation": made}]
+        )
+        store.take([{"uid": "late-1", "observables": {"n": 52000}, "derivation": made | {"version": "2"}}])
+        store.take([{"uid": "late-1", "observables": {"m": 7}}])
+    text = " ".join(on_screen("--store", where, "amend", "late-1", width=120).split())
+    assert text.count("it may have brought n 5.14(15)e4 (od-fit 1)") == 2
+    assert "-> 52000 (od-fit 2)" in text
+
+
 def test_a_scan_is_corrected_by_a_factor_tried_first_and_undone(
     where: Path, run: Run, on_screen: Show
 ) -> None:

@@ -12,6 +12,8 @@ from typing import Any
 import pytest
 
 from nightfold.opening import open_store
+from nightfold_cli.commands.fits import _estimates
+from nightfold_cli.estimates import plain_rows, rows, unit_text
 from nightfold_cli.refits import _moved, _value
 
 Show = Callable[..., str]
@@ -69,3 +71,14 @@ def test_what_is_not_determined_has_not_moved(where: Path) -> None:
     assert _value(lost, name) == "not determined"
     assert (_moved(lost, kept, name), _moved(kept, lost, name)) == ("", "")
     assert _moved(kept, kept, name) != ""
+
+
+def test_no_unit_stands_behind_words(where: Path) -> None:
+    with open_store(where) as store:
+        (kept,) = store.fits("again#1")
+    estimate = kept.estimates["lifetime"]
+    lost = replace(kept, estimates={"lifetime": replace(estimate, stderr=math.inf)})
+    assert (estimate.unit, unit_text(estimate), unit_text(lost.estimates["lifetime"])) == ("s", "s", "")
+    assert _estimates(lost) == ["lifetime not determined"]
+    assert rows(lost.estimates, ())[0][:3] == ["lifetime", "not determined", ""]  # type: ignore[arg-type]
+    assert plain_rows(lost.estimates)[0][3] == "s"

@@ -234,7 +234,8 @@ def test_a_parameter_that_scans_go_along_cannot_leave_the_card(store: Store, use
     use_card(CARD)
     store.take([record(k, 80 + k, swept=["detuning"], scan="line") for k in range(5)])
     with pytest.raises(
-        CardError, match=r"derived.detuning: found nothing, wanted an entry: the store has scans"
+        CardError,
+        match=r"derived.detuning: found nothing, wanted an entry: the store has scans along it; put it back",
     ):
         use_card(CARD.replace("detuning", "offset"))
     assert store.scan("line").axes[0].values == (0, 2, 4, 6, 8)

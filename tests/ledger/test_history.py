@@ -47,7 +47,7 @@ def test_everything_in_time_order(anywhere: str) -> None:
     assert [(event.kind, event.what) for event in history.events] == [
         ("taken", ""), ("fit", f"fit {first}"), ("reading", "n"), ("corrected", "coil"), ("corrected", "axis"),
         ("set aside", ""), ("fit", f"fit {second}"), ("put back", ""), ("note", "look again"), ("reading", "n"),
-        ("record", ""),
+        ("record", "width"),
     ]  # fmt: skip
     taken, fit, reading, coil, axis, aside, _, back, note, *_ = history.events
     assert (taken.at, history.machine) == (START + timedelta(seconds=60), "heron")

@@ -186,8 +186,8 @@ def test_what_was_fitted_after_a_split_goes_back_with_the_shots(rounds: Store) -
 @pytest.mark.parametrize(
     ("at", "problem", "kind"),
     [
-        (0, "all its 13 shots would be on one side", ChoiceNeeded),
-        (13, "on one side", ChoiceNeeded),
+        (0, "all its 13 shots would be on one side, wanted a count from 1 to 12", ChoiceNeeded),
+        (20, "on one side, wanted a count from 1 to 12", ChoiceNeeded),
         ("2026-10-04", "on one side", ChoiceNeeded),
         ("loss-0", "on one side", ChoiceNeeded),
         ("loss-1", "shots of it begin so", NotFound),
@@ -197,7 +197,7 @@ def test_what_was_fitted_after_a_split_goes_back_with_the_shots(rounds: Store) -
 )
 def test_refused_splits_change_nothing(rounds: Store, at: Any, problem: str, kind: type[Exception]) -> None:
     before = content(rounds)
-    with pytest.raises(kind, match=rf"split loss#1 at .*{problem}"):
+    with pytest.raises(kind, match=rf"split loss#1 (at|after) .*{problem}"):
         rounds.split_scan("loss#1", at=at)
     assert content(rounds) == before
     assert rounds.arrangements().empty
@@ -431,3 +431,6 @@ def test_a_place_outside_is_answered_in_the_time_of_the_machine(store: Store, tm
     ):
         store.split_scan("loss", at="2026-10-05T21:01")
     assert [scan.shots for scan in store.split_scan("loss", at="2026-10-05T15:01")] == [4, 9]
+    store.undo_arrangement(1)
+    with pytest.raises(ChoiceNeeded, match=r"undone before, on \d{4}-\d\d-\d\dT\d\d:\d\d:\d\d-0[45]:00$"):
+        store.undo_arrangement(1)

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 from nightfold_cli import estimates
 from nightfold_cli.arguments import add_last, say_earlier, the_last
-from nightfold_cli.estimates import value_text
+from nightfold_cli.estimates import unit_text, value_text
 from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines
 from nightfold_cli.layout import Cell, Column, Row
 from nightfold_cli.localtimes import LocalTimes, compact, heading
@@ -140,7 +140,7 @@ def _tabulate(
 def _estimates(fit: KeptFit) -> list[str]:
     """Return the estimates, one a line."""
     return [
-        f"{name} {value_text(estimate, fixed=estimate.fixed)} {estimate.unit}".rstrip()
+        f"{name} {value_text(estimate, fixed=estimate.fixed)} {unit_text(estimate, fixed=estimate.fixed)}".rstrip()
         for name, estimate in fit.estimates.items()
     ]
 

@@ -269,7 +269,7 @@ class _Units:
         text = f"{name}({', '.join(part.text for part in parts)})"
         unit = {"abs": first.unit, "min": first.unit, "max": first.unit}.get(name, "")
         if name in ("min", "max", "arctan2"):
-            arguments = [first.python, *(_same(first, part, f"and {name} of it") for part in parts[1:])]
+            arguments = [first.python, *(_same(first, part, ",", name) for part in parts[1:])]
         elif name in ("abs", "sqrt"):
             arguments = [first.python]
         elif name in ("sin", "cos", "tan"):
@@ -298,12 +298,13 @@ def _absolute(part: _Part) -> _Part:
     return _Part(f"({part.python} * {rule.factor!r} + {rule.value(0.0)!r})", unit, part.text)
 
 
-def _same(one: _Part, other: _Part, sign: str) -> str:
-    """Return the second part in the unit of the first."""
+def _same(one: _Part, other: _Part, sign: str, function: str = "") -> str:
+    """Return the second part in the unit of the first; they are joined by a sign, or arguments of a function."""
     try:
         return other.stated_in(one.unit)
     except UnitError as problem:
-        found = f"{one.text} ({_spelled(one.unit)}) {sign} {other.text} ({_spelled(other.unit)})"
+        left, right = (f"{part.text} ({_spelled(part.unit)})" for part in (one, other))
+        found = f"{function}({left}, {right})" if function else f"{left} {sign} {right}"
         raise FormulaError(found, f"units of one kind ({problem})") from None
 
 

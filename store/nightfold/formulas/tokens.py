@@ -35,6 +35,10 @@ _HINTS = {
     '"': "names without quotes; odd ones in backquotes: `hold time`",
     "=": "what stands on the right of the sign alone",
     "`": "a second backquote behind the name",
+    "\N{MINUS SIGN}": "the sign - of the keyboard",
+    "\N{EN DASH}": "the sign - of the keyboard",
+    "\N{MULTIPLICATION SIGN}": "the sign * of the keyboard",
+    "\N{MIDDLE DOT}": "the sign * of the keyboard",
     "[": "a cloud directly behind its observable: atom_number[up]",
 }
 
@@ -128,6 +132,8 @@ def _read_name(text: str, match: re.Match[str], tokens: Tokens, known: Collectio
         tokens.parts.append((word, word))
         return match.end()
     name = _cleaned(word)
+    if name == "\N{GREEK SMALL LETTER PI}" and name not in known:
+        raise FormulaError(f"the name {word!r}", "pi, written so, for the number")
     if name in CONSTANTS and name not in known:
         tokens.parts.append((repr(CONSTANTS[name]), word))
     else:

@@ -162,7 +162,10 @@ def release_derived(connection: Connection, machine: MachineNames, card: Machine
         if (known := machine.parameters.get(name)) is not None:
             axis, swept = tables.scan_axis.c.parameter_id, tables.swept_derived.c.parameter_id
             if any(_occurs(connection, column, known.id) for column in (axis, swept)):
-                wanted = "an entry: the store has scans along it (its expression may change)"
+                wanted = (
+                    "an entry: the store has scans along it; put it back into the card (its expression may change; "
+                    "'nightfold card' shows the one in force)"
+                )
                 wrong.append(f"derived.{name}: found nothing, wanted {wanted}")
                 continue
             connection.execute(delete(tables.parameter).where(tables.parameter.c.id == known.id))

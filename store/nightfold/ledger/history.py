@@ -87,7 +87,8 @@ class ShotEvent:
         ``taken``, ``reading`` (replaced), ``record`` (another one came), ``corrected``, ``set aside``, ``put back``,
         ``join``, ``split``, ``join undone``, ``split undone``, ``note`` or ``fit``.
     what : str
-        The observable, parameter, fit or place it is about; the text of a note.
+        The observable, parameter, fit or place it is about; the text of a note; of a ``record`` the observables,
+        with commas, whose first reading it may have brought.
     old, new : Any
         Before and after: a `HeldReading` each, the values of a setting, or the keys of scans; None where there is
         nothing to compare, or a scan is gone. `new` of a fit is a `FitUse`.
@@ -173,7 +174,7 @@ def read_history(connection: Connection, uid: str, stale: Collection[int]) -> Sh
         *_arrangements(connection, shot),
         *_notes(connection, shot.id),
     ]
-    dated += _other_records(connection, shot.id, {event.at for event in dated})
+    dated += _other_records(connection, shot.id, {event.at for event in dated}, readings)
     dated += _fits(connection, shot.id, stale)
     events = (taken, *sorted(dated, key=lambda event: event.at))
     return ShotHistory(shot.uid, from_us(shot.started_us), machine, events, readings)
@@ -272,11 +273,20 @@ def _notes(connection: Connection, shot_id: int) -> Iterator[ShotEvent]:
         yield ShotEvent(from_us(row.at_us), "note", row.text, by=row.by)
 
 
-def _other_records(connection: Connection, shot_id: int, known: Collection[datetime]) -> list[ShotEvent]:
-    """Return when records came of which no other event tells: readings that were not there before are not dated."""
+def _other_records(
+    connection: Connection,
+    shot_id: int,
+    known: Collection[datetime],
+    readings: Mapping[str, tuple[HeldReading, ...]],
+) -> list[ShotEvent]:
+    """Return when records came of which no other event tells, and which first readings one of them may have brought.
+
+    When a first reading came is not kept. Those with a derivation are of an analysis, often later than the shot.
+    """
     table = tables.amendment
     moments = connection.execute(select(table.c.at_us).where(table.c.shot_id == shot_id)).scalars()
-    return [ShotEvent(at, "record", "") for at in sorted({from_us(us) for us in moments} - set(known))]
+    perhaps = ", ".join(name for name, held in readings.items() if held[0].derivation is not None)
+    return [ShotEvent(at, "record", perhaps) for at in sorted({from_us(us) for us in moments} - set(known))]
 
 
 def _fits(connection: Connection, shot_id: int, stale: Collection[int]) -> list[ShotEvent]:

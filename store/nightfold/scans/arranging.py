@@ -20,7 +20,7 @@ from nightfold.scans.keeping import leading_axes, new_scan, set_axes, settle_axe
 from nightfold.scans.listing import find_id, why_empty
 from nightfold.scans.refolding import fold_span
 from nightfold.scans.rounds import fold_label, move_shots, retire, swept_of
-from nightfold.timestamps import find_zone, from_us, now_us
+from nightfold.timestamps import find_zone, from_us, now_us, to_us
 
 FEWEST_LETTERS = 4
 """So many letters of a uid name a shot, if no other of the scan begins so."""
@@ -69,14 +69,7 @@ def split_scan(
     shots = _shots_of(connection, row)
     place = _place_of(shots, at, row)
     if not 0 < place < len(shots):
-        ends = [
-            from_us(shot.started_us).astimezone(find_zone(row.zone)).isoformat()
-            for shot in (shots[0], shots[-1])
-        ]
-        raise ChoiceNeeded(
-            f"split {_key(row)} at {at}: all its {len(shots)} shots would be on one side, wanted a place between "
-            f"{ends[0]} and {ends[1]}"
-        )
+        raise ChoiceNeeded(f"split {_key(row)} {_wanted_place(shots, at, row.zone)}")
     axes = leading_axes(connection, row.id)
     number = 1
     if row.label is not None:
@@ -111,7 +104,8 @@ def undo_arrangement(connection: Connection, number: int, by: str | None) -> Arr
             f"arrangement {number}: not in this store; 'nightfold join --list' shows those there are"
         )
     if found[0].undone is not None:
-        raise ChoiceNeeded(f"arrangement {number}: it was undone before, on {found[0].undone.isoformat()}")
+        when = _local(to_us(found[0].undone), _zone_of(connection, found[0].machine))
+        raise ChoiceNeeded(f"arrangement {number}: it was undone before, on {when}")
     later = _later(connection, number)
     if later:
         others = f"arrangement{'s' if len(later) > 1 else ''} {', '.join(map(str, later))}"
@@ -133,6 +127,11 @@ def undo_arrangement(connection: Connection, number: int, by: str | None) -> Arr
         retire(connection, scan_id, heir)
     _fold_again(connection, scans, moved)
     return read_arrangements(connection, whole.c.id == number)[0]
+
+
+def _zone_of(connection: Connection, machine: str) -> str:
+    table = tables.machine
+    return connection.execute(select(table.c.zone).where(table.c.name == machine)).scalar_one()
 
 
 def _scan_row(connection: Connection, scan_id: int) -> Row[Any]:
@@ -180,6 +179,23 @@ def _place_of(shots: Sequence[Row[Any]], at: int | str | datetime, scan: Row[Any
     except NotFound:
         return _beginning(uids, str(at), scan)
     return sum(shot.started_us < us for shot in shots)
+
+
+def _wanted_place(shots: Sequence[Row[Any]], at: int | str | datetime, zone: str) -> str:
+    """Return the place asked for and where one could be: in counts if a count was asked for, else in local times."""
+    one_side = f"all its {len(shots)} shots would be on one side"
+    if hasattr(at, "__index__"):
+        count = operator.index(at)
+        if len(shots) < 2:
+            return f"after {count}: {one_side}, wanted a scan of two or more"
+        return f"after {count}: {one_side}, wanted a count from 1 to {len(shots) - 1}"
+    first, last = (_local(shot.started_us, zone) for shot in (shots[0], shots[-1]))
+    return f"at {at}: {one_side}, wanted a place between {first} and {last}"
+
+
+def _local(us: int, zone: str) -> str:
+    """Return a time as the clocks of a machine show it, with the offset, to the second."""
+    return from_us(us).astimezone(find_zone(zone)).isoformat(timespec="seconds")
 
 
 def _beginning(uids: Sequence[str], text: str, scan: Row[Any]) -> int:
