@@ -10,7 +10,7 @@ from itertools import zip_longest
 from typing import TYPE_CHECKING, Any
 
 from nightfold.concise import NOT_DETERMINED
-from nightfold_cli.estimates import plain_rows, value_text
+from nightfold_cli.estimates import plain_rows, unit_text, value_text
 from nightfold_cli.failures import UsageError
 from nightfold_cli.keptfits import kept_entry, named_fits, relative_lines, slice_lines
 from nightfold_cli.layout import Column, Row
@@ -168,7 +168,7 @@ def _rows(before: KeptFit | None, after: KeptFit) -> list[Row]:
         if not name:
             rows.append([head, "", "", "", "", ""])
             continue
-        unit = after.estimates[name].unit
+        unit = unit_text(after.estimates[name], fixed=after.estimates[name].fixed)
         rows.append(
             [head, name, _value(before, name), _value(after, name), unit, _moved(before, after, name)]
         )

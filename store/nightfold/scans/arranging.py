@@ -131,7 +131,7 @@ def undo_arrangement(connection: Connection, number: int, by: str | None) -> Arr
 
 def _zone_of(connection: Connection, machine: str) -> str:
     table = tables.machine
-    return connection.execute(select(table.c.zone).where(table.c.name == machine)).scalar_one()
+    return str(connection.execute(select(table.c.zone).where(table.c.name == machine)).scalar_one())
 
 
 def _scan_row(connection: Connection, scan_id: int) -> Row[Any]:
