@@ -6,8 +6,10 @@ from typing import Any
 import numpy as np
 import pytest
 
+from nightfold import Store
 from nightfold.errors import FitError
 from nightfold.fits.curve import fit_curve
+from nightfold.fits.many import fit_many
 
 from .examples import EXAMPLES
 
@@ -91,3 +93,24 @@ def test_as_many_points_as_parameters_is_a_result_without_uncertainty() -> None:
     assert "too-few-points" in [warning.code for warning in result.warnings]
     absolute = fit_curve(X[rows], Y[rows], "lorentzian", stderr=0.05, absolute_stderr=True)
     assert np.isfinite(absolute.estimates["center"].stderr)
+
+
+def test_points_farther_apart_than_a_number_can_tell() -> None:
+    x = [-1e308, 0.0, 1.0, 2.0, 3.0, 1e308]
+    said = "x: found points from -1e[+]308 to 1e[+]308, wanted a span that a number can hold"
+    with pytest.raises(FitError, match=said):
+        fit_curve(x, [1.0, 2.0, 3.0, 2.0, 1.0, 1.0], "lorentzian", background="none")
+    with pytest.raises(FitError, match=said):
+        fit_many(x, [[1.0, 2.0, 3.0, 2.0, 1.0, 1.0]], "lorentzian", background="none")
+
+
+def test_a_scan_with_such_points_names_its_axis(store: Store) -> None:
+    store.take(
+        {
+            "uid": f"far-{k}", "machine": "heron", "sequence": "hold", "scan": "far", "swept": ["hold"],
+            "started": f"2026-10-05T20:{k:02d}:00+00:00", "parameters": {"hold": value}, "observables": {"n": 1.0 + k},
+        }
+        for k, value in enumerate([-1e308, 0.0, 1.0, 2.0, 3.0, 1e308])
+    )  # fmt: skip
+    with pytest.raises(FitError, match=r"scan far#1: hold: found points from -1e[+]308 to 1e[+]308"):
+        store.fit("far", "exponential", observable="n")

@@ -109,6 +109,17 @@ def test_each_cloud_has_its_own_level(store: Store) -> None:
     assert "atom_number_reference[up]" in store.scan("loss").table(relative_to="reference")
 
 
+def test_clouds_that_reference_shots_lack_are_answered_with_what_they_have(store: Store) -> None:
+    up = {"atom_number[up]": number(50, 1), "atom_number": number(80, 1), "width": number(2, 1)}
+    take(store, [shot(0, None, width=number(1, 1), atom_number=number(100, 1)), shot(1, 61.0, **up)])
+    scan = store.scan("loss")
+    with pytest.raises(
+        NoReference, match=r"atom_number\[up\] .* they have atom_number: .* as in -o atom_number "
+    ):
+        scan.table(relative_to="reference")
+    assert scan.table(relative_to="reference", observables=["atom_number"])["atom_number"].item() == 0.8
+
+
 def test_an_observable_called_like_a_level_keeps_its_name(store: Store) -> None:
     both = {"atom_number": number(50, 1), "atom_number_reference": number(7, 1)}
     take(store, [shot(0, None, **both), shot(1, 61.0, **both)])

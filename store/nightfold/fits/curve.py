@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike
 
 from nightfold.errors import FitError
 from nightfold.fits.many import fit_table
-from nightfold.fits.request import as_points, check_stderr
+from nightfold.fits.request import as_points, check_span, check_stderr
 from nightfold.fits.result import FitResult
 
 
@@ -79,6 +79,7 @@ def fit_curve(
     points, values = as_points("x", x, 1), as_points("y", y, 1)
     if len(points) != len(values):
         raise FitError(f"y: found {len(values)} values, wanted {len(points)} as for x")
+    check_span("x", points)
     errors = check_stderr(stderr, values.shape)
     options: dict[str, Any] = {
         "absolute_stderr": absolute_stderr,

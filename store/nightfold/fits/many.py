@@ -16,7 +16,7 @@ from nightfold.fits.engine.links import bends
 from nightfold.fits.engine.trust import Facts, FitWarning, judge
 from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
-from nightfold.fits.request import as_points, check_stderr, make_request
+from nightfold.fits.request import as_points, check_span, check_stderr, make_request
 from nightfold.fits.result import FitResult
 
 if TYPE_CHECKING:
@@ -73,6 +73,7 @@ def fit_many(
     points, values = as_points("x", x, 1), as_points("Y", Y, 2)
     if values.shape[1] != len(points):
         raise FitError(f"Y: found shape {values.shape}, wanted one column for each of the {len(points)} x")
+    check_span("x", points)
     errors = check_stderr(stderr, values.shape)
     options: dict[str, Any] = {
         "absolute_stderr": absolute_stderr,

@@ -14,6 +14,7 @@ from nightfold.card import without_cloud
 from nightfold.errors import ChoiceNeeded, FitError, NotFound
 from nightfold.fits.curve import fit_curve
 from nightfold.fits.many import FitTable, fit_many
+from nightfold.fits.request import check_span
 from nightfold.fits.result import FitResult
 from nightfold.fits.source import PLAIN, Source
 from nightfold.ledger.selecting import column_name, near_miss
@@ -322,7 +323,9 @@ def _numbers(scan: Scan, table: pd.DataFrame, along: str) -> NDArray[np.float64]
     strange = next((value for value in values if isinstance(value, (str, bool))), None)
     if strange is not None:
         raise FitError(f"scan {scan.key}: {along} is no number (found {strange!r}); a fit goes along numbers")
-    return np.array([np.nan if value is None else value for value in values], dtype=np.float64)
+    numbers = np.array([np.nan if value is None else value for value in values], dtype=np.float64)
+    check_span(f"scan {scan.key}: {along}", numbers)
+    return numbers
 
 
 def _stderr(table: pd.DataFrame, observable: str, request: FitRequest) -> NDArray[np.float64] | None:

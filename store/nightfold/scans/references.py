@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from math import ceil, inf
+from shlex import quote
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -255,6 +256,7 @@ def _too_far(
         return NoReference(
             f"{_start(comparison, item)}: found no reference shot of its machine that has it, wanted some within "
             f'{limit} of every shot (records that say "reference": true, not set aside)'
+            + _another(connection, comparison, moments, item)
         )
     away = nearest(moments.at_s[asked], times)
     far = away[away > comparison.within_s]
@@ -263,6 +265,16 @@ def _too_far(
         f"has its nearest {span_text(far.max())} away; if that is near enough, say so: "
         f"reference_within='{span_text(far.max(), up=True)}' (--reference-within)"
     )
+
+
+def _another(connection: Connection, comparison: Comparison, moments: _Moments, item: Named) -> str:
+    """Return the proposal to look at another observable, if reference shots have one that can be compared."""
+    near = _read(connection, comparison, moments)
+    base = split_cloud(item.name)[0]
+    there = [name for name, found in near.items() if any(len(each.uids) for each in found)]
+    for name in sorted(there, key=lambda name: split_cloud(name)[0] != base):
+        return f"; they have {name}: ask for that alone, as in -o {quote(name)} (observables=[{name!r}])"
+    return ""
 
 
 def _check_level(
