@@ -125,6 +125,25 @@ def test_naive_times_must_mean_the_same(anywhere: str, tmp_path: Path) -> None:
         assert store.take([naive]).known == 1
 
 
+def test_naive_times_of_an_earlier_card_count_too(anywhere: str, tmp_path: Path) -> None:
+    def use(store: Store, machine: str, zone: str, naive: str) -> None:
+        path = tmp_path / "card.toml"
+        path.write_text(f'machine = "{machine}"\nzone = "{zone}"\nnaive_times = {naive}\n')
+        store.use_card(path)
+
+    with open_store(anywhere) as store:
+        use(store, WRONG, "Europe/Vienna", "true")
+        store.take([simple(0, WRONG, started="2026-10-05T21:00:00")])
+        use(store, WRONG, "UTC", "false")
+        use(store, RIGHT, "UTC", "true")
+        with pytest.raises(
+            MergeError, match="times without offset are local times of Europe/Vienna at Heron"
+        ):
+            store.merge_machines(WRONG, RIGHT, reason="x")
+        use(store, RIGHT, "UTC", "false")
+        store.merge_machines(WRONG, RIGHT, reason="x")
+
+
 def test_sensors_that_contradict_each_other(anywhere: str) -> None:
     with open_store(anywhere) as store:
         store.take([simple(0, WRONG), simple(1)])

@@ -180,6 +180,18 @@ def _moved_times(connection: Connection, machine: MachineNames, card: MachineCar
     """Return the reason against a card that reads times without an offset in another zone than one before it did."""
     if not card.naive_times or not _has_times(connection, machine.id):
         return []
+    zone = last_naive_zone(connection, machine) or card.zone
+    if zone == card.zone:
+        return []
+    return [
+        f"zone: found {card.zone!r} with naive_times = true, wanted {zone!r}, in which times without an offset were "
+        "read before: taken again they would be other shots (without naive_times the zone may be another one; "
+        "times then need an offset)"
+    ]
+
+
+def last_naive_zone(connection: Connection, machine: MachineNames) -> str | None:
+    """Return the zone in which times without an offset were read last, by any card of a machine; None if never."""
     given = tables.card
     texts = connection.execute(
         select(given.c.toml)
@@ -188,14 +200,7 @@ def _moved_times(connection: Connection, machine: MachineNames, card: MachineCar
     ).scalars()
     before = (stored_card(toml) for toml in texts)
     naive = (old for old in before if old.naive_times and old.machine == machine.name)
-    zone = next((old.zone for old in naive), card.zone)
-    if zone == card.zone:
-        return []
-    return [
-        f"zone: found {card.zone!r} with naive_times = true, wanted {zone!r}, in which times without an offset were "
-        "read before: taken again they would be other shots (without naive_times the zone may be another one; "
-        "times then need an offset)"
-    ]
+    return next((old.zone for old in naive), None)
 
 
 def _has_times(connection: Connection, machine_id: int) -> bool:

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 from sqlalchemy import Connection, func, select
 
 from nightfold import tables
-from nightfold.ledger.cards import contradictions
+from nightfold.ledger.cards import contradictions, last_naive_zone
 from nightfold.ledger.deriving import derived_contradictions
 from nightfold.ledger.names import Known, MachineNames
 from nightfold.ledger.rows import chunks
@@ -19,7 +19,7 @@ _WORDS = {"parameters": "a parameter", "observables": "an observable", "sensors"
 
 def find_objections(connection: Connection, old: MachineNames, into: MachineNames) -> list[str]:
     """Return every reason why the first machine cannot be merged into the second."""
-    found = [*_names(old, into), *_card(old, into), *_sensors(connection, old, into)]
+    found = [*_names(old, into), *_card(connection, old, into), *_sensors(connection, old, into)]
     if into.card is not None:
         said = contradictions(old, into.card) + derived_contradictions(connection, old, into.card)
         found += [
@@ -55,7 +55,7 @@ def _differences(
         yield f"{field}: found {ours.unit!r} at {old.name}, wanted {theirs.unit!r} as at {into.name}"
 
 
-def _card(old: MachineNames, into: MachineNames) -> Iterator[str]:
+def _card(connection: Connection, old: MachineNames, into: MachineNames) -> Iterator[str]:
     """Yield what would be lost with the card of the machine that goes."""
     if old.card is None:
         return
@@ -64,9 +64,12 @@ def _card(old: MachineNames, into: MachineNames) -> Iterator[str]:
             f"card: {old.name} has one, wanted one of {into.name} too (it is then the one in force); "
             "use one first: nightfold take --card, or Store.use_card"
         )
-    elif old.card.naive_times and (not into.card.naive_times or old.zone != into.zone):
+        return
+    zone = last_naive_zone(connection, old)
+    lost = old.card.naive_times and not into.card.naive_times
+    if zone is not None and (lost or (into.card.naive_times and zone != into.zone)):
         yield (
-            f"card: times without offset are local times of {old.zone} at {old.name}, wanted the same at {into.name}, "
+            f"card: times without offset are local times of {zone} at {old.name}, wanted the same at {into.name}, "
             "or files taken already would be other shots when they are taken again"
         )
 
