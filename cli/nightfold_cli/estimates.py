@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Collection, Mapping
+from collections.abc import Collection, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
-from nightfold.concise import NOT_DETERMINED, asymmetric, interval, plain
+from nightfold.concise import NOT_DETERMINED, asymmetric, interval, plain, rounded
 from nightfold_cli.layout import Column, Row
 
 if TYPE_CHECKING:
@@ -70,6 +70,14 @@ def plain_rows(estimates: Mapping[str, AnyEstimate]) -> list[Row]:
         ]
         for name, estimate in estimates.items()
     ]
+
+
+def shared_text(shared: Mapping[str, float], names: Sequence[str]) -> str:
+    """Return the part of the uncertainties that is due to reference shots."""
+    if any(math.isnan(shared[name]) for name in names):
+        return "of which reference shots: not known (no stderr stated, and too few to see their scatter)"
+    parts = ", ".join(f"{name} {rounded(shared[name], 2)}" for name in names)
+    return f"standard uncertainty due to reference shots, within the above: {parts}"
 
 
 def entry(estimate: AnyEstimate) -> dict[str, Any]:

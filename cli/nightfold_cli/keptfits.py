@@ -55,6 +55,7 @@ def kept_entry(fit: KeptFit) -> dict[str, Any]:
         "relative_to": fit.settings.get("relative_to"),
         "slice": fit.slice or {},
         "estimates": {name: estimates.entry(estimate) for name, estimate in fit.estimates.items()},
+        "shared_stderr": fit.shared_stderr,
         "trusted": fit.trusted,
         "warnings": [estimates.warning_entry(warning) for warning in fit.warnings],
         "shots": fit.shots,

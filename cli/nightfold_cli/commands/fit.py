@@ -196,6 +196,8 @@ def _show(
     screen.table(
         estimates.ON_SCREEN, estimates.rows(result.estimates, dict(args.fixed)), empty="no estimates"
     )
+    if result.shared_stderr:
+        screen.note(estimates.shared_text(result.shared_stderr, result.free_names))
     _verdict(screen, result, runs)
 
 
@@ -295,6 +297,7 @@ def _entry(
         "relative_to": relative_to,
         "slice": part.where,
         "estimates": {name: estimates.entry(estimate) for name, estimate in result.estimates.items()},
+        "shared_stderr": result.shared_stderr,
         "trusted": result.trusted,
         "warnings": [estimates.warning_entry(warning) for warning in result.warnings],
         "shots": result.n,

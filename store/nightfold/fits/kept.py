@@ -78,6 +78,8 @@ def keep_fit(connection: Connection, scan: Scan, request: FitRequest, part: Slic
     if earlier is not None and all(earlier._mapping[name] == value for name, value in rest.items()):
         return  # the same fit of the same data is there already
     covariance = {"names": list(result.free_names), "rows": result.covariance_matrix.tolist()}
+    if result.shared_stderr:
+        covariance["shared_stderr"] = result.shared_stderr
     row = {
         **same,
         **rest,
@@ -336,4 +338,5 @@ def _make_kept(
         stale=digest is None or digest != bytes(row.data_digest),
         version=row.program,
         replaces=row.replaces,
+        shared_stderr=json.loads(row.covariance).get("shared_stderr", {}),
     )

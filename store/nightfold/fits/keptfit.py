@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any
 
@@ -67,6 +67,8 @@ class KeptFit:
         The nightfold that did it.
     replaces : int or None
         The earlier fit that this one replaced.
+    shared_stderr : dict of str to float
+        Of a fit relative to reference shots: the part of each stderr that is due to these.
     """
 
     id: int
@@ -87,3 +89,4 @@ class KeptFit:
     stale: bool
     version: str
     replaces: int | None
+    shared_stderr: dict[str, float] = field(default_factory=dict)

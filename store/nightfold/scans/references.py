@@ -18,7 +18,7 @@ from nightfold.cardkeys import read_span
 from nightfold.errors import ChoiceNeeded, NoReference
 from nightfold.ledger.columns import Named, reading_columns
 from nightfold.ledger.selecting import column_name, set_aside_now
-from nightfold.scans.relative import Floats, Level, level_at, nearest, ratio_of
+from nightfold.scans.relative import Floats, Level, known_stderr, level_at, nearest, ratio_of
 from nightfold.units import counts_from_zero
 
 if TYPE_CHECKING:
@@ -77,6 +77,12 @@ class _References:
         """Return those that are near one of some moments."""
         return self.take(nearest(self.times_s, np.sort(at)) <= within_s)
 
+    def facts(self, origin_us: int, within_s: float) -> dict[str, list[Any]]:
+        """Return what tells which errors shots share: when the reference shots started, and how well they are known."""
+        known = known_stderr(self.times_s, self.values, self.stderr, within_s)
+        started = np.round(self.times_s * _SECOND_US).astype(np.int64) + origin_us
+        return {"started_us": started.tolist(), "stderr": known.tolist()}
+
 
 def read_within(within: str | float) -> float:
     """Return a limit in seconds, from a number of them or a text such as ``30 min``.
@@ -128,7 +134,8 @@ def relate(connection: Connection, table: pd.DataFrame, comparison: Comparison) 
 
     Beside each observable and its ``_stderr`` stand ``<observable>_reference``, that level, and its ``_stderr``.
     ``attrs["levels"]`` says which is whose, ``attrs["relative"]`` how many reference shots there are, and how far
-    the worst shot is from them.
+    the worst shot is from them; ``attrs["references"]`` when those of each observable started (us since 1970), and their
+    standard uncertainties.
 
     Raises
     ------
@@ -141,7 +148,7 @@ def relate(connection: Connection, table: pd.DataFrame, comparison: Comparison) 
     moments = _Moments(int(at_us.min()) if len(at_us) else 0, at_us)
     near = _read(connection, comparison, moments)
     columns: dict[str, Any] = {str(name): table[name] for name in table.columns}
-    units, levels = dict(table.attrs["units"]), {}
+    units, levels, references = dict(table.attrs["units"]), {}, {}
     used: list[_References] = []
     worst = 0.0
     for item in comparison.observables:
@@ -160,11 +167,13 @@ def relate(connection: Connection, table: pd.DataFrame, comparison: Comparison) 
         columns[column_name(name)], columns[f"{column_name(name)}_stderr"] = level.value, level.stderr
         units |= {item.name: "", name: item.unit}
         levels[item.name] = name
+        references[item.name] = found.facts(moments.origin_us, comparison.within_s)
     frame = pd.DataFrame(columns)
     frame.attrs = {
         **table.attrs,
         "units": units,
         "levels": levels,
+        "references": references,
         "relative": {
             "relative_to": "reference",
             "reference_shots": len({uid for each in used for uid in each.uids}),

@@ -61,16 +61,56 @@ def level_at(at: Floats, times: Floats, values: Floats, stderr: Floats, within_s
     """
     if not len(times):
         return Level(*(np.full(len(at), fill) for fill in (np.nan, np.nan, np.inf)))
-    known = np.fmax(stderr, scatter_of(times, values, within_s))
+    known = known_stderr(times, values, stderr, within_s)
+    before, after, share, distance = _shares(at, times, within_s)
+    value = (1 - share) * values[before] + share * values[after]
+    squares = _part(1 - share, known[before]) ** 2 + _part(share, known[after]) ** 2
+    far = distance > within_s
+    return Level(np.where(far, np.nan, value), np.where(far, np.nan, np.sqrt(squares)), distance)
+
+
+def known_stderr(times: Floats, values: Floats, stderr: Floats, within_s: float) -> Floats:
+    """Return the standard uncertainty of each reference shot: the larger of stated and seen, (m,)."""
+    return np.asarray(np.fmax(stderr, scatter_of(times, values, within_s)))
+
+
+def shared_errors(
+    at: Floats, times: Floats, known: Floats, within_s: float, ratio: Floats, level: Floats
+) -> Floats:
+    """Return the change of each ratio with each reference shot by one standard uncertainty of it, (n, m).
+
+    Parameters
+    ----------
+    at, times, within_s
+        As in `level_at`.
+    known : (m,) float array
+        As by `known_stderr`.
+    ratio, level : (n,) float array
+        Readings divided by the level, and the level.
+
+    Notes
+    -----
+    To first order, as `ratio_of`: -(y / r^2) w s. The products of two rows are the covariances of two ratios that come
+    from the reference shots (JCGM 102:2011, 6.2).
+    """
+    errors = np.zeros((len(at), len(times)))
+    if not len(times):
+        return errors
+    before, after, share, _ = _shares(at, times, within_s)
+    rows = np.arange(len(at))
+    errors[rows, before] = _part(1 - share, known[before])
+    errors[rows, after] += _part(share, known[after])
+    return -(ratio / level)[:, None] * errors
+
+
+def _shares(
+    at: Floats, times: Floats, within_s: float
+) -> tuple[NDArray[np.intp], NDArray[np.intp], Floats, Floats]:
+    """Return which reference shots count for each moment, the share of the second, and how far the nearer one is."""
     before, after, since, until = _neighbours(at, times)
     with np.errstate(invalid="ignore"):
         share = np.where(until <= within_s, since / (since + until), 0.0)
-    share = np.where(since <= within_s, share, 1.0)  # of the one after
-    value = (1 - share) * values[before] + share * values[after]
-    squares = _part(1 - share, known[before]) + _part(share, known[after])
-    distance = np.minimum(since, until)
-    far = distance > within_s
-    return Level(np.where(far, np.nan, value), np.where(far, np.nan, np.sqrt(squares)), distance)
+    return before, after, np.where(since <= within_s, share, 1.0), np.minimum(since, until)
 
 
 def nearest(at: Floats, times: Floats) -> Floats:
@@ -91,8 +131,8 @@ def _neighbours(at: Floats, times: Floats) -> tuple[NDArray[np.intp], NDArray[np
 
 
 def _part(share: Floats, stderr: Floats) -> Floats:
-    """Return a part of the variance; what has no share in the value has none in its uncertainty."""
-    return np.where(share > 0, (share * stderr) ** 2, 0.0)
+    """Return a part of the error; what has no share in the value has none in its uncertainty."""
+    return np.where(share > 0, share * stderr, 0.0)
 
 
 def scatter_of(times: Floats, values: Floats, within_s: float) -> float:

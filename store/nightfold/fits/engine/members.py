@@ -16,6 +16,7 @@ from nightfold.fits.engine.arrays import Bools, Floats
 from nightfold.fits.engine.batched import combine, diagonal, dot, gram, inverse
 from nightfold.fits.engine.layout import Layout
 from nightfold.fits.engine.points import Points
+from nightfold.fits.engine.shared import own_share, shared_part
 from nightfold.fits.engine.solver import EXACT, MAX_STEPS, STEP_TOLERANCE, expand, solve
 from nightfold.fits.engine.variance import Laws, shapes, weigh
 
@@ -47,6 +48,8 @@ class Members:
         Of every point, relative to that.
     converged : (B, K) bool array
     bound : (B, K, P) bool array
+    shared : (B, K, R) float array
+        Part of the variance of the coordinates that is due to errors that points share.
     """
 
     theta: Floats
@@ -60,6 +63,7 @@ class Members:
     variance: Floats
     converged: Bools
     bound: Bools
+    shared: Floats
 
     def replace(self, rows: Bools, other: Members) -> Members:
         """Return these with some rows of others, which has those rows alone."""
@@ -83,6 +87,7 @@ def fit_laws(
     *,
     absolute: bool = False,
     exact: bool = False,
+    shared: Floats | None = None,
 ) -> Members:
     """Return the fits under each law.
 
@@ -96,6 +101,8 @@ def fit_laws(
         Take the scale of stated variances as it is.
     exact : bool
         Solve to the last digits.
+    shared : (B, n, m) float array, optional
+        Change of the points, in the frame, with each error that they share.
     """
     count, size, n = len(theta), len(laws), points.v.shape[1]
     variance = shapes(laws, curve, points.stated, points.used)
@@ -126,11 +133,23 @@ def fit_laws(
     if absolute and points.stated is not None:
         total = np.where(points.used, points.stated, 0.0).sum(axis=1)
         scale = np.repeat(total / np.maximum(np.count_nonzero(points.used, axis=1), 1), size)
-    basic = combine(first, combine(middle, first)) * scale[:, None, None]
+    own, common = scale, None
+    if shared is not None:
+        kept = np.where(points.used[:, :, None], shared, 0.0)
+        weighted = whole * np.sqrt(weights.reshape(-1, 1, n))
+        common, squares = shared_part(
+            kept, combine(first, weighted), sharp, 1.0 / np.sqrt(variance.reshape(-1, n)), best
+        )
+        own = scale if absolute else scale * own_share(sse, squares)
+    basic = combine(first, combine(middle, first)) * own[:, None, None]
+    basic = basic if common is None else basic + common
     q, dq = layout.report(solution.theta, about.c, data.frame)
     jacobian = dq[:, :, np.concatenate([layout.free_theta, layout.free_columns])]
     covariance = combine(jacobian, combine(basic, jacobian.transpose(0, 2, 1)))
     spread = np.sqrt(diagonal(covariance))
+    theirs = np.zeros_like(spread)
+    if common is not None:
+        theirs = diagonal(combine(jacobian, combine(common, jacobian.transpose(0, 2, 1))))
     spread = np.where(layout.fixed_rows, 0.0, np.where(np.isfinite(spread), spread, np.inf))
     q = q.reshape(count, size, -1)
     _unwrap(layout, q, weight)
@@ -146,6 +165,7 @@ def fit_laws(
         variance,
         solution.converged.reshape(count, size),
         solution.bound.reshape(count, size, -1),
+        theirs.reshape(q.shape),
     )
 
 

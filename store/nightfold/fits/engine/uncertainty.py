@@ -13,6 +13,7 @@ from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.layout import Layout
 from nightfold.fits.engine.links import falls, steepness, to_coordinate, to_value
 from nightfold.fits.engine.mixture import Mixture, t_quantile
+from nightfold.fits.engine.shared import own_share, shared_part
 from nightfold.fits.engine.solver import expand
 
 if TYPE_CHECKING:
@@ -37,6 +38,8 @@ class Reported:
         Degrees of freedom of the scatter; infinite for absolute stderr.
     variance : (M,) float array
         Residual variance in units of y squared (of weight one), nan without degrees of freedom.
+    shared : (M, R) float array
+        Part of stderr that is due to errors that points share.
     """
 
     q: Floats
@@ -46,15 +49,20 @@ class Reported:
     covariance: Floats
     dof: Floats
     variance: Floats
+    shared: Floats
 
 
-def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) -> Reported:
+def report(
+    layout: Layout, data: DataSets, theta: Floats, given: Floats | None, shared: Floats | None = None
+) -> Reported:
     """Return the reported parameters and their scaled covariance.
 
     Parameters
     ----------
     given : (M,) float array or None
         Variance of a point of weight one, in the frame's units, when stderr is absolute; None to estimate it.
+    shared : (M, n, m) float array, optional
+        Change of the points, in the frame, with each error that they share.
 
     Notes
     -----
@@ -74,9 +82,17 @@ def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) 
     with np.errstate(divide="ignore", invalid="ignore"):
         variance = np.where(spare > 0, sse / spare, np.nan)
         scale = variance if given is None else given
-        basic = inverse(np.nan_to_num(products / sizes)) / sizes * scale[:, None, None]
+        basic = inverse(np.nan_to_num(products / sizes)) / sizes
         jacobian = dq[:, :, free]
-        cov_q = combine(jacobian, combine(basic, jacobian.transpose(0, 2, 1)))
+        theirs = np.zeros_like(q)
+        common: Floats | float = 0.0
+        if shared is not None:
+            roots = np.ones_like(data.z) if data.root_weights is None else data.root_weights
+            roots = np.broadcast_to(roots, data.z.shape)
+            common, squares = shared_part(shared, combine(basic, whole * roots[:, None]), whole, roots, basic)
+            theirs = diagonal(combine(jacobian, combine(common, jacobian.transpose(0, 2, 1))))
+            scale = scale if given is not None else scale * own_share(sse, squares)
+        cov_q = combine(jacobian, combine(basic * scale[:, None, None] + common, jacobian.transpose(0, 2, 1)))
         spread = np.sqrt(diagonal(cov_q))
     fixed, free_rows = layout.fixed_rows, layout.free_rows
     spread = np.where(fixed, 0.0, np.where(np.isfinite(spread), spread, np.inf))
@@ -87,7 +103,8 @@ def report(layout: Layout, data: DataSets, theta: Floats, given: Floats | None) 
         covariance = (cov_q * outer)[:, free_rows][:, :, free_rows]
     stderr = np.where(np.isnan(stderr), np.inf, stderr)
     dof = spare if given is None else np.full(len(q), np.inf)
-    return Reported(q, value, stderr, spread, covariance, dof, variance * data.frame.ys**2)
+    theirs = np.sqrt(theirs) * np.abs(slopes)
+    return Reported(q, value, stderr, spread, covariance, dof, variance * data.frame.ys**2, theirs)
 
 
 def from_coordinates(q: Floats, spread: Floats, links: tuple[Link, ...]) -> tuple[Floats, Floats]:
