@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike
 
 from nightfold.errors import FitError
 from nightfold.fits.many import fit_table
-from nightfold.fits.request import as_points, check_span, check_stderr
+from nightfold.fits.request import as_points, check_span, check_stderr, check_times
 from nightfold.fits.result import FitResult
 
 
@@ -28,6 +28,7 @@ def fit_curve(
     robust: bool = True,
     unit_x: str = "",
     unit_y: str = "",
+    started: ArrayLike | None = None,
 ) -> FitResult:
     """Return a model fitted to points.
 
@@ -57,6 +58,9 @@ def fit_curve(
         Accepted, without effect for now: no point is left out as an outlier.
     unit_x, unit_y : str
         Units, from which those of the estimates are composed.
+    started : (n,) array of times, optional
+        When each point was taken (datetimes or seconds; NaT or nan where it is not known). Only the order counts: it
+        tells whether conditions drifted during the scan.
 
     Returns
     -------
@@ -91,7 +95,7 @@ def fit_curve(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    table = fit_table(points, values[None], model, errors, options, True)
+    table = fit_table(points, values[None], model, errors, options, True, check_times(started, len(points)))
     if not np.isfinite(table.outcome.low[0]):
         raise FitError(f"scan: {table.outcome.shortage(0)}")
     return table.result(0)

@@ -13,10 +13,11 @@ from numpy.typing import ArrayLike
 from nightfold.errors import FitError
 from nightfold.fits.engine.arrays import Bools, Floats, Ints
 from nightfold.fits.engine.links import bends
-from nightfold.fits.engine.trust import Facts, FitWarning, judge
+from nightfold.fits.engine.trust import FitWarning
 from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
-from nightfold.fits.request import as_points, check_span, check_stderr, make_request
+from nightfold.fits.judging import judge_fits
+from nightfold.fits.request import as_points, check_span, check_stderr, check_times, make_request
 from nightfold.fits.result import FitResult
 
 if TYPE_CHECKING:
@@ -40,6 +41,7 @@ def fit_many(
     robust: bool = True,
     unit_x: str = "",
     unit_y: str = "",
+    started: ArrayLike | None = None,
 ) -> FitTable:
     """Return the fits of one model to many data sets that share x, all at once.
 
@@ -48,7 +50,7 @@ def fit_many(
     x : (n,) float array
     Y : (B, n) float array
         One data set a row; nan points are left out.
-    model, absolute_stderr, background, fixed, start, weights, robust, unit_x, unit_y
+    model, absolute_stderr, background, fixed, start, weights, robust, unit_x, unit_y, started
         As in `fit_curve`.
     full : bool
         The full recipe of `fit_curve`: outliers are looked for and variance laws averaged, as `robust` and
@@ -85,16 +87,22 @@ def fit_many(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    return fit_table(points, values, model, errors, options, full)
+    return fit_table(points, values, model, errors, options, full, check_times(started, len(points)))
 
 
 def fit_table(
-    x: Floats, Y: Floats, model: object, stderr: Floats | None, options: dict[str, Any], full: bool
+    x: Floats,
+    Y: Floats,
+    model: object,
+    stderr: Floats | None,
+    options: dict[str, Any],
+    full: bool,
+    started: Floats | None,
 ) -> FitTable:
     """Return the fits of checked arrays; options as in `make_request`."""
     first = Y[0] if len(Y) else np.zeros_like(x)
     request = make_request(model, x, first, has_stderr=stderr is not None, **options)
-    return FitTable(x, Y, fit_sets(request, x, Y, stderr, full))
+    return FitTable(x, Y, fit_sets(request, x, Y, stderr, full), started)
 
 
 @dataclass(frozen=True, repr=False)
@@ -108,6 +116,8 @@ class FitTable:
         As handed in.
     outcome : Outcome
         The arrays behind the properties.
+    started : (n,) float array, optional
+        When the points were taken.
     slices : tuple of dict
         Of fits along one axis of a scan: the values of the other axes, one dict a row. Empty otherwise.
     slice_units : mapping of str to str
@@ -119,6 +129,7 @@ class FitTable:
     x: Floats
     Y: Floats
     outcome: Outcome
+    started: Floats | None = None
     slices: tuple[dict[str, Any], ...] = ()
     slice_units: Mapping[str, str] = field(default_factory=dict)
     about: Mapping[str, str] = field(default_factory=dict)
@@ -203,8 +214,7 @@ class FitTable:
     @cached_property
     def warnings(self) -> list[tuple[FitWarning, ...]]:
         """The warnings of each fit, B tuples."""
-        with np.errstate(all="ignore"):
-            return [self._judge(row) for row in range(len(self))]
+        return judge_fits(self.outcome, self.x, self.Y, self.started)
 
     @cached_property
     def trusted(self) -> Bools:
@@ -245,33 +255,3 @@ class FitTable:
         from nightfold.scans.slicedata import estimates_dataset
 
         return estimates_dataset(self)
-
-    def _judge(self, row: int) -> tuple[FitWarning, ...]:
-        out, layout = self.outcome, self.outcome.request.layout
-        if not np.isfinite(out.low[row]):
-            return (FitWarning("too-few-points", out.shortage(row)),)
-        names = layout.names
-        known = slice(len(names))
-        roles = {theta.name: theta.role for theta in layout.shape.theta if theta.name not in layout.fixed}
-        bound = tuple(t.name for t, held in zip(layout.shape.theta, out.bound[row], strict=True) if held)
-        return judge(
-            Facts(
-                layout.shape.name,
-                dict(zip(names, out.value[row, known].tolist(), strict=True)),
-                dict(zip(names, out.stderr[row, known].tolist(), strict=True)),
-                dict(zip(names, out.spread[row, known].tolist(), strict=True)),
-                dict(roles),
-                bound,
-                float(out.low[row]),
-                float(out.high[row]),
-                int(out.count[row]),
-                float(out.dof[row]),
-                bool(out.converged[row]),
-                float(out.feature_p[row]),
-                layout.shape.searchable,
-                bool(out.constant[row]),
-                out.request.unit_x,
-                tuple(self.x[out.outlier[row]].tolist()),
-                dict(zip(names, out.unlike[row, known].tolist(), strict=True)),
-            )
-        )

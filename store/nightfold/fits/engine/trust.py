@@ -6,35 +6,19 @@ from dataclasses import dataclass, field
 from math import exp, inf, isfinite
 
 from nightfold.fits.engine.feature import LEVEL
+from nightfold.fits.engine.misfit import Misfit, poor_fit
+from nightfold.fits.engine.sampling import Sampling, too_few
+from nightfold.fits.engine.wander import Wander, drift_within_scan
+from nightfold.fits.engine.warning import FitWarning, chance, figure, per_unit, with_unit
 
 MOST_SPREAD = {"rate": 0.4, "width": 0.5}
 """Largest standard uncertainty of ln rate and of ln width."""
 FREQUENCY_SPREAD = 0.25
 """Largest standard uncertainty of a frequency, times the window."""
 LEAST_PERIODS = 0.8
+LEVEL_STATED = 0.001
 MOST_UNLIKE = 2.0
 """Stderr that the estimate with equal weights may lie from the one by the learnt weights."""
-ADVISORY = frozenset({"outliers"})
-"""Codes of warnings that leave a fit trusted."""
-
-
-@dataclass(frozen=True)
-class FitWarning:
-    """Something to know about a fit.
-
-    Attributes
-    ----------
-    code : str
-        Short name, stable across versions (``no-feature``).
-    message : str
-        A plain sentence with the figures and what to do next.
-    advisory : bool
-        Whether the numbers can be trusted all the same.
-    """
-
-    code: str
-    message: str
-    advisory: bool = False
 
 
 @dataclass(frozen=True)
@@ -45,7 +29,8 @@ class Facts:
     width, rate or frequency, ``bound`` lists names that ended at the edge of what is searched; ``feature_p``
     is that of the permutation test when a start grid was ``searched``, else that of an F test.
     ``outliers`` are the x of the points left out; ``unlike`` tells by name how far equal weights lead from the
-    estimate, in units of their own stderr.
+    estimate, in units of their own stderr; ``stated``, where uncertainties were taken at face value, how many times as
+    much the points scatter, and how improbable that is.
     """
 
     model: str
@@ -65,6 +50,10 @@ class Facts:
     unit_x: str
     outliers: tuple[float, ...] = ()
     unlike: dict[str, float] = field(default_factory=dict)
+    sampling: Sampling | None = None
+    misfit: Misfit | None = None
+    wander: Wander | None = None
+    stated: tuple[float, float] | None = None
 
 
 def judge(facts: Facts) -> tuple[FitWarning, ...]:
@@ -74,13 +63,15 @@ def judge(facts: Facts) -> tuple[FitWarning, ...]:
     ]
     if not facts.constant:
         found += _others(facts)
-    messages: dict[str, list[str]] = {}
+    by_code: dict[str, list[FitWarning]] = {}
     for warning in found:
         if warning is not None:
-            messages.setdefault(warning.code, []).append(warning.message)
+            by_code.setdefault(warning.code, []).append(warning)
     return tuple(
-        FitWarning(code, "; also, ".join(dict.fromkeys(texts)), code in ADVISORY)
-        for code, texts in messages.items()
+        FitWarning(
+            code, "; also, ".join(dict.fromkeys(one.message for one in alike)), all(one.advisory for one in alike)
+        )
+        for code, alike in by_code.items()
     )
 
 
@@ -91,22 +82,14 @@ def _others(facts: Facts) -> list[FitWarning | None]:
         *(_role_warning(facts, name) for name in facts.roles),
         *(_at_bound(facts, name) for name in facts.bound),
         _spare(facts),
+        *([] if facts.sampling is None else too_few(facts.sampling, facts.unit_x)),
         _known(facts),
         _weights_disagree(facts),
+        poor_fit(facts.misfit),
+        _stated(facts),
+        drift_within_scan(facts.wander),
         _outliers(facts),
     ]
-
-
-def _with_unit(value: float, unit: str) -> str:
-    return f"{value:.4g} {unit}".rstrip()
-
-
-def _figure(value: float, unit: str) -> str:
-    return f"{value:.6g} {unit}".rstrip()
-
-
-def _per_unit(value: float, unit: str) -> str:
-    return f"{value:.4g}/{unit}" if unit else f"{value:.4g}"
 
 
 def _feature(facts: Facts) -> FitWarning | None:
@@ -167,9 +150,9 @@ def _outside(facts: Facts, name: str) -> FitWarning | None:
     where = "cannot be told from the edge of" if inside else "lies outside"
     return FitWarning(
         "center-outside",
-        f"the {name}, {_figure(value, facts.unit_x)}, {where} the scan"
-        f" ({facts.low:.6g} to {_figure(facts.high, facts.unit_x)});"
-        f" extend the scan {side} {_figure(edge, facts.unit_x)}",
+        f"the {name}, {figure(value, facts.unit_x)}, {where} the scan"
+        f" ({facts.low:.6g} to {figure(facts.high, facts.unit_x)});"
+        f" extend the scan {side} {figure(edge, facts.unit_x)}",
     )
 
 
@@ -182,8 +165,8 @@ def _position(facts: Facts, name: str) -> FitWarning | None:
         return FitWarning("poorly-determined", f"the {name} is not determined by this scan; take more shots")
     return FitWarning(
         "poorly-determined",
-        f"the {name} is uncertain by {_with_unit(facts.stderr[name], facts.unit_x)}, more than half the width"
-        f" of the line; take more shots around {_with_unit(facts.value[name], facts.unit_x)}",
+        f"the {name} is uncertain by {with_unit(facts.stderr[name], facts.unit_x)}, more than half the width"
+        f" of the line; take more shots around {with_unit(facts.value[name], facts.unit_x)}",
     )
 
 
@@ -202,7 +185,7 @@ def _periods(facts: Facts, name: str) -> FitWarning | None:
     return FitWarning(
         "under-one-period",
         f"the scan covers only {periods:.2g} periods, too few to tell them from a drift; extend it to"
-        f" {_with_unit(wanted, facts.unit_x)} or beyond",
+        f" {with_unit(wanted, facts.unit_x)} or beyond",
     )
 
 
@@ -212,8 +195,8 @@ def _frequency(facts: Facts, name: str) -> FitWarning | None:
         return None
     return FitWarning(
         "poorly-determined",
-        f"the {name}, {_per_unit(facts.value[name], facts.unit_x)}, is uncertain by"
-        f" {_per_unit(facts.stderr[name], facts.unit_x)}, more than a quarter of 1/(length of the scan);"
+        f"the {name}, {per_unit(facts.value[name], facts.unit_x)}, is uncertain by"
+        f" {per_unit(facts.stderr[name], facts.unit_x)}, more than a quarter of 1/(length of the scan);"
         " take more shots or a longer scan",
     )
 
@@ -246,7 +229,7 @@ def _at_bound(facts: Facts, name: str) -> FitWarning | None:
 def _in_its_unit(facts: Facts, name: str) -> str:
     """Return a position, width, time, rate or frequency with its unit."""
     per = facts.roles.get(name) == "frequency" or name.endswith("rate")
-    return (_per_unit if per else _with_unit)(facts.value[name], facts.unit_x)
+    return (per_unit if per else with_unit)(facts.value[name], facts.unit_x)
 
 
 def _is_slow(facts: Facts, name: str) -> bool:
@@ -291,6 +274,21 @@ def _outliers(facts: Facts) -> FitWarning | None:
         f"{len(facts.outliers)} shot{'s' if several else ''} left out as outlier{'s' if several else ''}, at"
         f" {where} {facts.unit_x}".rstrip()
         + "; look at what was recorded there",
+        advisory=True,
+    )
+
+
+def _stated(facts: Facts) -> FitWarning | None:
+    """Return a warning when uncertainties taken at face value are not what the points scatter by."""
+    if facts.stated is None or not facts.stated[1] < LEVEL_STATED:
+        return None
+    ratio, p = facts.stated
+    return FitWarning(
+        "stated-stderr",
+        f"the points scatter {ratio:.2g} times as much as their stated stderr say (chance does so in {chance(p)} of"
+        " scans); do not take these at face value (absolute_stderr=False)"
+        + (", or fit another model" if ratio > 1 else ""),
+        advisory=ratio < 1,
     )
 
 
