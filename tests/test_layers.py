@@ -14,7 +14,7 @@ import nightfold
 ROOT = Path(nightfold.__file__).parent
 COMMANDS = ROOT.parents[1] / "cli" / "nightfold_cli"
 LAYERS: list[set[str]] = [
-    {"errors", "version", "concise"},
+    {"errors", "version", "concise", "glimpse"},
     {"units", "timestamps", "mounts"},
     {"records", "cardkeys", "formulas"},
     {"settings", "card"},

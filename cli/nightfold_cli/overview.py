@@ -45,6 +45,7 @@ GROUPS = (
             ("merge-machines", "make a machine taken under a wrong name the right one"),
             ("upgrade", "bring a store of an older nightfold up to date"),
             ("demo", "play six weeks of an invented machine"),
+            ("completion", "print what lets bash, zsh or fish complete words"),
         ),
     ),
 )
