@@ -76,6 +76,10 @@ def _show(screen: Screen, shape: LineShape) -> None:
     ]
     rows += [["offset", "background: flat, sloped", "y"], ["slope", "background: sloped", "y/x"]]
     screen.table(columns, rows, empty="no parameters")
+    if shape.derived:
+        columns = [Column("derived"), *columns[1:]]
+        rows = [[part.name, part.meaning, Cell(_unit(part.unit), part.unit)] for part in shape.derived]
+        screen.table(columns, rows, empty="none")
     screen.note("x is what is swept, y the observable")
 
 
@@ -91,6 +95,9 @@ def _entry(shape: LineShape) -> dict[str, Any]:
         "formula": shape.formula,
         "parameters": [
             {"name": part.name, "meaning": part.meaning, "unit": part.unit} for part in shape.parameters
+        ],
+        "derived": [
+            {"name": part.name, "meaning": part.meaning, "unit": part.unit} for part in shape.derived
         ],
         "default_background": shape.default_background,
         "source": shape.source,
