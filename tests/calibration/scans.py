@@ -30,8 +30,10 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from tests.calibration.designs import design, taking_order
 from tests.calibration.knowing import bounds, burden, measure
-from tests.calibration.shapes import SPECS, Array, Spec, Values, height, names_of, rates_of, total
+from tests.calibration.scatter import draw_sigma, scatter_of_x, scattered
+from tests.calibration.shapes import SPECS, Array, Spec, Values, names_of, rates_of, total
 
 DEVELOPMENT, REPORTED = 0, 10_000
 SIZES = (16, 30, 60)
@@ -141,7 +143,7 @@ def make_batch(model: str, n: int, kind: str, seed: int, rows: int = ROWS) -> Ba
     spec = SPECS[model]
     rng = np.random.default_rng([seed, n, zlib.crc32(model.encode()), zlib.crc32(kind.encode())])
     background = _background(rng, spec, kind)
-    u = _design(rng, spec, n)
+    u = design(rng, spec, n)
     noise = str(rng.choice(["additive", "multiplicative", "mixed", "counts"]))
     values, sigma = _truths(rng, spec, background, u, noise, kind, rows)
     y = total(spec, background, u, values)
@@ -149,11 +151,11 @@ def make_batch(model: str, n: int, kind: str, seed: int, rows: int = ROWS) -> Ba
         y, values, told = misfitted(rng, spec, background, u, values)
         values = {name: values[name] for name in told}
     least = bounds(spec, background, u, values, sigma) if kind != "misfit" else {}
-    order = _order(rng, spec, n, kind)
+    order = taking_order(rng, spec, n, kind)
     if kind == "noisy-x":
-        moved = u + _x_scatter(rng, spec, u, values)
+        moved = u + scatter_of_x(rng, spec, u, values)
         y = total(spec, background, moved if spec.family == "line" else np.maximum(moved, 1e-3), values)
-    Y, bad = _scatter(rng, y, sigma, noise, kind, order)
+    Y, bad = scattered(rng, y, sigma, noise, kind, order)
     truth = {n: values[n] for n in (names_of(spec, background) if kind != "misfit" else values)}
     bare = Batch(
         model, background, kind, seed, u, Y, y, sigma, truth, least, {n: spec.links_of(n) for n in truth}
@@ -172,54 +174,6 @@ def _background(rng: np.random.Generator, spec: Spec, kind: str) -> str:
     return str(rng.choice(other[spec.default]))
 
 
-# --- where the points are ----------------------------------------------------------------------------------
-
-
-def _design(rng: np.random.Generator, spec: Spec, n: int) -> Array:
-    """Return n sorted points of [0, 1]: even, jittered, random or dense somewhere, with repeats."""
-    repeats = int(rng.integers(1, {16: 1, 30: 2}.get(n, min(5, n // 12)) + 1))
-    distinct = n // repeats
-    if repeats == 1 and rng.random() < 0.3:
-        distinct = n - n // 5
-    return np.sort(
-        np.resize(_places(rng, spec, distinct), n)
-        if n % distinct == 0
-        else _some_twice(rng, spec, n, distinct)
-    )
-
-
-def _some_twice(rng: np.random.Generator, spec: Spec, n: int, distinct: int) -> Array:
-    places = _places(rng, spec, distinct)
-    return np.concatenate([places, rng.choice(places, n - distinct, replace=distinct < n - distinct)])
-
-
-def _places(rng: np.random.Generator, spec: Spec, count: int) -> Array:
-    even = np.linspace(0.0, 1.0, count)
-    style = rng.random()
-    if spec.name in ("landau-zener", "saturation"):
-        even = np.linspace(0.02, 1.0, count)
-        return even if style < 0.5 else np.geomspace(0.02, 1.0, count)
-    if style < 0.5:
-        return even
-    if style < 0.75:
-        return np.sort(np.clip(even + rng.uniform(-0.35, 0.35, count) / count, 0.0, 1.0))
-    if spec.family == "wave" or style < 0.88:
-        inner = np.sort(rng.random(count - 2))
-        return np.concatenate([[0.0], 0.5 * even[1:-1] + 0.5 * inner, [1.0]])
-    if spec.family == "line":
-        bend = np.sinh(3.0 * (2 * even - 1)) / np.sinh(3.0)
-        return np.asarray(0.5 + 0.5 * (0.7 * bend + 0.3 * (2 * even - 1)))
-    return np.concatenate([[0.0], np.geomspace(0.02, 1.0, count - 1)])
-
-
-def _order(rng: np.random.Generator, spec: Spec, n: int, kind: str) -> NDArray[np.intp]:
-    """Return the point taken at each turn."""
-    if kind == "drift-ordered" or (kind != "drift-shuffled" and rng.random() < 0.4):
-        straight = np.arange(n)
-        return straight if rng.random() < 0.7 else straight[::-1]
-    return rng.permutation(n)
-
-
 # --- what is true ------------------------------------------------------------------------------------------
 
 
@@ -235,7 +189,7 @@ def _truths(
         from tests.calibration.hopeless import spoiled
 
         values = spoiled(rng, spec, kind, u, values)
-    sigma = _sigma(rng, spec, total(spec, background, u, values), values, noise)
+    sigma = draw_sigma(rng, spec, total(spec, background, u, values), values, noise)
     if kind in HOPELESS:
         chosen = _untold(spec, background, u, values, sigma, rows) if kind == "short" else np.arange(rows)
         return {name: column[chosen] for name, column in values.items()}, sigma[chosen]
@@ -264,93 +218,6 @@ def _without_background(spec: Spec, values: Values) -> Values:
     """Return values of lines and decays that are positive and end at zero."""
     flip = np.abs(values["amplitude"]) if "amplitude" in values else None
     return values if flip is None else {**values, "amplitude": flip}
-
-
-def _sigma(rng: np.random.Generator, spec: Spec, y: Array, values: Values, noise: str) -> Array:
-    """Return the standard deviation of each point."""
-    size = len(y)
-    share = np.exp(rng.uniform(np.log(0.03), np.log(0.15), (size, 1)))
-    tall = np.maximum(height(spec, values), 0.3)[:, None]
-    floor = share * tall * np.exp(rng.uniform(np.log(0.1), np.log(0.6), (size, 1)))
-    most = np.max(np.abs(y), axis=1, keepdims=True)
-    grown = share * np.abs(y)
-    if noise == "additive":
-        return np.asarray(share * tall + np.zeros_like(y))
-    if noise == "multiplicative":
-        return np.asarray(np.maximum(grown, 1e-3 * most))
-    if noise == "mixed":
-        return np.asarray(np.hypot(grown, floor))
-    return np.asarray(share * np.sqrt(np.maximum(np.abs(y), 1e-3 * most) * most))
-
-
-# --- what is measured --------------------------------------------------------------------------------------
-
-
-def _x_scatter(rng: np.random.Generator, spec: Spec, u: Array, values: Values) -> Array:
-    """Return how far the true x lies from the one noted, (n,): 2-10 % of a width, half a period, a quarter scan."""
-    share = rng.uniform(0.02, 0.10)
-    unit = 0.25
-    if spec.family == "line":
-        unit = float(np.min(values["fwhm"]))
-    if spec.family == "wave":
-        unit = 0.5 / float(np.max(values["frequency"]))
-    return np.asarray(share * unit * rng.normal(size=len(u)))
-
-
-def _scatter(
-    rng: np.random.Generator, y: Array, sigma: Array, noise: str, kind: str, order: NDArray[np.intp]
-) -> tuple[Array, NDArray[np.bool_]]:
-    deviation = rng.normal(size=y.shape)
-    if noise == "counts" and kind not in ("drift-ordered", "drift-shuffled") and bool(np.all(y >= 0)):
-        rate = (y / sigma) ** 2
-        deviation = (rng.poisson(np.maximum(rate, 1e-9)) - rate) / np.maximum(y / sigma, 1e-5)
-    if kind.startswith("drift"):
-        wander = np.empty_like(deviation)
-        wander[:, order] = _wandering(rng, *y.shape)
-        deviation = np.sqrt(0.5) * (deviation + wander)
-    Y = y + sigma * deviation
-    bad = np.zeros(y.shape, dtype=bool)
-    if kind == "outliers":
-        bad = _bad_shots(rng, y.shape, order)
-        Y = np.where(bad, _thrown(rng, y, sigma), Y)
-        bad &= np.abs(Y - y) > 4 * sigma
-    return Y, bad
-
-
-def _wandering(rng: np.random.Generator, size: int, n: int) -> Array:
-    """Return walks that forget over a fifth to a half of the scan, mean 0 and variance 1, (size, n)."""
-    keep = np.exp(-1.0 / (n * rng.uniform(0.2, 0.5, size)))
-    walk = np.empty((size, n))
-    walk[:, 0] = rng.normal(size=size)
-    for turn in range(1, n):
-        walk[:, turn] = keep * walk[:, turn - 1] + np.sqrt(1 - keep**2) * rng.normal(size=size)
-    walk -= walk.mean(axis=1, keepdims=True)
-    return np.asarray(walk / walk.std(axis=1, keepdims=True))
-
-
-def _bad_shots(
-    rng: np.random.Generator, shape: tuple[int, int], order: NDArray[np.intp]
-) -> NDArray[np.bool_]:
-    """Return which shots are bad: 1-4 % by chance; in every fourth scan of 30 and more, two or three in a row."""
-    size, n = shape
-    bad = rng.random(shape) < rng.uniform(0.01, 0.04, (size, 1))
-    if n >= 30:
-        for row in np.flatnonzero(rng.random(size) < 0.25):
-            first = int(rng.integers(n - 3))
-            bad[row] = False
-            bad[row, order[first : first + int(rng.integers(2, 4))]] = True
-    most = n // 10
-    for row in np.flatnonzero(bad.sum(axis=1) > most):
-        bad[row, rng.permutation(np.flatnonzero(bad[row]))[most:]] = False
-    return bad
-
-
-def _thrown(rng: np.random.Generator, y: Array, sigma: Array) -> Array:
-    """Return what bad shots read: off either way, or nothing but camera noise."""
-    sign = np.where(rng.random(y.shape) < 0.5, -1.0, 1.0)
-    off = y + sign * sigma * np.exp(rng.uniform(np.log(6), np.log(40), y.shape))
-    dropped = rng.random(y.shape) < 0.4
-    return np.where(dropped, 0.01 * np.max(np.abs(y), axis=1, keepdims=True) * rng.normal(size=y.shape), off)
 
 
 # --- as a lab would have it --------------------------------------------------------------------------------
