@@ -102,7 +102,7 @@ def make_grid(layout: Layout, reduction: Reduction, theta: Floats, null: str) ->
     against = orthonormal(np.array(rows).reshape(len(rows), 1, d).transpose(1, 0, 2), np.zeros((0, d)))[0]
     step = max(1, CHUNK // d)
     parts = [
-        orthonormal(layout.shape.columns(reduction.u[None], theta[i : i + step]) * reduction.roots, against)
+        orthonormal(layout.shape.templates(reduction.u[None], theta[i : i + step]) * reduction.roots, against)
         for i in range(0, len(theta), step)
     ]
     return Grid(theta, np.ascontiguousarray(np.concatenate(parts).transpose(1, 0, 2)), against)
