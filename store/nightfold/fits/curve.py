@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike
 
 from nightfold.errors import FitError
 from nightfold.fits.many import fit_table
-from nightfold.fits.request import as_points, check_span, check_stderr, check_times
+from nightfold.fits.request import as_points, check_shared, check_span, check_stderr, check_times
 from nightfold.fits.result import FitResult
 
 
@@ -20,6 +20,7 @@ def fit_curve(
     model: object,
     *,
     stderr: ArrayLike | None = None,
+    shared: ArrayLike | None = None,
     absolute_stderr: bool = False,
     background: str | None = None,
     fixed: Mapping[str, float] | None = None,
@@ -40,6 +41,9 @@ def fit_curve(
         A name (``lorentzian``; see ``nightfold models``) or a model of one's own.
     stderr : float or (n,) float array, optional
         Standard uncertainties of y, unit of y. Points where it is nan are left out when it is used.
+    shared : (n, m) float array, optional
+        Errors that points have in common: the change of y with each of m errors by one standard uncertainty of it,
+        unit of y. Estimates are as without, their uncertainties allow for it; nan is not known and counts as nothing.
     absolute_stderr : bool
         Take stderr at face value: uncertainties are not scaled by the scatter found. Implies that they are
         used as weights.
@@ -85,6 +89,7 @@ def fit_curve(
         raise FitError(f"y: found {len(values)} values, wanted {len(points)} as for x")
     check_span("x", points)
     errors = check_stderr(stderr, values.shape)
+    common = check_shared(shared, values.shape)
     options: dict[str, Any] = {
         "absolute_stderr": absolute_stderr,
         "background": background,
@@ -95,7 +100,7 @@ def fit_curve(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    table = fit_table(points, values[None], model, errors, options, True, check_times(started, len(points)))
+    table = fit_table(points, values[None], model, errors, options, True, common, check_times(started, len(points)))
     if not np.isfinite(table.outcome.low[0]):
         raise FitError(f"scan: {table.outcome.shortage(0)}")
     return table.result(0)

@@ -14,7 +14,7 @@ from nightfold.fits.engine.points import Points
 from nightfold.fits.engine.solver import Solution, solve
 from nightfold.fits.engine.uncertainty import report
 from nightfold.fits.groups import BATCH_POINTS, Group, make_group, patterns
-from nightfold.fits.recipe import choose_laws, refine
+from nightfold.fits.recipe import Hidden, choose_laws, refine
 from nightfold.fits.request import Request
 
 FULL_POINTS = 4000
@@ -33,7 +33,8 @@ class Outcome:
     Of the points handed in, (B, n), ``outlier`` tells which the robust step left out, ``deviation`` is the standard
     deviation of a point about the curve, nan for those not used. ``mixture`` has what is known under each variance law,
     and ``unlike`` (B, R) how far the estimate with equal weights lies from the average, in units of its own stderr.
-    ``theta`` (B, P) are the coordinates of the fit in the frame, by the law that counts most.
+    ``theta`` (B, P) are the coordinates of the fit in the frame, by the law that counts most. ``shared`` (B, R) is
+    the part of stderr due to errors that points share, nan where not all are known; None where none are stated.
     """
 
     request: Request
@@ -57,6 +58,7 @@ class Outcome:
     theta: Floats
     mixture: Averaged
     errors: Floats | None = None
+    shared: Floats | None = None
 
     def used(self, x: Floats, y: Floats, row: int) -> Bools:
         """Return which of the points handed in a data set was fitted to, (n,)."""
@@ -95,7 +97,14 @@ class Outcome:
         return p
 
 
-def fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, full: bool = False) -> Outcome:
+def fit_sets(
+    request: Request,
+    x: Floats,
+    Y: Floats,
+    stderr: Floats | None,
+    full: bool = False,
+    shared: Floats | None = None,
+) -> Outcome:
     """Return the fits of data sets that share x.
 
     Parameters
@@ -106,14 +115,26 @@ def fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, full
     stderr : (n,) or (B, n) float array or None
     full : bool
         Look for outliers and average over variance laws, as the request has it; otherwise neither.
+    shared : (n, m) or (B, n, m) float array or None
+        Change of the points with each error that they share; nan, not known, counts as nothing.
     """
     with np.errstate(all="ignore"):
-        return _fit_sets(request, x, Y, stderr, full and request.elaborate)
+        if shared is None:
+            return _fit_sets(request, x, Y, stderr, full and request.elaborate, None)
+        outcome = _fit_sets(request, x, Y, stderr, full and request.elaborate, np.nan_to_num(shared))
+        unknown = (np.isnan(shared).any(axis=-1) & np.isfinite(Y) & np.isfinite(x)).any(axis=1)
+        if outcome.shared is not None:
+            outcome.shared[unknown] = np.nan
+        return outcome
 
 
-def _fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, full: bool) -> Outcome:
+def _fit_sets(
+    request: Request, x: Floats, Y: Floats, stderr: Floats | None, full: bool, shared: Floats | None
+) -> Outcome:
     laws = len(choose_laws(request, stderr is not None)) if full else 1
     outcome = _empty_outcome(request, Y.shape, laws)
+    if shared is not None:
+        outcome = replace(outcome, shared=np.full_like(outcome.stderr, np.nan))
     solve_batch = _solve_fully if full else _solve_batch
     groups: list[Group] = []
     waiting: list[Group] = []
@@ -131,10 +152,10 @@ def _fit_sets(request: Request, x: Floats, Y: Floats, stderr: Floats | None, ful
         groups.append(group)
         waiting.append(group)
         if sum(g.data.z.size for g in waiting) > (FULL_POINTS if full else BATCH_POINTS):
-            solve_batch(request, waiting, outcome)
+            solve_batch(request, waiting, outcome, shared)
             waiting = []
     if waiting:
-        solve_batch(request, waiting, outcome)
+        solve_batch(request, waiting, outcome, shared)
     for name, value in request.fixed.items():
         outcome.value[outcome.count > 0, request.layout.names.index(name)] = value
     return replace(outcome, groups=tuple(groups), errors=stderr if request.weighted else None)
@@ -167,7 +188,7 @@ def _empty_outcome(request: Request, shape: tuple[int, ...], laws: int) -> Outco
     )
 
 
-def _solve_batch(request: Request, groups: list[Group], outcome: Outcome) -> None:
+def _solve_batch(request: Request, groups: list[Group], outcome: Outcome, shared: Floats | None) -> None:
     layout = request.layout
     data = stack([group.data for group in groups])
     rows = np.concatenate([group.rows for group in groups])
@@ -175,34 +196,33 @@ def _solve_batch(request: Request, groups: list[Group], outcome: Outcome) -> Non
     if layout.shape.numeric and layout.free_theta.any():
         solution = _follow_rivals(request, data, groups, solution)
     given = np.concatenate([g.weight_one for g in groups]) ** 2 if request.absolute else None
-    reported = report(layout, data, solution.theta, given)
+    common = None if shared is None else _common(shared, data, rows, _gather_points(data, groups)[1])
+    reported = report(layout, data, solution.theta, given, common)
     for name in ("value", "stderr", "spread", "covariance", "dof", "variance"):
         getattr(outcome, name)[rows] = getattr(reported, name)
     outcome.mixture.q[rows, 0], outcome.mixture.spread[rows, 0] = reported.q, reported.spread
     outcome.mixture.weight[rows] = 1.0
+    if outcome.shared is not None:
+        outcome.shared[rows] = reported.shared
     outcome.converged[rows], outcome.theta[rows] = solution.converged, solution.theta
     outcome.bound[rows] = solution.bound & ~layout.rightful(solution.theta, data.low, data.high)
 
 
-def _solve_fully(request: Request, groups: list[Group], outcome: Outcome) -> None:
+def _solve_fully(request: Request, groups: list[Group], outcome: Outcome, shared: Floats | None) -> None:
     layout = request.layout
     data = stack([group.data for group in groups])
     rows = np.concatenate([group.rows for group in groups])
     points, place = _gather_points(data, groups)
     if layout.shape.searchable:
-        starts = [group.starts() for group in groups]
-        origin, theta = _gather(starts, groups)
-        if request.robust:
-            far, other = _gather(
-                [group.far_starts(*found) for group, found in zip(groups, starts, strict=True)], groups
-            )
-            origin, theta = np.concatenate([origin, far]), np.concatenate([theta, other])
+        origin, theta = _gather([group.starts() for group in groups], groups)
         minima = solve(layout, data.take(origin), _with_fixed(request, data, origin, theta), START_TOLERANCE)
+        hidden = _hidden(request, points, groups) if request.robust else None
     else:
         minima = _best(request, data, *_gather([group.starts() for group in groups], groups))
         minima = _follow_rivals(request, data, groups, minima)
-        origin = np.arange(len(data.z))
-    found = refine(request, points, minima, origin)
+        origin, hidden = np.arange(len(data.z)), None
+    common = None if shared is None else _common(shared, data, rows, place)
+    found = refine(request, points, minima, origin, hidden, common)
     for name in (
         "value",
         "stderr",
@@ -218,10 +238,29 @@ def _solve_fully(request: Request, groups: list[Group], outcome: Outcome) -> Non
         getattr(outcome, name)[rows] = getattr(found, name)
     for name in ("q", "spread", "weight"):
         getattr(outcome.mixture, name)[rows] = getattr(found.mixture, name)
+    if outcome.shared is not None:
+        outcome.shared[rows] = found.shared
     outcome.count[rows] -= np.count_nonzero(found.outlier, axis=1)
     real = place >= 0
     at = np.broadcast_to(rows[:, None], place.shape)[real], place[real]
     outcome.outlier[at], outcome.deviation[at] = found.outlier[real], found.deviation[real]
+
+
+def _hidden(request: Request, points: Points, groups: list[Group]) -> Hidden | None:
+    """Return the minima that far points could hide."""
+    found = [group.far_starts() for group in groups]
+    origin, theta = _gather([(sets, starts) for sets, starts, _ in found], groups)
+    if not len(origin):
+        return None
+    here, first = points.take(origin), 0
+    v = here.v.copy()
+    for _, _, clipped in found:
+        v[first : first + len(clipped), : clipped.shape[1]] = clipped
+        first += len(clipped)
+    theta = _with_fixed(request, points.data, origin, theta)
+    data = replace(here, v=v).weighted(np.where(here.used, 1.0, 0.0))
+    minima = solve(request.layout, data, theta, START_TOLERANCE)
+    return Hidden(minima, origin, here.used & (v == here.v))
 
 
 def _gather_points(data: DataSets, groups: list[Group]) -> tuple[Points, Ints]:
@@ -239,6 +278,12 @@ def _gather_points(data: DataSets, groups: list[Group]) -> tuple[Points, Ints]:
             stated[part] = group.stated**2
         first += len(group.rows)
     return Points(data, np.where(used, data.z / np.where(roots > 0, roots, 1.0), 0.0), used, stated), place
+
+
+def _common(shared: Floats, data: DataSets, rows: Ints, place: Ints) -> Floats:
+    """Return the change of the points of a batch, in the frame, with each error that they share, (B, n, m)."""
+    picked = shared[place] if shared.ndim == 2 else shared[rows[:, None], place]
+    return np.where((place >= 0)[:, :, None], picked, 0.0) / data.frame.ys[:, None, None]
 
 
 def _with_fixed(request: Request, data: DataSets, origin: Ints, theta: Floats) -> Floats:

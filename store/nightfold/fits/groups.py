@@ -68,18 +68,15 @@ class Group:
         """The grid that starts are taken from."""
         return self.grid(self.request.layout.background, start=True)
 
-    def starts(self, clip: bool = False) -> tuple[Ints, Floats]:
-        """Return data set (within the group) and theta of each start to follow.
-
-        With `clip` as if points far from all others were nearer.
-        """
+    def starts(self, v: Floats | None = None) -> tuple[Ints, Floats]:
+        """Return data set (within the group) and theta of each start to follow, as if the values (b, n) were v."""
         layout, request = self.request.layout, self.request
         if not layout.shape.searchable:
             theta = self._held(layout.shape.grid(self.window))
             return np.repeat(np.arange(len(self.rows)), len(theta)), np.tile(theta, (len(self.rows), 1))
         if not layout.shape.theta:
             return np.arange(len(self.rows)), np.zeros((len(self.rows), 0))
-        z = self.reduction.whiten(clip_far(self.data.z / self.roots) * self.roots if clip else self.data.z)
+        z = self.reduction.whiten(self.data.z if v is None else v * self.roots)
         if layout.all_columns_free:
             grid = self.start_grid
             theta = grid.theta
@@ -100,16 +97,29 @@ class Group:
         sets, points = choose_starts(layout, theta, sse, reference)
         return sets, theta[points]
 
-    def far_starts(self, found: Ints, known: Floats) -> tuple[Ints, Floats]:
-        """Return further starts where far points could hide the right one: none near those found, (M,) and theta."""
-        v = self.data.z / self.roots
-        far = (clip_far(v) != v).any(axis=1)
-        if not far.any() or not self.request.layout.shape.theta:
-            return found[:0], known[:0]
-        sets, theta = self.starts(clip=True)
-        near = self.request.layout.shape.near(theta[:, None], known[None]) & (sets[:, None] == found)
-        fresh = far[sets] & ~near.any(axis=1)
-        return sets[fresh], theta[fresh]
+    def far_starts(self) -> tuple[Ints, Floats, Floats]:
+        """Return further starts where far points could hide the right one.
+
+        Returns
+        -------
+        sets, theta : (M,), (M, P) arrays
+        clipped : (M, n) float array
+            The values that each start was found for, far points brought nearer.
+        """
+        v, shape = self.data.z / self.roots, self.request.layout.shape
+        origin, theta = np.zeros(0, dtype=np.intp), np.zeros((0, len(shape.theta)))
+        values = v[:0]
+        if not shape.theta:
+            return origin, theta, values
+        for clipped in (clip_far(v, np.median(v, axis=1, keepdims=True)), clip_far(v, running_median(v))):
+            far = (clipped != v).any(axis=1)
+            if far.any():
+                sets, starts = self.starts(clipped)
+                near = shape.near(starts[:, None], theta[None]) & (sets[:, None] == origin)
+                fresh = far[sets] & ~near.any(axis=1)
+                origin, theta = np.append(origin, sets[fresh]), np.concatenate([theta, starts[fresh]])
+                values = np.concatenate([values, clipped[sets[fresh]]])
+        return origin, theta, values
 
     def part(self, row: int, left: Bools) -> Group:
         """Return one of the data sets with some of its points, (n,) bool, alone."""
@@ -248,11 +258,20 @@ def make_group(
     return Group(request, rows, data, window, scale, place, stated)
 
 
-def clip_far(v: Floats) -> Floats:
-    """Return values (b, n) with those beyond three times their median distance from the median brought to there."""
-    middle = np.median(v, axis=1, keepdims=True)
+def clip_far(v: Floats, middle: Floats) -> Floats:
+    """Return values (b, n) with those beyond three times the usual distance from a middle brought to there."""
     reach = 3 * 1.4826 * np.median(np.abs(v - middle), axis=1, keepdims=True)
     return np.asarray(np.clip(v, middle - reach, middle + reach))
+
+
+def running_median(v: Floats) -> Floats:
+    """Return the median of each value and its neighbours, (b, n), three to either side (two in short scans)."""
+    side = 3 if v.shape[1] >= 20 else 2
+    if v.shape[1] <= side:
+        return np.broadcast_to(np.median(v, axis=1, keepdims=True), v.shape)
+    around = np.pad(v, ((0, 0), (side, side)), mode="reflect")
+    windows = np.lib.stride_tricks.sliding_window_view(around, 2 * side + 1, axis=1)
+    return np.asarray(np.median(windows, axis=2))
 
 
 def _window(u: Floats, background: Background) -> Window:

@@ -17,7 +17,7 @@ from nightfold.fits.engine.trust import FitWarning
 from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
 from nightfold.fits.judging import judge_fits
-from nightfold.fits.request import as_points, check_span, check_stderr, check_times, make_request
+from nightfold.fits.request import as_points, check_shared, check_span, check_stderr, check_times, make_request
 from nightfold.fits.result import FitResult
 
 if TYPE_CHECKING:
@@ -33,6 +33,7 @@ def fit_many(
     *,
     full: bool = False,
     stderr: ArrayLike | None = None,
+    shared: ArrayLike | None = None,
     absolute_stderr: bool = False,
     background: str | None = None,
     fixed: Mapping[str, float] | None = None,
@@ -58,6 +59,8 @@ def fit_many(
         the time.
     stderr : float, (n,) or (B, n) float array, optional
         Standard uncertainties of y.
+    shared : (n, m) or (B, n, m) float array, optional
+        As in `fit_curve`.
 
     Returns
     -------
@@ -87,7 +90,8 @@ def fit_many(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    return fit_table(points, values, model, errors, options, full, check_times(started, len(points)))
+    common, times = check_shared(shared, values.shape), check_times(started, len(points))
+    return fit_table(points, values, model, errors, options, full, common, times)
 
 
 def fit_table(
@@ -97,12 +101,13 @@ def fit_table(
     stderr: Floats | None,
     options: dict[str, Any],
     full: bool,
-    started: Floats | None,
+    shared: Floats | None = None,
+    started: Floats | None = None,
 ) -> FitTable:
     """Return the fits of checked arrays; options as in `make_request`."""
     first = Y[0] if len(Y) else np.zeros_like(x)
     request = make_request(model, x, first, has_stderr=stderr is not None, **options)
-    return FitTable(x, Y, fit_sets(request, x, Y, stderr, full), started)
+    return FitTable(x, Y, fit_sets(request, x, Y, stderr, full, shared), started)
 
 
 @dataclass(frozen=True, repr=False)
@@ -197,6 +202,16 @@ class FitTable:
         first = len(layout.names)
         return {p.name: self._column(first + row, p) for row, p in enumerate(layout.shape.derived)}
 
+    @property
+    def shared_stderr(self) -> dict[str, Floats]:
+        """Part of the stderr of each estimate and derived number that is due to errors that points share, by name.
+
+        Nan where these are not all known; empty where none were said to be shared.
+        """
+        if self.outcome.shared is None:
+            return {}
+        return dict(zip(self.outcome.request.layout.all_names, self.outcome.shared.T, strict=True))
+
     def _column(self, row: int, parameter: Parameter) -> EstimateColumn:
         out, request = self.outcome, self.outcome.request
         link = request.layout.links[row]
@@ -239,6 +254,7 @@ class FitTable:
             self.outcome.deviation[row][used],
             self.x[outliers],
             self.Y[row][outliers],
+            {name: float(column[row]) for name, column in self.shared_stderr.items()},
         )
 
     def to_dataset(self) -> xr.Dataset:

@@ -19,6 +19,8 @@ from nightfold.fits.engine.variance import EQUAL, LEARNT, STATED, WITH_STATED, L
 from nightfold.fits.request import Request
 
 MOST_MINIMA = 3
+EDGE_LOSS = 3.0
+"""A minimum at the edge of what is searched is taken for another one if its likelihood is e^3 times larger."""
 SAME = 1e-4
 """Minima whose sums of squares agree to this share are the same one."""
 
@@ -40,6 +42,7 @@ class Refined:
     outlier: Bools
     deviation: Floats
     theta: Floats
+    shared: Floats
 
 
 def choose_laws(request: Request, stated: bool) -> Laws:
@@ -51,7 +54,23 @@ def choose_laws(request: Request, stated: bool) -> Laws:
     return WITH_STATED if stated else LEARNT
 
 
-def refine(request: Request, points: Points, minima: Solution, origin: Ints) -> Refined:
+@dataclass(frozen=True)
+class Hidden:
+    """Minima with far points brought nearer: ``origin`` (M,) whose each is, ``near`` (M, n) the points not moved."""
+
+    minima: Solution
+    origin: Ints
+    near: Bools
+
+
+def refine(
+    request: Request,
+    points: Points,
+    minima: Solution,
+    origin: Ints,
+    hidden: Hidden | None = None,
+    shared: Floats | None = None,
+) -> Refined:
     """Return the full fit of each data set.
 
     Parameters
@@ -62,6 +81,10 @@ def refine(request: Request, points: Points, minima: Solution, origin: Ints) -> 
         Minima of the sum of squares, M rows.
     origin : (M,) int array
         The data set of each.
+    hidden : Hidden, optional
+        Further minima to follow in the search for outliers.
+    shared : (B, n, m) float array, optional
+        Change of the points, in the frame, with each error that they share.
     """
     layout = request.layout
     order = _distinct(minima, origin, MOST_MINIMA if request.robust else 1)
@@ -71,8 +94,16 @@ def refine(request: Request, points: Points, minima: Solution, origin: Ints) -> 
     laws = choose_laws(request, stated)
     learning = WITH_STATED if stated else LEARNT
     if request.robust:
-        found = follow(layout, points.take(origin), theta, TRIED_STATED if stated else TRIED)
-        best = _first_of(origin, -found.likelihood)
+        near = points.used[origin]
+        if hidden is not None:
+            order = _distinct(hidden.minima, hidden.origin, MOST_MINIMA)
+            origin = np.append(origin, hidden.origin[order])
+            theta = np.concatenate([theta, hidden.minima.theta[order]])
+            converged = np.append(converged, hidden.minima.converged[order])
+            near = np.concatenate([near, hidden.near[order]])
+        found = follow(layout, points.take(origin), theta, near, TRIED_STATED if stated else TRIED)
+        at_edge = _at_edge(layout, points, origin, found.theta).any(axis=1)
+        best = _first_of(origin, np.where(at_edge, EDGE_LOSS, 0.0) - found.likelihood)
         theta, curve, converged = found.theta[best], found.curve[best], converged[best]
         out = candidates(layout, points, found.z[best])
         out = _confirmed(layout, points, out, curve, theta, learning)
@@ -80,8 +111,17 @@ def refine(request: Request, points: Points, minima: Solution, origin: Ints) -> 
         curve = _curve(layout, points, theta)
     rest = points.without(out)
     exact = len(laws) == 1
-    members = fit_laws(layout, rest, curve, theta, laws, absolute=request.absolute, exact=exact)
+    members = fit_laws(
+        layout, rest, curve, theta, laws, absolute=request.absolute, exact=exact, shared=shared
+    )
     return _summarise(request, rest, members, out, converged)
+
+
+def _at_edge(layout: Layout, points: Points, origin: Ints, theta: Floats) -> Bools:
+    """Return which coordinates (M, P) ended at the edge of what is searched."""
+    size = (len(points.v), theta.shape[1])
+    low, high = (np.broadcast_to(end, size)[origin] for end in (points.data.low, points.data.high))
+    return ((theta <= low) | (theta >= high)) & ~layout.rightful(theta, low, high)
 
 
 def _distinct(minima: Solution, origin: Ints, most: int) -> Ints:
@@ -141,6 +181,7 @@ def _summarise(request: Request, points: Points, members: Members, out: Bools, c
     scale = np.einsum("bk,bk->b", weight, members.scale)
     bound = np.einsum("bk,bkp->bp", weight, members.bound) > 0.5
     theta = members.theta[np.arange(len(weight)), weight.argmax(axis=1)]
+    theirs = np.einsum("bk,bkr->br", weight, np.where((weight > 0)[:, :, None], members.shared, 0.0))
     deviation = np.where(points.used, np.sqrt(members.point_variance) * frame.ys[:, None], np.nan)
     return Refined(
         value,
@@ -156,6 +197,7 @@ def _summarise(request: Request, points: Points, members: Members, out: Bools, c
         out,
         deviation,
         theta,
+        np.sqrt(theirs) * np.abs(slopes),
     )
 
 

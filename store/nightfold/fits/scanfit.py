@@ -127,13 +127,14 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
     table, slices = cut_scan(scan, everything, along)
     known = everything.attrs["units"]
     units: dict[str, Any] = {"unit_x": known.get(along, ""), "unit_y": known.get(observable, "")}
-    x = _numbers(scan, table, along)
+    x, shared = _numbers(scan, table, along), request.source.shared(table)
     if len(scan.axes) < 2:
         result = fit_curve(
             x,
             table[column_name(observable)].to_numpy(),
             request.model,
             stderr=_stderr(table, observable, request),
+            shared=shared,
             **request.options,
             **units,
         )
@@ -148,6 +149,7 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
         request.model,
         full=True,
         stderr=None if stderr is None else np.broadcast_to(stderr, values.shape),
+        shared=shared,
         **request.options,
         **units,
     )

@@ -29,6 +29,7 @@ CANDIDATE = 3.0
 MOST_SHARE = 0.15
 ALPHA = 0.003
 SCALE_ROUNDS = 8
+FAR_WEIGHT = 1e-3
 TRIED = Laws(RHO[[0, 3, 5, 7, 9, 12]], np.zeros(6), np.zeros(6), np.full(6, np.inf))
 TRIED_STATED = Laws(np.append(TRIED.rho, 0.0), np.append(np.zeros(6), 1.0), np.zeros(7), np.full(7, np.inf))
 
@@ -51,7 +52,7 @@ class Robust:
         return Robust(self.theta[rows], self.curve[rows], self.z[rows], self.likelihood[rows])
 
 
-def follow(layout: Layout, points: Points, theta: Floats, laws: Laws) -> Robust:
+def follow(layout: Layout, points: Points, theta: Floats, near: Bools, laws: Laws) -> Robust:
     """Return the robust fit that each start leads to.
 
     Parameters
@@ -59,11 +60,13 @@ def follow(layout: Layout, points: Points, theta: Floats, laws: Laws) -> Robust:
     points : Points
         M data sets, one for each start.
     theta : (M, P) float array
+    near : (M, n) bool array
+        Points that the starts go by.
     laws : Laws
         Variance laws to choose from.
     """
     theta = theta.copy()
-    residual = _residual(layout, points, theta, np.where(points.used, 1.0, 0.0))
+    residual = _residual(layout, points, theta, np.where(points.used, np.where(near, 1.0, FAR_WEIGHT), 0.0))
     rows, some = np.arange(len(theta)), points
     for _ in range(ROUNDS):
         left = residual[rows]
@@ -115,8 +118,8 @@ def _standardise(
 def candidates(layout: Layout, points: Points, z: Floats) -> Bools:
     """Return which points stand out, (B, n): beyond 3, the farthest first, and never more than 15 %.
 
-    All of the shots at one x standing out alike are no outliers, there the model is wrong; and enough points stay
-    to fit every parameter.
+    Three or more shots that are all there are at one x are no outliers, there the model is wrong; and enough
+    points stay to fit every parameter.
     """
     size = np.where(points.used, np.abs(z), 0.0)
     count = np.count_nonzero(points.used, axis=1)
@@ -130,7 +133,7 @@ def candidates(layout: Layout, points: Points, z: Floats) -> Bools:
         _, where = np.unique(u[used], return_inverse=True)
         shots = np.bincount(where)
         lost = np.bincount(where, weights=out[row, used])
-        whole = (lost == shots) & (shots > 1)
+        whole = (lost == shots) & (shots > 2)
         out[row, np.flatnonzero(used)[whole[where]]] = False
         left = len(shots) - np.count_nonzero((lost == shots) & ~whole)
         if left < max(layout.free_count, 2):
