@@ -82,7 +82,9 @@ def _figure(model: str, outcome: FitResult | FitTable, drawn: Drawn, where: str)
     related = " relative to reference shots" if drawn.relation["relative_to"] else ""
     detail = f"{where}; {drawn.observable}{related} along {drawn.along}, {under}"
     if not isinstance(outcome, FitResult):
-        name = chosen_estimate(outcome.estimates, outcome.outcome.request, drawn.estimate)
+        name = chosen_estimate(
+            [*outcome.estimates, *outcome.derived], outcome.outcome.request, drawn.estimate
+        )
         return slices_figure(outcome, estimate=name, title=f"{drawn.name}  {model}: {name}", detail=detail)
     table = drawn.scan.table(set_aside=True, observables=[drawn.observable], **drawn.relation)
     x, y = column_name(drawn.along), column_name(drawn.observable)

@@ -15,6 +15,7 @@ from nightfold_cli.plots import Chart, Label, Points
 from nightfold_cli.settings import aligned, setting
 
 if TYPE_CHECKING:
+    from nightfold.fits.estimate import Estimate
     from nightfold.fits.many import FitTable
     from nightfold.fits.result import FitResult
     from nightfold.scans.axes import Axis
@@ -59,7 +60,12 @@ def show_slices(
         from nightfold.fits.principal import chosen_estimate
 
         first = parts[0].result
-        _draw(screen, others, parts, chosen_estimate(first.estimates, first.request, estimate))
+        _draw(
+            screen,
+            others,
+            parts,
+            chosen_estimate([*first.estimates, *first.derived], first.request, estimate),
+        )
     doubted = [part for part in parts if not part.result.trusted]
     if doubted:
         screen.heading(f"DO NOT TRUST {len(doubted)} of {len(parts)} slices")
@@ -96,9 +102,14 @@ def _tabulate(screen: Screen, others: Sequence[Axis], parts: Sequence[Slice], fi
     screen.table(columns, rows, empty="no slices")
 
 
+def _numbers(part: Slice) -> dict[str, Estimate]:
+    """Return the estimates of a slice, and what is derived of them."""
+    return part.result.estimates | part.result.derived
+
+
 def _draw(screen: Screen, others: Sequence[Axis], parts: Sequence[Slice], name: str) -> None:
     """Draw one estimate over the other axes."""
-    unit = parts[0].result.estimates[name].unit
+    unit = _numbers(parts[0])[name].unit
     if len(others) == 1:
         _draw_chart(screen, others[0], parts, Label(name, unit))
     elif len(others) > 1:
@@ -110,7 +121,7 @@ def _draw_chart(screen: Screen, axis: Axis, parts: Sequence[Slice], y: Label) ->
     at = [part.where[axis.parameter] for part in parts]
     if len(at) < 2 or any(isinstance(value, str | bool) for value in at):
         return
-    found = [part.result.estimates[y.name] for part in parts]
+    found = [_numbers(part)[y.name] for part in parts]
     doubted = [not part.result.trusted for part in parts]
     ends = [estimate.interval(estimates.LEVEL_68) for estimate in found]
     shown = [
@@ -154,7 +165,7 @@ def _draw_maps(screen: Screen, others: Sequence[Axis], parts: Sequence[Slice], n
         screen.heading(name, f"{unit}  {at}".strip())
         screen.chart(
             map_of_values(
-                {place: part.result.estimates[name].value for place, part in found.items()},
+                {place: _numbers(part)[name].value for place, part in found.items()},
                 sides[across],
                 sides[up],
                 unicode=screen.unicode,
@@ -162,7 +173,7 @@ def _draw_maps(screen: Screen, others: Sequence[Axis], parts: Sequence[Slice], n
                 doubted={
                     place
                     for place, part in found.items()
-                    if not part.result.trusted and math.isfinite(part.result.estimates[name].value)
+                    if not part.result.trusted and math.isfinite(_numbers(part)[name].value)
                 },
             )
         )

@@ -4,9 +4,20 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from scipy.stats import t
 
 from nightfold import fit_curve
 from nightfold.errors import FitError
+from nightfold.fits.curve_function import evaluate
+from nightfold.fits.engine.layout import Layout
+from nightfold.fits.models import MODEL_NAMES, find_model
+
+VALUES = {
+    "center": 0.5, "fwhm": 0.3, "amplitude": 1.0, "lorentzian_share": 0.5, "asymmetry": 0.2, "offset": 0.3,
+    "lifetime": 0.4, "one_body_rate": 2.0, "two_body_rate": 3.0, "three_body_rate": 3.0, "frequency": 4.0,
+    "decay_time": 0.7, "phase": 0.5, "contrast": 0.8, "initial_size": 1.0, "velocity": 2.0,
+    "characteristic_rate": 0.4, "saturation_point": 0.5,
+}  # fmt: skip
 
 
 def test_the_band_is_that_of_lmfit() -> None:
@@ -23,10 +34,31 @@ def test_the_band_is_that_of_lmfit() -> None:
     assert np.all(wider[1] - wider[0] > 1.9 * (high - low))
 
 
+@pytest.mark.parametrize("model", MODEL_NAMES)
+def test_the_band_follows_from_the_covariance(model: str) -> None:
+    """Half widths against g^T C g, with the derivatives and the covariance of the parameters themselves."""
+    shape = find_model(model)
+    layout = Layout(shape, shape.default_background, frozenset())
+    x = np.linspace(0.05, 1.0, 60)
+    y = evaluate(layout, x, {name: VALUES[name] for name in layout.names})
+    y = y + 2e-3 * np.random.default_rng(6).normal(size=60)
+    fit = fit_curve(x, y, model, weights="equal", robust=False)
+    at = np.linspace(0.05, 1.0, 9)
+    values = {name: estimate.value for name, estimate in fit.estimates.items()}
+    slopes = []
+    for name in fit.free_names:
+        step = 1e-3 * fit.estimates[name].stderr
+        ends = [evaluate(layout, at, {**values, name: values[name] + sign * step}) for sign in (-1, 1)]
+        slopes.append((ends[1] - ends[0]) / (2 * step))
+    variance = np.einsum("in,ij,jn->n", slopes, fit.covariance_matrix, slopes)
+    low, high = fit.band(at, 0.95)
+    half = (high - low) / 2
+    assert half == pytest.approx(t.ppf(0.975, fit.dof) * np.sqrt(variance), rel=0.01, abs=1e-9)
+
+
 def test_a_straight_line_has_the_textbook_band() -> None:
     """Student's t times s sqrt(1/n + (x - mean)^2 / Sxx)."""
     import lmfit
-    from scipy.stats import t
 
     x = np.arange(8.0)
     y = 2 * x + np.array([0.1, -0.2, 0.05, 0.3, -0.1, -0.15, 0.2, -0.05])

@@ -134,6 +134,13 @@ def test_a_heavy_doubtful_model_makes_the_average_doubtful() -> None:
     assert light.combined.trusted
 
 
+def test_derived_numbers_may_be_compared() -> None:
+    fits = [plain("lorentzian", background="none"), plain("gaussian")]
+    name = next(iter(fits[0].derived))
+    found = compare_fits(fits, estimate=name)
+    assert [each.estimate for each in found.candidates] == [fit.derived[name] for fit in fits]
+
+
 def test_too_few_points_for_the_criterion_have_no_weight() -> None:
     x, y = X[::6], Y[::6]
     found = compare_fits([plain("exponential", x, y), plain("lorentzian", x, y)])

@@ -124,3 +124,13 @@ def test_scattered_slices_stay_a_list() -> None:
     assert dataset.lifetime.dims == ("slice",)
     assert dataset.b.values.tolist() == [where["b"] for where in slices]
     assert dataset.a.attrs["units"] == "G"
+
+
+def test_derived_numbers_are_there_too() -> None:
+    x = np.linspace(0, 3, 12)
+    table = fit_many(x, np.exp(-x / np.array([[1.0], [2.0]])) + 0.001 * np.cos(9 * x), "exponential")
+    dataset = table.to_dataset()
+    assert table.derived
+    for name, column in table.derived.items():
+        assert dataset[name].values.tolist() == column.value.tolist()
+        assert dataset[f"{name}_stderr"].values.tolist() == column.stderr.tolist()

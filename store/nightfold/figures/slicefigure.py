@@ -71,7 +71,7 @@ def slices_figure(
     FitError
         If there are no slices, or too many axes to be drawn.
     """
-    name = chosen_estimate(fits.estimates, fits.outcome.request, estimate)
+    name = chosen_estimate([*fits.estimates, *fits.derived], fits.outcome.request, estimate)
     if not fits.slices:
         raise FitError("figure: these fits are of no slices; wanted those of a scan along one of its axes")
     dataset = fits.to_dataset()

@@ -189,7 +189,7 @@ def compare_fits(
             float(delta),
             float(weight),
             own := name or principal_estimate(result.request),
-            result.estimates[own],
+            (result.estimates | result.derived)[own],
             result.trusted,
         )
         for result, criterion, delta, weight in zip(results, criteria, deltas, weights, strict=True)
@@ -267,7 +267,7 @@ def _weights(criteria: Floats) -> tuple[Floats, Floats]:
 def _compared(results: Sequence[FitResult], asked: str | None) -> str | None:
     if asked is not None:
         for result in results:
-            chosen_estimate(result.estimates, result.request, asked)
+            chosen_estimate([*result.estimates, *result.derived], result.request, asked)
         return asked
     name = principal_estimate(results[0].request)
     return name if all(name in result.estimates for result in results) else None

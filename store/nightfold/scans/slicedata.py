@@ -27,7 +27,7 @@ def estimates_dataset(fits: FitTable) -> xr.Dataset:
     """
     layout, coords, dims = _place(fits)
     variables: dict[str, xr.Variable] = {}
-    for name, column in fits.estimates.items():
+    for name, column in (fits.estimates | fits.derived).items():
         variables |= _estimate(layout, dims, free_name(name, tuple(coords)), column)
     own: dict[str, tuple[NDArray[Any], Any, str]] = {
         "trusted": (np.asarray(fits.trusted), False, "whether no warning but advisory ones was given"),
