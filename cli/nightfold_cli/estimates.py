@@ -75,9 +75,12 @@ def plain_rows(estimates: Mapping[str, AnyEstimate]) -> list[Row]:
 def shared_text(shared: Mapping[str, float], names: Sequence[str]) -> str:
     """Return the part of the uncertainties that is due to reference shots."""
     if any(math.isnan(shared[name]) for name in names):
-        return "of which reference shots: not known (no stderr stated, and too few to see their scatter)"
+        return (
+            "of the stderr, due to reference shots: not all known (none stated, and too few of them to see "
+            "their scatter); what is not known is left out"
+        )
     parts = ", ".join(f"{name} {rounded(shared[name], 2)}" for name in names)
-    return f"standard uncertainty due to reference shots, within the above: {parts}"
+    return f"of the stderr, due to reference shots: {parts}"
 
 
 def entry(estimate: AnyEstimate) -> dict[str, Any]:

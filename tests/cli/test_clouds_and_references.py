@@ -133,6 +133,14 @@ def test_a_relative_fit_is_shown_as_such(where: Path, run: Run, on_screen: Show)
         "--store", where, *arguments
     )
     assert "relative to reference" in on_screen("--store", where, "fits", width=120)
+    assert 0 < fit["shared_stderr"]["offset"] < fit["estimates"]["offset"]["stderr"]
+    assert kept["shared_stderr"] == fit["shared_stderr"]
+    shown = " ".join(on_screen("--store", where, *arguments).split())
+    assert (
+        "of the stderr, due to reference shots: center 1.5e-4, fwhm 1.3e-4, amplitude 0.057, offset" in shown
+    )
+    plain = json.loads(run("--store", where, *arguments[:-2], "--json").out)["fits"][0]
+    assert plain["shared_stderr"] == {}
 
 
 def test_exports(where: Path, at_home: Path, run: Run) -> None:

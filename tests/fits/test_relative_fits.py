@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from nightfold import FitResult, Store, fit_curve, open_store
+from nightfold import FitResult, FitTable, Store, fit_curve, open_store
 from nightfold.errors import ChoiceNeeded, NoReference
 from nightfold.fits.scanfit import FitRequest, fit_slices
 
@@ -159,3 +159,59 @@ def test_reference_shots_far_later_do_not_make_it_stale(here: Store) -> None:
     late = records()[0] | {"uid": "late", "started": (START + timedelta(hours=20)).isoformat()}
     assert here.take([late]).new == 1
     assert [kept.stale for kept in here.fits("loss")] == [False]
+
+
+def test_reference_shots_have_their_part_in_what_is_kept(here: Store) -> None:
+    result = fit(here, relative_to="reference")
+    (kept,) = here.fits("loss")
+    assert set(result.shared_stderr) == {*result.estimates, *result.derived}
+    assert kept.shared_stderr == result.shared_stderr
+    # 12 reference shots of 1 % each: the level far from the line is uncertain by 0.3 to 1 %.
+    assert 0.003 < kept.shared_stderr["offset"] < 0.01
+    assert kept.estimates["offset"].stderr > kept.shared_stderr["offset"]
+    low, high = kept.estimates["offset"].interval95
+    assert high - low > 2 * 1.96 * kept.shared_stderr["offset"]
+    fit(here, relative_to="reference")
+    assert [each.id for each in here.fits("loss")] == [kept.id]  # the same numbers again
+    assert fit(here, keep=False).shared_stderr == {}
+
+
+def test_slices_share_them_too(here: Store) -> None:
+    made = records()
+    for place, record in enumerate(made):
+        if not record.get("reference"):
+            record["scan"] = "map"
+            record["parameters"]["hold"] = {"value": place % 2, "unit": "s"}
+            record["swept"] = ["coil_current", "hold"]
+        record["uid"] = f"map-{place}"
+        record["machine"] = "egret"
+    assert not here.take(made).refused
+    table = here.fit(
+        "map", "lorentzian", observable="atom_number", along="coil_current", relative_to="reference"
+    )
+    assert isinstance(table, FitTable)
+    assert len(table) == 2
+    assert (table.shared_stderr["offset"] > 0.003).all()
+    assert (table.estimates["offset"].stderr > table.shared_stderr["offset"]).all()
+    assert [kept.shared_stderr["center"] for kept in here.fits("map")] == table.shared_stderr[
+        "center"
+    ].tolist()
+
+
+def test_one_by_one_they_are_what_moves_the_fit(here: Store) -> None:
+    """Each reference shot moved by its standard uncertainty: the roots of the sums of squares are the shared part."""
+    options: dict[str, Any] = {"relative_to": "reference", "weights": "equal", "robust": False, "keep": False}
+    before = fit(here, **options)
+    facts = here.scan("loss").table(relative_to="reference").attrs["references"]["atom_number"]
+    squares = dict.fromkeys(before.estimates, 0.0)
+    for record, size in zip(records()[::6], facts["stderr"], strict=True):
+        reading = record["observables"]["atom_number"]
+        for value in (reading["value"] + 0.1 * size, reading["value"]):
+            changed = {"value": value, "stderr": reading["stderr"]}
+            here.take([{"format": 1, "uid": record["uid"], "observables": {"atom_number": changed}}])
+            if value != reading["value"]:
+                now = fit(here, **options)
+                for name, estimate in now.estimates.items():
+                    squares[name] += (10 * (estimate.value - before.estimates[name].value)) ** 2
+    for name, square in squares.items():
+        assert before.shared_stderr[name] == pytest.approx(square**0.5, rel=0.05)

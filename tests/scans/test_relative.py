@@ -9,7 +9,15 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 
-from nightfold.scans.relative import Level, level_at, nearest, ratio_of, scatter_of
+from nightfold.scans.relative import (
+    Level,
+    known_stderr,
+    level_at,
+    nearest,
+    ratio_of,
+    scatter_of,
+    shared_errors,
+)
 
 Floats = NDArray[np.float64]
 
@@ -27,6 +35,28 @@ def test_worked_by_hand() -> None:
     ratio, stderr = ratio_of(at(60), at(3), level)
     assert ratio.tolist() == [pytest.approx(60 / 110)]
     assert stderr.tolist() == [pytest.approx(hypot(3 / 110, 60 * sqrt(9.25) / 110**2))]
+
+
+def test_what_ratios_share_worked_by_hand() -> None:
+    # The same, and a reading of 70 at 300 s and one of 99 before the first: references of 100(4) and 140(2).
+    moments, times = at(100, 300, -50), at(0, 400)
+    level = level_at(moments, times, at(100, 140), at(4, 2), 1800)
+    ratio, stderr = ratio_of(at(60, 70, 99), at(0, 0, 0), level)
+    errors = shared_errors(moments, times, at(4, 2), 1800, ratio, level.value)
+    by_hand = [
+        [-60 / 110**2 * 0.75 * 4, -60 / 110**2 * 0.25 * 2],
+        [-70 / 130**2 * 0.25 * 4, -70 / 130**2 * 0.75 * 2],
+        [-99 / 100**2 * 4, 0],
+    ]
+    assert errors == pytest.approx(np.array(by_hand))
+    assert np.sqrt((errors**2).sum(axis=1)) == pytest.approx(stderr)  # no scatter of their own
+    moved = 60 / (0.75 * 100.001 + 0.25 * 140) - 60 / 110
+    assert moved == pytest.approx(errors[0, 0] * 0.001 / 4, rel=1e-4)
+    assert shared_errors(moments, at(), at(), 1800, ratio, level.value).shape == (3, 0)
+    assert known_stderr(times, at(100, 140), at(4, nan), 1800).tolist() == [
+        4,
+        pytest.approx(nan, nan_ok=True),
+    ]
 
 
 def test_at_the_ends_and_at_a_reference_shot_it_is_one_alone() -> None:

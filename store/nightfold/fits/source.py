@@ -50,7 +50,7 @@ class Source:
         )
 
     def shared(self, table: pd.DataFrame) -> NDArray[np.float64] | None:
-        """Return the change of each shot of the table with each error that they share, (n, m); None if there is none."""
+        """Return the change of each shot of the table with each error that they share, (n, m); None without any."""
         if self.observable is None or self.relative_to is None:
             return None
         facts, level = table.attrs["references"][self.observable], table.attrs["levels"][self.observable]

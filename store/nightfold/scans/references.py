@@ -134,8 +134,8 @@ def relate(connection: Connection, table: pd.DataFrame, comparison: Comparison) 
 
     Beside each observable and its ``_stderr`` stand ``<observable>_reference``, that level, and its ``_stderr``.
     ``attrs["levels"]`` says which is whose, ``attrs["relative"]`` how many reference shots there are, and how far
-    the worst shot is from them; ``attrs["references"]`` when those of each observable started (us since 1970), and their
-    standard uncertainties.
+    the worst shot is from them; ``attrs["references"]`` when those of each observable started (us since 1970), and
+    their standard uncertainties.
 
     Raises
     ------

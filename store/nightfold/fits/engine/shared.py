@@ -2,8 +2,8 @@
 
 Points y have independent errors of variance s^2 G and share m errors of standard uncertainty one, which change them by
 L (n, m). The estimate B y then has the covariance ``s^2 B G B' + B L L' B'`` (JCGM 102:2011, 6.2). The sum of squares
-about the curve holds both, ``E SSE_G = s^2 (n - p) + tr(P L L')`` with P the projection that makes it: the second part is
-taken off before s^2 is told from it, lest it count twice.
+about the curve holds both, ``E SSE_G = s^2 (n - p) + tr(P L L')`` with P the projection that makes it: the second part
+is taken off before s^2 is told from it, lest it count twice.
 """
 
 from __future__ import annotations
