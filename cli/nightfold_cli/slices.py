@@ -162,7 +162,7 @@ def _draw_maps(screen: Screen, others: Sequence[Axis], parts: Sequence[Slice], n
         ]
         found = {(part.where[across], part.where[up]): part for part in inside}
         at = ", ".join(f"{each} {setting(value)}" for each, value in zip(beyond, where, strict=True))
-        screen.heading(name, f"{unit}  {at}".strip())
+        screen.heading(_named(name, unit), at)
         screen.chart(
             map_of_values(
                 {place: _numbers(part)[name].value for place, part in found.items()},

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
+from itertools import product
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pytest
 
 Show = Callable[..., str]
@@ -102,6 +104,47 @@ def test_slices_have_a_chart(where: Path, on_screen: Show) -> None:
     assert "amplitude (" in text
     assert "│ its 68 % interval" in text
     assert max(map(len, text.split("\n")[1:])) <= 80
+
+
+def test_three_axes_have_a_map_for_each_setting_of_the_shortest(
+    run: Any, on_screen: Show, at_home: Path
+) -> None:
+    rng, lines = np.random.default_rng(4), list[str]()
+    for beam, hold, power in product(("x", "y"), (10.0, 20.0, 40.0), (1.0, 2.0, 5.0)):
+        depth = 0 if (beam, hold, power) == ("y", 20.0, 2.0) else 5e4
+        for current in rng.permutation(np.linspace(59.5, 63, 13)):
+            number = 1e5 - depth / (1 + (2 * (current - 61 - hold / 100) / 0.9) ** 2) + 300 * rng.normal()
+            seconds = 10 * len(lines)
+            record = {
+                "machine": "heron",
+                "started": f"2026-10-05T{20 + seconds // 3600}:{seconds // 60 % 60:02d}:{seconds % 60:02d}Z",
+                "sequence": "hold",
+                "scan": "cube",
+                "swept": ["current", "hold", "power", "beam"],
+                "parameters": {"current": float(current), "hold": hold, "power": power, "beam": beam},
+                "observables": {"atom_number": float(number)},
+            }
+            lines.append(json.dumps(record))
+    Path("cube.jsonl").write_text("\n".join(lines), encoding="utf-8")
+    for words in (("new",), ("take", "cube.jsonl")):
+        assert run("--store", "cube.sqlite", *words).code == 0
+    words = ("--store", "cube.sqlite", "fit", "cube", "lorentzian", "--along", "current", "--plain")
+    fits = json.loads(run(*words, "--json").out)["fits"]
+    text = on_screen(*words)
+    shown = text.split("\n")
+    heads = [row for row, line in enumerate(shown) if line.startswith("center") and "beam" in line]
+    assert [shown[row] for row in heads] == ["center  beam x", "center  beam y"]
+    maps = [[line.partition("|")[2][:6] for line in shown[row + 2 : row + 5]] for row in heads]
+    for beam, rows in zip("xy", maps, strict=True):
+        for power, row in zip((5.0, 2.0, 1.0), rows, strict=True):
+            for place, hold in enumerate((10.0, 20.0, 40.0)):
+                where = {"hold": hold, "power": power, "beam": beam}
+                (trusted,) = (fit["trusted"] for fit in fits if fit["slice"] == where)
+                assert (row[2 * place : 2 * place + 2] == "××") is not trusted
+    assert not any(
+        fit["trusted"] for fit in fits if fit["slice"] == {"hold": 20.0, "power": 2.0, "beam": "y"}
+    )
+    assert "×× not to be trusted" in text
 
 
 def test_an_estimate_that_no_model_has(where: Path, run: Any) -> None:
