@@ -286,7 +286,7 @@ def _combine(candidates: Sequence[Candidate]) -> Combined | None:
     weight /= weight.sum()
     value = np.array([each.estimate.value for each in kept])
     stderr = np.array([each.estimate.stderr for each in kept])
-    origin = value[0]
+    origin = float(value[0])
     mean = origin + float(weight @ (value - origin))
     return Combined(
         mean,
