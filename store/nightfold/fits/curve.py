@@ -55,11 +55,10 @@ def fit_curve(
         Where to look: the start grid is held at these values, then everything is free. Parameters that the
         model is linear in are solved for exactly and need none.
     weights : {"auto", "equal", "given"}
-        ``equal`` is ordinary least squares; ``given`` weighs by 1 / stderr^2. ``auto`` equals ``equal`` for
-        now (with `absolute_stderr`, ``given``); it is the place of the recipe that learns how the scatter
-        depends on the signal.
+        ``auto`` averages over how the scatter may depend on the signal, and on stderr if every point has one;
+        ``equal`` counts every point the same; ``given`` weighs by 1 / stderr^2 (as `absolute_stderr` does).
     robust : bool
-        Accepted, without effect for now: no point is left out as an outlier.
+        Look for outliers and leave them out. With ``weights="equal"`` and False: ordinary least squares.
     unit_x, unit_y : str
         Units, from which those of the estimates are composed.
     started : (n,) array of times, optional
@@ -79,10 +78,11 @@ def fit_curve(
 
     Notes
     -----
-    Least squares by variable projection from a global start grid. ``stderr`` of an estimate is the root of
-    the scaled covariance ``SSE / (n - p) (J'WJ)^-1`` (unscaled for absolute stderr); intervals are those of
-    Student's t with n - p degrees of freedom in the coordinate of the fit (the logarithm of widths, times
-    and rates). The result does not depend on the order of the points.
+    Least squares by variable projection from a global start grid, outliers left out, averaged over variance laws by
+    their likelihood. ``stderr`` is the root mean square spread of that mixture, the interval at a level its quantiles
+    in the coordinate of the fit (the logarithm of widths, times and rates). With one law these are the root of the
+    scaled covariance ``SSE / (n - p) (J'WJ)^-1`` (unscaled for absolute stderr) and Student's t. The result does
+    not depend on the order of the points. See docs/fits.md.
     """
     points, values = as_points("x", x, 1), as_points("y", y, 1)
     if len(points) != len(values):
@@ -100,7 +100,9 @@ def fit_curve(
         "unit_x": unit_x,
         "unit_y": unit_y,
     }
-    table = fit_table(points, values[None], model, errors, options, True, common, check_times(started, len(points)))
+    table = fit_table(
+        points, values[None], model, errors, options, True, common, check_times(started, len(points))
+    )
     if not np.isfinite(table.outcome.low[0]):
         raise FitError(f"scan: {table.outcome.shortage(0)}")
     return table.result(0)

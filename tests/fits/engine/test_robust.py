@@ -101,3 +101,22 @@ def test_weights_and_robust_are_separate_choices() -> None:
         assert estimate.value == pytest.approx(twin.estimates[name].value, rel=1e-7)
         assert estimate.stderr == pytest.approx(twin.estimates[name].stderr, rel=1e-6)
         assert estimate.interval(0.95) == pytest.approx(twin.estimates[name].interval(0.95), rel=1e-6)
+
+
+def test_a_burst_of_far_points_does_not_become_the_line() -> None:
+    example = EXAMPLES["gaussian"]
+    for seed in range(8):
+        y = example.noisy(seed, 0.05)
+        y[[25, 26, 27]] -= [2.0, 1.8, 1.9]  # deeper, and as wide as a line may be
+        result = fit_curve(example.x, y, "gaussian")
+        assert result.outliers == (25, 26, 27)
+        assert result.estimates["center"].value == pytest.approx(32.4, abs=0.2)
+
+
+def test_a_narrow_line_is_not_taken_for_outliers() -> None:
+    x = np.linspace(-5.0, 5.0, 31)
+    rng = np.random.default_rng(3)
+    Y = 1.0 - 0.8 / (1 + (2 * (x - 1.3) / 0.6) ** 2) + 0.04 * rng.normal(size=(100, 31))
+    table = fit_many(x, Y, "lorentzian", full=True)
+    assert np.count_nonzero(table.outcome.outlier.any(axis=1)) <= 3
+    assert np.abs(table.estimates["center"].value - 1.3).max() < 0.2
