@@ -129,6 +129,8 @@ def test_a_relative_fit_is_shown_as_such(where: Path, run: Run, on_screen: Show)
     assert fit["estimates"]["amplitude"]["unit"] == ""
     (kept,) = json.loads(run("--store", where, "fits", "--json").out)["fits"]
     assert kept["relative_to"] == "reference"
+    plain = json.loads(run("--store", where, *arguments[:-2], "--json").out)["fits"][0]
+    assert plain["shared_stderr"] == {}
     assert "atom_number[up] relative to reference shots along rf_frequency" in on_screen(
         "--store", where, *arguments
     )
@@ -139,8 +141,6 @@ def test_a_relative_fit_is_shown_as_such(where: Path, run: Run, on_screen: Show)
     assert (
         "of the stderr, due to reference shots: center 1.5e-4, fwhm 1.3e-4, amplitude 0.057, offset" in shown
     )
-    plain = json.loads(run("--store", where, *arguments[:-2], "--json").out)["fits"][0]
-    assert plain["shared_stderr"] == {}
 
 
 def test_exports(where: Path, at_home: Path, run: Run) -> None:
