@@ -58,6 +58,15 @@ def rows(estimates: Mapping[str, Estimate], fixed: Collection[str]) -> list[Row]
     ]
 
 
+def sentence(estimates: Mapping[str, Estimate]) -> str:
+    """Return estimates one after the other, each with its name and unit."""
+    parts = (
+        f"{name} {value_text(estimate)} {unit_text(estimate)}".rstrip()
+        for name, estimate in estimates.items()
+    )
+    return ", ".join(parts)
+
+
 def plain_rows(estimates: Mapping[str, AnyEstimate]) -> list[Row]:
     """Return a line an estimate for programs, with all digits."""
     return [

@@ -130,6 +130,7 @@ def test_fit_ends_with_the_numbers(where: Path, on_screen: Show) -> None:
         "amplitude  -7.01(28)e4  atoms  -7.58e4 … -6.44e4",
         "offset     1.426(12)e5  atoms  1.401e5 … 1.451e5",
     ]
+    assert lines[start + 7].startswith("derived: quality_factor ")
 
 
 def test_a_fit_not_to_trust_says_so_in_words(where: Path, on_screen: Show) -> None:

@@ -196,6 +196,8 @@ def _show(
     screen.table(
         estimates.ON_SCREEN, estimates.rows(result.estimates, dict(args.fixed)), empty="no estimates"
     )
+    if result.derived:
+        screen.note(f"derived: {estimates.sentence(result.derived)}")
     if result.shared_stderr:
         screen.note(estimates.shared_text(result.shared_stderr, result.free_names))
     _verdict(screen, result, runs)
@@ -297,6 +299,7 @@ def _entry(
         "relative_to": relative_to,
         "slice": part.where,
         "estimates": {name: estimates.entry(estimate) for name, estimate in result.estimates.items()},
+        "derived": {name: estimates.entry(number) for name, number in result.derived.items()},
         "shared_stderr": result.shared_stderr,
         "trusted": result.trusted,
         "warnings": [estimates.warning_entry(warning) for warning in result.warnings],
