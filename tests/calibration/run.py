@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import sys
 import time
 from argparse import ArgumentParser, Namespace
@@ -28,6 +29,7 @@ from tests.calibration.shapes import SPECS
 from tests.calibration.tables import Report
 
 SETS, QUICK = 300, 20
+BEGIN, END = "<!-- tables of run.py -->", "<!-- end of tables -->"
 SHARES = {"clean": 1.0, "outliers": 2 / 3}
 OTHER_SHARE = 0.2
 """Scans of a kind, per clean scan."""
@@ -107,6 +109,7 @@ def parse(argv: list[str] | None) -> Namespace:
     parser.add_argument("--rows", type=int, default=ROWS, help=f"scans that share x (default: {ROWS})")
     parser.add_argument("--quick", action="store_true", help=f"{QUICK} clean scans a model, n = 16 and 60")
     parser.add_argument("--processes", type=int, default=2)
+    parser.add_argument("--docs", type=Path, help="put the tables into this page, between its marks")
     parser.add_argument("--json", type=Path, help="write counts a cell to this file")
     args = parser.parse_args(argv)
     args.models, args.kinds = args.models.split(","), args.kinds.split(",")
@@ -119,12 +122,20 @@ def parse(argv: list[str] | None) -> Namespace:
     return args
 
 
+def _into(page: Path, text: str) -> None:
+    """Put text between the marks of a page, its tables without the padding of cells."""
+    before, rest = page.read_text(encoding="utf-8").split(BEGIN)
+    text = re.sub(r"-{4,}", "---", re.sub(r" +\|", " |", re.sub(r"\| +", "| ", text)))
+    page.write_text(f"{before}{BEGIN}\n\n{text}\n\n{END}{rest.split(END)[1]}", encoding="utf-8")
+
+
 def main(argv: list[str] | None = None) -> int:
     """Run, print, write."""
     args = parse(argv)
     began = time.monotonic()
     scores, spent = run(list(jobs(args)), args.processes)
-    print(Report(scores).everything())
+    tables = Report(scores).everything()
+    print(tables)
     scans = sum(len(s.success) for s in scores)
     fitting = sum(s.cpu for s in scores)
     print(
@@ -134,6 +145,8 @@ def main(argv: list[str] | None = None) -> int:
     crashes = [s.crash for s in scores if s.crash]
     for crash in crashes[:10]:
         print(f"refused: {crash}")
+    if args.docs:
+        _into(args.docs, f"{scans} scans, seeds from {args.seed}; all in percent.\n\n{tables}")
     if args.json:
         args.json.write_text(json.dumps(as_json(scores), indent=1), encoding="utf-8")
     return 0

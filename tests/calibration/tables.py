@@ -274,17 +274,17 @@ class Report:
     def everything(self) -> str:
         """Return all tables."""
         parts = (
-            self.targets_table(),
-            self.main_table(),
-            self.cells_table(),
-            self.names_table(),
-            self.noise_table(),
-            self.awkward_table(),
-            self.wrong_table(),
-            self.warnings_table(),
-            self.alarms_table(),
+            ("Targets", self.targets_table()),
+            ("By model and by number of points", self.main_table()),
+            ("By both", self.cells_table()),
+            ("Every reported name, clean scans", self.names_table()),
+            ("By scatter and background", self.noise_table()),
+            ("What is not as assumed", self.awkward_table()),
+            ("The same by model (misfits: of visible ones in brackets)", self.wrong_table()),
+            ("Warnings", self.warnings_table()),
+            ("Warnings by model", self.alarms_table()),
         )
-        return "\n\n".join(parts)
+        return "\n\n".join(f"### {title}\n\n{table}" for title, table in parts)
 
 
 def said(tally: Tally, most: int) -> str:
