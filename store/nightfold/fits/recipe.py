@@ -89,7 +89,7 @@ def refine(
     layout = request.layout
     order = _distinct(minima, origin, MOST_MINIMA if request.robust else 1)
     origin, theta, converged = origin[order], minima.theta[order], minima.converged[order]
-    out = np.zeros(points.v.shape, dtype=bool)
+    out, members = np.zeros(points.v.shape, dtype=bool), None
     stated = points.stated is not None
     laws = choose_laws(request, stated)
     learning = WITH_STATED if stated else LEARNT
@@ -106,14 +106,15 @@ def refine(
         best = _first_of(origin, np.where(at_edge, EDGE_LOSS, 0.0) - found.likelihood)
         theta, curve, converged = found.theta[best], found.curve[best], converged[best]
         out = candidates(layout, points, found.z[best])
-        out = _confirmed(layout, points, out, curve, theta, learning)
+        out, members = _confirmed(layout, points, out, curve, theta, learning)
     else:
         curve = _curve(layout, points, theta)
     rest = points.without(out)
-    exact = len(laws) == 1
-    members = fit_laws(
-        layout, rest, curve, theta, laws, absolute=request.absolute, exact=exact, shared=shared
-    )
+    if members is None or laws is not learning or shared is not None:
+        exact = len(laws) == 1
+        members = fit_laws(
+            layout, rest, curve, theta, laws, absolute=request.absolute, exact=exact, shared=shared
+        )
     return _summarise(request, rest, members, out, converged)
 
 
@@ -150,14 +151,19 @@ def _curve(layout: Layout, points: Points, theta: Floats) -> Floats:
     return np.asarray(combine(about.c, columns) + points.origin)
 
 
-def _confirmed(layout: Layout, points: Points, out: Bools, curve: Floats, theta: Floats, laws: Laws) -> Bools:
-    """Return which candidates are outliers by fits that have not seen them."""
+def _confirmed(
+    layout: Layout, points: Points, out: Bools, curve: Floats, theta: Floats, laws: Laws
+) -> tuple[Bools, Members | None]:
+    """Return which candidates are outliers by fits that have not seen them, and these fits if none is taken back."""
     rows = np.flatnonzero(out.any(axis=1))
-    if len(rows):
-        some = points.take(rows)
-        members = fit_laws(layout, some.without(out[rows]), curve[rows], theta[rows], laws)
-        out[rows] = confirm(layout, some, members, out[rows])
-    return out
+    if not len(rows):
+        return out, None
+    some = points.take(rows)
+    members = fit_laws(layout, some.without(out[rows]), curve[rows], theta[rows], laws)
+    found = confirm(layout, some, members, out[rows])
+    whole = len(rows) == len(out) and np.array_equal(found, out)
+    out[rows] = found
+    return out, members if whole else None
 
 
 def _summarise(request: Request, points: Points, members: Members, out: Bools, converged: Bools) -> Refined:

@@ -117,9 +117,10 @@ def fit_laws(
     excess = np.where(used, (weights * variance).reshape(-1, n), 1.0)
     roots = np.sqrt(excess)
     within, sharp = whole * roots[:, None], whole / roots[:, None]
-    first = _scaled_inverse(gram(whole, whole))[0]
+    both = np.concatenate([whole, sharp])
+    inverses, volumes = _scaled_inverse(gram(both, both))
+    first, best, volume = inverses[: len(whole)], inverses[len(whole) :], volumes[len(whole) :]
     middle = gram(within, within)
-    best, volume = _scaled_inverse(gram(sharp, sharp))
     left = about.residual / roots
     pull = dot(sharp, left)
     sse = np.einsum("mn,mn->m", left, left) - (combine(pull, best) * pull).sum(axis=1)
@@ -180,12 +181,15 @@ def _tells(points: Points) -> Bools:
 
 def _scaled_inverse(products: Floats) -> tuple[Floats, Floats]:
     """Return inverses of positive semidefinite matrices, nan where singular, and logarithms of their determinants."""
-    size = np.sqrt(diagonal(products))
-    size = np.where(size > 0, size, np.nan)
+    squares = diagonal(products)
+    good = squares > 0
+    size = np.sqrt(np.where(good, squares, np.nan))
     sizes = size[:, :, None] * size[:, None]
-    ratio = np.nan_to_num(products / sizes)
+    ratio = products / sizes
+    if not good.all():
+        ratio = np.nan_to_num(ratio)
     determinant = np.maximum(np.linalg.det(ratio), 1e-30)
-    return inverse(ratio) / sizes, np.log(determinant) + 2 * np.log(np.nan_to_num(size, nan=1.0)).sum(axis=1)
+    return inverse(ratio) / sizes, np.log(determinant) + np.log(np.where(good, squares, 1.0)).sum(axis=1)
 
 
 def _normalise(chance: Floats, exactly: Bools, spare: Floats) -> Floats:

@@ -41,10 +41,22 @@ class Points:
         return replace(self, used=self.used & ~out)
 
     def weighted(self, weights: Floats) -> DataSets:
-        """Return the data sets with weights (B, n), which are zero for points that do not count."""
+        """Return the data sets with weights (B, n), which are zero for points that do not count.
+
+        Their ``count`` is that of the points handed in.
+        """
         roots = np.sqrt(weights)
-        return replace(
-            self.data, root_weights=roots, z=self.v * roots, count=np.count_nonzero(self.used, axis=1)
+        data = self.data
+        return DataSets(
+            data.u,
+            roots,
+            self.v * roots,
+            data.coefficients,
+            data.shift,
+            data.low,
+            data.high,
+            data.frame,
+            data.count,
         )
 
     @property

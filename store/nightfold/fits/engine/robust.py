@@ -26,6 +26,8 @@ STEPS = 2
 STILL = 0.02
 """A fit has come to rest when the curve moves by less than this many standard deviations anywhere."""
 CANDIDATE = 3.0
+NORMAL = 1.2034
+"""Standard deviation of normal scatter in units of the scale that Student's t with 4 degrees of freedom finds."""
 MOST_SHARE = 0.15
 ALPHA = 0.003
 SCALE_ROUNDS = 8
@@ -116,7 +118,7 @@ def _standardise(
 
 
 def candidates(layout: Layout, points: Points, z: Floats) -> Bools:
-    """Return which points stand out, (B, n): beyond 3, the farthest first, and never more than 15 %.
+    """Return which points stand out, (B, n): beyond 3 standard deviations, the farthest first, at most 15 %.
 
     Three or more shots that are all there are at one x are no outliers, there the model is wrong; and enough
     points stay to fit every parameter.
@@ -125,7 +127,7 @@ def candidates(layout: Layout, points: Points, z: Floats) -> Bools:
     count = np.count_nonzero(points.used, axis=1)
     most = np.minimum((MOST_SHARE * count).astype(np.intp), count - layout.free_count - 2)
     rank = np.argsort(np.argsort(-size, axis=1, kind="stable"), axis=1, kind="stable")
-    out = (size > CANDIDATE) & (rank < most[:, None])
+    out = (size > CANDIDATE * NORMAL) & (rank < most[:, None])
     rows = np.flatnonzero(out.any(axis=1))
     for row in rows:
         u = points.data.u[min(int(row), len(points.data.u) - 1)]
