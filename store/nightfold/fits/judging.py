@@ -2,48 +2,67 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from nightfold.fits.engine.arrays import Floats
 from nightfold.fits.engine.feature import LEVEL
+from nightfold.fits.engine.links import to_coordinate, to_value
 from nightfold.fits.engine.misfit import Plane, look, make_plane
+from nightfold.fits.engine.rivals import APART, LEAST_ODDS, Rival, Rivals, find_rivals
 from nightfold.fits.engine.sampling import Sampling
 from nightfold.fits.engine.tangent import Tangent, tangent
-from nightfold.fits.engine.trust import Facts, FitWarning, judge
+from nightfold.fits.engine.trust import Facts, judge, left_out
 from nightfold.fits.engine.wander import wander
+from nightfold.fits.engine.warning import FitWarning
 from nightfold.fits.fitting import Outcome
 from nightfold.fits.groups import Group
+from nightfold.fits.result import FitResult
+
+ANSWERS = ("position", "width", "rate", "frequency")
+"""Roles of what a fit is about: another minimum is another answer if one of these differs."""
 
 
-def judge_fits(outcome: Outcome, x: Floats, Y: Floats, started: Floats | None) -> list[tuple[FitWarning, ...]]:
+def judge_fits(outcome: Outcome, x: Floats, started: Floats | None) -> list[tuple[FitWarning, ...]]:
     """Return the warnings of each fit.
 
     Parameters
     ----------
     x : (n,) float array
-    Y : (B, n) float array
         As handed in.
     started : (n,) float array or None
         When each point was taken; only the order counts; nan where it is not known.
     """
-    found: list[tuple[FitWarning, ...]] = [()] * len(Y)
+    found: list[tuple[FitWarning, ...]] = [()] * len(outcome.low)
     for row in np.flatnonzero(~np.isfinite(outcome.low)):
         found[row] = (FitWarning("too-few-points", outcome.shortage(int(row))),)
     with np.errstate(all="ignore"):
         for group in outcome.groups:
-            judging = _Judging(outcome, x, Y, started, group, _tangent(outcome, group))
+            about = _tangent(outcome, group)
+            judging = _Judging(outcome, x, started, group, about, _rivals(outcome, group, about))
             for place, row in enumerate(group.rows.tolist()):
                 found[row] = judge(judging.facts(place, row))
     return found
+
+
+def name_outliers(result: FitResult, uids: Sequence[str]) -> FitResult:
+    """Return a result whose warning of outliers names these by the uids of the shots, n of them as handed in."""
+    if not result.outliers:
+        return result
+    which = ", ".join(
+        uids[index] for index in np.array(result.outliers)[np.argsort(result.outlier_x, kind="stable")]
+    )
+    said = left_out(result.outlier_x.tolist(), which, result.request.unit_x)
+    return replace(result, warnings=tuple(said if w.code == said.code else w for w in result.warnings))
 
 
 def _tangent(outcome: Outcome, group: Group) -> Tangent:
     """Return the fits of a group to first order, with what a point is known to scatter by."""
     frame = group.data.frame
     deviation = np.take_along_axis(outcome.deviation[group.rows], group.place, axis=1) / frame.ys[:, None]
-    plain = np.isnan(deviation).all(axis=1)
+    plain = np.asarray(np.isnan(deviation).all(axis=1))
     if plain.any():
         scale = np.sqrt(outcome.variance[group.rows])[:, None] / frame.ys[:, None]
         alike = np.where(scale > 0, scale, 1.0) / group.roots
@@ -54,16 +73,25 @@ def _tangent(outcome: Outcome, group: Group) -> Tangent:
     return tangent(outcome.request.layout, group.data, outcome.theta[group.rows], deviation)
 
 
+def _rivals(outcome: Outcome, group: Group, about: Tangent) -> Rivals | None:
+    """Return the best other minima of a group."""
+    shape = outcome.request.layout.shape
+    if not shape.searchable or not shape.theta:
+        return None
+    origin, starts = group.starts()
+    return find_rivals(outcome.request.layout, group.data, about, outcome.theta[group.rows], origin, starts)
+
+
 @dataclass(frozen=True)
 class _Judging:
     """A group of fits being judged."""
 
     outcome: Outcome
     x: Floats
-    Y: Floats
     started: Floats | None
     group: Group
     about: Tangent
+    rivals: Rivals | None
 
     def facts(self, place: int, row: int) -> Facts:
         """Return the facts of one fit, the `place`-th of the group."""
@@ -102,17 +130,33 @@ class _Judging:
 
     def _with_residuals(self, facts: Facts, place: int, row: int) -> Facts:
         """Return the facts with what sampling and residuals tell."""
-        from dataclasses import replace
-
         layout = self.outcome.request.layout
         used = self.group.place[place][self.about.roots[place] > 0]
-        facts = replace(facts, sampling=self._sampling(facts, self.x[used]))
+        facts = replace(facts, sampling=self._sampling(facts, self.x[used]), rival=self._rival(place, row))
         if not facts.feature_p <= LEVEL or not facts.spare > 0:
             return facts
         plane = self._plane(place)
         misfit = look(layout, plane, self.outcome.theta[row], self.outcome.spread[row])
         times = None if self.started is None else wander(plane, self.started[used])
         return replace(facts, misfit=misfit, wander=times, stated=self._stated(plane))
+
+    def _rival(self, place: int, row: int) -> Rival | None:
+        """Return another minimum that is another answer and nearly as good."""
+        found, out = self.rivals, self.outcome
+        if found is None or not found.odds[place] < LEAST_ODDS:
+            return None
+        layout = out.request.layout
+        links = layout.links
+        roles: dict[str, str] = {}
+        value: dict[str, float] = {}
+        for theta in layout.shape.theta:
+            at = layout.names.index(theta.name)
+            mine = float(to_coordinate(out.value[row, at], links[at]))
+            away = abs(float(found.q[place, at]) - mine)
+            if theta.role in ANSWERS and away > APART * out.spread[row, at]:
+                roles[theta.name] = theta.role
+                value[theta.name] = float(to_value(found.q[place, at], links[at]))
+        return Rival(float(np.exp(found.odds[place])), value, roles) if value else None
 
     def _plane(self, place: int) -> Plane:
         about = self.about

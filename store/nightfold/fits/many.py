@@ -13,11 +13,18 @@ from numpy.typing import ArrayLike
 from nightfold.errors import FitError
 from nightfold.fits.engine.arrays import Bools, Floats, Ints
 from nightfold.fits.engine.links import bends
-from nightfold.fits.engine.trust import FitWarning
+from nightfold.fits.engine.warning import FitWarning
 from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
 from nightfold.fits.judging import judge_fits
-from nightfold.fits.request import as_points, check_shared, check_span, check_stderr, check_times, make_request
+from nightfold.fits.request import (
+    as_points,
+    check_shared,
+    check_span,
+    check_stderr,
+    check_times,
+    make_request,
+)
 from nightfold.fits.result import FitResult
 
 if TYPE_CHECKING:
@@ -229,7 +236,7 @@ class FitTable:
     @cached_property
     def warnings(self) -> list[tuple[FitWarning, ...]]:
         """The warnings of each fit, B tuples."""
-        return judge_fits(self.outcome, self.x, self.Y, self.started)
+        return judge_fits(self.outcome, self.x, self.started)
 
     @cached_property
     def trusted(self) -> Bools:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import ArrayLike
 
-from nightfold.fits.engine.trust import FitWarning
+from nightfold.fits.engine.warning import FitWarning
 from nightfold.fits.estimate import Estimate
 
 if TYPE_CHECKING:

@@ -13,6 +13,7 @@ import numpy as np
 from nightfold.card import without_cloud
 from nightfold.errors import ChoiceNeeded, FitError, NotFound
 from nightfold.fits.curve import fit_curve
+from nightfold.fits.judging import name_outliers
 from nightfold.fits.many import FitTable, fit_many
 from nightfold.fits.request import check_span
 from nightfold.fits.result import FitResult
@@ -127,6 +128,7 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
     table, slices = cut_scan(scan, everything, along)
     known = everything.attrs["units"]
     units: dict[str, Any] = {"unit_x": known.get(along, ""), "unit_y": known.get(observable, "")}
+    units["started"] = table["started"].to_numpy(dtype="datetime64[us]")
     x, shared = _numbers(scan, table, along), request.source.shared(table)
     if len(scan.axes) < 2:
         result = fit_curve(
@@ -138,6 +140,7 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
             **request.options,
             **units,
         )
+        result = name_outliers(result, table["uid"].tolist())
         return result, [SliceFit({}, along, result, table, slices[0].left_out)]
     values = np.full((len(slices), len(table)), np.nan)
     for number, part in enumerate(slices):
@@ -163,7 +166,7 @@ def fit_slices(scan: Scan, request: FitRequest) -> tuple[FitResult | FitTable, l
         SliceFit(
             part.where,
             along,
-            _within(fits.result(number), part.rows),
+            name_outliers(_within(fits.result(number), part.rows), table["uid"].iloc[part.rows].tolist()),
             table.iloc[part.rows].reset_index(drop=True),
             part.left_out,
         )

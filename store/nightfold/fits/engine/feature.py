@@ -16,7 +16,8 @@ from nightfold.fits.engine.grid import Grid
 from nightfold.fits.engine.reduction import Reduction
 
 SHUFFLES = 300
-LEVEL = 0.01
+LEVEL = 0.005
+"""None of the shuffles may look as much like a line as the data."""
 
 
 def permutation_p(grid: Grid, reduction: Reduction, u: Floats, roots: Floats, Z: Floats, null: str) -> Floats:

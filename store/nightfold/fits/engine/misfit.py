@@ -22,8 +22,8 @@ from nightfold.fits.engine.warning import FitWarning, chance
 if TYPE_CHECKING:
     from nightfold.fits.engine.layout import Layout
 
-LEVEL = 0.01
-LEVEL_OTHER = 0.003
+LEVEL = 0.006
+LEVEL_OTHER = 0.002
 """For the means of repeats and for neighbours, which only add to the first test."""
 MATTERS = 1.0
 """Stderr by which a number may move with the pattern and the fit be trusted."""
@@ -72,13 +72,15 @@ class Plane:
     @property
     def spare(self) -> int:
         """Degrees of freedom."""
-        return len(self.residual) - self.basis.shape[1]
+        return int(len(self.residual) - self.basis.shape[1])
 
     @cached_property
     def shuffled(self) -> Floats:
         """Residuals (SHUFFLES, n) as they would be if points had come by each other's scatter."""
         rest = 1.0 - np.einsum("nk,nk->n", self.basis, self.basis)
-        scatter = np.where(rest > LEVERAGE, self.residual / np.sqrt(np.maximum(rest, LEVERAGE)), self.residual)
+        scatter = np.where(
+            rest > LEVERAGE, self.residual / np.sqrt(np.maximum(rest, LEVERAGE)), self.residual
+        )
         generator = np.random.Generator(np.random.PCG64(seed_of(self.residual)))
         shuffled = generator.permuted(np.broadcast_to(scatter, (SHUFFLES, len(scatter))), axis=1)
         return np.asarray(shuffled - (shuffled @ self.basis) @ self.basis.T)
@@ -164,7 +166,7 @@ def lack_of_fit(plane: Plane) -> float:
 
 def neighbours_alike(plane: Plane) -> float:
     """Return the p value of residuals of neighbours along x being no more alike than those of shuffled ones."""
-    _, which, count = np.unique(plane.u, return_inverse=True, return_counts=True)
+    _, count = np.unique(plane.u, return_counts=True)
     if len(count) < LEAST_SPARE or plane.spare < LEAST_SPARE:
         return float("nan")
     starts = np.concatenate([[0], np.cumsum(count)[:-1]])
@@ -229,12 +231,15 @@ class Misfit:
         The reported number that moves most when the curve follows the pattern.
     moved : float
         By how many of its standard uncertainties.
+    coarse : bool
+        Whether the means of repeats or neighbours alone show it; standard uncertainties then say little.
     """
 
     p: float
     repeats: bool
     name: str
     moved: float
+    coarse: bool
 
 
 def look(layout: Layout, plane: Plane, theta: Floats, spread: Floats) -> Misfit | None:
@@ -254,9 +259,16 @@ def look(layout: Layout, plane: Plane, theta: Floats, spread: Floats) -> Misfit 
     if pattern is not None:
         moved = np.abs(pattern.moved[: len(free)][free]) / spread[: len(free)][free]
     moved = np.where(np.isnan(moved), 0.0, moved)
+    coarse = lack <= LEVEL_OTHER or alike <= LEVEL_OTHER
     most = int(moved.argmax())
     p = pattern.p if along and pattern is not None else min(p for p in (lack, alike) if p == p)
-    return Misfit(p, not along and lack <= LEVEL_OTHER and not alike <= LEVEL_OTHER, names[most], float(moved[most]))
+    return Misfit(
+        p,
+        not along and lack <= LEVEL_OTHER and not alike <= LEVEL_OTHER,
+        names[most],
+        float(moved[most]),
+        coarse,
+    )
 
 
 def poor_fit(found: Misfit | None) -> FitWarning | None:
@@ -269,7 +281,7 @@ def poor_fit(found: Misfit | None) -> FitWarning | None:
         else "the residuals follow a pattern along x"
     )
     how = f"{what} (chance does so in {chance(found.p)} of scans)"
-    if found.moved <= MATTERS:
+    if found.moved <= MATTERS and not found.coarse:
         return FitWarning(
             "poor-fit",
             f"{how}, but a curve that follows it has the same numbers within their stderr; another model may be better",
@@ -278,5 +290,8 @@ def poor_fit(found: Misfit | None) -> FitWarning | None:
     return FitWarning(
         "poor-fit",
         f"{how}, and a curve that follows it has a {found.name} {found.moved:.2g} stderr away: the data are not of this"
-        " shape, or something drifted; look at the residuals, and fit another model or background",
+        " shape, or something drifted; look at the residuals, and fit another model or background"
+        if found.moved > MATTERS
+        else f"{how}: the data are not of this shape, or something drifted; look at the residuals, and fit another"
+        " model or background",
     )

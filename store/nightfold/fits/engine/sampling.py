@@ -1,4 +1,4 @@
-"""Are there points where the curve changes, and enough of them?"""
+"""Whether there are points where the curve changes, and enough of them."""
 
 from __future__ import annotations
 
@@ -45,7 +45,9 @@ def _on_line(sampling: Sampling, unit: str) -> FitWarning | None:
     count = int(np.count_nonzero((x >= low) & (x <= high)))
     if count >= LEAST_ON_LINE:
         return None
-    values = "no value of x lies" if count == 0 else "1 value of x lies" if count == 1 else "2 values of x lie"
+    values = (
+        "no value of x lies" if count == 0 else "1 value of x lies" if count == 1 else "2 values of x lie"
+    )
     return FitWarning(
         "too-few-points",
         f"only {values} within the width of the line".replace("only no", "no")

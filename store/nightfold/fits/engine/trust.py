@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from math import exp, inf, isfinite
 
 from nightfold.fits.engine.feature import LEVEL
 from nightfold.fits.engine.misfit import Misfit, poor_fit
+from nightfold.fits.engine.rivals import Rival, ambiguous
 from nightfold.fits.engine.sampling import Sampling, too_few
 from nightfold.fits.engine.wander import Wander, drift_within_scan
 from nightfold.fits.engine.warning import FitWarning, chance, figure, per_unit, with_unit
@@ -16,6 +18,8 @@ MOST_SPREAD = {"rate": 0.4, "width": 0.5}
 FREQUENCY_SPREAD = 0.25
 """Largest standard uncertainty of a frequency, times the window."""
 LEAST_PERIODS = 0.8
+MOST_HEIGHT = 0.75
+"""Largest standard uncertainty of an amplitude, of its value."""
 LEVEL_STATED = 0.001
 MOST_UNLIKE = 2.0
 """Stderr that the estimate with equal weights may lie from the one by the learnt weights."""
@@ -28,9 +32,9 @@ class Facts:
     ``value``, ``stderr`` and ``spread`` are by reported name, ``roles`` tell which free name is a position,
     width, rate or frequency, ``bound`` lists names that ended at the edge of what is searched; ``feature_p``
     is that of the permutation test when a start grid was ``searched``, else that of an F test.
-    ``outliers`` are the x of the points left out; ``unlike`` tells by name how far equal weights lead from the
-    estimate, in units of their own stderr; ``stated``, where uncertainties were taken at face value, how many times as
-    much the points scatter, and how improbable that is.
+    ``outliers`` are the x of the points left out; ``unlike`` tells by name how far equal weights lead
+    from the estimate, in units of their own stderr; ``stated``, where uncertainties were taken at face value, how many
+    times as much the points scatter, and how improbable that is.
     """
 
     model: str
@@ -51,6 +55,7 @@ class Facts:
     outliers: tuple[float, ...] = ()
     unlike: dict[str, float] = field(default_factory=dict)
     sampling: Sampling | None = None
+    rival: Rival | None = None
     misfit: Misfit | None = None
     wander: Wander | None = None
     stated: tuple[float, float] | None = None
@@ -69,7 +74,9 @@ def judge(facts: Facts) -> tuple[FitWarning, ...]:
             by_code.setdefault(warning.code, []).append(warning)
     return tuple(
         FitWarning(
-            code, "; also, ".join(dict.fromkeys(one.message for one in alike)), all(one.advisory for one in alike)
+            code,
+            "; also, ".join(dict.fromkeys(one.message for one in alike)),
+            all(one.advisory for one in alike),
         )
         for code, alike in by_code.items()
     )
@@ -81,7 +88,9 @@ def _others(facts: Facts) -> list[FitWarning | None]:
         _converged(facts),
         *(_role_warning(facts, name) for name in facts.roles),
         *(_at_bound(facts, name) for name in facts.bound),
+        *(_height(facts, name) for name in ("amplitude", "contrast") if name in facts.value),
         _spare(facts),
+        ambiguous(facts.rival, facts.value, facts.unit_x),
         *([] if facts.sampling is None else too_few(facts.sampling, facts.unit_x)),
         _known(facts),
         _weights_disagree(facts),
@@ -138,19 +147,14 @@ def _role_warning(facts: Facts, name: str) -> FitWarning | None:
 
 
 def _outside(facts: Facts, name: str) -> FitWarning | None:
-    """Return a warning when the position lies outside the scan, or within its stderr of the edge."""
-    value, stderr = facts.value[name], min(facts.stderr[name], facts.high - facts.low)
-    if facts.low + stderr <= value <= facts.high - stderr:
+    """Return a warning when the position lies outside the scan."""
+    value = facts.value[name]
+    if facts.low <= value <= facts.high:
         return None
-    upper = value > (facts.low + facts.high) / 2
-    side, edge = ("above", facts.high) if upper else ("below", facts.low)
-    inside = facts.low <= value <= facts.high
-    if inside and facts.stderr[name] > (facts.high - facts.low) / 4:
-        return None
-    where = "cannot be told from the edge of" if inside else "lies outside"
+    side, edge = ("above", facts.high) if value > facts.high else ("below", facts.low)
     return FitWarning(
         "center-outside",
-        f"the {name}, {figure(value, facts.unit_x)}, {where} the scan"
+        f"the {name}, {figure(value, facts.unit_x)}, lies outside the scan"
         f" ({facts.low:.6g} to {figure(facts.high, facts.unit_x)});"
         f" extend the scan {side} {figure(edge, facts.unit_x)}",
     )
@@ -211,6 +215,18 @@ def _factor(facts: Facts, name: str, role: str) -> FitWarning:
     return FitWarning("poorly-determined", f"the {name} is {how_well}; {advice}, or fix it")
 
 
+def _height(facts: Facts, name: str) -> FitWarning | None:
+    """Return a warning when a height is hardly known from zero though something stands out."""
+    value, stderr = facts.value[name], facts.stderr[name]
+    if not stderr > MOST_HEIGHT * abs(value) or not isfinite(stderr):
+        return None
+    return FitWarning(
+        "poorly-determined",
+        f"the {name}, {value:.3g}, is uncertain by {stderr:.2g}: other numbers make up for it; scan further, fix one"
+        " or use a simpler model or background",
+    )
+
+
 def _at_bound(facts: Facts, name: str) -> FitWarning | None:
     role = facts.roles.get(name, "free")
     if role == "frequency" and _periods(facts, name) is not None:
@@ -267,13 +283,18 @@ def _weights_disagree(facts: Facts) -> FitWarning | None:
 def _outliers(facts: Facts) -> FitWarning | None:
     if not facts.outliers:
         return None
-    several = len(facts.outliers) > 1
-    where = ", ".join(f"{x:.6g}" for x in facts.outliers)
+    return left_out(facts.outliers, "", facts.unit_x)
+
+
+def left_out(x: Sequence[float], which: str, unit: str) -> FitWarning:
+    """Return what is said of outliers at x, `which` naming them if it is not empty."""
+    several = "s" if len(x) > 1 else ""
+    where = f"{', '.join(f'{one:.6g}' for one in sorted(x))} {unit}".rstrip() + (
+        f" ({which})" if which else ""
+    )
     return FitWarning(
         "outliers",
-        f"{len(facts.outliers)} shot{'s' if several else ''} left out as outlier{'s' if several else ''}, at"
-        f" {where} {facts.unit_x}".rstrip()
-        + "; look at what was recorded there",
+        f"{len(x)} shot{several} left out as outlier{several}, at {where}; look at what was recorded there",
         advisory=True,
     )
 

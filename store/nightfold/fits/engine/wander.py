@@ -1,4 +1,4 @@
-"""Did conditions wander while the scan was taken?
+"""Drifts while the scan was taken.
 
 Residuals are compared with slow cosines in the order of taking. Where the points were taken in the order of x, such a
 drift cannot be told from the curve itself; where they were shuffled it counts as scatter.
@@ -14,7 +14,7 @@ from nightfold.fits.engine.arrays import Floats
 from nightfold.fits.engine.misfit import Plane, cosines, seek
 from nightfold.fits.engine.warning import FitWarning, chance
 
-LEVEL = 0.01
+LEVEL = 0.006
 SLOW = 3
 LEAST_KNOWN = 0.8
 SAME_ORDER = 0.8
@@ -32,7 +32,7 @@ class Wander:
 
 
 def wander(plane: Plane, started: Floats) -> Wander | None:
-    """Return how residuals go with the time they were taken at, nan where it is not known; None if it cannot be told."""
+    """Return how residuals go with the time they were taken at, nan where unknown; None if it cannot be told."""
     known = np.isfinite(started)
     times, rank = np.unique(started[known], return_inverse=True)
     if known.mean() < LEAST_KNOWN or len(times) < plane.spare // 2 or len(times) < 4:
@@ -71,8 +71,8 @@ def drift_within_scan(found: Wander | None) -> FitWarning | None:
     if found.confounded:
         return FitWarning(
             "drift-within-scan",
-            f"{how}, which a drift during the scan would do, and the points were taken in such an order that it cannot be"
-            " told from the curve; shuffle the order of the points and take the scan again",
+            f"{how}, which a drift during the scan would do, and the points were taken in such an order that it cannot"
+            " be told from the curve; shuffle the order of the points and take the scan again",
         )
     return FitWarning(
         "drift-within-scan",
