@@ -119,7 +119,9 @@ def test_readings_without_stderr_have_six_digits(
 
 
 def test_fit_ends_with_the_numbers(where: Path, on_screen: Show) -> None:
-    lines = body(on_screen("--store", where, "fit", "loss-coarse", "lorentzian", "-o", "atom_number"))
+    lines = body(
+        on_screen("--store", where, "fit", "loss-coarse", "lorentzian", "-o", "atom_number", "--plain")
+    )
     assert lines[1] == "loss-coarse#1  lorentzian  atom_number along coil_current, flat background"
     assert "residuals, in units of their rms" in lines
     start = lines.index("estimates  from 61 shots, 1 set aside")

@@ -587,7 +587,7 @@ def test_new_says_what_to_do_next(run: Run, at_home: Path, heron: Path) -> None:
     assert "A card to fill in: egret.toml" in run("new", "--machine", "egret").out
     said = run("--store", "other.sqlite", "new", "--card", heron / "heron.toml").out
     card = tomllib.loads((heron / "heron.toml").read_text())
-    counts = f"{len(card['parameters'])} parameters, {len(card['observables'])} observables"
+    counts = f"{len(card['parameters'])} parameters, {len(card['observables'])} observables, 2 derived"
     assert f"Machine heron: {counts}." in said
     wrong = run("--store", "third.sqlite", "new", "--card", at_home / "gone.toml")
     assert wrong.code == 5
