@@ -126,8 +126,8 @@ def test_three_axes_have_a_map_for_each_setting_of_the_shortest(
             }
             lines.append(json.dumps(record))
     Path("cube.jsonl").write_text("\n".join(lines), encoding="utf-8")
-    for words in (("new",), ("take", "cube.jsonl")):
-        assert run("--store", "cube.sqlite", *words).code == 0
+    for first in (("new",), ("take", "cube.jsonl")):
+        assert run("--store", "cube.sqlite", *first).code == 0
     words = ("--store", "cube.sqlite", "fit", "cube", "lorentzian", "--along", "current", "--plain")
     fits = json.loads(run(*words, "--json").out)["fits"]
     text = on_screen(*words)

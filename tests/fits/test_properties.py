@@ -27,7 +27,7 @@ def close(one: float, other: float, stderr: float) -> bool:
 
 
 def fit(example: Example, x: np.ndarray, y: np.ndarray, **options: Any) -> FitResult:
-    return fit_curve(x, y, example.model, background=example.background, **options)  # type: ignore[arg-type]
+    return fit_curve(x, y, example.model, background=example.background, **options)
 
 
 @given(seed=SEEDS, shift=st.floats(-1e6, 1e6))

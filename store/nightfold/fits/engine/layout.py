@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
-from typing import cast
 
 import numpy as np
 
@@ -52,7 +51,7 @@ class Layout:
     @cached_property
     def links(self) -> tuple[Link, ...]:
         """How each of `all_names` follows from its coordinate."""
-        background = [cast(Link, "linear")] * len(BACKGROUND_PARAMETERS[self.background])
+        background: list[Link] = ["linear"] * len(BACKGROUND_PARAMETERS[self.background])
         return (*self.shape.links(), *background, *(number.link for number in self.shape.derived))
 
     @cached_property
