@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import os
 import random
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -18,6 +19,8 @@ from nightfold.errors import NotFound, RecordError, RequestError
 from nightfold.opening import open_store
 from nightfold.settings import digest_of_sum, hash_setting, token_of
 from nightfold.store import Store
+
+MORE = int(os.environ.get("NIGHTFOLD_MORE_EXAMPLES", "1"))
 
 START = datetime(2026, 10, 5, 18, tzinfo=UTC)
 HUGE = 2**70 + 1
@@ -400,7 +403,7 @@ pools: dict[str, list[Any]] = {
 }  # fmt: skip
 
 
-@settings(max_examples=15)
+@settings(max_examples=7 * MORE)
 @given(
     st.lists(
         st.tuples(st.sets(st.integers(0, 39), min_size=1, max_size=8), names, st.integers(0, 2)), max_size=8

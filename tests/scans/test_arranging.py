@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable, Iterable, Sequence
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -14,6 +15,8 @@ from hypothesis import strategies as st
 
 from nightfold import Scan, Store, open_store
 from nightfold.errors import ChoiceNeeded, NotFound
+
+MORE = int(os.environ.get("NIGHTFOLD_MORE_EXAMPLES", "1"))
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
 HOUR, DAY = 3600, 86400
@@ -366,7 +369,7 @@ def _outer(store: Store) -> None:
 
 @pytest.mark.parametrize("arrange", [_two_and_three, _halves, _outer])
 @given(st.permutations(range(len(_LATE))), st.integers(1, 40))
-@settings(max_examples=8, deadline=None)
+@settings(max_examples=4 * MORE, deadline=None)
 def test_order_of_arrival_cannot_change_what_becomes_of_an_arranged_label(
     tmp_path_factory: pytest.TempPathFactory, arrange: Callable[[Store], None], order: list[int], batch: int
 ) -> None:
@@ -398,7 +401,7 @@ _FREE_LATE = [
 
 
 @given(st.permutations(range(len(_FREE_LATE))), st.integers(1, 40))
-@settings(max_examples=8, deadline=None)
+@settings(max_examples=4 * MORE, deadline=None)
 def test_order_of_arrival_cannot_change_what_is_found_around_arranged_scans(
     tmp_path_factory: pytest.TempPathFactory, order: list[int], batch: int
 ) -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+import os
 import random
 import shutil
 from collections.abc import Sequence
@@ -22,6 +23,8 @@ from nightfold.fits.result import FitResult
 from nightfold.fits.scanfit import digest_data
 from nightfold.intake.csvfile import CsvColumns
 from nightfold.scans.scan import Scan
+
+MORE = int(os.environ.get("NIGHTFOLD_MORE_EXAMPLES", "1"))
 
 CARD = """\
 machine = "heron"
@@ -211,7 +214,7 @@ def test_an_edit_of_another_input_ends_an_unlabelled_sweep(ready: Store) -> None
     assert ready.edits()[["parameter", "new"]].to_numpy().tolist() == [["shift", 0.4]]
 
 
-@settings(max_examples=15)
+@settings(max_examples=5 * MORE)
 @given(order=st.permutations(range(40)), sizes=st.lists(st.integers(1, 9), min_size=40, max_size=40))
 def test_the_order_of_arrival_changes_nothing(
     empty_store: Path, tmp_path: Path, order: list[int], sizes: list[int]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+import os
 from collections.abc import Iterable
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -16,6 +17,8 @@ from hypothesis import strategies as st
 from nightfold import Store, open_store
 from nightfold.errors import ChoiceNeeded, NotFound
 from nightfold.scans.keeping import settle_axes
+
+MORE = int(os.environ.get("NIGHTFOLD_MORE_EXAMPLES", "1"))
 
 START = datetime(2026, 10, 5, 19, tzinfo=UTC)
 _numbers = itertools.count()
@@ -162,7 +165,7 @@ def test_an_axis_may_be_followed_by_another_parameter(tmp_path: Path) -> None:
 
 
 @given(st.permutations(range(39)), st.integers(1, 39))
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=7 * MORE, deadline=None)
 def test_order_of_arrival_cannot_change_rounds(
     tmp_path_factory: pytest.TempPathFactory, order: list[int], batch: int
 ) -> None:
@@ -202,7 +205,7 @@ _MIXED = [
 
 
 @given(st.permutations(range(len(_MIXED))), st.integers(1, 40))
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=7 * MORE, deadline=None)
 def test_order_of_arrival_cannot_change_found_scans(
     tmp_path_factory: pytest.TempPathFactory, order: list[int], batch: int
 ) -> None:
@@ -375,7 +378,7 @@ _SLOW = [
 
 
 @given(st.permutations(range(0, len(_SLOW), 6)), st.integers(5, 60))
-@settings(max_examples=6, deadline=None)
+@settings(max_examples=4 * MORE, deadline=None)
 def test_what_a_pause_is_does_not_depend_on_the_order_of_arrival(
     tmp_path_factory: pytest.TempPathFactory, order: list[int], batch: int
 ) -> None:
