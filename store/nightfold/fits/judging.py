@@ -11,10 +11,13 @@ from nightfold.fits.engine.arrays import Floats
 from nightfold.fits.engine.feature import LEVEL
 from nightfold.fits.engine.links import to_coordinate, to_value
 from nightfold.fits.engine.misfit import Plane, look, make_plane
+from nightfold.fits.engine.points import Points
 from nightfold.fits.engine.rivals import APART, LEAST_ODDS, Rival, Rivals, find_rivals
+from nightfold.fits.engine.robust import TRIED, TRIED_STATED
 from nightfold.fits.engine.sampling import Sampling
 from nightfold.fits.engine.tangent import Tangent, tangent
 from nightfold.fits.engine.trust import Facts, judge, left_out
+from nightfold.fits.engine.variance import EQUAL, STATED
 from nightfold.fits.engine.wander import wander
 from nightfold.fits.engine.warning import FitWarning
 from nightfold.fits.fitting import Outcome
@@ -41,7 +44,7 @@ def judge_fits(outcome: Outcome, x: Floats, started: Floats | None) -> list[tupl
     with np.errstate(all="ignore"):
         for group in outcome.groups:
             about = _tangent(outcome, group)
-            judging = _Judging(outcome, x, started, group, about, _rivals(outcome, group, about))
+            judging = _Judging(outcome, x, started, group, about, _rivals(outcome, group))
             for place, row in enumerate(group.rows.tolist()):
                 found[row] = judge(judging.facts(place, row))
     return found
@@ -73,13 +76,20 @@ def _tangent(outcome: Outcome, group: Group) -> Tangent:
     return tangent(outcome.request.layout, group.data, outcome.theta[group.rows], deviation)
 
 
-def _rivals(outcome: Outcome, group: Group, about: Tangent) -> Rivals | None:
+def _rivals(outcome: Outcome, group: Group) -> Rivals | None:
     """Return the best other minima of a group."""
-    shape = outcome.request.layout.shape
-    if not shape.searchable or not shape.theta:
+    request, data = outcome.request, group.data
+    layout = request.layout
+    if not layout.shape.searchable or not layout.free_theta.any():
         return None
     origin, starts = group.starts()
-    return find_rivals(outcome.request.layout, group.data, about, outcome.theta[group.rows], origin, starts)
+    used = ~np.take_along_axis(outcome.outlier[group.rows], group.place, axis=1)
+    values = data.z if data.root_weights is None else data.z / data.root_weights
+    points = Points(data, values, used, None if group.stated is None else group.stated**2)
+    laws = TRIED_STATED if group.stated is not None else TRIED
+    if request.weighted or request.weights == "equal":
+        laws = STATED if request.weighted else EQUAL
+    return find_rivals(layout, points, outcome.theta[group.rows], origin, starts, laws)
 
 
 @dataclass(frozen=True)

@@ -260,7 +260,7 @@ def check_times(started: ArrayLike | None, count: int) -> Floats | None:
         import pandas as pd
 
         try:
-            array = pd.to_datetime(array, utc=True).to_numpy().astype("datetime64[us]")
+            array = pd.DatetimeIndex(pd.to_datetime(array, utc=True)).tz_localize(None).to_numpy()
         except (TypeError, ValueError):
             raise FitError("started: found values that are not times, wanted datetimes or seconds") from None
     if array.dtype.kind not in "Mfiu":

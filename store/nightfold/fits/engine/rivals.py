@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from nightfold.fits.engine.arrays import Floats, Ints
-from nightfold.fits.engine.data import DataSets
 from nightfold.fits.engine.layout import Layout
+from nightfold.fits.engine.points import Points
+from nightfold.fits.engine.robust import follow
 from nightfold.fits.engine.solver import expand, solve
-from nightfold.fits.engine.tangent import Tangent
+from nightfold.fits.engine.variance import Laws
 from nightfold.fits.engine.warning import FitWarning, figure, per_unit
 
 TOLERANCE, STEPS = 1e-6, 30
@@ -32,39 +33,48 @@ class Rivals:
 
 
 def find_rivals(
-    layout: Layout, data: DataSets, about: Tangent, theta: Floats, origin: Ints, starts: Floats
+    layout: Layout, points: Points, theta: Floats, origin: Ints, starts: Floats, laws: Laws
 ) -> Rivals:
-    """Return the best minimum that distant starts lead to, under the scatter of the fit reported.
+    """Return the best minimum that distant starts lead to.
 
     Parameters
     ----------
+    points : Points
+        B data sets, outliers left out.
     theta : (B, P) float array
         The fit reported.
     origin : (M,) int array
         The data set of each start.
     starts : (M, P) float array
+    laws : Laws
+        Variance laws of which each minimum has the likeliest.
     """
     count = len(theta)
     rivals = Rivals(np.full((count, len(layout.all_names)), np.nan), np.full(count, np.inf))
-    far = ~layout.shape.near(starts, theta[origin]) if len(starts) else np.zeros(0, dtype=bool)
+    far = ~layout.shape.near(starts, theta[origin])
     origin, starts = origin[far], starts[far]
     if not len(origin):
         return rivals
-    values = data.z if data.root_weights is None else data.z / data.root_weights
-    sets = replace(data, root_weights=about.roots, z=values * about.roots).take(origin)
-    found = solve(layout, sets, starts, TOLERANCE, STEPS)
-    good = np.isfinite(found.sse) & ~found.bound.any(axis=1) & ~layout.shape.near(found.theta, theta[origin])
-    best = np.einsum("bn,bn->b", about.residual, about.residual)
-    used = np.count_nonzero(about.roots > 0, axis=1)
-    odds = 0.5 * used[origin] * np.log(found.sse / np.maximum(best[origin], 1e-300))
-    odds = np.where(good, odds, np.inf)
+    flat = points.weighted(np.where(points.used, 1.0, 0.0))
+    minima = solve(layout, flat.take(origin), starts, TOLERANCE, STEPS)
+    good = np.isfinite(minima.sse) & ~minima.bound.any(axis=1)
+    good &= ~layout.shape.near(minima.theta, theta[origin])
+    origin, starts = origin[good], minima.theta[good]
+    if not len(origin):
+        return rivals
+    sets = np.unique(origin)
+    each = np.concatenate([sets, origin])
+    some = points.take(each)
+    found = follow(layout, some, np.concatenate([theta[sets], starts]), some.used, laws)
+    mine, other = found.likelihood[: len(sets)], found.take(np.arange(len(sets), len(each)))
+    odds = mine[np.searchsorted(sets, origin)] - other.likelihood
+    odds = np.where(layout.shape.near(other.theta, theta[origin]) | np.isnan(odds), np.inf, odds)
     order = np.lexsort((odds, origin))
-    which, first = np.unique(origin[order], return_index=True)
-    rows = order[first]
-    rivals.odds[which] = odds[rows]
-    there = sets.take(rows)
-    c = expand(layout, there, found.theta[rows]).c
-    rivals.q[which] = layout.report(found.theta[rows], c, there.frame)[0]
+    rows = order[np.unique(origin[order], return_index=True)[1]]
+    there = flat.take(origin[rows])
+    c = expand(layout, there, other.theta[rows]).c
+    rivals.odds[sets] = odds[rows]
+    rivals.q[sets] = layout.report(other.theta[rows], c, there.frame)[0]
     return rivals
 
 

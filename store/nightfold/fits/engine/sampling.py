@@ -51,7 +51,7 @@ def _on_line(sampling: Sampling, unit: str) -> FitWarning | None:
     return FitWarning(
         "too-few-points",
         f"only {values} within the width of the line".replace("only no", "no")
-        + f" ({figure(low, unit)} to {figure(high, unit)}); take points every {with_unit(width / 5, unit, 2)} there",
+        + f" ({low:.6g} to {figure(high, unit)}); take points every {with_unit(width / 5, unit, 2)} there",
     )
 
 
@@ -62,7 +62,7 @@ def _decayed(sampling: Sampling, unit: str) -> FitWarning | None:
     return FitWarning(
         "too-few-points",
         f"the first point, at {with_unit(first, unit)}, comes after {first / time:.2g} times the time found,"
-        f" {with_unit(time, unit)}; begin the scan below {with_unit(time, unit)}",
+        f" {with_unit(time, unit)}; begin the scan below {with_unit(time, unit, 2)}",
     )
 
 
