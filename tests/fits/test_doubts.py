@@ -227,7 +227,7 @@ def test_times_that_are_none_are_refused() -> None:
     y = drifting(np.arange(41), 1)
     with pytest.raises(FitError, match=r"started: found shape \(3,\), wanted \(41,\) as for x"):
         fit_curve(FIELD, y, "lorentzian", started=[1.0, 2.0, 3.0])
-    with pytest.raises(FitError, match="started: found values .* wanted datetimes or seconds"):
+    with pytest.raises(FitError, match=r"started: found values .* wanted datetimes or seconds"):
         fit_curve(FIELD, y, "lorentzian", started=["soon"] * 41)
 
 

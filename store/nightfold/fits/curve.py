@@ -10,7 +10,7 @@ from numpy.typing import ArrayLike
 
 from nightfold.errors import FitError
 from nightfold.fits.many import fit_table
-from nightfold.fits.request import as_points, check_shared, check_span, check_stderr, check_times
+from nightfold.fits.request import Times, as_points, check_shared, check_span, check_stderr, check_times
 from nightfold.fits.result import FitResult
 
 
@@ -29,7 +29,7 @@ def fit_curve(
     robust: bool = True,
     unit_x: str = "",
     unit_y: str = "",
-    started: ArrayLike | None = None,
+    started: Times | None = None,
 ) -> FitResult:
     """Return a model fitted to points.
 

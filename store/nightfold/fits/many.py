@@ -18,6 +18,7 @@ from nightfold.fits.estimate import EstimateColumn, compose_unit
 from nightfold.fits.fitting import Outcome, fit_sets
 from nightfold.fits.judging import judge_fits
 from nightfold.fits.request import (
+    Times,
     as_points,
     check_shared,
     check_span,
@@ -49,7 +50,7 @@ def fit_many(
     robust: bool = True,
     unit_x: str = "",
     unit_y: str = "",
-    started: ArrayLike | None = None,
+    started: Times | None = None,
 ) -> FitTable:
     """Return the fits of one model to many data sets that share x, all at once.
 

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from datetime import datetime
 from difflib import get_close_matches
 from math import isfinite
 from typing import Any, Literal, cast, get_args
@@ -18,6 +19,7 @@ from nightfold.fits.models import find_model
 from nightfold.fits.models.shape import Background, LineShape
 
 Weights = Literal["auto", "equal", "given"]
+Times = ArrayLike | Sequence[datetime]
 
 
 @dataclass(frozen=True)
@@ -245,7 +247,7 @@ def check_shared(shared: ArrayLike | None, shape: tuple[int, ...]) -> Floats | N
     return array
 
 
-def check_times(started: ArrayLike | None, count: int) -> Floats | None:
+def check_times(started: Times | None, count: int) -> Floats | None:
     """Return times as numbers of which the order counts, nan where one is not known; or None.
 
     Raises
