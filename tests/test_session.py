@@ -351,7 +351,7 @@ def test_another_writer_holds_the_store(store_path: Path, monkeypatch: pytest.Mo
 def test_another_writer_holds_a_postgresql_store(
     postgresql_url: str, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr(session, "_WAIT_S", 0.1)
+    monkeypatch.setattr(session, "_WAIT_S", 1.0)
     create_store(postgresql_url).close()
     with open_store(postgresql_url) as store, open_store(postgresql_url) as other:
         with other._session.writing(), pytest.raises(StoreBusy, match="another writer held it"):
