@@ -38,7 +38,9 @@ def test_eckerle4_by_the_built_in_gaussian() -> None:
     assert b1_stderr == pytest.approx(certified.stderr["b1"], rel=1e-4)
     assert result.estimates["fwhm"].stderr * to_sigma == pytest.approx(certified.stderr["b2"], rel=1e-4)
     assert result.estimates["center"].stderr == pytest.approx(certified.stderr["b3"], rel=1e-4)
-    assert [warning.code for warning in result.warnings] == ["poor-fit"]  # a measured line is no exact Gaussian
+    assert [warning.code for warning in result.warnings] == [
+        "poor-fit"
+    ]  # a measured line is no exact Gaussian
 
 
 def test_the_full_recipe_on_eckerle4_covers_the_certificate_or_is_not_trusted() -> None:
