@@ -106,22 +106,7 @@ def comparison_entry(comparison: Comparison) -> dict[str, Any]:
         "slice": dict(comparison.where),
         "shots": comparison.n,
         "estimate": comparison.estimate,
-        "models": [
-            {
-                "model": each.model,
-                "background": each.background,
-                "free": each.free,
-                "aicc": each.aicc,
-                "delta": each.delta,
-                "weight": each.weight,
-                "estimate": each.name,
-                "value": each.estimate.value,
-                "stderr": each.estimate.stderr,
-                "unit": each.estimate.unit,
-                "trusted": each.trusted,
-            }
-            for each in comparison.candidates
-        ],
+        "models": [each.row() for each in comparison.candidates],
         "combined": None
         if combined is None
         else {

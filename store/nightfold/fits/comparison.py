@@ -53,6 +53,22 @@ class Candidate:
     estimate: Estimate
     trusted: bool
 
+    def row(self) -> dict[str, Any]:
+        """Return what there is to tell of it, by name."""
+        return {
+            "model": self.model,
+            "background": self.background,
+            "free": self.free,
+            "aicc": self.aicc,
+            "delta": self.delta,
+            "weight": self.weight,
+            "estimate": self.name,
+            "value": self.estimate.value,
+            "stderr": self.estimate.stderr,
+            "unit": self.estimate.unit,
+            "trusted": self.trusted,
+        }
+
 
 @dataclass(frozen=True)
 class Combined:
@@ -123,24 +139,7 @@ class Comparison:
         """Return a row a model."""
         import pandas as pd
 
-        return pd.DataFrame(
-            [
-                {
-                    "model": each.model,
-                    "background": each.background,
-                    "free": each.free,
-                    "aicc": each.aicc,
-                    "delta": each.delta,
-                    "weight": each.weight,
-                    "estimate": each.name,
-                    "value": each.estimate.value,
-                    "stderr": each.estimate.stderr,
-                    "unit": each.estimate.unit,
-                    "trusted": each.trusted,
-                }
-                for each in self.candidates
-            ]
-        )
+        return pd.DataFrame([each.row() for each in self.candidates])
 
 
 def compare_fits(
